@@ -1,0 +1,52 @@
+"""A measured pattern of rings: what was read, and the spacings it means."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from phaseid.probes.probe import Probe
+
+GRADES: dict[str, tuple[float, float]] = {
+    # interval of relative intensity (strongest = 100) each grade stands for:
+    # common practice, no source
+    "vs": (70.0, 100.0),
+    "s": (45.0, 85.0),
+    "m": (22.0, 55.0),
+    "w": (7.0, 28.0),
+    "vw": (1.0, 12.0),
+}
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class RingList:
+    """One measured pattern, rings in the order of the file.
+
+    `position_column` is the contract's name ("two_theta_deg", "radius_mm", "d_A", …); `position` and
+    `position_sigma` (m,) are in its unit, as measured. `d_A`, `sigma_A` (m,) are the spacings in Å and
+    the one-sigma of each ring alone (the common scale uncertainty is `probe.scale_sigma`).
+    `intensity` (m,) is relative, strongest = 100, NaN where absent; `intensity_range` (m, 2) the
+    interval a grade stands for, both equal to `intensity` for a number, NaN where absent; `grades`
+    (m,) the grade or "" . `notes` (m,) are the file's. `sigma_stated` is False where a default was used.
+    `remarks` are sentences to show with the answer (defaults applied, likely slips).
+    """
+
+    title: str
+    probe: Probe
+    position_column: str
+    position: NDArray[np.float64]
+    position_sigma: NDArray[np.float64]
+    d_A: NDArray[np.float64]
+    sigma_A: NDArray[np.float64]
+    intensity: NDArray[np.float64]
+    intensity_range: NDArray[np.float64]
+    grades: tuple[str, ...]
+    notes: tuple[str, ...]
+    sigma_stated: bool
+    source: str = ""
+    remarks: tuple[str, ...] = ()
+
+    def __len__(self) -> int:
+        return len(self.d_A)
