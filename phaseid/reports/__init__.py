@@ -1,1 +1,1 @@
-"""reports."""
+"""A finished identification as text and as JSON."""

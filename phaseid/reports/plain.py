@@ -1,0 +1,128 @@
+"""Words and tables for a terminal: safe, aligned, never wider than asked."""
+
+from __future__ import annotations
+
+import textwrap
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Literal
+
+from phaseid.library.phase import Phase
+
+ELLIPSIS = "…"
+
+
+def safe(text: str) -> str:
+    """Return `text` on one line without characters that could steer or deceive a terminal.
+
+    Names come from files of strangers: control and direction characters become `?`, any white space
+    a single blank.
+    """
+    return " ".join("".join(c if c.isprintable() or c.isspace() else "?" for c in text).split())
+
+
+def shorten(text: str, width: int) -> str:
+    """Cut `text` to `width` characters, the last an ellipsis where something was cut."""
+    return text if len(text) <= width else text[: max(width - 1, 0)] + ELLIPSIS
+
+
+def wrap(text: str, width: int, *, indent: str = "  ", first: str | None = None) -> list[str]:
+    """Break `text` into lines of at most `width` characters, `first` before the first of them."""
+    return textwrap.wrap(
+        safe(text),
+        width,
+        initial_indent=indent if first is None else first,
+        subsequent_indent=indent,
+        break_on_hyphens=False,
+    )
+
+
+def hkl_text(hkl: Sequence[int]) -> str:
+    """Write Miller indices with blanks between: `1 0 -2`."""
+    return " ".join(str(int(index)) for index in hkl)
+
+
+def probability_text(value: float) -> str:
+    """Write a probability to two digits, never as a certainty."""
+    if value > 0.995:
+        return ">0.99"
+    return "<0.01" if value < 0.005 else f"{value:.2f}"
+
+
+def phase_text(phase: Phase) -> str:
+    """Name a phase for a reader: `corundum (Al2O3)`, or by the formula alone."""
+    name, formula = safe(phase.name), safe(phase.formula)
+    return formula if not name or name == formula else f"{name} ({formula})"
+
+
+def source_text(phase: Phase) -> str:
+    """Say where an entry came from: `COD 9008460, al.cif`."""
+    source = phase.source
+    origin = " ".join(part for part in (safe(source.database), safe(source.id)) if part)
+    return ", ".join(part for part in (origin, safe(source.file)) if part)
+
+
+def cell_text(cell: Sequence[float], sigma: Sequence[float] | None = None) -> str:
+    """Write a cell (Å, degrees), leaving out what symmetry or equality makes plain.
+
+    >>> cell_text((4.05, 4.05, 4.05, 90, 90, 90))
+    'a = 4.0500 Å'
+    >>> cell_text((4.758, 4.758, 12.99, 90, 90, 120))
+    'a = 4.7580, c = 12.9900 Å, γ = 120°'
+    """
+    lengths = []
+    for index, letter in enumerate("abc"):
+        if index and any(abs(cell[index] - cell[k]) < 5e-5 for k in range(index)):
+            continue
+        error = f" ± {sigma[index]:.4f}" if sigma is not None and sigma[index] > 0 else ""
+        lengths.append(f"{letter} = {cell[index]:.4f}{error}")
+    angles = [
+        f"{letter} = {cell[3 + index]:.5g}°"
+        for index, letter in enumerate("αβγ")
+        if abs(cell[3 + index] - 90) > 5e-4
+    ]
+    return ", ".join([", ".join(lengths) + " Å", *angles])
+
+
+@dataclass(frozen=True, slots=True)
+class Column:
+    """One column of a table: its heading, and the side its cells lean to."""
+
+    heading: str
+    side: Literal["left", "right"] = "right"
+    flexible: bool = False
+
+
+def table(columns: Sequence[Column], rows: Sequence[Sequence[str]], width: int) -> list[str]:
+    """Align `rows` under `columns`; flexible columns shrink until a line fits `width` characters.
+
+    Headings may hold a line break. Cells stand two blanks apart, one where room is short.
+    """
+    cells = [[safe(cell) for cell in row] for row in rows]
+    heads = [column.heading.split("\n") for column in columns]
+    depth = max(len(head) for head in heads)
+    heads = [[""] * (depth - len(head)) + head for head in heads]
+    widths = [
+        max([len(part) for part in head] + [len(row[k]) for row in cells])
+        for k, head in enumerate(heads)
+    ]
+    gap = "  " if sum(widths) + 2 * len(widths) <= width else " "
+    spare = width - sum(widths) - len(gap) * len(widths)
+    for k, column in enumerate(columns):
+        if column.flexible and spare < 0:
+            narrowed = max(6, widths[k] + spare)
+            spare += widths[k] - narrowed
+            widths[k] = narrowed
+    lines = [[head[level] for head in heads] for level in range(depth)] + cells
+    return [
+        "".join(
+            gap
+            + (
+                shorten(cell, widths[k]).ljust(widths[k])
+                if columns[k].side == "left"
+                else shorten(cell, widths[k]).rjust(widths[k])
+            )
+            for k, cell in enumerate(line)
+        ).rstrip()
+        for line in lines
+    ]

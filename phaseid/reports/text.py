@@ -1,0 +1,275 @@
+"""An identification as text: the answer first, then why, then what speaks against it."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Sequence
+from pathlib import Path
+
+from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
+from phaseid.reports.plain import (
+    Column,
+    cell_text,
+    hkl_text,
+    phase_text,
+    probability_text,
+    safe,
+    source_text,
+    table,
+    wrap,
+)
+from phaseid.rings.ringlist import RingList
+
+STANDING = (
+    "A ring match is evidence, not a certified determination. For decisions on health, safety or "
+    "law use an accredited laboratory and the local codes."
+)
+VERDICTS = {
+    "identified": "identified (one answer holds at least 0.9 of the probability)",
+    "ambiguous": "ambiguous (no answer reaches a probability of 0.9)",
+    "no-match": "no match (all of this library together holds less than 0.5)",
+}
+RING_COLUMNS = (
+    Column("ring"),
+    Column("d meas.\nÅ"),
+    Column("d calc.\nÅ"),
+    Column("hkl"),
+    Column("phase", "left", flexible=True),
+    Column("off by\nsigma"),
+    Column("I\nmeas."),
+    Column("I\ncalc."),
+)
+
+
+def as_text(answer: Identification, *, width: int = 80, bold: bool = False) -> str:
+    """Return the identification as text of at most `width` (≥ 60) characters a line.
+
+    `bold` marks headings with the terminal's bold face; nothing is said by it alone.
+    """
+    page = _Page(max(width, 60), bold)
+    page.paragraph(_headline(answer))
+    page.paragraph(f"Verdict: {VERDICTS[answer.verdict]}.")
+    _alternatives(page, answer)
+    if answer.hypotheses:
+        best = answer.hypotheses[0]
+        for number in range(len(answer.patterns)):
+            _rings(page, answer, best, number)
+        _against(page, answer, best)
+        for part in best.phases:
+            _phase(page, part)
+    for match in answer.type_matches:
+        page.heading("A structure type that would fit")
+        page.item(
+            f"{match.type_name} (as in {phase_text(match.like)}) with a = {match.a_A:.4f} "
+            f"± {match.a_sigma_A:.4f} Å, probability {probability_text(match.probability)}"
+        )
+    page.items("Remarks", _unique([*answer.remarks, *_pattern_remarks(answer.patterns)]))
+    page.items("Safety", answer.cautions)
+    page.blank()
+    library = answer.library
+    page.paragraph(
+        f"Library: {library.phases} phases, digest {library.digest[:12]}, {Path(library.path).name}"
+    )
+    page.paragraph(STANDING)
+    return page.text()
+
+
+class _Page:
+    """Lines of text under headings, no wider than asked."""
+
+    def __init__(self, width: int, bold: bool) -> None:
+        self.width = width
+        self._bold = bold
+        self._lines: list[str] = []
+
+    def blank(self) -> None:
+        if self._lines and self._lines[-1]:
+            self._lines.append("")
+
+    def paragraph(self, text: str) -> None:
+        self._lines += wrap(text, self.width, indent="")
+
+    def heading(self, text: str) -> None:
+        self.blank()
+        lines = wrap(text, self.width, indent="")
+        self._lines += [f"\033[1m{line}\033[0m" for line in lines] if self._bold else lines
+
+    def item(self, text: str, *, indent: str = "  ") -> None:
+        self._lines += wrap(text, self.width, first=indent, indent=indent + "  ")
+
+    def items(self, heading: str, texts: Sequence[str]) -> None:
+        if texts:
+            self.heading(heading)
+            for text in texts:
+                self.item(text)
+
+    def line(self, text: str) -> None:
+        self._lines.append(text)
+
+    def row(self, rank: str, probability: float, rings: str, text: str) -> None:
+        first = f"{rank:>6}  {probability_text(probability):>5}  {rings:>6}  "
+        self._lines += wrap(text, self.width, first=first, indent=" " * (len(first) + 2))
+
+    def table(self, columns: tuple[Column, ...], rows: list[list[str]]) -> None:
+        self._lines += table(columns, rows, self.width)
+
+    def text(self) -> str:
+        return "\n".join(self._lines).rstrip() + "\n"
+
+
+def _headline(answer: Identification) -> str:
+    nothing = f"something not in this library, probability {answer.unlisted_probability:.2f}"
+    if not answer.hypotheses:
+        return f"No phase in this library explains these rings: {nothing}."
+    best = answer.hypotheses[0]
+    named = _joined([phase_text(part.phase) for part in best.phases])
+    chance = f"probability {probability_text(best.probability)}"
+    if answer.verdict == "no-match":
+        return f"Probably {nothing}. The nearest answer is {named}, {chance}."
+    stand_ins = "".join(_stand_in(part) for part in best.phases)
+    if answer.verdict == "ambiguous":
+        return f"Undecided; the likeliest is {named}, {chance}.{stand_ins}"
+    return f"{named[0].upper()}{named[1:]}, {chance}.{stand_ins}"
+
+
+def _joined(names: list[str]) -> str:
+    return names[0] if len(names) == 1 else f"{', '.join(names[:-1])} and {names[-1]}"
+
+
+def _stand_in(part: PhaseAnswer) -> str:
+    others = part.indistinguishable
+    if not others:
+        return ""
+    first = phase_text(others[0])
+    which = first if len(others) == 1 else f"{len(others)} other entries, such as {first},"
+    return f" In place of {phase_text(part.phase)} these rings allow {which} just as well."
+
+
+def _alternatives(page: _Page, answer: Identification) -> None:
+    page.heading("Alternatives")
+    rings = sum(len(pattern) for pattern in answer.patterns)
+    page.line(f"{'rank':>6}  {'prob.':>5}  {'rings':>6}  phases")
+    for h in answer.hypotheses:
+        explained = len({(a.pattern, a.ring) for a in h.assignments})
+        groups = sum(len(part.indistinguishable) for part in h.phases)
+        names = " + ".join(
+            f"{phase_text(part.phase)} {safe(part.phase.space_group_symbol)}" for part in h.phases
+        )
+        alike = f" (with {groups} alike)" if groups else ""
+        page.row(str(h.rank), h.probability, f"{explained}/{rings}", names + alike)
+    rest = 1 - sum(h.probability for h in answer.hypotheses) - answer.unlisted_probability
+    if rest >= 0.005:
+        page.row("", rest, "", "other answers from this library, not listed")
+    page.row("", answer.unlisted_probability, "", "something not in this library")
+
+
+def _rings(page: _Page, answer: Identification, best: Hypothesis, number: int) -> None:
+    pattern = answer.patterns[number]
+    many = len(answer.patterns) > 1
+    title = safe(pattern.title) or safe(pattern.source) or "typed rings"
+    page.heading(
+        f"Why: ring by ring{f', pattern {number + 1}' if many else ''} "
+        f"({title}, {safe(pattern.probe.label)})"
+    )
+    rows: list[list[str]] = []
+    for ring in range(len(pattern)):
+        found = [a for a in best.assignments if (a.pattern, a.ring) == (number, ring)]
+        measured = [str(ring + 1), f"{pattern.d_A[ring]:.4f}"]
+        intensity = _measured_intensity(pattern, ring)
+        if not found:
+            rows.append([*measured, "", "", "unexplained", "", intensity, ""])
+        for order, a in enumerate(found):
+            rows.append(
+                [
+                    *(measured if order == 0 else ["", ""]),
+                    f"{a.d_calc_A:.4f}",
+                    hkl_text(a.hkl),
+                    best.phases[a.phase].phase.formula,
+                    f"{a.residual_sigma:+.1f}",
+                    intensity if order == 0 else "",
+                    f"{a.relative_intensity:.0f}",
+                ]
+            )
+    page.table(RING_COLUMNS, rows)
+    for scale in best.scale:
+        if scale.pattern == number:
+            page.item(
+                f"Fitted scale, measured d / calculated d: {scale.factor:.4f} ± {scale.sigma:.4f}; "
+                "deviations are taken after it"
+            )
+
+
+def _measured_intensity(pattern: RingList, ring: int) -> str:
+    if pattern.grades[ring]:
+        return pattern.grades[ring]
+    value = float(pattern.intensity[ring])
+    return "" if math.isnan(value) else f"{value:.0f}"
+
+
+def _against(page: _Page, answer: Identification, best: Hypothesis) -> None:
+    many = len(answer.patterns) > 1
+    items = []
+    for u in best.unexplained:
+        d_A = answer.patterns[u.pattern].d_A[u.ring]
+        where = f" of pattern {u.pattern + 1}" if many else ""
+        hint = f": {u.hint}" if u.hint else ""
+        items.append(f"Ring {u.ring + 1}{where} at {d_A:.4f} Å is unexplained{hint}")
+    for m in best.missing:
+        where = f" in pattern {m.pattern + 1}" if many else ""
+        items.append(
+            f"{safe(best.phases[m.phase].phase.formula)} should also show {hkl_text(m.hkl)} at "
+            f"{m.d_calc_A:.4f} Å (calculated intensity {m.relative_intensity:.0f} of 100){where}"
+        )
+    worst = max(best.assignments, key=lambda a: abs(a.residual_sigma), default=None)
+    if worst is not None and abs(worst.residual_sigma) > 3:
+        items.append(f"Ring {worst.ring + 1} lies {worst.residual_sigma:+.1f} sigma from its line")
+    if not items:
+        items.append("Nothing: every ring is explained and no strong line is missing")
+    page.items("What speaks against it", items)
+
+
+def _phase(page: _Page, part: PhaseAnswer) -> None:
+    phase = part.phase
+    page.heading(phase_text(phase))
+    page.item(
+        f"{safe(phase.space_group_symbol)} (no. {phase.space_group_number}), "
+        f"{cell_text(phase.cell)}; id {safe(phase.phase_id)}"
+    )
+    page.item(f"Source: {source_text(phase)}")
+    if phase.source.reference:
+        page.item(f"Reference: {phase.source.reference}")
+    if part.share is not None:
+        error = "" if part.share_sigma is None else f" ± {100 * part.share_sigma:.0f}"
+        page.item(f"Share by weight: {100 * part.share:.0f}{error} %")
+    if part.cell is not None:
+        page.item(f"Refined cell: {cell_text(part.cell, part.cell_sigma)}")
+    if part.fibre_axis is not None:
+        page.item(f"Textured film: fibre axis [{hkl_text(part.fibre_axis)}] along the beam")
+    for finding in phase.findings:
+        page.item(f"About the entry: {finding.message}")
+    if part.indistinguishable:
+        page.item("These rings cannot tell it from:")
+        for other in part.indistinguishable:
+            page.item(
+                f"{phase_text(other)}, {safe(other.space_group_symbol)}, "
+                f"{cell_text(other.cell)}; {source_text(other)}",
+                indent="    ",
+            )
+    if part.separators:
+        page.item("What would separate them:")
+        for separator in part.separators:
+            page.item(f"{phase_text(separator.other)}: {separator.text}", indent="    ")
+
+
+def _pattern_remarks(patterns: tuple[RingList, ...]) -> list[str]:
+    if len(patterns) == 1:
+        return list(patterns[0].remarks)
+    return [
+        f"Pattern {number}: {remark}"
+        for number, pattern in enumerate(patterns, start=1)
+        for remark in pattern.remarks
+    ]
+
+
+def _unique(items: Iterable[str]) -> list[str]:
+    return list(dict.fromkeys(items))
