@@ -1,0 +1,156 @@
+"""`phaseid identify`: rings in, ranked phases and mixtures out."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from phaseid.cli.options import (
+    Exclude,
+    Json,
+    LibraryFile,
+    Must,
+    Only,
+    bold,
+    open_library,
+    say,
+    width,
+)
+from phaseid.errors import InputError
+
+if TYPE_CHECKING:
+    from phaseid.rings import RingList
+
+UNITS = "d_A, d_nm, g_1/nm, g_1/A, q_1/A, q_1/nm, two_theta_deg, radius_mm, diameter_mm, radius_px"
+
+
+def identify(
+    rings: Annotated[
+        list[str],
+        typer.Argument(
+            metavar="RINGS...",
+            help="Ring list files (patterns of one specimen), - for standard input, or spacings.",
+            show_default=False,
+        ),
+    ],
+    library: LibraryFile = None,
+    probe: Annotated[
+        str | None,
+        typer.Option("--probe", help='Such as "electron 200 kV" or "x-ray Cu Ka"; over the file.'),
+    ] = None,
+    scale_uncertainty: Annotated[
+        str | None,
+        typer.Option(
+            "--scale-uncertainty",
+            metavar="REL",
+            help="One sigma of a factor common to all d, such as 1% or 0.005; over the file.",
+        ),
+    ] = None,
+    unit: Annotated[
+        str, typer.Option("--unit", metavar="COLUMN", help=f"What typed numbers are: {UNITS}.")
+    ] = "d_A",
+    sigma: Annotated[
+        float | None,
+        typer.Option("--sigma", help="One sigma of each typed number, in its unit."),
+    ] = None,
+    intensities: Annotated[
+        str | None,
+        typer.Option(
+            "--intensities",
+            metavar="LIST",
+            help='Of typed rings, in their order: "100 40 25" or grades "vs m w".',
+        ),
+    ] = None,
+    must: Must = None,
+    only: Only = None,
+    exclude: Exclude = None,
+    max_phases: Annotated[
+        int, typer.Option("--max-phases", min=1, max=4, help="Phases in a mixture, at most.")
+    ] = 3,
+    top: Annotated[int, typer.Option("--top", min=1, help="Answers to list.")] = 5,
+    as_json: Json = False,
+) -> None:
+    """Rank the phases and mixtures that explain a list of rings.
+
+    \b
+    phaseid identify foil.csv --must Al
+    phaseid identify electrons.csv xrays.csv --json
+    phaseid identify 2.34 2.02 1.43 1.22 --probe "electron 200 kV"
+    """
+    from phaseid.matching.chemistry import Chemistry
+    from phaseid.matching.identify import identify as rank
+
+    chemistry = Chemistry.parse(must, only, exclude)
+    numbers = [word for word in rings if _is_number(word)]
+    if numbers and len(numbers) < len(rings):
+        stray = next(word for word in rings if word not in numbers)
+        raise InputError(
+            f"typed spacings and files do not mix ('{numbers[0]}' and '{stray}')",
+            remedy="Give only files or only numbers; rings of a second pattern belong in a file",
+        )
+    if numbers:
+        from phaseid.rings import rings_from_values
+
+        patterns = [
+            rings_from_values(
+                [float(number) for number in numbers],
+                column=unit,
+                probe=probe,
+                scale_uncertainty=scale_uncertainty,
+                sigma=sigma,
+                intensities=_intensities(intensities),
+            )
+        ]
+    else:
+        patterns = [_pattern(word, probe, scale_uncertainty) for word in rings]
+    with open_library(library) as shelf:
+        answer = rank(patterns, shelf, chemistry=chemistry, max_phases=max_phases, top=top)
+    if as_json:
+        from phaseid.reports.json import dumps, identification_dict
+
+        print(dumps(identification_dict(answer)))
+    else:
+        from phaseid.reports.text import as_text
+
+        print(as_text(answer, width=width(), bold=bold()), end="")
+
+
+def _pattern(word: str, probe: str | None, scale_uncertainty: str | None) -> RingList:
+    from phaseid.rings import read_rings, rings_from_text
+
+    if word == "-":
+        if sys.stdin.isatty():
+            say("Reading a ring list from the keyboard; end it with Ctrl-D.")
+        return rings_from_text(
+            sys.stdin.read(),
+            source="standard input",
+            probe=probe,
+            scale_uncertainty=scale_uncertainty,
+        )
+    path = Path(word)
+    if not path.exists() and _is_number(word.replace(",", ".")):
+        raise InputError(
+            f"'{word}' is neither a file nor a number",
+            remedy="Write decimals with a point and put blanks between numbers: 2.338 2.025",
+        )
+    return read_rings(path, probe=probe, scale_uncertainty=scale_uncertainty)
+
+
+def _intensities(text: str | None) -> list[float | str] | None:
+    if text is None:
+        return None
+    words = text.replace(",", " ").split()
+    return [float(word) if _is_number(word) else word for word in words]
+
+
+def _is_number(word: str) -> bool:
+    if Path(word).is_file():
+        return False
+    try:
+        float(word)
+    except ValueError:
+        return False
+    return True

@@ -1,0 +1,130 @@
+"""The table of commands, and the one place where an error becomes an exit code."""
+
+from __future__ import annotations
+
+import os
+import sys
+from typing import Annotated, Any
+
+import typer
+from typer.core import TyperGroup
+
+from phaseid import __version__
+from phaseid.cli import guide, identify, library, lines, near
+from phaseid.errors import PhaseidError
+
+INTERRUPTED = 130
+FIRST_STEPS = """\
+phaseid {version}: which crystalline phases made these diffraction rings?
+
+  phaseid identify 2.34 2.02 1.43 1.22 --probe "electron 200 kV"
+  phaseid identify rings.csv --must Al --json
+  phaseid lines corundum --probe "x-ray Cu Ka"
+
+`phaseid --help` lists the commands; `phaseid guide` opens the manual.
+"""
+
+
+class Commands(TyperGroup):
+    """The group of commands; turns phaseid's own errors into a message and an exit code."""
+
+    def invoke(self, ctx: Any) -> Any:
+        """Run the command; PhaseidError becomes its exit code, a closed pipe is a quiet end."""
+        try:
+            return super().invoke(ctx)
+        except PhaseidError as error:
+            if debugging():
+                raise
+            print(f"phaseid: {error}", file=sys.stderr)
+            raise typer.Exit(error.exit_code) from None
+        except BrokenPipeError:
+            _silence_stdout()
+            raise typer.Exit(0) from None
+
+
+app = typer.Typer(
+    cls=Commands,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"]},
+)
+
+
+def _show_version(wanted: bool) -> None:
+    if wanted:
+        print(f"phaseid {__version__}")
+        raise typer.Exit(0)
+
+
+@app.callback(invoke_without_command=True)
+def front(
+    ctx: typer.Context,
+    version: Annotated[
+        bool,
+        typer.Option(
+            "--version", callback=_show_version, is_eager=True, help="Print the version and stop."
+        ),
+    ] = False,
+    debug: Annotated[
+        bool, typer.Option("--debug", help="Show where in the program an error arose.")
+    ] = False,
+) -> None:
+    """Name the crystalline phases behind a list of diffraction rings.
+
+    Rings may come from electrons, X-rays or neutrons. Results go to standard output, messages to
+    standard error. Exit codes: 0 answered, 2 wrong input, 3 library missing or unreadable,
+    130 interrupted.
+    """
+    if ctx.invoked_subcommand is None:
+        print(FIRST_STEPS.format(version=__version__), end="")
+
+
+app.command("identify")(identify.identify)
+app.command("lines")(lines.lines)
+app.command("near")(near.near)
+app.add_typer(library.app, name="library")
+app.command("guide")(guide.guide)
+
+
+def debugging() -> bool:
+    """Return whether tracebacks are wanted."""
+    return os.environ.get("PHASEID_DEBUG", "") not in ("", "0")
+
+
+def run(arguments: list[str] | None = None) -> None:
+    """Run the command line and exit; `arguments` default to those of the process."""
+    words = list(sys.argv[1:] if arguments is None else arguments)
+    if "--debug" in words:  # accepted anywhere, so that it can be appended to the line that failed
+        os.environ["PHASEID_DEBUG"] = "1"
+        words = [word for word in words if word != "--debug"]
+    for stream in (sys.stdout, sys.stderr):
+        if hasattr(stream, "reconfigure"):  # a terminal without Å shows a substitute
+            stream.reconfigure(errors="replace")
+    try:
+        app(args=words, prog_name="phaseid")
+    except KeyboardInterrupt:
+        sys.exit(INTERRUPTED)
+    except Exception as error:
+        if debugging():
+            raise
+        what = f"{type(error).__name__}: {error}".splitlines()[0]
+        print(
+            f"phaseid: something went wrong inside phaseid ({what}). "
+            "Run the same command with --debug to see where.",
+            file=sys.stderr,
+        )
+        sys.exit(1)
+    finally:
+        _flush()
+
+
+def _flush() -> None:
+    try:
+        sys.stdout.flush()
+    except BrokenPipeError:
+        _silence_stdout()
+
+
+def _silence_stdout() -> None:
+    """Point standard output at nothing, so that Python's own last flush stays quiet."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
