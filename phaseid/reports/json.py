@@ -56,6 +56,7 @@ def probe_dict(probe: Probe) -> dict[str, Any]:
         "scale_sigma": probe.scale_sigma,
         "label": probe.label,
         "geometry": probe.geometry,
+        "remarks": list(probe.remarks),
     }
 
 

@@ -1,0 +1,152 @@
+"""The terminal answer: the answer first, everything a reader needs, nothing wider than asked."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import pytest
+
+from phaseid.matching.identification import Identification, TypeMatch
+from phaseid.reports.plain import Column, cell_text, probability_text, safe, table, wrap
+from phaseid.reports.text import STANDING, as_text
+
+
+def _with_name(answer: Identification, name: str) -> Identification:
+    best = answer.hypotheses[0]
+    part = replace(best.phases[0], phase=replace(best.phases[0].phase, name=name))
+    best = replace(best, phases=(part, *best.phases[1:]))
+    return replace(answer, hypotheses=(best, *answer.hypotheses[1:]))
+
+
+def test_the_answer_comes_first_in_one_sentence(answer: Identification) -> None:
+    first = as_text(answer).splitlines()[0]
+    assert first.startswith("Aluminium (Al) and periclase (MgO), probability 0.94.")
+
+
+def test_the_parts_come_in_order(answer: Identification) -> None:
+    text = as_text(answer)
+    parts = [
+        "Verdict: identified",
+        "Alternatives",
+        "something not in this library",
+        "Why: ring by ring",
+        "What speaks against it",
+        "These rings cannot tell it from:",
+        "What would separate them:",
+        "Remarks",
+        "Safety",
+        "A ring match is evidence",
+    ]
+    places = [text.index(part) for part in parts]
+    assert places == sorted(places)
+
+
+def test_each_ring_has_its_row(answer: Identification) -> None:
+    rows = [line.split() for line in as_text(answer).splitlines()]
+    assert ["2", "2.3450", "2.3380", "1", "1", "1", "Al", "-0.3", "vs", "100"] in rows
+    assert ["5", "1.9000", "unexplained"] in rows
+
+
+def test_what_speaks_against_it_is_named(answer: Identification) -> None:
+    text = " ".join(as_text(answer).split())
+    assert "Ring 5 at 1.9000 Å is unexplained: close to the 110 ring of ice" in text
+    assert "Al should also show 3 1 1 at 1.2210 Å" in text
+
+
+def test_scale_share_cell_and_defaults_are_told(answer: Identification) -> None:
+    text = " ".join(as_text(answer).split())
+    assert "1.0031 ± 0.0007" in text
+    assert "Share by weight: 80 ± 5 %" in text
+    assert "Refined cell: a = 4.0501 ± 0.0020 Å" in text
+    assert "fibre axis [1 1 1]" in text
+    assert "0.5 % of each spacing is assumed" in text
+    assert STANDING in text
+
+
+@pytest.mark.parametrize("width", [60, 72, 80, 100])
+def test_no_line_is_wider_than_asked(answer: Identification, width: int) -> None:
+    long = _with_name(answer, "a mineral with quite a long name that goes on and on for ever")
+    assert max(len(line) for line in as_text(long, width=width).splitlines()) <= width
+
+
+def test_names_from_files_cannot_steer_the_terminal(answer: Identification) -> None:
+    text = as_text(_with_name(answer, "evil\x1b[2J\x07\u202egold\nVerdict: none"))
+    assert not {"\x1b", "\x07", "\u202e"} & set(text)
+    assert "\nVerdict: none" not in text
+
+
+def test_bold_adds_no_words(answer: Identification) -> None:
+    bold = as_text(answer, bold=True)
+    assert "\033[1mAlternatives\033[0m" in bold
+    assert bold.replace("\033[1m", "").replace("\033[0m", "") == as_text(answer)
+
+
+def test_ambiguous_is_said_first(answer: Identification) -> None:
+    text = as_text(replace(answer, verdict="ambiguous"))
+    assert text.startswith("Undecided; the likeliest is aluminium (Al) and periclase (MgO)")
+
+
+def test_no_match_names_the_unlisted_first(answer: Identification) -> None:
+    best = replace(answer.hypotheses[0], probability=0.1)
+    none = replace(answer, verdict="no-match", hypotheses=(best,), unlisted_probability=0.85)
+    assert as_text(none).startswith("Probably something not in this library, probability 0.85.")
+
+
+def test_an_empty_answer_still_answers(answer: Identification) -> None:
+    text = as_text(replace(answer, verdict="no-match", hypotheses=(), unlisted_probability=1.0))
+    assert text.startswith("No phase in this library explains these rings")
+    assert STANDING in " ".join(text.split())
+
+
+def test_a_structure_type_is_offered(answer: Identification) -> None:
+    like = answer.hypotheses[0].phases[0].phase
+    found = replace(answer, type_matches=(TypeMatch("rock salt", like, 4.44, 0.01, 0.3),))
+    assert "rock salt (as in aluminium (Al)) with a = 4.4400 ± 0.0100 Å" in as_text(found)
+
+
+def test_several_patterns_are_told_apart(answer: Identification) -> None:
+    best = answer.hypotheses[0]
+    both = replace(
+        best,
+        assignments=best.assignments + tuple(replace(a, pattern=1) for a in best.assignments),
+        unexplained=best.unexplained + tuple(replace(u, pattern=1) for u in best.unexplained),
+    )
+    text = as_text(replace(answer, patterns=answer.patterns * 2, hypotheses=(both,)))
+    assert "ring by ring, pattern 1 (Foil A" in text
+    assert "ring by ring, pattern 2 (Foil A" in text
+    assert "Ring 5 of pattern 2 at 1.9000 Å is unexplained" in text
+    assert "8/10" in text
+
+
+@pytest.mark.parametrize(
+    ("value", "text"), [(0.93, "0.93"), (0.9999, ">0.99"), (1.0, ">0.99"), (0.001, "<0.01")]
+)
+def test_no_probability_reads_as_certainty(value: float, text: str) -> None:
+    assert probability_text(value) == text
+
+
+@pytest.mark.parametrize(
+    ("cell", "text"),
+    [
+        ((4.05, 4.05, 4.05, 90, 90, 90), "a = 4.0500 Å"),
+        ((4.758, 4.758, 12.99, 90, 90, 120), "a = 4.7580, c = 12.9900 Å, γ = 120°"),
+        ((5.0, 6.0, 7.0, 90, 99.5, 90), "a = 5.0000, b = 6.0000, c = 7.0000 Å, β = 99.5°"),
+    ],
+)
+def test_a_cell_is_written_without_repetition(cell: tuple[float, ...], text: str) -> None:
+    assert cell_text(cell) == text
+
+
+def test_white_space_and_controls_become_harmless() -> None:
+    assert safe("a\tb\r\n c\x00\u2028\x9b") == "a b c? ?"
+
+
+def test_a_table_shrinks_its_flexible_column_first() -> None:
+    columns = (Column("n"), Column("name", "left", flexible=True))
+    lines = table(columns, [["1", "x" * 80]], 40)
+    assert all(len(line) <= 40 for line in lines)
+    assert lines[1].endswith("…")
+
+
+def test_wrapping_keeps_the_indent() -> None:
+    assert wrap("one two three", 9, first="- ", indent="  ") == ["- one two", "  three"]
