@@ -19,7 +19,7 @@ from math import pi, sqrt
 from typing import TypeVar
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
 Quantity = TypeVar("Quantity", float, NDArray[np.float64])
 
@@ -72,23 +72,25 @@ def per_nm_from_per_A(value_inv_A: Quantity) -> Quantity:
     return value_inv_A * A_PER_NM
 
 
-def d_from_two_theta(two_theta_deg: Quantity, wavelength_A: float) -> Quantity:
+def d_from_two_theta(two_theta_deg: ArrayLike, wavelength_A: float) -> NDArray[np.float64]:
     """Spacing (Å) from the Bragg angle 2θ (degrees), exact: d = λ / (2 sinθ)."""
-    return wavelength_A / (2.0 * np.sin(np.radians(two_theta_deg) / 2.0))  # type: ignore[return-value]
+    half = np.radians(np.asarray(two_theta_deg, dtype=np.float64)) / 2.0
+    return np.asarray(wavelength_A / (2.0 * np.sin(half)), dtype=np.float64)
 
 
-def two_theta_from_d(d_A: Quantity, wavelength_A: float) -> Quantity:
+def two_theta_from_d(d_A: ArrayLike, wavelength_A: float) -> NDArray[np.float64]:
     """Bragg angle 2θ (degrees) from the spacing (Å); NaN where λ > 2d and no ring exists."""
-    sine = np.asarray(wavelength_A / (2.0 * d_A), dtype=np.float64)
-    angle = np.degrees(2.0 * np.arcsin(np.where(sine <= 1.0, sine, np.nan)))
-    return angle[()]  # type: ignore[no-any-return]
+    sine = wavelength_A / (2.0 * np.asarray(d_A, dtype=np.float64))
+    reached = np.where(sine <= 1.0, sine, np.nan)
+    return np.asarray(np.degrees(2.0 * np.arcsin(reached)), dtype=np.float64)
 
 
-def two_theta_slope_A(d_A: Quantity, wavelength_A: float) -> Quantity:
-    """|∂d/∂2θ| in Å per degree: (d/2) cotθ π/180; zero where λ ≥ 2d."""
-    sine = np.asarray(wavelength_A / (2.0 * d_A), dtype=np.float64)
+def two_theta_slope_A(d_A: ArrayLike, wavelength_A: float) -> NDArray[np.float64]:
+    """|∂d/∂2θ| in Å per degree, (d/2) cotθ π/180; zero where λ ≥ 2d."""
+    d = np.asarray(d_A, dtype=np.float64)
+    sine = wavelength_A / (2.0 * d)
     cosine = np.sqrt(np.clip(1.0 - sine**2, 0.0, None))
-    return (d_A * cosine / sine * pi / 360.0)[()]  # type: ignore[no-any-return]
+    return np.asarray(d * cosine / sine * (pi / 360.0), dtype=np.float64)
 
 
 def d_from_radius(radius: Quantity, camera_constant_A: float) -> Quantity:

@@ -7,6 +7,7 @@ import unicodedata
 from dataclasses import dataclass, field
 from difflib import get_close_matches
 from math import asin, degrees, isfinite
+from typing import NoReturn
 
 from phaseid import units
 from phaseid.errors import InputError
@@ -21,10 +22,10 @@ SMALLEST_SCALE_SIGMA = 1e-5
 
 # relative one-sigma of the common scale where none is stated: common practice, no source
 _DEFAULT_SCALE = {
-    "electron": (0.015, "a camera constant without an internal standard is good to 1 to 3 %"),
-    "tube": (0.0005, "a characteristic line is known far better than a diffractometer's alignment"),
-    "x-ray": (0.001, "a monochromator's energy is good to about 0.1 %"),
-    "neutron": (0.002, "a monochromator's or a flight path's calibration is good to about 0.2 %"),
+    "electron": 0.015,  # a camera constant without an internal standard is good to 1 to 3 %
+    "tube": 0.0005,  # the line is known far better; this is the diffractometer's alignment
+    "x-ray": 0.001,  # energy of a monochromator
+    "neutron": 0.002,  # monochromator or flight path
 }
 _USUAL: dict[Kind, str] = {"electron": "200 kV", "x-ray": "Cu Ka", "neutron": "1.54 A"}
 _RANGE_A: dict[Kind, tuple[float, float]] = {
@@ -67,8 +68,31 @@ _DEFAULT_GEOMETRY: dict[Kind, Geometry] = {
     "neutron": "debye-scherrer",
 }
 _FILLERS = frozenset(
-    "radiation tube source beam wavelength lambda λ energy diffraction powder with and at of the in "
-    "ring rings pattern geometry detector unpolarised unpolarized".split()
+    (
+        "radiation",
+        "tube",
+        "source",
+        "beam",
+        "wavelength",
+        "lambda",
+        "λ",
+        "energy",
+        "diffraction",
+        "powder",
+        "with",
+        "and",
+        "at",
+        "of",
+        "the",
+        "in",
+        "ring",
+        "rings",
+        "pattern",
+        "geometry",
+        "detector",
+        "unpolarised",
+        "unpolarized",
+    )
 )
 _LINES = {"1": "Kα1", "2": "Kα2", "": "Kα", "12": "Kα"}
 
@@ -102,12 +126,7 @@ def parse_probe(text: str, *, scale_sigma: float | None = None) -> Probe:
     kind = words.kind or words.kind_from_unit()
     if kind is None:
         words.complain("no radiation is named")
-    probe = _assemble(words, kind)
-    if scale_sigma is None:
-        sigma, why = _DEFAULT_SCALE["tube" if words.anode else kind]
-        note = f"Scale uncertainty not stated: {100 * sigma:g} % assumed ({why})."
-        return _with(probe, sigma, stated=False, remarks=(*probe.remarks, note))
-    return _with(probe, check_relative(scale_sigma, "scale uncertainty"), stated=True)
+    return _assemble(words, kind, scale_sigma)
 
 
 def parse_relative(text: str, what: str = "scale uncertainty") -> float:
@@ -250,7 +269,7 @@ class _Words:
             return "electron"
         return "neutron" if self.geometry == "time-of-flight" else None
 
-    def complain(self, what: str) -> None:
+    def complain(self, what: str) -> NoReturn:
         known = [
             *_KINDS,
             *_GEOMETRIES,
@@ -267,13 +286,15 @@ class _Words:
         numbers = [word for word in self.rest if re.fullmatch(_NUMBER, word)]
         if numbers and self.kind:
             unit = {"electron": "kV", "x-ray": "keV", "neutron": "A"}[self.kind]
+            if self.kind == "x-ray" and float(numbers[0].replace(",", ".")) < 3.0:
+                unit = "A"
             nearest = f"The number needs its unit: '{self.kind} {numbers[0]} {unit}'. "
         raise InputError(
             f"cannot read the probe '{self.text}': {what}", remedy=f"{nearest}Write {EXAMPLES}."
         )
 
 
-def _assemble(words: _Words, kind: Kind) -> Probe:
+def _assemble(words: _Words, kind: Kind, scale_sigma: float | None) -> Probe:
     remarks: list[str] = []
     stated = bool(words.anode) or words.number is not None
     tof = words.geometry == "time-of-flight"
@@ -309,17 +330,21 @@ def _assemble(words: _Words, kind: Kind) -> Probe:
     angle = _monochromator_angle(words, wavelength)
     if angle:
         label.append(f"monochromator {plain_number(angle)}°")
+    scale = _DEFAULT_SCALE["tube" if words.anode else kind]
+    if scale_sigma is not None:
+        scale = check_relative(scale_sigma)
     return Probe(
         kind=kind,
         wavelength_A=wavelength,
-        scale_sigma=0.0,
+        scale_sigma=scale,
         label=", ".join(label),
         geometry=geometry,
         polarisation=polarisation if polarisation is not None and kind == "x-ray" else 0.5,
         monochromator_two_theta_deg=angle,
         ghosts=ghosts(words.anode, words.line) if words.anode and not angle else (),
         wavelength_stated=stated,
-        remarks=tuple(remarks),
+        scale_stated=scale_sigma is not None,
+        assumed=tuple(remarks),
     )
 
 
@@ -362,16 +387,3 @@ def _monochromator_angle(words: _Words, wavelength_A: float) -> float:
     if sine >= 1.0:
         words.complain(f"{crystal} cannot reflect {wavelength_A:.3g} Å")
     return round(2.0 * degrees(asin(sine)), 2)
-
-
-def _with(
-    probe: Probe, scale_sigma: float, *, stated: bool, remarks: tuple[str, ...] | None = None
-) -> Probe:
-    from dataclasses import replace
-
-    return replace(
-        probe,
-        scale_sigma=scale_sigma,
-        scale_stated=stated,
-        remarks=probe.remarks if remarks is None else remarks,
-    )

@@ -1,8 +1,8 @@
-"""What made the pattern: radiation, wavelength and its uncertainty, geometry, and what that shows."""
+"""What made the pattern: radiation, wavelength, its uncertainty, geometry; what that shows."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -32,8 +32,8 @@ class Probe:
     `wavelength_stated` is False where the text named only the radiation and a usual wavelength was
     assumed, enough for spacings but not for angles. For time of flight `wavelength_A` is nominal.
 
-    Geometries: "ring" plate of an electron microscope, small angle; "bragg-brentano" reflection from
-    a thick flat specimen; "debye-scherrer" thin rod, read along a circle around it;
+    Geometries: "ring" plate of an electron microscope, small angle; "bragg-brentano" reflection
+    from a thick flat specimen; "debye-scherrer" thin rod, read along a circle around it;
     "transmission" flat plate or area detector normal to the beam; "time-of-flight" white neutrons
     at a fixed angle.
 
@@ -41,7 +41,7 @@ class Probe:
     diffraction: 0.5 for a tube and for the azimuthal mean over a full ring.
     `monochromator_two_theta_deg` is the 2θ of a crystal monochromator, 0 for none.
     `ghosts` are (name, wavelength in Å) of other lines of the tube that may print fainter rings.
-    `remarks` are sentences to show with an answer: what was assumed.
+    `assumed` are sentences on what else was not stated; `remarks` shows them all.
     """
 
     kind: Kind
@@ -54,7 +54,21 @@ class Probe:
     ghosts: tuple[tuple[str, float], ...] = ()
     wavelength_stated: bool = True
     scale_stated: bool = True
-    remarks: tuple[str, ...] = ()
+    assumed: tuple[str, ...] = ()
+
+    @property
+    def remarks(self) -> tuple[str, ...]:
+        """Sentences to show with an answer: every value that was assumed and not stated."""
+        if self.scale_stated:
+            return self.assumed
+        scale = (
+            f"Scale uncertainty not stated: {100 * self.scale_sigma:g} % assumed for this probe."
+        )
+        return (*self.assumed, scale)
+
+    def with_scale(self, scale_sigma: float) -> Probe:
+        """The same probe with a stated relative one-sigma of its scale."""
+        return replace(self, scale_sigma=scale_sigma, scale_stated=True)
 
     @property
     def xray_energy_eV(self) -> float | None:
@@ -88,7 +102,7 @@ class Probe:
         A cone takes m|F|²/sinθ times the polarisation and spreads it over a circumference ∝ sin2θ
         (on a sphere or cylinder) or ∝ tan2θ (on a plate). Hence
         electrons at small angle: mean m|F|²d², sum m|F|²d (Vainshtein, Structure Analysis by
-        Electron Diffraction, 1964); the relativistic mass factor is common to all lines and left out;
+        Electron Diffraction, 1964); the relativistic mass factor, common to all lines, is left out;
         X-rays: mean m|F|² P/(sin²θ cosθ) (International Tables C, 6.2), times cos2θ on a plate;
         neutrons: the same without P; time of flight: m|F|²d⁴ (Buras & Gerward 1975, Acta Cryst.
         A31, 372). Absorption, texture, extinction and dynamical scattering are not in it.
@@ -111,8 +125,8 @@ class Probe:
         """What polarisation leaves of an X-ray line at 2θ; 1 in the forward direction.
 
         (1 + A cos²2θ)/(1 + A), A = cos²2θ_M (1 − p)/p, with p the fraction polarised normal to the
-        plane of diffraction and θ_M the monochromator's angle (ideally mosaic crystal; Azaroff 1955,
-        Acta Cryst. 8, 701).
+        plane of diffraction and θ_M the monochromator's angle (ideally mosaic crystal; Azaroff
+        1955, Acta Cryst. 8, 701).
         """
         return self._polarisation(np.cos(np.radians(np.asarray(two_theta_deg, dtype=np.float64))))
 
@@ -143,7 +157,7 @@ class Probe:
 
 
 def ghost_d_A(d_A: float, probe: Probe, ghost_wavelength_A: float) -> float:
-    """Spacing (Å) a ghost ring of planes d_A seems to have when its angle is read with the probe's λ.
+    """Spacing (Å) that a ghost ring of planes d_A seems to have, its angle read with the probe's λ.
 
     The ghost line λ' prints at sinθ = λ'/2d and is read as λ/(2 sinθ) = d λ/λ'. Copper Kβ seen
     through Cu Kα1 sits at 1.1066 d.
