@@ -2,10 +2,23 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
+
+from phaseid.crystal.crystal import Crystal
+from phaseid.crystal.metric import volume_A3
+from phaseid.crystal.operations import read_operations
+from phaseid.crystal.reflections import FINEST_D_A, unique_reflections
+from phaseid.crystal.scattering import CU_KA1_EV
+from phaseid.crystal.structure_factor import squared_amplitudes
+from phaseid.errors import InputError
+
+Floats = NDArray[np.float64]
+
+COINCIDENT = 2e-5
+"""Lines whose d differ by less than this part are one line."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -20,12 +33,104 @@ class Lines:
     m|F|²d² is below `floor` times the strongest for every probe.
     """
 
-    d_A: NDArray[np.float64]
+    d_A: Floats
     hkl: NDArray[np.int32]
     multiplicity: NDArray[np.int32]
-    f2_xray: NDArray[np.float64]
-    f2_electron: NDArray[np.float64]
-    f2_neutron: NDArray[np.float64]
+    f2_xray: Floats
+    f2_electron: Floats
+    f2_neutron: Floats
     volume_A3: float
     complete_to_A: float
     floor: float = 0.0
+
+
+def compute_lines(
+    crystal: Crystal,
+    *,
+    d_min_A: float | None = None,
+    xray_energy_eV: float | None = CU_KA1_EV,
+) -> Lines:
+    """Compute the lines of a crystal.
+
+    Without `d_min_A` they reach 0.6 Å, or as far as about 1000 unique reflections go, but at least
+    1.2 Å. `xray_energy_eV` is that of f′ and f″ (Cu Kα1 unless told otherwise); None leaves them
+    out. |F|² is the mean of Friedel mates; atoms are neutral; sites without displacement swing with
+    B = 0.5 Å². Tables and their ranges: `phaseid.crystal.scattering`.
+
+    Raises InputError if the cell has no volume, the operations are no group, an atom has no
+    tabulated scattering factors, or `d_min_A` asks for more reflections than can be listed.
+    """
+    if not crystal.sites:
+        raise InputError(f"{crystal.name or crystal.formula or 'the structure'} has no atoms")
+    operations = read_operations(crystal.operations)
+    found = unique_reflections(crystal.cell, operations, d_min_A)
+    f2 = squared_amplitudes(crystal, operations, found, xray_energy_eV)
+    table = np.stack([f2.xray, f2.electron, f2.neutron])
+    seen = table.any(axis=0)
+    hkl, multiplicity, d_A, table = _merged(
+        found.hkl[seen].astype(np.int32),
+        found.multiplicity[seen],
+        found.inverse_d2[seen] ** -0.5,
+        table[:, seen],
+    )
+    return Lines(
+        d_A=d_A,
+        hkl=hkl,
+        multiplicity=multiplicity.astype(np.int32),
+        f2_xray=table[0],
+        f2_electron=table[1],
+        f2_neutron=table[2],
+        volume_A3=volume_A3(crystal.cell),
+        complete_to_A=found.d_min_A,
+    )
+
+
+def trim(lines: Lines, floor: float) -> Lines:
+    """Drop the lines whose m|F|²d² is below `floor` times the strongest for every probe.
+
+    The strongest is taken among lines with d ≥ 0.6 Å, so that it does not depend on how far the list
+    goes. Raises InputError unless 0 ≤ floor < 1.
+    """
+    if not 0 <= floor < 1:
+        raise InputError(f"the floor must lie between 0 and 1, not {floor:g}")
+    weight = lines.multiplicity * lines.d_A**2
+    strength = np.stack([lines.f2_xray, lines.f2_electron, lines.f2_neutron]) * weight
+    counted = strength[:, lines.d_A >= FINEST_D_A]
+    strongest = counted.max(axis=1, initial=0.0)[:, None]
+    kept = ((strength >= floor * strongest) & (strength > 0)).any(axis=0)
+    return replace(
+        lines,
+        d_A=lines.d_A[kept],
+        hkl=lines.hkl[kept],
+        multiplicity=lines.multiplicity[kept],
+        f2_xray=lines.f2_xray[kept],
+        f2_electron=lines.f2_electron[kept],
+        f2_neutron=lines.f2_neutron[kept],
+        floor=max(lines.floor, floor),
+    )
+
+
+def _merged(
+    hkl: NDArray[np.int32], multiplicity: NDArray[np.int64], d_A: Floats, f2: Floats
+) -> tuple[NDArray[np.int32], NDArray[np.int64], Floats, Floats]:
+    """Merge neighbours in falling d that coincide; hkl and d of the strongest for X-rays."""
+    if len(d_A) < 2:
+        return hkl, multiplicity, d_A, f2
+    fall = np.log(d_A)
+    fall = fall[0] - fall
+    new = np.diff(fall, prepend=-1.0) > COINCIDENT
+    first = np.flatnonzero(new)
+    within = fall - fall[first][np.cumsum(new) - 1]
+    if within.max() > COINCIDENT:  # a chain of near neighbours longer than the tolerance: cut it
+        link = np.floor(within / COINCIDENT)
+        new |= np.diff(link, prepend=0.0) > 0
+        first = np.flatnonzero(new)
+    if len(first) == len(d_A):
+        return hkl, multiplicity, d_A, f2
+    weighted = multiplicity * f2
+    total = np.add.reduceat(multiplicity, first)
+    line = np.cumsum(new) - 1
+    by_strength = np.lexsort((-weighted[0], line))
+    strongest = by_strength[first]
+    merged = np.add.reduceat(weighted, first, axis=1) / total
+    return hkl[strongest], total, d_A[strongest], merged

@@ -1,0 +1,238 @@
+"""Unique reflections of a cell: hkl, d, multiplicity; and those only multiple scattering can show."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
+
+from phaseid.crystal.crystal import Crystal
+from phaseid.crystal.metric import Cell, metric_tensor, volume_A3
+from phaseid.crystal.operations import MAX_INDEX, Operations, read_operations
+from phaseid.errors import InputError
+
+Floats = NDArray[np.float64]
+
+FINEST_D_A = 0.6
+COARSEST_D_A = 1.2
+WANTED_REFLECTIONS = 1000
+MOST_REFLECTIONS = 20_000
+_MOST_POINTS = 30_000_000
+_INTEGER = 1e-3  # h·t is a multiple of 1/24; anything nearer to an integer than this is one
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Reflections:
+    """One reflection of each set of equivalents, by falling d; systematic absences left out.
+
+    `hkl` (n, 3) float64 holds whole numbers, `inverse_d2` (n,) is 1/d² in Å⁻², `multiplicity` (n,)
+    counts all equivalents, Friedel mates included. Complete down to `d_min_A`.
+    """
+
+    hkl: Floats
+    inverse_d2: Floats
+    multiplicity: NDArray[np.int64]
+    d_min_A: float
+
+
+def reciprocal_metric(cell: Cell) -> Floats:
+    """Return the reciprocal metric tensor (3, 3) in Å⁻²; InputError if the cell has no volume."""
+    if not (all(map(math.isfinite, cell)) and min(cell[:3]) > 0 and volume_A3(cell) > 1e-3):
+        raise InputError(
+            "the cell " + " ".join(f"{x:g}" for x in cell) + " encloses no volume",
+            remedy="Check lengths (Å) and angles (degrees)",
+        )
+    return np.linalg.inv(metric_tensor(cell))
+
+
+def unique_reflections(
+    cell: Cell, operations: Operations, d_min_A: float | None = None
+) -> Reflections:
+    """Return every unique reflection with d ≥ `d_min_A`.
+
+    Without `d_min_A` the list reaches 0.6 Å, or as far as about 1000 reflections go, but always at
+    least 1.2 Å (at most 20 000 reflections). Raises InputError if a range is asked that holds more
+    than a computer should be asked for.
+    """
+    reciprocal = reciprocal_metric(cell)
+    if d_min_A is not None:
+        if not (d_min_A > 0 and math.isfinite(d_min_A)):
+            raise InputError(f"the smallest d must be a positive number of Å, not {d_min_A:g}")
+        return _enumerate(cell, reciprocal, operations, d_min_A)
+    # points of the reciprocal lattice in a sphere, shared among equivalents (a lower bound on sets)
+    per_volume = 4 / 3 * math.pi * volume_A3(cell)
+    sets = per_volume / (len(operations.centrings) * 2 * len(operations.rotations))
+    d_A = min(max((sets / WANTED_REFLECTIONS) ** (1 / 3), FINEST_D_A), COARSEST_D_A)
+    d_A = max(d_A, (sets / MOST_REFLECTIONS) ** (1 / 3))
+    found = _enumerate(cell, reciprocal, operations, d_A)
+    if d_A < COARSEST_D_A and len(found.hkl) > WANTED_REFLECTIONS:
+        return _cut(found, WANTED_REFLECTIONS, COARSEST_D_A)
+    return _cut(found, MOST_REFLECTIONS, math.inf)
+
+
+def _cut(reflections: Reflections, wanted: int, coarsest_d_A: float) -> Reflections:
+    """Keep the first `wanted` reflections, and all down to `coarsest_d_A`."""
+    if len(reflections.hkl) <= wanted:
+        return reflections
+    d_A = min(float(reflections.inverse_d2[wanted - 1]) ** -0.5 * (1 - 1e-9), coarsest_d_A)
+    d_A = max(d_A, reflections.d_min_A)
+    n = int(np.searchsorted(reflections.inverse_d2, d_A**-2, side="right"))
+    return Reflections(
+        reflections.hkl[:n], reflections.inverse_d2[:n], reflections.multiplicity[:n], d_A
+    )
+
+
+def _enumerate(
+    cell: Cell, reciprocal: Floats, operations: Operations, d_min_A: float
+) -> Reflections:
+    domain = _domain(operations)
+    hkl, inverse_d2 = _points(cell, reciprocal, d_min_A, domain.nonnegative)
+    for axis in operations.from_primitive.T:
+        if np.count_nonzero(axis) != 1 or axis.sum() != 1:
+            phase = hkl @ axis
+            allowed = np.abs(phase - np.rint(phase)) < _INTEGER
+            hkl, inverse_d2 = hkl[allowed], inverse_d2[allowed]
+    for wall in domain.walls:
+        inside = hkl @ wall >= 0
+        hkl, inverse_d2 = hkl[inside], inverse_d2[inside]
+    ranks = hkl @ domain.ranks
+    own = ranks[:, :1] if domain.identity == 0 else ranks[:, [domain.identity]]
+    size = np.abs(ranks)
+    first = (own >= size).all(axis=1)
+    alike = (size == own)[first]
+    hkl, inverse_d2 = hkl[first], inverse_d2[first]
+    stabiliser = alike.sum(axis=1)
+    absent = _absent(hkl, alike, ranks[first], operations)
+    order = np.argsort(inverse_d2[~absent], kind="stable")
+    multiplicity = 2 * len(operations.rotations) // stabiliser
+    return Reflections(
+        hkl[~absent][order],
+        inverse_d2[~absent][order],
+        multiplicity[~absent][order],
+        d_min_A,
+    )
+
+
+def _points(
+    cell: Cell, reciprocal: Floats, d_min_A: float, nonnegative: tuple[bool, ...]
+) -> tuple[Floats, Floats]:
+    """All reciprocal lattice points but the origin with d ≥ d_min, with their 1/d²."""
+    limit = [int(length / d_min_A * (1 + 1e-9)) for length in cell[:3]]
+    counts = [n + 1 if half else 2 * n + 1 for n, half in zip(limit, nonnegative, strict=True)]
+    if max(limit) > MAX_INDEX or math.prod(counts) > _MOST_POINTS:
+        raise InputError(
+            f"a cell of {' × '.join(f'{x:.0f}' for x in cell[:3])} Å has too many reflections down to"
+            f" {d_min_A:g} Å",
+            remedy="Ask for a larger smallest d",
+        )
+    h, k, l = (
+        np.arange(0 if half else -n, n + 1, dtype=np.float64)
+        for n, half in zip(limit, nonnegative, strict=True)
+    )
+    g = reciprocal
+    kl = ((g[1, 1] * k * k)[:, None] + g[2, 2] * l * l + (2 * g[1, 2] * k)[:, None] * l).ravel()
+    cross = ((2 * g[0, 1] * k)[:, None] + 2 * g[0, 2] * l).ravel()
+    inverse_d2 = (g[0, 0] * h * h)[:, None] + kl
+    if cross.any():
+        inverse_d2 += h[:, None] * cross
+    flat = inverse_d2.ravel()
+    inside = np.flatnonzero(flat <= d_min_A**-2 * (1 + 1e-12))
+    i, rest = np.divmod(inside, len(kl))
+    j, m = np.divmod(rest, len(l))
+    hkl = np.stack([h[i], k[j], l[m]], axis=1)
+    some = hkl.any(axis=1)
+    return hkl[some], flat[inside][some]
+
+
+def _absent(
+    hkl: Floats, alike: NDArray[np.bool_], ranks: Floats, operations: Operations
+) -> NDArray[np.bool_]:
+    """Which hkl a glide plane or screw axis forbids: some operation maps hkl on itself out of step."""
+    gliding = _domain(operations).gliding
+    if not len(gliding):
+        return np.zeros(len(hkl), dtype=bool)
+    held = alike[:, gliding]
+    if not operations.centrosymmetric:  # the opposite of hkl is another reflection
+        held = held & (ranks[:, gliding] > 0)
+    phase = hkl @ operations.translations[gliding].T
+    return (held & (np.abs(phase - np.rint(phase)) > _INTEGER)).any(axis=1)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Domain:
+    """Where the first-ranked reflection of each set lies."""
+
+    ranks: Floats  # (3, n)
+    identity: int
+    walls: tuple[Floats, ...]
+    nonnegative: tuple[bool, ...]
+    gliding: NDArray[np.int64]
+
+
+@lru_cache(maxsize=2048)
+def _domain(operations: Operations) -> _Domain:
+    ranks = operations.ranks
+    identity = int(np.argmax([np.array_equal(r, np.eye(3)) for r in operations.rotations]))
+    own = ranks[:, identity]
+    walls = np.concatenate([own - ranks.T, own + ranks.T])
+    nonnegative = tuple(
+        bool(np.any((walls[:, i] > 0) & (np.count_nonzero(walls, axis=1) == 1))) for i in range(3)
+    )
+    # a short list of walls that already excludes nearly everything outside, found on a sample
+    sample = np.stack(np.meshgrid(*[np.arange(-4.0, 5.0)] * 3), axis=-1).reshape(-1, 3)
+    sample = sample[(sample >= np.where(nonnegative, 0, -4)).all(axis=1)]
+    chosen: list[Floats] = []
+    outside = sample @ walls.T < 0
+    while len(outside):
+        counts = outside.sum(axis=0)
+        best = int(np.argmax(counts))
+        if counts[best] < 0.1 * len(outside):
+            break
+        chosen.append(walls[best])
+        outside = outside[~outside[:, best]]
+    shift = operations.translations @ operations.to_primitive.T
+    gliding = np.flatnonzero(np.abs(shift - np.rint(shift)).max(axis=1) > _INTEGER)
+    return _Domain(ranks, identity, tuple(chosen), nonnegative, gliding)
+
+
+def multiple_scattering_lines(
+    crystal: Crystal, d_min_A: float = FINEST_D_A
+) -> tuple[NDArray[np.int32], Floats]:
+    """Return hkl (n, 3) and d (n,) in Å, falling, of lines that only multiple scattering can show.
+
+    These are reflections that a glide plane or screw axis forbids and the lattice allows, and that
+    are the sum of two allowed ones, so that electrons scattered twice can put a ring there (double
+    diffraction: 200 of silicon, 00l with l odd of a hexagonal close-packed metal). One hkl per d.
+    """
+    operations = read_operations(crystal.operations)
+    without_glides = Operations(
+        rotations=operations.rotations,
+        translations=np.zeros_like(operations.translations),
+        origin=operations.origin,
+        centrings=operations.centrings,
+        to_primitive=operations.to_primitive,
+        from_primitive=operations.from_primitive,
+        centrosymmetric=operations.centrosymmetric,
+        order=operations.order,
+        products=operations.products,
+    )
+    every = unique_reflections(crystal.cell, without_glides, d_min_A)
+    allowed = unique_reflections(crystal.cell, operations, d_min_A)
+    known = {tuple(h) for h in allowed.hkl.tolist()}
+    forbidden = np.array(
+        [i for i, h in enumerate(every.hkl.tolist()) if tuple(h) not in known], int
+    )
+    signed = np.concatenate([operations.rotations, -operations.rotations])
+    beams = np.unique((allowed.hkl @ signed).reshape(-1, 3), axis=0)
+    beam_set = {tuple(h) for h in beams.tolist()}
+    reachable = [
+        i for i in forbidden if any(tuple(h) in beam_set for h in (every.hkl[i] - beams).tolist())
+    ]
+    hkl, d_A = every.hkl[reachable].astype(np.int32), every.inverse_d2[reachable] ** -0.5
+    if len(d_A):
+        new = np.concatenate([[True], d_A[1:] < d_A[:-1] * (1 - 2e-5)])
+        hkl, d_A = hkl[new], d_A[new]
+    return hkl, d_A
