@@ -1,4 +1,4 @@
-"""The front door: the names a notebook may rely on. Growing it is a decision, shrinking it a break."""
+"""The front door: the names a notebook may rely on."""
 
 from __future__ import annotations
 
