@@ -1,6 +1,7 @@
 """What made the pattern: electrons, X-rays or neutrons, and the intensity each shows."""
 
-from phaseid.probes.parsing import parse_probe, parse_relative
+from phaseid.probes.numbers import parse_relative
+from phaseid.probes.parsing import parse_probe
 from phaseid.probes.probe import Geometry, Kind, Probe, ghost_d_A
 from phaseid.probes.two_beam import blackman_ratio, two_beam_weights
 

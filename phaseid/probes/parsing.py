@@ -6,11 +6,12 @@ import re
 import unicodedata
 from dataclasses import dataclass, field
 from difflib import get_close_matches
-from math import asin, degrees, isfinite
+from math import asin, degrees
 from typing import NoReturn
 
 from phaseid import units
 from phaseid.errors import InputError
+from phaseid.probes.numbers import NUMBER, check_relative, plain_number, read_number
 from phaseid.probes.probe import Geometry, Kind, Probe
 from phaseid.probes.tubes import ANODES, MONOCHROMATORS, ghosts
 
@@ -18,7 +19,6 @@ EXAMPLES = (
     "'electron 200 kV', 'x-ray Cu Ka', 'x-ray Cu Ka1', 'x-ray 20 keV', "
     "'x-ray 0.7107 A' or 'neutron 1.54 A'"
 )
-SMALLEST_SCALE_SIGMA = 1e-5
 
 # relative one-sigma of the common scale where none is stated: common practice, no source
 _DEFAULT_SCALE = {
@@ -96,19 +96,18 @@ _FILLERS = frozenset(
 )
 _LINES = {"1": "Kα1", "2": "Kα2", "": "Kα", "12": "Kα"}
 
-_NUMBER = r"(\d+(?:[.,]\d+)?|[.,]\d+)(?:e([+-]?\d+))?"
 _QUANTITY = re.compile(
-    rf"{_NUMBER}\s*-?\s*(kv|kev|mv|mev|ev|volts?|v|angstroms?|å|a|nm|pm)\b(?!\w)", re.IGNORECASE
+    rf"{NUMBER}\s*-?\s*(kv|kev|mv|mev|ev|volts?|v|angstroms?|å|a|nm|pm)\b(?!\w)", re.IGNORECASE
 )
 _MONOCHROMATOR = re.compile(
-    rf"(?:(\w+)[\s-]+)?monochromat(?:or|ed|ised|ized)(?:\s*(?:2θ|2theta)?\s*{_NUMBER}\s*(?:°|deg\w*))?"
+    rf"(?:(\w+)[\s-]+)?monochromat(?:or|ed|ised|ized)(?:\s*(?:2θ|2theta)?\s*{NUMBER}\s*(?:°|deg\w*))?"
 )
-_POLARISATION = re.compile(rf"polari[sz](?:ation|ed)\s*(?:fraction)?\s*{_NUMBER}\s*(%)?")
+_POLARISATION = re.compile(rf"polari[sz](?:ation|ed)\s*(?:fraction)?\s*{NUMBER}\s*(%)?")
 _ANODE = re.compile(
     r"\b([a-z]{1,2})[\s-]*k[\s-]*(alpha|beta|a|b|α|β)[\s-]*_?([123](?:\s*[,+/&]\s*[123])?)?(?!\w)"
 )
 _FILTER = re.compile(r"\b(ni|fe|mn|v|zr|pd|rh)[\s-]*filter(?:ed)?\b")
-_TUBE_SETTING = re.compile(rf"{_NUMBER}\s*(?:kv|ma|kw)\b")
+_TUBE_SETTING = re.compile(rf"{NUMBER}\s*(?:kv|ma|kw)\b")
 
 
 def parse_probe(text: str, *, scale_sigma: float | None = None) -> Probe:
@@ -127,42 +126,6 @@ def parse_probe(text: str, *, scale_sigma: float | None = None) -> Probe:
     if kind is None:
         words.complain("no radiation is named")
     return _assemble(words, kind, scale_sigma)
-
-
-def parse_relative(text: str, what: str = "scale uncertainty") -> float:
-    """A relative one-sigma from text: "1 %", "0.005", "200 ppm".
-
-    Raises InputError if it is no number, negative, or so large that a percent sign is missing.
-    """
-    plain = unicodedata.normalize("NFKC", text).strip().lower().removeprefix("±").strip()
-    match = re.fullmatch(rf"\+?{_NUMBER}\s*(%|percent|per cent|‰|ppm)?", plain)
-    if match is None:
-        raise InputError(
-            f"cannot read the {what} '{text.strip()}'", remedy="Write it as '1 %' or '0.01'."
-        )
-    unit = {"%": 1e-2, "percent": 1e-2, "per cent": 1e-2, "‰": 1e-3, "ppm": 1e-6}
-    return check_relative(_value(match[1], match[2]) * unit.get(match[3] or "", 1.0), what)
-
-
-def check_relative(value: float, what: str = "scale uncertainty") -> float:
-    """A relative one-sigma that makes sense, at least 1e-5; raises InputError otherwise."""
-    if not isfinite(value) or value < 0:
-        raise InputError(f"the {what} is {value:g}", remedy="Give a positive fraction or percent.")
-    if value > 0.2:
-        raise InputError(
-            f"the {what} of {100 * value:g} % is too large to compare spacings at all",
-            remedy=f"If {value:g} % was meant, write the percent sign: '{value:g} %'.",
-        )
-    return max(value, SMALLEST_SCALE_SIGMA)
-
-
-def _value(number: str, exponent: str | None) -> float:
-    return float(f"{number.replace(',', '.')}e{exponent or 0}")
-
-
-def plain_number(value: float) -> str:
-    """The shortest text that reads back as exactly this number, without exponent or '.0'."""
-    return repr(float(value)).removesuffix(".0")
 
 
 @dataclass(slots=True)
@@ -200,14 +163,14 @@ class _Words:
 
     def _take_options(self, plain: str) -> str:
         if match := _POLARISATION.search(plain):
-            value = _value(match[1], match[2]) * (0.01 if match[3] else 1.0)
+            value = read_number(match[1], match[2]) * (0.01 if match[3] else 1.0)
             if not 0.0 < value <= 1.0:
                 self.complain(f"a polarisation fraction of {value:g} is not between 0 and 1")
             self.polarisation = value
             plain = plain.replace(match[0], " ")
         if match := _MONOCHROMATOR.search(plain):
             name = match[1] or ""
-            angle = _value(match[2], match[3]) if match[2] else None
+            angle = read_number(match[2], match[3]) if match[2] else None
             if angle is not None and not 0.0 < angle < 180.0:
                 self.complain(f"a monochromator angle of {angle:g}° is not between 0 and 180°")
             crystal = next((c for c in MONOCHROMATORS if name and c.startswith(name)), "")
@@ -246,7 +209,7 @@ class _Words:
             self.complain("more than one wavelength, energy or voltage is given")
         if not found:
             return plain
-        self.number, self.unit = _value(found[0][1], found[0][2]), found[0][3].lower()
+        self.number, self.unit = read_number(found[0][1], found[0][2]), found[0][3].lower()
         return plain.replace(found[0][0], " ")
 
     def _take_word(self, word: str) -> None:
@@ -283,7 +246,7 @@ class _Words:
             (found[0] for word in self.rest if (found := get_close_matches(word, known, n=1))), None
         )
         nearest = "" if close is None else f"Did you mean '{close}'? "
-        numbers = [word for word in self.rest if re.fullmatch(_NUMBER, word)]
+        numbers = [word for word in self.rest if re.fullmatch(NUMBER, word)]
         if numbers and self.kind:
             unit = {"electron": "kV", "x-ray": "keV", "neutron": "A"}[self.kind]
             if self.kind == "x-ray" and float(numbers[0].replace(",", ".")) < 3.0:

@@ -6,7 +6,8 @@ position, the kinematic intensity times
 
     R(A) = (1/A) ∫₀^A J₀(2x) dx,    A = πt/ξ = λ (m/m₀) |F| t / V.
 
-R → 1 for thin crystals, → 1/(2A) for thick ones, whose intensity follows |F|, no longer |F|². It holds for strong lines of crystallites near a two-beam position and says nothing of systematic
+R → 1 for thin crystals, → 1/(2A) for thick ones, whose intensity follows |F|, no longer |F|².
+It holds for strong lines of crystallites near a two-beam position and says nothing of systematic
 rows, of forbidden lines by double diffraction, or of a spread of thicknesses.
 """
 

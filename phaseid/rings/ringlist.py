@@ -2,19 +2,23 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 
 from phaseid.probes.probe import Probe
+from phaseid.rings.camera import CameraConstant
 
 GRADES: dict[str, tuple[float, float]] = {
     # interval of relative intensity (strongest = 100) each grade stands for:
     # common practice, no source
     "vs": (70.0, 100.0),
     "s": (45.0, 85.0),
+    "ms": (32.0, 70.0),
     "m": (22.0, 55.0),
+    "mw": (12.0, 40.0),
     "w": (7.0, 28.0),
     "vw": (1.0, 12.0),
 }
@@ -24,13 +28,16 @@ GRADES: dict[str, tuple[float, float]] = {
 class RingList:
     """One measured pattern, rings in the order of the file.
 
-    `position_column` is the contract's name ("two_theta_deg", "radius_mm", "d_A", …); `position` and
-    `position_sigma` (m,) are in its unit, as measured. `d_A`, `sigma_A` (m,) are the spacings in Å and
-    the one-sigma of each ring alone (the common scale uncertainty is `probe.scale_sigma`).
-    `intensity` (m,) is relative, strongest = 100, NaN where absent; `intensity_range` (m, 2) the
-    interval a grade stands for, both equal to `intensity` for a number, NaN where absent; `grades`
-    (m,) the grade or "" . `notes` (m,) are the file's. `sigma_stated` is False where a default was used.
+    `position_column` is the file's name for it ("two_theta_deg", "radius_mm", "d_A", …);
+    `position` and `position_sigma` (m,) are in its unit, as measured. `d_A`, `sigma_A` (m,) are the spacings in Å
+    and the one-sigma of each ring alone (the common scale uncertainty is `probe.scale_sigma`).
+    `intensity` (m,) is relative, strongest = 100, NaN where absent, for a grade the geometric
+    middle of its interval; `intensity_range` (m, 2) the interval a grade stands for, both equal to
+    `intensity` for a number, NaN where absent; `grades` (m,) the grade or "". `notes` (m,) are
+    the file's. `sigma_stated` is False where a default was used for any ring.
     `remarks` are sentences to show with the answer (defaults applied, likely slips).
+    `metadata` are all keys of the file as written, known or not; `camera_constant` is that of the
+    file where it states one.
     """
 
     title: str
@@ -47,6 +54,8 @@ class RingList:
     sigma_stated: bool
     source: str = ""
     remarks: tuple[str, ...] = ()
+    metadata: Mapping[str, str] = field(default_factory=dict)
+    camera_constant: CameraConstant | None = None
 
     def __len__(self) -> int:
         return len(self.d_A)
