@@ -45,5 +45,5 @@ def read_number(number: str, exponent: str | None = None) -> float:
 
 
 def plain_number(value: float) -> str:
-    """The shortest text that reads back as exactly this number, without exponent or '.0'."""
+    """The shortest text that reads back as exactly this number."""
     return repr(float(value)).removesuffix(".0")

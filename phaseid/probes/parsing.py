@@ -149,6 +149,8 @@ class _Words:
         words = cls(text=text.strip())
         if not words.text:
             raise InputError("the probe is empty", remedy=f"Write {EXAMPLES}.")
+        if len(words.text) > 200:
+            raise InputError("the probe is too long to be one", remedy=f"Write {EXAMPLES}.")
         plain = unicodedata.normalize("NFKC", words.text).lower().replace("−", "-")
         for pattern, word in _PHRASES:
             plain = re.sub(pattern, word, plain)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 import unicodedata
 from dataclasses import dataclass
+from math import isfinite
 
 from phaseid.errors import InputError
 from phaseid.probes.numbers import plain_number
@@ -14,8 +15,8 @@ EXAMPLE = "25.1 +- 0.3 A mm"
 
 _NUMBER = r"(?:\d+(?:[.,]\d*)?|[.,]\d+)(?:e[+-]?\d+)?"
 _SIGMA = re.compile(rf"(?:\+-|\+/-|±)\s*({_NUMBER})\s*(%)?")
-_BRACKET = re.compile(r"\(\s*(\d+)\s*\)")
-_UNIT = re.compile(rf"({_NUMBER})((?:[\s·*×.-]*[a-zö]+)*)\s*")
+_BRACKET = re.compile(r"\(\s*(\d{1,4})\s*\)")
+_UNIT = re.compile(rf"({_NUMBER})([\sa-zö·*×.-]*)")
 _LENGTHS = {"mm": ("mm", 1.0), "cm": ("mm", MM_PER_CM)} | dict.fromkeys(
     ("px", "pixel", "pixels", "pix"), ("px", 1.0)
 )
@@ -67,7 +68,9 @@ def parse_camera_constant(text: str) -> CameraConstant:
     factor *= spacings[0]
     value = _float(match[1])
     sigma = None
-    if bracket:
+    if not isfinite(value):
+        value = 0.0
+    elif bracket:
         sigma = int(bracket[1]) * last_digit(match[1])
     elif plus_minus:
         sigma = _float(plus_minus[1]) * (0.01 * value if plus_minus[2] else 1.0)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 import unicodedata
 from difflib import get_close_matches
-from math import sqrt
+from math import isfinite, sqrt
 from typing import NamedTuple
 
 from phaseid.rings.camera import last_digit
@@ -63,7 +63,10 @@ def read_position(text: str, name: str) -> Position:
     if value <= 0:
         raise Refused(f"{name} is {'zero' if value == 0 else 'negative'} ({match[1]})")
     step = last_digit(match[1])
-    return Position(value, int(match[2]) * step if match[2] else NAN, step)
+    sigma = int(match[2]) * step if match[2] else NAN
+    if sigma == 0:
+        raise Refused(f"the sigma in '{text.strip()}' is zero")
+    return Position(value, sigma, step)
 
 
 def read_sigma(text: str, position: float) -> float:
@@ -106,4 +109,7 @@ def _plain(text: str) -> str:
 
 
 def _float(number: str) -> float:
-    return float(number.replace(",", "."))
+    value = float(number.replace(",", "."))
+    if not isfinite(value):
+        raise Refused(f"{number} is too large")
+    return value

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import replace
+from math import isnan
 from pathlib import Path
 
 import numpy as np
@@ -94,9 +95,7 @@ def rings_from_values(
         )
     if not len(values):
         raise InputError("no rings are given", remedy="Give at least one position.")
-    sigmas = (
-        [sigma] * len(values) if sigma is None or isinstance(sigma, float | int | str) else sigma
-    )
+    sigmas = [sigma] * len(values) if np.ndim(sigma) == 0 else sigma
     levels: Sequence[float | str | None] = (
         [None] * len(values) if intensities is None else intensities
     )
@@ -170,7 +169,7 @@ def rings_from_table(
 def _cell(value: float | str | None) -> str:
     if value is None or isinstance(value, str):
         return value or ""
-    return plain_number(value)
+    return "" if isnan(value) else plain_number(value)
 
 
 def _located(error: InputError, table: RingTable, line: int | None) -> InputError:
@@ -263,9 +262,10 @@ def _usable(
     """Position, sigma, intensity and spacing (Å) of every row; all bad rows refused together."""
     cells, spacings, problems = [], [], []
     for row in table.rows:
+        if row.defect:
+            problems.append((row.where, row.defect))
+            continue
         try:
-            if row.defect:
-                raise Refused(row.defect)
             position = read_position(row.position, table.column.name)
             sigma = read_sigma(row.sigma, position.value)
             level = read_intensity(row.intensity)
@@ -273,7 +273,7 @@ def _usable(
         except Refused as reason:
             problems.append((row.where, str(reason)))
             continue
-        cells.append((position, position.sigma if np.isnan(sigma) else sigma, level))
+        cells.append((position, position.sigma if isnan(sigma) else sigma, level))
     refuse_rows(problems, table.source)
     return cells, np.array(spacings, dtype=np.float64)
 

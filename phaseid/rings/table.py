@@ -20,7 +20,9 @@ KNOWN_KEYS = ("title", "probe", "scale uncertainty", "camera constant")
 OPTIONAL_COLUMNS = ("sigma", "intensity", "note")
 MAX_BYTES = 2_000_000
 MAX_RINGS = 2000
+MAX_LINE = 5000
 
+_CONTROL = re.compile(rb"[\x00-\x08\x0e-\x19\x1b-\x1f]")  # never in text
 _TOO_MANY = "{} cells, {} in the header (a decimal comma? Write 2.338 or separate columns by ';')"
 _SYNONYMS = {
     "intensity": (
@@ -52,7 +54,7 @@ class Row:
 
 @dataclass(slots=True)
 class RingTable:
-    """A ring list taken apart; `metadata` has keys as spelt, `keys` the known ones and their line."""
+    """A ring list taken apart; `metadata` has keys as spelt, `keys` the known ones with line."""
 
     source: str
     column: Column
@@ -68,8 +70,8 @@ def read_text(path: str | Path) -> str:
     try:
         with file.open("rb") as stream:
             data = stream.read(MAX_BYTES + 1)
-    except OSError as error:
-        reason = (error.strerror or str(error)).lower()
+    except (OSError, ValueError) as error:
+        reason = (getattr(error, "strerror", None) or str(error)).lower()
         raise InputError(
             f"cannot be read: {reason}", path=path, remedy="Give the path of a ring list file."
         ) from None
@@ -81,7 +83,7 @@ def read_text(path: str | Path) -> str:
         )
     if data.startswith((b"\xff\xfe", b"\xfe\xff")):
         raise InputError("is UTF-16 text", path=path, remedy="Save it as UTF-8.")
-    if b"\0" in data:
+    if _CONTROL.search(data):
         raise InputError(
             "is a binary file, not a ring list",
             path=path,
@@ -102,8 +104,15 @@ def parse_table(text: str, source: str) -> RingTable:
     keys: dict[str, tuple[str, int | None]] = {}
     remarks: list[str] = []
     body: list[tuple[int, str]] = []
-    for number, raw in enumerate(text.removeprefix("\ufeff").splitlines(), start=1):
+    for number, raw in enumerate(re.split(r"\r\n|\r|\n", text.removeprefix("\ufeff")), start=1):
         line = raw.strip()
+        if len(line) > MAX_LINE:
+            raise InputError(
+                f"is longer than {MAX_LINE} characters",
+                path=source,
+                line=number,
+                remedy="A ring list has one ring a line.",
+            )
         if line.startswith("#"):
             _take_metadata(line, number, source, metadata, keys, remarks)
         elif line.strip(",; \t"):
@@ -152,6 +161,7 @@ def refuse_rows(problems: list[tuple[str, str]], source: str) -> None:
     if not problems:
         return
     remedy = "Correct it, or begin its line with '#' to leave it out."
+    together = "Correct them, or begin their lines with '#' to leave them out."
     path = source or None
     if len(problems) == 1:
         where, what = problems[0]
