@@ -236,7 +236,7 @@ class _Words:
 
     def complain(self, what: str) -> NoReturn:
         known = [
-            *_KINDS,
+            *(word for word in _KINDS if len(word) > 1),
             *_GEOMETRIES,
             *MONOCHROMATORS,
             "monochromator",

@@ -95,7 +95,9 @@ def rings_from_values(
         )
     if not len(values):
         raise InputError("no rings are given", remedy="Give at least one position.")
-    sigmas = [sigma] * len(values) if np.ndim(sigma) == 0 else sigma
+    sigmas = (
+        [sigma] * len(values) if sigma is None or isinstance(sigma, float | int | str) else sigma
+    )
     levels: Sequence[float | str | None] = (
         [None] * len(values) if intensities is None else intensities
     )

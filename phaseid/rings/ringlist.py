@@ -29,8 +29,9 @@ class RingList:
     """One measured pattern, rings in the order of the file.
 
     `position_column` is the file's name for it ("two_theta_deg", "radius_mm", "d_A", …);
-    `position` and `position_sigma` (m,) are in its unit, as measured. `d_A`, `sigma_A` (m,) are the spacings in Å
-    and the one-sigma of each ring alone (the common scale uncertainty is `probe.scale_sigma`).
+    `position` and `position_sigma` (m,) are in its unit, as measured. `d_A`, `sigma_A` (m,) are
+    the spacings in Å and the one-sigma of each ring alone (the common scale uncertainty is
+    `probe.scale_sigma`).
     `intensity` (m,) is relative, strongest = 100, NaN where absent, for a grade the geometric
     middle of its interval; `intensity_range` (m, 2) the interval a grade stands for, both equal to
     `intensity` for a number, NaN where absent; `grades` (m,) the grade or "". `notes` (m,) are

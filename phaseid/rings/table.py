@@ -173,7 +173,7 @@ def refuse_rows(problems: list[tuple[str, str]], source: str) -> None:
     if len(problems) > 20:
         shown.append(f"\n  and {len(problems) - 20} more")
     raise InputError(
-        f"{len(problems)} rows cannot be used{''.join(shown)}", path=path, remedy=remedy
+        f"{len(problems)} rows cannot be used{''.join(shown)}", path=path, remedy=together
     )
 
 
