@@ -1,5 +1,5 @@
 #!/usr/bin/env python3
-"""Write phaseid/crystal/tables/neutron_lengths.csv from gemmi (elements) and periodictable (isotopes)."""
+"""Write the table of neutron lengths from gemmi (elements) and periodictable (isotopes)."""
 
 from __future__ import annotations
 

@@ -25,10 +25,10 @@ COINCIDENT = 2e-5
 class Lines:
     """The lines of one phase, sorted by falling d, coincident reflections merged.
 
-    `d_A` (n,) float64, Å. `hkl` (n, 3) int, of the strongest contributor, in the cell of the source.
-    `multiplicity` (n,) int counts hkl and its Friedel mate. `f2_xray`, `f2_electron`, `f2_neutron`
-    (n,) float64 are |F|² of one reflection per cell in electron², Å², fm², displacement included,
-    such that multiplicity × f2 is the sum over merged reflections.
+    `d_A` (n,) float64, Å. `hkl` (n, 3) int, of the strongest contributor, in the cell of the
+    source. `multiplicity` (n,) int counts hkl and its Friedel mate. `f2_xray`, `f2_electron`,
+    `f2_neutron` (n,) float64 are |F|² of one reflection per cell in electron², Å², fm²,
+    displacement included, such that multiplicity × f2 is the sum over merged reflections.
     `volume_A3` is the cell's. The list holds every line down to `complete_to_A`, except lines whose
     m|F|²d² is below `floor` times the strongest for every probe.
     """
@@ -88,8 +88,8 @@ def compute_lines(
 def trim(lines: Lines, floor: float) -> Lines:
     """Drop the lines whose m|F|²d² is below `floor` times the strongest for every probe.
 
-    The strongest is taken among lines with d ≥ 0.6 Å, so that it does not depend on how far the list
-    goes. Raises InputError unless 0 ≤ floor < 1.
+    The strongest is taken among lines with d ≥ 0.6 Å, so that it does not depend on how far the
+    list goes. Raises InputError unless 0 ≤ floor < 1.
     """
     if not 0 <= floor < 1:
         raise InputError(f"the floor must lie between 0 and 1, not {floor:g}")

@@ -2,8 +2,8 @@
 
 No space-group table is consulted, so shifted origins and unusual settings need no special care.
 The operations are reduced to one per rotation up to sign: lattice translations only thin out the
-reflections, an inversion centre (moved to the origin) only makes the structure factor real, and what
-is left, at most 24 operations, does all the work.
+reflections, an inversion centre (moved to the origin) only makes the structure factor real, and
+what is left, at most 24 operations, does all the work.
 """
 
 from __future__ import annotations
@@ -34,9 +34,9 @@ class Operations:
     """A space group modulo lattice translations and, where it has one, modulo the inversion.
 
     `rotations` (n, 3, 3) act on fractional coordinates, `translations` (n, 3) belong to the origin
-    moved by `origin` (3,), onto an inversion centre if `centrosymmetric`. `centrings` (c, 3) are the
-    lattice points of the cell. `to_primitive` (3, 3) turns fractional coordinates into those of a
-    primitive basis, `from_primitive` back. `order` is the number of operations as listed.
+    moved by `origin` (3,), onto an inversion centre if `centrosymmetric`. `centrings` (c, 3) are
+    the lattice points of the cell. `to_primitive` (3, 3) turns fractional coordinates into those of
+    a primitive basis, `from_primitive` back. `order` is the number of operations as listed.
     `products` (n, n) is the index of rotation i times rotation j, up to sign.
     """
 
@@ -99,7 +99,7 @@ def read_operations(triplets: tuple[str, ...]) -> Operations:
         translations=translations[chosen] + reduced @ origin - origin,
         origin=origin,
         centrings=centrings,
-        to_primitive=np.linalg.inv(from_primitive),
+        to_primitive=np.asarray(np.linalg.inv(from_primitive), dtype=np.float64),
         from_primitive=from_primitive,
         centrosymmetric=inversion is not None,
         order=len(triplets),
@@ -157,7 +157,7 @@ def _multiplication_table(rotations: Ints) -> Ints:
             found = index.get(product.tobytes())
             if found is None:
                 raise InputError(
-                    "the symmetry operations are not a group: two of them combine to one not listed",
+                    "the symmetry operations are not a group: the product of two is missing",
                     remedy="Give the complete list of operations",
                 )
             table[i, j] = found

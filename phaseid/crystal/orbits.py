@@ -42,7 +42,7 @@ def orbits(cell: Cell, operations: Operations, sites: Sequence[Site]) -> Orbits:
     occupancy = np.array([site.occupancy for site in sites], dtype=np.float64)
     tensor = operations.from_primitive.T @ metric_tensor(cell) @ operations.from_primitive
     alike = _settle(fract, operations, tensor)
-    stabiliser = alike.any(axis=0)
+    stabiliser: NDArray[np.bool_] = np.asarray(alike.any(axis=0))
     translations_and_sign = len(operations.centrings) * (2 if operations.centrosymmetric else 1)
     whole_group = len(operations.rotations) * translations_and_sign
     multiplicity = whole_group // alike.sum(axis=(0, 2))
@@ -88,7 +88,7 @@ def _settle(fract: Floats, operations: Operations, tensor: Floats) -> NDArray[np
 
 
 def _steps(fract: Floats, operations: Operations, tensor: Floats) -> tuple[Floats, Floats]:
-    """Steps (2 or 1, s, n, 3) from each site to its images in the primitive basis, and lengths in Å."""
+    """Return steps (2 or 1, s, n, 3) from sites to images, primitive basis, and lengths in Å."""
     images = fract @ operations.rotations.transpose(0, 2, 1) + operations.translations[:, None, :]
     images = images.transpose(1, 0, 2)
     signs = [images, -images] if operations.centrosymmetric else [images]

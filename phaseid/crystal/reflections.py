@@ -1,4 +1,4 @@
-"""Unique reflections of a cell: hkl, d, multiplicity; and those only multiple scattering can show."""
+"""Unique reflections of a cell, and those that only multiple scattering can show."""
 
 from __future__ import annotations
 
@@ -45,7 +45,7 @@ def reciprocal_metric(cell: Cell) -> Floats:
             "the cell " + " ".join(f"{x:g}" for x in cell) + " encloses no volume",
             remedy="Check lengths (Å) and angles (degrees)",
         )
-    return np.linalg.inv(metric_tensor(cell))
+    return np.asarray(np.linalg.inv(metric_tensor(cell)), dtype=np.float64)
 
 
 def unique_reflections(
@@ -99,7 +99,7 @@ def _enumerate(
         inside = hkl @ wall >= 0
         hkl, inverse_d2 = hkl[inside], inverse_d2[inside]
     ranks = hkl @ domain.ranks
-    own = ranks[:, :1] if domain.identity == 0 else ranks[:, [domain.identity]]
+    own = ranks[:, [domain.identity]]
     size = np.abs(ranks)
     first = (own >= size).all(axis=1)
     alike = (size == own)[first]
@@ -124,25 +124,26 @@ def _points(
     counts = [n + 1 if half else 2 * n + 1 for n, half in zip(limit, nonnegative, strict=True)]
     if max(limit) > MAX_INDEX or math.prod(counts) > _MOST_POINTS:
         raise InputError(
-            f"a cell of {' × '.join(f'{x:.0f}' for x in cell[:3])} Å has too many reflections down to"
-            f" {d_min_A:g} Å",
+            f"a cell of {' × '.join(f'{x:.0f}' for x in cell[:3])} Å has too many reflections"
+            f" down to {d_min_A:g} Å",
             remedy="Ask for a larger smallest d",
         )
-    h, k, l = (
+    h_axis, k_axis, l_axis = (
         np.arange(0 if half else -n, n + 1, dtype=np.float64)
         for n, half in zip(limit, nonnegative, strict=True)
     )
     g = reciprocal
-    kl = ((g[1, 1] * k * k)[:, None] + g[2, 2] * l * l + (2 * g[1, 2] * k)[:, None] * l).ravel()
-    cross = ((2 * g[0, 1] * k)[:, None] + 2 * g[0, 2] * l).ravel()
-    inverse_d2 = (g[0, 0] * h * h)[:, None] + kl
-    if cross.any():
-        inverse_d2 += h[:, None] * cross
+    k, across = k_axis[:, None], l_axis[None, :]
+    plane = (g[1, 1] * k * k + g[2, 2] * across * across + 2 * g[1, 2] * k * across).ravel()
+    slope = (2 * g[0, 1] * k + 2 * g[0, 2] * across).ravel()
+    inverse_d2 = (g[0, 0] * h_axis * h_axis)[:, None] + plane
+    if slope.any():
+        inverse_d2 += h_axis[:, None] * slope
     flat = inverse_d2.ravel()
     inside = np.flatnonzero(flat <= d_min_A**-2 * (1 + 1e-12))
-    i, rest = np.divmod(inside, len(kl))
-    j, m = np.divmod(rest, len(l))
-    hkl = np.stack([h[i], k[j], l[m]], axis=1)
+    i, rest = np.divmod(inside, len(plane))
+    j, m = np.divmod(rest, len(l_axis))
+    hkl = np.stack([h_axis[i], k_axis[j], l_axis[m]], axis=1)
     some = hkl.any(axis=1)
     return hkl[some], flat[inside][some]
 
@@ -150,7 +151,7 @@ def _points(
 def _absent(
     hkl: Floats, alike: NDArray[np.bool_], ranks: Floats, operations: Operations
 ) -> NDArray[np.bool_]:
-    """Which hkl a glide plane or screw axis forbids: some operation maps hkl on itself out of step."""
+    """Which hkl a glide or screw forbids: an operation maps hkl on itself out of step."""
     gliding = _domain(operations).gliding
     if not len(gliding):
         return np.zeros(len(hkl), dtype=bool)
@@ -158,7 +159,7 @@ def _absent(
     if not operations.centrosymmetric:  # the opposite of hkl is another reflection
         held = held & (ranks[:, gliding] > 0)
     phase = hkl @ operations.translations[gliding].T
-    return (held & (np.abs(phase - np.rint(phase)) > _INTEGER)).any(axis=1)
+    return np.asarray((held & (np.abs(phase - np.rint(phase)) > _INTEGER)).any(axis=1))
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -10,8 +10,8 @@
   imaginary part of strong absorbers such as Gd, Sm, Cd depends on the wavelength). The table that
   comes with phaseid says the source of each value.
 
-Atoms are taken as neutral: tables of ions exist for X-rays only, and the formal charge that a source
-states (Si⁴⁺ in quartz) is seldom the charge that scatters.
+Atoms are taken as neutral: tables of ions exist for X-rays only, and the formal charge that a
+source states (Si⁴⁺ in quartz) is seldom the charge that scatters.
 """
 
 from __future__ import annotations
@@ -42,8 +42,8 @@ _KIND = re.compile(r"\d*([A-Z][a-z]?)")
 class Amplitudes:
     """Amplitudes of e kinds of atom at n values of s, each (n, e) float64; neutrons (e,).
 
-    `xray` in electrons without dispersion, `electron` in Å, `neutron` in fm. `neutron` is None if no
-    length has been measured for one of the atoms.
+    `xray` in electrons without dispersion, `electron` in Å, `neutron` in fm. `neutron` is None if
+    no length has been measured for one of the atoms.
     """
 
     xray: Floats

@@ -76,7 +76,7 @@ def _intensity(sums: Floats, amplitude: Floats) -> Floats:
 def _geometric_sums(
     crystal: Crystal, operations: Operations, reflections: Reflections, kinds: list[str]
 ) -> tuple[Floats, Floats | None]:
-    """Return Σ weight · cos and sin (2 or 1, n, e) by kind of atom, and Debye-Waller factors (n, e).
+    """Return Σ weight · cos and sin (2 or 1, n, e), and Debye-Waller factors (n, e) of each kind.
 
     Where atoms of one kind swing differently the factors are in the sums, and None is returned.
     """
