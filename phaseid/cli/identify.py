@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+import re
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
@@ -24,6 +25,7 @@ from phaseid.errors import InputError
 if TYPE_CHECKING:
     from phaseid.rings import RingList
 
+TYPED_NUMBER = re.compile(r"[+]?[\d.,]*\d[\d.,]*(e[+-]?\d+)?(\(\d+\))?", re.IGNORECASE)
 UNITS = "d_A, d_nm, g_1/nm, g_1/A, q_1/A, q_1/nm, two_theta_deg, radius_mm, diameter_mm, radius_px"
 
 
@@ -31,7 +33,7 @@ def identify(
     rings: Annotated[
         list[str],
         typer.Argument(
-            metavar="RINGS...",
+            metavar="RINGS",
             help="Ring list files (patterns of one specimen), - for standard input, or spacings.",
             show_default=False,
         ),
@@ -49,12 +51,18 @@ def identify(
             help="One sigma of a factor common to all d, such as 1% or 0.005; over the file.",
         ),
     ] = None,
+    camera_constant: Annotated[
+        str | None,
+        typer.Option(
+            "--camera-constant", help='For radii: "25.1 +- 0.3 A mm" or "... A px"; over the file.'
+        ),
+    ] = None,
     unit: Annotated[
         str, typer.Option("--unit", metavar="COLUMN", help=f"What typed numbers are: {UNITS}.")
     ] = "d_A",
     sigma: Annotated[
-        float | None,
-        typer.Option("--sigma", help="One sigma of each typed number, in its unit."),
+        str | None,
+        typer.Option("--sigma", help="One sigma of each typed number, in its unit or in %."),
     ] = None,
     intensities: Annotated[
         str | None,
@@ -92,20 +100,19 @@ def identify(
             remedy="Give only files or only numbers; rings of a second pattern belong in a file",
         )
     if numbers:
-        from phaseid.rings import rings_from_values
-
         patterns = [
-            rings_from_values(
-                [float(number) for number in numbers],
+            _typed(
+                numbers,
                 column=unit,
                 probe=probe,
                 scale_uncertainty=scale_uncertainty,
                 sigma=sigma,
-                intensities=_intensities(intensities),
+                intensities=intensities,
+                camera_constant=camera_constant,
             )
         ]
     else:
-        patterns = [_pattern(word, probe, scale_uncertainty) for word in rings]
+        patterns = [_read(word, probe, scale_uncertainty, camera_constant) for word in rings]
     with open_library(library) as shelf:
         answer = rank(patterns, shelf, chemistry=chemistry, max_phases=max_phases, top=top)
     if as_json:
@@ -118,39 +125,42 @@ def identify(
         print(as_text(answer, width=width(), bold=bold()), end="")
 
 
-def _pattern(word: str, probe: str | None, scale_uncertainty: str | None) -> RingList:
+def _typed(
+    numbers: list[str], *, probe: str | None, intensities: str | None, **given: Any
+) -> RingList:
+    from phaseid.rings import rings_from_values
+
+    if probe is None:
+        raise InputError(
+            "typed rings need a probe",
+            remedy='Add --probe "electron 200 kV", "x-ray Cu Ka" or "neutron 1.54 A"',
+        )
+    levels = None if intensities is None else intensities.replace(",", " ").split()
+    return rings_from_values(numbers, probe=probe, intensities=levels, **given)
+
+
+def _read(
+    word: str, probe: str | None, scale_uncertainty: str | None, camera_constant: str | None
+) -> RingList:
     from phaseid.rings import read_rings, rings_from_text
 
-    if word == "-":
-        if sys.stdin.isatty():
-            say("Reading a ring list from the keyboard; end it with Ctrl-D.")
-        return rings_from_text(
-            sys.stdin.read(),
-            source="standard input",
+    if word != "-":
+        return read_rings(
+            word,
             probe=probe,
             scale_uncertainty=scale_uncertainty,
+            camera_constant=camera_constant,
         )
-    path = Path(word)
-    if not path.exists() and _is_number(word.replace(",", ".")):
-        raise InputError(
-            f"'{word}' is neither a file nor a number",
-            remedy="Write decimals with a point and put blanks between numbers: 2.338 2.025",
-        )
-    return read_rings(path, probe=probe, scale_uncertainty=scale_uncertainty)
-
-
-def _intensities(text: str | None) -> list[float | str] | None:
-    if text is None:
-        return None
-    words = text.replace(",", " ").split()
-    return [float(word) if _is_number(word) else word for word in words]
+    if sys.stdin.isatty():
+        say("Reading a ring list from the keyboard; end it with Ctrl-D.")
+    return rings_from_text(
+        sys.stdin.read(),
+        source="standard input",
+        probe=probe,
+        scale_uncertainty=scale_uncertainty,
+        camera_constant=camera_constant,
+    )
 
 
 def _is_number(word: str) -> bool:
-    if Path(word).is_file():
-        return False
-    try:
-        float(word)
-    except ValueError:
-        return False
-    return True
+    return TYPED_NUMBER.fullmatch(word) is not None and not Path(word).is_file()

@@ -33,7 +33,7 @@ class Commands(TyperGroup):
         try:
             return super().invoke(ctx)
         except PhaseidError as error:
-            if debugging():
+            if ctx.params.get("debug"):
                 raise
             print(f"phaseid: {error}", file=sys.stderr)
             raise typer.Exit(error.exit_code) from None
@@ -79,24 +79,19 @@ def front(
         print(FIRST_STEPS.format(version=__version__), end="")
 
 
-app.command("identify")(identify.identify)
-app.command("lines")(lines.lines)
-app.command("near")(near.near)
+app.command("identify", short_help="Name the phases behind rings.")(identify.identify)
+app.command("lines", short_help="List the lines of a phase.")(lines.lines)
+app.command("near", short_help="List phases with lines near spacings.")(near.near)
 app.add_typer(library.app, name="library")
-app.command("guide")(guide.guide)
-
-
-def debugging() -> bool:
-    """Return whether tracebacks are wanted."""
-    return os.environ.get("PHASEID_DEBUG", "") not in ("", "0")
+app.command("guide", short_help="Show the manual.")(guide.guide)
 
 
 def run(arguments: list[str] | None = None) -> None:
     """Run the command line and exit; `arguments` default to those of the process."""
     words = list(sys.argv[1:] if arguments is None else arguments)
-    if "--debug" in words:  # accepted anywhere, so that it can be appended to the line that failed
-        os.environ["PHASEID_DEBUG"] = "1"
-        words = [word for word in words if word != "--debug"]
+    debug = "--debug" in words
+    if debug:  # accepted anywhere, so that it can be appended to the line that failed
+        words = ["--debug", *(word for word in words if word != "--debug")]
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):  # a terminal without Å shows a substitute
             stream.reconfigure(errors="replace")
@@ -105,7 +100,7 @@ def run(arguments: list[str] | None = None) -> None:
     except KeyboardInterrupt:
         sys.exit(INTERRUPTED)
     except Exception as error:
-        if debugging():
+        if debug:
             raise
         what = f"{type(error).__name__}: {error}".splitlines()[0]
         print(

@@ -26,7 +26,7 @@ SCHEMA = "phaseid.near/1"
 
 def near(
     spacings: Annotated[
-        list[float], typer.Argument(metavar="D...", help="Spacings in Å.", show_default=False)
+        list[float], typer.Argument(metavar="D", help="Spacings in Å.", show_default=False)
     ],
     tolerance: Annotated[
         str, typer.Option("--tolerance", metavar="REL", help="How near: 1% or 0.01, of d.")

@@ -10,47 +10,37 @@ from phaseid.errors import InputError
 
 if TYPE_CHECKING:
     from phaseid.crystal.crystal import Crystal
-    from phaseid.library.phase import Phase
+    from phaseid.library import Phase
 
 
 def find_crystal(text: str, library: Path | None) -> tuple[Phase, Crystal]:
     """Return the phase that `text` names, and its structure.
 
-    Where a name fits several entries the first, the most trusted, is taken and the others are told
-    on standard error. Raises InputError where nothing fits.
+    Raises InputError where nothing fits, or several phases do.
     """
-    if Path(text).is_file():
-        return _from_file(Path(text))
+    path = Path(text)
+    if path.is_file():
+        return _from_file(path)
+    if path.suffix.lower() in (".cif", ".gz"):
+        raise InputError("there is no such file", path=path, remedy="Check the path")
     with open_library(library) as shelf:
-        found = shelf.find(text)
-        if not found:
-            raise InputError(
-                f"'{text}' is no phase of this library and no file",
-                path=shelf.path,
-                remedy="Give a phase id, formula, name, source number or CIF file; "
-                "`phaseid library add FILE` adds structures",
-            )
-        if len(found) > 1:
-            others = ", ".join(phase.phase_id for phase in found[1:6])
-            more = f" and {len(found) - 6} more" if len(found) > 6 else ""
-            say(
-                f"'{text}' fits {len(found)} entries; this is {found[0].phase_id}. "
-                f"Also: {others}{more}"
-            )
-        return found[0], shelf.crystal(found[0].phase_id)
+        phase = shelf.choose(text)
+        return phase, shelf.crystal(phase.phase_id)
 
 
 def _from_file(path: Path) -> tuple[Phase, Crystal]:
     from phaseid.crystal.cif import read_cif_file
+    from phaseid.library.outside import phase_of
 
     reading = read_cif_file(path)
     if not reading.crystals:
-        reasons = "; ".join(reject.reason for reject in reading.rejects) or "it holds no structure"
-        raise InputError(f"no structure can be read: {reasons}", path=path)
+        reasons = "; ".join(reject.reason for reject in reading.rejects) or "it holds none"
+        raise InputError(
+            f"no structure can be read from it: {reasons}",
+            path=path,
+            remedy="Give a CIF file with cell, symmetry and atoms",
+        )
     crystal = reading.crystals[0]
     if len(reading.crystals) > 1:
-        say(
-            f"{path} holds {len(reading.crystals)} structures; "
-            f"this is the first, {crystal.formula}."
-        )
-    return as_phase(crystal), crystal
+        say(f"{path} holds {len(reading.crystals)} structures; this is the first.")
+    return phase_of(crystal), crystal

@@ -98,6 +98,7 @@ def _pattern_dict(pattern: RingList) -> dict[str, Any]:
         "title": pattern.title,
         "source": pattern.source,
         "probe": probe_dict(pattern.probe),
+        "metadata": dict(pattern.metadata),
         "position_column": pattern.position_column,
         "sigma_stated": pattern.sigma_stated,
         "rings": [

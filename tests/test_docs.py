@@ -1,0 +1,164 @@
+"""Every example in README.md and the guide is replayed against the starter library.
+
+An example is a fenced block whose lines begin `$ phaseid …`, each followed by what it prints on
+standard output. A line `…` stands for any lines left out. `python tests/test_docs.py --rewrite`
+writes what is printed today into the pages.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import io
+import os
+import re
+import shlex
+import shutil
+import sys
+import tempfile
+from collections.abc import Iterator
+from pathlib import Path
+
+import pytest
+
+ROOT = Path(__file__).resolve().parent.parent
+PAGES = [ROOT / "README.md", *sorted((ROOT / "phaseid" / "guide").glob("*.md"))]
+BLOCK = re.compile(r"^```\w*\n(\$ phaseid .*?)^```$", re.MULTILINE | re.DOTALL)
+PROMPT, LEFT_OUT = "$ ", "…"
+
+
+def _examples(block: str) -> list[tuple[str, list[str]]]:
+    """Split a block into (command, printed lines)."""
+    found: list[tuple[str, list[str]]] = []
+    for line in block.splitlines():
+        if line.startswith(PROMPT):
+            found.append((line.removeprefix(PROMPT), []))
+        else:
+            found[-1][1].append(line)
+    return [(command, _trimmed(printed)) for command, printed in found]
+
+
+def _trimmed(lines: list[str]) -> list[str]:
+    return "\n".join(lines).rstrip().splitlines()
+
+
+@contextlib.contextmanager
+def _place(library: Path) -> Iterator[None]:
+    """Work in a folder of its own that sees data/, on a copy of the library."""
+    before = Path.cwd()
+    kept = {name: os.environ.get(name) for name in ("PHASEID_LIBRARY", "COLUMNS")}
+    with tempfile.TemporaryDirectory() as folder:
+        shutil.copy(library, Path(folder) / "library.sqlite")
+        shutil.copytree(ROOT / "data" / "demo", Path(folder) / "data" / "demo")
+        shutil.copytree(ROOT / "data" / "starter", Path(folder) / "data" / "starter")
+        os.environ |= {"PHASEID_LIBRARY": "library.sqlite", "COLUMNS": "80"}
+        os.chdir(folder)
+        try:
+            yield
+        finally:
+            os.chdir(before)
+            for name, value in kept.items():
+                if value is None:
+                    del os.environ[name]
+                else:
+                    os.environ[name] = value
+
+
+def _replay(command: str) -> list[str]:
+    from phaseid.cli.main import run
+
+    program, *words = shlex.split(command)
+    assert program == "phaseid"
+    out, err = io.StringIO(), io.StringIO()
+    with contextlib.redirect_stdout(out), contextlib.redirect_stderr(err):
+        try:
+            run(words)
+        except SystemExit as end:
+            code = end.code
+    assert not code, f"{command}: exit code {code}\n{err.getvalue()}"
+    return _trimmed(out.getvalue().splitlines())
+
+
+def _agrees(expected: list[str], printed: list[str]) -> bool:
+    if LEFT_OUT not in expected:
+        return printed == expected
+    place = expected.index(LEFT_OUT)
+    head, tail = expected[:place], expected[place + 1 :]
+    if printed[: len(head)] != head or len(printed) < len(head):
+        return False
+    rest = printed[len(head) :]
+    return any(_agrees(tail, rest[start:]) for start in range(len(rest) + 1))
+
+
+def _number_of_examples(page: Path) -> int:
+    return page.read_text(encoding="utf-8").count(f"\n{PROMPT}phaseid ")
+
+
+@pytest.mark.parametrize("page", PAGES, ids=lambda page: page.name)
+def test_the_examples_print_what_the_page_says(page: Path, starter_library_path: Path) -> None:
+    blocks = BLOCK.findall(page.read_text(encoding="utf-8"))
+    examples = [example for block in blocks for example in _examples(block)]
+    assert len(examples) == _number_of_examples(page), "an example stands outside a fenced block"
+    with _place(starter_library_path):
+        for command, expected in examples:
+            printed = _replay(command)
+            assert _agrees(expected, printed), f"$ {command}\n" + "\n".join(printed)
+
+
+def test_the_readme_shows_every_command() -> None:
+    from phaseid.cli.main import app
+
+    text = PAGES[0].read_text(encoding="utf-8")
+    names = [c.name for c in app.registered_commands] + [g.name for g in app.registered_groups]
+    assert [name for name in names if f"\n{PROMPT}phaseid {name}" not in text] == []
+
+
+@pytest.mark.parametrize(
+    ("expected", "printed", "agrees"),
+    [
+        (["a", "b"], ["a", "b"], True),
+        (["a", "b"], ["a"], False),
+        (["a", LEFT_OUT, "d"], ["a", "b", "c", "d"], True),
+        (["a", LEFT_OUT, "d"], ["a", "d"], True),
+        (["a", LEFT_OUT, "d"], ["a", "b", "c"], False),
+        (["a", LEFT_OUT], ["b", "c"], False),
+        ([LEFT_OUT, "b", LEFT_OUT, "d"], ["a", "b", "c", "d"], True),
+    ],
+)
+def test_what_is_left_out_is_any_lines(
+    expected: list[str], printed: list[str], agrees: bool
+) -> None:
+    assert _agrees(expected, printed) is agrees
+
+
+def _rewritten(expected: list[str], printed: list[str]) -> list[str]:
+    """Return what a page should say now, with the same number of lines before and after a gap."""
+    if LEFT_OUT not in expected:
+        return printed
+    before = expected.index(LEFT_OUT)
+    after = len(expected) - 1 - before
+    return [*printed[:before], LEFT_OUT, *printed[len(printed) - after :]]
+
+
+def _rewrite(page: Path, library: Path) -> None:
+    def fresh(match: re.Match[str]) -> str:
+        parts = []
+        for command, expected in _examples(match[1]):
+            shown = _rewritten(expected, _replay(command))
+            parts.append("\n".join([PROMPT + command, *shown]))
+        return "```\n" + "\n\n".join(parts) + "\n```"
+
+    text = page.read_text(encoding="utf-8")
+    with _place(library):
+        page.write_text(BLOCK.sub(fresh, text), encoding="utf-8")
+
+
+if __name__ == "__main__":
+    if sys.argv[1:] != ["--rewrite"]:
+        sys.exit("usage: python tests/test_docs.py --rewrite")
+    from phaseid.library import build_starter
+
+    with tempfile.TemporaryDirectory() as place:
+        starter = Path(place) / "starter.sqlite"
+        build_starter(starter)
+        for each in PAGES:
+            _rewrite(each, starter)
