@@ -1,0 +1,184 @@
+"""Where the atoms of a cell are: special positions, sites listed twice, atoms too close.
+
+A site and its images closer than `SPLIT_A` are one atom on a special position, unless together they
+hold no more than one atom: then the source describes an atom split over two places. Closer than
+`ROUNDING_A` they are one position whatever the occupancy, apart only by rounding (1/3 as 0.333).
+Sites that leave `read_cif` lie exactly on their special positions, and no two images of a site are
+closer than ROUNDING_A, so any tolerance between 0.001 Å and 0.1 Å finds the same multiplicities.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from phaseid.crystal.metric import Cell, metric_tensor
+
+ROUNDING_A = 0.1
+SPLIT_A = 0.5
+CROWDED_A = 0.7  # the shortest bond, H-H, is 0.74 Å
+FULL = 1.05  # occupancies add up to at most this on one position; more is counted double
+_CHUNK = 1 << 20
+_MULTIPLICITY_TOLERANCE_A = 0.05
+
+Floats = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Placed:
+    """Sites on their exact positions.
+
+    `fract` (n, 3) float64; `multiplicity` (n,) int, images per cell; `shift_A` (n,) how far each was moved to reach its special position; `crowded` (n,) marks full sites that stay closer than
+    `CROWDED_A` to an image of their own.
+    """
+
+    fract: Floats
+    multiplicity: NDArray[np.int64]
+    shift_A: Floats
+    crowded: NDArray[np.bool_]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class ClosePairs:
+    """Pairs of sites of which some images are close: `first` < `second` (k,), `distance_A` (k,)."""
+
+    first: NDArray[np.int64]
+    second: NDArray[np.int64]
+    distance_A: Floats
+
+
+def multiplicities(
+    fract: Sequence[tuple[float, float, float]], rotations: Floats, translations: Floats, cell: Cell
+) -> NDArray[np.int64]:
+    """Return how many images of each site the cell holds, (n,) int.
+
+    `rotations` (m, 3, 3) and `translations` (m, 3) are the complete list of operations.
+    """
+    sites = np.asarray(fract, dtype=np.float64).reshape(-1, 3)
+    metric = metric_tensor(cell)
+    counts = np.empty(len(sites), dtype=np.int64)
+    step = max(1, _CHUNK // len(rotations))
+    for start in range(0, len(sites), step):
+        part = sites[start : start + step]
+        _, squared = _own_images(part, rotations, translations, metric)
+        stabiliser = (squared < _MULTIPLICITY_TOLERANCE_A**2).sum(axis=0)
+        counts[start : start + step] = len(rotations) // np.maximum(stabiliser, 1)
+    return counts
+
+
+def place(
+    fract: Floats, occupancy: Floats, rotations: Floats, translations: Floats, cell: Cell
+) -> Placed:
+    """Put sites (n, 3) of occupancy (n,) onto their special positions and count their images."""
+    metric = metric_tensor(cell)
+    placed = fract.copy()
+    multiplicity = np.full(len(fract), len(rotations), dtype=np.int64)
+    crowded = np.zeros(len(fract), dtype=np.bool_)
+    if len(rotations) == 1:
+        return Placed(placed, multiplicity, np.zeros(len(fract)), crowded)
+    step = max(1, _CHUNK // len(rotations))
+    for start in range(0, len(fract), step):
+        part = slice(start, start + step)
+        placed[part], multiplicity[part], crowded[part] = _place(
+            fract[part], occupancy[part], rotations, translations, metric
+        )
+    moved = placed - fract
+    shift = np.sqrt(((moved @ metric) * moved).sum(axis=1))
+    return Placed(placed, multiplicity, shift, crowded)
+
+
+def close_pairs(
+    fract: Floats, rotations: Floats, translations: Floats, cell: Cell, within_A: float
+) -> ClosePairs:
+    """Return pairs of different sites with images closer than `within_A`, each at its nearest.
+
+    Images are sorted along one axis and only neighbours in that order are compared.
+    """
+    metric = metric_tensor(cell)
+    count, n = len(rotations), len(fract)
+    nothing = np.empty(0, dtype=np.int64)
+    if n < 2:
+        return ClosePairs(nothing, nothing, np.empty(0))
+    inverse = np.linalg.inv(metric)
+    axis = int(np.argmin(inverse.diagonal()))  # the largest spacing of lattice planes
+    reach = within_A * float(np.sqrt(inverse[axis, axis]))
+    images = (fract @ rotations.transpose(0, 2, 1) + translations[:, None, :]).reshape(-1, 3)
+    images -= np.floor(images)
+    order = np.argsort(images[:, axis])
+    line = images[order, axis]
+    owner = np.tile(np.arange(n), count)[order]
+    images = images[order]
+    home = fract[:, axis] - np.floor(fract[:, axis])
+    line = np.concatenate([line - 1, line, line + 1])
+    low = np.searchsorted(line, home - reach)
+    high = np.searchsorted(line, home + reach, side="right")
+    found: list[tuple[NDArray[np.int64], Floats]] = []
+    for start, stop in _runs(high - low):
+        lengths = (high - low)[start:stop]
+        site = np.repeat(np.arange(start, stop), lengths)
+        offset = np.arange(len(site)) - np.repeat(np.cumsum(lengths) - lengths, lengths)
+        image = (low[site] + offset) % len(order)
+        keep = owner[image] > site
+        site, image = site[keep], image[keep]
+        delta = images[image] - fract[site]
+        delta -= np.round(delta)
+        squared = ((delta @ metric) * delta).sum(axis=1)
+        close = squared < within_A**2
+        found.append((site[close] * n + owner[image[close]], squared[close]))
+    pair = np.concatenate([p for p, _ in found])
+    squared = np.concatenate([q for _, q in found])
+    nearest = np.lexsort((squared, pair))
+    pair, first = np.unique(pair[nearest], return_index=True)
+    return ClosePairs(pair // n, pair % n, np.sqrt(squared[nearest][first]))
+
+
+def _runs(lengths: NDArray[np.int64]) -> list[tuple[int, int]]:
+    """Cut sites into runs of which the neighbour lists together stay within the chunk size."""
+    if lengths.sum() <= _CHUNK:
+        return [(0, len(lengths))]
+    runs, start, held = [], 0, 0
+    for index, length in enumerate(lengths.tolist()):
+        if held and held + length > _CHUNK:
+            runs.append((start, index))
+            start, held = index, 0
+        held += length
+    return [*runs, (start, len(lengths))]
+
+
+def _own_images(
+    fract: Floats, rotations: Floats, translations: Floats, metric: Floats
+) -> tuple[Floats, Floats]:
+    """Return offsets (m, n, 3) from sites to their nearest images, and their squares (m, n), Å²."""
+    offsets = fract @ rotations.transpose(0, 2, 1) + translations[:, None, :]
+    offsets -= fract
+    offsets -= np.round(offsets)
+    return offsets, np.asarray(((offsets @ metric) * offsets).sum(axis=2))
+
+
+def _place(
+    fract: Floats, occupancy: Floats, rotations: Floats, translations: Floats, metric: Floats
+) -> tuple[Floats, NDArray[np.int64], NDArray[np.bool_]]:
+    offsets, squared = _own_images(fract, rotations, translations, metric)
+    near = squared < ROUNDING_A**2
+    near_count = near.sum(axis=0)
+    wide = squared < SPLIT_A**2
+    wide_count = wide.sum(axis=0)
+    # images within SPLIT_A that would be more than one atom together are one atom
+    merge = (wide_count > near_count) & (occupancy * wide_count > FULL * near_count)
+    if merge.any():
+        near = np.where(merge, wide, near)
+        near_count = np.where(merge, wide_count, near_count)
+    placed = fract
+    if (near_count > 1).any():
+        drift = (offsets * near[:, :, None]).sum(axis=0) / near_count[:, None]
+        drift[np.abs(drift) < 1e-9] = 0.0
+        placed = fract + drift
+        if drift.any():
+            _, squared = _own_images(placed, rotations, translations, metric)
+        near_count = np.maximum((squared < 1e-4).sum(axis=0), 1)
+    crowd = (squared < CROWDED_A**2).sum(axis=0)
+    crowded = (crowd > near_count) & (occupancy * crowd > FULL * near_count)
+    return placed, len(rotations) // near_count, crowded

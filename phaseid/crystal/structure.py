@@ -1,0 +1,314 @@
+"""Sites + symmetry + cell -> one consistent structure, judged against what its source states.
+
+Where the symmetry items of a file can mean several groups, each is tried: the cell must be left
+unchanged by the operations, and the contents should fit formula and Z.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from phaseid.crystal.atom_sites import ReadSites
+from phaseid.crystal.composition import density_of_contents, hill_formula
+from phaseid.crystal.crystal import Finding, Site
+from phaseid.crystal.metric import Cell, volume_A3
+from phaseid.crystal.occupancies import settle_positions
+from phaseid.crystal.positions import ROUNDING_A, Placed, close_pairs, place
+from phaseid.crystal.symmetry import Symmetry, fits_cell
+
+MIN_VOLUME_A3 = 5.0  # beryllium, the smallest atom to form a metal: 8 Å³ an atom (common practice)
+MAX_ATOMS = 200_000
+DENSITY_RANGE_A3 = (
+    0.001,
+    0.5,
+)  # atoms per Å³: 0.176 in diamond, about 0.01 in the airiest frameworks
+NEIGHBOUR_A = 1.3
+_NOTABLE_SHIFT_A = 0.05
+_TOLERANCE = 0.05
+
+
+@dataclass(frozen=True, slots=True)
+class Stated:
+    """What the source says of its contents: formula (amounts, or None), Z, density, volume."""
+
+    formula: Mapping[str, float] | None = None
+    formula_text: str = ""
+    z: float | None = None
+    density_g_cm3: float | None = None
+    volume_A3: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class StructureProblem:
+    """Why no structure results: a code and a sentence."""
+
+    code: str
+    reason: str
+
+
+@dataclass(frozen=True, slots=True)
+class Structure:
+    """A structure in one symmetry; `contents` are atoms per cell, `score` its fit to the source."""
+
+    symmetry: Symmetry
+    sites: tuple[Site, ...]
+    contents: dict[str, float]
+    findings: tuple[Finding, ...]
+    score: int
+
+
+def build(
+    cell: Cell, candidates: Sequence[Symmetry], read: ReadSites, stated: Stated
+) -> Structure | StructureProblem:
+    """Return the structure in the candidate group that suits cell and formula best."""
+    volume = volume_A3(cell)
+    if volume < MIN_VOLUME_A3:
+        return StructureProblem("absurd_cell", f"the cell has a volume of only {volume:.3g} Å³")
+    fitting = [symmetry for symmetry in candidates if fits_cell(symmetry, cell)]
+    if not fitting:
+        return StructureProblem(
+            "cell_symmetry_conflict",
+            f"the cell {_shown(cell)} does not have the symmetry {candidates[0].symbol} stated",
+        )
+    tried: list[Structure] = []
+    problem: StructureProblem | None = None
+    for symmetry in fitting:
+        if symmetry.last_resort and any(s.score == _BEST for s in tried):
+            continue
+        result = _structure(cell, volume, symmetry, read, stated)
+        if isinstance(result, StructureProblem):
+            problem = problem or result
+            continue
+        if symmetry.last_resort and result.score < _BEST:
+            continue
+        tried.append(result)
+        if result.score == _BEST and not symmetry.guess:
+            break
+    if not tried:
+        assert problem is not None
+        return problem
+    return _chosen(tried, stated)
+
+
+_BEST = 3
+
+
+def _chosen(tried: Sequence[Structure], stated: Stated) -> Structure | StructureProblem:
+    best = max(s.score for s in tried)
+    leading = [s for s in tried if s.score == best]
+    chosen = leading[0]
+    if len(leading) == 1:
+        return chosen
+    symbols = " or ".join(s.symmetry.symbol for s in leading)
+    if chosen.symmetry.guess:
+        if any(f.code == "symmetry_from_number" for f in chosen.findings):
+            return StructureProblem(
+                "symmetry_ambiguous",
+                f"only the space group number {chosen.symmetry.number} is given, which leaves the "
+                f"setting open ({symbols})",
+            )
+        note = Finding(
+            "setting_assumed",
+            f"the symbol leaves the setting open ({symbols}) and no operations are listed; "
+            f"{chosen.symmetry.symbol} is assumed",
+        )
+        return replace(chosen, findings=(*chosen.findings, note))
+    if len(chosen.symmetry.operations) == 1 and (stated.formula is None or stated.z is None):
+        return StructureProblem(
+            "symmetry_ambiguous",
+            f"only the operation x,y,z is listed beside the symbol {leading[1].symmetry.symbol}; no "
+            "formula with Z tells whether the atoms of the whole cell are listed",
+        )
+    return chosen
+
+
+def _structure(
+    cell: Cell, volume: float, symmetry: Symmetry, read: ReadSites, stated: Stated
+) -> Structure | StructureProblem:
+    sites = [*read.sites, *read.unknown]
+    fract = np.array([site.fract for site in sites], dtype=np.float64)
+    occupancy = np.array([site.occupancy for site in sites])
+    placed = place(fract, occupancy, symmetry.rotations, symmetry.translations, cell)
+    if placed.multiplicity.sum() > MAX_ATOMS:
+        return StructureProblem(
+            "too_many_sites",
+            f"the cell would hold {placed.multiplicity.sum()} atoms, at most {MAX_ATOMS} are taken",
+        )
+    pairs = close_pairs(placed.fract, symmetry.rotations, symmetry.translations, cell, NEIGHBOUR_A)
+    settled = settle_positions(sites, pairs, placed.crowded)
+    if isinstance(settled, str):
+        return StructureProblem("bad_occupancy", settled)
+    kept, notes = settled
+    findings = [*symmetry.findings, *_shifts(sites, placed), *notes]
+    moved = [(_moved(sites[i], placed, i), int(placed.multiplicity[i])) for i in kept]
+    known = [(site, count) for site, count in moved if site.element]
+    unknown = [(site, count) for site, count in moved if not site.element]
+    contents = _contents(known)
+    if unknown:
+        shares = _shares_of_unknown(contents, unknown, stated)
+        names = ", ".join(sorted({site.label for site, _ in unknown})[:6])
+        if shares is None:
+            return StructureProblem(
+                "unknown_element",
+                f"the element of site {names} cannot be told from its label or type symbol",
+            )
+        for site, count in unknown:
+            known += [
+                (replace(site, element=el, occupancy=site.occupancy * share), count)
+                for el, share in shares.items()
+            ]
+        contents = _contents(known)
+        mixed = ", ".join(f"{el} {share:.3f}" for el, share in shares.items())
+        findings.append(
+            Finding(
+                "unknown_element",
+                f"site {names} names no element; it is read as {mixed}, what the stated formula "
+                "lacks",
+            )
+        )
+    per_A3 = sum(contents.values()) / volume
+    if not DENSITY_RANGE_A3[0] <= per_A3 <= DENSITY_RANGE_A3[1]:
+        return StructureProblem(
+            "absurd_cell",
+            f"{sum(contents.values()):.6g} atoms in {volume:.6g} Å³ are {per_A3:.3g} atoms per Å³; "
+            f"crystals have {DENSITY_RANGE_A3[0]:g} to {DENSITY_RANGE_A3[1]:g}",
+        )
+    score, judged = _judge(contents, volume, stated)
+    sound = placed.shift_A.max() < ROUNDING_A and not any(n.code == "contact" for n in notes)
+    return Structure(
+        symmetry,
+        tuple(site for site, _ in known),
+        contents,
+        (*findings, *judged),
+        score + sound,
+    )
+
+
+def _moved(site: Site, placed: Placed, index: int) -> Site:
+    if placed.shift_A[index] == 0:
+        return site
+    x, y, z = placed.fract[index].tolist()
+    return replace(site, fract=(x, y, z))
+
+
+def _contents(sites: Sequence[tuple[Site, int]]) -> dict[str, float]:
+    contents: dict[str, float] = {}
+    for site, count in sites:
+        contents[site.element] = contents.get(site.element, 0.0) + site.occupancy * count
+    return contents
+
+
+def _shifts(sites: Sequence[Site], placed: Placed) -> list[Finding]:
+    labels = [sites[i].label for i in np.flatnonzero(placed.shift_A > _NOTABLE_SHIFT_A).tolist()]
+    if not labels:
+        return []
+    return [
+        Finding(
+            "special_position",
+            f"moved by up to {placed.shift_A.max():.2f} Å onto the special position beside: "
+            + ", ".join(labels[:6]),
+        )
+    ]
+
+
+def _shares_of_unknown(
+    contents: Mapping[str, float], unknown: Sequence[tuple[Site, int]], stated: Stated
+) -> dict[str, float] | None:
+    """Return what the unknown sites must hold for the cell to hold Z formula units, or None."""
+    if stated.formula is None or not stated.z:
+        return None
+    lacking = {
+        el: n * stated.z - contents.get(el, 0.0)
+        for el, n in stated.formula.items()
+        if el not in ("H", "D")
+    }
+    if any(n < -_TOLERANCE * stated.z * stated.formula[el] for el, n in lacking.items()):
+        return None
+    lacking = {el: n for el, n in lacking.items() if n > _TOLERANCE * stated.z * stated.formula[el]}
+    total = sum(lacking.values())
+    places = sum(site.occupancy * count for site, count in unknown)
+    if not lacking or abs(total - places) > _TOLERANCE * places:
+        return None
+    return {el: n / total for el, n in lacking.items()}
+
+
+def _judge(
+    contents: Mapping[str, float], volume: float, stated: Stated
+) -> tuple[int, list[Finding]]:
+    """Return a score, 1 for the formula's ratios and 1 for its Z, and what does not agree."""
+    findings: list[Finding] = []
+    score = 2
+    held = _without_deuterium(contents)
+    if stated.formula is not None:
+        formula = _without_deuterium(stated.formula)
+        heavy = set(held) | set(formula)
+        if heavy - {"H"}:
+            heavy -= {"H"}
+        whole = sum(formula.get(el, 0.0) for el in heavy)
+        scale = sum(held.get(el, 0.0) for el in heavy) / whole if whole else 0.0
+        wrong = [
+            el
+            for el in heavy
+            if abs(held.get(el, 0.0) - scale * formula.get(el, 0.0))
+            > _TOLERANCE * max(scale * formula.get(el, 0.0), 0.2)
+        ]
+        if wrong:
+            score -= 1
+            findings.append(
+                Finding(
+                    "formula_mismatch",
+                    f"the cell holds {hill_formula(contents)}, not in the ratios of the stated "
+                    f"formula {stated.formula_text}",
+                )
+            )
+        elif stated.z and abs(scale - stated.z) > _TOLERANCE * stated.z:
+            score -= 1
+            findings.append(
+                Finding(
+                    "z_mismatch",
+                    f"the cell holds {scale:.4g} formula units {stated.formula_text}, the source "
+                    f"states Z = {stated.z:g}",
+                )
+            )
+        hydrogen = formula.get("H", 0.0) * (stated.z if wrong and stated.z else scale)
+        if hydrogen > 0 and held.get("H", 0.0) < (1 - _TOLERANCE) * hydrogen:
+            findings.append(
+                Finding(
+                    "hydrogen_missing",
+                    f"{held.get('H', 0.0):.4g} of {hydrogen:.4g} hydrogen atoms in the cell have "
+                    "positions; neutron intensities suffer most",
+                )
+            )
+    if stated.volume_A3 and abs(volume / stated.volume_A3 - 1) > 0.01:
+        findings.append(
+            Finding(
+                "volume_mismatch",
+                f"the cell has {volume:.2f} Å³, the source states {stated.volume_A3:g} Å³",
+            )
+        )
+    if stated.density_g_cm3:
+        density = density_of_contents(contents, volume)
+        if abs(density / stated.density_g_cm3 - 1) > _TOLERANCE:
+            findings.append(
+                Finding(
+                    "density_mismatch",
+                    f"the atoms give {density:.3f} g/cm³, the source states "
+                    f"{stated.density_g_cm3:g} g/cm³",
+                )
+            )
+    return score, findings
+
+
+def _without_deuterium(amounts: Mapping[str, float]) -> dict[str, float]:
+    merged = {el: n for el, n in amounts.items() if el != "D"}
+    if "D" in amounts:
+        merged["H"] = merged.get("H", 0.0) + amounts["D"]
+    return merged
+
+
+def _shown(cell: Cell) -> str:
+    a, b, c, alpha, beta, gamma = cell
+    return f"({a:g}, {b:g}, {c:g} Å; {alpha:g}, {beta:g}, {gamma:g}°)"
