@@ -11,7 +11,7 @@ from phaseid.crystal.crystal import Finding, Source
 class Phase:
     """One row of the library, without its lines.
 
-    `phase_id` is stable across libraries: made from the formula and the content hash of the structure.
+    `phase_id` is stable across libraries: formula and content hash of the structure.
     `name` is the mineral or common name, else the formula. `cell` is (a, b, c) in Å and
     (alpha, beta, gamma) in degrees. `elements` are sorted symbols (D counts as H).
     `cautions` are safety sentences for work with that material. `quality` is 0-1: how much trust

@@ -1,0 +1,185 @@
+"""Opening a library file, and SQLite's complaints in plain words."""
+
+from __future__ import annotations
+
+import errno
+import sqlite3
+import tempfile
+from collections.abc import Callable, Iterator
+from contextlib import closing, contextmanager
+from pathlib import Path
+
+from phaseid.errors import LibraryError
+from phaseid.library.schema import SCHEMA_VERSION, apply_steps, stored_version
+
+_WAIT_S = 60.0
+_MAGIC = b"SQLite format 3\x00"
+_ANOTHER = "Name another file with --library, or move this one away."
+
+
+def _connect(path: Path, mode: str) -> sqlite3.Connection:
+    uri = f"{path.absolute().as_uri()}?{mode}"
+    conn = sqlite3.connect(uri, uri=True, timeout=_WAIT_S, isolation_level=None)
+    try:
+        conn.execute("SELECT count(*) FROM sqlite_master")
+    except BaseException:
+        conn.close()
+        raise
+    return conn
+
+
+@contextmanager
+def told(path: Path) -> Iterator[None]:
+    """Turn what SQLite or the system raises about `path` into a LibraryError with a remedy."""
+    try:
+        yield
+    except (sqlite3.Error, OSError) as error:
+        raise LibraryError(_plain_words(path, error)) from error
+
+
+def _plain_words(path: Path, error: Exception) -> str:
+    text = str(error)
+    if "readonly" in text or isinstance(error, PermissionError):
+        return (
+            f"{path}: the library cannot be written. Check the permissions, or use --library FILE."
+        )
+    if "full" in text or getattr(error, "errno", None) == errno.ENOSPC:
+        return f"{path}: the disk is full. What was added is kept; free some space and add again."
+    if "locked" in text or "busy" in text:
+        return (
+            f"{path}: another program is writing to the library. Wait for it to end and try again."
+        )
+    if "malformed" in text or "not a database" in text:
+        return (
+            f"{path}: the library is damaged ({text}). Restore a copy, or add the structures anew."
+        )
+    return f"{path}: the library cannot be used ({text}). Check the disk and the permissions."
+
+
+def check_file(path: Path) -> None:
+    """Raise LibraryError unless `path` is a SQLite file (its schema is not looked at)."""
+    if not path.exists():
+        raise LibraryError(
+            f"{path}: there is no library. Check the name, or make one: "
+            f"phaseid library add FILES --library {path}"
+        )
+    if path.is_dir():
+        raise LibraryError(f"{path}: this is a folder, not a library file. {_ANOTHER}")
+    with told(path), path.open("rb") as file:
+        head = file.read(len(_MAGIC))
+    if head != _MAGIC:
+        raise LibraryError(f"{path}: this is not a library of phaseid. {_ANOTHER}")
+
+
+def open_for_reading(path: Path) -> sqlite3.Connection:
+    """Open a library file so that nothing can change it.
+
+    An older schema is brought up to date first. Raises LibraryError: missing, a folder, not a
+    library, newer, damaged.
+    """
+    check_file(path)
+    with told(path):
+        conn = _read_only(path)
+        version = _checked_version(conn, path)
+        if version < SCHEMA_VERSION:
+            conn.close()
+            open_for_writing(path).close()
+            conn = _read_only(path)
+    return conn
+
+
+def _read_only(path: Path) -> sqlite3.Connection:
+    try:
+        return _connect(path, "mode=ro")
+    except sqlite3.OperationalError:
+        pass
+    try:  # a writer was killed: its journal must be played back, which needs write access
+        _connect(path, "mode=rw").close()
+        return _connect(path, "mode=ro")
+    except sqlite3.OperationalError:  # a read-only medium
+        left_over = path.with_name(f"{path.name}-wal")
+        if left_over.exists() and left_over.stat().st_size > 0:
+            raise
+        return _connect(path, "mode=ro&immutable=1")
+
+
+def _checked_version(conn: sqlite3.Connection, path: Path) -> int:
+    try:
+        version = stored_version(conn)
+    except sqlite3.Error:
+        conn.close()
+        raise
+    if 0 < version <= SCHEMA_VERSION:
+        return version
+    conn.close()
+    if version <= 0:
+        raise LibraryError(f"{path}: this is a SQLite file but no library of phaseid. {_ANOTHER}")
+    raise LibraryError(
+        f"{path}: the library has schema version {version}, this phaseid reads up to "
+        f"{SCHEMA_VERSION}. Update phaseid, or name another library with --library."
+    )
+
+
+def open_for_writing(path: Path) -> sqlite3.Connection:
+    """Open an existing library file for adding; an older schema is brought up to date.
+
+    Transactions are explicit. Raises LibraryError as `open_for_reading`, and where the file or its
+    folder cannot be written.
+    """
+    check_file(path)
+    with told(path):
+        conn = _connect(path, "mode=rw")
+        version = _checked_version(conn, path)
+        try:
+            if version < SCHEMA_VERSION:
+                apply_steps(conn)
+            # readers go on reading while a writer adds; a killed writer loses one batch at most
+            conn.execute("PRAGMA journal_mode = WAL")
+            conn.execute("PRAGMA synchronous = NORMAL")
+        except BaseException:
+            conn.close()
+            raise
+    return conn
+
+
+def close_after_writing(conn: sqlite3.Connection) -> None:
+    """Close a writing connection and leave one plain file behind, where no reader is in the way."""
+    try:
+        conn.execute("PRAGMA busy_timeout = 0")
+        conn.execute("PRAGMA journal_mode = DELETE")
+    except sqlite3.OperationalError:
+        pass  # somebody reads: the file stays in WAL mode, which is as good
+    finally:
+        conn.close()
+
+
+def publish_new(path: Path, build: Callable[[Path], None]) -> bool:
+    """Let `build` make a file beside `path`, then give it that name in one step.
+
+    Returns False, leaving the other's file, where somebody else made `path` in the meantime. A
+    failed or killed build never shows under `path`. Raises LibraryError for a folder that is
+    missing or cannot be written.
+    """
+    with told(path):
+        if not path.parent.is_dir():
+            raise LibraryError(
+                f"{path}: the folder {path.parent} does not exist. Create it, or name another file."
+            )
+        with tempfile.TemporaryDirectory(prefix=f".{path.name}-", dir=path.parent) as folder:
+            made = Path(folder) / path.name
+            build(made)
+            try:
+                path.hardlink_to(made)
+            except FileExistsError:
+                return False
+            except OSError:  # a file system without hard links
+                if path.exists():
+                    return False
+                made.rename(path)
+    return True
+
+
+def build_empty(path: Path) -> None:
+    """Create an empty library at `path`, which must not exist."""
+    with closing(sqlite3.connect(path, isolation_level=None)) as conn:
+        apply_steps(conn)

@@ -1,0 +1,218 @@
+"""A library of phases in one SQLite file: open it, ask it, add to it."""
+
+from __future__ import annotations
+
+import sqlite3
+from collections.abc import Callable, Iterable, Sequence
+from contextlib import contextmanager
+from pathlib import Path
+from types import TracebackType
+from typing import TYPE_CHECKING, Any, Self
+
+from phaseid.errors import InputError, LibraryError
+from phaseid.library import connection, lookups
+from phaseid.library.linetable import Kind, LineTable, line_table, unpack_lines
+from phaseid.library.lookups import PHASE_COLUMNS, phase_from_row
+from phaseid.library.phase import Phase
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from phaseid.crystal.crystal import Crystal
+    from phaseid.crystal.lines import Lines
+    from phaseid.library.tally import ImportTally
+
+Progress = Callable[[int, int | None], None]
+"""Called after every file with the number done and the number in all (None: not known)."""
+
+
+class Library:
+    """A library file, open for reading; `add` opens it for writing as long as it takes.
+
+    Use as a context manager, or call `close`. Phases keep the order in which they came in.
+    """
+
+    def __init__(self, path: Path, conn: sqlite3.Connection) -> None:
+        self.path = path
+        self._conn = conn
+
+    @classmethod
+    def open(cls, path: str | Path) -> Self:
+        """Open a library file.
+
+        Raises LibraryError (exit code 3) where it is missing, a folder, no library of phaseid, from
+        a newer version, or damaged.
+        """
+        path = Path(path)
+        return cls(path, connection.open_for_reading(path))
+
+    @classmethod
+    def create(cls, path: str | Path) -> Self:
+        """Create an empty library and open it. Raises LibraryError where a file stands there."""
+        path = Path(path)
+        if not connection.publish_new(path, connection.build_empty):
+            raise LibraryError(
+                f"{path}: there is a file already. Open it, or name another with --library."
+            )
+        return cls.open(path)
+
+    def close(self) -> None:
+        """Close the file; the library cannot be used afterwards."""
+        self._conn.close()
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        value: BaseException | None,
+        traceback: TracebackType | None,
+    ) -> None:
+        self.close()
+
+    def __len__(self) -> int:
+        return int(self._one("SELECT count(*) FROM phase")[0])
+
+    @property
+    def digest(self) -> str:
+        """What is in the library, as 32 hex digits: the same whatever the order of adding."""
+        return str(self._one("SELECT value FROM meta WHERE key = 'digest'")[0])
+
+    def info(self) -> dict[str, Any]:
+        """Return the facts that `phaseid library info --json` prints."""
+        facts = dict(self._rows("SELECT key, value FROM meta"))
+        sources = self._rows(
+            "SELECT source_database, count(*) FROM phase GROUP BY 1 ORDER BY 2 DESC, 1"
+        )
+        return {
+            "path": str(self.path),
+            "phases": len(self),
+            "digest": self.digest,
+            "schema_version": int(facts["schema_version"]),
+            "created_by": f"phaseid {facts['created_by']}",
+            "rejects": self._one("SELECT count(*) FROM reject")[0],
+            "sources": dict(sources),
+            "size_bytes": self.path.stat().st_size,
+        }
+
+    def rejects(self) -> list[dict[str, str]]:
+        """Return what could not be read so far: location, file, block, code, reason."""
+        rows = self._rows("SELECT location, file, block, code, reason FROM reject ORDER BY 1, 3, 4")
+        names = ("location", "file", "block", "code", "reason")
+        return [dict(zip(names, row, strict=True)) for row in rows]
+
+    def phases(self) -> list[Phase]:
+        """Return every phase, in the order of `line_table`."""
+        rows = self._rows(f"SELECT {PHASE_COLUMNS} FROM phase ORDER BY id")
+        return [phase_from_row(row) for row in rows]
+
+    def phase(self, phase_id: str) -> Phase:
+        """Return the phase of that id; raises InputError where there is none."""
+        rows = self._rows(f"SELECT {PHASE_COLUMNS} FROM phase WHERE phase_id = ?", phase_id)
+        if not rows:
+            raise InputError(
+                f"the library has no phase with the id '{phase_id}'",
+                remedy="Look it up: phaseid library find NAME-OR-FORMULA",
+            )
+        return phase_from_row(rows[0])
+
+    def find(self, text: str) -> list[Phase]:
+        """Return the phases that `text` can mean, the likeliest first.
+
+        A phase id, a formula in any order of elements, a source number, a name or part of one.
+        """
+        with self._told():
+            return [hit.phase for hit in lookups.find(self._conn, text)]
+
+    def choose(self, text: str) -> Phase:
+        """Return the one phase that `text` means.
+
+        Raises InputError with the nearest names where there is none, and with what tells them apart
+        where several differ.
+        """
+        with self._told():
+            return lookups.choose(self._conn, text)
+
+    def crystal(self, phase_id: str) -> Crystal:
+        """Return the structure of a phase exactly as it was added; raises InputError as `phase`."""
+        from phaseid.library.records import unpack_crystal
+
+        self.phase(phase_id)
+        row = self._one(
+            "SELECT data FROM structure JOIN phase ON phase.id = phase WHERE phase_id = ?", phase_id
+        )
+        return unpack_crystal(row[0])
+
+    def lines(self, phase_id: str) -> Lines:
+        """Return the stored lines of a phase; raises InputError as `phase`."""
+        self.phase(phase_id)
+        volume, complete, floor, data = self._one(
+            "SELECT volume_A3, complete_to_A, floor, data "
+            "FROM lines JOIN phase ON phase.id = phase WHERE phase_id = ?",
+            phase_id,
+        )
+        return unpack_lines(data, volume_A3=volume, complete_to_A=complete, floor=floor)
+
+    def line_table(self, kind: Kind) -> LineTable:
+        """Return the lines of every phase as that kind of probe sees them."""
+        rows = self._rows(
+            "SELECT phase_id, volume_A3, complete_to_A, floor, quality, elements, data "
+            "FROM phase JOIN lines ON lines.phase = phase.id ORDER BY phase.id"
+        )
+        return line_table(kind, rows)
+
+    def add(
+        self, paths: Iterable[str | Path], progress: Progress | None = None, *, workers: int = 1
+    ) -> ImportTally:
+        """Add the structures in CIF files, folders and archives.
+
+        No single file stops the rest: what cannot be read is in the tally and among `rejects`, with
+        the reason. Added before: nothing changes. A new version of an entry replaces the old one.
+        `workers` processes share the work; the result is the same. Raises LibraryError where the
+        library cannot be written.
+        """
+        from phaseid.library.adding import add_paths
+
+        with self._writer() as conn:
+            return add_paths(conn, [Path(path) for path in paths], progress, workers=workers)
+
+    def add_crystals(
+        self, crystals: Iterable[Crystal], progress: Progress | None = None
+    ) -> ImportTally:
+        """Add structures that are already read; otherwise as `add`."""
+        from phaseid.library.adding import add_crystals
+
+        with self._writer() as conn:
+            return add_crystals(conn, crystals, progress)
+
+    @contextmanager
+    def _writer(self) -> Iterator[sqlite3.Connection]:
+        self._conn.close()  # an idle reader would keep the file in WAL mode
+        try:
+            conn = connection.open_for_writing(self.path)
+            try:
+                with self._told():
+                    yield conn
+            finally:
+                connection.close_after_writing(conn)
+        finally:
+            self._conn = connection.open_for_reading(self.path)
+
+    @contextmanager
+    def _told(self) -> Iterator[None]:
+        with connection.told(self.path):
+            yield
+
+    def _rows(self, sql: str, *values: object) -> list[tuple[Any, ...]]:
+        with self._told():
+            return self._conn.execute(sql, values).fetchall()
+
+    def _one(self, sql: str, *values: object) -> Sequence[Any]:
+        rows = self._rows(sql, *values)
+        if not rows:
+            raise LibraryError(
+                f"{self.path}: the library is damaged (a row is missing). "
+                "Restore a copy, or add the structures anew."
+            )
+        return rows[0]

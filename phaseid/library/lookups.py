@@ -1,0 +1,181 @@
+"""Which phase a person means: by id, formula, source number, name or part of a name."""
+
+from __future__ import annotations
+
+import difflib
+import sqlite3
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from enum import IntEnum
+from typing import Any
+
+from phaseid.crystal.crystal import Source
+from phaseid.errors import InputError
+from phaseid.library.cautions import cautions_for
+from phaseid.library.formulas import formula_keys, name_key
+from phaseid.library.phase import Phase
+from phaseid.library.records import findings_from_json
+
+PHASE_COLUMNS = (
+    "phase_id, name, formula, elements, space_group_number, space_group_symbol, "
+    "a_A, b_A, c_A, alpha_deg, beta_deg, gamma_deg, volume_A3, density_g_cm3, "
+    "source_database, source_id, source_file, source_reference, findings, quality"
+)
+
+_SHOWN_CHOICES = 12
+_SUGGESTIONS = 5
+_TRIGRAM = 3
+_CLEARLY_BETTER = 0.2  # in quality: an entry this far ahead of the others is the one meant
+_SAME_CELL = 0.02  # relative edge difference within which two entries are one and the same phase
+
+
+class Match(IntEnum):
+    """How a text fits a phase, best first."""
+
+    ID = 0
+    NUMBER = 1
+    FORMULA = 2
+    NAME = 3
+    FORMULA_ANY_CASE = 4
+    NAME_STARTS = 5
+    NAME_HOLDS = 6
+
+
+_EXACT_MAX = Match.FORMULA_ANY_CASE
+
+
+@dataclass(frozen=True, slots=True)
+class Hit:
+    """A phase found, and how the text fits it."""
+
+    match: Match
+    phase: Phase
+
+
+def phase_from_row(row: Sequence[Any]) -> Phase:
+    """Build a phase from a row of PHASE_COLUMNS; cautions follow today's rules."""
+    elements = tuple(row[3].split())
+    return Phase(
+        phase_id=row[0],
+        name=row[1],
+        formula=row[2],
+        elements=elements,
+        space_group_number=row[4],
+        space_group_symbol=row[5],
+        cell=(row[6], row[7], row[8], row[9], row[10], row[11]),
+        volume_A3=row[12],
+        density_g_cm3=row[13],
+        source=Source(*row[14:18]),
+        findings=findings_from_json(row[18]),
+        cautions=cautions_for(row[1], row[2], elements, row[4]),
+        quality=row[19],
+    )
+
+
+def find(conn: sqlite3.Connection, text: str) -> list[Hit]:
+    """Return every phase that `text` can mean: exact fits first, then the more trusted entries."""
+    matches: dict[int, Match] = {}
+
+    def note(match: Match, sql: str, *values: object) -> None:
+        for (row_id,) in conn.execute(sql, values):
+            matches.setdefault(row_id, match)
+
+    wanted, key = text.strip(), name_key(text)
+    note(Match.ID, "SELECT id FROM phase WHERE phase_id = ?", wanted)
+    note(
+        Match.NUMBER, "SELECT phase FROM label WHERE kind = 'number' AND key = ?", wanted.casefold()
+    )
+    by_formula = "SELECT id FROM phase WHERE formula_key = ?"
+    for formula_key in formula_keys(wanted):
+        note(Match.FORMULA, by_formula, formula_key)
+    if key:
+        by_name = "SELECT phase FROM label WHERE kind = 'name' AND "
+        note(Match.NAME, by_name + "key = ?", key)
+        for formula_key in formula_keys(wanted, any_case=True):
+            note(Match.FORMULA_ANY_CASE, by_formula, formula_key)
+        note(Match.NAME_STARTS, by_name + "key >= ? AND key < ?", key, key + "\U0010ffff")
+        words = [word for word in key.split() if len(word) >= _TRIGRAM]
+        if words:
+            held = " AND ".join(f'"{word}"' for word in words)
+            note(
+                Match.NAME_HOLDS,
+                "SELECT phase FROM label_fts JOIN label ON label.id = label_fts.rowid "
+                "WHERE label_fts MATCH ? AND kind = 'name'",
+                held,
+            )
+    hits = [
+        Hit(matches[row[0]], phase_from_row(row[1:])) for row in _rows_by_id(conn, sorted(matches))
+    ]
+    hits.sort(key=lambda hit: (hit.match, -hit.phase.quality, hit.phase.name, hit.phase.phase_id))
+    return hits
+
+
+def _rows_by_id(conn: sqlite3.Connection, ids: Sequence[int]) -> Iterable[tuple[Any, ...]]:
+    for start in range(0, len(ids), 500):
+        some = ids[start : start + 500]
+        marks = ", ".join("?" * len(some))
+        yield from conn.execute(
+            f"SELECT id, {PHASE_COLUMNS} FROM phase WHERE id IN ({marks})", some
+        )
+
+
+def choose(conn: sqlite3.Connection, text: str) -> Phase:
+    """Return the one phase that `text` means; raises InputError where that is not clear."""
+    hits = find(conn, text)
+    if not hits:
+        raise InputError(f"the library has no phase called '{text}'", remedy=_nearest(conn, text))
+    best = hits[0].match
+    candidates = [hit.phase for hit in hits if hit.match == best or best > _EXACT_MAX]
+    leader = candidates[0]
+    rivals = [
+        phase
+        for phase in candidates[1:]
+        if not _same(leader, phase) and phase.quality > leader.quality - _CLEARLY_BETTER
+    ]
+    if not rivals:
+        return leader
+    raise InputError(
+        f"'{text}' can mean several phases:\n{_table([leader, *rivals])}\n",
+        remedy="Give the phase id, or a name that only one of them has.",
+    )
+
+
+def _same(one: Phase, other: Phase) -> bool:
+    """Whether two entries describe one phase: formula, space group, nearly the same cell."""
+    return (
+        formula_keys(one.formula) == formula_keys(other.formula)
+        and one.space_group_number == other.space_group_number
+        and all(abs(a - b) <= _SAME_CELL * a for a, b in zip(one.cell, other.cell, strict=True))
+    )
+
+
+def _table(phases: Sequence[Phase]) -> str:
+    rows = [
+        (
+            phase.phase_id,
+            phase.name,
+            f"{phase.space_group_symbol} ({phase.space_group_number})",
+            " ".join(f"{edge:.3f}" for edge in phase.cell[:3]) + " Å",
+            f"{phase.source.database} {phase.source.id}".strip(),
+        )
+        for phase in phases[:_SHOWN_CHOICES]
+    ]
+    widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
+    lines = [
+        "  " + "  ".join(cell.ljust(w) for cell, w in zip(row, widths, strict=True)).rstrip()
+        for row in rows
+    ]
+    if len(phases) > _SHOWN_CHOICES:
+        lines.append(f"  and {len(phases) - _SHOWN_CHOICES} more: phaseid library find shows all")
+    return "\n".join(lines)
+
+
+def _nearest(conn: sqlite3.Connection, text: str) -> str:
+    """Say which names come closest, and what else can be done."""
+    names: dict[str, str] = {}
+    for key, shown in conn.execute("SELECT key, text FROM label WHERE kind = 'name'"):
+        names.setdefault(key, shown)
+    close = difflib.get_close_matches(name_key(text), names, n=_SUGGESTIONS, cutoff=0.6)
+    if close:
+        return f"Close names: {', '.join(names[key] for key in close)}."
+    return "Give a formula, a mineral name, a source number or a CIF file; or add the structure."
