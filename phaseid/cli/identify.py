@@ -153,8 +153,14 @@ def _read(
         )
     if sys.stdin.isatty():
         say("Reading a ring list from the keyboard; end it with Ctrl-D.")
+    try:
+        text = sys.stdin.read()
+    except UnicodeDecodeError:
+        raise InputError(
+            "is not UTF-8 text", path="standard input", remedy="Save the list as UTF-8"
+        ) from None
     return rings_from_text(
-        sys.stdin.read(),
+        text,
         source="standard input",
         probe=probe,
         scale_uncertainty=scale_uncertainty,

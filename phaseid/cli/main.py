@@ -82,7 +82,7 @@ def front(
 app.command("identify", short_help="Name the phases behind rings.")(identify.identify)
 app.command("lines", short_help="List the lines of a phase.")(lines.lines)
 app.command("near", short_help="List phases with lines near spacings.")(near.near)
-app.add_typer(library.app, name="library")
+app.add_typer(library.app, name="library", short_help="Add structures, look them up.")
 app.command("guide", short_help="Show the manual.")(guide.guide)
 
 

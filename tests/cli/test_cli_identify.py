@@ -1,0 +1,134 @@
+"""`phaseid identify`: what goes in, what comes out, what is refused."""
+
+from __future__ import annotations
+
+import io
+import math
+import sys
+from pathlib import Path
+from typing import Any
+
+import pytest
+
+A_AL = 4.0495  # Å, aluminium at room temperature; from memory of handbook tables
+HKL = [(1, 1, 1), (2, 0, 0), (2, 2, 0), (3, 1, 1), (2, 2, 2), (4, 0, 0), (3, 3, 1)]
+GRADES = ["vs", "s", "m", "m", "w", "vw", "w"]
+SPACINGS = [A_AL / math.sqrt(sum(index**2 for index in hkl)) for hkl in HKL]
+PROBE = ("--probe", "electron 200 kV", "--scale-uncertainty", "0.5%")
+
+
+@pytest.fixture
+def ring_file(tmp_path: Path) -> str:
+    path = tmp_path / "foil.csv"
+    rows = [f"{d:.3f},0.004,{grade}" for d, grade in zip(SPACINGS, GRADES, strict=True)]
+    head = ["# title: foil", "# probe: electron 200 kV", "# scale uncertainty: 0.5 %"]
+    path.write_text("\n".join([*head, "d_A,sigma,intensity", *rows]) + "\n", encoding="utf-8")
+    return str(path)
+
+
+def _formulas(value: Any) -> list[str]:
+    return [phase["formula"] for phase in value["hypotheses"][0]["phases"]]
+
+
+def test_a_file_is_identified(phaseid, ring_file: str) -> None:
+    value = phaseid("identify", ring_file, "--only", "Al", "--json").json("identification-1")
+    assert _formulas(value) == ["Al"]
+    assert value["verdict"] == "identified"
+    best = value["hypotheses"][0]
+    assert [a["hkl"] for a in best["assignments"]] == [list(hkl) for hkl in HKL]
+    assert best["unexplained"] == []
+    assert value["patterns"][0]["title"] == "foil"
+
+
+def test_typed_spacings_are_identified(phaseid) -> None:
+    typed = [f"{d:.3f}" for d in SPACINGS]
+    words = ("identify", *typed, *PROBE, "--intensities", " ".join(GRADES), "--only", "Al,O")
+    value = phaseid(*words, "--json").json("identification-1")
+    assert _formulas(value) == ["Al"]
+    assert [ring["grade"] for ring in value["patterns"][0]["rings"]] == GRADES
+
+
+def test_typed_angles_need_their_unit(phaseid) -> None:
+    angles = [f"{2 * math.degrees(math.asin(1.5406 / 2 / d)):.2f}" for d in SPACINGS]
+    words = ("identify", *angles, "--unit", "two_theta_deg", "--probe", "x-ray Cu Ka1")
+    value = phaseid(*words, "--only", "Al", "--json").json("identification-1")
+    assert _formulas(value) == ["Al"]
+    assert value["patterns"][0]["rings"][0]["d_A"] == pytest.approx(SPACINGS[0], rel=1e-3)
+
+
+def test_standard_input_is_read(phaseid, ring_file: str, monkeypatch: pytest.MonkeyPatch) -> None:
+    text = Path(ring_file).read_text(encoding="utf-8")
+    monkeypatch.setattr(sys, "stdin", io.StringIO(text))
+    value = phaseid("identify", "-", "--only", "Al", "--json").json("identification-1")
+    assert _formulas(value) == ["Al"]
+
+
+def test_several_patterns_are_one_question(phaseid, ring_file: str) -> None:
+    value = phaseid("identify", ring_file, ring_file, "--only", "Al", "--json").json(
+        "identification-1"
+    )
+    assert len(value["patterns"]) == 2
+    assert {a["pattern"] for a in value["hypotheses"][0]["assignments"]} == {0, 1}
+
+
+def test_probe_and_scale_override_the_file(phaseid, ring_file: str) -> None:
+    words = ("--probe", "electron 80 kV", "--scale-uncertainty", "0.02", "--only", "Al")
+    value = phaseid("identify", ring_file, *words, "--json").json("identification-1")
+    probe = value["patterns"][0]["probe"]
+    assert probe["scale_sigma"] == pytest.approx(0.02)
+    assert probe["wavelength_A"] == pytest.approx(0.0418, abs=1e-4)  # 80 kV; from memory
+
+
+def test_chemistry_narrows_the_answer(phaseid, ring_file: str) -> None:
+    value = phaseid("identify", ring_file, "--not", "Al", "--json").json("identification-1")
+    assert all(
+        "Al" not in phase["elements"]
+        for hypothesis in value["hypotheses"]
+        for phase in hypothesis["phases"]
+    )
+
+
+def test_top_limits_the_list(phaseid, ring_file: str) -> None:
+    value = phaseid("identify", ring_file, "--top", "1", "--json").json("identification-1")
+    assert len(value["hypotheses"]) == 1
+
+
+@pytest.mark.parametrize("columns", [60, 80])
+def test_text_says_the_answer_first(
+    phaseid, ring_file: str, columns: int, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setenv("COLUMNS", str(columns))
+    done = phaseid("identify", ring_file, "--only", "Al")
+    assert done.code == 0
+    assert done.out.lower().startswith("aluminium (al), probability")
+    assert max(len(line) for line in done.out.splitlines()) <= columns
+    assert "\033" not in done.out
+
+
+@pytest.mark.parametrize(
+    ("words", "said"),
+    [
+        (("2.34", "none.csv", *PROBE), "do not mix"),
+        (("none.csv",), "none.csv"),
+        (("2.34", "2.02"), "need a probe"),
+        (("2.34", "2.02", *PROBE, "--unit", "inch"), "two_theta_deg"),
+        (("2.34", "2.02", *PROBE, "--must", "Xx"), "'Xx' is not an element"),
+        (("2.34", "2.02", *PROBE, "--intensities", "vs"), "1 intensities for 2 rings"),
+        (("2.34", "2.02", *PROBE, "--scale-uncertainty", "much"), "much"),
+        (("0", "2.02", *PROBE), "zero"),
+        (("2.34", "2.02", *PROBE, "--max-phases", "9"), "--max-phases"),
+    ],
+)
+def test_wrong_input_is_exit_code_2(phaseid, words: tuple[str, ...], said: str) -> None:
+    done = phaseid("identify", *words)
+    assert done.code == 2
+    assert done.out == ""
+    assert said in done.err
+    assert "Traceback" not in done.err
+
+
+def test_an_empty_pattern_is_refused(phaseid, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(sys, "stdin", io.StringIO(""))
+    done = phaseid("identify", "-")
+    assert done.code == 2
+    assert "standard input" in done.err
