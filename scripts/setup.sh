@@ -38,7 +38,7 @@ install_project() {
   wanted="$* $(cksum <pyproject.toml)"
   if [[ "$(cat "$stamp" 2>/dev/null)" != "$wanted" || "$*" != *-e* ]]; then
     echo "Installing phaseid and what it needs (the first time takes a minute or two)" >&2
-    "$venv/bin/python" -m pip install --quiet --disable-pip-version-check \
+    "$venv/bin/python" -m pip install -qq --disable-pip-version-check \
       --no-warn-script-location "$@" || exit 1
     echo "$wanted" >"$stamp"
   fi

@@ -1,0 +1,90 @@
+"""Which strong lines of a library lie near given spacings: a look-up, not an identification."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from phaseid.errors import InputError
+from phaseid.library import Library
+from phaseid.library.phase import Phase
+from phaseid.matching.chemistry import Chemistry
+from phaseid.probes import Probe
+
+
+@dataclass(frozen=True, slots=True)
+class NearLine:
+    """A line of `phase` near `wanted_d_A`; `intensity` as the probe shows it, strongest = 100."""
+
+    phase: Phase
+    hkl: tuple[int, int, int]
+    d_A: float
+    intensity: float
+    wanted_d_A: float
+
+
+def near_lines(
+    spacings_A: Sequence[float],
+    library: Library,
+    probe: Probe,
+    *,
+    tolerance: float = 0.01,
+    min_intensity: float = 10.0,
+    chemistry: Chemistry | None = None,
+) -> list[NearLine]:
+    """Return the lines within a relative `tolerance` of any of the spacings (Å).
+
+    Only lines of at least `min_intensity` (strongest of the phase = 100) count. Phases that meet
+    more of the spacings come first, then those whose lines there are stronger; within a phase the
+    order is that of the spacings asked for. Raises InputError for a spacing or tolerance that is
+    none.
+    """
+    for value in spacings_A:
+        if not 0 < value < np.inf:
+            raise InputError(
+                f"{value:g} is no lattice spacing", remedy="Give positive numbers, in Å"
+            )
+    if not 0 < tolerance < 1:
+        raise InputError(
+            f"a tolerance of {tolerance:g} is out of range", remedy="Give one such as 1% or 0.005"
+        )
+    table = library.line_table(probe.kind)
+    intensity = probe.weights(table.d_A, table.multiplicity, table.f2)
+    counts = np.diff(table.offsets)
+    owner = np.repeat(np.arange(len(counts)), counts)
+    strongest = np.zeros(len(counts))
+    np.maximum.at(strongest, owner, intensity)
+    relative = 100 * intensity / np.where(strongest > 0, strongest, 1.0)[owner]
+
+    met: dict[int, list[tuple[int, int]]] = {}  # phase -> (which spacing, which line)
+    for order, wanted in enumerate(spacings_A):
+        close = (np.abs(table.d_A / wanted - 1) <= tolerance) & (relative >= min_intensity)
+        for line in np.flatnonzero(close).tolist():
+            met.setdefault(int(owner[line]), []).append((order, line))
+
+    def worth(phase: int) -> tuple[float, float, int]:
+        spacings = {order for order, _ in met[phase]}
+        strength = sum(float(relative[line]) for _, line in met[phase])
+        return -len(spacings), -strength, phase
+
+    answer = []
+    for index in sorted(met, key=worth):
+        phase = library.phase(table.phase_ids[index])
+        if chemistry is not None and not (
+            chemistry.admits(phase.elements) and chemistry.must <= set(phase.elements)
+        ):
+            continue
+        for order, line in met[index]:
+            h, k, l = (int(i) for i in table.hkl[line])  # noqa: E741 (Miller's own letter)
+            answer.append(
+                NearLine(
+                    phase=phase,
+                    hkl=(h, k, l),
+                    d_A=float(table.d_A[line]),
+                    intensity=float(relative[line]),
+                    wanted_d_A=float(spacings_A[order]),
+                )
+            )
+    return answer
