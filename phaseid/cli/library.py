@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -175,6 +174,7 @@ def _open_to_add(path: Path | None) -> Library:
 def _add(library: Library, paths: list[Path], *, starter: bool, jobs: int | None) -> ImportTally:
     from phaseid.cli.progress import progress_bar
     from phaseid.library import ImportTally
+    from phaseid.library.adding import suggested_workers
     from phaseid.library.starter import starter_crystals
 
     tally = ImportTally()
@@ -182,7 +182,7 @@ def _add(library: Library, paths: list[Path], *, starter: bool, jobs: int | None
         if starter:
             tally += library.add_crystals(starter_crystals(), advance)
         if paths:
-            workers = jobs or (os.cpu_count() or 1)
+            workers = jobs or suggested_workers(paths)
             tally += library.add(paths, advance, workers=workers)
     return tally
 

@@ -2,33 +2,34 @@
 
 `work` is a pure function of a file's bytes, so processes can share it; rows arrive in the order of
 the files whoever made them, and are written a batch per transaction. Killed at any moment, the
-library holds what the last whole batch left.
+library holds what the last whole batch left, and adding the same files again goes on from there.
 """
 
 from __future__ import annotations
 
+import os
 import sqlite3
 from collections import deque
 from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import Future, ProcessPoolExecutor
-from itertools import count, islice
+from itertools import islice
 from multiprocessing import get_context
 from pathlib import Path
 from typing import TypeVar
 
 from phaseid.crystal.crystal import Crystal
 from phaseid.library.entries import Entry, entry
-from phaseid.library.sources import Found, StructureFile, count_structure_files, read_all
+from phaseid.library.outcome import Outcome
+from phaseid.library.sources import Found, count_structure_files, read_all
 from phaseid.library.tally import ImportTally, Rejected
 from phaseid.library.writer import Writer
 
 Progress = Callable[[int, int | None], None]
-Outcome = tuple[list[Entry], list[Rejected], str]
-"""What one file gave: its entries, what was refused, and where the file lies."""
-
 T = TypeVar("T")
 
 _BATCH = 500  # files a transaction
+_MANY = 2000  # files from which on several processes pay
+_WORKERS_MAX = 8
 _CHUNK = 32  # files a message to a worker process
 
 
@@ -37,7 +38,9 @@ def work(found: Found) -> Outcome:
     from phaseid.crystal.cif import read_cif
 
     if isinstance(found, Rejected):
-        return [], [found], found.location
+        return Outcome(found.location, rejects=(found,))
+    if found.known:
+        return Outcome(found.location, file=found)
     reading = read_cif(found.data, found.file)
     rejects = [
         Rejected(found.location, found.file, reject.block, reject.code, reject.reason)
@@ -46,32 +49,41 @@ def work(found: Found) -> Outcome:
     entries = []
     for number, crystal in enumerate(reading.crystals):
         location = found.location if number == 0 else f"{found.location}#{number + 1}"
-        made = _made(crystal, location, found)
+        made = _made(crystal, location)
         if isinstance(made, Entry):
             entries.append(made)
         else:
             rejects.append(made)
-    return entries, rejects, found.location
+    return Outcome(found.location, tuple(entries), tuple(rejects), found.digest)
 
 
-def _made(crystal: Crystal, location: str, found: StructureFile | None = None) -> Entry | Rejected:
-    file = crystal.source.file if found is None else found.file
+def _made(crystal: Crystal, location: str) -> Entry | Rejected:
+    file = crystal.source.file
     try:
         made = entry(crystal, location)
     except Exception as error:  # one structure that breaks the arithmetic must not stop the others
         reason = f"the lines cannot be computed ({type(error).__name__}: {error})"
         return Rejected(location, file, "", "no_lines", reason)
     if not made.lines:
-        return Rejected(location, file, "", "no_lines", "the structure has no lines above 0.6 Å")
+        return Rejected(location, file, "", "no_lines", "the structure has no lines in the range")
     return made
 
 
+def suggested_workers(paths: list[Path]) -> int:
+    """Return how many processes pay for adding `paths`: starting one costs as much as 300 files."""
+    files = count_structure_files(paths)
+    many = files is None or files > _MANY
+    return min(os.cpu_count() or 1, _WORKERS_MAX) if many else 1
+
+
 def add_paths(
-    conn: sqlite3.Connection, paths: list[Path], progress: Progress | None, *, workers: int = 1
+    conn: sqlite3.Connection, paths: list[Path], progress: Progress | None, *, workers: int
 ) -> ImportTally:
     """Add every structure file in `paths`; see `Library.add`."""
+    writer = Writer(conn, work)
     total = None if progress is None else count_structure_files(paths)
-    return _write(conn, _outcomes(read_all(paths), workers), progress, total)
+    found = map(writer.marked, read_all(paths))
+    return _write(writer, _outcomes(found, workers), progress, total)
 
 
 def add_crystals(
@@ -82,25 +94,22 @@ def add_crystals(
     def outcomes() -> Iterator[Outcome]:
         for crystal in crystals:
             made = _made(crystal, "")
-            yield ([made], [], "") if isinstance(made, Entry) else ([], [made], "")
+            if isinstance(made, Entry):
+                yield Outcome("", entries=(made,))
+            else:
+                yield Outcome("", rejects=(made,))
 
-    return _write(conn, outcomes(), progress, None)
+    return _write(Writer(conn, work), outcomes(), progress, None)
 
 
 def _write(
-    conn: sqlite3.Connection,
-    outcomes: Iterable[Outcome],
-    progress: Progress | None,
-    total: int | None,
+    writer: Writer, outcomes: Iterable[Outcome], progress: Progress | None, total: int | None
 ) -> ImportTally:
-    writer = Writer(conn)
-    done = count(1)
-
     def counted() -> Iterator[Outcome]:
-        for outcome in outcomes:
+        for done, outcome in enumerate(outcomes, start=1):
             yield outcome
             if progress is not None:
-                progress(next(done), total)
+                progress(done, total)
 
     for batch in _batches(counted(), _BATCH):
         writer.write(batch)

@@ -33,8 +33,8 @@ class Entry:
 
 def entry(crystal: Crystal, location: str) -> Entry:
     """Compute the lines of a structure and make its entry; `location` says where its file lies."""
-    from phaseid.crystal.cif import content_key
     from phaseid.crystal.composition import cell_contents, density_of_contents
+    from phaseid.crystal.content_key import content_key
     from phaseid.crystal.lines import compute_lines, trim
 
     lines = trim(compute_lines(crystal), STORED_FLOOR)

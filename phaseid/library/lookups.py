@@ -25,6 +25,8 @@ PHASE_COLUMNS = (
 _SHOWN_CHOICES = 12
 _SUGGESTIONS = 5
 _TRIGRAM = 3
+_NAMES_COMPARED = 20_000
+_LAST = "\U0010ffff"  # sorts behind every letter
 _CLEARLY_BETTER = 0.2  # in quality: an entry this far ahead of the others is the one meant
 _SAME_CELL = 0.02  # relative edge difference within which two entries are one and the same phase
 
@@ -86,14 +88,16 @@ def find(conn: sqlite3.Connection, text: str) -> list[Hit]:
         Match.NUMBER, "SELECT phase FROM label WHERE kind = 'number' AND key = ?", wanted.casefold()
     )
     by_formula = "SELECT id FROM phase WHERE formula_key = ?"
-    for formula_key in formula_keys(wanted):
+    literal = formula_keys(wanted)
+    for formula_key in literal:
         note(Match.FORMULA, by_formula, formula_key)
     if key:
         by_name = "SELECT phase FROM label WHERE kind = 'name' AND "
         note(Match.NAME, by_name + "key = ?", key)
         for formula_key in formula_keys(wanted, any_case=True):
             note(Match.FORMULA_ANY_CASE, by_formula, formula_key)
-        note(Match.NAME_STARTS, by_name + "key >= ? AND key < ?", key, key + "\U0010ffff")
+    if key and not literal:  # who writes a formula does not mean a name that begins with it
+        note(Match.NAME_STARTS, by_name + "key >= ? AND key < ?", key, key + _LAST)
         words = [word for word in key.split() if len(word) >= _TRIGRAM]
         if words:
             held = " AND ".join(f'"{word}"' for word in words)
@@ -135,8 +139,9 @@ def choose(conn: sqlite3.Connection, text: str) -> Phase:
     if not rivals:
         return leader
     raise InputError(
-        f"'{text}' can mean several phases:\n{_table([leader, *rivals])}\n",
-        remedy="Give the phase id, or a name that only one of them has.",
+        f"'{text}' can mean several phases",
+        remedy="Give the phase id, or a name that only one of them has:\n"
+        + _table([leader, *rivals]),
     )
 
 
@@ -171,11 +176,14 @@ def _table(phases: Sequence[Phase]) -> str:
 
 
 def _nearest(conn: sqlite3.Connection, text: str) -> str:
-    """Say which names come closest, and what else can be done."""
-    names: dict[str, str] = {}
-    for key, shown in conn.execute("SELECT key, text FROM label WHERE kind = 'name'"):
-        names.setdefault(key, shown)
-    close = difflib.get_close_matches(name_key(text), names, n=_SUGGESTIONS, cutoff=0.6)
+    """Say which names with the same first letter come closest, and what else can be done."""
+    key = name_key(text)
+    named = conn.execute(
+        "SELECT key, text FROM label WHERE kind = 'name' AND key >= ? AND key < ? LIMIT ?",
+        (key[:1], key[:1] + _LAST, _NAMES_COMPARED),
+    )
+    names = dict(named.fetchall())
+    close = difflib.get_close_matches(key, names, n=_SUGGESTIONS, cutoff=0.6)
     if close:
-        return f"Close names: {', '.join(names[key] for key in close)}."
+        return f"Close names: {', '.join(names[name] for name in close)}."
     return "Give a formula, a mineral name, a source number or a CIF file; or add the structure."

@@ -3,7 +3,8 @@
 A library file is plain SQLite. `meta` says what it is; `phase` has one compact row per structure;
 `structure` and `lines` hold the bulky parts by phase so that look-ups never page through them;
 `label` holds every name and source number a phase can be asked for by (with a trigram index);
-`reject` remembers what could not be read and why.
+`seen` remembers files that were read without a reject,
+so that they need not be read again; `reject` what could not be read and why.
 """
 
 from __future__ import annotations
@@ -69,6 +70,7 @@ def _first_tables(db: Database) -> None:
     db.table("label").create_index(["key"])
     db.table("label").create_index(["phase", "kind", "text"], unique=True)
     db.table("label").enable_fts(["key"], tokenize="trigram", create_triggers=True)
+    db.table("seen").create({"digest": str, "content": str}, pk=("digest", "content"))
     db.table("reject").create(
         {"location": str, "file": str, "block": str, "code": str, "reason": str},
     )

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import bz2
 import gzip
+import hashlib
 import lzma
 import os
 import tarfile
@@ -18,6 +19,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import IO, Any
 
+from phaseid import __version__
 from phaseid.crystal.cif_text import MAX_BYTES
 from phaseid.library.tally import Rejected
 
@@ -44,11 +46,20 @@ _BAD_ARCHIVE = (
 
 @dataclass(frozen=True, slots=True)
 class StructureFile:
-    """The bytes of one structure file; `file` its name, `location` where it lies."""
+    """The bytes of one structure file; `file` its name, `location` where it lies.
+
+    `known`: the library remembers these bytes, they need not be read again.
+    """
 
     location: str
     file: str
     data: bytes
+    known: bool = False
+
+    @property
+    def digest(self) -> str:
+        """128 bits (hex) of the SHA-256 of the bytes as this version of phaseid reads them."""
+        return hashlib.sha256(f"phaseid {__version__}\n".encode() + self.data).hexdigest()[:32]
 
 
 Found = StructureFile | Rejected

@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 import sqlite3
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import replace
 
 from phaseid.library.entries import Entry
+from phaseid.library.outcome import Outcome
+from phaseid.library.sources import Found, StructureFile
 from phaseid.library.tally import ImportTally, Rejected
 
 _DIGEST_RANGE = 1 << 128
@@ -24,30 +27,70 @@ def combined(digest: str, *, plus: Iterable[str] = (), minus: Iterable[str] = ()
 
 
 class Writer:
-    """Writes entries into an open library and keeps the tally of one run."""
+    """Writes entries into an open library and keeps the tally of one run.
 
-    def __init__(self, conn: sqlite3.Connection) -> None:
+    `read` turns a file into its outcome, for the rare one that was thought to be known and is not.
+    """
+
+    def __init__(self, conn: sqlite3.Connection, read: Callable[[Found], Outcome]) -> None:
         self.tally = ImportTally()
         self._conn = conn
+        self._read = read
         self._met: set[int] = set()  # rows that a file of this run stands for
 
-    def write(self, batch: Sequence[tuple[list[Entry], list[Rejected], str]]) -> None:
+    def marked(self, found: Found) -> Found:
+        """Mark a file as known where all that was once read from these bytes is in the library."""
+        if isinstance(found, StructureFile) and self._rows_of(found):
+            return replace(found, known=True)
+        return found
+
+    def write(self, batch: Sequence[Outcome]) -> None:
         """Write what a batch of files gave, in one transaction: all of it or nothing."""
         counts = (self.tally.added, self.tally.unchanged, self.tally.replaced)
+        refused: list[Rejected] = []
         self._conn.execute("BEGIN IMMEDIATE")
         try:
-            for entries, rejects, location in batch:
-                for entry in entries:
-                    self._put(entry)
-                self._note_rejects(rejects, location)
+            for outcome in batch:
+                refused.extend(self._take(outcome))
             self._conn.execute("COMMIT")
         except BaseException:
             self.tally.added, self.tally.unchanged, self.tally.replaced = counts
             if self._conn.in_transaction:
                 self._conn.execute("ROLLBACK")
             raise
-        for _, rejects, _ in batch:
-            self.tally.rejects.extend(rejects)
+        self.tally.rejects.extend(refused)
+
+    def _take(self, outcome: Outcome) -> Sequence[Rejected]:
+        if outcome.file is not None:
+            rows = self._rows_of(outcome.file)
+            if rows:
+                self._met.update(rows)
+                self.tally.unchanged += len(rows)
+                return ()
+            outcome = self._read(replace(outcome.file, known=False))  # replaced by this very run
+        for entry in outcome.entries:
+            self._put(entry)
+        if outcome.location:
+            self._conn.execute("DELETE FROM reject WHERE location = ?", (outcome.location,))
+        self._conn.executemany(
+            "INSERT INTO reject (location, file, block, code, reason) VALUES (?, ?, ?, ?, ?)",
+            [(r.location, r.file, r.block, r.code, r.reason) for r in outcome.rejects],
+        )
+        if outcome.digest and not outcome.rejects:
+            self._conn.executemany(
+                "INSERT OR IGNORE INTO seen VALUES (?, ?)",
+                [(outcome.digest, entry.content) for entry in outcome.entries],
+            )
+        return outcome.rejects
+
+    def _rows_of(self, file: StructureFile) -> list[int]:
+        """Return the rows that stand for a file once read, none where one of them is gone."""
+        found = self._conn.execute(
+            "SELECT phase.id FROM seen LEFT JOIN phase USING (content) WHERE digest = ?",
+            (file.digest,),
+        )
+        rows = [row[0] for row in found]
+        return [] if None in rows else rows
 
     def _put(self, entry: Entry) -> None:
         held = self._conn.execute("SELECT id FROM phase WHERE content = ?", (entry.content,))
@@ -131,11 +174,3 @@ class Writer:
         (digest,) = self._conn.execute("SELECT value FROM meta WHERE key = 'digest'").fetchone()
         changed = combined(digest, plus=[plus], minus=[] if minus is None else [minus])
         self._conn.execute("UPDATE meta SET value = ? WHERE key = 'digest'", (changed,))
-
-    def _note_rejects(self, rejects: Sequence[Rejected], location: str) -> None:
-        if location:
-            self._conn.execute("DELETE FROM reject WHERE location = ?", (location,))
-        self._conn.executemany(
-            "INSERT INTO reject (location, file, block, code, reason) VALUES (?, ?, ?, ?, ?)",
-            [(r.location, r.file, r.block, r.code, r.reason) for r in rejects],
-        )
