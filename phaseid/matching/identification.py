@@ -13,7 +13,8 @@ Verdict = Literal["identified", "ambiguous", "no-match"]
 
 @dataclass(frozen=True, slots=True)
 class Scale:
-    """Fitted common factor of one pattern: calculated d × factor = measured d; `sigma` of the factor."""
+    """Fitted common factor of one pattern: calculated d × factor = measured d; `sigma` of the
+    factor."""
 
     pattern: int
     factor: float
@@ -22,7 +23,8 @@ class Scale:
 
 @dataclass(frozen=True, slots=True)
 class Assignment:
-    """Ring `ring` of pattern `pattern` explained by line hkl of phase `phase` (index in the hypothesis).
+    """Ring `ring` of pattern `pattern` explained by line hkl of phase `phase` (index in the
+    hypothesis).
 
     `d_calc_A` is the calculated spacing of the phase as stored, without the fitted scale;
     `residual_sigma` is (measured − scaled calculated) / the ring's sigma.
@@ -40,7 +42,8 @@ class Assignment:
 
 @dataclass(frozen=True, slots=True)
 class Unexplained:
-    """A ring no phase of the hypothesis explains; `hint` names a usual cause where one fits, else ""."""
+    """A ring no phase of the hypothesis explains; `hint` names a usual cause where one fits, else
+    ""."""
 
     pattern: int
     ring: int
@@ -72,8 +75,9 @@ class PhaseAnswer:
 
     `share` is the weight fraction (0-1) from absolute intensities, None for a pattern that cannot
     give one; `share_sigma` its one-sigma. `indistinguishable` are library phases these rings cannot
-    tell from this one. `cell` is the refined cell (Å, degrees) with `cell_sigma`, None where too few
-    lines were assigned. `fibre_axis` is (u, v, w) where the pattern is explained by a textured film.
+    tell from this one. `cell` is the refined cell (Å, degrees) with `cell_sigma`, None where too
+    few lines were assigned. `fibre_axis` is (u, v, w) where the pattern is explained by a textured
+    film.
     """
 
     phase: Phase
@@ -88,7 +92,8 @@ class PhaseAnswer:
 
 @dataclass(frozen=True, slots=True)
 class Hypothesis:
-    """One explanation of the patterns: a set of phases. `probability` counts indistinguishable groups.
+    """One explanation of the patterns: a set of phases. `probability` counts indistinguishable
+    groups.
 
     `log_odds` is the natural log of the odds against everything else together.
     """
@@ -114,7 +119,8 @@ class LibraryStamp:
 
 @dataclass(frozen=True, slots=True)
 class TypeMatch:
-    """No listed phase fits, but the ring ratios are those of a known structure type with another cell."""
+    """No listed phase fits, but the ring ratios are those of a known structure type with another
+    cell."""
 
     type_name: str
     like: Phase
@@ -125,11 +131,12 @@ class TypeMatch:
 
 @dataclass(frozen=True, slots=True)
 class Identification:
-    """The answer: ranked hypotheses, the probability left for what no listed phase explains, remarks.
+    """The answer: ranked hypotheses, the probability left for what no listed phase explains,
+    remarks.
 
     `unlisted_probability` is that of "something not in this library". `remarks` are sentences a
-    reader needs (defaults used, rings set aside, chemistry applied). `cautions` are safety sentences
-    for the phases named.
+    reader needs (defaults used, rings set aside, chemistry applied). `cautions` are safety
+    sentences for the phases named.
     """
 
     verdict: Verdict

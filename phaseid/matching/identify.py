@@ -1,0 +1,235 @@
+"""Which phases made these rings: the main job."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from phaseid.errors import InputError
+from phaseid.library.library import Library
+from phaseid.library.linetable import LineTable
+from phaseid.library.phase import Phase
+from phaseid.matching.answer import build_hypothesis
+from phaseid.matching.chemistry import Chemistry
+from phaseid.matching.confidence import Standing, weigh
+from phaseid.matching.crowd import crowd_density
+from phaseid.matching.groups import indistinguishable, pairing, rivals_of
+from phaseid.matching.identification import (
+    Hypothesis,
+    Identification,
+    LibraryStamp,
+    TypeMatch,
+    Verdict,
+)
+from phaseid.matching.likelihood import Model
+from phaseid.matching.lineset import gather
+from phaseid.matching.patterns import prepare_all
+from phaseid.matching.search import Judged, Members, Search
+from phaseid.matching.settings import PHASE_COUNT_PRIOR
+from phaseid.rings.ringlist import RingList
+
+_SURE = 0.9
+_NOTHING = 0.5
+_SHOWN_TYPES = 3
+_TYPE_PROBABILITY = 0.02
+
+
+def identify(
+    patterns: Sequence[RingList],
+    library: Library,
+    *,
+    chemistry: Chemistry | None = None,
+    max_phases: int = 3,
+    top: int = 5,
+) -> Identification:
+    """Rank phases and mixtures of `library` for one or several patterns of the same specimen.
+
+    Raises InputError where there is nothing to identify or nothing to choose from.
+    """
+    chemistry = chemistry or Chemistry()
+    _check(patterns, max_phases, top)
+    tables = {kind: library.line_table(kind) for kind in {p.probe.kind for p in patterns}}
+    first = tables[patterns[0].probe.kind]
+    elements = first.elements
+    allowed = np.array([i for i, e in enumerate(elements) if chemistry.admits(e)], dtype=np.int64)
+    if len(allowed) == 0:
+        raise InputError(
+            f"none of the library's {len(first)} phases is allowed by the chemistry given",
+            remedy="Allow more elements with --only, or exclude fewer with --not.",
+        )
+    own = tuple(tables[p.probe.kind] for p in patterns)
+    prepared = prepare_all(patterns)
+    model = Model(
+        patterns=tuple(prepared),
+        lines=tuple(gather(t, allowed, p) for t, p in zip(own, prepared, strict=True)),
+        crowd=tuple(crowd_density(t, allowed, p) for t, p in zip(own, prepared, strict=True)),
+    )
+    sets = [elements[i] for i in allowed]
+    search = Search(
+        model,
+        log_prior=_log_prior(first, allowed),
+        max_phases=min(max_phases, len(allowed)),
+        accepts=lambda members: chemistry.satisfied_by([sets[i] for i in members]),
+    )
+    search.run()
+    standing = weigh(search)
+    phase_of = _Phases(library, first, allowed)
+    hypotheses = _hypotheses(model, own, standing, phase_of, top)
+    listed = 1.0 - standing.unlisted
+    return Identification(
+        verdict=_verdict(hypotheses, listed),
+        patterns=tuple(patterns),
+        hypotheses=hypotheses,
+        unlisted_probability=standing.unlisted,
+        library=LibraryStamp(str(library.path), len(library), library.digest),
+        remarks=_remarks(patterns, chemistry),
+        cautions=_cautions(hypotheses),
+        type_matches=_type_matches(standing, phase_of, listed),
+    )
+
+
+def _check(patterns: Sequence[RingList], max_phases: int, top: int) -> None:
+    if not patterns or any(len(p) == 0 for p in patterns):
+        raise InputError("there are no rings to identify", remedy="Give at least one spacing.")
+    if not 1 <= max_phases <= len(PHASE_COUNT_PRIOR):
+        raise InputError(
+            f"--max-phases {max_phases} is out of range",
+            remedy=f"Give a number from 1 to {len(PHASE_COUNT_PRIOR)}.",
+        )
+    if top < 1:
+        raise InputError(f"--top {top} is out of range", remedy="Give 1 or more.")
+
+
+def _log_prior(table: LineTable, allowed: NDArray[np.int64]) -> NDArray[np.float64]:
+    """ln of each allowed phase's share of the prior: by quality, summing to one."""
+    quality = np.maximum(table.quality[allowed], 1e-3)
+    result: NDArray[np.float64] = np.log(quality / quality.sum())
+    return result
+
+
+class _Phases:
+    """Candidate number -> Phase, read from the library once."""
+
+    def __init__(self, library: Library, table: LineTable, allowed: NDArray[np.int64]) -> None:
+        self._library = library
+        self._ids = [table.phase_ids[i] for i in allowed]
+        self._held: dict[int, Phase] = {}
+
+    def __call__(self, candidate: int) -> Phase:
+        if candidate not in self._held:
+            self._held[candidate] = self._library.phase(self._ids[candidate])
+        return self._held[candidate]
+
+
+def _hypotheses(
+    model: Model,
+    tables: tuple[LineTable, ...],
+    standing: Standing,
+    phase_of: _Phases,
+    top: int,
+) -> tuple[Hypothesis, ...]:
+    """The best `top` answers, sets that these rings cannot tell apart counted as one."""
+    probability = {judged.members: p for judged, p in standing.sets}
+    remaining = [judged for judged, _ in standing.sets]
+    answers: list[Hypothesis] = []
+    while remaining and len(answers) < top:
+        leader = remaining[0]
+        twins = _twins(model, leader, remaining)
+        taken = _same_answer(leader, twins, remaining)
+        total = min(sum(probability[members] for members in taken), 1.0)
+        answers.append(
+            build_hypothesis(
+                model,
+                tables,
+                leader,
+                [phase_of(c) for c in leader.members],
+                [[(c, phase_of(c)) for c in others] for others in twins],
+                total,
+                len(answers) + 1,
+            )
+        )
+        remaining = [j for j in remaining if j.members not in taken]
+    answers.sort(key=lambda h: -h.probability)
+    return tuple(replace(h, rank=i + 1) for i, h in enumerate(answers))
+
+
+def _twins(model: Model, leader: Judged, remaining: list[Judged]) -> list[list[int]]:
+    """For each phase of the leader, the candidates that cannot be told from it."""
+    twins: list[list[int]] = [[] for _ in leader.members]
+    for rival, same in indistinguishable(model, leader, rivals_of(leader, remaining)):
+        if same:
+            position, candidate = pairing(leader.members, rival.members)
+            twins[position].append(candidate)
+    return twins
+
+
+def _same_answer(leader: Judged, twins: list[list[int]], remaining: list[Judged]) -> set[Members]:
+    """Sets that differ from the leader only by phases that cannot be told apart."""
+    groups = [{c, *others} for c, others in zip(leader.members, twins, strict=True)]
+    taken = {leader.members}
+    for judged in remaining:
+        if len(judged.members) != len(groups):
+            continue
+        free = list(groups)
+        for member in judged.members:
+            home = next((g for g in free if member in g), None)
+            if home is None:
+                break
+            free.remove(home)
+        else:
+            taken.add(judged.members)
+    return taken
+
+
+def _verdict(hypotheses: tuple[Hypothesis, ...], listed: float) -> Verdict:
+    if hypotheses and hypotheses[0].probability >= _SURE:
+        return "identified"
+    return "no-match" if listed < _NOTHING else "ambiguous"
+
+
+def _remarks(patterns: Sequence[RingList], chemistry: Chemistry) -> tuple[str, ...]:
+    remarks = [remark for rings in patterns for remark in rings.remarks]
+    if chemistry.describe():
+        remarks.append(chemistry.describe())
+    if any(p.probe.kind == "electron" for p in patterns):
+        remarks.append(
+            "Electron ring intensities are too uneven for shares by weight; "
+            "none are taken from them."
+        )
+    return tuple(dict.fromkeys(remarks))
+
+
+def _cautions(hypotheses: tuple[Hypothesis, ...]) -> tuple[str, ...]:
+    """Safety sentences of every phase that is named."""
+    named = [
+        phase
+        for hypothesis in hypotheses
+        for answer in hypothesis.phases
+        for phase in (answer.phase, *answer.indistinguishable)
+    ]
+    return tuple(dict.fromkeys(c for phase in named for c in phase.cautions))
+
+
+def _type_matches(standing: Standing, phase_of: _Phases, listed: float) -> tuple[TypeMatch, ...]:
+    """Structure types whose ratios fit with another cell, where nothing listed is sure."""
+    if listed >= _SURE:
+        return ()
+    found = []
+    for relative in standing.relatives[:_SHOWN_TYPES]:
+        if relative.probability < _TYPE_PROBABILITY:
+            continue
+        like = phase_of(relative.phase)
+        a = like.cell[0] * float(np.exp(relative.strain))
+        found.append(
+            TypeMatch(
+                type_name=f"{like.name} type",
+                like=like,
+                a_A=a,
+                a_sigma_A=a * relative.strain_sigma,
+                probability=relative.probability,
+            )
+        )
+    return tuple(found)

@@ -1,0 +1,113 @@
+"""The lines of candidate phases as one pattern would show them, in padded arrays."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from phaseid.library.linetable import LineTable
+from phaseid.matching.patterns import Floats, Pattern
+
+MOST_LINES = 64
+"""Lines kept per phase and pattern: the strongest of those within reach of the rings."""
+REACH_LOW, REACH_HIGH = 0.12, 0.60
+"""How far beyond the outermost rings (in ln d) lines are still looked at."""
+WEAKEST = 0.002
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class LineSet:
+    """Lines of c phases in one pattern, the n strongest within reach, strongest first.
+
+    `x` (c, n) ln d, +inf where there is no line; `intensity` (c, n) relative to the strongest line
+    between the outermost rings, 0 where there is none; `row` (c, n) index into the line table.
+    `visible` (c, n) is the intensity a line would show when missing: its own plus that of weaker
+    neighbours it cannot be told from, 0 for those neighbours. `strength` (c,) is the absolute
+    intensity per cell volume squared of what counts as 1 in `intensity`.
+    `complete` (c,) is ln of the spacing down to which the phase's lines are known.
+    """
+
+    x: Floats
+    intensity: Floats
+    row: NDArray[np.int64]
+    visible: Floats
+    strength: Floats
+    complete: Floats
+
+
+def _ragged(offsets: NDArray[np.int64], phases: NDArray[np.int64]) -> tuple[NDArray[np.int64], ...]:
+    """Row indices of all lines of `phases`, and for each the position of its phase in `phases`."""
+    counts = offsets[phases + 1] - offsets[phases]
+    owner = np.repeat(np.arange(len(phases)), counts)
+    first = np.repeat(offsets[phases] - np.concatenate([[0], np.cumsum(counts)[:-1]]), counts)
+    return np.arange(counts.sum()) + first, owner
+
+
+def shown_intensity(table: LineTable, rows: NDArray[np.int64], pattern: Pattern) -> Floats:
+    """Unnormalised intensity of the table's lines `rows` as the pattern's probe shows them."""
+    weights: Floats = pattern.probe.weights(
+        table.d_A[rows], table.multiplicity[rows], table.f2[rows]
+    )
+    return weights
+
+
+def gather(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> LineSet:
+    """Collect the lines of `phases` (indices into the table) for one pattern."""
+    rows, owner = _ragged(table.offsets, phases)
+    x = np.log(table.d_A[rows])
+    low, high = pattern.x[0], pattern.x[-1]
+    near = (x > low - REACH_LOW) & (x < high + REACH_HIGH)
+    rows, owner, x = rows[near], owner[near], x[near]
+    intensity = shown_intensity(table, rows, pattern)
+
+    count = len(phases)
+    strongest = np.zeros(count)
+    inside = (x > low - 0.03) & (x < high + 0.03)
+    np.maximum.at(strongest, owner[inside], intensity[inside])
+    reference = np.where(strongest > 0, strongest, np.inf)
+    relative = intensity / reference[owner]
+
+    keep = relative > WEAKEST
+    rows, owner, x, relative = rows[keep], owner[keep], x[keep], np.minimum(relative[keep], 50.0)
+    order = np.lexsort((-relative, owner))
+    rows, owner, x, relative = rows[order], owner[order], x[order], relative[order]
+    starts = np.searchsorted(owner, np.arange(count))
+    rank = np.arange(len(owner)) - starts[owner]
+    top = rank < MOST_LINES
+    width = int(rank[top].max()) + 1 if top.any() else 1
+
+    padded_x = np.full((count, width), np.inf)
+    padded_i = np.zeros((count, width))
+    padded_row = np.zeros((count, width), dtype=np.int64)
+    padded_x[owner[top], rank[top]] = x[top]
+    padded_i[owner[top], rank[top]] = relative[top]
+    padded_row[owner[top], rank[top]] = rows[top]
+    return LineSet(
+        x=padded_x,
+        intensity=padded_i,
+        row=padded_row,
+        visible=_merge_neighbours(padded_x, padded_i, pattern),
+        strength=strongest / table.volume_A3[phases] ** 2,
+        complete=np.log(table.complete_to_A[phases]),
+    )
+
+
+def _merge_neighbours(x: Floats, intensity: Floats, pattern: Pattern) -> Floats:
+    """Give each line the intensity of the weaker ones within the resolution; zero those."""
+    finite = np.where(np.isfinite(x), x, 0.0)
+    nearest = np.clip(np.searchsorted(pattern.x, finite), 0, len(pattern) - 1)
+    reach = np.maximum(pattern.resolution[nearest], 1e-4)
+    visible = intensity.copy()
+    # strongest first, so a line is absorbed by the first stronger one that is close enough
+    for j in range(1, x.shape[1]):
+        with np.errstate(invalid="ignore"):
+            close = (np.abs(x[:, :j] - x[:, j : j + 1]) < reach[:, j : j + 1]) & (
+                visible[:, :j] > 0
+            )
+        absorbed = close.any(axis=1) & (intensity[:, j] > 0)
+        into = np.argmax(close, axis=1)
+        visible[absorbed, into[absorbed]] += visible[absorbed, j]
+        visible[absorbed, j] = 0.0
+    return visible

@@ -1,0 +1,273 @@
+"""The search for sets of phases: singles, then what explains their leftovers, then exchanges.
+
+Every set is judged by the full likelihood; the quick scan only proposes. No ring is taken away from
+later phases: a ring already explained may be shared, it is just no longer worth as much.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, field
+from math import lgamma, log
+
+import numpy as np
+from numpy.typing import NDArray
+
+from phaseid.matching.candidates import best_shift, make_ruler, scan
+from phaseid.matching.likelihood import Fit, Looseness, Model, evaluate
+from phaseid.matching.patterns import Floats
+from phaseid.matching.settings import (
+    PHASE_COUNT_PRIOR,
+    RELATIVE_INTENSITY,
+    RELATIVE_JITTER,
+    RELATIVE_STRAIN,
+    STRAIN,
+    UNLISTED_PRIOR,
+)
+
+Members = tuple[int, ...]
+
+_SINGLES = 240
+_BASES = {1: 24, 2: 14, 3: 8}
+_ADDITIONS = {1: 40, 2: 30, 3: 20}
+_EXCHANGED = 6
+_EXCHANGE_WIDTH = 40
+_BATCH_CELLS = 150_000
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Judged:
+    """One set of phases, judged. `log_posterior` is unnormalised; `offset` (k, K)."""
+
+    members: Members
+    log_likelihood: float
+    log_posterior: float
+    offset: Floats
+
+
+@dataclass(frozen=True, slots=True)
+class Loosened:
+    """A set in which member `which` is only an unlisted relative of its phase.
+
+    Its lengths are longer than listed by `strain` ± `strain_sigma` (relative).
+    """
+
+    members: Members
+    which: int
+    log_likelihood: float
+    strain: float
+    strain_sigma: float
+
+
+@dataclass(slots=True)
+class Search:
+    """State of one search over the candidate phases of `model`.
+
+    `log_prior` (c,) is ln of each phase's share of the prior, summing to one over the candidates.
+    `accepts` says whether a set of candidates may be an answer (required elements); sets it refuses
+    are still built upon.
+    """
+
+    model: Model
+    log_prior: Floats
+    max_phases: int
+    accepts: Callable[[Members], bool] = field(default=lambda members: True)
+    judged: dict[Members, Judged] = field(default_factory=dict)
+
+    def run(self) -> list[Judged]:
+        """Search, and return every judged set, best first."""
+        self._singles()
+        for size in range(1, self.max_phases):
+            self._extend(size)
+        self._exchange()
+        return self.ranked()
+
+    def ranked(self) -> list[Judged]:
+        """Every judged set, best first; ties by members."""
+        return sorted(self.judged.values(), key=lambda j: (-j.log_posterior, j.members))
+
+    def prior_of(self, members: Members) -> float:
+        """ln prior of exactly these listed phases."""
+        k = len(members)
+        total = log(PHASE_COUNT_PRIOR[k - 1]) + log(1.0 - UNLISTED_PRIOR) + lgamma(k + 1.0)
+        return total + float(self.log_prior[list(members)].sum())
+
+    def spread(self, pattern_index: int, strain: float) -> float:
+        """One-sigma of the shift of a phase in one pattern: scale and strain together."""
+        return float(np.hypot(self.model.patterns[pattern_index].probe.scale_sigma, strain))
+
+    def judge(self, proposals: Iterable[tuple[Members, Floats]]) -> None:
+        """Evaluate sets not judged before; all of one size. Offsets are (k, K)."""
+        fresh: dict[Members, Floats] = {}
+        for members, offset in proposals:
+            order = np.argsort(members, kind="stable")
+            key = tuple(members[i] for i in order)
+            if key not in self.judged and key not in fresh and len(set(key)) == len(key):
+                fresh[key] = offset[order]
+        if not fresh:
+            return
+        keys = list(fresh)
+        offsets = np.stack([fresh[key] for key in keys])
+        sets = np.array(keys, dtype=np.int64)
+        for part, fit in evaluate_in_batches(self.model, sets, offsets):
+            for row, index in enumerate(part):
+                value = float(fit.log_likelihood[row])
+                self.judged[keys[index]] = Judged(
+                    keys[index], value, value + self.prior_of(keys[index]), fit.offset[row]
+                )
+
+    def _singles(self) -> None:
+        total: Floats = np.zeros(len(self.log_prior))
+        shifts = []
+        for i, (pattern, lines) in enumerate(
+            zip(self.model.patterns, self.model.lines, strict=True)
+        ):
+            reach = max(3.5 * self.spread(i, STRAIN), 0.004)
+            ruler = make_ruler(pattern, centre=0.0, reach=reach)
+            score, shift = best_shift(scan(lines, pattern, ruler), ruler.u, self.spread(i, STRAIN))
+            total = total + score
+            shifts.append(shift)
+        best = _top(total + self.log_prior, _SINGLES)
+        offsets = np.stack(shifts, axis=1)
+        self.judge(((int(c),), offsets[c : c + 1]) for c in best)
+
+    def _extend(self, size: int) -> None:
+        bases = [j for j in self.ranked() if len(j.members) == size][: _BASES[size]]
+        self.judge(
+            proposal for base in bases for proposal in self._additions(base, _ADDITIONS[size])
+        )
+
+    def _exchange(self) -> None:
+        """Replace one phase of each of the best mixtures by what else explains its rings."""
+        done: set[Members] = set()
+        for _ in range(2):
+            best = [j for j in self.ranked()[:_EXCHANGED] if len(j.members) > 1]
+            proposals: dict[int, list[tuple[Members, Floats]]] = {}
+            for mixture in best:
+                if mixture.members in done:
+                    continue
+                done.add(mixture.members)
+                for out in range(len(mixture.members)):
+                    rest = mixture.members[:out] + mixture.members[out + 1 :]
+                    base = self.judged.get(rest)
+                    if base is None:
+                        keep = [i for i in range(len(mixture.members)) if i != out]
+                        self.judge([(rest, mixture.offset[keep])])
+                        base = self.judged[rest]
+                    proposals.setdefault(len(mixture.members), []).extend(
+                        self._additions(base, _EXCHANGE_WIDTH)
+                    )
+            for group in proposals.values():
+                self.judge(group)
+
+    def _additions(self, base: Judged, count: int) -> list[tuple[Members, Floats]]:
+        """Sets made of `base` and one more phase that may explain what it leaves."""
+        members = np.array([base.members], dtype=np.int64)
+        fit = evaluate(self.model, members, base.offset[None])
+        total: Floats = np.zeros(len(self.log_prior))
+        shifts = []
+        wanted_any = False
+        for i, (pattern, lines) in enumerate(
+            zip(self.model.patterns, self.model.lines, strict=True)
+        ):
+            wanted = ~fit.patterns[i].claimed[0]
+            wanted_any = wanted_any or bool(wanted.any())
+            centre = float(fit.scale[0, i])
+            spread = float(np.hypot(fit.scale_sd[0, i], 1.5 * STRAIN))
+            ruler = make_ruler(pattern, centre=centre, reach=3.0 * spread, wanted=wanted)
+            known = wanted & np.isfinite(pattern.intensity_sd)
+            strongest = float(pattern.ln_intensity[known].max()) if known.any() else 0.0
+            score, shift = best_shift(
+                scan(lines, pattern, ruler, strongest), ruler.u, spread, centre
+            )
+            total = total + score
+            shifts.append(shift)
+        if not wanted_any:
+            return []
+        offsets = np.stack(shifts, axis=1)
+        best = _top(total + self.log_prior, count)
+        return [
+            ((*base.members, int(c)), np.vstack([base.offset, offsets[c : c + 1]]))
+            for c in best
+            if int(c) not in base.members
+        ]
+
+    def accepted(self) -> list[Judged]:
+        """Every judged set that may be an answer, best first."""
+        return [j for j in self.ranked() if self.accepts(j.members)]
+
+    def relatives(self, sets: list[Judged]) -> list[Loosened]:
+        """Unlisted relatives of members of `sets`.
+
+        Each member of each set in turn is let loose: another cell of the same structure type.
+        """
+        found = []
+        by_size: dict[int, list[tuple[Judged, int]]] = {}
+        for judged in sets:
+            for which in range(len(judged.members)):
+                by_size.setdefault(len(judged.members), []).append((judged, which))
+        for _, items in sorted(by_size.items()):
+            members = np.array([judged.members for judged, _ in items], dtype=np.int64)
+            offsets = np.stack([judged.offset for judged, _ in items])
+            loose = relaxed(members, np.array([w for _, w in items]))
+            for part, fit in evaluate_in_batches(self.model, members, offsets, loose):
+                for row, index in enumerate(part):
+                    judged, loosened = items[index]
+                    found.append(
+                        Loosened(
+                            members=judged.members,
+                            which=loosened,
+                            log_likelihood=float(fit.log_likelihood[row]),
+                            strain=float(fit.strain[row, loosened]),
+                            strain_sigma=float(fit.strain_sd[row, loosened]),
+                        )
+                    )
+        return found
+
+    def distant_relatives(self, count: int) -> list[Judged]:
+        """Single phases whose pattern fits at a shift the scale does not allow, to start from."""
+        total: Floats = np.zeros(len(self.log_prior))
+        shifts = []
+        for i, (pattern, lines) in enumerate(
+            zip(self.model.patterns, self.model.lines, strict=True)
+        ):
+            spread = self.spread(i, RELATIVE_STRAIN)
+            ruler = make_ruler(pattern, centre=0.0, reach=2.5 * spread)
+            score, shift = best_shift(scan(lines, pattern, ruler), ruler.u, spread)
+            total = total + score
+            shifts.append(shift)
+        offsets = np.stack(shifts, axis=1)
+        return [
+            Judged((int(c),), 0.0, 0.0, offsets[c : c + 1])
+            for c in _top(total + self.log_prior, count)
+        ]
+
+
+def relaxed(members: NDArray[np.int64], which: NDArray[np.int64]) -> Looseness:
+    """Looseness of sets (b, k) of which member `which` (b,) is only an unlisted relative."""
+    loose = Looseness.listed((members.shape[0], members.shape[1]))
+    rows = np.arange(len(members))
+    loose.strain[rows, which] = RELATIVE_STRAIN
+    loose.jitter[rows, which] = RELATIVE_JITTER
+    loose.spread[rows, which] = RELATIVE_INTENSITY
+    return loose
+
+
+def evaluate_in_batches(
+    model: Model, members: NDArray[np.int64], offsets: Floats, loose: Looseness | None = None
+) -> Iterable[tuple[NDArray[np.int64], Fit]]:
+    """Yield (row indices, Fit) for parts of the batch small enough to stay in cache."""
+    cells = max(lines.x.shape[1] for lines in model.lines) * max(members.shape[1], 1)
+    size = max(1, _BATCH_CELLS // cells)
+    for start in range(0, len(members), size):
+        part = np.arange(start, min(start + size, len(members)))
+        chosen = None
+        if loose is not None:
+            chosen = Looseness(loose.strain[part], loose.jitter[part], loose.spread[part])
+        yield part, evaluate(model, members[part], offsets[part], chosen)
+
+
+def _top(score: Floats, count: int) -> NDArray[np.int64]:
+    """Indices of the best `count`, best first; equal scores in order of index."""
+    order = np.argsort(-score, kind="stable")
+    return order[:count]

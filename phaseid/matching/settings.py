@@ -1,0 +1,78 @@
+"""The numbers of the statistical model, in one place. Relative quantities are natural logarithms.
+
+Where no source is named, the value is common practice in the trade or was set on simulated patterns
+with seeds other than those of the reported benchmark.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from phaseid.probes.probe import Kind
+
+
+@dataclass(frozen=True, slots=True)
+class Scatter:
+    """How far intensities and lines of one kind of probe stray from the kinematic calculation.
+
+    `intensity` is the one-sigma of ln(I_measured / I_calculated) of an ordinary ring,
+    `odd_intensity` that of the share `odd_share` of rings that stray far (texture, dynamical
+    effects, overlap). `lost` is the chance that a line well above the detection limit is not in the
+    list all the same. `resolution_two_theta_deg` is the separation at which two lines merge
+    (X-rays, neutrons); `resolution` the same as a relative separation of d (electrons).
+    """
+
+    intensity: float
+    odd_intensity: float
+    odd_share: float
+    lost: float
+    resolution_two_theta_deg: float
+    resolution: float
+
+
+SCATTER: dict[Kind, Scatter] = {
+    # X-rays: |ln I/Icalc| of published sheets, median 0.11, 95 % 0.47
+    "x-ray": Scatter(0.20, 0.70, 0.12, 0.03, 0.14, 0.002),
+    "neutron": Scatter(0.20, 0.70, 0.12, 0.03, 0.25, 0.004),
+    # electrons: good to a factor of about two (common practice, no source)
+    "electron": Scatter(0.45, 1.20, 0.15, 0.06, 0.0, 0.008),
+}
+
+STRAIN = 0.0015
+"""One-sigma of the isotropic strain, alloying or warmth of a listed phase (relative, on d)."""
+
+RELATIVE_STRAIN = 0.02
+"""The same for an unlisted relative: a phase of the listed structure type with another cell."""
+RELATIVE_JITTER = 0.0025
+"""Line-by-line scatter of the relative's positions where its cell has more than one free length."""
+RELATIVE_INTENSITY = 0.35
+"""Extra scatter of ln intensity of an unlisted relative: other atoms on the same sites."""
+RELATIVE_PRIOR = 0.15
+"""How many unlisted relatives there are for each listed phase."""
+
+ZERO_SHIFT_DEG = 0.02
+DISPLACEMENT_DEG = 0.04
+"""One-sigma of the zero shift and of the specimen displacement's shift (× cos θ), degrees of two-
+theta."""
+
+SIGMA_INFLATION = ((1.0, 0.5), (1.6, 0.3), (2.5, 0.2))
+"""(factor, prior): stated sigmas are often too small; marginalised per pattern."""
+ODD_POSITION_FACTOR = 3.5
+ODD_POSITION_SHARE = 0.04
+"""A ring read this many times worse than its sigma, and how often that happens."""
+
+DETECTION_SLOPE = 2.6
+"""Slope of the logistic chance of seeing a line against ln(intensity / limit)."""
+
+FOREIGN_RINGS = 0.4
+"""Expected number of rings from nowhere in a pattern (Poisson)."""
+
+AMPLITUDE_WIDTH = 4.0
+"""Width of the flat prior on ln(amplitude) of each phase."""
+
+PHASE_COUNT_PRIOR = (0.56, 0.27, 0.12, 0.05)
+"""Prior of one, two, three, four listed phases."""
+UNLISTED_PRIOR = 0.15
+"""Prior that an unlisted phase is in the specimen, alone or beside listed ones."""
+UNLISTED_RING_COUNT = 12.0
+"""Mean number of rings of an unlisted phase (geometric)."""
