@@ -30,7 +30,7 @@ def parse_relative(text: str, what: str = "scale uncertainty") -> float:
 def check_relative(value: float, what: str = "scale uncertainty") -> float:
     """A relative one-sigma that makes sense, at least 1e-5; raises InputError otherwise."""
     if not isfinite(value) or value < 0:
-        raise InputError(f"the {what} is {value:g}", remedy="Give a positive fraction or percent.")
+        raise InputError(f"the {what} is {value:g}", remedy="Write it as '1 %' or '0.01'.")
     if value > 0.2:
         raise InputError(
             f"the {what} of {100 * value:g} % is too large to compare spacings at all",

@@ -325,6 +325,7 @@ def _wavelength(words: _Words, kind: Kind) -> tuple[float, str]:
         words.complain("a wavelength, energy or voltage must be above zero")
     if unit in ("nm", "pm", "a", "å") or unit.startswith("angstrom"):
         number *= {"nm": units.A_PER_NM, "pm": units.A_PER_PM}.get(unit, 1.0)
+        number = float(f"{number:.12g}")  # 0.154 nm is 1.54 Å, not 1.5399999999999998
         return number, f"{plain_number(number)} Å"
     volts = unit in ("kv", "mv", "v") or unit.startswith("volt")
     if kind == "neutron":

@@ -263,7 +263,7 @@ def _columns(names: list[str], source: str, line: int, remarks: list[str]) -> li
         hint = f"Did you mean {nearest}? " if nearest else ""
         shown = ", ".join(f"'{name}'" for name in names[:8])
         raise refuse(f"no position column among {shown}", f"{hint}{choices}")
-    suffix = _canonical(positions[0].partition("_")[2])
+    suffix = _canonical(positions[0].rpartition("_")[2])
     for index, name in enumerate(names):
         if found[index] or not name:
             continue
