@@ -256,7 +256,8 @@ class _PatternWork:
     def unshifted(self, offset: Floats, correction: Floats) -> Floats:
         """(b, m) measured minus calculated position at zero scale, strain and angle errors."""
         predicted = np.einsum("bkm,bkm->bm", self.share, self.centre)
-        return np.einsum("bkm,bk->bm", self.share, offset) + correction - predicted
+        result: Floats = np.einsum("bkm,bk->bm", self.share, offset) + correction - predicted
+        return result
 
     def decide(self, residual: Floats) -> None:
         """Give each ring to the phases or to nowhere, whichever is the likelier."""
