@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import doctest
 import json
 from pathlib import Path
 from typing import Any
@@ -135,3 +136,8 @@ def test_ring_radii_stand_in_the_ratios_of_the_lattice(lattice: str, sums: list[
     d = 4.05 / np.sqrt(np.array(sums, dtype=float))
     radius = units.radius_from_d(d, 25.1)
     assert radius / radius[0] == pytest.approx(RULES[f"{lattice} ring radii ratio"], abs=6e-5)
+
+
+def test_worked_examples_in_the_docstrings() -> None:
+    failed, tried = doctest.testmod(units)
+    assert (failed, tried > 0) == (0, True)

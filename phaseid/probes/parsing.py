@@ -104,7 +104,7 @@ _MONOCHROMATOR = re.compile(
 )
 _POLARISATION = re.compile(rf"polari[sz](?:ation|ed)\s*(?:fraction)?\s*{NUMBER}\s*(%)?")
 _ANODE = re.compile(
-    r"\b([a-z]{1,2})[\s-]*k[\s-]*(alpha|beta|a|b|α|β)[\s-]*_?([123](?:\s*[,+/&]\s*[123])?)?(?!\w)"
+    r"\b([a-z]{1,2})[\s-]*k[\s_-]*(alpha|beta|a|b|α|β)[\s-]*_?([123](?:\s*[,+/&]\s*[123])?)?(?!\w)"
 )
 _FILTER = re.compile(r"\b(ni|fe|mn|v|zr|pd|rh)[\s-]*filter(?:ed)?\b")
 _TUBE_SETTING = re.compile(rf"{NUMBER}\s*(?:kv|ma|kw)\b")

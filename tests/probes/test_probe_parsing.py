@@ -60,6 +60,7 @@ def test_anode_lines_agree_with_xraydb(anode: str) -> None:
         ("x-ray Cu Ka", 1.541871, "x-ray Cu Kα", "bragg-brentano"),
         ("x-ray CuKa", 1.541871, "x-ray Cu Kα", "bragg-brentano"),
         ("X-rays, Cu K-alpha", 1.541871, "x-ray Cu Kα", "bragg-brentano"),
+        ("X-ray: Cu K_alpha_1", 1.5405929, "x-ray Cu Kα1", "bragg-brentano"),
         ("Cu Kα1,2", 1.541871, "x-ray Cu Kα", "bragg-brentano"),
         ("x ray Cu tube", 1.541871, "x-ray Cu Kα", "bragg-brentano"),
         ("XRD Ni-filtered Cu Ka, 40 kV 40 mA", 1.541871, "x-ray Cu Kα", "bragg-brentano"),
