@@ -234,7 +234,7 @@ def _canonical(name: str) -> str:
 
 
 def _columns(names: list[str], source: str, line: int, remarks: list[str]) -> list[str]:
-    """The contract's names of the header's columns, "" for one that is not used."""
+    """The format's names for the header's columns, "" for one that is not used."""
     known = {_canonical(name): name for name in (*COLUMNS, *OPTIONAL_COLUMNS)}
     found = [known.get(_canonical(name), "") for name in names]
     positions = [name for name in found if name in COLUMNS]
