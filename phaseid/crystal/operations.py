@@ -62,8 +62,8 @@ class Operations:
 
     @property
     def ranks(self) -> Floats:
-        """(3, n): hkl @ ranks gives the rank of each equivalent of hkl (up to sign)."""
-        return (self.rotations @ _RANKING).T
+        """(n, 3): the product with hkl is the rank of each equivalent of hkl (up to sign)."""
+        return np.asarray(self.rotations @ _RANKING)
 
 
 @lru_cache(maxsize=2048)

@@ -94,5 +94,5 @@ def _steps(fract: Floats, operations: Operations, tensor: Floats) -> tuple[Float
     signs = [images, -images] if operations.centrosymmetric else [images]
     steps = (np.stack(signs) - fract[:, None, :]) @ operations.to_primitive.T
     steps -= np.rint(steps)
-    length2 = ((steps @ tensor) * steps).sum(axis=-1)
+    length2 = np.einsum("...i,ij,...j->...", steps, tensor, steps)
     return steps, np.sqrt(np.maximum(length2, 0.0))

@@ -98,22 +98,16 @@ def _enumerate(
     for wall in domain.walls:
         inside = hkl @ wall >= 0
         hkl, inverse_d2 = hkl[inside], inverse_d2[inside]
-    ranks = hkl @ domain.ranks
-    own = ranks[:, [domain.identity]]
+    ranks = domain.ranks @ hkl.T
+    own = ranks[domain.identity]
     size = np.abs(ranks)
-    first = (own >= size).all(axis=1)
-    alike = (size == own)[first]
-    hkl, inverse_d2 = hkl[first], inverse_d2[first]
-    stabiliser = alike.sum(axis=1)
-    absent = _absent(hkl, alike, ranks[first], operations)
-    order = np.argsort(inverse_d2[~absent], kind="stable")
-    multiplicity = 2 * len(operations.rotations) // stabiliser
-    return Reflections(
-        hkl[~absent][order],
-        inverse_d2[~absent][order],
-        multiplicity[~absent][order],
-        d_min_A,
-    )
+    first = np.flatnonzero((own >= size).all(axis=0))
+    hkl, inverse_d2, ranks = hkl[first], inverse_d2[first], ranks[:, first]
+    alike = size[:, first] == own[first]
+    multiplicity = 2 * len(operations.rotations) // alike.sum(axis=0)
+    present = np.flatnonzero(~_absent(hkl, alike, ranks, operations))
+    order = present[np.argsort(inverse_d2[present], kind="stable")]
+    return Reflections(hkl[order], inverse_d2[order], multiplicity[order], d_min_A)
 
 
 def _points(
@@ -155,18 +149,18 @@ def _absent(
     gliding = _domain(operations).gliding
     if not len(gliding):
         return np.zeros(len(hkl), dtype=bool)
-    held = alike[:, gliding]
+    held = alike[gliding]
     if not operations.centrosymmetric:  # the opposite of hkl is another reflection
-        held = held & (ranks[:, gliding] > 0)
-    phase = hkl @ operations.translations[gliding].T
-    return np.asarray((held & (np.abs(phase - np.rint(phase)) > _INTEGER)).any(axis=1))
+        held = held & (ranks[gliding] > 0)
+    phase = operations.translations[gliding] @ hkl.T
+    return np.asarray((held & (np.abs(phase - np.rint(phase)) > _INTEGER)).any(axis=0))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Domain:
     """Where the first-ranked reflection of each set lies."""
 
-    ranks: Floats  # (3, n)
+    ranks: Floats  # (n, 3)
     identity: int
     walls: tuple[Floats, ...]
     nonnegative: tuple[bool, ...]
@@ -177,8 +171,8 @@ class _Domain:
 def _domain(operations: Operations) -> _Domain:
     ranks = operations.ranks
     identity = int(np.argmax([np.array_equal(r, np.eye(3)) for r in operations.rotations]))
-    own = ranks[:, identity]
-    walls = np.concatenate([own - ranks.T, own + ranks.T])
+    own = ranks[identity]
+    walls = np.concatenate([own - ranks, own + ranks])
     nonnegative = tuple(
         bool(np.any((walls[:, i] > 0) & (np.count_nonzero(walls, axis=1) == 1))) for i in range(3)
     )

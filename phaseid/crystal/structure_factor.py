@@ -70,7 +70,8 @@ def squared_amplitudes(
 
 def _intensity(sums: Floats, amplitude: Floats) -> Floats:
     """Sum (2 or 1, n, e) of waves times amplitude (n, e) or (e,), squared: shape (n,)."""
-    return np.asarray(((sums * amplitude).sum(axis=2) ** 2).sum(axis=0))
+    waves = np.einsum("xne,ne->xn", sums, np.broadcast_to(amplitude, sums.shape[1:]))
+    return np.asarray((waves * waves).sum(axis=0))
 
 
 def _geometric_sums(
@@ -106,7 +107,8 @@ def _geometric_sums(
         hkl = reflections.hkl[part]
         turns = hkl @ images.fract.T
         turns -= np.rint(turns)
-        phase = (turns * (2 * math.pi)).astype(np.float32)
+        phase = np.empty(turns.shape, dtype=np.float32)
+        np.multiply(turns, 2 * math.pi, out=phase, casting="same_kind")
         swing = None
         if own is not None:
             swing = np.exp((quadratic_terms(hkl) @ own).astype(np.float32))

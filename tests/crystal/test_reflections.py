@@ -38,7 +38,7 @@ def triplets(group: gemmi.SpaceGroup) -> tuple[str, ...]:
 
 
 def test_every_tabulated_setting_has_the_reflections_that_gemmi_finds() -> None:
-    """gemmi's reflection list, absences, epsilon and centric flags, all 564 settings of its table."""
+    """gemmi's reflection list, absences, epsilon, centric flags; 564 settings of its table."""
     for group in gemmi.spacegroup_table():
         cell = cell_for(group)
         found = unique_reflections(cell, read_operations(triplets(group)), 1.21)
@@ -182,7 +182,7 @@ def test_the_smallest_d_must_be_a_positive_number(d_min_A: float) -> None:
 
 
 def test_double_diffraction_shows_200_of_silicon_and_001_of_hexagonal_metals() -> None:
-    """Hirsch et al. 1965, Electron Microscopy of Thin Crystals (memory): forbidden lines that appear."""
+    """Hirsch et al. 1965, Electron Microscopy of Thin Crystals (from memory)."""
     silicon = prototype("diamond", ("Si",), (5.4309, 5.4309, 5.4309, 90, 90, 90))
     hkl, d_A = multiple_scattering_lines(silicon, 1.2)
     assert [tuple(h) for h in hkl.tolist()] == [(2, 0, 0), (4, 2, 0)]
