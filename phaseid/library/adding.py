@@ -41,7 +41,13 @@ def work(found: Found) -> Outcome:
         return Outcome(found.location, rejects=(found,))
     if found.known:
         return Outcome(found.location, file=found)
-    reading = read_cif(found.data, found.file)
+    try:
+        reading = read_cif(found.data, found.file)
+    except Exception as error:  # whatever a file holds, the next one must have its turn
+        reason = f"the file cannot be read ({type(error).__name__}: {error})"
+        return Outcome(
+            found.location, rejects=(Rejected(found.location, found.file, "", "failed", reason),)
+        )
     rejects = [
         Rejected(found.location, found.file, reject.block, reject.code, reject.reason)
         for reject in reading.rejects

@@ -11,6 +11,7 @@ import gzip
 import json
 import re
 import tomllib
+import warnings
 from collections import Counter
 from collections.abc import Iterator
 from dataclasses import dataclass
@@ -77,6 +78,8 @@ def prototype_crystals() -> Iterator[Crystal]:
 
 def read_reviews(path: Path) -> dict[int, Review]:
     """Return the decisions by position in pymatgen's file."""
+    if not path.exists():
+        return {}
     with path.open("rb") as file:
         held = tomllib.load(file)["entry"]
     return {
@@ -158,8 +161,11 @@ def _standardised(
 
     from phaseid.crystal.hermann_mauguin import short_symbol
 
-    found: Any = spglib.get_symmetry_dataset((lattice, positions, kinds), symprec=_TOLERANCE_A)
-    group: Any = spglib.get_symmetry_from_database(found.hall_number)
+    with warnings.catch_warnings():
+        # spglib 2.8 announces another way of reporting errors at every call
+        warnings.simplefilter("ignore", DeprecationWarning)
+        found: Any = spglib.get_symmetry_dataset((lattice, positions, kinds), _TOLERANCE_A)
+        group: Any = spglib.get_symmetry_from_database(found.hall_number)
     operations = gemmi.symops_from_hall(found.hall)
     named = gemmi.find_spacegroup_by_ops(operations)
     return _Standard(
