@@ -13,8 +13,10 @@ from phaseid.crystal.crystal import Finding, Site
 from phaseid.crystal.elements import species
 from phaseid.crystal.metric import Cell, metric_tensor
 
+_MAX_LABEL = 60
 MAX_SITES = 20_000
 _EIGHT_PI_SQUARED = 8 * math.pi**2
+_MEDIAN_U_A2 = 0.2  # beyond it a column of U holds B = 8π²U (common practice, no source)
 _MAX_U_A2 = 1.0  # a root-mean-square displacement of 1 Å is no crystal's
 _AXES = ("_atom_site_fract_x", "_atom_site_fract_y", "_atom_site_fract_z")
 _UNKNOWN = ("?", ".", "")
@@ -48,23 +50,23 @@ def read_sites(block: Block, cell: Cell, formula: frozenset[str]) -> ReadSites |
 
     `formula` holds the elements of the stated formula, to interpret labels with; empty if none.
     """
-    columns = [block.column(axis) for axis in _AXES]
-    rows = len(columns[0])
+    rows = block.rows(_AXES[0])
     if rows > MAX_SITES:
         return SiteProblem(
             "too_many_sites", f"{rows} sites are listed; at most {MAX_SITES} are read"
         )
+    columns = [block.column(axis) for axis in _AXES]
     if any(len(column) != rows for column in columns) or rows == 0:
         return SiteProblem("no_coordinates", "the atom list has no complete x, y, z columns")
-    labels = _padded(block.strings("_atom_site_label"), rows)
-    types = _padded(block.strings("_atom_site_type_symbol"), rows)
+    labels = [text[:_MAX_LABEL] for text in _padded(block.strings("_atom_site_label"), rows)]
+    types = [text[:_MAX_LABEL] for text in _padded(block.strings("_atom_site_type_symbol"), rows)]
     flags = _padded(block.column("_atom_site_calc_flag"), rows)
     occupancies = block.column("_atom_site_occupancy") or None
-    u_iso = _isotropic(block, rows)
     u_aniso = _anisotropic(block, cell)
     sites: list[Site] = []
     unknown: list[Site] = []
     notes = _Notes()
+    u_iso = _isotropic(block, rows, notes)
     as_number = gemmi.cif.as_number
     for row in range(rows):
         label = labels[row]
@@ -85,7 +87,7 @@ def read_sites(block: Block, cell: Cell, formula: frozenset[str]) -> ReadSites |
             if None in parsed:
                 bad = raw[parsed.index(None)]
                 return SiteProblem(
-                    "bad_coordinates", f"site {label}: the coordinate {bad!r} is no number"
+                    "bad_coordinates", f"site {label}: the coordinate {bad[:40]!r} is no number"
                 )
             x, y, z = (value for value in parsed if value is not None)
             notes.add("fraction", label)
@@ -103,7 +105,8 @@ def read_sites(block: Block, cell: Cell, formula: frozenset[str]) -> ReadSites |
                 parsed_occupancy = parse_number(gemmi.cif.as_string(raw_occupancy))
                 if parsed_occupancy is None and raw_occupancy not in _UNKNOWN:
                     return SiteProblem(
-                        "bad_occupancy", f"site {label}: occupancy {raw_occupancy!r} is no number"
+                        "bad_occupancy",
+                        f"site {label}: occupancy {raw_occupancy[:40]!r} is no number",
                     )
                 occupancy = 1.0 if parsed_occupancy is None else parsed_occupancy
                 notes.add("occupancy_default", label)
@@ -149,6 +152,7 @@ _SENTENCES = {
     "zero_occupancy": ("zero_occupancy", "sites of no or negative occupancy are left out: {}"),
     "water": ("water_label", "water and hydroxyl labels are read as oxygen, hydrogen left out: {}"),
     "label": ("unknown_element", "the element is taken from an unusual label: {}"),
+    "b_as_u": ("displacement_as_b", "U_iso values this large are read as B_iso = 8π²U: {}"),
     "displacement": ("bad_displacement", "displacements below 0 or above 1 Å² are ignored: {}"),
 }
 
@@ -162,14 +166,14 @@ def _judged(
     if unlocated:
         return SiteProblem(
             "incomplete_coordinates",
-            f"{_listed(unlocated)}: no coordinates for atoms other than hydrogen; the lines would be "
-            "wrong",
+            f"{_listed(unlocated)}: no coordinates for atoms other than hydrogen; the lines would "
+            "be wrong",
         )
     numeric = sum(parse_number(site.label) is not None for site in unknown)
     if numeric:
         return SiteProblem(
             "bad_coordinates",
-            f"{numeric} of {rows} atom labels are numbers: the columns of the atom list are shifted",
+            f"{numeric} of {rows} atom labels are numbers: the columns are shifted",
         )
     return ReadSites(sites, unknown, notes.findings())
 
@@ -184,7 +188,7 @@ def _padded(column: list[str], rows: int) -> list[str]:
     return column if len(column) == rows else [""] * rows
 
 
-def _isotropic(block: Block, rows: int) -> list[float | None]:
+def _isotropic(block: Block, rows: int, notes: _Notes) -> list[float | None]:
     """Return U_iso in Å² by row; B_iso is turned into U = B / 8π²."""
     for tag, factor in (
         ("_atom_site_u_iso_or_equiv", 1.0),
@@ -193,6 +197,10 @@ def _isotropic(block: Block, rows: int) -> list[float | None]:
         column = block.column(tag)
         if len(column) == rows:
             values = [gemmi.cif.as_number(raw) for raw in column]
+            given = sorted(value for value in values if math.isfinite(value))
+            if factor == 1.0 and given and given[len(given) // 2] > _MEDIAN_U_A2:
+                notes.add("b_as_u", f"{given[len(given) // 2]:g} Å² in the median")
+                factor = 1 / _EIGHT_PI_SQUARED
             return [value * factor if math.isfinite(value) else None for value in values]
     return [None] * rows
 
@@ -234,7 +242,10 @@ def _reciprocal_squares(cell: Cell) -> list[float]:
 
 
 def _equivalent(tensor: tuple[float, float, float, float, float, float], cell: Cell) -> float:
-    """Return U_eq = 1/3 Σ U_ij a*_i a*_j a_i·a_j, Å² (Fischer & Tillmanns 1988, Acta Cryst. C44, 775)."""
+    """Return U_eq = 1/3 Σ U_ij a*_i a*_j a_i·a_j in Å².
+
+    Fischer & Tillmanns (1988), Acta Cryst. C44, 775.
+    """
     metric = metric_tensor(cell)
     star = [math.sqrt(x) for x in _reciprocal_squares(cell)]
     u11, u22, u33, u12, u13, u23 = tensor

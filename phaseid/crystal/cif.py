@@ -17,11 +17,23 @@ from phaseid.crystal.elements import parse_formula
 from phaseid.crystal.metric import Cell, volume_A3
 from phaseid.crystal.provenance import conditions, phase_name, source
 from phaseid.crystal.structure import Stated, StructureProblem, build
-from phaseid.crystal.symmetry import SymmetryItems, SymmetryProblem, symmetry_candidates
+from phaseid.crystal.symmetry import (
+    MAX_OPERATIONS,
+    SymmetryItems,
+    SymmetryProblem,
+    symmetry_candidates,
+)
 from phaseid.errors import InputError
 
 _LENGTHS = ("_cell_length_a", "_cell_length_b", "_cell_length_c")
 _ANGLES = ("_cell_angle_alpha", "_cell_angle_beta", "_cell_angle_gamma")
+_TRIPLET_TAGS = (
+    "_space_group_symop_operation_xyz",
+    "_symmetry_equiv_pos_as_xyz",
+    "_space_group_symop.operation_xyz",
+)
+_MAX_SYMBOL = 100
+_MAX_FORMULA = 2000
 _LENGTH_RANGE_A = (1.0, 1000.0)
 _ANGLE_RANGE_DEG = (5.0, 175.0)
 _SUPERSPACE = (
@@ -34,7 +46,7 @@ _SUPERSPACE = (
 
 @dataclass(frozen=True, slots=True)
 class Reject:
-    """A block, or a whole file (`block` ""), that cannot be used: a short code, a reason in words."""
+    """A block, or a whole file (`block` ""), that cannot be used: a code, a reason in words."""
 
     code: str
     reason: str
@@ -93,10 +105,12 @@ def read_cif_file(path: str | Path) -> CifReading:
 def _read_block(block: Block, file: str, findings: tuple[Finding, ...]) -> Crystal:
     _refuse_other_kinds(block)
     formula_text = block.text("_chemical_formula_sum", "_chemical_formula_moiety")
+    formula_text = formula_text[:_MAX_FORMULA]
     formula = parse_formula(formula_text) if formula_text else None
     if not has_sites(block):
         raise _without_fractions(block)
-    symmetry = symmetry_candidates(_symmetry_items(block))
+    items = _symmetry_items(block)
+    symmetry = symmetry_candidates(items)
     cell, cell_findings = _cell(block)
     sites = read_sites(block, cell, frozenset(formula or ()))
     if isinstance(sites, SiteProblem):
@@ -164,19 +178,27 @@ def _without_fractions(block: Block) -> _Refusal:
 
 
 def _symmetry_items(block: Block) -> SymmetryItems:
-    triplets = block.strings("_space_group_symop_operation_xyz") or block.strings(
-        "_symmetry_equiv_pos_as_xyz"
-    )
-    if not triplets:
-        triplets = block.strings("_space_group_symop.operation_xyz")
+    triplets: list[str] = []
+    for tag in _TRIPLET_TAGS:
+        if block.rows(tag) > MAX_OPERATIONS:
+            raise _Refusal(
+                "bad_symmetry",
+                f"{block.rows(tag)} symmetry operations are listed, at most {MAX_OPERATIONS} are "
+                "possible",
+            )
+        triplets = triplets or block.strings(tag)
+    if any(len(triplet) > _MAX_SYMBOL for triplet in triplets):
+        raise _Refusal("bad_symmetry", "a symmetry operation is absurdly long")
     return SymmetryItems(
         triplets=tuple(t for t in triplets if t not in ("", "?", ".")),
-        hall=block.text("_space_group_name_hall", "_symmetry_space_group_name_hall"),
-        hermann_mauguin=block.text("_space_group_name_h-m_alt", "_symmetry_space_group_name_h-m"),
+        hall=block.text("_space_group_name_hall", "_symmetry_space_group_name_hall")[:_MAX_SYMBOL],
+        hermann_mauguin=block.text("_space_group_name_h-m_alt", "_symmetry_space_group_name_h-m")[
+            :_MAX_SYMBOL
+        ],
         number=block.whole("_space_group_it_number", "_symmetry_int_tables_number"),
         setting=block.text(
             "_space_group_it_coordinate_system_code", "_space_group.it_coordinate_system_code"
-        ),
+        )[:_MAX_SYMBOL],
     )
 
 

@@ -7,8 +7,10 @@ and text before the first data_ line dropped.
 
 from __future__ import annotations
 
+import math
 import re
 from dataclasses import dataclass
+from typing import cast
 
 import gemmi
 
@@ -19,11 +21,8 @@ MAX_BLOCKS = 100_000
 _UTF8_BOM = b"\xef\xbb\xbf"
 _UTF16_BOMS = (b"\xff\xfe", b"\xfe\xff")
 _DATA = re.compile(r"^data_", re.IGNORECASE | re.MULTILINE)
-_EMPTY_LOOP = re.compile(
-    r"^\s*loop_\s*\n(?:\s*_\S+\s*\n)*(?=\s*(?:loop_|_\S+[ \t]+\S|\Z|data_))", re.M
-)
 _NUMBER = re.compile(r"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eE][-+]?\d+)?(?:\(\d+\))?$")
-_FRACTION = re.compile(r"([-+]?\d+)/(\d+)$")
+_FRACTION = re.compile(r"([-+]?\d{1,9})/(\d{1,9})$")
 _PLACE = re.compile(r"^[^:]*:(\d+)(?::(\d+)\(\d+\))?:?\s*")
 
 
@@ -37,10 +36,10 @@ class Block:
         self.name: str = block.name
         self._pairs: dict[str, str] = {}
         self._loops: dict[str, tuple[gemmi.cif.Loop, int]] = {}
+        self._values: dict[int, list[str]] = {}  # of loops read, by identity
         for item in block:
-            pair = item.pair
-            if pair is not None:
-                tag, value = pair
+            if item.pair is not None:
+                tag, value = cast("tuple[str, str]", item.pair)
                 self._pairs.setdefault(tag.lower(), value)
                 continue
             loop = item.loop
@@ -88,8 +87,16 @@ class Block:
         if tag not in self._loops:
             return []
         loop, index = self._loops[tag]
-        width = loop.width()
-        return list(loop.values[index::width])
+        values = self._values.get(id(loop))
+        if values is None:
+            values = self._values[id(loop)] = list(loop.values)
+        return values[index :: loop.width()]
+
+    def rows(self, tag: str) -> int:
+        """Return the number of rows of the loop that holds a tag; 1 for a single item, else 0."""
+        if tag in self._loops:
+            return self._loops[tag][0].length()
+        return int(tag in self._pairs)
 
     def strings(self, tag: str) -> list[str]:
         """Return a loop's column unquoted."""
@@ -107,7 +114,8 @@ class Unreadable:
 def parse_number(text: str) -> float | None:
     """Return a CIF number ("0.707(2)") or a simple fraction ("3/4"); None for anything else."""
     if _NUMBER.match(text):
-        return float(text.partition("(")[0])
+        value = float(text.partition("(")[0])
+        return value if math.isfinite(value) else None
     fraction = _FRACTION.match(text)
     if fraction and int(fraction.group(2)):
         return int(fraction.group(1)) / int(fraction.group(2))
@@ -178,10 +186,34 @@ def _repairs(text: str) -> list[str]:
     if start and start.start() > 0:
         text = text[start.start() :]
         attempts.append(text)
-    emptied = _EMPTY_LOOP.sub("", text)
-    if emptied != text:
-        attempts.append(emptied)
+    full = _without_empty_loops(text)
+    if full is not None:
+        attempts.append(full)
     return attempts
+
+
+def _without_empty_loops(text: str) -> str | None:
+    """Return text without loops that have tags and no values, None if there is no such loop."""
+    kept: list[str] = []
+    header: list[str] = []  # a loop_ line and the tags after it, until a value shows up
+    dropped = False
+    for line in (*text.split("\n"), "data_"):
+        words = line.split()
+        opens = bool(words) and words[0].lower().startswith(("loop_", "data_"))
+        bare_tag = len(words) == 1 and words[0].startswith("_")
+        if header and (not words or bare_tag):
+            header.append(line)
+            continue
+        if header and len(header) > 1 and (opens or (words and words[0].startswith("_"))):
+            dropped = True
+        else:
+            kept += header
+        header = []
+        if len(words) == 1 and words[0].lower() == "loop_":
+            header = [line]
+        else:
+            kept.append(line)
+    return "\n".join(kept[:-1]) if dropped else None
 
 
 def _syntax_finding(message: str) -> Finding:

@@ -15,8 +15,8 @@ import gemmi
 ELEMENTS: frozenset[str] = frozenset(gemmi.Element(z).name for z in range(1, 119))
 _KNOWN = ELEMENTS | {"D"}
 _LETTERS = re.compile(r"[A-Za-z]+")
-_TYPE = re.compile(r"([A-Za-z]{1,2})(?:\d*\.?\d*[+-]|[+-]\d*\.?\d*|0\+?|)$")
-_CHARGE = re.compile(r"(\d*)\.?\d*([+-])(\d*)")
+_TYPE = re.compile(r"([A-Za-z]{1,2})(?:\d{0,2}\.?\d{0,4}[+-]|[+-]\d{0,2}\.?\d{0,4}|0\+?|)$")
+_CHARGE = re.compile(r"(\d{0,2})\.?\d{0,4}([+-])(\d{0,2})")
 _WATER = re.compile(r"(wat|h2o|hoh|ow|aq)", re.IGNORECASE)
 _DUMMY = re.compile(r"(cg|cnt|cent\w*|dum\w*|vac\w*|void|max|min|q)\d*$", re.IGNORECASE)
 _HYDROXYL = re.compile(r"oh", re.IGNORECASE)
@@ -42,9 +42,9 @@ UNKNOWN = Species("")
 
 @lru_cache(maxsize=8192)
 def species(type_symbol: str, label: str, formula: frozenset[str]) -> Species:
-    """Return what a site of this type symbol and label is, `formula` being the elements of the cell.
+    """Return what a site of this type symbol and label is.
 
-    An empty `formula` means that the source states none.
+    `formula` holds the elements of the stated formula, none if the source states none.
     """
     if type_symbol not in ("", "?", "."):
         typed = _from_type(type_symbol)
@@ -57,7 +57,7 @@ def species(type_symbol: str, label: str, formula: frozenset[str]) -> Species:
 
 
 def parse_formula(text: str) -> dict[str, float] | None:
-    """Return the amounts in a formula such as "Al2 O3" or "(Ca.8 Na.2) Si O3"; None if unreadable."""
+    """Return the amounts in a formula such as "(Ca.8 Na.2) Si O3"; None if it is unreadable."""
     stack: list[dict[str, float]] = [{}]
     position = 0
     while position < len(text):

@@ -7,6 +7,7 @@ from functools import lru_cache
 
 import gemmi
 
+_MAX_LENGTH = 80
 _ORIGIN_WORDS = re.compile(r"origin\s*(?:choice|no\.?)?\s*([12])", re.IGNORECASE)
 _REMARK = re.compile(r"\{[^}]*\}|\([^)]*[^)\d][^)]*\)")
 _RING_DIGITS = re.compile(r"\((\d+)\)")
@@ -31,7 +32,7 @@ def groups_named(symbol: str, setting: str = "") -> tuple[list[gemmi.SpaceGroup]
     (":2", "origin choice 1", "H") or `setting` ("1", "2", "h", "r") says which. Monoclinic symbols
     such as "P 2/m" mean every axis choice that they fit. Exact means found without respelling.
     """
-    plain = " ".join(symbol.split())
+    plain = " ".join(symbol.split())[:_MAX_LENGTH]
     extension = setting.strip().upper()
     words = _ORIGIN_WORDS.search(plain)
     if words:

@@ -22,6 +22,8 @@ SPLIT_A = 0.5
 CROWDED_A = 0.7  # the shortest bond, H-H, is 0.74 Å
 FULL = 1.05  # occupancies add up to at most this on one position; more is counted double
 _CHUNK = 1 << 20
+_MAX_COMPARED = 60_000_000
+_MAX_PAIRS_PER_SITE = 50  # a crystal has about ten atoms within 1.3 Å of disordered sites
 _MULTIPLICITY_TOLERANCE_A = 0.05
 
 Floats = NDArray[np.float64]
@@ -31,8 +33,9 @@ Floats = NDArray[np.float64]
 class Placed:
     """Sites on their exact positions.
 
-    `fract` (n, 3) float64; `multiplicity` (n,) int, images per cell; `shift_A` (n,) how far each was moved to reach its special position; `crowded` (n,) marks full sites that stay closer than
-    `CROWDED_A` to an image of their own.
+    `fract` (n, 3) float64; `multiplicity` (n,) int, images per cell; `shift_A` (n,) how far each
+    was moved to reach its special position; `crowded` (n,) marks full sites that stay closer than
+    CROWDED_A to an image of their own.
     """
 
     fract: Floats
@@ -92,30 +95,25 @@ def place(
 
 def close_pairs(
     fract: Floats, rotations: Floats, translations: Floats, cell: Cell, within_A: float
-) -> ClosePairs:
+) -> ClosePairs | None:
     """Return pairs of different sites with images closer than `within_A`, each at its nearest.
 
-    Images are sorted along one axis and only neighbours in that order are compared.
+    Images are sorted along one axis and only neighbours in that order are compared. None means that
+    more atoms lie on each other than any crystal has: the comparison would not end in reasonable
+    time.
     """
     metric = metric_tensor(cell)
-    count, n = len(rotations), len(fract)
-    nothing = np.empty(0, dtype=np.int64)
-    if n < 2:
-        return ClosePairs(nothing, nothing, np.empty(0))
-    inverse = np.linalg.inv(metric)
-    axis = int(np.argmin(inverse.diagonal()))  # the largest spacing of lattice planes
-    reach = within_A * float(np.sqrt(inverse[axis, axis]))
+    n = len(fract)
     images = (fract @ rotations.transpose(0, 2, 1) + translations[:, None, :]).reshape(-1, 3)
     images -= np.floor(images)
-    order = np.argsort(images[:, axis])
-    line = images[order, axis]
-    owner = np.tile(np.arange(n), count)[order]
+    order, low, high = _neighbours(fract, images, metric, within_A)
+    if (high - low).sum() > _MAX_COMPARED:
+        return None
+    owner = np.tile(np.arange(n), len(rotations))[order]
     images = images[order]
-    home = fract[:, axis] - np.floor(fract[:, axis])
-    line = np.concatenate([line - 1, line, line + 1])
-    low = np.searchsorted(line, home - reach)
-    high = np.searchsorted(line, home + reach, side="right")
-    found: list[tuple[NDArray[np.int64], Floats]] = []
+    pairs: list[NDArray[np.int64]] = [np.empty(0, dtype=np.int64)]
+    squares: list[Floats] = [np.empty(0)]
+    held = 0
     for start, stop in _runs(high - low):
         lengths = (high - low)[start:stop]
         site = np.repeat(np.arange(start, stop), lengths)
@@ -127,12 +125,44 @@ def close_pairs(
         delta -= np.round(delta)
         squared = ((delta @ metric) * delta).sum(axis=1)
         close = squared < within_A**2
-        found.append((site[close] * n + owner[image[close]], squared[close]))
-    pair = np.concatenate([p for p, _ in found])
-    squared = np.concatenate([q for _, q in found])
+        pairs.append(site[close] * n + owner[image[close]])
+        squares.append(squared[close])
+        held += len(pairs[-1])
+        if held > len(rotations) * _MAX_PAIRS_PER_SITE * n:
+            return None
+    pair, squared = np.concatenate(pairs), np.concatenate(squares)
     nearest = np.lexsort((squared, pair))
     pair, first = np.unique(pair[nearest], return_index=True)
+    if len(pair) > _MAX_PAIRS_PER_SITE * n:
+        return None
     return ClosePairs(pair // n, pair % n, np.sqrt(squared[nearest][first]))
+
+
+def _neighbours(
+    fract: Floats, images: Floats, metric: Floats, within_A: float
+) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.int64]]:
+    """Sort images along the axis that leaves fewest to compare.
+
+    Return the order of the images, and for each site the run [low, high) of its neighbours in three
+    periods of that order.
+    """
+    inverse = np.linalg.inv(metric).diagonal()
+    best = None
+    for axis in np.argsort(inverse).tolist():  # the widest spacing of lattice planes first
+        order = np.argsort(images[:, axis])
+        line = images[order, axis]
+        line = np.concatenate([line - 1, line, line + 1])
+        home = fract[:, axis] - np.floor(fract[:, axis])
+        reach = within_A * float(np.sqrt(inverse[axis]))
+        low = np.searchsorted(line, home - reach)
+        high = np.searchsorted(line, home + reach, side="right")
+        compared = int((high - low).sum())
+        if best is None or compared < best[0]:
+            best = compared, order, low, high
+        if compared <= _CHUNK:
+            break
+    assert best is not None
+    return best[1:]
 
 
 def _runs(lengths: NDArray[np.int64]) -> list[tuple[int, int]]:

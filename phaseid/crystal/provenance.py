@@ -10,6 +10,9 @@ from phaseid.crystal.crystal import Finding, Source
 
 HIGH_PRESSURE_GPA = 0.2
 HIGH_TEMPERATURE_K = 373.15
+SOURCE_DATABASE_TAG = "_phaseid_source_database"  # for databases without a tag of their own
+SOURCE_ID_TAG = "_phaseid_source_id"
+REFERENCE_TAG = "_citation_special_details"
 _KPA_TO_GPA = 1e-6
 _MAX_NAME = 200
 _NAME_TAGS = (
@@ -27,6 +30,7 @@ _DATABASES = (
     ("AFLOW", ("_aflow_proto", "_aflow_entry")),
     ("OQMD", ("_oqmd_id",)),
 )
+_COD_NUMBER = re.compile(r"[1-9]\d{6}$")
 _MP_NAME = re.compile(r"(?:.*\D)?\b(mp[-_]\d+)(?:\D.*)?$", re.IGNORECASE)
 _PRESSURE = re.compile(r"\bP\s*=\s*(\d+\.?\d*)\s*(GPa|kbars?|kb|MPa)\b", re.IGNORECASE)
 _TEMPERATURE = re.compile(r"\bT\s*=\s*(-?\d+\.?\d*)\s*(?:deg\.?\s*|degrees?\s*|°\s*)?(C|K)\b")
@@ -51,6 +55,11 @@ def source(block: Block, file: str) -> Source:
         number = block.text(*tags)
         if number:
             return Source(database, number, file, citation(block))
+    if _COD_NUMBER.match(block.name) and block.has_prefix("_cod_", "_[local]_cod_"):
+        return Source("COD", block.name, file, citation(block))
+    number = block.text(SOURCE_ID_TAG)
+    if number:
+        return Source(block.text(SOURCE_DATABASE_TAG) or "file", number, file, citation(block))
     computed = _MP_NAME.match(block.name)
     if computed:
         return Source("Materials Project", computed.group(1), file, citation(block))
@@ -69,7 +78,8 @@ def citation(block: Block) -> str:
     doi = block.text("_journal_paper_doi", "_citation_doi")
     place = " ".join(part for part in (journal, volume, year and f"({year})", page) if part)
     parts = (" ".join(authors.split()), place, doi and f"doi:{doi}")
-    return plain_text(", ".join(part for part in parts if part not in ("", "?", ".")))
+    stated = ", ".join(part for part in parts if part not in ("", "?", "."))
+    return plain_text(stated or block.text(REFERENCE_TAG))
 
 
 def conditions(block: Block) -> tuple[float | None, float | None, tuple[Finding, ...]]:
@@ -91,11 +101,9 @@ def conditions(block: Block) -> tuple[float | None, float | None, tuple[Finding,
         temperature = None
     findings = []
     if pressure is not None and pressure >= HIGH_PRESSURE_GPA:
-        findings.append(Finding("high_pressure", f"the structure was measured at {pressure:g} GPa"))
+        findings.append(Finding("high_pressure", f"the source states {pressure:g} GPa"))
     if temperature is not None and temperature > HIGH_TEMPERATURE_K:
-        findings.append(
-            Finding("high_temperature", f"the structure was measured at {temperature:g} K")
-        )
+        findings.append(Finding("high_temperature", f"the source states {temperature:g} K"))
     if _theoretical(block):
         findings.append(Finding("theoretical", "the structure is calculated, not measured"))
     return temperature, pressure, tuple(findings)

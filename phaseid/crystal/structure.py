@@ -14,6 +14,7 @@ import numpy as np
 from phaseid.crystal.atom_sites import ReadSites
 from phaseid.crystal.composition import density_of_contents, hill_formula
 from phaseid.crystal.crystal import Finding, Site
+from phaseid.crystal.found_symmetry import found_symmetry
 from phaseid.crystal.metric import Cell, volume_A3
 from phaseid.crystal.occupancies import settle_positions
 from phaseid.crystal.positions import ROUNDING_A, Placed, close_pairs, place
@@ -119,8 +120,8 @@ def _chosen(tried: Sequence[Structure], stated: Stated) -> Structure | Structure
     if len(chosen.symmetry.operations) == 1 and (stated.formula is None or stated.z is None):
         return StructureProblem(
             "symmetry_ambiguous",
-            f"only the operation x,y,z is listed beside the symbol {leading[1].symmetry.symbol}; no "
-            "formula with Z tells whether the atoms of the whole cell are listed",
+            f"only x,y,z is listed beside the symbol {leading[1].symmetry.symbol}; no formula with "
+            "Z tells whether the atoms of the whole cell are listed",
         )
     return chosen
 
@@ -138,6 +139,8 @@ def _structure(
             f"the cell would hold {placed.multiplicity.sum()} atoms, at most {MAX_ATOMS} are taken",
         )
     pairs = close_pairs(placed.fract, symmetry.rotations, symmetry.translations, cell, NEIGHBOUR_A)
+    if pairs is None:
+        return StructureProblem("overlapping_atoms", "most of the listed atoms lie on each other")
     settled = settle_positions(sites, pairs, placed.crowded)
     if isinstance(settled, str):
         return StructureProblem("bad_occupancy", settled)
@@ -176,6 +179,9 @@ def _structure(
             f"{sum(contents.values()):.6g} atoms in {volume:.6g} Å³ are {per_A3:.3g} atoms per Å³; "
             f"crystals have {DENSITY_RANGE_A3[0]:g} to {DENSITY_RANGE_A3[1]:g}",
         )
+    if len(symmetry.operations) == 1:
+        higher = found_symmetry(cell, [site for site, _ in known])
+        findings += [higher] if higher else []
     score, judged = _judge(contents, volume, stated)
     sound = placed.shift_A.max() < ROUNDING_A and not any(n.code == "contact" for n in notes)
     return Structure(

@@ -18,7 +18,7 @@ from phaseid.crystal.crystal import Finding
 from phaseid.crystal.hermann_mauguin import groups_named, short_symbol
 from phaseid.crystal.metric import Cell, metric_tensor
 
-_MAX_OPERATIONS = 1536  # 192 in the largest conventional cell; eightfold cells still pass
+MAX_OPERATIONS = 1536  # 192 in the largest conventional cell; eightfold cells still pass
 _METRIC_TOLERANCE = 0.01
 _DEN = gemmi.Op.DEN
 
@@ -153,7 +153,7 @@ def _from_names(items: SymmetryItems) -> tuple[Symmetry, ...]:
 
 def _other_origins(listed: Symmetry) -> list[Symmetry]:
     """Return the other origin choice of a tabulated group, [] where it has only one."""
-    group = gemmi.find_spacegroup_by_ops(gemmi.GroupOps([gemmi.Op(t) for t in listed.operations]))
+    group = _group_of([gemmi.Op(text) for text in listed.operations])
     if group is None or group.ext not in ("1", "2"):
         return []
     note = Finding(
@@ -172,7 +172,7 @@ def _other_origins(listed: Symmetry) -> list[Symmetry]:
 
 
 def _contradicting(listed: Symmetry, named: tuple[Symmetry, ...]) -> list[Symmetry]:
-    """Return the groups of the symbol that the operations contradict, for where those do not fit."""
+    """Return the groups that the symbol names and the operations contradict."""
     return [
         replace(
             group,
@@ -194,8 +194,12 @@ def _from_hall(hall: str) -> Symmetry | None:
         operations = list(gemmi.symops_from_hall(hall))
     except (ValueError, RuntimeError):
         return None
-    group = gemmi.find_spacegroup_by_ops(gemmi.GroupOps(operations))
+    group = _group_of(operations)
     return None if group is None else _tabulated(group)
+
+
+def _group_of(operations: list[gemmi.Op]) -> gemmi.SpaceGroup | None:
+    return gemmi.find_spacegroup_by_ops(gemmi.GroupOps(operations))
 
 
 def _tabulated(
@@ -221,12 +225,6 @@ def _symmetry(
 
 def _from_triplets(items: SymmetryItems, named: tuple[Symmetry, ...]) -> Symmetry | SymmetryProblem:
     """Return the group that the listed triplets form, or why they form none."""
-    if len(items.triplets) > _MAX_OPERATIONS:
-        return SymmetryProblem(
-            "bad_symmetry",
-            f"{len(items.triplets)} symmetry operations are listed, at most {_MAX_OPERATIONS} are "
-            "possible",
-        )
     operations: dict[str, gemmi.Op] = {}
     for text in items.triplets:
         try:
@@ -239,7 +237,7 @@ def _from_triplets(items: SymmetryItems, named: tuple[Symmetry, ...]) -> Symmetr
         return SymmetryProblem(
             "bad_symmetry", f"the {len(ops)} listed symmetry operations do not form a group"
         )
-    group = gemmi.find_spacegroup_by_ops(gemmi.GroupOps(ops))
+    group = _group_of(ops)
     findings: list[Finding] = []
     if group is not None:
         number, symbol = group.number, short_symbol(group)
@@ -280,6 +278,8 @@ def _type_of_untabulated(operations: list[gemmi.Op]) -> tuple[int, str]:
 
     rotations, translations = _integer_arrays(operations)
     found = spglib.get_spacegroup_type_from_symmetry(rotations, translations / _DEN)
+    if found is None:  # no crystallographic group; the caller has checked closure
+        return 1, "a group of no known type"
     return int(found.number), str(found.international_short)
 
 
