@@ -18,7 +18,7 @@ One table per class of material (its file name is the class), one `[[phase]]` pe
     density = 2.70                  optional published density, g/cm³, checked to 2 %
     note = "..."                    optional sentence for the reader
     allow = ["short", "symmetry"]   optional: checks that the structure fails for a good reason,
-                                    which `note` must give
+                                    which `note` must give; "hydrogen": not all of it is placed
     set_aside = ["NCrystal: why"]   optional: second sources not to compare with, and why
 """
 
@@ -35,7 +35,7 @@ from typing import Any
 import gemmi
 
 MARKS = ("high_pressure", "high_temperature", "hypothetical", "metastable")
-ALLOWABLE = ("short", "symmetry")
+ALLOWABLE = ("hydrogen", "short", "symmetry")
 REQUIRED = {"name": str, "formula": str, "group": str, "cell": list, "sites": list, "source": str}
 OPTIONAL: dict[str, type | tuple[type, ...]] = {
     "temperature_K": (int, float),
