@@ -22,7 +22,7 @@ from phaseid.crystal.scattering import amplitudes, dispersion
 
 Floats = NDArray[np.float64]
 
-_CHUNK = 1 << 18  # phases held at once: they stay in the processor's cache, and memory stays flat
+_CHUNK = 1 << 16  # phases held at once: they stay in the cache, and memory stays flat
 _CANCELLED = 1e-6  # a sum of cosines below this part of its terms is rounding, not a wave
 
 
@@ -50,28 +50,19 @@ def squared_amplitudes(
     s2 = reflections.inverse_d2 / 4
     sums, swing = _geometric_sums(crystal, operations, reflections, kinds)
     atom = amplitudes(kinds, s2)
-    xray, electron, neutron = atom.xray, atom.electron, atom.neutron
-    if swing is not None:
-        xray, electron = xray * swing, electron * swing
-        neutron = None if neutron is None else neutron * swing
-    resonant = np.zeros(len(s2))
+    table = np.zeros((4, *atom.xray.shape))  # X-rays, their part from f″, electrons, neutrons
+    table[0], table[2] = atom.xray, atom.electron
+    if atom.neutron is not None:
+        table[3] = atom.neutron
     if xray_energy_eV is not None:
-        real, imaginary = np.array([dispersion(kind, xray_energy_eV) for kind in kinds]).T
-        damping = 1.0 if swing is None else swing
-        xray = xray + real * damping
-        # h and -h differ by the sign with which f″ joins: their mean has no cross term
-        resonant = _intensity(sums, imaginary * damping)
-    return SquaredAmplitudes(
-        xray=_intensity(sums, xray) + resonant,
-        electron=_intensity(sums, electron),
-        neutron=np.zeros(len(s2)) if neutron is None else _intensity(sums, neutron),
-    )
-
-
-def _intensity(sums: Floats, amplitude: Floats) -> Floats:
-    """Sum (2 or 1, n, e) of waves times amplitude (n, e) or (e,), squared: shape (n,)."""
-    waves = np.einsum("xne,ne->xn", sums, np.broadcast_to(amplitude, sums.shape[1:]))
-    return np.asarray((waves * waves).sum(axis=0))
+        real, table[1] = np.array([dispersion(kind, xray_energy_eV) for kind in kinds]).T
+        table[0] += real
+    if swing is not None:
+        table *= swing
+    waves = np.einsum("xne,pne->xpn", sums, table)
+    xray, resonant, electron, neutron = (waves * waves).sum(axis=0)
+    # h and -h differ by the sign with which f″ joins: their mean has no cross term
+    return SquaredAmplitudes(xray + resonant, electron, neutron)
 
 
 def _geometric_sums(
@@ -101,20 +92,24 @@ def _geometric_sums(
             crystal.sites, crystal.cell, reciprocal_metric(crystal.cell), operations, images
         )
     sums = np.empty((1 if operations.centrosymmetric else 2, *factors.shape))
-    step = max(1, _CHUNK // max(1, len(kind)))
+    step = max(1, min(len(factors), _CHUNK // len(kind)))
+    turns, whole = np.empty((2, step, len(kind)))
+    phase, terms = np.empty((2, step, len(kind)), dtype=np.float32)
     for start in range(0, len(factors), step):
-        part = slice(start, start + step)
-        hkl = reflections.hkl[part]
-        turns = hkl @ images.fract.T
-        turns -= np.rint(turns)
-        phase = np.empty(turns.shape, dtype=np.float32)
-        np.multiply(turns, 2 * math.pi, out=phase, casting="same_kind")
+        hkl = reflections.hkl[start : start + step]
+        n = len(hkl)
+        np.matmul(hkl, images.fract.T, out=turns[:n])
+        np.rint(turns[:n], out=whole[:n])
+        turns[:n] -= whole[:n]
+        np.multiply(turns[:n], 2 * math.pi, out=phase[:n], casting="same_kind")
         swing = None
         if own is not None:
             swing = np.exp((quadratic_terms(hkl) @ own).astype(np.float32))
-        for wave, sum_ in zip((np.cos, np.sin), sums, strict=False):
-            terms = wave(phase)
-            sum_[part] = (terms if swing is None else terms * swing) @ weights
+        for wave, total in zip((np.cos, np.sin), sums, strict=False):
+            wave(phase[:n], out=terms[:n])
+            if swing is not None:
+                terms[:n] *= swing
+            total[start : start + n] = terms[:n] @ weights
     noise = weights.sum(axis=0) * (1.0 if alike else factors) * _CANCELLED
     sums[np.abs(sums) < noise] = 0.0
     return sums, factors if alike else None
