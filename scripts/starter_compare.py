@@ -2,7 +2,8 @@
 
 Same composition, space group and atoms per cell; then the cell in spglib's standard setting must
 agree within 0.5 % (5 % for a computed structure), and the pattern of the other's coordinates in our
-cell must look like ours: cosine of the angle between the two lists of m|F|²d² (X-ray, no displacement, d > 1 Å).
+cell must look like ours: cosine of the angle between the two lists of m|F|²d² (X-ray, no
+displacement, d > 1 Å).
 """
 
 from __future__ import annotations

@@ -1,0 +1,294 @@
+"""How good the answers are: simulated patterns of known phases, identified against a library.
+
+    python scripts/bench_matching.py [--library FILE] [--cases 60] [--seed 1] [--families a,b]
+
+Every family draws its own cases; seeds are fixed, so that a run can be repeated. The physics of the
+simulator is gemmi's, not phaseid's. Beside phaseid stands the published manual procedure (Hanawalt,
+Rinn & Frevel 1938: the three strongest lines, in any order) on the same cases. Percentages carry
+their binomial one-sigma. A case is right where the phases named, each counted with those the rings
+cannot tell from it, are exactly the true ones.
+"""
+
+from __future__ import annotations
+
+import argparse
+import itertools
+import os
+import time
+from concurrent.futures import ProcessPoolExecutor
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import numpy as np
+from simulated_patterns import ELECTRON, NEUTRON, XRAY, Conditions, Simulator
+
+from phaseid.library import Library
+from phaseid.library import open_default
+from phaseid.matching.chemistry import Chemistry
+from phaseid.matching.identify import identify
+from phaseid.rings.ringlist import RingList
+
+
+@dataclass(frozen=True)
+class Family:
+    """A kind of case: the patterns taken of one specimen, and what the phases are."""
+
+    name: str
+    conditions: tuple[Conditions, ...]
+    phases: int = 1
+    shares: tuple[float, float] = (0.25, 1.0)
+    minority: bool = False
+    absent: int = 0
+    chemistry: bool = False
+
+
+_COARSE = replace(ELECTRON, scale=0.015, grades=True)
+FAMILIES = (
+    Family("electrons 0.5 %", (ELECTRON,)),
+    Family("electrons 1.5 %, grades", (_COARSE,)),
+    Family("the same, chemistry known", (_COARSE,), chemistry=True),
+    Family("x-rays", (XRAY,)),
+    Family("neutrons", (NEUTRON,)),
+    Family("electrons and x-rays", (ELECTRON, XRAY)),
+    Family("two phases, x-rays", (XRAY,), phases=2),
+    Family("two phases, electrons", (ELECTRON,), phases=2),
+    Family("three phases, x-rays", (XRAY,), phases=3),
+    Family("5-10 % contaminant", (XRAY,), phases=2, minority=True),
+    Family("3-6 rings", (replace(ELECTRON, most=6),)),
+    Family(
+        "stress",
+        (replace(ELECTRON, understated=1.8, scatter=0.8, lost=0.1, foreign=1.0, strain=0.002),),
+    ),
+    Family("one listed, one not", (XRAY,), phases=2, absent=1),
+    Family("absent, electrons", (ELECTRON,), absent=1),
+    Family("absent, x-rays", (XRAY,), absent=1),
+)
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What came of one case; `by_hand` is the manual procedure's success, None where not run."""
+
+    right: bool
+    probability: float
+    verdict: str
+    seconds: float
+    by_hand: bool | None
+
+
+def hanawalt(rings: RingList, library: Library, allowed: set[str], tolerance: float) -> str | None:
+    """Phase by the three strongest rings in any order, then by the number of rings matched."""
+    table = library.line_table(rings.probe.kind)
+    weights = rings.probe.weights(table.d_A, table.multiplicity, table.f2)
+    strongest = rings.d_A[np.argsort(-np.nan_to_num(rings.intensity))[:3]]
+    best: tuple[float, str] | None = None
+    for i, phase_id in enumerate(table.phase_ids):
+        if phase_id not in allowed:
+            continue
+        rows = slice(table.offsets[i], table.offsets[i + 1])
+        d, intensity = table.d_A[rows], weights[rows]
+        inside = (d > rings.d_A.min() * 0.97) & (d < rings.d_A.max() * 1.03)
+        d, intensity = d[inside], intensity[inside]
+        if len(d) < 3:
+            continue
+        three = d[np.argsort(-intensity)[:3]]
+        fits = min(
+            max(abs(np.log(np.array(order) / strongest))) for order in itertools.permutations(three)
+        )
+        if fits > tolerance:
+            continue
+        found = sum(np.abs(np.log(d / ring)).min() < tolerance for ring in rings.d_A)
+        score = float(found) - fits / tolerance
+        if best is None or score > best[0]:
+            best = (score, phase_id)
+    return None if best is None else best[1]
+
+
+class Bench:
+    """One library, one simulator."""
+
+    def __init__(self, path: Path, seed: int) -> None:
+        self.library = Library.open(path)
+        self.phases = self.library.phases()
+        crystals = [self.library.crystal(p.phase_id) for p in self.phases]
+        self.simulator = Simulator(crystals, np.random.default_rng(seed))
+        self.usable = [i for i in range(len(crystals)) if self.simulator.usable(i)]
+
+    def run(self, family: Family, cases: int) -> list[Outcome]:
+        """Draw and identify `cases` cases of a family."""
+        outcomes: list[Outcome] = []
+        while len(outcomes) < cases:
+            outcome = self._case(family)
+            if outcome is not None:
+                outcomes.append(outcome)
+        return outcomes
+
+    def _case(self, family: Family) -> Outcome | None:
+        rng = self.simulator.rng
+        truth = [int(i) for i in rng.choice(self.usable, family.phases, replace=False)]
+        shares = [float(s) for s in rng.uniform(*family.shares, family.phases)]
+        if family.minority:
+            shares = [1.0, float(rng.uniform(0.05, 0.10))]
+        patterns = []
+        for how in family.conditions:
+            if how.most is not None:
+                how = replace(how, most=int(rng.integers(3, how.most + 1)))
+            rings = self.simulator.pattern(truth, shares, how)
+            if rings is None:
+                return None
+            patterns.append(rings)
+        hidden = {self.phases[i].phase_id for i in truth[len(truth) - family.absent :]}
+        if family.absent:
+            hidden |= self._twins(truth[len(truth) - family.absent :])
+        wanted = {self.phases[i].phase_id for i in truth} - hidden
+        chemistry = None
+        if family.chemistry:
+            elements = frozenset().union(*(self.phases[i].elements for i in truth))
+            chemistry = Chemistry(only=elements)
+        start = time.perf_counter()
+        library = _Without(self.library, hidden) if hidden else self.library
+        answer = identify(patterns, library, chemistry=chemistry)
+        seconds = time.perf_counter() - start
+        by_hand = None
+        if family.phases == 1 and not family.absent:
+            allowed = {
+                p.phase_id for p in self.phases if chemistry is None or chemistry.admits(p.elements)
+            }
+            by_hand = wanted == {hanawalt(patterns[0], self.library, allowed, 0.02)}
+        best = answer.hypotheses[0] if answer.hypotheses else None
+        right = bool(wanted) and best is not None and _names(best, wanted)
+        return Outcome(right, best.probability if best else 0.0, answer.verdict, seconds, by_hand)
+
+    def _twins(self, truth: list[int]) -> set[str]:
+        """Other entries of the same phase: same elements and group, cell within 1.5 %."""
+        found = set()
+        for i in truth:
+            one = self.phases[i]
+            for other in self.phases:
+                same = (
+                    other.elements == one.elements
+                    and other.space_group_number == one.space_group_number
+                    and abs(np.log(other.volume_A3 / one.volume_A3)) < 0.045
+                )
+                if same:
+                    found.add(other.phase_id)
+        return found
+
+
+class _Without:
+    """A library with some phases taken out, for cases whose truth is not listed."""
+
+    def __init__(self, library: Library, hidden: set[str]) -> None:
+        self._library = library
+        self._hidden = hidden
+        self.path = library.path
+        self.digest = library.digest
+
+    def __len__(self) -> int:
+        return len(self._library) - len(self._hidden)
+
+    def phase(self, phase_id: str):  # noqa: ANN201
+        return self._library.phase(phase_id)
+
+    def line_table(self, kind):  # noqa: ANN001, ANN201
+        table = self._library.line_table(kind)
+        keep = [i for i, p in enumerate(table.phase_ids) if p not in self._hidden]
+        rows = np.concatenate([np.arange(table.offsets[i], table.offsets[i + 1]) for i in keep])
+        counts = np.diff(table.offsets)[keep]
+        return replace(
+            table,
+            phase_ids=tuple(table.phase_ids[i] for i in keep),
+            offsets=np.concatenate([[0], np.cumsum(counts)]),
+            **{name: getattr(table, name)[rows] for name in ("d_A", "hkl", "multiplicity", "f2")},
+            **{
+                name: getattr(table, name)[keep]
+                for name in ("volume_A3", "complete_to_A", "floor", "quality", "elements_mask")
+            },
+        )
+
+
+def _names(hypothesis, wanted: set[str]) -> bool:  # noqa: ANN001
+    """Whether the hypothesis names exactly the wanted phases, twins counted."""
+    free = set(wanted)
+    for answer in hypothesis.phases:
+        group = {answer.phase.phase_id, *(p.phase_id for p in answer.indistinguishable)}
+        hit = sorted(free & group)
+        if not hit:
+            return False
+        free.discard(hit[0])
+    return not free
+
+
+def _run(task: tuple[Path, int, int, int]) -> tuple[int, list[Outcome]]:
+    path, index, cases, seed = task
+    return index, Bench(path, seed * 1000 + index).run(FAMILIES[index], cases)
+
+
+def _percent(hits: float, count: int) -> str:
+    share = hits / count
+    return (
+        f"{100 * share:5.1f} ± {100 * np.sqrt(max(share * (1 - share), 0.25 / count) / count):3.1f}"
+    )
+
+
+def report(name: str, outcomes: list[Outcome]) -> str:
+    """One line of the table."""
+    n = len(outcomes)
+    by_hand = [o.by_hand for o in outcomes if o.by_hand is not None]
+    return (
+        f"{name:28s} {_percent(sum(o.right for o in outcomes), n)}   "
+        f"{_percent(sum(o.verdict == 'no-match' or o.probability < 0.5 for o in outcomes), n)}   "
+        f"{_percent(sum(o.probability >= 0.9 and not o.right for o in outcomes), n)}   "
+        f"{1e3 * float(np.median([o.seconds for o in outcomes])):6.0f}   "
+        + (_percent(sum(by_hand), len(by_hand)) if by_hand else "")
+    )
+
+
+def calibration(outcomes: list[Outcome]) -> str:
+    """Reliability over everything: expected calibration error, Brier score, confident mistakes."""
+    p = np.array([o.probability for o in outcomes])
+    right = np.array([o.right for o in outcomes], dtype=float)
+    bins = np.clip((p * 10).astype(int), 0, 9)
+    error = sum(
+        abs(p[bins == b].mean() - right[bins == b].mean()) * (bins == b).mean()
+        for b in range(10)
+        if (bins == b).any()
+    )
+    lines = [
+        f"calibration error {error:.3f}, Brier {np.mean((p - right) ** 2):.3f}, "
+        f"wrong at 0.9 or more {100 * np.mean((p >= 0.9) & (right == 0)):.2f} % of all"
+    ]
+    for b in range(10):
+        if (bins == b).any():
+            inside = bins == b
+            lines.append(
+                f"  said {p[inside].mean():.2f}, right {right[inside].mean():.2f} ({inside.sum()})"
+            )
+    return "\n".join(lines)
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser(description=__doc__.split("\n")[0])
+    parser.add_argument("--library", type=Path, help="default: the starter library")
+    parser.add_argument("--cases", type=int, default=60)
+    parser.add_argument("--seed", type=int, default=1)
+    parser.add_argument("--families", default="", help="names or parts of names, comma between")
+    parser.add_argument("--jobs", type=int, default=os.cpu_count() or 1)
+    options = parser.parse_args()
+    path = options.library or Path(open_default(None).path)
+    wanted = [w for w in options.families.split(",") if w]
+    chosen = [i for i, f in enumerate(FAMILIES) if not wanted or any(w in f.name for w in wanted)]
+    print(
+        f"{'family':28s} {'top-1 %':12s}  {'abstains %':12s}  {'wrong ≥ 0.9 %':12s}   ms   by hand %"
+    )
+    everything: list[Outcome] = []
+    with ProcessPoolExecutor(options.jobs) as pool:
+        tasks = [(path, i, options.cases, options.seed) for i in chosen]
+        for index, outcomes in pool.map(_run, tasks):
+            print(report(FAMILIES[index].name, outcomes), flush=True)
+            everything += outcomes
+    print(calibration(everything))
+
+
+if __name__ == "__main__":
+    main()
