@@ -8,12 +8,13 @@ from __future__ import annotations
 import json
 import math
 from collections.abc import Mapping, Sequence
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
-from phaseid.library.phase import Phase
-from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
-from phaseid.probes.probe import Probe
-from phaseid.rings.ringlist import RingList
+if TYPE_CHECKING:
+    from phaseid.library.phase import Phase
+    from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
+    from phaseid.probes.probe import Probe
+    from phaseid.rings.ringlist import RingList
 
 SCHEMA = "phaseid.identification/1"
 CELL_KEYS = ("a_A", "b_A", "c_A", "alpha_deg", "beta_deg", "gamma_deg")

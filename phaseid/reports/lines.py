@@ -95,10 +95,8 @@ def lines_text(phase: Phase, probe: Probe, lines: Lines, width: int = 80) -> str
     page += ["", *table(columns, rows, width)]
     weak = len(reached) - len(shown)
     if weak:
-        page += [
-            "",
-            *wrap(f"{weak} lines weaker than {WEAKEST_SHOWN} are left out.", width, indent=""),
-        ]
+        left_out = f"Weaker than {WEAKEST_SHOWN} of 100 and left out: {weak}."
+        page += ["", *wrap(left_out, width, indent="")]
     return "\n".join(page) + "\n"
 
 

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from typing import Literal
 
 from phaseid.library.phase import Phase
+from phaseid.reports.formula import formula_text
 
 ELLIPSIS = "…"
 
@@ -42,6 +43,12 @@ def hkl_text(hkl: Sequence[int]) -> str:
     return " ".join(str(int(index)) for index in hkl)
 
 
+def signed_text(value: float) -> str:
+    """Write a deviation with its sign and one decimal, zero without a sign."""
+    text = f"{value:+.1f}"
+    return "0.0" if text in ("+0.0", "-0.0") else text
+
+
 def probability_text(value: float) -> str:
     """Write a probability to two digits, never as a certainty."""
     if value > 0.995:
@@ -51,15 +58,16 @@ def probability_text(value: float) -> str:
 
 def phase_text(phase: Phase) -> str:
     """Name a phase for a reader: `corundum (Al2O3)`, or by the formula alone."""
-    name, formula = safe(phase.name), safe(phase.formula)
-    return formula if not name or name == formula else f"{name} ({formula})"
+    name, formula = safe(phase.name), formula_text(safe(phase.formula))
+    return formula if name in ("", phase.formula, formula) else f"{name} ({formula})"
 
 
 def source_text(phase: Phase) -> str:
     """Say where an entry came from: `COD 9008460, al.cif`."""
     source = phase.source
+    file = "" if source.file == f"{source.id}.cif" else safe(source.file)
     origin = " ".join(part for part in (safe(source.database), safe(source.id)) if part)
-    return ", ".join(part for part in (origin, safe(source.file)) if part)
+    return ", ".join(part for part in (origin, file) if part)
 
 
 def cell_text(cell: Sequence[float], sigma: Sequence[float] | None = None) -> str:

@@ -7,6 +7,7 @@ from collections.abc import Iterable, Sequence
 from pathlib import Path
 
 from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
+from phaseid.reports.formula import formula_text
 from phaseid.reports.plain import (
     Column,
     cell_text,
@@ -14,6 +15,7 @@ from phaseid.reports.plain import (
     phase_text,
     probability_text,
     safe,
+    signed_text,
     source_text,
     table,
     wrap,
@@ -184,8 +186,8 @@ def _rings(page: _Page, answer: Identification, best: Hypothesis, number: int) -
                     *(measured if order == 0 else ["", ""]),
                     f"{a.d_calc_A:.4f}",
                     hkl_text(a.hkl),
-                    best.phases[a.phase].phase.formula,
-                    f"{a.residual_sigma:+.1f}",
+                    formula_text(best.phases[a.phase].phase.formula),
+                    signed_text(a.residual_sigma),
                     intensity if order == 0 else "",
                     f"{a.relative_intensity:.0f}",
                 ]
@@ -195,7 +197,7 @@ def _rings(page: _Page, answer: Identification, best: Hypothesis, number: int) -
         if scale.pattern == number:
             page.item(
                 f"Fitted scale, measured d / calculated d: {scale.factor:.4f} ± {scale.sigma:.4f}; "
-                "deviations are taken after it"
+                "deviations are taken after it. I calc.: strongest line of each phase = 100"
             )
 
 
@@ -217,7 +219,7 @@ def _against(page: _Page, answer: Identification, best: Hypothesis) -> None:
     for m in best.missing:
         where = f" in pattern {m.pattern + 1}" if many else ""
         items.append(
-            f"{safe(best.phases[m.phase].phase.formula)} should also show {hkl_text(m.hkl)} at "
+            f"{formula_text(safe(best.phases[m.phase].phase.formula))} should also show {hkl_text(m.hkl)} at "
             f"{m.d_calc_A:.4f} Å (calculated intensity {m.relative_intensity:.0f} of 100){where}"
         )
     worst = max(best.assignments, key=lambda a: abs(a.residual_sigma), default=None)

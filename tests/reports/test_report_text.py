@@ -7,7 +7,16 @@ from dataclasses import replace
 import pytest
 
 from phaseid.matching.identification import Identification, TypeMatch
-from phaseid.reports.plain import Column, cell_text, probability_text, safe, table, wrap
+from phaseid.reports.formula import formula_text
+from phaseid.reports.plain import (
+    Column,
+    cell_text,
+    probability_text,
+    safe,
+    signed_text,
+    table,
+    wrap,
+)
 from phaseid.reports.text import STANDING, as_text
 
 
@@ -135,6 +144,35 @@ def test_no_probability_reads_as_certainty(value: float, text: str) -> None:
 )
 def test_a_cell_is_written_without_repetition(cell: tuple[float, ...], text: str) -> None:
     assert cell_text(cell) == text
+
+
+@pytest.mark.parametrize(
+    ("formula", "text"),
+    [  # as written in any textbook
+        ("ClNa", "NaCl"),
+        ("NTi", "TiN"),
+        ("Al2MgO4", "MgAl2O4"),
+        ("CCaO3", "CaCO3"),
+        ("H2O", "H2O"),
+        ("H3N", "NH3"),
+        ("CSi", "SiC"),
+        ("AlNi", "NiAl"),
+        ("C0.61W", "WC0.61"),
+        ("D2O", "D2O"),
+        ("Al", "Al"),
+        ("(Mg,Fe)O", "(Mg,Fe)O"),
+        ("", ""),
+    ],
+)
+def test_a_formula_reads_as_chemists_write_it(formula: str, text: str) -> None:
+    assert formula_text(formula) == text
+
+
+@pytest.mark.parametrize(
+    ("value", "text"), [(-0.01, "0.0"), (0.0, "0.0"), (0.26, "+0.3"), (-3.0, "-3.0")]
+)
+def test_a_deviation_has_a_sign_unless_it_is_none(value: float, text: str) -> None:
+    assert signed_text(value) == text
 
 
 def test_white_space_and_controls_become_harmless() -> None:
