@@ -11,8 +11,8 @@ _SEQUENCE = (
     "Ni Pd Pt Co Rh Ir Fe Ru Os Mn Tc Re Cr Mo W V Nb Ta Ti Zr Hf Sc Y "
     "Lu Yb Tm Er Ho Dy Tb Gd Eu Sm Pm Nd Pr Ce La Lr No Md Fm Es Cf Bk Cm Am Pu Np U Pa Th Ac "
     "Be Mg Ca Sr Ba Ra Li Na K Rb Cs Fr He Ne Ar Kr Xe Rn"
-).split()
-_PLACE = {symbol: place for place, symbol in enumerate(_SEQUENCE)}
+)
+_PLACE = {symbol: place for place, symbol in enumerate(_SEQUENCE.split())}
 _PART = re.compile(r"([A-Z][a-z]?)([\d.]*)")
 
 

@@ -218,8 +218,9 @@ def _against(page: _Page, answer: Identification, best: Hypothesis) -> None:
         items.append(f"Ring {u.ring + 1}{where} at {d_A:.4f} Å is unexplained{hint}")
     for m in best.missing:
         where = f" in pattern {m.pattern + 1}" if many else ""
+        formula = formula_text(safe(best.phases[m.phase].phase.formula))
         items.append(
-            f"{formula_text(safe(best.phases[m.phase].phase.formula))} should also show {hkl_text(m.hkl)} at "
+            f"{formula} should also show {hkl_text(m.hkl)} at "
             f"{m.d_calc_A:.4f} Å (calculated intensity {m.relative_intensity:.0f} of 100){where}"
         )
     worst = max(best.assignments, key=lambda a: abs(a.residual_sigma), default=None)

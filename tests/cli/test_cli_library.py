@@ -12,7 +12,7 @@ import pytest
 from phaseid.library import Library
 from phaseid.resources import data_path
 from tests.cli.conftest import Command
-from tests.library.conftest import rock_salt
+from tests.library.rock_salts import rock_salt
 
 
 @pytest.fixture

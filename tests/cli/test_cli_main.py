@@ -54,7 +54,7 @@ def test_help_lists_the_commands(phaseid, flag: str) -> None:
 def test_help_of_a_command_has_an_example(phaseid, command: str) -> None:
     done = phaseid(*command.split(), "--help")
     assert done.code == 0
-    assert f"phaseid {command} " in done.out.split("Usage:")[1].split("\n", 1)[1]
+    assert f"phaseid {command}" in done.out.split("Usage:")[1].split("\n", 1)[1]
 
 
 @pytest.mark.parametrize("words", [("frobnicate",), ("identify",), ("lines", "Al", "--d-min", "x")])
