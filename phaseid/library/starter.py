@@ -29,11 +29,10 @@ def starter_crystals() -> Iterator[Crystal]:
 
     Raises LibraryError where a shipped file cannot be read: the installation is damaged.
     """
-    ours = list(_shipped())
-    yield from ours
     kinds: dict[tuple[str, int], list[Crystal]] = {}
-    for crystal in ours:
+    for crystal in _shipped():
         kinds.setdefault(_kind(crystal), []).append(crystal)
+        yield crystal
     for crystal in prototype_crystals():
         if not any(_near(crystal, other) for other in kinds.get(_kind(crystal), [])):
             yield crystal

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import bz2
 import gzip
+import hashlib
 import io
 import itertools
 import lzma
@@ -21,7 +22,7 @@ from phaseid.library import Library, connection
 from phaseid.library.adding import suggested_workers
 from phaseid.library.entries import entry
 from phaseid.library.writer import combined
-from tests.library.conftest import rock_salt
+from tests.library.rock_salts import rock_salt
 
 WriteCif = Callable[..., Path]
 SHARED = Path(__file__).parents[3] / "shared" / "data"
@@ -102,9 +103,7 @@ def test_an_edited_file_replaces_what_it_held(library: Library, write_cif: Write
     assert {p.formula for p in library.phases()} == {"MgO", "CaO"}
 
 
-def test_files_of_one_run_do_not_replace_each_other(
-    library: Library, write_cif: WriteCif
-) -> None:
+def test_files_of_one_run_do_not_replace_each_other(library: Library, write_cif: WriteCif) -> None:
     paths = [
         write_cif("a/x.cif", "MgO", cod="9000001"),
         write_cif("b/y.cif", "MgO", 4.25, cod="9000001"),
@@ -141,12 +140,8 @@ def _tar(path: Path, mode: str, members: dict[str, str]) -> None:
 MEMBERS = {"oxides/MgO.cif": rock_salt("MgO"), "../halides/NaCl.cif": rock_salt("NaCl")}
 
 
-@pytest.mark.parametrize(
-    "name", ["x.zip", "x.tar", "x.tar.gz", "x.tgz", "x.tar.bz2", "x.tar.xz"]
-)
-def test_an_archive_is_read_member_by_member(
-    library: Library, tmp_path: Path, name: str
-) -> None:
+@pytest.mark.parametrize("name", ["x.zip", "x.tar", "x.tar.gz", "x.tgz", "x.tar.bz2", "x.tar.xz"])
+def test_an_archive_is_read_member_by_member(library: Library, tmp_path: Path, name: str) -> None:
     path = tmp_path / name
     if name.endswith(".zip"):
         with zipfile.ZipFile(path, "w", zipfile.ZIP_DEFLATED) as archive:
@@ -188,9 +183,7 @@ def test_every_block_of_a_file_counts(library: Library, tmp_path: Path) -> None:
     assert library.add([path]).unchanged == 3
 
 
-def test_a_bad_file_stops_nothing(
-    library: Library, tmp_path: Path, write_cif: WriteCif
-) -> None:
+def test_a_bad_file_stops_nothing(library: Library, tmp_path: Path, write_cif: WriteCif) -> None:
     good = write_cif("good.cif", "MgO")
     bad = tmp_path / "bad.cif"
     bad.write_text("data_x\n_cell_length_a 4.2\nloop_\n_atom_site_label\n_atom_site_fract_x\nA\n")
@@ -270,7 +263,7 @@ def test_two_structures_with_the_same_short_id_are_told_apart(
 ) -> None:
     monkeypatch.setattr(
         "phaseid.library.entries.hashlib.sha256",
-        lambda data: _Hash("a" * 8 + __import__("hashlib").md5(data).hexdigest() * 2),
+        lambda data: _Hash("a" * 8 + hashlib.md5(data).hexdigest() * 2),
     )
     crystals = [
         read_cif(rock_salt("MgO", a).encode(), "x.cif").crystals[0] for a in (4.20, 4.21, 4.22)
@@ -299,7 +292,10 @@ def test_a_structure_that_breaks_the_arithmetic_is_a_reject(
     with monkeypatch.context() as patch:
         patch.setattr("phaseid.crystal.lines.compute_lines", breaks)
         tally = library.add(paths)
-    assert [(r.file, r.code) for r in tally.rejects] == [("a.cif", "no_lines"), ("b.cif", "no_lines")]
+    assert [(r.file, r.code) for r in tally.rejects] == [
+        ("a.cif", "no_lines"),
+        ("b.cif", "no_lines"),
+    ]
     assert library.add(paths).added == 2
 
 

@@ -37,9 +37,7 @@ EXPECTED = [
 
 
 @pytest.mark.parametrize(("name", "formula", "elements", "number", "word"), EXPECTED)
-def test_a_caution_is_given(
-    name: str, formula: str, elements: str, number: int, word: str
-) -> None:
+def test_a_caution_is_given(name: str, formula: str, elements: str, number: int, word: str) -> None:
     said = cautions_for(name, formula, elements.split(), number)
     assert any(word in sentence for sentence in said), said
 

@@ -11,6 +11,7 @@ import sys
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from itertools import islice
 from pathlib import Path
 
 import numpy as np
@@ -25,7 +26,7 @@ from phaseid.library.entries import STORED_FLOOR
 from phaseid.library.records import pack_crystal, unpack_crystal
 from phaseid.library.schema import SCHEMA_VERSION, STEPS, apply_steps, stored_version
 from phaseid.library.starter import starter_crystals
-from tests.library.conftest import rock_salt
+from tests.library.rock_salts import rock_salt
 
 WriteCif = Callable[..., Path]
 NOBODY = 65534
@@ -72,8 +73,7 @@ def test_a_phase_comes_back_as_it_went_in(library: Library, write_cif: WriteCif)
 
 
 def test_lines_come_back_to_the_precision_they_are_stored_with(library: Library) -> None:
-    crystals = [c for c in starter_crystals() if c.space_group_number in {2, 14, 167, 194}][:8]
-    assert len(crystals) == 8
+    crystals = list(islice(starter_crystals(), 0, 80, 10))
     library.add_crystals(crystals)
     for phase in library.phases():
         wanted = trim(compute_lines(library.crystal(phase.phase_id)), STORED_FLOOR)
@@ -134,7 +134,7 @@ def _load_time_s(library: Library) -> float:
 
 def _damaged(path: Path) -> None:
     with Library.create(path) as library:
-        library.add_crystals(c for c, _ in zip(starter_crystals(), range(20), strict=False))
+        library.add_crystals(islice(starter_crystals(), 20))
     data = bytearray(path.read_bytes())
     data[4096:] = b"\xa5" * (len(data) - 4096)
     path.write_bytes(data)
@@ -190,7 +190,7 @@ def test_nothing_is_created_over_a_file_or_in_no_folder(tmp_path: Path) -> None:
 
 def test_a_phase_id_that_is_not_there(library: Library) -> None:
     for ask in (library.phase, library.crystal, library.lines):
-        with pytest.raises(InputError, match="no phase with the id 'Al-00000000'.*library find"):
+        with pytest.raises(InputError, match=r"no phase with the id 'Al-00000000'.*library find"):
             ask("Al-00000000")
 
 
@@ -222,7 +222,7 @@ def test_who_may_not_write_reads_and_is_told(tmp_path: Path, write_cif: WriteCif
     with _as_another_user(shelf), Library.open(path) as library:
         assert [phase.formula for phase in library.find("MgO")] == ["MgO"]
         assert len(library.line_table("electron")) == 1
-        with pytest.raises(LibraryError, match=r"lib\.sqlite: the library cannot be written.*Check"):
+        with pytest.raises(LibraryError, match=r"lib\.sqlite: the library cannot be written"):
             library.add([])
         with pytest.raises(LibraryError, match=r"new\.sqlite: the library cannot be written"):
             Library.create(shelf / "new.sqlite")

@@ -12,7 +12,7 @@ from phaseid.crystal.cif import read_cif
 from phaseid.crystal.crystal import Finding, Source
 from phaseid.errors import InputError
 from phaseid.library import Library
-from tests.library.conftest import rock_salt
+from tests.library.rock_salts import rock_salt
 
 WriteCif = Callable[..., Path]
 
@@ -65,9 +65,9 @@ def test_nothing_means_nothing_and_near_names_are_offered(shelf: Library) -> Non
     assert shelf.find("") == []
     assert shelf.find('"; DROP TABLE phase; --') == []
     assert shelf.find("%") == shelf.find("*") == shelf.find("a'b") == []
-    with pytest.raises(InputError, match="no phase called 'perriclase'. Close names: Periclase"):
+    with pytest.raises(InputError, match=r"no phase called 'perriclase'\. Close names: Periclase"):
         shelf.choose("perriclase")
-    with pytest.raises(InputError, match="no phase called 'xq'.*a CIF file") as caught:
+    with pytest.raises(InputError, match=r"no phase called 'xq'.*a CIF file") as caught:
         shelf.choose("xq")
     assert caught.value.exit_code == 2
 

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import gzip
 import json
-import multiprocessing
+import shutil
 from collections import Counter
+from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -16,7 +18,7 @@ from phaseid.crystal.composition import cell_contents
 from phaseid.crystal.crystal import Crystal, Finding, Site, Source
 from phaseid.crystal.lines import compute_lines
 from phaseid.crystal.metric import volume_A3
-from phaseid.library import Library, default_library_path, open_default
+from phaseid.library import Library, build_starter, default_library_path, open_default
 from phaseid.library.prototypes import (
     plain_name,
     plain_reference,
@@ -136,18 +138,22 @@ def test_a_review_leaves_out_renames_and_marks(
     assert kept[1:] == unreviewed[2:]
 
 
-def test_every_starter_structure_says_where_it_comes_from() -> None:
-    crystals = list(starter_crystals())
+@pytest.fixture(scope="module")
+def crystals() -> list[Crystal]:
+    return list(starter_crystals())
+
+
+def test_every_starter_structure_says_where_it_comes_from(crystals: list[Crystal]) -> None:
     assert all(crystal.source.database and crystal.source.id for crystal in crystals)
     assert all(crystal.source.reference for crystal in crystals)
     numbers = Counter((crystal.source.database, crystal.source.id) for crystal in crystals)
     assert [number for number, times in numbers.items() if times > 1] == []
-    assert [crystal.source.file for crystal in crystals if "/" in crystal.source.file] == []
 
 
-def test_the_starter_library_holds_every_starter_structure(starter_library: Library) -> None:
+def test_the_starter_library_holds_every_starter_structure(
+    starter_library: Library, crystals: list[Crystal]
+) -> None:
     facts = starter_library.info()
-    crystals = list(starter_crystals())
     assert facts["phases"] == len(crystals) == len(starter_library)
     assert facts["rejects"] == 0
     assert facts["digest"] == starter_library.digest
@@ -167,8 +173,8 @@ def test_no_prototype_repeats_a_structure_of_ours(starter_library: Library) -> N
                 assert (abs(edges - 1) > 0.0099).any(), (phase, other)
 
 
-def test_what_doubts_an_entry_lowers_its_quality() -> None:
-    crystal = next(starter_crystals())
+def test_what_doubts_an_entry_lowers_its_quality(crystals: list[Crystal]) -> None:
+    crystal = crystals[0]
     plain = quality(_with(crystal))
     assert plain == 1.0
     for code, factor in FACTORS.items():
@@ -178,33 +184,37 @@ def test_what_doubts_an_entry_lowers_its_quality() -> None:
 
 
 def _with(crystal: Crystal, *codes: str) -> Crystal:
-    from dataclasses import replace
-
     return replace(crystal, findings=tuple(Finding(code, code) for code in codes))
 
 
-def _open_and_count(path: str, results: Any) -> None:
-    import os
-
-    os.environ["PHASEID_LIBRARY"] = path
-    with open_default() as library:
-        results.put((len(library), library.digest))
-
-
-def test_two_first_users_at_once_both_end_well(tmp_path: Path, starter_library: Library) -> None:
+def test_who_comes_second_uses_what_the_first_has_built(
+    tmp_path: Path, starter_library_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     path = tmp_path / "new" / "folder" / "lib.sqlite"
-    context = multiprocessing.get_context("spawn")
-    results = context.Queue()
-    both = [
-        context.Process(target=_open_and_count, args=(str(path), results)) for _ in range(2)
-    ]
-    for process in both:
-        process.start()
-    answers = [results.get(timeout=120) for _ in both]
-    for process in both:
-        process.join()
-    assert answers == [(len(starter_library), starter_library.digest)] * 2
+    monkeypatch.setenv("PHASEID_LIBRARY", str(path))
+
+    def meanwhile() -> Iterator[Crystal]:
+        shutil.copy(starter_library_path, path)  # another process ends its build first
+        yield from starter_crystals()
+
+    monkeypatch.setattr("phaseid.library.starter.starter_crystals", meanwhile)
+    said: list[str] = []
+    with open_default(said.append) as library, Library.open(starter_library_path) as first:
+        assert library.digest == first.digest
+    assert path.read_bytes() == starter_library_path.read_bytes()
     assert [p.name for p in path.parent.iterdir()] == ["lib.sqlite"]
+    assert str(path) in said[0]
+
+
+def test_a_build_that_fails_leaves_nothing(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    def broken() -> Iterator[Crystal]:
+        yield next(starter_crystals())
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr("phaseid.library.starter.starter_crystals", broken)
+    with pytest.raises(KeyboardInterrupt):
+        build_starter(tmp_path / "lib.sqlite")
+    assert list(tmp_path.iterdir()) == []
 
 
 def test_the_default_library_is_where_the_variable_says(
