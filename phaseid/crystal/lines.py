@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from phaseid.crystal.crystal import Crystal
 from phaseid.crystal.metric import volume_A3
 from phaseid.crystal.operations import read_operations
-from phaseid.crystal.reflections import FINEST_D_A, unique_reflections
+from phaseid.crystal.reflections import FINEST_D_A, Reflections, unique_reflections
 from phaseid.crystal.scattering import CU_KA1_EV
 from phaseid.crystal.structure_factor import squared_amplitudes
 from phaseid.errors import InputError
@@ -66,16 +66,19 @@ def compute_lines(
     found = unique_reflections(crystal.cell, operations, d_min_A)
     f2 = squared_amplitudes(crystal, operations, found, xray_energy_eV)
     table = np.stack([f2.xray, f2.electron, f2.neutron])
-    seen = table.any(axis=0)
-    hkl, multiplicity, d_A, table = _merged(
-        found.hkl[seen].astype(np.int32),
-        found.multiplicity[seen],
-        found.inverse_d2[seen] ** -0.5,
-        table[:, seen],
-    )
+    seen = np.flatnonzero(table.any(axis=0))
+    if len(seen) < len(found.hkl):
+        found = replace(
+            found,
+            hkl=found.hkl[seen],
+            inverse_d2=found.inverse_d2[seen],
+            multiplicity=found.multiplicity[seen],
+        )
+        table = table[:, seen]
+    hkl, multiplicity, inverse_d2, table = _merged(found, table)
     return Lines(
-        d_A=d_A,
-        hkl=hkl,
+        d_A=inverse_d2**-0.5,
+        hkl=hkl.astype(np.int32),
         multiplicity=multiplicity.astype(np.int32),
         f2_xray=table[0],
         f2_electron=table[1],
@@ -110,27 +113,25 @@ def trim(lines: Lines, floor: float) -> Lines:
     )
 
 
-def _merged(
-    hkl: NDArray[np.int32], multiplicity: NDArray[np.int64], d_A: Floats, f2: Floats
-) -> tuple[NDArray[np.int32], NDArray[np.int64], Floats, Floats]:
-    """Merge neighbours in falling d that coincide; hkl and d of the strongest for X-rays."""
-    if len(d_A) < 2:
-        return hkl, multiplicity, d_A, f2
-    fall = np.log(d_A)
-    fall = fall[0] - fall
-    new = np.diff(fall, prepend=-1.0) > COINCIDENT
+def _merged(found: Reflections, f2: Floats) -> tuple[Floats, NDArray[np.int64], Floats, Floats]:
+    """Merge reflections that coincide: hkl, multiplicity, 1/d², |F|²; hkl of the strongest."""
+    hkl, multiplicity, inverse_d2 = found.hkl, found.multiplicity, found.inverse_d2
+    new = np.ones(len(hkl), dtype=bool)
+    tolerance = 2 * COINCIDENT  # of 1/d²
+    new[1:] = inverse_d2[1:] > inverse_d2[:-1] * (1 + tolerance)
+    if new.all():
+        return hkl, multiplicity, inverse_d2, f2
     first = np.flatnonzero(new)
-    within = fall - fall[first][np.cumsum(new) - 1]
-    if within.max() > COINCIDENT:  # a chain of near neighbours longer than the tolerance: cut it
-        link = np.floor(within / COINCIDENT)
-        new |= np.diff(link, prepend=0.0) > 0
+    line = np.cumsum(new) - 1
+    within = (inverse_d2 / inverse_d2[first][line] - 1) / tolerance
+    if within.max() > 1:  # a chain of near neighbours longer than the tolerance: cut it
+        new[1:] |= np.diff(np.floor(within)) > 0
         first = np.flatnonzero(new)
-    if len(first) == len(d_A):
-        return hkl, multiplicity, d_A, f2
+        line = np.cumsum(new) - 1
     weighted = multiplicity * f2
     total = np.add.reduceat(multiplicity, first)
-    line = np.cumsum(new) - 1
-    by_strength = np.lexsort((-weighted[0], line))
-    strongest = by_strength[first]
-    merged = np.add.reduceat(weighted, first, axis=1) / total
-    return hkl[strongest], total, d_A[strongest], merged
+    summed = np.add.reduceat(weighted, first, axis=1)
+    highest = np.flatnonzero(weighted[0] == np.maximum.reduceat(weighted[0], first)[line])
+    strongest = np.empty_like(first)
+    strongest[line[highest[::-1]]] = highest[::-1]  # of equals the first
+    return hkl[strongest], total, inverse_d2[strongest], summed / total

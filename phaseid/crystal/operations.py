@@ -21,11 +21,12 @@ from phaseid.errors import InputError
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-# A linear function of (h, k, l) with a different value for every triple up to |index| = 1000: it
-# ranks by h + k + l, then h, then k, so that the triple ranked first among equivalents is the one
-# people write (111, 104, 110 rather than 2-10).
+# Linear functions of (h, k, l) with a different value for every triple up to |index| = 1000. The
+# triple ranked first among equivalents is the one people write: by h, then k, then l; on hexagonal
+# axes by h + k + l first (110 rather than 2-10, 012 rather than 10-2).
 _BASE = 4001
-_RANKING = np.array([_BASE**3 + _BASE**2, _BASE**3 + _BASE, _BASE**3 + 1], dtype=np.float64)
+_RANKING = np.array([_BASE**2, _BASE, 1], dtype=np.float64)
+_HEXAGONAL_RANKING = _BASE**3 + _RANKING
 MAX_INDEX = (_BASE - 1) // 4
 
 
@@ -63,7 +64,8 @@ class Operations:
     @property
     def ranks(self) -> Floats:
         """(n, 3): the product with hkl is the rank of each equivalent of hkl (up to sign)."""
-        return np.asarray(self.rotations @ _RANKING)
+        hexagonal = np.count_nonzero(self.rotations, axis=2).max() > 1
+        return np.asarray(self.rotations @ (_HEXAGONAL_RANKING if hexagonal else _RANKING))
 
 
 @lru_cache(maxsize=2048)

@@ -70,7 +70,7 @@ def _settle(fract: Floats, operations: Operations, tensor: Floats) -> NDArray[np
     steps, length_A = _steps(fract, operations, tensor)
     alike = length_A <= SAME_ATOM_A
     reach_A = SAME_ATOM_A
-    special = np.flatnonzero(alike.sum(axis=(0, 2)) > 1)
+    special = np.flatnonzero((alike & (length_A > _ON_THE_SPOT_A)).any(axis=(0, 2)))
     while len(special):
         chosen = alike[:, special]
         total = (steps[:, special] * chosen[..., None]).sum(axis=(0, 2))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass
 from functools import lru_cache
 
@@ -20,7 +21,8 @@ FINEST_D_A = 0.6
 COARSEST_D_A = 1.2
 WANTED_REFLECTIONS = 1000
 MOST_REFLECTIONS = 20_000
-_MOST_POINTS = 30_000_000
+_MOST_POINTS = 100_000_000
+_SLAB = 1 << 14  # points looked at together: they stay in the cache, and memory stays flat
 _INTEGER = 1e-3  # h·t is a multiple of 1/24; anything nearer to an integer than this is one
 
 
@@ -89,31 +91,17 @@ def _enumerate(
     cell: Cell, reciprocal: Floats, operations: Operations, d_min_A: float
 ) -> Reflections:
     domain = _domain(operations)
-    hkl, inverse_d2 = _points(cell, reciprocal, d_min_A, domain.nonnegative)
-    for axis in operations.from_primitive.T:
-        if np.count_nonzero(axis) != 1 or axis.sum() != 1:
-            phase = hkl @ axis
-            allowed = np.abs(phase - np.rint(phase)) < _INTEGER
-            hkl, inverse_d2 = hkl[allowed], inverse_d2[allowed]
-    for wall in domain.walls:
-        inside = hkl @ wall >= 0
-        hkl, inverse_d2 = hkl[inside], inverse_d2[inside]
-    ranks = domain.ranks @ hkl.T
-    own = ranks[domain.identity]
-    size = np.abs(ranks)
-    first = np.flatnonzero((own >= size).all(axis=0))
-    hkl, inverse_d2, ranks = hkl[first], inverse_d2[first], ranks[:, first]
-    alike = size[:, first] == own[first]
-    multiplicity = 2 * len(operations.rotations) // alike.sum(axis=0)
-    present = np.flatnonzero(~_absent(hkl, alike, ranks, operations))
-    order = present[np.argsort(inverse_d2[present], kind="stable")]
+    slabs = _slabs(cell, reciprocal, d_min_A, domain.nonnegative)
+    parts = [_first_of_each_set(hkl, inverse_d2, operations) for hkl, inverse_d2 in slabs]
+    hkl, inverse_d2, multiplicity = (np.concatenate(column) for column in zip(*parts, strict=True))
+    order = np.argsort(inverse_d2, kind="stable")
     return Reflections(hkl[order], inverse_d2[order], multiplicity[order], d_min_A)
 
 
-def _points(
+def _slabs(
     cell: Cell, reciprocal: Floats, d_min_A: float, nonnegative: tuple[bool, ...]
-) -> tuple[Floats, Floats]:
-    """All reciprocal lattice points but the origin with d ≥ d_min, with their 1/d²."""
+) -> Iterator[tuple[Floats, Floats]]:
+    """Yield hkl and 1/d² of all lattice points with d ≥ d_min (the origin too), h by h."""
     limit = [int(length / d_min_A * (1 + 1e-9)) for length in cell[:3]]
     counts = [n + 1 if half else 2 * n + 1 for n, half in zip(limit, nonnegative, strict=True)]
     if max(limit) > MAX_INDEX or math.prod(counts) > _MOST_POINTS:
@@ -130,16 +118,42 @@ def _points(
     k, across = k_axis[:, None], l_axis[None, :]
     plane = (g[1, 1] * k * k + g[2, 2] * across * across + 2 * g[1, 2] * k * across).ravel()
     slope = (2 * g[0, 1] * k + 2 * g[0, 2] * across).ravel()
-    inverse_d2 = (g[0, 0] * h_axis * h_axis)[:, None] + plane
-    if slope.any():
-        inverse_d2 += h_axis[:, None] * slope
-    flat = inverse_d2.ravel()
-    inside = np.flatnonzero(flat <= d_min_A**-2 * (1 + 1e-12))
-    i, rest = np.divmod(inside, len(plane))
-    j, m = np.divmod(rest, len(l_axis))
-    hkl = np.stack([h_axis[i], k_axis[j], l_axis[m]], axis=1)
-    some = hkl.any(axis=1)
-    return hkl[some], flat[inside][some]
+    furthest = d_min_A**-2 * (1 + 1e-12)
+    step = max(1, _SLAB // len(plane))
+    for start in range(0, len(h_axis), step):
+        h = h_axis[start : start + step, None]
+        inverse_d2 = (h * h * g[0, 0] + h * slope + plane).ravel()
+        inside = np.flatnonzero(inverse_d2 <= furthest)
+        i, rest = np.divmod(inside, len(plane))
+        j, m = np.divmod(rest, len(l_axis))
+        hkl = np.empty((len(inside), 3))
+        hkl[:, 0], hkl[:, 1], hkl[:, 2] = h[i, 0], k_axis[j], l_axis[m]
+        yield hkl, inverse_d2[inside]
+
+
+def _first_of_each_set(
+    hkl: Floats, inverse_d2: Floats, operations: Operations
+) -> tuple[Floats, Floats, NDArray[np.int64]]:
+    """Keep the first-ranked of each set of equivalents that is present; and count the set."""
+    domain = _domain(operations)
+    if len(domain.centring):
+        phase = domain.centring @ hkl.T
+        allowed = np.flatnonzero((np.abs(phase - np.rint(phase)) < _INTEGER).all(axis=0))
+        hkl, inverse_d2 = hkl[allowed], inverse_d2[allowed]
+    for wall in domain.walls:
+        inside = np.flatnonzero(hkl @ wall >= 0)
+        hkl, inverse_d2 = hkl[inside], inverse_d2[inside]
+    ranks = domain.ranks @ hkl.T
+    own = ranks[domain.identity]
+    size = np.abs(ranks)
+    first = np.flatnonzero((own >= size).all(axis=0) & (own > 0))
+    hkl, inverse_d2, ranks = hkl[first], inverse_d2[first], ranks[:, first]
+    alike = size[:, first] == own[first]
+    multiplicity = 2 * len(operations.rotations) // alike.sum(axis=0)
+    if len(domain.gliding):
+        present = np.flatnonzero(~_absent(hkl, alike, ranks, operations))
+        hkl, inverse_d2, multiplicity = hkl[present], inverse_d2[present], multiplicity[present]
+    return hkl, inverse_d2, multiplicity
 
 
 def _absent(
@@ -147,8 +161,6 @@ def _absent(
 ) -> NDArray[np.bool_]:
     """Which hkl a glide or screw forbids: an operation maps hkl on itself out of step."""
     gliding = _domain(operations).gliding
-    if not len(gliding):
-        return np.zeros(len(hkl), dtype=bool)
     held = alike[gliding]
     if not operations.centrosymmetric:  # the opposite of hkl is another reflection
         held = held & (ranks[gliding] > 0)
@@ -164,6 +176,7 @@ class _Domain:
     identity: int
     walls: tuple[Floats, ...]
     nonnegative: tuple[bool, ...]
+    centring: Floats  # (k, 3): lattice points that are not corners of the cell
     gliding: NDArray[np.int64]
 
 
@@ -173,9 +186,8 @@ def _domain(operations: Operations) -> _Domain:
     identity = int(np.argmax([np.array_equal(r, np.eye(3)) for r in operations.rotations]))
     own = ranks[identity]
     walls = np.concatenate([own - ranks, own + ranks])
-    nonnegative = tuple(
-        bool(np.any((walls[:, i] > 0) & (np.count_nonzero(walls, axis=1) == 1))) for i in range(3)
-    )
+    others = np.abs(walls).sum(axis=1)[:, None] - np.abs(walls)
+    nonnegative = tuple((walls > others * MAX_INDEX).any(axis=0).tolist())
     # a short list of walls that already excludes nearly everything outside, found on a sample
     sample = np.stack(np.meshgrid(*[np.arange(-4.0, 5.0)] * 3), axis=-1).reshape(-1, 3)
     sample = sample[(sample >= np.where(nonnegative, 0, -4)).all(axis=1)]
@@ -190,7 +202,9 @@ def _domain(operations: Operations) -> _Domain:
         outside = outside[~outside[:, best]]
     shift = operations.translations @ operations.to_primitive.T
     gliding = np.flatnonzero(np.abs(shift - np.rint(shift)).max(axis=1) > _INTEGER)
-    return _Domain(ranks, identity, tuple(chosen), nonnegative, gliding)
+    axes = operations.from_primitive.T
+    centring = axes[np.abs(axes - np.rint(axes)).max(axis=1) > _INTEGER]
+    return _Domain(ranks, identity, tuple(chosen), nonnegative, centring, gliding)
 
 
 def multiple_scattering_lines(

@@ -57,14 +57,12 @@ def amplitudes(kinds: Sequence[str], s2: Floats) -> Amplitudes:
     A kind is an element symbol, "D", "T", or an isotope such as "11B". Raises InputError for a
     symbol that no table holds.
     """
-    table = np.array([_gaussians(kind) for kind in kinds])
+    table, lengths = _tables(tuple(kinds))
     terms = np.exp(table[:, _WIDTHS] * -s2[:, None, None])
-    lengths = [neutron_length_fm(kind) for kind in kinds]
-    known = [length for length in lengths if length is not None]
     return Amplitudes(
         xray=np.einsum("nek,ek->ne", terms[..., :4], table[:, _XRAY]) + table[:, _CONSTANT],
         electron=np.einsum("nek,ek->ne", terms[..., 4:], table[:, _ELECTRON]),
-        neutron=np.array(known) if len(known) == len(lengths) else None,
+        neutron=lengths,
     )
 
 
@@ -96,6 +94,14 @@ def element_of(kind: str) -> gemmi.Element:
 
 
 _XRAY, _ELECTRON, _WIDTHS, _CONSTANT = slice(0, 4), slice(4, 9), slice(9, 18), 18
+
+
+@lru_cache(maxsize=4096)
+def _tables(kinds: tuple[str, ...]) -> tuple[Floats, Floats | None]:
+    lengths = [neutron_length_fm(kind) for kind in kinds]
+    known = [length for length in lengths if length is not None]
+    neutron = np.array(known) if len(known) == len(lengths) else None
+    return np.array([_gaussians(kind) for kind in kinds]), neutron
 
 
 @cache

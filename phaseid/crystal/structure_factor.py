@@ -16,13 +16,13 @@ from numpy.typing import NDArray
 from phaseid.crystal.crystal import Crystal
 from phaseid.crystal.displacement import exponents, isotropic_U_A2, quadratic_terms
 from phaseid.crystal.operations import Operations
-from phaseid.crystal.orbits import orbits
+from phaseid.crystal.orbits import Orbits, orbits
 from phaseid.crystal.reflections import Reflections, reciprocal_metric
 from phaseid.crystal.scattering import amplitudes, dispersion
 
 Floats = NDArray[np.float64]
 
-_CHUNK = 1 << 16  # phases held at once: they stay in the cache, and memory stays flat
+_CHUNK = 1 << 16  # phases held at once: larger arrays are slower to get than to fill
 _CANCELLED = 1e-6  # a sum of cosines below this part of its terms is rounding, not a wave
 
 
@@ -46,70 +46,85 @@ def squared_amplitudes(
     Without `xray_energy_eV` X-rays scatter without dispersion. A reflection in which the waves of
     all atoms cancel has exactly 0. Neutrons show nothing if the length of some atom is unknown.
     """
-    kinds = sorted({site.element for site in crystal.sites})
-    s2 = reflections.inverse_d2 / 4
-    sums, swing = _geometric_sums(crystal, operations, reflections, kinds)
-    atom = amplitudes(kinds, s2)
-    table = np.zeros((4, *atom.xray.shape))  # X-rays, their part from f″, electrons, neutrons
-    table[0], table[2] = atom.xray, atom.electron
-    if atom.neutron is not None:
-        table[3] = atom.neutron
-    if xray_energy_eV is not None:
-        real, table[1] = np.array([dispersion(kind, xray_energy_eV) for kind in kinds]).T
-        table[0] += real
-    if swing is not None:
-        table *= swing
-    waves = np.einsum("xne,pne->xpn", sums, table)
-    xray, resonant, electron, neutron = (waves * waves).sum(axis=0)
-    # h and -h differ by the sign with which f″ joins: their mean has no cross term
-    return SquaredAmplitudes(xray + resonant, electron, neutron)
+    atoms = _atoms(crystal, operations)
+    n = len(reflections.hkl)
+    out = np.empty((3, n))
+    step = max(1, min(n, _CHUNK // len(atoms.images.site)))
+    for start in range(0, n, step):
+        part = slice(start, start + step)
+        hkl, inverse_d2 = reflections.hkl[part], reflections.inverse_d2[part]
+        sums = _geometric_sums(atoms, hkl, inverse_d2)
+        out[:, part] = _intensities(atoms, sums, inverse_d2, xray_energy_eV)
+    return SquaredAmplitudes(*out)
 
 
-def _geometric_sums(
-    crystal: Crystal, operations: Operations, reflections: Reflections, kinds: list[str]
-) -> tuple[Floats, Floats | None]:
-    """Return Σ weight · cos and sin (2 or 1, n, e), and Debye-Waller factors (n, e) of each kind.
+@dataclass(frozen=True, slots=True, eq=False)
+class _Atoms:
+    """The atoms of a cell, ready for summing.
 
-    Where atoms of one kind swing differently the factors are in the sums, and None is returned.
+    `weights` (m, e) float32 spreads images over kinds of atom; `swing` (6, m) are the exponents of
+    each image if atoms of one kind swing differently, else None; `spread_A2` (e,) is the least mean
+    square displacement of each kind.
     """
-    images = orbits(crystal.cell, operations, crystal.sites)
-    index = {kind: i for i, kind in enumerate(kinds)}
-    kind_of_site = np.array([index[site.element] for site in crystal.sites])
-    kind = kind_of_site[images.site]
-    weights = np.zeros((len(kind), len(kinds)), dtype=np.float32)
-    weights[np.arange(len(kind)), kind] = images.weight
 
-    spread = isotropic_U_A2(crystal.sites, crystal.cell)
+    kinds: tuple[str, ...]
+    images: Orbits
+    centrosymmetric: bool
+    weights: NDArray[np.float32]
+    spread_A2: Floats
+    swing: Floats | None
+
+
+def _atoms(crystal: Crystal, operations: Operations) -> _Atoms:
+    sites, cell = crystal.sites, crystal.cell
+    images = orbits(cell, operations, sites)
+    kinds = sorted({site.element for site in sites})
+    kind_of_site = np.array([kinds.index(site.element) for site in sites])
+    weights = np.zeros((len(images.site), len(kinds)), dtype=np.float32)
+    weights[np.arange(len(images.site)), kind_of_site[images.site]] = images.weight
+    spread = isotropic_U_A2(sites, cell)
     least = np.full(len(kinds), np.inf)
     np.minimum.at(least, kind_of_site, spread)
-    alike = np.array_equal(least[kind_of_site], spread) and not any(
-        site.u_aniso_A2 for site in crystal.sites
-    )
-    factors = np.exp(reflections.inverse_d2[:, None] * (-2 * math.pi**2 * least))
-    own = None
-    if not alike:
-        own = exponents(
-            crystal.sites, crystal.cell, reciprocal_metric(crystal.cell), operations, images
-        )
-    sums = np.empty((1 if operations.centrosymmetric else 2, *factors.shape))
-    step = max(1, min(len(factors), _CHUNK // len(kind)))
-    turns, whole = np.empty((2, step, len(kind)))
-    phase, terms = np.empty((2, step, len(kind)), dtype=np.float32)
-    for start in range(0, len(factors), step):
-        hkl = reflections.hkl[start : start + step]
-        n = len(hkl)
-        np.matmul(hkl, images.fract.T, out=turns[:n])
-        np.rint(turns[:n], out=whole[:n])
-        turns[:n] -= whole[:n]
-        np.multiply(turns[:n], 2 * math.pi, out=phase[:n], casting="same_kind")
-        swing = None
-        if own is not None:
-            swing = np.exp((quadratic_terms(hkl) @ own).astype(np.float32))
-        for wave, total in zip((np.cos, np.sin), sums, strict=False):
-            wave(phase[:n], out=terms[:n])
-            if swing is not None:
-                terms[:n] *= swing
-            total[start : start + n] = terms[:n] @ weights
-    noise = weights.sum(axis=0) * (1.0 if alike else factors) * _CANCELLED
-    sums[np.abs(sums) < noise] = 0.0
-    return sums, factors if alike else None
+    swing = None
+    if any(site.u_aniso_A2 for site in sites) or not np.array_equal(least[kind_of_site], spread):
+        swing = exponents(sites, cell, reciprocal_metric(cell), operations, images)
+    return _Atoms(tuple(kinds), images, operations.centrosymmetric, weights, least, swing)
+
+
+def _geometric_sums(atoms: _Atoms, hkl: Floats, inverse_d2: Floats) -> Floats:
+    """Return Σ weight · swing · cos, and sin without an inversion centre, (1 or 2, n, e)."""
+    turns = hkl @ atoms.images.fract.T
+    turns -= np.rint(turns)
+    phase = np.multiply(turns, 2 * math.pi, dtype=np.float32, casting="same_kind")
+    factors = np.exp(inverse_d2[:, None] * (-2 * math.pi**2 * atoms.spread_A2))
+    swing = None
+    if atoms.swing is not None:
+        swing = np.exp((quadratic_terms(hkl) @ atoms.swing).astype(np.float32))
+    sums = np.empty((1 if atoms.centrosymmetric else 2, *factors.shape))
+    for wave, total in zip((np.cos, np.sin), sums, strict=False):
+        terms = wave(phase)
+        if swing is not None:
+            terms *= swing
+        total[:] = terms @ atoms.weights
+    if swing is None:
+        sums *= factors
+    sums[np.abs(sums) < atoms.weights.sum(axis=0) * factors * _CANCELLED] = 0.0
+    return sums
+
+
+def _intensities(
+    atoms: _Atoms, sums: Floats, inverse_d2: Floats, xray_energy_eV: float | None
+) -> Floats:
+    """Return |F|² for X-rays, electrons, neutrons, (3, n)."""
+    amplitude = amplitudes(atoms.kinds, inverse_d2 / 4)
+    table = np.zeros((4, *amplitude.xray.shape))  # X-rays, electrons, neutrons, and f″
+    table[0], table[1] = amplitude.xray, amplitude.electron
+    if amplitude.neutron is not None:
+        table[2] = amplitude.neutron
+    if xray_energy_eV is not None:
+        real, table[3] = np.array([dispersion(kind, xray_energy_eV) for kind in atoms.kinds]).T
+        table[0] += real
+    waves = np.einsum("xne,pne->xpn", sums, table)
+    f2 = (waves * waves).sum(axis=0)
+    f2[0] += f2[3]  # h and -h differ by the sign with which f″ joins: no cross term in their mean
+    return np.asarray(f2[:3])
