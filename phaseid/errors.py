@@ -43,7 +43,9 @@ class InputError(PhaseidError):
         if line is not None:
             where = f"{where} line {line}".strip()
         message = f"{where}: {what}" if where else what
-        super().__init__(message if remedy is None else f"{message}. {remedy}")
+        if remedy is not None:
+            message += remedy if message.endswith("\n") else f". {remedy}"
+        super().__init__(message)
 
 
 class CifError(InputError):

@@ -26,6 +26,7 @@ STANDING = (
     "A ring match is evidence, not a certified determination. For decisions on health, safety or "
     "law use an accredited laboratory and the local codes."
 )
+SHOWN_ALIKE = 8
 VERDICTS = {
     "identified": "identified (one answer holds at least 0.9 of the probability)",
     "ambiguous": "ambiguous (no answer reaches a probability of 0.9)",
@@ -252,12 +253,15 @@ def _phase(page: _Page, part: PhaseAnswer) -> None:
         page.item(f"About the entry: {finding.message}")
     if part.indistinguishable:
         page.item("These rings cannot tell it from:")
-        for other in part.indistinguishable:
+        for other in part.indistinguishable[:SHOWN_ALIKE]:
             page.item(
                 f"{phase_text(other)}, {safe(other.space_group_symbol)}, "
                 f"{cell_text(other.cell)}; {source_text(other)}",
                 indent="    ",
             )
+        more = len(part.indistinguishable) - SHOWN_ALIKE
+        if more > 0:
+            page.item(f"and {more} more; --json lists them all", indent="    ")
     if part.separators:
         page.item("What would separate them:")
         for separator in part.separators:

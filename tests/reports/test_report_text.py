@@ -113,6 +113,16 @@ def test_a_structure_type_is_offered(answer: Identification) -> None:
     assert "rock salt (as in aluminium (Al)) with a = 4.4400 ± 0.0100 Å" in as_text(found)
 
 
+def test_a_long_group_is_cut_short(answer: Identification) -> None:
+    best = answer.hypotheses[0]
+    part = replace(best.phases[0], indistinguishable=best.phases[0].indistinguishable * 50)
+    best = replace(best, phases=(part, *best.phases[1:]))
+    text = as_text(replace(answer, hypotheses=(best,)))
+    assert "50 other entries, such as silver (Ag)" in " ".join(text.split())
+    assert "and 42 more; --json lists them all" in text
+    assert text.count("silver (Ag), Fm-3m") == 8
+
+
 def test_several_patterns_are_told_apart(answer: Identification) -> None:
     best = answer.hypotheses[0]
     both = replace(
