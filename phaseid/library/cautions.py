@@ -48,16 +48,15 @@ def _rules() -> tuple[_Rule, ...]:
 
 
 def cautions_for(
-    name: str, formula: str, elements: Sequence[str], space_group_number: int
+    name: str, formula_key: str, elements: Sequence[str], space_group_number: int
 ) -> tuple[str, ...]:
     """Return the safety sentences for a phase, each once, in the order of the rules.
 
-    They remind of usual practice and never replace local codes.
+    `formula_key` is its `composition_key`. The sentences remind of usual practice and never replace
+    local codes.
     """
-    words = name_key(name)
-    composition = next(iter(formula_keys(formula)), "")
-    held = frozenset(map(element_key, elements))
+    words, held = name_key(name), frozenset(map(element_key, elements))
     fitting = (
-        rule.caution for rule in _rules() if rule.fits(words, composition, held, space_group_number)
+        rule.caution for rule in _rules() if rule.fits(words, formula_key, held, space_group_number)
     )
     return tuple(dict.fromkeys(fitting))

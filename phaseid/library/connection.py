@@ -39,10 +39,12 @@ def told(path: Path) -> Iterator[None]:
 
 def _plain_words(path: Path, error: Exception) -> str:
     text = str(error)
-    if "readonly" in text or isinstance(error, PermissionError):
+    if "readonly" in text:
         return (
             f"{path}: the library cannot be written. Check the permissions, or use --library FILE."
         )
+    if isinstance(error, PermissionError):
+        return f"{path}: permission denied. Check the permissions, or use --library FILE."
     if "full" in text or getattr(error, "errno", None) == errno.ENOSPC:
         return f"{path}: the disk is full. What was added is kept; free some space and add again."
     if "locked" in text or "busy" in text:
@@ -58,15 +60,16 @@ def _plain_words(path: Path, error: Exception) -> str:
 
 def check_file(path: Path) -> None:
     """Raise LibraryError unless `path` is a SQLite file (its schema is not looked at)."""
-    if not path.exists():
-        raise LibraryError(
-            f"{path}: there is no library. Check the name, or make one: "
-            f"phaseid library add FILES --library {path}"
-        )
-    if path.is_dir():
-        raise LibraryError(f"{path}: this is a folder, not a library file. {_ANOTHER}")
-    with told(path), path.open("rb") as file:
-        head = file.read(len(_MAGIC))
+    with told(path):
+        if not path.exists():
+            raise LibraryError(
+                f"{path}: there is no library. Check the name, or make one: "
+                f"phaseid library add FILES --library {path}"
+            )
+        if path.is_dir():
+            raise LibraryError(f"{path}: this is a folder, not a library file. {_ANOTHER}")
+        with path.open("rb") as file:
+            head = file.read(len(_MAGIC))
     if head != _MAGIC:
         raise LibraryError(f"{path}: this is not a library of phaseid. {_ANOTHER}")
 

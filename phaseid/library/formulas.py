@@ -22,6 +22,7 @@ SYMBOLS = (
 ATOMIC_NUMBER = {symbol: z for z, symbol in enumerate(SYMBOLS, start=1)} | {"D": 1, "T": 1}
 
 _SUBSCRIPTS = str.maketrans("₀₁₂₃₄₅₆₇₈₉", "0123456789")
+_APART = re.compile(r"[^\w.]|_")
 _AMOUNT = re.compile(r"\d+(?:\.\d*)?|\.\d+")
 _GREEK = {
     letter: unicodedata.name(letter).rsplit(" ", 1)[-1].lower()
@@ -112,9 +113,9 @@ def formula_keys(text: str, *, any_case: bool = False) -> list[str]:
 
 def name_key(text: str) -> str:
     """Return a name without case, accents, punctuation: "α-Al₂O₃" → "alpha al2o3"."""
-    spelled = "".join(f" {_GREEK[c]} " if c in _GREEK else c for c in text.casefold())
-    plain = unicodedata.normalize("NFKD", spelled)
-    kept = "".join(
-        c if c.isalnum() or c == "." else " " for c in plain if not unicodedata.combining(c)
-    )
-    return " ".join(kept.split())
+    plain = text.casefold()
+    if not plain.isascii():
+        spelled = "".join(f" {_GREEK[c]} " if c in _GREEK else c for c in plain)
+        letters = unicodedata.normalize("NFKD", spelled)
+        plain = "".join(c for c in letters if not unicodedata.combining(c))
+    return " ".join(_APART.sub(" ", plain).split())

@@ -19,7 +19,7 @@ from phaseid.library.records import findings_from_json
 PHASE_COLUMNS = (
     "phase_id, name, formula, elements, space_group_number, space_group_symbol, "
     "a_A, b_A, c_A, alpha_deg, beta_deg, gamma_deg, volume_A3, density_g_cm3, "
-    "source_database, source_id, source_file, source_reference, findings, quality"
+    "source_database, source_id, source_file, source_reference, findings, quality, formula_key"
 )
 
 _SHOWN_CHOICES = 12
@@ -69,7 +69,7 @@ def phase_from_row(row: Sequence[Any]) -> Phase:
         density_g_cm3=row[13],
         source=Source(*row[14:18]),
         findings=findings_from_json(row[18]),
-        cautions=cautions_for(row[1], row[2], elements, row[4]),
+        cautions=cautions_for(row[1], row[20], elements, row[4]),
         quality=row[19],
     )
 
@@ -98,14 +98,18 @@ def find(conn: sqlite3.Connection, text: str) -> list[Hit]:
             note(Match.FORMULA_ANY_CASE, by_formula, formula_key)
     if key and not literal:  # who writes a formula does not mean a name that begins with it
         note(Match.NAME_STARTS, by_name + "key >= ? AND key < ?", key, key + _LAST)
-        words = [word for word in key.split() if len(word) >= _TRIGRAM]
-        if words:
-            held = " AND ".join(f'"{word}"' for word in words)
+        words = key.split()
+        long = [f'"{word}"' for word in words if len(word) >= _TRIGRAM]
+        short = [word for word in words if len(word) < _TRIGRAM]  # the index does not know them
+        if long:
             note(
                 Match.NAME_HOLDS,
                 "SELECT phase FROM label_fts JOIN label ON label.id = label_fts.rowid "
-                "WHERE label_fts MATCH ? AND kind = 'name'",
-                held,
+                "WHERE label_fts MATCH ? AND kind = 'name'"
+                + " AND instr(label.key, ?) > 0"
+                * len(short),
+                " AND ".join(long),
+                *short,
             )
     hits = [
         Hit(matches[row[0]], phase_from_row(row[1:])) for row in _rows_by_id(conn, sorted(matches))
