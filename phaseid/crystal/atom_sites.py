@@ -61,7 +61,9 @@ def read_sites(block: Block, cell: Cell, formula: frozenset[str]) -> ReadSites |
     labels = [text[:_MAX_LABEL] for text in _padded(block.strings("_atom_site_label"), rows)]
     types = [text[:_MAX_LABEL] for text in _padded(block.strings("_atom_site_type_symbol"), rows)]
     flags = _padded(block.column("_atom_site_calc_flag"), rows)
-    occupancies = block.column("_atom_site_occupancy") or None
+    occupancies = block.column("_atom_site_occupancy")
+    if len(occupancies) not in (0, rows):
+        return SiteProblem("bad_occupancy", "the occupancies do not belong to the listed sites")
     u_aniso = _anisotropic(block, cell)
     sites: list[Site] = []
     unknown: list[Site] = []
@@ -98,7 +100,7 @@ def read_sites(block: Block, cell: Cell, formula: frozenset[str]) -> ReadSites |
                 "cell; they may be in Å",
             )
         occupancy = 1.0
-        if occupancies is not None:
+        if occupancies:
             raw_occupancy = occupancies[row]
             occupancy = as_number(raw_occupancy)
             if not math.isfinite(occupancy):

@@ -128,7 +128,7 @@ def _read_block(block: Block, file: str, findings: tuple[Finding, ...]) -> Cryst
     structure = build(cell, symmetry, sites, stated)
     if isinstance(structure, StructureProblem):
         raise _Refusal(structure.code, structure.reason)
-    reduced_formula, z = reduced(structure.contents, stated.z)
+    reduced_formula, z = reduced(structure.contents, structure.units)
     return Crystal(
         cell=cell,
         space_group_number=structure.symmetry.number,

@@ -68,7 +68,7 @@ def reduced(contents: Mapping[str, float], z_hint: float | None = None) -> tuple
     """Return the reduced formula in Hill order, and how many of them the cell holds.
 
     Whole numbers of atoms are divided by their common divisor. Otherwise the cell holds `z_hint`
-    formula units (the source's Z), or, without one, the divisor of the whole numbers among them.
+    formula units, or, without one, the common divisor of the whole numbers among them.
     """
     kept = {el: n for el, n in contents.items() if n > 1e-6}
     whole = [round(n) for n in kept.values() if abs(n - round(n)) < 1e-3 and round(n) > 0]

@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-import warnings
 from collections.abc import Sequence
 
 from phaseid.crystal.crystal import Finding, Site
 from phaseid.crystal.metric import Cell
+from phaseid.crystal.spglib_questions import group_of_atoms
 
-MAX_SITES = 200  # spglib needs some milliseconds here, seconds for thousands of atoms
+MAX_SITES = 200  # some milliseconds here, seconds for thousands of atoms
 _TOLERANCE_A = 0.01
 
 
@@ -20,28 +20,18 @@ def found_symmetry(cell: Cell, sites: Sequence[Site]) -> Finding | None:
     """
     if not 2 <= len(sites) <= MAX_SITES or any(site.occupancy != 1.0 for site in sites):
         return None
-    import numpy as np
-    import spglib
-
-    from phaseid.crystal.metric import metric_tensor
-
-    lattice = np.linalg.cholesky(metric_tensor(cell))  # rows a, b, c
     kinds = {element: k for k, element in enumerate(sorted({site.element for site in sites}), 1)}
-    atoms = (
-        lattice.tolist(),
+    found = group_of_atoms(
+        cell,
         [site.fract for site in sites],
         [kinds[site.element] for site in sites],
+        _TOLERANCE_A,
     )
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore")
-        try:
-            symbol = spglib.get_spacegroup(atoms, symprec=_TOLERANCE_A)
-        except Exception:
-            return None
-    if not symbol or symbol.startswith("P1 "):
+    if found is None or found[0] == 1:
         return None
+    number, symbol = found
     return Finding(
         "higher_symmetry",
-        f"the cell is given without symmetry (P 1); its atoms have that of {symbol}, hkl refer to "
-        "the cell as given",
+        f"the cell is given without symmetry (P 1); its atoms have that of {symbol} ({number}), "
+        "hkl refer to the cell as given",
     )

@@ -7,6 +7,8 @@ from functools import lru_cache
 
 import gemmi
 
+from phaseid.crystal.spglib_questions import full_symbols
+
 _MAX_LENGTH = 80
 _ORIGIN_WORDS = re.compile(r"origin\s*(?:choice|no\.?)?\s*([12])", re.IGNORECASE)
 _REMARK = re.compile(r"\{[^}]*\}|\([^)]*[^)\d][^)]*\)")
@@ -38,12 +40,11 @@ def groups_named(symbol: str, setting: str = "") -> tuple[list[gemmi.SpaceGroup]
     if words:
         extension = words.group(1)
     bare = _REMARK.sub(" ", plain).strip()
-    found = _lookup(bare)
-    if not found:
-        suffix = _SUFFIX.match(bare)
-        if suffix:
-            bare, extension = suffix.group(1), _SUFFIX_MEANING[suffix.group(2).upper()]
-            found = _lookup(bare)
+    found = [] if ":" in bare else _lookup(bare)
+    suffix = None if found else _SUFFIX.match(bare)
+    if suffix:
+        extension = _SUFFIX_MEANING[suffix.group(2).upper()]
+        found = _lookup(suffix.group(1))
     if extension:
         found = [g for g in found if g.ext.strip("\0 ") in ("", extension)] or found
     known = _squeeze(plain.replace(":", "")) in _spellings(found)
@@ -103,15 +104,11 @@ def _table() -> dict[str, list[gemmi.SpaceGroup]]:
 @lru_cache(maxsize=1)
 def _full_symbols() -> dict[str, list[gemmi.SpaceGroup]]:
     """Full symbols such as "F 41/d -3 2/m", by way of spglib's list of Hall symbols."""
-    import spglib
-
     table: dict[str, list[gemmi.SpaceGroup]] = {}
-    for hall_number in range(1, 531):
-        kind = spglib.get_spacegroup_type(hall_number)
-        group = kind and gemmi.find_spacegroup_by_ops(gemmi.symops_from_hall(kind.hall_symbol))
-        if kind and group:
-            key = _squeeze(kind.international_full.replace("_", ""))
-            table.setdefault(key, []).append(group)
+    for hall, symbol in full_symbols():
+        group = gemmi.find_spacegroup_by_ops(gemmi.symops_from_hall(hall))
+        if group:
+            table.setdefault(_squeeze(symbol.replace("_", "")), []).append(group)
     for groups in table.values():
         groups.sort(key=lambda g: not g.is_reference_setting())
     return table

@@ -13,7 +13,7 @@ HIGH_TEMPERATURE_K = 373.15
 SOURCE_DATABASE_TAG = "_phaseid_source_database"  # for databases without a tag of their own
 SOURCE_ID_TAG = "_phaseid_source_id"
 REFERENCE_TAG = "_citation_special_details"
-_KPA_TO_GPA = 1e-6
+_KPA_PER_GPA = 1e6
 _MAX_NAME = 200
 _NAME_TAGS = (
     "_chemical_name_mineral",
@@ -31,7 +31,7 @@ _DATABASES = (
     ("OQMD", ("_oqmd_id",)),
 )
 _COD_NUMBER = re.compile(r"[1-9]\d{6}$")
-_MP_NAME = re.compile(r"(?:.*\D)?\b(mp[-_]\d+)(?:\D.*)?$", re.IGNORECASE)
+_MP_NAME = re.compile(r"(?:^|[^a-z])(mp[-_]\d+)(?![a-z\d])", re.IGNORECASE)
 _PRESSURE = re.compile(r"\bP\s*=\s*(\d+\.?\d*)\s*(GPa|kbars?|kb|MPa)\b", re.IGNORECASE)
 _TEMPERATURE = re.compile(r"\bT\s*=\s*(-?\d+\.?\d*)\s*(?:deg\.?\s*|degrees?\s*|°\s*)?(C|K)\b")
 _GPA = {"gpa": 1.0, "kbar": 0.1, "kbars": 0.1, "kb": 0.1, "mpa": 0.001}
@@ -60,7 +60,7 @@ def source(block: Block, file: str) -> Source:
     number = block.text(SOURCE_ID_TAG)
     if number:
         return Source(block.text(SOURCE_DATABASE_TAG) or "file", number, file, citation(block))
-    computed = _MP_NAME.match(block.name)
+    computed = _MP_NAME.search(block.name)
     if computed:
         return Source("Materials Project", computed.group(1), file, citation(block))
     return Source("file", "", file, citation(block))
@@ -89,7 +89,7 @@ def conditions(block: Block) -> tuple[float | None, float | None, tuple[Finding,
     """
     temperature = block.number("_diffrn_ambient_temperature", "_cell_measurement_temperature")
     kilopascal = block.number("_diffrn_ambient_pressure", "_cell_measurement_pressure")
-    pressure = None if kilopascal is None else kilopascal * _KPA_TO_GPA
+    pressure = None if kilopascal is None else kilopascal / _KPA_PER_GPA
     title = block.text("_publ_section_title")
     stated = _PRESSURE.search(title)
     if pressure is None and stated:
@@ -124,6 +124,6 @@ def _theoretical(block: Block) -> bool:
     method = block.text("_cod_struct_determination_method", "_exptl_crystal_type_of_structure")
     return (
         "theor" in method.lower()
-        or _MP_NAME.match(block.name) is not None
+        or _MP_NAME.search(block.name) is not None
         or block.has_prefix("_tcod_", "_dft_", "_aflow_", "_oqmd_")
     )

@@ -6,6 +6,7 @@ unchanged by the operations, and the contents should fit formula and Z.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
@@ -52,13 +53,19 @@ class StructureProblem:
 
 @dataclass(frozen=True, slots=True)
 class Structure:
-    """A structure in one symmetry; `contents` are atoms per cell, `score` its fit to the source."""
+    """A structure in one symmetry.
+
+    `contents` are atoms per cell, `units` the formula units they make up, `score` the fit to what
+    the source states, `merged` whether sites repeat each other in this symmetry.
+    """
 
     symmetry: Symmetry
     sites: tuple[Site, ...]
     contents: dict[str, float]
     findings: tuple[Finding, ...]
+    units: float
     score: int
+    merged: bool
 
 
 def build(
@@ -86,7 +93,7 @@ def build(
         if symmetry.last_resort and result.score < _BEST:
             continue
         tried.append(result)
-        if result.score == _BEST and not symmetry.guess:
+        if result.score == _BEST and not symmetry.guess and not _only_identity(symmetry, stated):
             break
     if not tried:
         assert problem is not None
@@ -101,6 +108,15 @@ def _chosen(tried: Sequence[Structure], stated: Stated) -> Structure | Structure
     best = max(s.score for s in tried)
     leading = [s for s in tried if s.score == best]
     chosen = leading[0]
+    contradicted = len(tried) > 1 and _only_identity(tried[0].symmetry, stated)
+    if contradicted and tried[1].merged:
+        return tried[0]  # the atoms listed repeat each other under the symbol: the whole cell is
+    if contradicted:
+        return StructureProblem(
+            "symmetry_ambiguous",
+            f"only x,y,z is listed beside the symbol {tried[1].symmetry.symbol}; no formula with Z "
+            "tells whether the atoms of the whole cell are listed",
+        )
     if len(leading) == 1:
         return chosen
     symbols = " or ".join(s.symmetry.symbol for s in leading)
@@ -117,13 +133,12 @@ def _chosen(tried: Sequence[Structure], stated: Stated) -> Structure | Structure
             f"{chosen.symmetry.symbol} is assumed",
         )
         return replace(chosen, findings=(*chosen.findings, note))
-    if len(chosen.symmetry.operations) == 1 and (stated.formula is None or stated.z is None):
-        return StructureProblem(
-            "symmetry_ambiguous",
-            f"only x,y,z is listed beside the symbol {leading[1].symmetry.symbol}; no formula with "
-            "Z tells whether the atoms of the whole cell are listed",
-        )
     return chosen
+
+
+def _only_identity(symmetry: Symmetry, stated: Stated) -> bool:
+    """Tell whether only x,y,z is listed and the source does not say what the cell holds."""
+    return len(symmetry.operations) == 1 and (stated.formula is None or stated.z is None)
 
 
 def _structure(
@@ -182,14 +197,16 @@ def _structure(
     if len(symmetry.operations) == 1:
         higher = found_symmetry(cell, [site for site, _ in known])
         findings += [higher] if higher else []
-    score, judged = _judge(contents, volume, stated)
+    score, scale, judged = _judge(contents, volume, stated)
     sound = placed.shift_A.max() < ROUNDING_A and not any(n.code == "contact" for n in notes)
     return Structure(
         symmetry,
         tuple(site for site, _ in known),
         contents,
         (*findings, *judged),
+        stated.z or scale or float(math.gcd(*(count for _, count in known))),
         score + sound,
+        any(note.code == "overlapping_atoms" for note in notes),
     )
 
 
@@ -243,10 +260,12 @@ def _shares_of_unknown(
 
 def _judge(
     contents: Mapping[str, float], volume: float, stated: Stated
-) -> tuple[int, list[Finding]]:
-    """Return a score, 1 for the formula's ratios and 1 for its Z, and what does not agree."""
+) -> tuple[int, float, list[Finding]]:
+    """Return a score, 1 for the formula's ratios and 1 for its Z; formula units; what disagrees."""
     findings: list[Finding] = []
     score = 2
+    scale = 0.0
+    wrong: list[str] = []
     held = _without_deuterium(contents)
     if stated.formula is not None:
         formula = _without_deuterium(stated.formula)
@@ -280,11 +299,14 @@ def _judge(
                 )
             )
         hydrogen = formula.get("H", 0.0) * (stated.z if wrong and stated.z else scale)
-        if hydrogen > 0 and held.get("H", 0.0) < (1 - _TOLERANCE) * hydrogen:
+        located = held.get("H", 0.0)
+        if located and abs(located - hydrogen) > _TOLERANCE * hydrogen and not wrong:
+            score -= 1
+        if hydrogen > 0 and located < (1 - _TOLERANCE) * hydrogen:
             findings.append(
                 Finding(
                     "hydrogen_missing",
-                    f"{held.get('H', 0.0):.4g} of {hydrogen:.4g} hydrogen atoms in the cell have "
+                    f"{located:.4g} of {hydrogen:.4g} hydrogen atoms in the cell have "
                     "positions; neutron intensities suffer most",
                 )
             )
@@ -305,7 +327,7 @@ def _judge(
                     f"{stated.density_g_cm3:g} g/cm³",
                 )
             )
-    return score, findings
+    return max(score, 0), 0.0 if wrong else scale, findings
 
 
 def _without_deuterium(amounts: Mapping[str, float]) -> dict[str, float]:

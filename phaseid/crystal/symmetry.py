@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from phaseid.crystal.crystal import Finding
 from phaseid.crystal.hermann_mauguin import groups_named, short_symbol
 from phaseid.crystal.metric import Cell, metric_tensor
+from phaseid.crystal.spglib_questions import group_type
 
 MAX_OPERATIONS = 1536  # 192 in the largest conventional cell; eightfold cells still pass
 _METRIC_TOLERANCE = 0.01
@@ -274,13 +275,8 @@ def _from_triplets(items: SymmetryItems, named: tuple[Symmetry, ...]) -> Symmetr
 
 def _type_of_untabulated(operations: list[gemmi.Op]) -> tuple[int, str]:
     """Return number and standard short symbol of a group in a setting that no table lists."""
-    import spglib
-
     rotations, translations = _integer_arrays(operations)
-    found = spglib.get_spacegroup_type_from_symmetry(rotations, translations / _DEN)
-    if found is None:  # no crystallographic group; the caller has checked closure
-        return 1, "a group of no known type"
-    return int(found.number), str(found.international_short)
+    return group_type(rotations, translations / _DEN) or (1, "a group of no known type")
 
 
 def _integer_arrays(
