@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import numpy as np
@@ -23,6 +23,7 @@ WANTED_REFLECTIONS = 1000
 MOST_REFLECTIONS = 20_000
 _MOST_POINTS = 100_000_000
 _SLAB = 1 << 14  # points looked at together: they stay in the cache, and memory stays flat
+_FIRST_BEAMS = 30  # of the longest d: strong enough to be scattered again
 _INTEGER = 1e-3  # h·t is a multiple of 1/24; anything nearer to an integer than this is one
 
 
@@ -208,40 +209,28 @@ def _domain(operations: Operations) -> _Domain:
 
 
 def multiple_scattering_lines(
-    crystal: Crystal, d_min_A: float = FINEST_D_A
+    crystal: Crystal, d_min_A: float | None = None
 ) -> tuple[NDArray[np.int32], Floats]:
     """Return hkl (n, 3) and d (n,) in Å, falling, of lines that only multiple scattering can show.
 
     These are reflections that a glide plane or screw axis forbids and the lattice allows, and that
     are the sum of two allowed ones, so that electrons scattered twice can put a ring there (double
-    diffraction: 200 of silicon, 00l with l odd of a hexagonal close-packed metal). One hkl per d.
+    diffraction: 200 of silicon, 00l with l odd of a hexagonal close-packed metal). One hkl per d;
+    the range is that of `unique_reflections`.
     """
     operations = read_operations(crystal.operations)
-    without_glides = Operations(
-        rotations=operations.rotations,
-        translations=np.zeros_like(operations.translations),
-        origin=operations.origin,
-        centrings=operations.centrings,
-        to_primitive=operations.to_primitive,
-        from_primitive=operations.from_primitive,
-        centrosymmetric=operations.centrosymmetric,
-        order=operations.order,
-        products=operations.products,
-    )
-    every = unique_reflections(crystal.cell, without_glides, d_min_A)
     allowed = unique_reflections(crystal.cell, operations, d_min_A)
-    known = {tuple(h) for h in allowed.hkl.tolist()}
-    forbidden = np.array(
-        [i for i, h in enumerate(every.hkl.tolist()) if tuple(h) not in known], int
-    )
-    signed = np.concatenate([operations.rotations, -operations.rotations])
-    beams = np.unique((allowed.hkl @ signed).reshape(-1, 3), axis=0)
-    beam_set = {tuple(h) for h in beams.tolist()}
-    reachable = [
-        i for i in forbidden if any(tuple(h) in beam_set for h in (every.hkl[i] - beams).tolist())
-    ]
-    hkl, d_A = every.hkl[reachable].astype(np.int32), every.inverse_d2[reachable] ** -0.5
-    if len(d_A):
-        new = np.concatenate([[True], d_A[1:] < d_A[:-1] * (1 - 2e-5)])
-        hkl, d_A = hkl[new], d_A[new]
-    return hkl, d_A
+    straight = replace(operations, translations=np.zeros_like(operations.translations))
+    every = unique_reflections(crystal.cell, straight, allowed.d_min_A)
+    code = np.array([(2 * MAX_INDEX + 1) ** 2, 2 * MAX_INDEX + 1, 1], dtype=np.float64)
+    forbidden = ~np.isin(every.hkl @ code, allowed.hkl @ code)
+    hkl, d_A = every.hkl[forbidden], every.inverse_d2[forbidden] ** -0.5
+    both = np.concatenate([operations.rotations, -operations.rotations])
+    beams = (allowed.hkl @ both).reshape(-1, 3)
+    first = (allowed.hkl[:_FIRST_BEAMS] @ both).reshape(-1, 3)
+    codes = beams @ code
+    reached = np.array([np.isin((h - first) @ code, codes).any() for h in hkl], dtype=bool)
+    hkl, d_A = hkl[reached], d_A[reached]
+    new = np.ones(len(d_A), dtype=bool)
+    new[1:] = d_A[1:] < d_A[:-1] * (1 - 2e-5)
+    return hkl[new].astype(np.int32), d_A[new]

@@ -99,6 +99,25 @@ def test_coincident_lines_are_one_line() -> None:
     assert tuple(lines.hkl[index]) == (5, 1, 1)
 
 
+def test_a_chain_of_near_lines_is_cut_where_it_outgrows_the_tolerance() -> None:
+    """100, 010, 001 of a nearly cubic cell, 1.2e-5 apart: two are one line, all three are not."""
+    cell = (4.0, 4.0 * (1 + 1.2e-5), 4.0 * (1 + 2.4e-5), 90.0, 90.0, 90.0)
+    lines = compute_lines(crystal("P m m m", cell, [Site("a", "Po", 0, (0, 0, 0), 1.0)]))
+    first = lines.d_A > 3.9
+    assert first.sum() == 2
+    assert lines.multiplicity[first].sum() == 6
+
+
+def test_equal_spacings_of_unlike_indices_sum_their_intensity() -> None:
+    """333 and 511 of silicon: the merged |F|² is the mean by multiplicity (arithmetic)."""
+    silicon = prototype("diamond", ("Si",), (5.4309,) * 3 + (90.0,) * 3)
+    lines = compute_lines(silicon, xray_energy_eV=None)
+    index = int(np.argmin(np.abs(lines.d_A - 5.4309 / math.sqrt(27))))
+    f2 = plain_sum(silicon, np.array([[3, 3, 3], [5, 1, 1]]), None)
+    found = lines.f2_xray[index], lines.f2_electron[index], lines.f2_neutron[index]
+    np.testing.assert_allclose(found, (8 * f2[:, 0] + 24 * f2[:, 1]) / 32, rtol=1e-5)
+
+
 @pytest.mark.parametrize("forbidden", [(2, 0, 0), (2, 2, 2), (4, 2, 0), (4, 4, 2)])
 def test_diamond_has_neither_glide_nor_position_absences(forbidden: tuple[int, int, int]) -> None:
     """Int. Tables A, group 227, position 8a: h + k + l = 4n for even indices."""

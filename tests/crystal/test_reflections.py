@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from known_crystals import crystal, prototype
+from known_crystals import PROTOTYPES, crystal, prototype
 
 from phaseid.crystal.crystal import Site
 from phaseid.crystal.operations import read_operations
@@ -137,6 +137,26 @@ def test_extinction_rules_of_the_international_tables(symbol: str, rule) -> None
                     image = [tuple(np.array([h, k, m]) @ r) for r in rotations]
                     allowed = all(rule(*i) for i in image)
                     assert ((h, k, m) in listed) == allowed, (symbol, h, k, m)
+
+
+def test_indices_are_written_as_people_write_them() -> None:
+    """NBS sheets of corundum, quartz, silicon and tenorite (published_patterns.json)."""
+    written = {
+        "corundum": (
+            (4.759, 4.759, 12.99, 90, 90, 120),
+            {(0, 1, 2), (1, 0, 4), (1, 1, 0), (1, 1, 3)},
+        ),
+        "quartz": (
+            (4.913, 4.913, 5.405, 90, 90, 120),
+            {(1, 0, 0), (1, 0, 1), (1, 1, 0), (1, 0, 2)},
+        ),
+        "diamond": ((5.43, 5.43, 5.43, 90, 90, 90), {(1, 1, 1), (2, 2, 0), (3, 1, 1), (3, 3, 1)}),
+        "tenorite": ((4.684, 3.425, 5.129, 90, 99.47, 90), {(1, 1, 0), (0, 0, 2), (1, 1, 1)}),
+    }
+    for name, (cell, wanted) in written.items():
+        operations = read_operations(crystal(PROTOTYPES[name][0], cell, []).operations)
+        found = unique_reflections(cell, operations, 1.2)
+        assert wanted <= {tuple(h) for h in found.hkl.astype(int).tolist()}, name
 
 
 def test_range_widens_until_about_a_thousand_reflections_but_ends_between_0_6_and_1_2() -> None:
