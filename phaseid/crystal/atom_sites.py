@@ -7,12 +7,14 @@ from collections import Counter
 from dataclasses import dataclass
 
 import gemmi
+import numpy as np
 
 from phaseid.crystal.cif_text import Block, parse_number
 from phaseid.crystal.crystal import Finding, Site
 from phaseid.crystal.elements import species
 from phaseid.crystal.metric import Cell, metric_tensor
 
+Tensor = tuple[float, float, float, float, float, float]
 _MAX_LABEL = 60
 MAX_SITES = 20_000
 _EIGHT_PI_SQUARED = 8 * math.pi**2
@@ -117,7 +119,8 @@ def read_sites(block: Block, cell: Cell, formula: frozenset[str]) -> ReadSites |
                 continue
         if kind.reading:
             notes.add(kind.reading, f"{label} as {kind.element}")
-        tensor = u_aniso.get(label)
+        tensors = u_aniso.get(label)
+        tensor = tensors.pop(0) if tensors else None
         u = u_iso[row]
         if u is None and tensor is not None:
             u = _equivalent(tensor, cell)
@@ -153,7 +156,7 @@ _SENTENCES = {
     "occupancy_default": ("occupancy_default", "an occupancy not given counts as 1: {}"),
     "zero_occupancy": ("zero_occupancy", "sites of no or negative occupancy are left out: {}"),
     "water": ("water_label", "water and hydroxyl labels are read as oxygen, hydrogen left out: {}"),
-    "label": ("unknown_element", "the element is taken from an unusual label: {}"),
+    "label": ("unusual_label", "the element is taken from an unusual label: {}"),
     "b_as_u": ("displacement_as_b", "U_iso values this large are read as B_iso = 8π²U: {}"),
     "displacement": ("bad_displacement", "displacements below 0 or above 1 Å² are ignored: {}"),
 }
@@ -203,14 +206,16 @@ def _isotropic(block: Block, rows: int, notes: _Notes) -> list[float | None]:
             if factor == 1.0 and given and given[len(given) // 2] > _MEDIAN_U_A2:
                 notes.add("b_as_u", f"{given[len(given) // 2]:g} Å² in the median")
                 factor = 1 / _EIGHT_PI_SQUARED
-            return [value * factor if math.isfinite(value) else None for value in values]
+            # exactly 0 is a blank filled in: nothing stands still
+            return [value * factor if math.isfinite(value) and value else None for value in values]
     return [None] * rows
 
 
-def _anisotropic(
-    block: Block, cell: Cell
-) -> dict[str, tuple[float, float, float, float, float, float]]:
-    """Return U_ij (CIF convention, Å²) by label, from U_ij, B_ij / 8π² or β_ij."""
+def _anisotropic(block: Block, cell: Cell) -> dict[str, list[Tensor]]:
+    """Return U_ij (CIF convention, Å²) by label, from U_ij, B_ij / 8π² or β_ij.
+
+    Sites that share a label take its tensors in turn.
+    """
     labels = block.strings("_atom_site_aniso_label")
     if not labels:
         return {}
@@ -224,26 +229,24 @@ def _anisotropic(
     ):
         columns = [block.column(f"_atom_site_aniso_{kind}{ij}") for ij in _TENSOR]
         if all(len(column) == len(labels) for column in columns):
-            tensors: dict[str, tuple[float, float, float, float, float, float]] = {}
+            tensors: dict[str, list[Tensor]] = {}
             for label, *raw in zip(labels, *columns, strict=True):
                 a, b, c, d, e, f = (
                     gemmi.cif.as_number(value) * factor
                     for value, factor in zip(raw, factors, strict=True)
                 )
                 if all(map(math.isfinite, (a, b, c, d, e, f))):
-                    tensors.setdefault(label, (a, b, c, d, e, f))
+                    tensors.setdefault(label[:_MAX_LABEL], []).append((a, b, c, d, e, f))
             return tensors
     return {}
 
 
 def _reciprocal_squares(cell: Cell) -> list[float]:
     """Return a*², b*², c*² in Å⁻²."""
-    import numpy as np
-
     return [float(x) for x in np.linalg.inv(metric_tensor(cell)).diagonal()]
 
 
-def _equivalent(tensor: tuple[float, float, float, float, float, float], cell: Cell) -> float:
+def _equivalent(tensor: Tensor, cell: Cell) -> float:
     """Return U_eq = 1/3 Σ U_ij a*_i a*_j a_i·a_j in Å².
 
     Fischer & Tillmanns (1988), Acta Cryst. C44, 775.

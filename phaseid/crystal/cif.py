@@ -9,6 +9,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from pathlib import Path
 
+from phaseid.crystal.agreement import Stated
 from phaseid.crystal.atom_sites import SiteProblem, has_sites, read_sites
 from phaseid.crystal.cif_text import MAX_BYTES, Block, Unreadable, parse_cif
 from phaseid.crystal.composition import reduced
@@ -16,7 +17,7 @@ from phaseid.crystal.crystal import Crystal, Finding
 from phaseid.crystal.elements import parse_formula
 from phaseid.crystal.metric import Cell, volume_A3
 from phaseid.crystal.provenance import conditions, phase_name, source
-from phaseid.crystal.structure import Stated, StructureProblem, build
+from phaseid.crystal.structure import StructureProblem, build
 from phaseid.crystal.symmetry import (
     MAX_OPERATIONS,
     SymmetryItems,

@@ -47,7 +47,7 @@ def settle_positions(
         labels = ", ".join(sites[i].label for i in sorted(dropped)[:6])
         findings.append(
             Finding(
-                "overlapping_atoms",
+                "duplicate_sites",
                 f"{len(dropped)} sites repeat an atom that another site already gives and are left "
                 f"out: {labels}{', …' if len(dropped) > 6 else ''}",
             )
@@ -67,7 +67,7 @@ def settle_positions(
     if contacts:
         findings.append(
             Finding(
-                "contact",
+                "overlapping_atoms",
                 f"atoms are too close to be real: {', '.join(contacts[:4])}"
                 + (", …" if len(contacts) > 4 else ""),
             )

@@ -106,6 +106,10 @@ def conditions(block: Block) -> tuple[float | None, float | None, tuple[Finding,
         findings.append(Finding("high_temperature", f"the source states {temperature:g} K"))
     if _theoretical(block):
         findings.append(Finding("theoretical", "the structure is calculated, not measured"))
+    if block.has_prefix("_atom_site_moment", "_space_group_magn", "_space_group.magn"):
+        findings.append(
+            Finding("magnetic", "magnetic moments are given; only the nuclei are taken from it")
+        )
     return temperature, pressure, tuple(findings)
 
 

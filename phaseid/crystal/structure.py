@@ -7,13 +7,13 @@ unchanged by the operations, and the contents should fit formula and Z.
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 
+from phaseid.crystal.agreement import Stated, agree, shares_of_unknown
 from phaseid.crystal.atom_sites import ReadSites
-from phaseid.crystal.composition import density_of_contents, hill_formula
 from phaseid.crystal.crystal import Finding, Site
 from phaseid.crystal.found_symmetry import found_symmetry
 from phaseid.crystal.metric import Cell, volume_A3
@@ -23,24 +23,11 @@ from phaseid.crystal.symmetry import Symmetry, fits_cell
 
 MIN_VOLUME_A3 = 5.0  # beryllium, the smallest atom to form a metal: 8 Å³ an atom (common practice)
 MAX_ATOMS = 200_000
-DENSITY_RANGE_A3 = (
-    0.001,
-    0.5,
-)  # atoms per Å³: 0.176 in diamond, about 0.01 in the airiest frameworks
+# atoms per Å³: 0.176 in diamond, about 0.01 in the airiest frameworks
+DENSITY_RANGE_A3 = (0.001, 0.5)
 NEIGHBOUR_A = 1.3
 _NOTABLE_SHIFT_A = 0.05
-_TOLERANCE = 0.05
-
-
-@dataclass(frozen=True, slots=True)
-class Stated:
-    """What the source says of its contents: formula (amounts, or None), Z, density, volume."""
-
-    formula: Mapping[str, float] | None = None
-    formula_text: str = ""
-    z: float | None = None
-    density_g_cm3: float | None = None
-    volume_A3: float | None = None
+_BEST = 3
 
 
 @dataclass(frozen=True, slots=True)
@@ -99,9 +86,6 @@ def build(
         assert problem is not None
         return problem
     return _chosen(tried, stated)
-
-
-_BEST = 3
 
 
 def _chosen(tried: Sequence[Structure], stated: Stated) -> Structure | StructureProblem:
@@ -166,7 +150,7 @@ def _structure(
     unknown = [(site, count) for site, count in moved if not site.element]
     contents = _contents(known)
     if unknown:
-        shares = _shares_of_unknown(contents, unknown, stated)
+        shares = shares_of_unknown(contents, unknown, stated)
         names = ", ".join(sorted({site.label for site, _ in unknown})[:6])
         if shares is None:
             return StructureProblem(
@@ -197,16 +181,18 @@ def _structure(
     if len(symmetry.operations) == 1:
         higher = found_symmetry(cell, [site for site, _ in known])
         findings += [higher] if higher else []
-    score, scale, judged = _judge(contents, volume, stated)
-    sound = placed.shift_A.max() < ROUNDING_A and not any(n.code == "contact" for n in notes)
+    agreement = agree(contents, volume, stated)
+    merged = any(note.code == "duplicate_sites" for note in notes)
+    overlapping = any(note.code == "overlapping_atoms" for note in notes)
+    sound = placed.shift_A.max() < ROUNDING_A and not overlapping
     return Structure(
         symmetry,
         tuple(site for site, _ in known),
         contents,
-        (*findings, *judged),
-        stated.z or scale or float(math.gcd(*(count for _, count in known))),
-        score + sound,
-        any(note.code == "overlapping_atoms" for note in notes),
+        (*findings, *agreement.findings),
+        stated.z or agreement.units or float(math.gcd(*(count for _, count in known))),
+        agreement.score + sound,
+        merged,
     )
 
 
@@ -235,106 +221,6 @@ def _shifts(sites: Sequence[Site], placed: Placed) -> list[Finding]:
             + ", ".join(labels[:6]),
         )
     ]
-
-
-def _shares_of_unknown(
-    contents: Mapping[str, float], unknown: Sequence[tuple[Site, int]], stated: Stated
-) -> dict[str, float] | None:
-    """Return what the unknown sites must hold for the cell to hold Z formula units, or None."""
-    if stated.formula is None or not stated.z:
-        return None
-    lacking = {
-        el: n * stated.z - contents.get(el, 0.0)
-        for el, n in stated.formula.items()
-        if el not in ("H", "D")
-    }
-    if any(n < -_TOLERANCE * stated.z * stated.formula[el] for el, n in lacking.items()):
-        return None
-    lacking = {el: n for el, n in lacking.items() if n > _TOLERANCE * stated.z * stated.formula[el]}
-    total = sum(lacking.values())
-    places = sum(site.occupancy * count for site, count in unknown)
-    if not lacking or abs(total - places) > _TOLERANCE * places:
-        return None
-    return {el: n / total for el, n in lacking.items()}
-
-
-def _judge(
-    contents: Mapping[str, float], volume: float, stated: Stated
-) -> tuple[int, float, list[Finding]]:
-    """Return a score, 1 for the formula's ratios and 1 for its Z; formula units; what disagrees."""
-    findings: list[Finding] = []
-    score = 2
-    scale = 0.0
-    wrong: list[str] = []
-    held = _without_deuterium(contents)
-    if stated.formula is not None:
-        formula = _without_deuterium(stated.formula)
-        heavy = set(held) | set(formula)
-        if heavy - {"H"}:
-            heavy -= {"H"}
-        whole = sum(formula.get(el, 0.0) for el in heavy)
-        scale = sum(held.get(el, 0.0) for el in heavy) / whole if whole else 0.0
-        wrong = [
-            el
-            for el in heavy
-            if abs(held.get(el, 0.0) - scale * formula.get(el, 0.0))
-            > _TOLERANCE * max(scale * formula.get(el, 0.0), 0.2)
-        ]
-        if wrong:
-            score -= 1
-            findings.append(
-                Finding(
-                    "formula_mismatch",
-                    f"the cell holds {hill_formula(contents)}, not in the ratios of the stated "
-                    f"formula {stated.formula_text}",
-                )
-            )
-        elif stated.z and abs(scale - stated.z) > _TOLERANCE * stated.z:
-            score -= 1
-            findings.append(
-                Finding(
-                    "z_mismatch",
-                    f"the cell holds {scale:.4g} formula units {stated.formula_text}, the source "
-                    f"states Z = {stated.z:g}",
-                )
-            )
-        hydrogen = formula.get("H", 0.0) * (stated.z if wrong and stated.z else scale)
-        located = held.get("H", 0.0)
-        if located and abs(located - hydrogen) > _TOLERANCE * hydrogen and not wrong:
-            score -= 1
-        if hydrogen > 0 and located < (1 - _TOLERANCE) * hydrogen:
-            findings.append(
-                Finding(
-                    "hydrogen_missing",
-                    f"{located:.4g} of {hydrogen:.4g} hydrogen atoms in the cell have "
-                    "positions; neutron intensities suffer most",
-                )
-            )
-    if stated.volume_A3 and abs(volume / stated.volume_A3 - 1) > 0.01:
-        findings.append(
-            Finding(
-                "volume_mismatch",
-                f"the cell has {volume:.2f} Å³, the source states {stated.volume_A3:g} Å³",
-            )
-        )
-    if stated.density_g_cm3:
-        density = density_of_contents(contents, volume)
-        if abs(density / stated.density_g_cm3 - 1) > _TOLERANCE:
-            findings.append(
-                Finding(
-                    "density_mismatch",
-                    f"the atoms give {density:.3f} g/cm³, the source states "
-                    f"{stated.density_g_cm3:g} g/cm³",
-                )
-            )
-    return max(score, 0), 0.0 if wrong else scale, findings
-
-
-def _without_deuterium(amounts: Mapping[str, float]) -> dict[str, float]:
-    merged = {el: n for el, n in amounts.items() if el != "D"}
-    if "D" in amounts:
-        merged["H"] = merged.get("H", 0.0) + amounts["D"]
-    return merged
 
 
 def _shown(cell: Cell) -> str:

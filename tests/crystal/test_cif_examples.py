@@ -30,7 +30,7 @@ READ: dict[str, tuple[int, dict[str, float], set[str]]] = {
     "bom": (225, ROCK_SALT, set()),
     "citation": (131, {"Pd": 2, "O": 2}, set()),
     "conditions": (225, ROCK_SALT, {"high_pressure", "high_temperature"}),
-    "contact": (1, {"Fe": 1, "O": 2}, {"contact", "higher_symmetry"}),
+    "contact": (1, {"Fe": 1, "O": 2}, {"overlapping_atoms", "higher_symmetry"}),
     "crlf_and_case": (225, ROCK_SALT, set()),
     "density_mismatch": (225, ROCK_SALT, {"density_mismatch", "volume_mismatch"}),
     "deuterium": (164, {"D": 2, "Mg": 1, "O": 2}, set()),
@@ -54,11 +54,11 @@ READ: dict[str, tuple[int, dict[str, float], set[str]]] = {
     "identity_only": (1, {"Cu": 4}, {"hm_ops_conflict", "higher_symmetry"}),
     "identity_whole_cell": (1, {"Cu": 4}, {"hm_ops_conflict", "higher_symmetry"}),
     "item_without_value": (225, ROCK_SALT, {"syntax_error"}),
-    "label_hydrogen": (164, {"H": 2, "Mg": 1, "O": 2}, {"unknown_element"}),
+    "label_hydrogen": (164, {"H": 2, "Mg": 1, "O": 2}, {"unusual_label"}),
     # Fornasini & Pani (1992): Ba15 Al13.4 Ga14.5, Z = 1
     "label_unknown_balanced": (166, {"Al": 13.4, "Ba": 15, "Ga": 14.5}, {"unknown_element"}),
     "latin1": (225, ROCK_SALT, {"encoding"}),
-    "mates_listed_twice": (166, {"As": 2}, {"overlapping_atoms"}),
+    "mates_listed_twice": (166, {"As": 2}, {"duplicate_sites"}),
     "mixed_site": (221, {"Pb": 1, "Mg": 0.25, "Nb": 0.5, "Ti": 0.25, "O": 3}, set()),
     "no_label_column": (225, ROCK_SALT, set()),
     "number_quoted": (221, {"Cs": 1, "Cl": 1}, {"symmetry_from_number"}),
@@ -167,6 +167,34 @@ def test_equivalent_u_of_a_hexagonal_cell() -> None:
     # U11 = U22 = 2 U12: Ueq = (U11 + U22 + U33) / 3 on Cartesian axes along a, a* turned, c
     (zinc,) = only("aniso_only").sites
     assert zinc.u_iso_A2 == pytest.approx((0.010 + 0.010 + 0.020) / 3)
+
+
+def test_sites_that_share_a_label_take_its_tensors_in_turn() -> None:
+    head = (TESTS / "cif" / "aniso_only.cif").read_text().split("loop_")[0]
+    text = head + (
+        "loop_\n_atom_site_label\n_atom_site_fract_x\n_atom_site_fract_y\n_atom_site_fract_z\n"
+        "Zn .3333 .6667 .25\nZn 0 0 0\nloop_\n_atom_site_aniso_label\n"
+        + "".join(f"_atom_site_aniso_U_{ij}\n" for ij in ("11", "22", "33", "12", "13", "23"))
+        + "Zn .01 .01 .02 .005 0 0\nZn .03 .03 .04 .015 0 0\n"
+    )
+    first, second = read_cif(text.encode(), "x.cif").crystals[0].sites
+    assert (first.u_aniso_A2, second.u_aniso_A2) == (
+        (0.01, 0.01, 0.02, 0.005, 0, 0),
+        (0.03, 0.03, 0.04, 0.015, 0, 0),
+    )
+
+
+def test_displacement_of_zero_counts_as_not_stated() -> None:
+    text = (TESTS / "cif" / "u_that_is_b.cif").read_text().replace(" 1.6", " 0").replace("1.3", "0")
+    sites = read_cif(text.encode(), "x.cif").crystals[0].sites
+    assert [site.u_iso_A2 for site in sites] == [None, None]
+
+
+def test_magnetic_entry_with_ordinary_operations_is_marked() -> None:
+    text = (TESTS / "cif" / "bom.cif").read_text(encoding="utf-8-sig")
+    text += "loop_\n_atom_site_moment.label\n_atom_site_moment.crystalaxis_x\nNa1 1.0\n"
+    codes = {f.code for f in read_cif(text.encode(), "x.mcif").crystals[0].findings}
+    assert codes == {"magnetic"}
 
 
 def test_ions_keep_their_charges() -> None:
