@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 import unicodedata
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 
 # IUPAC symbols, in the order of their atomic numbers
 # fmt: off
@@ -19,9 +19,32 @@ SYMBOLS = (
     "Sg", "Bh", "Hs", "Mt", "Ds", "Rg", "Cn", "Nh", "Fl", "Mc", "Lv", "Ts", "Og",
 )
 # fmt: on
+# IUPAC names, in the same order, as far as anybody has a specimen
+# fmt: off
+_NAMES = (
+    "hydrogen", "helium", "lithium", "beryllium", "boron", "carbon", "nitrogen",
+    "oxygen", "fluorine", "neon", "sodium", "magnesium", "aluminium", "silicon",
+    "phosphorus", "sulfur", "chlorine", "argon", "potassium", "calcium", "scandium",
+    "titanium", "vanadium", "chromium", "manganese", "iron", "cobalt", "nickel",
+    "copper", "zinc", "gallium", "germanium", "arsenic", "selenium", "bromine",
+    "krypton", "rubidium", "strontium", "yttrium", "zirconium", "niobium", "molybdenum",
+    "technetium", "ruthenium", "rhodium", "palladium", "silver", "cadmium", "indium",
+    "tin", "antimony", "tellurium", "iodine", "xenon", "caesium", "barium",
+    "lanthanum", "cerium", "praseodymium", "neodymium", "promethium", "samarium", "europium",
+    "gadolinium", "terbium", "dysprosium", "holmium", "erbium", "thulium", "ytterbium",
+    "lutetium", "hafnium", "tantalum", "tungsten", "rhenium", "osmium", "iridium",
+    "platinum", "gold", "mercury", "thallium", "lead", "bismuth", "polonium",
+    "astatine", "radon", "francium", "radium", "actinium", "thorium", "protactinium",
+    "uranium", "neptunium", "plutonium", "americium", "curium", "berkelium", "californium",
+    "einsteinium",
+)
+# fmt: on
+_OTHER_NAMES = {"aluminum": "Al", "sulphur": "S", "cesium": "Cs", "wolfram": "W"}
+ELEMENT_NAMED = dict(zip(_NAMES, SYMBOLS, strict=False)) | _OTHER_NAMES
 ATOMIC_NUMBER = {symbol: z for z, symbol in enumerate(SYMBOLS, start=1)} | {"D": 1, "T": 1}
 
 _SUBSCRIPTS = str.maketrans("₀₁₂₃₄₅₆₇₈₉", "0123456789")
+_UMLAUT = re.compile(r"([aou])e(?=\w)")
 _APART = re.compile(r"[^\w.]|_")
 _AMOUNT = re.compile(r"\d+(?:\.\d*)?|\.\d+")
 _GREEK = {
@@ -29,6 +52,8 @@ _GREEK = {
     for letter in "αβγδεζηθικλμνξοπρστυφχψω"
 }
 _HYDRATE = re.compile(r"[·•*](\d+(?:\.\d+)?)?([^·•*]+)")
+_KEY_PART = re.compile(r"([A-Z][a-z]?)([\d.]+)")
+_NEAR = 0.02
 _READINGS_MAX = 64
 _FORMULA_MAX = 120
 _CASELESS_MAX = 20  # characters: readings multiply with length where case is ignored
@@ -39,7 +64,7 @@ def element_key(symbol: str) -> str:
     return "H" if symbol in {"D", "T"} else symbol
 
 
-def composition_key(amounts: dict[str, float]) -> str:
+def composition_key(amounts: Mapping[str, float]) -> str:
     """Return a key equal for equal compositions, whatever the order and the common factor.
 
     Atomic fractions to four decimals, elements in alphabetical order.
@@ -90,6 +115,17 @@ def _readings(text: str, *, exact_case: bool) -> Iterator[dict[str, float]]:
             yield found
 
 
+def near_compositions(key: str, other: str) -> bool:
+    """Whether two composition keys hold the same elements in nearly the same amounts.
+
+    Within 0.02 of all atoms, as the FeO of a textbook and a real wüstite.
+    """
+    pairs = [_KEY_PART.findall(one) for one in (key, other)]
+    return [symbol for symbol, _ in pairs[0]] == [symbol for symbol, _ in pairs[1]] and all(
+        abs(float(a) - float(b)) <= _NEAR for (_, a), (_, b) in zip(*pairs, strict=True)
+    )
+
+
 def formula_keys(text: str, *, any_case: bool = False) -> list[str]:
     """Return the composition keys that `text` can mean as a formula, the likeliest reading first.
 
@@ -112,10 +148,13 @@ def formula_keys(text: str, *, any_case: bool = False) -> list[str]:
 
 
 def name_key(text: str) -> str:
-    """Return a name without case, accents, punctuation: "α-Al₂O₃" → "alpha al2o3"."""
+    """Return a name without case, accents, punctuation: "α-Al₂O₃" → "alpha al2o3".
+
+    A vowel and the e that writes its umlaut are one: wüstite, wuestite and wustite are the same.
+    """
     plain = text.casefold()
     if not plain.isascii():
         spelled = "".join(f" {_GREEK[c]} " if c in _GREEK else c for c in plain)
         letters = unicodedata.normalize("NFKD", spelled)
         plain = "".join(c for c in letters if not unicodedata.combining(c))
-    return " ".join(_APART.sub(" ", plain).split())
+    return " ".join(_UMLAUT.sub(r"\1", _APART.sub(" ", plain)).split())

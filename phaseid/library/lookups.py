@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 import sqlite3
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from enum import IntEnum
 from typing import Any
@@ -12,7 +12,13 @@ from typing import Any
 from phaseid.crystal.crystal import Source
 from phaseid.errors import InputError
 from phaseid.library.cautions import cautions_for
-from phaseid.library.formulas import formula_keys, name_key
+from phaseid.library.formulas import (
+    ELEMENT_NAMED,
+    composition_key,
+    formula_keys,
+    name_key,
+    near_compositions,
+)
 from phaseid.library.phase import Phase
 from phaseid.library.records import findings_from_json
 
@@ -38,12 +44,13 @@ class Match(IntEnum):
     NUMBER = 1
     FORMULA = 2
     NAME = 3
-    FORMULA_ANY_CASE = 4
-    NAME_STARTS = 5
-    NAME_HOLDS = 6
-
-
-_EXACT_MAX = Match.FORMULA_ANY_CASE
+    ELEMENT = 4
+    FORMULA_ANY_CASE = 5
+    NAME_FIRST_WORDS = 6
+    NAME_WORDS = 7
+    NAME_STARTS = 8
+    NAME_HOLDS = 9
+    FORMULA_NEAR = 10
 
 
 @dataclass(frozen=True, slots=True)
@@ -78,39 +85,33 @@ def find(conn: sqlite3.Connection, text: str) -> list[Hit]:
     """Return every phase that `text` can mean: exact fits first, then the more trusted entries."""
     matches: dict[int, Match] = {}
 
-    def note(match: Match, sql: str, *values: object) -> None:
-        for (row_id,) in conn.execute(sql, values):
-            matches.setdefault(row_id, match)
+    def note(match: Match, row_id: int) -> None:
+        matches[row_id] = min(match, matches.get(row_id, match))
+
+    def note_all(match: Match, sql: str, value: str) -> None:
+        for (row_id,) in conn.execute(sql, (value,)):
+            note(match, row_id)
 
     wanted, key = text.strip(), name_key(text)
-    note(Match.ID, "SELECT id FROM phase WHERE phase_id = ?", wanted)
-    note(
-        Match.NUMBER, "SELECT phase FROM label WHERE kind = 'number' AND key = ?", wanted.casefold()
-    )
+    note_all(Match.ID, "SELECT id FROM phase WHERE phase_id = ?", wanted)
+    by_number = "SELECT phase FROM label WHERE kind = 'number' AND key = ?"
+    note_all(Match.NUMBER, by_number, wanted.casefold())
     by_formula = "SELECT id FROM phase WHERE formula_key = ?"
     literal = formula_keys(wanted)
     for formula_key in literal:
-        note(Match.FORMULA, by_formula, formula_key)
-    if key:
-        by_name = "SELECT phase FROM label WHERE kind = 'name' AND "
-        note(Match.NAME, by_name + "key = ?", key)
-        for formula_key in formula_keys(wanted, any_case=True):
-            note(Match.FORMULA_ANY_CASE, by_formula, formula_key)
-    if key and not literal:  # who writes a formula does not mean a name that begins with it
-        note(Match.NAME_STARTS, by_name + "key >= ? AND key < ?", key, key + _LAST)
-        words = key.split()
-        long = [f'"{word}"' for word in words if len(word) >= _TRIGRAM]
-        short = [word for word in words if len(word) < _TRIGRAM]  # the index does not know them
-        if long:
-            note(
-                Match.NAME_HOLDS,
-                "SELECT phase FROM label_fts JOIN label ON label.id = label_fts.rowid "
-                "WHERE label_fts MATCH ? AND kind = 'name'"
-                + " AND instr(label.key, ?) > 0"
-                * len(short),
-                " AND ".join(long),
-                *short,
-            )
+        note_all(Match.FORMULA, by_formula, formula_key)
+    if key in ELEMENT_NAMED:
+        note_all(Match.ELEMENT, by_formula, composition_key({ELEMENT_NAMED[key]: 1.0}))
+    for formula_key in formula_keys(wanted, any_case=True):
+        note_all(Match.FORMULA_ANY_CASE, by_formula, formula_key)
+    for row_id, name in _names(conn, key, exact=bool(literal)):
+        note(_name_match(key, name), row_id)
+    if literal and not matches:
+        elements = " ".join(sorted(part.rstrip("0123456789.") for part in literal[0].split()))
+        by_elements = "SELECT id, formula_key FROM phase WHERE elements = ?"
+        for row_id, formula_key in conn.execute(by_elements, (elements,)):
+            if near_compositions(formula_key, literal[0]):
+                note(Match.FORMULA_NEAR, row_id)
     hits = [
         Hit(matches[row[0]], phase_from_row(row[1:])) for row in _rows_by_id(conn, sorted(matches))
     ]
@@ -118,7 +119,42 @@ def find(conn: sqlite3.Connection, text: str) -> list[Hit]:
     return hits
 
 
-def _rows_by_id(conn: sqlite3.Connection, ids: Sequence[int]) -> Iterable[tuple[Any, ...]]:
+def _names(conn: sqlite3.Connection, key: str, *, exact: bool) -> Iterator[tuple[int, str]]:
+    """Yield (row of the phase, name key) of every name that holds `key`.
+
+    `exact`: only those that equal it; who writes a formula does not mean a name that holds it.
+    """
+    by_name = "SELECT phase, key FROM label WHERE kind = 'name' AND "
+    if not key:
+        return
+    if exact:
+        yield from conn.execute(by_name + "key = ?", (key,))
+        return
+    yield from conn.execute(by_name + "key >= ? AND key < ?", (key, key + _LAST))
+    words = key.split()
+    long = " AND ".join(f'"{word}"' for word in words if len(word) >= _TRIGRAM)
+    short = [word for word in words if len(word) < _TRIGRAM]  # the index does not know them
+    if long:
+        yield from conn.execute(
+            "SELECT phase, label.key FROM label_fts JOIN label ON label.id = label_fts.rowid "
+            "WHERE label_fts MATCH ? AND kind = 'name'"
+            + " AND instr(label.key, ?) > 0"
+            * len(short),
+            (long, *short),
+        )
+
+
+def _name_match(key: str, name: str) -> Match:
+    if name == key:
+        return Match.NAME
+    if name.startswith(f"{key} "):
+        return Match.NAME_FIRST_WORDS
+    if f" {key} " in f" {name} ":
+        return Match.NAME_WORDS
+    return Match.NAME_STARTS if name.startswith(key) else Match.NAME_HOLDS
+
+
+def _rows_by_id(conn: sqlite3.Connection, ids: Sequence[int]) -> Iterator[tuple[Any, ...]]:
     for start in range(0, len(ids), 500):
         some = ids[start : start + 500]
         marks = ", ".join("?" * len(some))
@@ -133,7 +169,7 @@ def choose(conn: sqlite3.Connection, text: str) -> Phase:
     if not hits:
         raise InputError(f"the library has no phase called '{text}'", remedy=_nearest(conn, text))
     best = hits[0].match
-    candidates = [hit.phase for hit in hits if hit.match == best or best > _EXACT_MAX]
+    candidates = [hit.phase for hit in hits if hit.match == best]
     leader = candidates[0]
     rivals = [
         phase

@@ -21,6 +21,7 @@ from typing import TYPE_CHECKING, Any
 
 from phaseid.crystal.crystal import Crystal, Finding, Site, Source
 from phaseid.errors import LibraryError
+from phaseid.library.formulas import composition_key, formula_keys
 from phaseid.resources import data_path
 
 if TYPE_CHECKING:
@@ -69,23 +70,27 @@ def prototype_crystals() -> Iterator[Crystal]:
     entries = json.loads(gzip.decompress(data) if path.suffix == ".gz" else data)
     reviews = read_reviews(data_path("starter", "aflow_review.toml"))
     tags = Counter(entry["tags"]["aflow"] for entry in entries)
-    for index, entry in enumerate(entries):
-        review = reviews.get(index)
+    for entry in entries:
+        review = reviews.get((entry["tags"]["aflow"], _composition(entry)))
         if review is not None and not review.use:
             continue
         yield _crystal(entry, review, unique=tags[entry["tags"]["aflow"]] == 1)
 
 
-def read_reviews(path: Path) -> dict[int, Review]:
-    """Return the decisions by position in pymatgen's file."""
-    if not path.exists():
-        return {}
+def read_reviews(path: Path) -> dict[tuple[str, str], Review]:
+    """Return the decisions by AFLOW tag and composition key."""
     with path.open("rb") as file:
         held = tomllib.load(file)["entry"]
     return {
-        entry["index"]: Review(entry["use"], entry.get("name", ""), entry.get("mark", ""))
+        (entry["tag"], formula_keys(entry["formula"])[0]): Review(
+            entry["use"], entry.get("name", ""), entry.get("mark", "")
+        )
         for entry in held
     }
+
+
+def _composition(entry: dict[str, Any]) -> str:
+    return composition_key(Counter(site["species"][0]["element"] for site in entry["snl"]["sites"]))
 
 
 def _crystal(entry: dict[str, Any], review: Review | None, *, unique: bool) -> Crystal:
@@ -121,7 +126,7 @@ def _crystal(entry: dict[str, Any], review: Review | None, *, unique: bool) -> C
             file=prototype_file().name,
             reference=plain_reference(entry["snl"]["about"]["references"]),
         ),
-        findings=(Finding(mark, MARKS.get(mark, mark)),) if mark else (),
+        findings=(Finding(mark, MARKS[mark]),) if mark else (),
     )
 
 

@@ -11,7 +11,15 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from phaseid.library.formulas import ATOMIC_NUMBER, SYMBOLS, composition_key, formula_keys, name_key
+from phaseid.library.formulas import (
+    ATOMIC_NUMBER,
+    ELEMENT_NAMED,
+    SYMBOLS,
+    composition_key,
+    formula_keys,
+    name_key,
+    near_compositions,
+)
 
 
 def test_symbols_are_those_of_the_periodic_table() -> None:
@@ -78,6 +86,8 @@ def test_order_and_common_factor_do_not_matter(amounts, factor, random) -> None:
     [
         ("α-Al₂O₃", "alpha al2o3"),
         ("Wüstite", "wustite"),
+        ("Wuestite", "wustite"),
+        ("goethite", "gothite"),
         ("  Quartz   (low) ", "quartz low"),
         ("KRUTAITE", "krutaite"),
         ("Ångström’s phase", "angstrom s phase"),
@@ -91,6 +101,25 @@ def test_names_without_case_accents_and_signs(text: str, key: str) -> None:
 @given(st.text(string.printable, max_size=40))
 def test_a_key_is_its_own_key(text: str) -> None:
     assert name_key(name_key(text)) == name_key(text)
+
+
+def test_elements_have_names() -> None:
+    # symbols and names: IUPAC, from memory, one from each row of the table
+    pairs = {"hydrogen": "H", "silicon": "Si", "iron": "Fe", "tin": "Sn", "tungsten": "W",
+             "lead": "Pb", "uranium": "U", "einsteinium": "Es", "sulphur": "S"}  # fmt: skip
+    assert {name: ELEMENT_NAMED[name] for name in pairs} == pairs
+    assert len(set(ELEMENT_NAMED.values())) == 99
+
+
+def test_compositions_that_are_nearly_the_same() -> None:
+    def near(one: str, other: str) -> bool:
+        return near_compositions(formula_keys(one)[0], formula_keys(other)[0])
+
+    assert near("FeO", "Fe0.95O")
+    assert near("TiN", "TiN0.95")
+    assert not near("FeO", "Fe2O3")
+    assert not near("FeO", "MnO")
+    assert not near("Fe3O4", "Fe2O3")
 
 
 def test_deuterium_counts_as_hydrogen() -> None:

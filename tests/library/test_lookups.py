@@ -116,8 +116,39 @@ def test_exact_names_come_first(library: Library) -> None:
         "halite", "halite, wet", "titanohalite",
     ]  # fmt: skip
     assert library.choose("halite").name == "halite"
+    assert library.choose("wet").name == "halite, wet"
+    assert library.choose("titanoh").name == "titanohalite"
     with pytest.raises(InputError, match="several phases"):
         library.choose("halit")
+
+
+def test_whole_words_come_before_parts(library: Library) -> None:
+    library.add_crystals(
+        _crystals((4.2, "clausthalite", ()), (4.6, "rock salt halite", ()), (4.9, "halites", ()))  # type: ignore[arg-type]
+    )
+    assert [phase.name for phase in library.find("halite")] == [
+        "rock salt halite", "halites", "clausthalite",
+    ]  # fmt: skip
+    assert library.choose("halite").name == "rock salt halite"
+
+
+@pytest.mark.parametrize("text", ["iron", "Iron", "IRON"])
+def test_an_element_is_known_by_its_name(starter_library: Library, text: str) -> None:
+    phase = starter_library.choose(text)
+    assert (phase.formula, phase.space_group_number) == ("Fe", 229)
+
+
+@pytest.mark.parametrize(
+    ("text", "formula"), [("aluminum", "Al"), ("aluminium", "Al"), ("wolfram", "W")]
+)
+def test_an_element_has_its_other_name(starter_library: Library, text: str, formula: str) -> None:
+    assert starter_library.choose(text).formula == formula
+
+
+def test_a_textbook_formula_finds_the_real_phase(starter_library: Library) -> None:
+    phase = starter_library.choose("FeO")
+    assert (phase.elements, phase.space_group_number) == (("Fe", "O"), 225)  # wüstite, Fe1-xO
+    assert starter_library.choose("wüstite") == starter_library.choose("wustite") == phase
 
 
 @pytest.mark.parametrize(

@@ -8,6 +8,7 @@ import shutil
 from collections import Counter
 from collections.abc import Iterator
 from dataclasses import replace
+from itertools import islice
 from pathlib import Path
 from typing import Any
 
@@ -20,6 +21,7 @@ from phaseid.crystal.lines import compute_lines
 from phaseid.crystal.metric import volume_A3
 from phaseid.library import Library, build_starter, default_library_path, open_default
 from phaseid.library.prototypes import (
+    MARKS,
     plain_name,
     plain_reference,
     prototype_crystals,
@@ -28,6 +30,7 @@ from phaseid.library.prototypes import (
 )
 from phaseid.library.quality import FACTORS, quality
 from phaseid.library.starter import starter_crystals
+from phaseid.resources import data_path
 
 
 @pytest.fixture(scope="module")
@@ -124,18 +127,31 @@ def test_a_review_leaves_out_renames_and_marks(
 ) -> None:
     path = tmp_path / "aflow_review.toml"
     path.write_text(
-        '[[entry]]\nindex = 0\ntag = "x"\nformula = "HgS"\nname = ""\nuse = false\nreason = "y"\n'
-        '[[entry]]\nindex = 1\ntag = "x"\nformula = "y"\nname = "Mine"\nuse = true\n'
-        'mark = "high_pressure"\n',
+        '[[entry]]\nindex = 0\ntag = "AB_hP6_154_a_b"\nformula = "HgS"\nname = "cinnabar"\n'
+        'use = false\nreason = "y"\n'
+        '[[entry]]\nindex = 1\ntag = "AB2_tI6_139_a_e"\nformula = "MoSi2"\nname = "Mine"\n'
+        'use = true\nmark = "high_pressure"\n',
         encoding="utf-8",
     )
     reviews = read_reviews(path)
     monkeypatch.setattr("phaseid.library.prototypes.read_reviews", lambda _: reviews)
     kept = list(prototype_crystals())
     assert len(kept) == 287
-    assert kept[0].name == "Mine"
-    assert [finding.code for finding in kept[0].findings] == ["high_pressure"]
-    assert kept[1:] == unreviewed[2:]
+    (mine,) = (crystal for crystal in kept if crystal.name == "Mine")
+    assert mine.formula == "MoSi2"
+    assert [finding.code for finding in mine.findings] == ["high_pressure"]
+    changed = {"AB_hP6_154_a_b", "AB2_tI6_139_a_e"}
+    assert [crystal for crystal in kept if crystal is not mine] == [
+        crystal for crystal in unreviewed if crystal.source.id not in changed
+    ]
+
+
+def test_every_prototype_is_reviewed(given: list[dict[str, Any]]) -> None:
+    reviews = read_reviews(data_path("starter", "aflow_review.toml"))
+    tags = Counter(entry["tags"]["aflow"] for entry in given)
+    assert Counter(tag for tag, _ in reviews) == tags
+    assert all(review.mark in {"", *MARKS} for review in reviews.values())
+    assert all(review.name for review in reviews.values() if review.use)
 
 
 @pytest.fixture(scope="module")
@@ -195,7 +211,7 @@ def test_who_comes_second_uses_what_the_first_has_built(
 
     def meanwhile() -> Iterator[Crystal]:
         shutil.copy(starter_library_path, path)  # another process ends its build first
-        yield from starter_crystals()
+        yield from islice(starter_crystals(), 3)
 
     monkeypatch.setattr("phaseid.library.starter.starter_crystals", meanwhile)
     said: list[str] = []
