@@ -33,7 +33,7 @@ CHECK_COLUMNS = (
     "pattern_similarity",
     "result",
 )
-LINES_WANTED = "agrees"
+AGREES = "agrees"
 
 
 def quote(text: str) -> str:
@@ -54,7 +54,7 @@ def status(rows: list[dict[str, str]]) -> list[str]:
     told = [
         f"{row['compared_with']} (cell within {float(row['cell_deviation_percent']):.2f} %)"
         for row in rows
-        if row["result"] == LINES_WANTED
+        if row["result"] == AGREES
     ]
     measured = [t for t in told if not t.startswith("computed")]
     computed = [t for t in told if t.startswith("computed")]
@@ -82,9 +82,9 @@ def cif(phase: PhaseFact, rows: list[dict[str, str]]) -> str:
     lines += [
         f"_chemical_formula_sum {quote(hill(phase.formula))}",
         f"_cell_formula_units_Z {z:g}",
-        f"_cell_length_a {a:g}" if a == float(f"{a:g}") else f"_cell_length_a {a!r}",
-        f"_cell_length_b {b:g}" if b == float(f"{b:g}") else f"_cell_length_b {b!r}",
-        f"_cell_length_c {c:g}" if c == float(f"{c:g}") else f"_cell_length_c {c!r}",
+        f"_cell_length_a {a!r}",
+        f"_cell_length_b {b!r}",
+        f"_cell_length_c {c!r}",
         f"_cell_angle_alpha {alpha!r}",
         f"_cell_angle_beta {beta!r}",
         f"_cell_angle_gamma {gamma!r}",

@@ -4,10 +4,14 @@ from __future__ import annotations
 
 import itertools
 import math
+import warnings
+from typing import Any
 
 import gemmi
 import numpy as np
 from starter_facts import PhaseFact, atoms
+
+Filled = dict[tuple[int, int, int], dict[str, float]]
 
 AVOGADRO_A3 = 0.602214076  # u/Å³ -> g/cm³ is division by this; CODATA, exact
 SHORTEST_OF_RADII = 0.70  # of the sum of covalent radii (Cordero 2008, as gemmi holds them)
@@ -25,7 +29,7 @@ def contents(phase: PhaseFact) -> tuple[dict[str, float], float]:
 
 
 def placed(phase: PhaseFact) -> dict[str, float]:
-    """Atoms of the formula that the sites must hold: all, or all but hydrogen that is not placed."""
+    """Atoms of the formula that the sites must hold: not hydrogen where it is not placed."""
     wanted = atoms(phase.formula)
     if "hydrogen" in phase.options.get("allow", []):
         wanted.pop("H", None)
@@ -33,6 +37,9 @@ def placed(phase: PhaseFact) -> dict[str, float]:
 
 
 def density_g_cm3(phase: PhaseFact, held: dict[str, float]) -> float:
+    held = dict(held)
+    if "hydrogen" in phase.options.get("allow", []):
+        held["H"] = atoms(phase.formula).get("H", 0.0) * contents(phase)[1]
     mass = sum(n * (2.014 if e == "D" else gemmi.Element(e).weight) for e, n in held.items())
     return mass / gemmi.UnitCell(*phase.cell).volume / AVOGADRO_A3
 
@@ -61,26 +68,34 @@ def short_contacts(phase: PhaseFact) -> list[str]:
     return sorted(set(found))
 
 
-def _cell_contents(phase: PhaseFact) -> dict[tuple[int, int, int], dict[str, float]]:
+def fill_cell(small: gemmi.SmallStructure) -> Filled:
     """What sits where in the filled cell, positions in 1e-4 of the axes."""
-    filled: dict[tuple[int, int, int], dict[str, float]] = {}
-    for site in phase.structure().get_all_unit_cell_sites():
+    filled: Filled = {}
+    for site in small.get_all_unit_cell_sites():
+        name = site.element.name if site.type_symbol != "D" else "D"
         x, y, z = (round(v * 10000) % 10000 for v in site.fract.tolist())
-        filled.setdefault((x, y, z), {})[site.type_symbol] = round(site.occ, 3)
+        here = filled.setdefault((x, y, z), {})
+        here[name] = round(here.get(name, 0.0) + site.occ, 3)
     return filled
 
 
-def found_group(phase: PhaseFact) -> int | None:
-    """Space group number that spglib finds in the filled cell (0.01 Å), or None."""
+def symmetry(cell: gemmi.UnitCell, filled: Filled) -> tuple[Any, list[dict[str, float]]]:
+    """Spglib's symmetry data set (tolerance 0.01 Å) or None, and the fillings its types number."""
     import spglib
 
-    filled = _cell_contents(phase)
-    fills = [tuple(sorted(v.items())) for v in filled.values()]
-    numbers = {fill: i + 1 for i, fill in enumerate(sorted(set(fills)))}
-    lattice = np.array(gemmi.UnitCell(*phase.cell).orth.mat.tolist()).T
-    positions = np.array(list(filled)) / 10000
-    data = spglib.get_symmetry_dataset((lattice, positions, [numbers[f] for f in fills]), 1e-2)
-    return None if data is None else int(data.number)
+    fills = [tuple(sorted(f.items())) for f in filled.values()]
+    kinds = sorted(set(fills))
+    lattice = np.array(cell.orth.mat.tolist()).T.tolist()
+    positions = [[x / 10000, y / 10000, z / 10000] for x, y, z in filled]
+    types = [kinds.index(f) + 1 for f in fills]
+    with warnings.catch_warnings():
+        # spglib 2.8 announces another way of reporting errors at every call
+        warnings.simplefilter("ignore", DeprecationWarning)
+        try:
+            data = spglib.get_symmetry_dataset((lattice, positions, types), 1e-2)
+        except getattr(spglib, "SpglibError", RuntimeError):  # newer ones raise, older gave None
+            data = None
+    return data, [dict(k) for k in kinds]
 
 
 def problems(phase: PhaseFact) -> list[str]:
@@ -111,7 +126,8 @@ def problems(phase: PhaseFact) -> list[str]:
     if short and "short" not in allowed:
         wrong.append("too close: " + ", ".join(short[:4]))
     if "symmetry" not in allowed:
-        number = found_group(phase)
+        data, _ = symmetry(gemmi.UnitCell(*phase.cell), fill_cell(phase.structure()))
+        number = None if data is None else int(data.number)
         if number != phase.group.number:
             wrong.append(
                 f"group {phase.group.xhm()} ({phase.group.number}) stated, but the filled cell has "

@@ -19,11 +19,9 @@ from typing import Any
 
 import gemmi
 import numpy as np
-import spglib
 from numpy.typing import NDArray
+from starter_checks import Filled, fill_cell, symmetry
 from starter_facts import FactError, atoms
-
-Filled = dict[tuple[int, int, int], dict[str, float]]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -78,12 +76,7 @@ def standardise(
     cell: gemmi.UnitCell, filled: Filled, label: str, cod: str | None = None
 ) -> Standard | None:
     """Bring a filled cell (positions in 1e-4) to the standard setting; None if spglib cannot."""
-    fills = [tuple(sorted(f.items())) for f in filled.values()]
-    kinds = sorted(set(fills))
-    lattice = np.array(cell.orth.mat.tolist()).T
-    positions = np.array(list(filled), dtype=float) / 10000
-    numbers = [kinds.index(f) + 1 for f in fills]
-    data = spglib.get_symmetry_dataset((lattice, positions, numbers), 1e-2)
+    data, kinds = symmetry(cell, filled)
     if data is None:
         return None
     std = gemmi.UnitCell(*_parameters(data.std_lattice))
@@ -92,7 +85,7 @@ def standardise(
         number=int(data.number),
         cell=tuple(std.parameters),
         positions=np.array(data.std_positions),
-        fills=tuple(dict(kinds[t - 1]) for t in data.std_types),
+        fills=tuple(kinds[t - 1] for t in data.std_types),
         cod=cod,
     )
 
@@ -105,17 +98,6 @@ def _parameters(lattice: NDArray[np.float64]) -> list[float]:
         for u, v in ((b, c), (a, c), (a, b))
     ]
     return lengths + angles
-
-
-def fill_cell(small: gemmi.SmallStructure) -> Filled:
-    """What sits where in the filled cell, positions in 1e-4 of the axes."""
-    filled: Filled = {}
-    for site in small.get_all_unit_cell_sites():
-        name = site.element.name if site.type_symbol != "D" else "D"
-        x, y, z = (round(v * 10000) % 10000 for v in site.fract.tolist())
-        here = filled.setdefault((x, y, z), {})
-        here[name] = round(here.get(name, 0.0) + site.occ, 3)
-    return filled
 
 
 def ncrystal() -> Iterator[Standard]:
