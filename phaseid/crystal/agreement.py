@@ -38,13 +38,15 @@ class Agreement:
 
 def agree(contents: Mapping[str, float], volume_A3: float, stated: Stated) -> Agreement:
     """Compare contents (atoms per cell) with what the source states."""
-    measures = _measures(contents, volume_A3, stated)
     if stated.formula is None:
-        return Agreement(2, 0.0, measures)
+        return Agreement(2, 0.0, _measures(contents, volume_A3, stated))
     held, formula = _without_deuterium(contents), _without_deuterium(stated.formula)
     heavy = sorted((held.keys() | formula.keys()) - {"H"}) or ["H"]
     whole = sum(formula.get(el, 0.0) for el in heavy)
     units = sum(held.get(el, 0.0) for el in heavy) / whole if whole else 0.0
+    unplaced = max(0.0, units * formula.get("H", 0.0) - held.get("H", 0.0))
+    weighed = {**contents, "H": contents.get("H", 0.0) + unplaced}  # a density counts hydrogen
+    measures = _measures(weighed, volume_A3, stated)
     if any(_differs(held.get(el, 0.0), units * formula.get(el, 0.0)) for el in heavy):
         mismatch = Finding(
             "formula_mismatch",
