@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
 from pathlib import Path
 
 from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
@@ -26,7 +26,7 @@ STANDING = (
     "A ring match is evidence, not a certified determination. For decisions on health, safety or "
     "law use an accredited laboratory and the local codes."
 )
-SHOWN_ALIKE = 8
+SHOWN_ALIKE, SHOWN_CAUTIONED = 8, 3
 VERDICTS = {
     "identified": "identified (one answer holds at least 0.9 of the probability)",
     "ambiguous": "ambiguous (no answer reaches a probability of 0.9)",
@@ -66,8 +66,8 @@ def as_text(answer: Identification, *, width: int = 80, bold: bool = False) -> s
             f"{match.type_name} (as in {phase_text(match.like)}) with a = {match.a_A:.4f} "
             f"± {match.a_sigma_A:.4f} Å, probability {probability_text(match.probability)}"
         )
-    page.items("Remarks", _unique([*answer.remarks, *_pattern_remarks(answer.patterns)]))
-    page.items("Safety", answer.cautions)
+    page.items("Remarks", _remarks(answer))
+    page.items("Safety", [_caution(answer, caution) for caution in answer.cautions])
     page.blank()
     library = answer.library
     page.paragraph(
@@ -226,7 +226,9 @@ def _against(page: _Page, answer: Identification, best: Hypothesis) -> None:
         )
     worst = max(best.assignments, key=lambda a: abs(a.residual_sigma), default=None)
     if worst is not None and abs(worst.residual_sigma) > 3:
-        items.append(f"Ring {worst.ring + 1} lies {worst.residual_sigma:+.1f} sigma from its line")
+        where = f" of pattern {worst.pattern + 1}" if many else ""
+        off = signed_text(worst.residual_sigma)
+        items.append(f"Ring {worst.ring + 1}{where} lies {off} sigma from its line")
     if not items:
         items.append("Nothing: every ring is explained and no strong line is missing")
     page.items("What speaks against it", items)
@@ -268,15 +270,28 @@ def _phase(page: _Page, part: PhaseAnswer) -> None:
             page.item(f"{phase_text(separator.other)}: {separator.text}", indent="    ")
 
 
-def _pattern_remarks(patterns: tuple[RingList, ...]) -> list[str]:
-    if len(patterns) == 1:
-        return list(patterns[0].remarks)
-    return [
-        f"Pattern {number}: {remark}"
-        for number, pattern in enumerate(patterns, start=1)
+def _remarks(answer: Identification) -> list[str]:
+    """Remarks on the whole, then those on one pattern, each once."""
+    many = len(answer.patterns) > 1
+    own = [
+        (f"Pattern {number}: {remark}" if many else remark, remark)
+        for number, pattern in enumerate(answer.patterns, start=1)
         for remark in pattern.remarks
     ]
+    common = [remark for remark in answer.remarks if remark not in {plain for _, plain in own}]
+    return list(dict.fromkeys([*common, *(told for told, _ in own)]))
 
 
-def _unique(items: Iterable[str]) -> list[str]:
-    return list(dict.fromkeys(items))
+def _caution(answer: Identification, caution: str) -> str:
+    """Say for which of the phases named a caution is meant."""
+    named = (
+        phase
+        for hypothesis in answer.hypotheses
+        for part in hypothesis.phases
+        for phase in (part.phase, *part.indistinguishable)
+    )
+    names = list(dict.fromkeys(phase_text(phase) for phase in named if caution in phase.cautions))
+    if not names:
+        return caution
+    more = f" and {len(names) - SHOWN_CAUTIONED} more" if len(names) > SHOWN_CAUTIONED else ""
+    return f"{', '.join(names[:SHOWN_CAUTIONED])}{more}: {caution}"

@@ -6,7 +6,7 @@ from dataclasses import replace
 
 import pytest
 
-from phaseid.matching.identification import Identification, TypeMatch
+from phaseid.matching.identification import Identification, TypeMatch, Unexplained
 from phaseid.reports.formula import formula_text
 from phaseid.reports.plain import (
     Column,
@@ -111,6 +111,30 @@ def test_a_structure_type_is_offered(answer: Identification) -> None:
     like = answer.hypotheses[0].phases[0].phase
     found = replace(answer, type_matches=(TypeMatch("rock salt", like, 4.44, 0.01, 0.3),))
     assert "rock salt (as in aluminium (Al)) with a = 4.4400 ± 0.0100 Å" in as_text(found)
+
+
+def test_a_caution_says_whom_it_is_about(answer: Identification) -> None:
+    assert "\n  Fine powders: avoid dust" in as_text(answer)
+    best = answer.hypotheses[0]
+    phase = replace(best.phases[1].phase, cautions=answer.cautions)
+    best = replace(best, phases=(best.phases[0], replace(best.phases[1], phase=phase)))
+    assert "periclase (MgO): Fine powders: avoid dust" in as_text(
+        replace(answer, hypotheses=(best,))
+    )
+
+
+def test_remarks_are_told_once(answer: Identification) -> None:
+    own = answer.patterns[0].remarks
+    text = as_text(replace(answer, remarks=answer.remarks + own))
+    assert text.count("No sigma column") == 1
+    best = replace(
+        answer.hypotheses[0],
+        assignments=(),
+        unexplained=tuple(Unexplained(p, r) for p in (0, 1) for r in range(5)),
+    )
+    both = replace(answer, patterns=answer.patterns * 2, remarks=own, hypotheses=(best,))
+    assert as_text(both).count("No sigma column") == 2
+    assert "Pattern 2: No sigma column" in as_text(both)
 
 
 def test_a_long_group_is_cut_short(answer: Identification) -> None:
