@@ -1,42 +1,77 @@
 #!/usr/bin/env python3
-"""Writes the invented patterns of data/demo/: an aluminium foil with some periclase in it.
+"""Write the invented patterns of data/demo: one foil seen by electrons and by X-rays.
 
-Nothing here was measured. Spacings and intensities are those phaseid calculates from its own
-structures, then spoilt as readings are: a camera constant 0.7 % off, readings that scatter, uneven
-intensities, weak rings lost, one ring from nowhere.
+The story: an evaporated aluminium foil with some periclase from the crucible; on the microscope's
+grid a crystal of salt from handling adds one spotty ring. Nothing here was measured. Positions and
+structure factors are gemmi's, not phaseid's, so that the example does not answer itself; they are
+then spoilt as readings are: a camera constant 0.7 % off, scatter, uneven intensities, weak rings
+lost.
 """
 
 from __future__ import annotations
 
+import math
 from pathlib import Path
 
+import gemmi
 import numpy as np
 
-from phaseid.crystal.cif import read_cif_file
-from phaseid.crystal.lines import compute_lines
-from phaseid.probes import parse_probe
-from phaseid.resources import data_path
-from phaseid.rings import GRADES
-from phaseid.units import radius_from_d, two_theta_from_d
-
-VOLUME_SHARES = {"Al-aluminium.cif": 0.85, "MgO-periclase.cif": 0.15}
+ROOT = Path(__file__).resolve().parent.parent
+STARTER, DEMO = ROOT / "data" / "starter", ROOT / "data" / "demo"
+VOLUME_SHARES = {"elements/Al-aluminium.cif": 0.85, "oxides/MgO-periclase.cif": 0.15}
+SALT_D_A = 2.8201  # 200 of halite, half its edge
+B_ISO_A2 = 0.6  # common to all atoms; a usual value at room temperature
+D_MIN_A = 0.9
 STATED_CONSTANT_A_MM, TRUE_CONSTANT_A_MM = 25.1, 25.1 * 1.007
-FOREIGN_D_A = 1.83
+CU_KA_A = (2 * 1.5405929 + 1.5444274) / 3  # Int. Tables C 4.2.2.1, 2:1 mean of the doublet
+CU_KA_EV = 12398.419843 / CU_KA_A
+MIDDLES = {"vs": 90.0, "s": 70.0, "m": 40.0, "w": 15.0, "vw": 5.0}  # common practice, no source
 SEED = 20
 
 
-def rings(probe_text: str, *, resolution: float, d_min_A: float) -> list[tuple[float, float]]:
-    """Return (d in Å, intensity) of the mixture, lines nearer than `resolution` (of d) merged."""
-    probe = parse_probe(probe_text)
-    found: list[tuple[float, float]] = []
-    for name, share in VOLUME_SHARES.items():
-        (path,) = data_path("starter").rglob(name)
-        lines = compute_lines(read_cif_file(path).crystals[0], d_min_A=d_min_A)
-        weights = probe.weights(lines.d_A, lines.multiplicity, probe.f2(lines))
-        found += zip(lines.d_A, share * weights / lines.volume_A3**2, strict=True)
-    found.sort(reverse=True)
-    merged = [found[0]]
-    for d_A, strength in found[1:]:
+def lines(path: str, *, electrons: bool) -> list[tuple[float, float]]:
+    """Return (d in Å, m|F|² per cell volume squared) of one structure, displacement included."""
+    block = gemmi.cif.read(str(STARTER / path)).sole_block()
+    small = gemmi.make_small_structure_from_block(block)
+    small.change_occupancies_to_crystallographic()
+    calculator: gemmi.StructureFactorCalculatorE | gemmi.StructureFactorCalculatorX
+    if electrons:
+        calculator = gemmi.StructureFactorCalculatorE(small.cell)
+    else:
+        calculator = gemmi.StructureFactorCalculatorX(small.cell)
+        calculator.addends.add_cl_fprime(CU_KA_EV)
+    operations = small.spacegroup.operations()
+    found = []
+    for hkl in gemmi.make_miller_array(small.cell, small.spacegroup, D_MIN_A):
+        images = {tuple(op.apply_to_hkl(hkl.tolist())) for op in operations.sym_ops}
+        multiplicity = len(images | {tuple(-i for i in image) for image in images})
+        d_A = small.cell.calculate_d(hkl.tolist())
+        amplitude = abs(calculator.calculate_sf_from_small_structure(small, hkl.tolist()))
+        f2 = amplitude**2 * math.exp(-B_ISO_A2 / (2 * d_A**2))
+        found.append((d_A, multiplicity * f2 / small.cell.volume**2))
+    return found
+
+
+def lorentz_polarisation(d_A: float) -> float:
+    """Return the factor of a powder diffractometer without a monochromator."""
+    theta = math.asin(CU_KA_A / (2 * d_A))
+    return (1 + math.cos(2 * theta) ** 2) / (math.sin(theta) ** 2 * math.cos(theta))
+
+
+def mixture(*, electrons: bool, resolution: float) -> list[tuple[float, float]]:
+    """Return (d in Å, intensity) of the foil, lines nearer than `resolution` (of d) merged.
+
+    Intensity is the mean along the ring, strongest = 100: for electrons m|F|²d², for X-rays m|F|²
+    times the Lorentz and polarisation factor.
+    """
+    rows = [
+        (d_A, share * strength * (d_A**2 if electrons else lorentz_polarisation(d_A)))
+        for path, share in VOLUME_SHARES.items()
+        for d_A, strength in lines(path, electrons=electrons)
+    ]
+    rows.sort(reverse=True)
+    merged = rows[:1]
+    for d_A, strength in rows[1:]:
         last_d_A, last = merged[-1]
         if last_d_A / d_A - 1 < resolution:
             merged[-1] = ((last_d_A * last + d_A * strength) / (last + strength), last + strength)
@@ -47,52 +82,55 @@ def rings(probe_text: str, *, resolution: float, d_min_A: float) -> list[tuple[f
 
 
 def grade(intensity: float) -> str:
-    """Return the grade in whose interval an intensity lies most centrally."""
-    middles = {name: np.sqrt(np.prod(GRADES[name])) for name in ("vs", "s", "m", "w", "vw")}
-    return min(middles, key=lambda name: abs(np.log(intensity / middles[name])))
+    """Return the grade nearest to an intensity."""
+    return min(MIDDLES, key=lambda name: abs(math.log(intensity / MIDDLES[name])))
 
 
-def electrons(rng: np.random.Generator) -> str:
-    """Return the plate of an electron microscope as a ring list."""
-    rows = []
-    for d_A, strength in rings("electron 200 kV", resolution=0.01, d_min_A=0.9):
+def foil_electrons(rng: np.random.Generator) -> str:
+    """Return the plate of an electron microscope, rings graded by eye."""
+    rows = [(SALT_D_A, "vw", "spotty")]
+    for d_A, strength in mixture(electrons=True, resolution=0.008):
         seen = strength * rng.lognormal(0.0, 0.4)
         if seen > 2.0:
-            radius_mm = radius_from_d(d_A, TRUE_CONSTANT_A_MM) + rng.normal(0.0, 0.03)
-            rows.append((radius_mm, grade(min(seen, 100.0)), ""))
-    rows.append((radius_from_d(FOREIGN_D_A, TRUE_CONSTANT_A_MM), "vw", "spotty"))
+            rows.append((d_A, grade(seen), ""))
     head = [
         "# title: foil, electrons (invented)",
+        "# These data are invented for the demonstration; nothing here was measured.",
         "# probe: electron 200 kV",
         f"# camera constant: {STATED_CONSTANT_A_MM:g} +- 0.3 A mm",
         "radius_mm,sigma,intensity,note",
     ]
-    body = [f"{radius:.2f},0.03,{level},{note}" for radius, level, note in sorted(rows)]
-    return "\n".join([*head, *body]) + "\n"
+    for d_A, level, note in sorted(rows, reverse=True):
+        radius_mm = TRUE_CONSTANT_A_MM / d_A + rng.normal(0.0, 0.03)
+        head.append(f"{radius_mm:.2f},0.03,{level},{note}")
+    return "\n".join(head) + "\n"
 
 
-def xrays(rng: np.random.Generator) -> str:
-    """Return a diffractometer's pattern as a ring list."""
-    probe = parse_probe("x-ray Cu Ka")
+def foil_xrays(rng: np.random.Generator) -> str:
+    """Return a diffractometer's pattern."""
     rows = []
-    for d_A, strength in rings("x-ray Cu Ka", resolution=0.002, d_min_A=0.9):
+    for d_A, strength in mixture(electrons=False, resolution=0.002):
         seen = strength * rng.lognormal(0.0, 0.15)
         if seen > 1.5:
-            angle_deg = float(two_theta_from_d(d_A, probe.wavelength_A)) + rng.normal(0.0, 0.02)
-            rows.append((angle_deg, seen))
+            two_theta_deg = math.degrees(2 * math.asin(CU_KA_A / (2 * d_A)))
+            rows.append((two_theta_deg + rng.normal(0.0, 0.02), seen))
     strongest = max(seen for _, seen in rows)
-    head = ["# title: foil, X-rays (invented)", "# probe: x-ray Cu Ka"]
-    head.append("two_theta_deg,sigma,intensity")
-    body = [f"{angle:.2f},0.02,{100 * seen / strongest:.0f}" for angle, seen in rows]
-    return "\n".join([*head, *body]) + "\n"
+    head = [
+        "# title: foil, X-rays (invented)",
+        "# These data are invented for the demonstration; nothing here was measured.",
+        "# probe: x-ray Cu Ka",
+        "two_theta_deg,sigma,intensity",
+    ]
+    head += [f"{angle:.2f},0.02,{100 * seen / strongest:.0f}" for angle, seen in rows]
+    return "\n".join(head) + "\n"
 
 
 def main() -> None:
+    """Write both files."""
     rng = np.random.default_rng(SEED)
-    folder = Path(data_path("demo"))
-    folder.mkdir(exist_ok=True)
-    (folder / "foil_electrons.csv").write_text(electrons(rng), encoding="utf-8")
-    (folder / "foil_xrays.csv").write_text(xrays(rng), encoding="utf-8")
+    DEMO.mkdir(exist_ok=True)
+    (DEMO / "foil_electrons.csv").write_text(foil_electrons(rng), encoding="utf-8")
+    (DEMO / "foil_xrays.csv").write_text(foil_xrays(rng), encoding="utf-8")
 
 
 if __name__ == "__main__":
