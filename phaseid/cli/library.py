@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from phaseid.cli.options import Json, LibraryFile, open_library, say
+from phaseid.cli.options import Json, LibraryFile, open_library, say, width
 from phaseid.errors import InputError
 
 if TYPE_CHECKING:
@@ -113,9 +113,11 @@ def rejects(library: LibraryFile = None, as_json: Json = False) -> None:
 
         print(dumps({"schema": "phaseid.library-rejects/1", "rejects": held}))
         return
+    from phaseid.reports.plain import safe
+
     for reject in held:
         block = f" block {reject['block']}" if reject["block"] else ""
-        print(f"{reject['location']}{block}: {reject['reason']}")
+        print(safe(f"{reject['location']}{block}: {reject['reason']}"))
     if not held:
         say("Nothing was rejected.")
 
@@ -188,9 +190,11 @@ def _add(library: Library, paths: list[Path], *, starter: bool, jobs: int | None
 
 
 def _tell_rejects(tally: ImportTally) -> None:
+    from phaseid.reports.plain import safe
+
     for reject in tally.rejects[:SHOWN_REJECTS]:
         block = f" block {reject.block}" if reject.block else ""
-        say(f"rejected: {reject.file}{block}: {reject.reason}")
+        say(safe(f"rejected: {reject.file}{block}: {reject.reason}"))
     if tally.rejected > SHOWN_REJECTS:
         say(
             f"and {tally.rejected - SHOWN_REJECTS} more rejected; all of them: "
@@ -199,19 +203,23 @@ def _tell_rejects(tally: ImportTally) -> None:
 
 
 def _columns(phases: list[Phase]) -> list[str]:
+    from phaseid.reports.plain import Column, phase_text, source_text, table
+
+    columns = (
+        Column("id", "left"),
+        Column("phase", "left", flexible=True),
+        Column("group", "left", flexible=True),
+        Column("a, b, c (Å)", "left"),
+        Column("source", "left", flexible=True),
+    )
     rows = [
-        (
+        [
             phase.phase_id,
-            phase.name,
-            phase.formula,
+            phase_text(phase),
             f"{phase.space_group_symbol} ({phase.space_group_number})",
-            " ".join(f"{edge:.3f}" for edge in phase.cell[:3]) + " Å",
-            f"{phase.source.database} {phase.source.id}".strip(),
-        )
+            " ".join(f"{edge:.2f}" for edge in phase.cell[:3]),
+            source_text(phase),
+        ]
         for phase in phases
     ]
-    widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
-    return [
-        "  ".join(cell.ljust(w) for cell, w in zip(row, widths, strict=True)).rstrip()
-        for row in rows
-    ]
+    return table(columns, rows, width())

@@ -11,6 +11,7 @@ from phaseid.library.phase import Phase
 from phaseid.reports.formula import formula_text
 
 ELLIPSIS = "…"
+NARROWEST = 6  # a flexible column keeps as many characters
 
 
 def safe(text: str) -> str:
@@ -115,12 +116,15 @@ def table(columns: Sequence[Column], rows: Sequence[Sequence[str]], width: int) 
         for k, head in enumerate(heads)
     ]
     gap = "  " if sum(widths) + 2 * len(widths) <= width else " "
-    spare = width - sum(widths) - len(gap) * len(widths)
-    for k, column in enumerate(columns):
-        if column.flexible and spare < 0:
-            narrowed = max(6, widths[k] + spare)
-            spare += widths[k] - narrowed
-            widths[k] = narrowed
+    flexible = [k for k, column in enumerate(columns) if column.flexible]
+    excess = sum(widths) + len(gap) * len(widths) - width
+    while (
+        excess > 0 and (widest := max(flexible, key=widths.__getitem__, default=None)) is not None
+    ):
+        if widths[widest] <= NARROWEST:
+            break
+        widths[widest] -= 1
+        excess -= 1
     lines = [[head[level] for head in heads] for level in range(depth)] + cells
     return [
         "".join(
