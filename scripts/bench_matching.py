@@ -22,8 +22,7 @@ from pathlib import Path
 import numpy as np
 from simulated_patterns import ELECTRON, NEUTRON, XRAY, Conditions, Simulator
 
-from phaseid.library import Library
-from phaseid.library import open_default
+from phaseid.library import Library, open_default
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.identify import identify
 from phaseid.rings.ringlist import RingList
@@ -129,6 +128,8 @@ class Bench:
         shares = [float(s) for s in rng.uniform(*family.shares, family.phases)]
         if family.minority:
             shares = [1.0, float(rng.uniform(0.05, 0.10))]
+            if self.simulator.lines_above(truth[1], family.conditions[0], shares[1]) < 3:
+                return None
         patterns = []
         for how in family.conditions:
             if how.most is not None:

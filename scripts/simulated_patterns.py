@@ -121,6 +121,13 @@ class Simulator:
             self.powders[index] = powder(self.crystals[index])
         return self.powders[index]
 
+    def lines_above(self, index: int, how: Conditions, share: float) -> int:
+        """How many lines between 0.9 and 5 Å stand at twice the detection limit or more."""
+        reflections = self.powder(index)
+        d = reflections.d_A
+        weight = reflections.strength[how.kind] * _geometry(d, how.kind)
+        return int(((share * weight > 2.0 * how.limit * weight.max()) & (d > 0.9) & (d < 5)).sum())
+
     def pattern(self, phases: list[int], shares: list[float], how: Conditions) -> RingList | None:
         """Rings of a mixture; `shares` are relative strengths of the strongest lines.
 

@@ -10,11 +10,12 @@ from numpy.typing import NDArray
 from phaseid.library.linetable import LineTable
 from phaseid.matching.patterns import Floats, Pattern
 
-MOST_LINES = 64
+MOST_LINES = 128
 """Lines kept per phase and pattern: the strongest of those within reach of the rings."""
 REACH_LOW, REACH_HIGH = 0.12, 0.60
 """How far beyond the outermost rings (in ln d) lines are still looked at."""
-WEAKEST = 0.002
+BELOW_LIMIT = 0.3
+"""Lines weaker than this times the detection limit, for a phase that fills the pattern, are left out."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -69,7 +70,7 @@ def gather(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Lin
     reference = np.where(strongest > 0, strongest, np.inf)
     relative = intensity / reference[owner]
 
-    keep = relative > WEAKEST
+    keep = relative > BELOW_LIMIT * np.exp(pattern.ln_limit)
     rows, owner, x, relative = rows[keep], owner[keep], x[keep], np.minimum(relative[keep], 50.0)
     order = np.lexsort((-relative, owner))
     rows, owner, x, relative = rows[order], owner[order], x[order], relative[order]

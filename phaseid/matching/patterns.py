@@ -74,7 +74,7 @@ def _angle_columns(x: Floats, probe: Probe) -> Floats:
     d = λ / (2 sin θ), so d(ln d) = −½ cot θ d(2θ); the displacement's shift goes with cos θ
     (Klug & Alexander 1974, chapter 5).
     """
-    if probe.kind == "electron":
+    if probe.geometry in ("ring", "time-of-flight"):
         return np.empty((len(x), 0))
     sine = np.clip(probe.wavelength_A / (2.0 * np.exp(x)), 1e-6, 0.9999)
     cosine = np.sqrt(1.0 - sine**2)
@@ -88,7 +88,7 @@ def _angle_columns(x: Floats, probe: Probe) -> Floats:
 def _resolution(x: Floats, probe: Probe, scatter: Scatter) -> Floats:
     """Merging distance in ln d at each ring, never above what the pattern itself resolves."""
     merged = np.full(len(x), scatter.resolution)
-    if probe.kind != "electron" and scatter.resolution_two_theta_deg:
+    if probe.geometry not in ("ring", "time-of-flight"):
         sine = np.clip(probe.wavelength_A / (2.0 * np.exp(x)), 1e-6, 0.9999)
         cotangent = np.sqrt(1.0 - sine**2) / sine
         merged = np.maximum(0.5 * cotangent * np.radians(scatter.resolution_two_theta_deg), 2e-4)
