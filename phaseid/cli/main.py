@@ -15,13 +15,15 @@ from phaseid.errors import PhaseidError
 
 INTERRUPTED = 130
 FIRST_STEPS = """\
-phaseid {version}: which crystalline phases made these diffraction rings?
+phaseid {version}
+Which crystalline phases made these diffraction rings?
 
-  phaseid identify 2.34 2.02 1.43 1.22 --probe "electron 200 kV"
+  phaseid identify 2.34 2.02 1.43 --probe "electron 200 kV"
   phaseid identify rings.csv --must Al --json
   phaseid lines corundum --probe "x-ray Cu Ka"
 
-`phaseid --help` lists the commands; `phaseid guide` opens the manual.
+`phaseid --help` lists the commands,
+`phaseid guide` opens the manual.
 """
 
 

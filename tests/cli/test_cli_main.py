@@ -39,6 +39,7 @@ def test_alone_it_gives_three_examples(phaseid) -> None:
     assert done.code == 0
     assert done.out.count("\n  phaseid ") == 3
     assert "phaseid guide" in done.out
+    assert max(len(line) for line in done.out.splitlines()) <= 60
 
 
 @pytest.mark.parametrize("flag", ["-h", "--help"])
