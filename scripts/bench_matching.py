@@ -188,10 +188,10 @@ class _Without:
     def __len__(self) -> int:
         return len(self._library) - len(self._hidden)
 
-    def phase(self, phase_id: str):  # noqa: ANN201
+    def phase(self, phase_id: str):
         return self._library.phase(phase_id)
 
-    def line_table(self, kind):  # noqa: ANN001, ANN201
+    def line_table(self, kind):
         table = self._library.line_table(kind)
         keep = [i for i, p in enumerate(table.phase_ids) if p not in self._hidden]
         rows = np.concatenate([np.arange(table.offsets[i], table.offsets[i + 1]) for i in keep])
@@ -208,7 +208,7 @@ class _Without:
         )
 
 
-def _names(hypothesis, wanted: set[str]) -> bool:  # noqa: ANN001
+def _names(hypothesis, wanted: set[str]) -> bool:
     """Whether the hypothesis names exactly the wanted phases, twins counted."""
     free = set(wanted)
     for answer in hypothesis.phases:

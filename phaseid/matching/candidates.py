@@ -50,22 +50,34 @@ def make_ruler(
     Where `wanted` (m,) is given, only those rings are worth meeting; a line that falls on another
     ring is hidden by it, which speaks neither for nor against.
     """
-    step = float(np.clip(0.7 * np.median(pattern.sigma), 2e-4, 2e-3))
     angle = np.sqrt((pattern.nuisance[:, 1:] ** 2).sum(axis=1))
-    width = np.sqrt((1.5 * pattern.sigma) ** 2 + STRAIN**2 + angle**2 + (0.4 * step) ** 2)
+    width = np.sqrt((1.5 * pattern.sigma) ** 2 + STRAIN**2 + angle**2)
+    step = float(np.clip(0.5 * np.min(width), 5e-4, 2e-3))
     start = pattern.x[0] - 0.15 - abs(centre) - reach
     stop = pattern.x[-1] + 0.65 + abs(centre) + reach
     grid = np.arange(start, stop, step)
-    near = np.exp(-0.5 * ((grid[:, None] - pattern.x) / width) ** 2)
-    beside = np.abs(grid[:, None] - pattern.x) < np.maximum(3.0 * width, 0.7 * pattern.resolution)
-    hit = near.max(axis=1) if wanted is None else (near * wanted).max(axis=1)
-    miss = np.where(beside.any(axis=1), 0.0, pattern.seen_weight(grid))
+    distance, ring = _nearest(grid, pattern.x, np.arange(len(pattern)))
+    beside = distance < np.maximum(3.0 * width, 0.7 * pattern.resolution)[ring]
+    miss = np.where(beside, 0.0, pattern.seen_weight(grid))
+    worth = np.arange(len(pattern)) if wanted is None else np.flatnonzero(wanted)
+    hit = np.zeros(len(grid))
+    if len(worth):
+        distance, ring = _nearest(grid, pattern.x[worth], worth)
+        hit = np.exp(-0.5 * (distance / width[ring]) ** 2)
     low = int(np.floor((centre - reach) / step))
     high = int(np.ceil((centre + reach) / step))
     # the outermost cells stand for everything further out
     hit[[0, -1]] = 0.0
     miss[[0, -1]] = 0.0
     return Ruler(start, step, hit, miss, np.arange(low, high + 1))
+
+
+def _nearest(
+    grid: Floats, x: Floats, rings: NDArray[np.int64]
+) -> tuple[Floats, NDArray[np.int64]]:
+    """Distance of every grid point to the nearest of `x` (rising), and which of `rings` it is."""
+    at = np.searchsorted(0.5 * (x[1:] + x[:-1]), grid)
+    return np.abs(grid - x[at]), rings[at]
 
 
 def scan(lines: LineSet, pattern: Pattern, ruler: Ruler, ln_strongest: float = 0.0) -> Floats:
@@ -81,8 +93,10 @@ def scan(lines: LineSet, pattern: Pattern, ruler: Ruler, ln_strongest: float = 0
     cell = np.where(np.isfinite(x), (x - ruler.start) / ruler.step + 0.5, 0.0).astype(np.int64)
     score = np.zeros((len(x), len(ruler.shifts)))
     for j in range(depth):
-        at = np.clip(cell[:, j : j + 1] + ruler.shifts, 0, last)
-        score += gain[:, j : j + 1] * ruler.hit[at] - loss[:, j : j + 1] * ruler.miss[at]
+        at = cell[:, j : j + 1] + ruler.shifts
+        np.clip(at, 0, last, out=at)
+        score += gain[:, j : j + 1] * ruler.hit.take(at)
+        score -= loss[:, j : j + 1] * ruler.miss.take(at)
     return score
 
 

@@ -16,7 +16,11 @@ from phaseid.matching.search import Judged, Members
 
 DISTANCE = 1.5
 """Expected log-likelihood distance below which two phases are one answer."""
-_ACTUAL = 3.0
+_WIDER_DISTANCE = 3.0
+_EVEN_ODDS = 1.1
+"""Up to the wider distance, two phases are one answer where these very rings leave the odds between
+them below three to one."""
+_ACTUAL = 4.5
 """A rival further behind on the measured rings themselves is told apart by them."""
 
 
@@ -60,10 +64,12 @@ def indistinguishable(
     shift = leader.offset.mean(axis=0)
     offsets = np.stack([np.zeros_like(leader.offset), *(r.offset - shift for r in rivals)])
     likelihood = evaluate(ideal, members, offsets).log_likelihood
-    return [
-        (rival, bool(likelihood[0] - likelihood[i + 1] < DISTANCE))
-        for i, rival in enumerate(rivals)
-    ]
+    same = []
+    for i, rival in enumerate(rivals):
+        distance = float(likelihood[0] - likelihood[i + 1])
+        even = abs(leader.log_posterior - rival.log_posterior) < _EVEN_ODDS
+        same.append((rival, distance < DISTANCE or (even and distance < _WIDER_DISTANCE)))
+    return same
 
 
 def rivals_of(leader: Judged, ranked: list[Judged]) -> list[Judged]:
@@ -74,7 +80,7 @@ def rivals_of(leader: Judged, ranked: list[Judged]) -> list[Judged]:
         if len(j.members) == len(leader.members)
         and j.members != leader.members
         and len(set(j.members) & set(leader.members)) == len(leader.members) - 1
-        and leader.log_posterior - j.log_posterior < _ACTUAL + DISTANCE
+        and leader.log_posterior - j.log_posterior < _ACTUAL
     ]
 
 

@@ -429,11 +429,11 @@ def evaluate(
     ]
     positions = _Positions(works, loose)
     corrections = [np.zeros((work.b, work.m)) for work in works]
-    for last in (False, False, True):
+    for rounds in (4, 2, 1):
         targets = []
         for i, work in enumerate(works):
             work.associate(offset[:, :, i], corrections[i], 1.0)
-            work.fit_amplitudes(2 if last else 4)
+            work.fit_amplitudes(rounds)
             targets.append(work.unshifted(offset[:, :, i], corrections[i]))
         mean, covariance, _ = positions.solve(targets, SIGMA_INFLATION[0][0])
         offset, corrections = positions.place(mean)
@@ -444,7 +444,7 @@ def evaluate(
             work.decide(residuals[i])
     # the claims have moved: settle amplitudes and positions once more on the final claims
     for work in works:
-        work.fit_amplitudes(2)
+        work.fit_amplitudes(1)
     mean, covariance, _ = positions.solve(targets, SIGMA_INFLATION[0][0])
     total = positions.marginal(targets) + _leftover(works)
     for work in works:

@@ -12,9 +12,11 @@ from phaseid.matching.patterns import Floats, Pattern
 
 MOST_LINES = 128
 """Lines kept per phase and pattern: the strongest of those within reach of the rings."""
+_CELLS = 3.0
+"""Cells per resolution within which lines are summed before anything is left out."""
 REACH_LOW, REACH_HIGH = 0.12, 0.60
 """How far beyond the outermost rings (in ln d) lines are still looked at."""
-BELOW_LIMIT = 0.3
+BELOW_LIMIT = 0.12
 """Lines weaker than this times the detection limit, for a phase that fills the pattern, are left out."""
 
 
@@ -62,6 +64,7 @@ def gather(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Lin
     near = (x > low - REACH_LOW) & (x < high + REACH_HIGH)
     rows, owner, x = rows[near], owner[near], x[near]
     intensity = shown_intensity(table, rows, pattern)
+    rows, owner, x, intensity = _join(rows, owner, x, intensity, pattern)
 
     count = len(phases)
     strongest = np.zeros(count)
@@ -93,6 +96,30 @@ def gather(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Lin
         strength=strongest / table.volume_A3[phases] ** 2,
         complete=np.log(table.complete_to_A[phases]),
     )
+
+
+def _join(
+    rows: NDArray[np.int64],
+    owner: NDArray[np.int64],
+    x: Floats,
+    intensity: Floats,
+    pattern: Pattern,
+) -> tuple[NDArray[np.int64], NDArray[np.int64], Floats, Floats]:
+    """Sum lines of a phase far closer than the pattern resolves, at their centre.
+
+    Many lines too weak to be seen one by one make a ring together. The row kept is the strongest's.
+    """
+    shown = intensity > 0
+    rows, owner, x, intensity = rows[shown], owner[shown], x[shown], intensity[shown]
+    if len(rows) == 0:
+        return rows, owner, x, intensity
+    cell = np.floor(_CELLS * pattern.resolved(x)).astype(np.int64)
+    first = np.flatnonzero(np.append(True, (np.diff(owner) != 0) | (np.diff(cell) != 0)))
+    total = np.add.reduceat(intensity, first)
+    centre = np.add.reduceat(x * intensity, first) / total
+    group = np.repeat(np.arange(len(first)), np.diff(np.append(first, len(x))))
+    order = np.lexsort((-intensity, group))
+    return rows[order[first]], owner[first], centre, total
 
 
 def _merge_neighbours(x: Floats, intensity: Floats, pattern: Pattern) -> Floats:

@@ -46,6 +46,7 @@ class Pattern:
     nuisance: Floats
     ln_limit: float
     resolution: Floats
+    fineness: float
 
     def __len__(self) -> int:
         return len(self.x)
@@ -54,6 +55,16 @@ class Pattern:
     def has_intensity(self) -> bool:
         """Whether any ring carries an intensity."""
         return bool(np.isfinite(self.intensity_sd).any())
+
+    def resolved(self, x: Floats) -> Floats:
+        """A coordinate over ln d in which lines one apart can just be told apart."""
+        scatter = self.scatter
+        if self.probe.geometry in ("ring", "time-of-flight"):
+            coarse: Floats = x / max(scatter.resolution, 1e-4)
+        else:
+            sine = np.clip(self.probe.wavelength_A / (2.0 * np.exp(x)), 1e-6, 1.0)
+            coarse = -2.0 * np.degrees(np.arcsin(sine)) / scatter.resolution_two_theta_deg
+        return coarse / self.fineness
 
     def seen_weight(self, x: Floats) -> Floats:
         """Chance that a line at `x` (any shape) lies within the recorded range of the pattern.
@@ -85,18 +96,18 @@ def _angle_columns(x: Floats, probe: Probe) -> Floats:
     return np.stack(columns, axis=1)
 
 
-def _resolution(x: Floats, probe: Probe, scatter: Scatter) -> Floats:
+def _resolution(x: Floats, probe: Probe, scatter: Scatter) -> tuple[Floats, float]:
     """Merging distance in ln d at each ring, never above what the pattern itself resolves."""
     merged = np.full(len(x), scatter.resolution)
     if probe.geometry not in ("ring", "time-of-flight"):
         sine = np.clip(probe.wavelength_A / (2.0 * np.exp(x)), 1e-6, 0.9999)
         cotangent = np.sqrt(1.0 - sine**2) / sine
         merged = np.maximum(0.5 * cotangent * np.radians(scatter.resolution_two_theta_deg), 2e-4)
-    if len(x) > 1:
-        gaps = np.diff(x)
-        nearest = np.minimum(np.append(gaps, np.inf), np.append(np.inf, gaps))
-        merged = np.minimum(merged, 0.9 * nearest)
-    return merged
+    if len(x) == 1:
+        return merged, 1.0
+    gaps = np.diff(x)
+    nearest = 0.9 * np.minimum(np.append(gaps, np.inf), np.append(np.inf, gaps))
+    return np.minimum(merged, nearest), float(np.clip((nearest / merged).min(), 0.25, 1.0))
 
 
 def _group_duplicates(x: Floats, sigma: Floats) -> list[list[int]]:
@@ -110,12 +121,16 @@ def _group_duplicates(x: Floats, sigma: Floats) -> list[list[int]]:
     return groups
 
 
-def _detection_limit(ln_intensity: Floats, known: NDArray[np.bool_]) -> float:
-    """ln of the detection limit: a little below the weakest ring; 5 % where nothing is known."""
+def _detection_limit(ln_intensity: Floats, intensity_sd: Floats) -> float:
+    """ln of the detection limit: a little below the weakest ring; 5 % where nothing is known.
+
+    A grade says only that the ring is within its interval: the lower part of it counts.
+    """
+    known = np.isfinite(intensity_sd)
     if not known.any():
         return float(np.log(0.05))
-    weakest = np.sort(ln_intensity[known])[: 1 + int(known.sum()) // 8]
-    return float(max(weakest.mean() - 0.25, np.log(0.0005)))
+    low = np.sort(ln_intensity[known] - intensity_sd[known])
+    return float(max(low[: 1 + len(low) // 8].mean() - 0.25, np.log(0.0005)))
 
 
 def prepare(rings: RingList) -> Pattern:
@@ -138,6 +153,7 @@ def prepare(rings: RingList) -> Pattern:
             intensity_sd[k] = np.log(high / low) / np.sqrt(12.0) if high > low > 0 else 0.0
     scatter = SCATTER[rings.probe.kind]
     scale = np.full((len(x), 1), rings.probe.scale_sigma)
+    resolution, fineness = _resolution(x, rings.probe, scatter)
     return Pattern(
         rings=rings,
         probe=rings.probe,
@@ -148,8 +164,9 @@ def prepare(rings: RingList) -> Pattern:
         intensity_sd=intensity_sd,
         members=tuple(tuple(group) for group in groups),
         nuisance=np.hstack([scale, _angle_columns(x, rings.probe)]),
-        ln_limit=_detection_limit(ln_intensity, np.isfinite(intensity_sd)),
-        resolution=_resolution(x, rings.probe, scatter),
+        ln_limit=_detection_limit(ln_intensity, intensity_sd),
+        resolution=resolution,
+        fineness=fineness,
     )
 
 
