@@ -72,9 +72,7 @@ def make_ruler(
     return Ruler(start, step, hit, miss, np.arange(low, high + 1))
 
 
-def _nearest(
-    grid: Floats, x: Floats, rings: NDArray[np.int64]
-) -> tuple[Floats, NDArray[np.int64]]:
+def _nearest(grid: Floats, x: Floats, rings: NDArray[np.int64]) -> tuple[Floats, NDArray[np.int64]]:
     """Distance of every grid point to the nearest of `x` (rising), and which of `rings` it is."""
     at = np.searchsorted(0.5 * (x[1:] + x[:-1]), grid)
     return np.abs(grid - x[at]), rings[at]

@@ -72,6 +72,8 @@ def identify(
         model,
         log_prior=_log_prior(first, allowed),
         max_phases=min(max_phases, len(allowed)),
+        tables=own,
+        phases=allowed,
         accepts=lambda members: chemistry.satisfied_by([sets[i] for i in members]),
     )
     search.run()

@@ -33,6 +33,7 @@ from phaseid.matching.settings import (
 
 _HALF_LOG_2PI = 0.5 * log(2.0 * pi)
 _AMPLITUDE_PRIOR_SD = 3.0
+_AXES = 3
 _EXCUSED_LINES = 8.0
 """Rings beyond a phase's stored lines are taken as if it had this many lines somewhere there."""
 
@@ -96,22 +97,40 @@ class Looseness:
     """How far each phase may stray from its listed structure: (b, k) arrays.
 
     `strain` one-sigma of its isotropic strain; `jitter` line-by-line scatter in ln d; `spread`
-    extra one-sigma of ln intensity. A listed phase has (STRAIN, 0, 0).
+    extra one-sigma of ln intensity. A listed phase has (STRAIN, 0, 0). `axial`, per pattern
+    (b, k, n, 3), is the shift in ln d of each line for one sigma of each of three independent axial
+    strains; None where no phase has any.
     """
 
     strain: Floats
     jitter: Floats
     spread: Floats
+    axial: tuple[Floats, ...] | None = None
 
     @classmethod
     def listed(cls, shape: tuple[int, int]) -> Looseness:
         """Every phase as it is listed."""
         return cls(np.full(shape, STRAIN), np.zeros(shape), np.zeros(shape))
 
+    def rows(self, part: NDArray[np.int64]) -> Looseness:
+        """The looseness of some of the hypotheses."""
+        axial = None if self.axial is None else tuple(a[part] for a in self.axial)
+        return Looseness(self.strain[part], self.jitter[part], self.spread[part], axial)
+
 
 def _logistic(z: Floats) -> Floats:
     result: Floats = 1.0 / (1.0 + np.exp(-np.clip(z, -40.0, 40.0)))
     return result
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Shift:
+    """Where a pattern's lines are moved: `offset` (b, k) of each phase, `correction` (b, m) of the
+    rings by zero shift and displacement, `axial` (b, k, 3) axial strains in their sigmas."""
+
+    offset: Floats
+    correction: Floats
+    axial: Floats
 
 
 class _PatternWork:
@@ -124,8 +143,10 @@ class _PatternWork:
         crowd: Floats,
         members: NDArray[np.int64],
         loose: Looseness,
+        axial: Floats | None,
     ) -> None:
         self.pattern = pattern
+        self.axial = axial
         self.crowd = crowd
         self.x = lines.x[members]
         self.intensity = lines.intensity[members]
@@ -150,15 +171,20 @@ class _PatternWork:
         self.odd_position = np.zeros((self.b, self.m), dtype=bool)
         self.claimed = np.ones((self.b, self.m), dtype=bool)
 
-    def associate(self, offset: Floats, correction: Floats, wide: float) -> None:
-        """Let every line fall on the ring nearest to it, if within the window × `wide`."""
-        position = self.x + offset[:, :, None]
+    def associate(self, shift: _Shift, wide: float) -> None:
+        """Let every line fall on the ring nearest to it, if within the window (`wide` of it)."""
+        correction = shift.correction
+        position = self.x + shift.offset[:, :, None]
+        if self.axial is not None:
+            position = position + np.einsum("bkna,bka->bkn", self.axial, shift.axial)
         middles = 0.5 * (self.pattern.x[1:] + self.pattern.x[:-1])
         ring = np.searchsorted(middles, position)
         batch = np.arange(self.b)[:, None, None]
         distance = position - self.pattern.x[ring] + correction[batch, ring]
         extra = np.sqrt(self.jitter2)[:, :, None] * 3.0
-        near = np.abs(distance) < self.window[ring] * wide + extra
+        if self.axial is not None:
+            extra = extra + (wide - 1.0) * np.abs(self.axial).max(axis=3)
+        near = np.abs(distance) < self.window[ring] + extra
         near &= self.intensity > 0
         self.ring = np.where(near, ring, -1)
         cell = (np.arange(self.b * self.k).reshape(self.b, self.k, 1) * self.m + ring)[near]
@@ -172,6 +198,12 @@ class _PatternWork:
         square = np.bincount(cell, weights=weight * away**2, minlength=size).reshape(shape)
         self.centre = moment / weight_sum
         self.square = square / weight_sum
+        if self.axial is not None:
+            levers = [
+                np.bincount(cell, weights=weight * self.axial[..., a][near], minlength=size)
+                for a in range(self.axial.shape[3])
+            ]
+            self.lever = np.stack(levers, axis=1).reshape(*shape, -1) / weight_sum[..., None]
         with np.errstate(invalid="ignore"):
             covered = self.pattern.seen_weight(np.where(np.isfinite(position), position, 50.0))
         self.covered = np.where(self.visible > 0, covered, 0.0)
@@ -253,11 +285,16 @@ class _PatternWork:
         result: Floats = self.pattern.sigma**2 + jitter + merged
         return result
 
-    def unshifted(self, offset: Floats, correction: Floats) -> Floats:
+    def placed(self, shift: _Shift) -> Floats:
+        """(b, m) shift in ln d of each ring by the nuisances."""
+        total = np.einsum("bkm,bk->bm", self.share, shift.offset) + shift.correction
+        if self.axial is not None:
+            total = total + np.einsum("bkm,bkma,bka->bm", self.share, self.lever, shift.axial)
+        return np.asarray(total)
+
+    def unshifted(self, shift: _Shift) -> Floats:
         """(b, m) measured minus calculated position at zero scale, strain and angle errors."""
-        predicted = np.einsum("bkm,bkm->bm", self.share, self.centre)
-        result: Floats = np.einsum("bkm,bk->bm", self.share, offset) + correction - predicted
-        return result
+        return self.placed(shift) - np.einsum("bkm,bkm->bm", self.share, self.centre)
 
     def decide(self, residual: Floats) -> None:
         """Give each ring to the phases or to nowhere, whichever is the likelier."""
@@ -347,13 +384,19 @@ def nothing_listed(model: Model) -> float:
 
 
 class _Positions:
-    """The linear Gaussian model of all positions together."""
+    """The linear Gaussian model of all positions together.
+
+    Nuisances in order: those of each pattern, the strain of each phase, three axial strains of each
+    phase where any phase has them.
+    """
 
     def __init__(self, works: list[_PatternWork], loose: Looseness) -> None:
         self.works = works
         self.loose = loose
         self.widths = [work.pattern.nuisance.shape[1] for work in works]
-        self.size = sum(self.widths) + works[0].k
+        self.strains = sum(self.widths)
+        self.axials = self.strains + works[0].k
+        self.size = self.axials + (0 if loose.axial is None else _AXES * works[0].k)
 
     def _design(self) -> Floats:
         blocks = []
@@ -362,7 +405,10 @@ class _Positions:
             block = np.zeros((work.b, work.m, self.size))
             block[:, :, start : start + width] = work.pattern.nuisance
             strain = np.einsum("bkm,bk->bmk", work.share, self.loose.strain)
-            block[:, :, sum(self.widths) :] = strain
+            block[:, :, self.strains : self.axials] = strain
+            if work.axial is not None:
+                lever = np.einsum("bkm,bkma->bmka", work.share, work.lever)
+                block[:, :, self.axials :] = lever.reshape(work.b, work.m, -1)
             blocks.append(block)
             start += width
         return np.concatenate(blocks, axis=1)
@@ -397,17 +443,18 @@ class _Positions:
         result += odd * log(ODD_POSITION_SHARE) + plain * log(1.0 - ODD_POSITION_SHARE)
         return result
 
-    def place(self, mean: Floats) -> tuple[Floats, list[Floats]]:
-        """Offsets (b, k, K) and per-pattern ring corrections (b, m) that the nuisances mean."""
-        strain = mean[:, sum(self.widths) :] * self.loose.strain
-        offsets, corrections = [], []
+    def place(self, mean: Floats) -> list[_Shift]:
+        """What the nuisances `mean` (b, q) do in each pattern."""
+        strain = mean[:, self.strains : self.axials] * self.loose.strain
+        axial = mean[:, self.axials :].reshape(len(mean), -1, _AXES)
+        shifts = []
         start = 0
         for work, width in zip(self.works, self.widths, strict=True):
             own = mean[:, start : start + width]
-            offsets.append(strain + own[:, :1] * work.pattern.nuisance[0, 0])
-            corrections.append(own[:, 1:] @ work.pattern.nuisance[:, 1:].T)
+            offset = strain + own[:, :1] * work.pattern.nuisance[0, 0]
+            shifts.append(_Shift(offset, own[:, 1:] @ work.pattern.nuisance[:, 1:].T, axial))
             start += width
-        return np.stack(offsets, axis=2), corrections
+        return shifts
 
 
 def evaluate(
@@ -423,25 +470,30 @@ def evaluate(
     """
     if loose is None:
         loose = Looseness.listed((members.shape[0], members.shape[1]))
+    axial = loose.axial or (None,) * len(model.patterns)
     works = [
-        _PatternWork(pattern, lines, crowd, members, loose)
-        for pattern, lines, crowd in zip(model.patterns, model.lines, model.crowd, strict=True)
+        _PatternWork(pattern, lines, crowd, members, loose, stretch)
+        for pattern, lines, crowd, stretch in zip(
+            model.patterns, model.lines, model.crowd, axial, strict=True
+        )
     ]
     positions = _Positions(works, loose)
-    corrections = [np.zeros((work.b, work.m)) for work in works]
-    for rounds in (4, 2, 1):
+    still = np.zeros((*members.shape, _AXES))
+    shifts = [
+        _Shift(offset[:, :, i], np.zeros((work.b, work.m)), still) for i, work in enumerate(works)
+    ]
+    for rounds, wide in ((4, 2.0), (2, 1.3), (1, 1.0)):
         targets = []
-        for i, work in enumerate(works):
-            work.associate(offset[:, :, i], corrections[i], 1.0)
+        for work, shift in zip(works, shifts, strict=True):
+            work.associate(shift, wide)
             work.fit_amplitudes(rounds)
-            targets.append(work.unshifted(offset[:, :, i], corrections[i]))
+            targets.append(work.unshifted(shift))
         mean, covariance, _ = positions.solve(targets, SIGMA_INFLATION[0][0])
-        offset, corrections = positions.place(mean)
+        shifts = positions.place(mean)
         residuals = []
-        for i, work in enumerate(works):
-            placed = np.einsum("bkm,bk->bm", work.share, offset[:, :, i]) + corrections[i]
-            residuals.append(targets[i] - placed)
-            work.decide(residuals[i])
+        for work, shift, target in zip(works, shifts, targets, strict=True):
+            residuals.append(target - work.placed(shift))
+            work.decide(residuals[-1])
     # the claims have moved: settle amplitudes and positions once more on the final claims
     for work in works:
         work.fit_amplitudes(1)
@@ -458,13 +510,14 @@ def evaluate(
     scale_sds = np.stack(
         [deviation[:, first[i]] * w.pattern.nuisance[0, 0] for i, w in enumerate(works)], axis=1
     )
-    offset, _ = positions.place(mean)
+    offsets = np.stack([shift.offset for shift in positions.place(mean)], axis=2)
+    strains = slice(positions.strains, positions.axials)
     return Fit(
         log_likelihood=total,
-        offset=offset,
+        offset=offsets,
         scale=scales,
         scale_sd=scale_sds,
-        strain=mean[:, first[-1] :] * loose.strain,
-        strain_sd=deviation[:, first[-1] :] * loose.strain,
+        strain=mean[:, strains] * loose.strain,
+        strain_sd=deviation[:, strains] * loose.strain,
         patterns=tuple(map(_PatternWork.result, works, targets, residuals)),
     )

@@ -12,12 +12,13 @@ from phaseid.matching.patterns import Floats, Pattern
 
 MOST_LINES = 128
 """Lines kept per phase and pattern: the strongest of those within reach of the rings."""
+_PAIRS = ((0, 0), (1, 1), (2, 2), (1, 2), (0, 2), (0, 1))
 _CELLS = 3.0
 """Cells per resolution within which lines are summed before anything is left out."""
 REACH_LOW, REACH_HIGH = 0.12, 0.60
 """How far beyond the outermost rings (in ln d) lines are still looked at."""
 BELOW_LIMIT = 0.12
-"""Lines weaker than this times the detection limit, for a phase that fills the pattern, are left out."""
+"""Lines weaker than this part of the detection limit in a phase that fills the pattern are left."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -139,3 +140,42 @@ def _merge_neighbours(x: Floats, intensity: Floats, pattern: Pattern) -> Floats:
         visible[absorbed, into[absorbed]] += visible[absorbed, j]
         visible[absorbed, j] = 0.0
     return visible
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Levers:
+    """`values` (n, 3): change of ln d of a line for one of ln of each cell edge; `free` lengths.
+
+    For a cubic cell the values are 0: there is no axial strain beside the isotropic one.
+    """
+
+    values: Floats
+    free: int
+
+
+def axial_levers(table: LineTable, phase: int, rows: NDArray[np.int64]) -> Levers:
+    """How the lines `rows` (n,) of a phase answer to a relative change of each cell edge.
+
+    ∂ln d/∂ln a_i = h_i (G* h)_i d², with G* the reciprocal metric, summing to one over the edges.
+    G* is had from the phase's own lines, of which 1/d² = hᵀ G* h holds. Edges that symmetry makes
+    alike share one lever.
+    """
+    own = slice(table.offsets[phase], table.offsets[phase + 1])
+    h = table.hkl[own].astype(np.float64)
+    products = np.stack([h[:, i] * h[:, j] * (1 if i == j else 2) for i, j in _PAIRS], axis=1)
+    g, *_ = np.linalg.lstsq(products, 1.0 / table.d_A[own] ** 2, rcond=1e-9)
+    metric = np.empty((3, 3))
+    for value, (i, j) in zip(g, _PAIRS, strict=True):
+        metric[i, j] = metric[j, i] = value
+    chosen = table.hkl[rows].astype(np.float64)
+    values: Floats = chosen * (chosen @ metric) * table.d_A[rows, None] ** 2
+    edges = np.diag(metric)
+    alike = np.isclose(edges[[0, 1, 0]], edges[[1, 2, 2]], rtol=1e-5)
+    if alike.all():
+        return Levers(np.zeros_like(values), 1)
+    if not alike.any():
+        return Levers(values, 3)
+    i, j = ((0, 1), (1, 2), (0, 2))[int(np.argmax(alike))]
+    values[:, i] += values[:, j]
+    values[:, j] = 0.0
+    return Levers(values, 2)

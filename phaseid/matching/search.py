@@ -13,11 +13,14 @@ from math import lgamma, log
 import numpy as np
 from numpy.typing import NDArray
 
+from phaseid.library.linetable import LineTable
 from phaseid.matching.candidates import best_shift, make_ruler, scan
 from phaseid.matching.likelihood import Fit, Looseness, Model, evaluate
+from phaseid.matching.lineset import Levers, axial_levers
 from phaseid.matching.patterns import Floats
 from phaseid.matching.settings import (
     PHASE_COUNT_PRIOR,
+    RELATIVE_AXIAL,
     RELATIVE_INTENSITY,
     RELATIVE_JITTER,
     RELATIVE_STRAIN,
@@ -64,6 +67,7 @@ class Search:
     """State of one search over the candidate phases of `model`.
 
     `log_prior` (c,) is ln of each phase's share of the prior, summing to one over the candidates.
+    `tables` one line table per pattern; `phases` (c,) the table's index of each candidate.
     `accepts` says whether a set of candidates may be an answer (required elements); sets it refuses
     are still built upon.
     """
@@ -71,8 +75,11 @@ class Search:
     model: Model
     log_prior: Floats
     max_phases: int
+    tables: tuple[LineTable, ...]
+    phases: NDArray[np.int64]
     accepts: Callable[[Members], bool] = field(default=lambda members: True)
     judged: dict[Members, Judged] = field(default_factory=dict)
+    levers: dict[int, tuple[Levers, ...]] = field(default_factory=dict)
 
     def run(self) -> list[Judged]:
         """Search, and return every judged set, best first."""
@@ -209,7 +216,7 @@ class Search:
         for _, items in sorted(by_size.items()):
             members = np.array([judged.members for judged, _ in items], dtype=np.int64)
             offsets = np.stack([judged.offset for judged, _ in items])
-            loose = relaxed(members, np.array([w for _, w in items]))
+            loose = self._relaxed(members, np.array([w for _, w in items]))
             for part, fit in evaluate_in_batches(self.model, members, offsets, loose):
                 for row, index in enumerate(part):
                     judged, loosened = items[index]
@@ -223,6 +230,28 @@ class Search:
                         )
                     )
         return found
+
+    def _relaxed(self, members: NDArray[np.int64], which: NDArray[np.int64]) -> Looseness:
+        """Looseness of sets (b, k) of which member `which` (b,) is only an unlisted relative."""
+        loose = Looseness.listed((members.shape[0], members.shape[1]))
+        axial = tuple(np.zeros((*members.shape, lines.x.shape[1], 3)) for lines in self.model.lines)
+        for row, k in enumerate(which):
+            candidate = int(members[row, k])
+            loose.strain[row, k] = RELATIVE_STRAIN
+            loose.spread[row, k] = RELATIVE_INTENSITY
+            for own, levers in zip(axial, self._levers(candidate), strict=True):
+                own[row, k, : len(levers.values)] = RELATIVE_AXIAL * levers.values
+            loose.jitter[row, k] = RELATIVE_JITTER[self._levers(candidate)[0].free]
+        return Looseness(loose.strain, loose.jitter, loose.spread, axial)
+
+    def _levers(self, candidate: int) -> tuple[Levers, ...]:
+        """Axial levers of one phase's lines, one per pattern, computed once."""
+        if candidate not in self.levers:
+            self.levers[candidate] = tuple(
+                axial_levers(table, int(self.phases[candidate]), lines.row[candidate])
+                for table, lines in zip(self.tables, self.model.lines, strict=True)
+            )
+        return self.levers[candidate]
 
     def distant_relatives(self, count: int) -> list[Judged]:
         """Single phases whose pattern fits at a shift the scale does not allow, to start from."""
@@ -243,16 +272,6 @@ class Search:
         ]
 
 
-def relaxed(members: NDArray[np.int64], which: NDArray[np.int64]) -> Looseness:
-    """Looseness of sets (b, k) of which member `which` (b,) is only an unlisted relative."""
-    loose = Looseness.listed((members.shape[0], members.shape[1]))
-    rows = np.arange(len(members))
-    loose.strain[rows, which] = RELATIVE_STRAIN
-    loose.jitter[rows, which] = RELATIVE_JITTER
-    loose.spread[rows, which] = RELATIVE_INTENSITY
-    return loose
-
-
 def evaluate_in_batches(
     model: Model, members: NDArray[np.int64], offsets: Floats, loose: Looseness | None = None
 ) -> Iterable[tuple[NDArray[np.int64], Fit]]:
@@ -263,7 +282,7 @@ def evaluate_in_batches(
         part = np.arange(start, min(start + size, len(members)))
         chosen = None
         if loose is not None:
-            chosen = Looseness(loose.strain[part], loose.jitter[part], loose.spread[part])
+            chosen = loose.rows(part)
         yield part, evaluate(model, members[part], offsets[part], chosen)
 
 

@@ -43,8 +43,10 @@ STRAIN = 0.0015
 
 RELATIVE_STRAIN = 0.02
 """The same for an unlisted relative: a phase of the listed structure type with another cell."""
-RELATIVE_JITTER = 0.0025
-"""Line-by-line scatter of the relative's positions where its cell has more than one free length."""
+RELATIVE_AXIAL = 0.01
+"""One-sigma of the further strain of each cell edge of a relative whose cell has several lengths."""
+RELATIVE_JITTER = {1: 0.0, 2: 0.0003, 3: 0.0008}
+"""Line-by-line scatter left after that (angles, further parameters), by number of free lengths."""
 RELATIVE_INTENSITY = 0.35
 """Extra scatter of ln intensity of an unlisted relative: other atoms on the same sites."""
 RELATIVE_PRIOR = 0.15
