@@ -113,6 +113,4 @@ def test_no_constraint_admits_everything_and_says_nothing() -> None:
 
 def test_the_answer_tells_which_constraints_were_applied() -> None:
     text = Chemistry.parse("Al", "Al,O,Si", "Si").describe()
-    assert text == (
-        "Chemistry: required Al; no element other than Al, O, Si; excluded Si."
-    )
+    assert text == ("Chemistry: required Al; no element other than Al, O, Si; excluded Si.")
