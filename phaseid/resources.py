@@ -1,4 +1,4 @@
-"""Where the files that come with phaseid lie: beside the package in a checkout, inside it in a wheel."""
+"""Where the files that come with phaseid lie: beside the package, or inside it in a wheel."""
 
 from __future__ import annotations
 

@@ -5,8 +5,9 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
-from phaseid.crystal.composition import density_of_contents, hill_formula
+from phaseid.crystal.composition import density_of_contents
 from phaseid.crystal.crystal import Finding, Site
+from phaseid.crystal.formula import chemical_formula
 
 _TOLERANCE = 0.05
 _VOLUME_TOLERANCE = 0.01
@@ -50,7 +51,7 @@ def agree(contents: Mapping[str, float], volume_A3: float, stated: Stated) -> Ag
     if any(_differs(held.get(el, 0.0), units * formula.get(el, 0.0)) for el in heavy):
         mismatch = Finding(
             "formula_mismatch",
-            f"the cell holds {hill_formula(contents)}, not in the ratios of the stated formula "
+            f"the cell holds {chemical_formula(contents)}, not in the ratios of the stated formula "
             f"{stated.formula_text}",
         )
         missing = _hydrogen_missing(held, formula, stated.z or units)

@@ -8,6 +8,8 @@ from __future__ import annotations
 import re
 
 from phaseid.crystal.crystal import Crystal, Site
+from phaseid.crystal.elements import parse_formula
+from phaseid.crystal.formula import hill_formula
 from phaseid.crystal.provenance import REFERENCE_TAG, SOURCE_DATABASE_TAG, SOURCE_ID_TAG
 
 _SAFE = re.compile(r"[A-Za-z0-9+\-.,()/:*|@!%^&~]+$")
@@ -43,7 +45,7 @@ def crystal_to_cif(crystal: Crystal) -> str:
     pairs += [(tag, _number(x)) for tag, x in zip(_CELL_TAGS, crystal.cell, strict=True)]
     pairs += [
         ("_cell_formula_units_Z", _number(crystal.z)),
-        ("_chemical_formula_sum", re.sub(r"(?<=.)(?=[A-Z])", " ", crystal.formula)),
+        ("_chemical_formula_sum", hill_formula(parse_formula(crystal.formula) or {}, " ")),
         ("_space_group_IT_number", str(crystal.space_group_number)),
         ("_space_group_name_H-M_alt", crystal.space_group_symbol),
     ]

@@ -8,6 +8,7 @@ from collections.abc import Mapping
 import gemmi
 
 from phaseid.crystal.crystal import Crystal
+from phaseid.crystal.formula import chemical_formula
 from phaseid.crystal.metric import volume_A3
 from phaseid.crystal.positions import multiplicities
 from phaseid.crystal.symmetry import operation_arrays
@@ -20,7 +21,6 @@ __all__ = [
     "cell_contents",
     "density_g_cm3",
     "density_of_contents",
-    "hill_formula",
     "reduced",
     "volume_A3",
 ]
@@ -54,18 +54,8 @@ def density_g_cm3(crystal: Crystal) -> float:
     return density_of_contents(cell_contents(crystal), volume_A3(crystal.cell))
 
 
-def hill_formula(amounts: Mapping[str, float]) -> str:
-    """Write amounts in Hill order: C, then H, then the alphabet; without C the alphabet alone.
-
-    Hill (1900), J. Am. Chem. Soc. 22, 478. Amounts are written to three decimals, 1 is left out.
-    """
-    carbon = "C" in amounts
-    order = sorted(amounts, key=lambda el: (carbon and el not in ("C", "H"), el))
-    return "".join(el + _amount(amounts[el]) for el in order)
-
-
 def reduced(contents: Mapping[str, float], z_hint: float | None = None) -> tuple[str, float]:
-    """Return the reduced formula in Hill order, and how many of them the cell holds.
+    """Return the reduced formula as chemists write it, and how many of them the cell holds.
 
     Whole numbers of atoms are divided by their common divisor. Otherwise the cell holds `z_hint`
     formula units, or, without one, the common divisor of the whole numbers among them.
@@ -75,9 +65,4 @@ def reduced(contents: Mapping[str, float], z_hint: float | None = None) -> tuple
     z: float = math.gcd(*whole) if whole else 1
     if len(whole) < len(kept) and z_hint is not None and z_hint > 0:
         z = z_hint
-    return hill_formula({el: n / z for el, n in kept.items()}), float(z)
-
-
-def _amount(value: float) -> str:
-    text = f"{value:.3f}".rstrip("0").rstrip(".")
-    return "" if text == "1" else text
+    return chemical_formula({el: n / z for el, n in kept.items()}), float(z)

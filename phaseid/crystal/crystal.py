@@ -25,9 +25,9 @@ class Finding:
 class Source:
     """Where a structure came from.
 
-    `database` e.g. "COD", "AFLOW prototypes", "phaseid starter", "file"; `id` its number there or "";
-    `file` the name of the file (inside an archive: the member's name); `reference` the literature
-    citation or "".
+    `database` e.g. "COD", "AFLOW prototypes", "phaseid starter", "file"; `id` its number there or
+    ""; `file` the name of the file (inside an archive: the member's name); `reference` the
+    literature citation or "".
     """
 
     database: str
@@ -60,13 +60,14 @@ class Site:
 class Crystal:
     """A crystal structure: one conventional cell as its source gives it.
 
-    `cell` is (a, b, c) in Å and (alpha, beta, gamma) in degrees. `operations` is the complete list of
-    symmetry operations as triplets ("x,y,z", centring included), a group modulo lattice translations.
+    `cell` is (a, b, c) in Å and (alpha, beta, gamma) in degrees. `operations` is the complete list
+    of symmetry operations as triplets ("x,y,z", centring included), a group modulo lattice
+    translations.
     `space_group_number` is 1-230; `space_group_symbol` the short Hermann-Mauguin symbol, with the
     setting where it is not the standard one.
-    `formula` is the reduced formula in Hill order of what the sites hold, e.g. "Al2 O3" written
-    "Al2O3"; `z` how many of them the cell holds. `name` is what people call the phase (mineral or
-    common name), "" if the source has none.
+    `formula` is the reduced formula of what the sites hold, as chemists write it; `z` how many of
+    them the cell holds. `name` is what people call the phase (mineral or common name), "" if the
+    source has none.
     """
 
     cell: tuple[float, float, float, float, float, float]

@@ -8,7 +8,6 @@ from dataclasses import dataclass
 from typing import Literal
 
 from phaseid.library.phase import Phase
-from phaseid.reports.formula import formula_text
 
 ELLIPSIS = "…"
 NARROWEST = 6  # a flexible column keeps as many characters
@@ -59,8 +58,8 @@ def probability_text(value: float) -> str:
 
 def phase_text(phase: Phase) -> str:
     """Name a phase for a reader: `corundum (Al2O3)`, or by the formula alone."""
-    name, formula = safe(phase.name), formula_text(safe(phase.formula))
-    return formula if name in ("", phase.formula, formula) else f"{name} ({formula})"
+    name, formula = safe(phase.name), safe(phase.formula)
+    return formula if name in ("", formula) else f"{name} ({formula})"
 
 
 def source_text(phase: Phase) -> str:

@@ -7,7 +7,6 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
-from phaseid.reports.formula import formula_text
 from phaseid.reports.plain import (
     Column,
     cell_text,
@@ -187,7 +186,7 @@ def _rings(page: _Page, answer: Identification, best: Hypothesis, number: int) -
                     *(measured if order == 0 else ["", ""]),
                     f"{a.d_calc_A:.4f}",
                     hkl_text(a.hkl),
-                    formula_text(best.phases[a.phase].phase.formula),
+                    best.phases[a.phase].phase.formula,
                     signed_text(a.residual_sigma),
                     intensity if order == 0 else "",
                     f"{a.relative_intensity:.0f}",
@@ -219,7 +218,7 @@ def _against(page: _Page, answer: Identification, best: Hypothesis) -> None:
         items.append(f"Ring {u.ring + 1}{where} at {d_A:.4f} Å is unexplained{hint}")
     for m in best.missing:
         where = f" in pattern {m.pattern + 1}" if many else ""
-        formula = formula_text(safe(best.phases[m.phase].phase.formula))
+        formula = safe(best.phases[m.phase].phase.formula)
         items.append(
             f"{formula} should also show {hkl_text(m.hkl)} at "
             f"{m.d_calc_A:.4f} Å (calculated intensity {m.relative_intensity:.0f} of 100){where}"

@@ -61,13 +61,13 @@ def test_a_phase_comes_back_as_it_went_in(library: Library, write_cif: WriteCif)
     assert library.phase(phase.phase_id) == phase
     assert library.crystal(phase.phase_id) == crystal
     assert phase.source == crystal.source
-    assert (phase.name, phase.formula, phase.elements) == ("Halite", "ClNa", ("Cl", "Na"))
+    assert (phase.name, phase.formula, phase.elements) == ("Halite", "NaCl", ("Cl", "Na"))
     assert (phase.space_group_number, phase.space_group_symbol) == (225, "Fm-3m")
     assert phase.cell == (5.64, 5.64, 5.64, 90.0, 90.0, 90.0)
     assert phase.volume_A3 == pytest.approx(5.64**3)
     # density of halite 2.165 g/cm3: CRC Handbook of Chemistry and Physics, from memory
     assert phase.density_g_cm3 == pytest.approx(2.165, rel=2e-3)
-    assert phase.phase_id.startswith("ClNa-")
+    assert phase.phase_id.startswith("NaCl-")
     assert len(phase.phase_id) == len("ClNa-") + 8
     assert (phase.quality, phase.findings, phase.cautions) == (1.0, (), ())
 

@@ -7,7 +7,6 @@ from dataclasses import replace
 import pytest
 
 from phaseid.matching.identification import Identification, TypeMatch, Unexplained
-from phaseid.reports.formula import formula_text
 from phaseid.reports.plain import (
     Column,
     cell_text,
@@ -178,28 +177,6 @@ def test_no_probability_reads_as_certainty(value: float, text: str) -> None:
 )
 def test_a_cell_is_written_without_repetition(cell: tuple[float, ...], text: str) -> None:
     assert cell_text(cell) == text
-
-
-@pytest.mark.parametrize(
-    ("formula", "text"),
-    [  # as written in any textbook
-        ("ClNa", "NaCl"),
-        ("NTi", "TiN"),
-        ("Al2MgO4", "MgAl2O4"),
-        ("CCaO3", "CaCO3"),
-        ("H2O", "H2O"),
-        ("H3N", "NH3"),
-        ("CSi", "SiC"),
-        ("AlNi", "NiAl"),
-        ("C0.61W", "WC0.61"),
-        ("D2O", "D2O"),
-        ("Al", "Al"),
-        ("(Mg,Fe)O", "(Mg,Fe)O"),
-        ("", ""),
-    ],
-)
-def test_a_formula_reads_as_chemists_write_it(formula: str, text: str) -> None:
-    assert formula_text(formula) == text
 
 
 @pytest.mark.parametrize(
