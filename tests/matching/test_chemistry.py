@@ -41,7 +41,7 @@ def test_a_caret_stands_under_the_word_that_is_no_element(text: str, word: str) 
 
 
 def test_close_symbols_are_offered() -> None:
-    with pytest.raises(InputError, match="Close symbols:.*Al"):
+    with pytest.raises(InputError, match=r"Close symbols:.*Al"):
         parse_elements("Alu", "--not")
 
 
