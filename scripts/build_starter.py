@@ -34,6 +34,7 @@ CHECK_COLUMNS = (
     "result",
 )
 AGREES = "agrees"
+RECALLED = "from memory ("
 
 
 def quote(text: str) -> str:
@@ -47,6 +48,19 @@ def hill(formula: str) -> str:
     first = [e for e in ("C", "H") if e in counts and "C" in counts]
     order = first + sorted(set(counts) - set(first))
     return " ".join(f"{e}{counts[e]:g}" if counts[e] != 1 else e for e in order)
+
+
+def reference(source: str) -> str:
+    """The source in a reader's words: what was recalled says so at its end."""
+    text = source
+    if text.startswith(RECALLED):
+        depth, end = 1, len(RECALLED)
+        while depth:
+            depth += {"(": 1, ")": -1}.get(text[end], 0)
+            end += 1
+        text = text[len(RECALLED) : end - 1] + text[end:]
+    text = text.removesuffix(", from memory")
+    return text if text == source else f"{text}; recalled from memory, not checked in the original"
 
 
 def status(rows: list[dict[str, str]]) -> list[str]:
@@ -101,7 +115,7 @@ def cif(phase: PhaseFact, rows: list[dict[str, str]]) -> str:
         lines.append(f"_phaseid_mark {opt['mark']}")
     if phase.cod:
         lines.append(f"_cod_database_code {phase.cod}")
-    lines += [f"_publ_section_references {quote(phase.source)}"]
+    lines += [f"_publ_section_references {quote(reference(phase.source))}"]
     comment = ["Written by phaseid from published facts.", *status(rows)]
     if "note" in opt:
         comment.append(opt["note"])

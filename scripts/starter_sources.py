@@ -174,8 +174,7 @@ def computed(path: Path, wanted: set[tuple[frozenset[str], int]]) -> Iterator[St
             if (elements, int(number.group(1))) not in wanted:
                 continue
             small = gemmi.make_small_structure_from_block(gemmi.cif.read_string(text).sole_block())
-            row = Path(name).stem.removeprefix("mp_")
-            label = f"computed structure (Materials Project data, row {row})"
+            label = "computed structure (Materials Project data)"
             standard = standardise(small.cell, fill_cell(small), label)
             if standard:
                 yield standard
