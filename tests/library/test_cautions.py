@@ -73,6 +73,19 @@ def test_every_rule_defers_to_local_rules_and_has_a_condition() -> None:
         assert "rules" in rule["caution"]
 
 
-def test_a_sentence_is_said_once() -> None:
-    said = _cautions("quartz", "O2Si", "O Si", 152)
-    assert len(said) == len(set(said)) == 1
+@pytest.mark.parametrize(
+    ("name", "formula", "elements", "number"),
+    [  # each meets two rules: by its name, and by its formula or another element
+        ("quartz", "SiO2", "O Si", 152),
+        ("chrysotile", "Mg3Si2O5(OH)4", "H Mg O Si", 12),
+        ("tremolite", "Ca2Mg5Si8O22(OH)2", "Ca H Mg O Si", 12),
+        ("crocoite", "PbCrO4", "Cr O", 14),
+        ("retgersite", "NiSO4", "Ni O S", 92),
+    ],
+)
+def test_a_hazard_is_told_once(name: str, formula: str, elements: str, number: int) -> None:
+    assert len(_cautions(name, formula, elements, number)) == 1
+
+
+def test_nickel_and_its_compounds_share_one_sentence() -> None:
+    assert _cautions("", "Ni", "Ni", 225) == _cautions("bunsenite", "NiO", "Ni O", 225)
