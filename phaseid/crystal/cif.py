@@ -7,7 +7,10 @@ what was interpreted, left out or contradicts the file's own formula stands in `
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 from pathlib import Path
+
+import gemmi
 
 from phaseid.crystal.agreement import Stated
 from phaseid.crystal.atom_sites import SiteProblem, has_sites, read_sites
@@ -179,7 +182,7 @@ def _without_fractions(block: Block) -> _Refusal:
 
 
 def _symmetry_items(block: Block) -> SymmetryItems:
-    triplets: list[str] = []
+    triplets: tuple[str, ...] = ()
     for tag in _TRIPLET_TAGS:
         if block.rows(tag) > MAX_OPERATIONS:
             raise _Refusal(
@@ -187,11 +190,11 @@ def _symmetry_items(block: Block) -> SymmetryItems:
                 f"{block.rows(tag)} symmetry operations are listed, at most {MAX_OPERATIONS} are "
                 "possible",
             )
-        triplets = triplets or block.strings(tag)
-    if any(len(triplet) > _MAX_SYMBOL for triplet in triplets):
+        triplets = triplets or _triplets(tuple(block.column(tag)))
+    if max(map(len, triplets), default=0) > _MAX_SYMBOL:
         raise _Refusal("bad_symmetry", "a symmetry operation is absurdly long")
     return SymmetryItems(
-        triplets=tuple(t for t in triplets if t not in ("", "?", ".")),
+        triplets=triplets,
         hall=block.text("_space_group_name_hall", "_symmetry_space_group_name_hall")[:_MAX_SYMBOL],
         hermann_mauguin=block.text("_space_group_name_h-m_alt", "_symmetry_space_group_name_h-m")[
             :_MAX_SYMBOL
@@ -201,6 +204,13 @@ def _symmetry_items(block: Block) -> SymmetryItems:
             "_space_group_it_coordinate_system_code", "_space_group.it_coordinate_system_code"
         )[:_MAX_SYMBOL],
     )
+
+
+@lru_cache(maxsize=1024)
+def _triplets(raw: tuple[str, ...]) -> tuple[str, ...]:
+    """Return the operations of a column as written, unquoted; many files share a list."""
+    unquoted = map(gemmi.cif.as_string, raw)
+    return tuple(text for text in unquoted if text not in ("", "?", "."))
 
 
 def _cell(block: Block) -> tuple[Cell, tuple[Finding, ...]]:

@@ -37,6 +37,7 @@ class Block:
         self._pairs: dict[str, str] = {}
         self._loops: dict[str, tuple[gemmi.cif.Loop, int]] = {}
         self._values: dict[int, list[str]] = {}  # of loops read, by identity
+        self._tags = ""  # all tags, each on a line of its own
         for item in block:
             if item.pair is not None:
                 tag, value = cast("tuple[str, str]", item.pair)
@@ -46,13 +47,14 @@ class Block:
             if loop is not None:
                 for index, tag in enumerate(loop.tags):
                     self._loops.setdefault(tag.lower(), (loop, index))
+        self._tags = "\n" + "\n".join((*self._pairs, *self._loops))
 
     def __contains__(self, tag: str) -> bool:
         return tag in self._pairs or tag in self._loops
 
     def has_prefix(self, *prefixes: str) -> bool:
         """Tell whether any tag starts with one of the prefixes (lower case)."""
-        return any(tag.startswith(prefixes) for tag in (*self._pairs, *self._loops))
+        return any("\n" + prefix in self._tags for prefix in prefixes)
 
     def text(self, *tags: str) -> str:
         """Return the first given value among the tags, unquoted, white space joined, else ""."""

@@ -22,32 +22,31 @@ DEFAULT_B_A2 = 0.5  # common practice for inorganic solids at room temperature, 
 DEFAULT_U_A2 = DEFAULT_B_A2 / (8 * math.pi**2)
 
 
-def isotropic_U_A2(sites: Sequence[Site], cell: Cell) -> Floats:
-    """Return one mean square displacement per site in Å², shape (n,).
+def isotropic_U_A2(sites: Sequence[Site], cell: Cell) -> list[float]:
+    """Return one mean square displacement per site in Å².
 
     That of the source, or the mean of an anisotropic one; where the source is silent, B = 0.5 Å².
     Negative values, which no atom can have, count as silence.
     """
-    values = np.empty(len(sites))
-    for i, site in enumerate(sites):
+    values = []
+    for site in sites:
         u_A2 = site.u_iso_A2
         if u_A2 is None and site.u_aniso_A2 is not None:
             u_A2 = _equivalent(site.u_aniso_A2, cell)
-        silent = u_A2 is None or not 0 <= u_A2 < math.inf
-        values[i] = DEFAULT_U_A2 if silent else u_A2
+        values.append(DEFAULT_U_A2 if u_A2 is None or not 0 <= u_A2 < math.inf else u_A2)
     return values
 
 
 def exponents(
     sites: Sequence[Site], cell: Cell, reciprocal: Floats, operations: Operations, images: Orbits
 ) -> Floats:
-    """Return (6, m): quadratic_terms(hkl) @ exponents is -2π² h·U·h of each image.
+    """Return (m, 6): exponents @ quadratic_terms(hkl).T is -2π² h·U·h of each image.
 
     A tensor turns with the operation that made the image, U → R U Rᵀ in the basis where h·U·h is
     taken; isotropic displacements are U g* for the reciprocal metric g*.
     """
     stars = np.sqrt(reciprocal.diagonal())
-    tensors = isotropic_U_A2(sites, cell)[:, None, None] * reciprocal
+    tensors = np.array(isotropic_U_A2(sites, cell))[:, None, None] * reciprocal
     for i, site in enumerate(sites):
         u = site.u_aniso_A2
         if u is not None and _possible(u, cell):
@@ -55,7 +54,7 @@ def exponents(
     turned = operations.rotations[images.operation]
     turned = turned @ tensors[images.site] @ turned.transpose(0, 2, 1)
     rows = turned[:, (0, 1, 2, 0, 0, 1), (0, 1, 2, 1, 2, 2)] * (1, 1, 1, 2, 2, 2)
-    return np.asarray(rows.T * (-2 * math.pi**2))
+    return np.asarray(rows * (-2 * math.pi**2))
 
 
 def quadratic_terms(hkl: Floats) -> Floats:

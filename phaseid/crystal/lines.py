@@ -9,8 +9,8 @@ from numpy.typing import NDArray
 
 from phaseid.crystal.crystal import Crystal
 from phaseid.crystal.metric import volume_A3
-from phaseid.crystal.operations import read_operations
-from phaseid.crystal.reflections import FINEST_D_A, Reflections, unique_reflections
+from phaseid.crystal.operations import INDEX_CODE, read_operations
+from phaseid.crystal.reflections import FINEST_D_A, unique_reflections
 from phaseid.crystal.scattering import CU_KA1_EV
 from phaseid.crystal.structure_factor import squared_amplitudes
 from phaseid.errors import InputError
@@ -65,24 +65,18 @@ def compute_lines(
     operations = read_operations(crystal.operations)
     found = unique_reflections(crystal.cell, operations, d_min_A)
     f2 = squared_amplitudes(crystal, operations, found, xray_energy_eV)
-    table = np.stack([f2.xray, f2.electron, f2.neutron])
-    seen = np.flatnonzero(table.any(axis=0))
-    if len(seen) < len(found.hkl):
-        found = replace(
-            found,
-            hkl=found.hkl[seen],
-            inverse_d2=found.inverse_d2[seen],
-            multiplicity=found.multiplicity[seen],
-        )
-        table = table[:, seen]
-    hkl, multiplicity, inverse_d2, table = _merged(found, table)
+    hkl, multiplicity, inverse_d2 = found.hkl, found.multiplicity, found.inverse_d2
+    lit = f2.any(axis=0)
+    if not lit.all():
+        hkl, multiplicity, inverse_d2, f2 = hkl[lit], multiplicity[lit], inverse_d2[lit], f2[:, lit]
+    hkl, multiplicity, inverse_d2, f2 = _merged(hkl, multiplicity, inverse_d2, f2)
     return Lines(
-        d_A=inverse_d2**-0.5,
+        d_A=1 / np.sqrt(inverse_d2),
         hkl=hkl.astype(np.int32),
         multiplicity=multiplicity.astype(np.int32),
-        f2_xray=table[0],
-        f2_electron=table[1],
-        f2_neutron=table[2],
+        f2_xray=f2[0],
+        f2_electron=f2[1],
+        f2_neutron=f2[2],
         volume_A3=volume_A3(crystal.cell),
         complete_to_A=found.d_min_A,
     )
@@ -113,25 +107,29 @@ def trim(lines: Lines, floor: float) -> Lines:
     )
 
 
-def _merged(found: Reflections, f2: Floats) -> tuple[Floats, NDArray[np.int64], Floats, Floats]:
+def _merged(
+    hkl: Floats, multiplicity: NDArray[np.int64], inverse_d2: Floats, f2: Floats
+) -> tuple[Floats, NDArray[np.int64], Floats, Floats]:
     """Merge reflections that coincide: hkl, multiplicity, 1/d², |F|²; hkl of the strongest."""
-    hkl, multiplicity, inverse_d2 = found.hkl, found.multiplicity, found.inverse_d2
-    new = np.ones(len(hkl), dtype=bool)
+    new = np.empty(len(hkl), dtype=bool)
+    new[:1] = True
     tolerance = 2 * COINCIDENT  # of 1/d²
-    new[1:] = inverse_d2[1:] > inverse_d2[:-1] * (1 + tolerance)
+    np.greater(inverse_d2[1:], inverse_d2[:-1] * (1 + tolerance), out=new[1:])
     if new.all():
         return hkl, multiplicity, inverse_d2, f2
-    first = np.flatnonzero(new)
-    line = np.cumsum(new) - 1
+    (first,) = new.nonzero()
+    line = new.cumsum() - 1
     within = (inverse_d2 / inverse_d2[first][line] - 1) / tolerance
     if within.max() > 1:  # a chain of near neighbours longer than the tolerance: cut it
         new[1:] |= np.diff(np.floor(within)) > 0
-        first = np.flatnonzero(new)
-        line = np.cumsum(new) - 1
+        (first,) = new.nonzero()
+        line = new.cumsum() - 1
     weighted = multiplicity * f2
     total = np.add.reduceat(multiplicity, first)
     summed = np.add.reduceat(weighted, first, axis=1)
-    highest = np.flatnonzero(weighted[0] == np.maximum.reduceat(weighted[0], first)[line])
+    highest = np.maximum.reduceat(weighted[0], first)[line]
+    (strong,) = (weighted[0] >= highest * (1 - 1e-6)).nonzero()
+    strong = strong[(hkl[strong] @ INDEX_CODE).argsort()]  # of equals the one of highest h, k, l
     strongest = np.empty_like(first)
-    strongest[line[highest[::-1]]] = highest[::-1]  # of equals the first
+    strongest[line[strong]] = strong
     return hkl[strongest], total, inverse_d2[strongest], summed / total

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,18 +11,35 @@ from numpy.typing import NDArray
 Cell = tuple[float, float, float, float, float, float]
 
 
+@lru_cache(maxsize=64)
 def volume_A3(cell: Cell) -> float:
     """Return the volume in Å³ of a cell in Å and degrees; 0 where the three angles cannot meet."""
     a, b, c, alpha, beta, gamma = cell
-    ca, cb, cg = (math.cos(math.radians(x)) for x in (alpha, beta, gamma))
+    ca, cb, cg = _cosine(alpha), _cosine(beta), _cosine(gamma)
     return a * b * c * math.sqrt(max(0.0, 1 - ca * ca - cb * cb - cg * cg + 2 * ca * cb * cg))
 
 
+@lru_cache(maxsize=64)
 def metric_tensor(cell: Cell) -> NDArray[np.float64]:
-    """Return the metric tensor (3, 3) in Å² of a cell in Å and degrees."""
+    """Return the metric tensor (3, 3) in Å² of a cell in Å and degrees; it cannot be written to."""
     a, b, c, alpha, beta, gamma = cell
-    bc, ac, ab = (
-        x * y * math.cos(math.radians(angle))
-        for x, y, angle in ((b, c, alpha), (a, c, beta), (a, b, gamma))
-    )
-    return np.array([[a * a, ab, ac], [ab, b * b, bc], [ac, bc, c * c]])
+    bc, ac, ab = b * c * _cosine(alpha), a * c * _cosine(beta), a * b * _cosine(gamma)
+    return _kept(np.array([[a * a, ab, ac], [ab, b * b, bc], [ac, bc, c * c]]))
+
+
+@lru_cache(maxsize=64)
+def inverse_metric(cell: Cell) -> NDArray[np.float64]:
+    """Return the reciprocal metric tensor (3, 3) in Å⁻²; it cannot be written to.
+
+    Raises numpy.linalg.LinAlgError for a cell without volume.
+    """
+    return _kept(np.asarray(np.linalg.inv(metric_tensor(cell)), dtype=np.float64))
+
+
+def _cosine(angle_deg: float) -> float:
+    return math.cos(math.radians(angle_deg))
+
+
+def _kept(tensor: NDArray[np.float64]) -> NDArray[np.float64]:
+    tensor.flags.writeable = False
+    return tensor

@@ -28,6 +28,8 @@ _BASE = 4001
 _RANKING = np.array([_BASE**2, _BASE, 1], dtype=np.float64)
 _HEXAGONAL_RANKING = _BASE**3 + _RANKING
 MAX_INDEX = (_BASE - 1) // 4
+INDEX_CODE = _RANKING
+"""The product with hkl is one number per triple up to |index| = 1000, ordered by h, then k, l."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -38,7 +40,9 @@ class Operations:
     moved by `origin` (3,), onto an inversion centre if `centrosymmetric`. `centrings` (c, 3) are
     the lattice points of the cell. `to_primitive` (3, 3) turns fractional coordinates into those of
     a primitive basis, `from_primitive` back. `order` is the number of operations as listed.
-    `products` (n, n) is the index of rotation i times rotation j, up to sign.
+    `products` (n, n) is the index of rotation i times rotation j, up to sign. Two affine maps take
+    all images in one product: `image_map` (4, 3n) turns (x, y, z, 1) into the n images, `step_map`
+    (4, 3n or 6n) into the steps from x to them (and to their inverses), in the primitive basis.
     """
 
     rotations: Floats
@@ -50,6 +54,8 @@ class Operations:
     centrosymmetric: bool
     order: int
     products: Ints
+    image_map: Floats
+    step_map: Floats
     _cosets: dict[bytes, Ints] = field(default_factory=dict)
 
     def cosets(self, stabiliser: NDArray[np.bool_]) -> Ints:
@@ -96,16 +102,23 @@ def read_operations(triplets: tuple[str, ...]) -> Operations:
     reduced = rotations[chosen]
     origin = np.zeros(3) if inversion is None else translations[inversion] / 2
     from_primitive = _primitive_basis(centrings)
+    to_primitive = np.asarray(np.linalg.inv(from_primitive), dtype=np.float64)
+    moved = translations[chosen] + reduced @ origin - origin
+    images = np.concatenate([reduced, moved[:, :, None]], axis=2)
+    both = images if inversion is None else np.concatenate([images, -images])
+    steps = to_primitive @ (both - np.eye(3, 4))
     return Operations(
         rotations=reduced.astype(np.float64),
-        translations=translations[chosen] + reduced @ origin - origin,
+        translations=moved,
         origin=origin,
         centrings=centrings,
-        to_primitive=np.asarray(np.linalg.inv(from_primitive), dtype=np.float64),
+        to_primitive=to_primitive,
         from_primitive=from_primitive,
         centrosymmetric=inversion is not None,
         order=len(triplets),
         products=_multiplication_table(reduced),
+        image_map=images.reshape(-1, 4).T.copy(),
+        step_map=steps.reshape(-1, 4).T.copy(),
     )
 
 

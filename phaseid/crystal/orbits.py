@@ -38,23 +38,27 @@ class Orbits:
 def orbits(cell: Cell, operations: Operations, sites: Sequence[Site]) -> Orbits:
     """Expand sites; one whose images nearly coincide is moved onto its special position."""
     fract = np.array([site.fract for site in sites], dtype=np.float64).reshape(-1, 3)
-    fract = fract - operations.origin
+    fract -= operations.origin
     occupancy = np.array([site.occupancy for site in sites], dtype=np.float64)
-    tensor = operations.from_primitive.T @ metric_tensor(cell) @ operations.from_primitive
-    alike = _settle(fract, operations, tensor)
-    stabiliser: NDArray[np.bool_] = np.asarray(alike.any(axis=0))
-    translations_and_sign = len(operations.centrings) * (2 if operations.centrosymmetric else 1)
-    whole_group = len(operations.rotations) * translations_and_sign
-    multiplicity = whole_group // alike.sum(axis=(0, 2))
-    images = fract @ operations.rotations.transpose(0, 2, 1) + operations.translations[:, None, :]
-    every = np.arange(len(operations.rotations))
-    general = stabiliser.sum(axis=1) == 1
-    kept = [every if general[i] else operations.cosets(stabiliser[i]) for i in range(len(sites))]
+    alike = _settle(fract, operations, metric_tensor(cell))
+    n = len(operations.rotations)
+    stabiliser: NDArray[np.bool_] = alike[:, :n]
+    if operations.centrosymmetric:
+        stabiliser = stabiliser | alike[:, n:]
+    order = np.add.reduce(alike, axis=1)
+    multiplicity = alike.shape[1] * len(operations.centrings) // order
+    images = (fract @ operations.image_map[:3] + operations.image_map[3]).reshape(-1, n, 3)
+    if order.max(initial=1) == 1:
+        site = np.repeat(np.arange(len(sites)), n)
+        operation = np.tile(np.arange(n), len(sites))
+        weight = (occupancy * multiplicity / n)[site]
+        return Orbits(images.reshape(-1, 3), site, operation, weight, multiplicity)
+    kept = [operations.cosets(row) for row in stabiliser]
     counts = np.array([len(k) for k in kept], dtype=np.int64)
-    operation = np.concatenate(kept) if kept else every[:0]
+    operation = np.concatenate(kept)
     site = np.repeat(np.arange(len(sites)), counts)
     return Orbits(
-        fract=images[operation, site],
+        fract=images[site, operation],
         site=site,
         operation=operation,
         weight=(occupancy * multiplicity / counts)[site],
@@ -62,37 +66,39 @@ def orbits(cell: Cell, operations: Operations, sites: Sequence[Site]) -> Orbits:
     )
 
 
-def _settle(fract: Floats, operations: Operations, tensor: Floats) -> NDArray[np.bool_]:
+def _settle(fract: Floats, operations: Operations, metric: Floats) -> NDArray[np.bool_]:
     """Move sites onto their special positions, in place; return what leaves them there.
 
-    Shape (2 or 1, s, n): image or, in a centrosymmetric group, its inverse; site; operation.
+    Shape (s, n) or, in a centrosymmetric group, (s, 2n): site; image, then the images inverted.
     """
-    steps, length_A = _steps(fract, operations, tensor)
-    alike = length_A <= SAME_ATOM_A
-    reach_A = SAME_ATOM_A
-    special = np.flatnonzero((alike & (length_A > _ON_THE_SPOT_A)).any(axis=(0, 2)))
+    tensor = operations.from_primitive.T @ metric @ operations.from_primitive
+    steps, length2 = _steps(fract, operations, tensor)
+    reach2 = SAME_ATOM_A**2
+    alike: NDArray[np.bool_] = length2 <= reach2
+    off = alike & (length2 > _ON_THE_SPOT_A**2)
+    if not off.any():
+        return alike
+    special = np.flatnonzero(off.any(axis=1))
     while len(special):
-        chosen = alike[:, special]
-        total = (steps[:, special] * chosen[..., None]).sum(axis=(0, 2))
-        mean = total / chosen.sum(axis=(0, 2))[:, None]
+        chosen = alike[special]
+        total = (steps[special] * chosen[..., None]).sum(axis=1)
+        mean = total / chosen.sum(axis=1)[:, None]
         moved = fract[special] + mean @ operations.from_primitive.T
-        _, again_A = _steps(moved, operations, tensor)
-        settled = ((again_A < _ON_THE_SPOT_A) == chosen).all(axis=(0, 2))
+        _, again2 = _steps(moved, operations, tensor)
+        settled = ((again2 < _ON_THE_SPOT_A**2) == chosen).all(axis=1)
         fract[special[settled]] = moved[settled]
         # images that do not close to a group were not one atom: reach less far
         special = special[~settled]
-        reach_A /= 2
-        alike[:, special] = length_A[:, special] <= reach_A
-        special = special[alike[:, special].sum(axis=(0, 2)) > 1]
+        reach2 /= 4
+        alike[special] = length2[special] <= reach2
+        special = special[alike[special].sum(axis=1) > 1]
     return alike
 
 
 def _steps(fract: Floats, operations: Operations, tensor: Floats) -> tuple[Floats, Floats]:
-    """Return steps (2 or 1, s, n, 3) from sites to images, primitive basis, and lengths in Å."""
-    images = fract @ operations.rotations.transpose(0, 2, 1) + operations.translations[:, None, :]
-    images = images.transpose(1, 0, 2)
-    signs = [images, -images] if operations.centrosymmetric else [images]
-    steps = (np.stack(signs) - fract[:, None, :]) @ operations.to_primitive.T
+    """Return steps (s, n or 2n, 3) from sites to images, primitive basis, and their squares, Å²."""
+    steps = fract @ operations.step_map[:3] + operations.step_map[3]
     steps -= np.rint(steps)
-    length2 = np.einsum("...i,ij,...j->...", steps, tensor, steps)
-    return steps, np.sqrt(np.maximum(length2, 0.0))
+    rows = steps.reshape(-1, 3)
+    length2 = np.einsum("ij,ij->i", rows @ tensor, rows).reshape(len(fract), -1)
+    return steps.reshape(len(fract), -1, 3), length2

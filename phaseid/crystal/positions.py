@@ -11,6 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,6 +22,8 @@ ROUNDING_A = 0.1
 SPLIT_A = 0.5
 CROWDED_A = 0.7  # the shortest bond, H-H, is 0.74 Å
 FULL = 1.05  # occupancies add up to at most this on one position; more is counted double
+_EXACT_A = 1e-8
+_FEW = 1 << 13  # distances that are worked out faster than sorted
 _CHUNK = 1 << 20
 _MAX_COMPARED = 60_000_000
 _MAX_PAIRS_PER_SITE = 50  # a crystal has about ten atoms within 1.3 Å of disordered sites
@@ -77,11 +80,11 @@ def place(
 ) -> Placed:
     """Put sites (n, 3) of occupancy (n,) onto their special positions and count their images."""
     metric = metric_tensor(cell)
-    placed = fract.copy()
     multiplicity = np.full(len(fract), len(rotations), dtype=np.int64)
     crowded = np.zeros(len(fract), dtype=np.bool_)
     if len(rotations) == 1:
-        return Placed(placed, multiplicity, np.zeros(len(fract)), crowded)
+        return Placed(fract, multiplicity, np.zeros(len(fract)), crowded)
+    placed = fract.copy()
     step = max(1, _CHUNK // len(rotations))
     for start in range(0, len(fract), step):
         part = slice(start, start + step)
@@ -104,7 +107,10 @@ def close_pairs(
     """
     metric = metric_tensor(cell)
     n = len(fract)
-    images = (fract @ rotations.transpose(0, 2, 1) + translations[:, None, :]).reshape(-1, 3)
+    images = _images(fract, rotations, translations)
+    if n * n * len(rotations) <= _FEW:
+        return _pairs_of_few(fract, images, metric, within_A)
+    images = images.reshape(-1, 3)
     images -= np.floor(images)
     order, low, high = _neighbours(fract, images, metric, within_A)
     if (high - low).sum() > _MAX_COMPARED:
@@ -136,6 +142,27 @@ def close_pairs(
     if len(pair) > _MAX_PAIRS_PER_SITE * n:
         return None
     return ClosePairs(pair // n, pair % n, np.sqrt(squared[nearest][first]))
+
+
+def _pairs_of_few(
+    fract: Floats, images: Floats, metric: Floats, within_A: float
+) -> ClosePairs | None:
+    """Return the close pairs by working out every distance; `images` (m, n, 3)."""
+    first, second = _every_pair(len(fract))
+    delta = images[:, second] - fract[first]
+    delta -= np.rint(delta)
+    rows = delta.reshape(-1, 3)
+    squared = np.einsum("ij,ij->i", rows @ metric, rows).reshape(len(images), -1)
+    nearest = np.minimum.reduce(squared, axis=0)
+    (close,) = (nearest < within_A**2).nonzero()
+    return ClosePairs(first[close], second[close], np.sqrt(nearest[close]))
+
+
+@lru_cache(maxsize=128)
+def _every_pair(n: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Return first < second of all pairs of n sites."""
+    first, second = np.triu_indices(n, 1)
+    return first.astype(np.int64), second.astype(np.int64)
 
 
 def _neighbours(
@@ -182,16 +209,28 @@ def _own_images(
     fract: Floats, rotations: Floats, translations: Floats, metric: Floats
 ) -> tuple[Floats, Floats]:
     """Return offsets (m, n, 3) from sites to their nearest images, and their squares (m, n), Å²."""
-    offsets = fract @ rotations.transpose(0, 2, 1) + translations[:, None, :]
+    offsets = _images(fract, rotations, translations)
     offsets -= fract
-    offsets -= np.round(offsets)
-    return offsets, np.asarray(((offsets @ metric) * offsets).sum(axis=2))
+    offsets -= np.rint(offsets)
+    rows = offsets.reshape(-1, 3)
+    squared = np.einsum("ij,ij->i", rows @ metric, rows)
+    return offsets, squared.reshape(len(rotations), -1)
+
+
+def _images(fract: Floats, rotations: Floats, translations: Floats) -> Floats:
+    """Return the images (m, n, 3) of sites (n, 3) under every operation, in one product."""
+    turned = rotations.reshape(-1, 3) @ fract.T  # (3m, n)
+    images = turned.reshape(len(rotations), 3, -1).transpose(0, 2, 1) + translations[:, None, :]
+    return np.ascontiguousarray(images)
 
 
 def _place(
     fract: Floats, occupancy: Floats, rotations: Floats, translations: Floats, metric: Floats
 ) -> tuple[Floats, NDArray[np.int64], NDArray[np.bool_]]:
     offsets, squared = _own_images(fract, rotations, translations, metric)
+    exact = squared < _EXACT_A**2
+    if np.array_equal(exact, squared < CROWDED_A**2):  # as a careful source writes it
+        return fract, len(rotations) // exact.sum(axis=0), np.zeros(len(fract), dtype=np.bool_)
     near = squared < ROUNDING_A**2
     near_count = near.sum(axis=0)
     wide = squared < SPLIT_A**2

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
 
@@ -11,8 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from phaseid.crystal.crystal import Crystal
-from phaseid.crystal.metric import Cell, metric_tensor, volume_A3
-from phaseid.crystal.operations import MAX_INDEX, Operations, read_operations
+from phaseid.crystal.metric import Cell, inverse_metric, volume_A3
+from phaseid.crystal.operations import INDEX_CODE, MAX_INDEX, Operations, read_operations
 from phaseid.errors import InputError
 
 Floats = NDArray[np.float64]
@@ -23,6 +23,8 @@ WANTED_REFLECTIONS = 1000
 MOST_REFLECTIONS = 20_000
 _MOST_POINTS = 100_000_000
 _SLAB = 1 << 14  # points looked at together: they stay in the cache, and memory stays flat
+_LADDER = (2, 3, 4, 5, 6, 7, 8, 10, 12, 14, 16, 20, 24, 28, 32, 40, 48)  # sizes of boxes kept
+_MOST_KEPT = 1 << 14  # points of a box: some 100 kB of reflections
 _FIRST_BEAMS = 30  # of the longest d: strong enough to be scattered again
 _INTEGER = 1e-3  # h·t is a multiple of 1/24; anything nearer to an integer than this is one
 
@@ -48,7 +50,7 @@ def reciprocal_metric(cell: Cell) -> Floats:
             "the cell " + " ".join(f"{x:g}" for x in cell) + " encloses no volume",
             remedy="Check lengths (Å) and angles (degrees)",
         )
-    return np.asarray(np.linalg.inv(metric_tensor(cell)), dtype=np.float64)
+    return inverse_metric(cell)
 
 
 def unique_reflections(
@@ -91,26 +93,52 @@ def _cut(reflections: Reflections, wanted: int, coarsest_d_A: float) -> Reflecti
 def _enumerate(
     cell: Cell, reciprocal: Floats, operations: Operations, d_min_A: float
 ) -> Reflections:
+    limit = [int(length / d_min_A * (1 + 1e-9)) for length in cell[:3]]
     domain = _domain(operations)
-    slabs = _slabs(cell, reciprocal, d_min_A, domain.nonnegative)
-    parts = [_first_of_each_set(hkl, inverse_d2, operations) for hkl, inverse_d2 in slabs]
-    hkl, inverse_d2, multiplicity = (np.concatenate(column) for column in zip(*parts, strict=True))
-    order = np.argsort(inverse_d2, kind="stable")
+    box = tuple(next((rung for rung in _LADDER if rung >= n), n) for n in limit)
+    if math.prod(_counts(box, domain.nonnegative)) <= _MOST_KEPT:
+        hkl, multiplicity = _sets_in_box(operations, box)
+        inverse_d2 = np.einsum("ij,ij->i", hkl @ reciprocal, hkl)
+        (inside,) = (inverse_d2 <= d_min_A**-2 * (1 + 1e-12)).nonzero()
+        order = inside[inverse_d2[inside].argsort(kind="stable")]
+    else:
+        if max(limit) > MAX_INDEX or math.prod(_counts(limit, domain.nonnegative)) > _MOST_POINTS:
+            raise InputError(
+                f"a cell of {' × '.join(f'{x:.0f}' for x in cell[:3])} Å has too many reflections"
+                f" down to {d_min_A:g} Å",
+                remedy="Ask for a larger smallest d",
+            )
+        slabs = _slabs(limit, reciprocal, d_min_A, domain.nonnegative)
+        parts = [_first_of_each_set(*slab, operations) for slab in slabs]
+        hkl, inverse_d2, multiplicity = map(np.concatenate, zip(*parts, strict=True))
+        order = inverse_d2.argsort(kind="stable")
     return Reflections(hkl[order], inverse_d2[order], multiplicity[order], d_min_A)
 
 
+@lru_cache(maxsize=256)
+def _sets_in_box(operations: Operations, box: tuple[int, ...]) -> tuple[Floats, NDArray[np.int64]]:
+    """Return hkl (n, 3) and multiplicity (n,) of every set with |h|, |k|, |l| inside a box.
+
+    Neither depends on the lengths and angles of a cell, so all crystals of a group share them.
+    """
+    axes = [
+        np.arange(0 if half else -n, n + 1, dtype=np.float64)
+        for n, half in zip(box, _domain(operations).nonnegative, strict=True)
+    ]
+    hkl = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 3)
+    first, _, multiplicity = _first_of_each_set(hkl, np.zeros(len(hkl)), operations)
+    return first, multiplicity
+
+
+def _counts(limit: Sequence[int], nonnegative: tuple[bool, ...]) -> list[int]:
+    """How many h, k, l lie within the limits, where `nonnegative` only from 0 on."""
+    return [n + 1 if half else 2 * n + 1 for n, half in zip(limit, nonnegative, strict=True)]
+
+
 def _slabs(
-    cell: Cell, reciprocal: Floats, d_min_A: float, nonnegative: tuple[bool, ...]
+    limit: Sequence[int], reciprocal: Floats, d_min_A: float, nonnegative: tuple[bool, ...]
 ) -> Iterator[tuple[Floats, Floats]]:
     """Yield hkl and 1/d² of all lattice points with d ≥ d_min (the origin too), h by h."""
-    limit = [int(length / d_min_A * (1 + 1e-9)) for length in cell[:3]]
-    counts = [n + 1 if half else 2 * n + 1 for n, half in zip(limit, nonnegative, strict=True)]
-    if max(limit) > MAX_INDEX or math.prod(counts) > _MOST_POINTS:
-        raise InputError(
-            f"a cell of {' × '.join(f'{x:.0f}' for x in cell[:3])} Å has too many reflections"
-            f" down to {d_min_A:g} Å",
-            remedy="Ask for a larger smallest d",
-        )
     h_axis, k_axis, l_axis = (
         np.arange(0 if half else -n, n + 1, dtype=np.float64)
         for n, half in zip(limit, nonnegative, strict=True)
@@ -222,14 +250,13 @@ def multiple_scattering_lines(
     allowed = unique_reflections(crystal.cell, operations, d_min_A)
     straight = replace(operations, translations=np.zeros_like(operations.translations))
     every = unique_reflections(crystal.cell, straight, allowed.d_min_A)
-    code = np.array([(2 * MAX_INDEX + 1) ** 2, 2 * MAX_INDEX + 1, 1], dtype=np.float64)
-    forbidden = ~np.isin(every.hkl @ code, allowed.hkl @ code)
+    forbidden = ~np.isin(every.hkl @ INDEX_CODE, allowed.hkl @ INDEX_CODE)
     hkl, d_A = every.hkl[forbidden], every.inverse_d2[forbidden] ** -0.5
     both = np.concatenate([operations.rotations, -operations.rotations])
     beams = (allowed.hkl @ both).reshape(-1, 3)
     first = (allowed.hkl[:_FIRST_BEAMS] @ both).reshape(-1, 3)
-    codes = beams @ code
-    reached = np.array([np.isin((h - first) @ code, codes).any() for h in hkl], dtype=bool)
+    codes = beams @ INDEX_CODE
+    reached = np.array([np.isin((h - first) @ INDEX_CODE, codes).any() for h in hkl], dtype=bool)
     hkl, d_A = hkl[reached], d_A[reached]
     new = np.ones(len(d_A), dtype=bool)
     new[1:] = d_A[1:] < d_A[:-1] * (1 - 2e-5)

@@ -57,12 +57,13 @@ def amplitudes(kinds: Sequence[str], s2: Floats) -> Amplitudes:
     A kind is an element symbol, "D", "T", or an isotope such as "11B". Raises InputError for a
     symbol that no table holds.
     """
-    table, lengths = _tables(tuple(kinds))
-    terms = np.exp(table[:, _WIDTHS] * -s2[:, None, None])
+    table = _tables(tuple(kinds))
+    terms = np.exp(table.widths * -s2)
+    terms *= table.heights
     return Amplitudes(
-        xray=np.einsum("nek,ek->ne", terms[..., :4], table[:, _XRAY]) + table[:, _CONSTANT],
-        electron=np.einsum("nek,ek->ne", terms[..., 4:], table[:, _ELECTRON]),
-        neutron=lengths,
+        xray=(np.add.reduce(terms[:_XRAY_TERMS]) + table.constants).T,
+        electron=np.add.reduce(terms[_XRAY_TERMS:]).T,
+        neutron=table.lengths,
     )
 
 
@@ -93,15 +94,26 @@ def element_of(kind: str) -> gemmi.Element:
     return element
 
 
-_XRAY, _ELECTRON, _WIDTHS, _CONSTANT = slice(0, 4), slice(4, 9), slice(9, 18), 18
+_XRAY_TERMS, _TERMS = 4, 9
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Tables:
+    """Of e kinds of atom: 4 X-ray and 5 electron Gaussians, (9, e, 1), and the X-ray constant."""
+
+    heights: Floats
+    widths: Floats
+    constants: Floats  # (e, 1)
+    lengths: Floats | None
 
 
 @lru_cache(maxsize=4096)
-def _tables(kinds: tuple[str, ...]) -> tuple[Floats, Floats | None]:
+def _tables(kinds: tuple[str, ...]) -> _Tables:
     lengths = [neutron_length_fm(kind) for kind in kinds]
     known = [length for length in lengths if length is not None]
     neutron = np.array(known) if len(known) == len(lengths) else None
-    return np.array([_gaussians(kind) for kind in kinds]), neutron
+    rows = np.array([_gaussians(kind) for kind in kinds]).T[:, :, None].copy()
+    return _Tables(rows[:_TERMS], rows[_TERMS : 2 * _TERMS], rows[2 * _TERMS], neutron)
 
 
 @cache

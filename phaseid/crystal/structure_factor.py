@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,22 +27,15 @@ _CHUNK = 1 << 16  # phases held at once: larger arrays are slower to get than to
 _CANCELLED = 1e-6  # a sum of cosines below this part of its terms is rounding, not a wave
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class SquaredAmplitudes:
-    """|F|² per cell of n reflections: `xray` in electron², `electron` in Å², `neutron` in fm²."""
-
-    xray: Floats
-    electron: Floats
-    neutron: Floats
-
-
 def squared_amplitudes(
     crystal: Crystal,
     operations: Operations,
     reflections: Reflections,
     xray_energy_eV: float | None,
-) -> SquaredAmplitudes:
-    """Return |F|² averaged over Friedel mates, displacement included.
+) -> Floats:
+    """Return |F|² per cell averaged over Friedel mates, displacement included, (3, n).
+
+    The rows are X-rays in electron², electrons in Å², neutrons in fm².
 
     Without `xray_energy_eV` X-rays scatter without dispersion. A reflection in which the waves of
     all atoms cancel has exactly 0. Neutrons show nothing if the length of some atom is unknown.
@@ -55,16 +49,16 @@ def squared_amplitudes(
         hkl, inverse_d2 = reflections.hkl[part], reflections.inverse_d2[part]
         sums = _geometric_sums(atoms, hkl, inverse_d2)
         out[:, part] = _intensities(atoms, sums, inverse_d2, xray_energy_eV)
-    return SquaredAmplitudes(*out)
+    return out
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Atoms:
     """The atoms of a cell, ready for summing.
 
-    `weights` (m, e) float32 spreads images over kinds of atom; `swing` (6, m) are the exponents of
-    each image if atoms of one kind swing differently, else None; `spread_A2` (e,) is the least mean
-    square displacement of each kind.
+    `weights` (e, m) float32 spreads images over kinds of atom; `swing` (m, 6) are the exponents of
+    each image if atoms of one kind swing differently, else None; `spread_A2` (e, 1) is the least
+    mean square displacement of each kind.
     """
 
     kinds: tuple[str, ...]
@@ -79,36 +73,41 @@ def _atoms(crystal: Crystal, operations: Operations) -> _Atoms:
     sites, cell = crystal.sites, crystal.cell
     images = orbits(cell, operations, sites)
     kinds = sorted({site.element for site in sites})
-    kind_of_site = np.array([kinds.index(site.element) for site in sites])
-    weights = np.zeros((len(images.site), len(kinds)), dtype=np.float32)
-    weights[np.arange(len(images.site)), kind_of_site[images.site]] = images.weight
+    kind_of_site = [kinds.index(site.element) for site in sites]
+    weights = np.zeros((len(kinds), len(images.site)), dtype=np.float32)
+    weights[np.array(kind_of_site)[images.site], np.arange(len(images.site))] = images.weight
     spread = isotropic_U_A2(sites, cell)
-    least = np.full(len(kinds), np.inf)
-    np.minimum.at(least, kind_of_site, spread)
+    least = [math.inf] * len(kinds)
+    for kind, u_A2 in zip(kind_of_site, spread, strict=True):
+        least[kind] = min(least[kind], u_A2)
     swing = None
-    if any(site.u_aniso_A2 for site in sites) or not np.array_equal(least[kind_of_site], spread):
+    alike = all(least[kind] == u_A2 for kind, u_A2 in zip(kind_of_site, spread, strict=True))
+    if not alike or any(site.u_aniso_A2 for site in sites):
         swing = exponents(sites, cell, reciprocal_metric(cell), operations, images)
-    return _Atoms(tuple(kinds), images, operations.centrosymmetric, weights, least, swing)
+    column = np.array(least)[:, None]
+    return _Atoms(tuple(kinds), images, operations.centrosymmetric, weights, column, swing)
 
 
 def _geometric_sums(atoms: _Atoms, hkl: Floats, inverse_d2: Floats) -> Floats:
-    """Return Σ weight · swing · cos, and sin without an inversion centre, (1 or 2, n, e)."""
-    turns = hkl @ atoms.images.fract.T
+    """Return Σ weight · swing · cos, and sin without an inversion centre, (1 or 2, e, n)."""
+    turns = atoms.images.fract @ hkl.T
     turns -= np.rint(turns)
     phase = np.multiply(turns, 2 * math.pi, dtype=np.float32, casting="same_kind")
-    factors = np.exp(inverse_d2[:, None] * (-2 * math.pi**2 * atoms.spread_A2))
     swing = None
     if atoms.swing is not None:
-        swing = np.exp((quadratic_terms(hkl) @ atoms.swing).astype(np.float32))
+        swing = (atoms.swing @ quadratic_terms(hkl).T).astype(np.float32)
+        np.exp(swing, out=swing)
+    factors = np.exp(atoms.spread_A2 * (inverse_d2 * (-2 * math.pi**2)))
     sums = np.empty((1 if atoms.centrosymmetric else 2, *factors.shape))
     for wave, total in zip((np.cos, np.sin), sums, strict=False):
         terms = wave(phase)
         if swing is not None:
             terms *= swing
-        total[:] = terms @ atoms.weights
+        total[:] = atoms.weights @ terms
     if swing is None:
         sums *= factors
-    sums[np.abs(sums) < atoms.weights.sum(axis=0) * factors * _CANCELLED] = 0.0
+    factors *= np.add.reduce(atoms.weights, axis=1, keepdims=True) * _CANCELLED
+    sums[np.abs(sums) < factors] = 0.0
     return sums
 
 
@@ -117,14 +116,23 @@ def _intensities(
 ) -> Floats:
     """Return |F|² for X-rays, electrons, neutrons, (3, n)."""
     amplitude = amplitudes(atoms.kinds, inverse_d2 / 4)
-    table = np.zeros((4, *amplitude.xray.shape))  # X-rays, electrons, neutrons, and f″
-    table[0], table[1] = amplitude.xray, amplitude.electron
-    if amplitude.neutron is not None:
-        table[2] = amplitude.neutron
+    xray = amplitude.xray.T
+    waves = np.zeros((4, len(sums), len(inverse_d2)))  # X-rays, electrons, neutrons, and f″
     if xray_energy_eV is not None:
-        real, table[3] = np.array([dispersion(kind, xray_energy_eV) for kind in atoms.kinds]).T
-        table[0] += real
-    waves = np.einsum("xne,pne->xpn", sums, table)
-    f2 = (waves * waves).sum(axis=0)
+        real, imaginary = _dispersion(atoms.kinds, xray_energy_eV)
+        xray = xray + real[:, None]
+        waves[3] = imaginary @ sums
+    np.add.reduce(sums * xray, axis=1, out=waves[0])
+    np.add.reduce(sums * amplitude.electron.T, axis=1, out=waves[1])
+    if amplitude.neutron is not None:
+        waves[2] = amplitude.neutron @ sums
+    waves *= waves
+    f2 = np.add.reduce(waves, axis=1)
     f2[0] += f2[3]  # h and -h differ by the sign with which f″ joins: no cross term in their mean
     return np.asarray(f2[:3])
+
+
+@lru_cache(maxsize=4096)
+def _dispersion(kinds: tuple[str, ...], energy_eV: float) -> Floats:
+    """Return f′ and f″ of each kind of atom, (2, e)."""
+    return np.array([dispersion(kind, energy_eV) for kind in kinds]).T

@@ -108,11 +108,31 @@ def symmetry_candidates(items: SymmetryItems) -> tuple[Symmetry, ...] | Symmetry
 
 def metric_mismatch(symmetry: Symmetry, cell: Cell) -> float:
     """Return by how much the operations change the cell's metric tensor, relative."""
+    change, entry = _metric_change(symmetry)
     metric = metric_tensor(cell)
-    lengths = np.sqrt(np.diag(metric))
-    scale = np.outer(lengths, lengths)
-    rotated = symmetry.rotations.transpose(0, 2, 1) @ metric @ symmetry.rotations
-    return float(np.abs((rotated - metric) / scale).max())
+    lengths = np.sqrt(metric.diagonal())
+    scale = lengths[_ROWS] * lengths[_COLUMNS]
+    return float(np.abs((change @ metric[_ROWS, _COLUMNS]) / scale[entry]).max(initial=0.0))
+
+
+_ROWS, _COLUMNS = np.array([[0, 1, 2, 0, 0, 1], [0, 1, 2, 1, 2, 2]])
+
+
+@lru_cache(maxsize=1024)
+def _metric_change(symmetry: Symmetry) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+    """Return by how much operations change a metric tensor, as a linear map of its six entries.
+
+    Rows (k, 6), distinct and none zero, and the entry (k,) that each changes.
+    """
+    unit = np.zeros((6, 3, 3))
+    unit[np.arange(6), _ROWS, _COLUMNS] = unit[np.arange(6), _COLUMNS, _ROWS] = 1.0
+    rotations = symmetry.rotations[:, None]
+    changed = rotations.transpose(0, 1, 3, 2) @ unit @ rotations - unit
+    rows = changed[:, :, _ROWS, _COLUMNS].transpose(0, 2, 1).reshape(-1, 6)
+    entries = np.tile(np.arange(6), len(symmetry.rotations))
+    distinct = np.unique(np.column_stack([entries, rows]), axis=0)
+    distinct = distinct[distinct[:, 1:].any(axis=1)]
+    return distinct[:, 1:].copy(), distinct[:, 0].astype(np.int64)
 
 
 def fits_cell(symmetry: Symmetry, cell: Cell) -> bool:
