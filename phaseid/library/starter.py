@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator
 from dataclasses import replace
+from pathlib import Path
 
 from phaseid.crystal.cif import read_cif
 from phaseid.crystal.composition import cell_contents
@@ -38,19 +39,30 @@ def starter_crystals() -> Iterator[Crystal]:
             yield crystal
 
 
+def shipped_crystal(stem: str) -> Crystal:
+    """Return the shipped structure whose file is called `stem`; raises LibraryError as above."""
+    path = next(data_path("starter").rglob(f"{stem}.cif"), None)
+    if path is None:
+        raise LibraryError(f"the structure {stem} should come with phaseid. Install phaseid again.")
+    return next(_read(path))
+
+
 def _shipped() -> Iterator[Crystal]:
-    folder = data_path("starter")
-    for path in sorted(folder.rglob("*.cif")):
-        data = path.read_bytes()
-        reading = read_cif(data, path.name)
-        if reading.rejects or not reading.crystals:
-            reason = reading.rejects[0].reason if reading.rejects else "no structure in it"
-            raise LibraryError(
-                f"{path}: a structure that comes with phaseid cannot be read ({reason}). "
-                "Install phaseid again."
-            )
-        for crystal in reading.crystals:
-            yield _sourced(crystal, data, path.stem)
+    for path in sorted(data_path("starter").rglob("*.cif")):
+        yield from _read(path)
+
+
+def _read(path: Path) -> Iterator[Crystal]:
+    data = path.read_bytes()
+    reading = read_cif(data, path.name)
+    if reading.rejects or not reading.crystals:
+        reason = reading.rejects[0].reason if reading.rejects else "no structure in it"
+        raise LibraryError(
+            f"{path}: a structure that comes with phaseid cannot be read ({reason}). "
+            "Install phaseid again."
+        )
+    for crystal in reading.crystals:
+        yield _sourced(crystal, data, path.stem)
 
 
 def _sourced(crystal: Crystal, data: bytes, stem: str) -> Crystal:

@@ -2,7 +2,13 @@
 
 from phaseid.rings.camera import CameraConstant, parse_camera_constant
 from phaseid.rings.columns import COLUMNS, Column
-from phaseid.rings.reading import read_rings, rings_from_table, rings_from_text, rings_from_values
+from phaseid.rings.reading import (
+    read_rings,
+    rings_from_table,
+    rings_from_text,
+    rings_from_values,
+    table_from_values,
+)
 from phaseid.rings.ringlist import GRADES, RingList
 from phaseid.rings.table import RingTable, parse_table, read_text
 from phaseid.rings.writing import rings_to_text, write_rings
@@ -22,5 +28,6 @@ __all__ = [
     "rings_from_text",
     "rings_from_values",
     "rings_to_text",
+    "table_from_values",
     "write_rings",
 ]

@@ -89,6 +89,23 @@ def rings_from_values(
     Numbers typed as text keep their decimals, which tell how far they were rounded. Raises
     InputError like `read_rings`.
     """
+    table = table_from_values(
+        values, column=column, sigma=sigma, intensities=intensities, title=title
+    )
+    return rings_from_table(
+        table, probe=probe, scale_uncertainty=scale_uncertainty, camera_constant=camera_constant
+    )
+
+
+def table_from_values(
+    values: Sequence[float | str],
+    *,
+    column: str = "d_A",
+    sigma: float | str | Sequence[float | str | None] | None = None,
+    intensities: Sequence[float | str | None] | None = None,
+    title: str = "typed rings",
+) -> RingTable:
+    """The cells of a ring list typed as numbers; raises InputError like `read_rings`."""
     if column not in COLUMNS:
         raise InputError(
             f"unknown position column '{column}'", remedy=f"Choose one of {', '.join(COLUMNS)}."
@@ -112,10 +129,7 @@ def rings_from_values(
             zip(values, sigmas, levels, strict=True), start=1
         )
     ]
-    table = RingTable("", COLUMNS[column], rows, {"title": title}, {"title": (title, None)})
-    return rings_from_table(
-        table, probe=probe, scale_uncertainty=scale_uncertainty, camera_constant=camera_constant
-    )
+    return RingTable("", COLUMNS[column], rows, {"title": title}, {"title": (title, None)})
 
 
 def rings_from_table(
