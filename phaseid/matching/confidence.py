@@ -14,7 +14,7 @@ import numpy as np
 
 from phaseid.matching.likelihood import nothing_listed
 from phaseid.matching.search import Judged, Loosened, Members, Search
-from phaseid.matching.settings import RELATIVE_PRIOR, UNLISTED_PRIOR
+from phaseid.matching.settings import RELATIVE_INTENSITY, RELATIVE_PRIOR, UNLISTED_PRIOR
 
 _LOOSENED = 40
 _DISTANT = 40
@@ -56,8 +56,9 @@ def weigh(search: Search) -> Standing:
 
     outside = [log(UNLISTED_PRIOR) + nothing_listed(search.model)]
     relatives: list[tuple[float, Loosened]] = []
+    flavour = log(RELATIVE_PRIOR / len(RELATIVE_INTENSITY))
     for loose in search.relatives(near + distant):
-        value = loose.log_likelihood + search.prior_of(loose.members) + log(RELATIVE_PRIOR)
+        value = loose.log_likelihood + search.prior_of(loose.members) + flavour
         rest = loose.members[: loose.which] + loose.members[loose.which + 1 :]
         if rest in weights:
             weights[rest] = float(np.logaddexp(weights[rest], value))

@@ -14,6 +14,29 @@ _BINS = 24
 _FLAT_SHARE = 0.3
 
 
+def crowd(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Floats:
+    """ln density in ln d and ln intensity of a ring that no phase explains, at each ring, (m,)."""
+    return crowd_density(table, phases, pattern) + crowd_intensity(pattern)
+
+
+def crowd_intensity(pattern: Pattern) -> Floats:
+    """ln density in ln intensity of rings no phase explains, at each ring's own intensity, (m,).
+
+    Most rings are weak: ln(intensity / limit) falls off exponentially over the range up to the
+    strongest, with the mean that this pattern's rings have, mixed with a flat part. 0 where a ring
+    has no intensity.
+    """
+    known = np.isfinite(pattern.intensity_sd)
+    span = 0.5 - pattern.ln_limit
+    above = np.clip(pattern.ln_intensity - pattern.ln_limit, 0.0, span)
+    mean = float(above[known].mean()) if known.any() else span
+    decay = max(mean, 0.6)
+    falling = np.exp(-above / decay) / (decay * (1.0 - np.exp(-span / decay)))
+    density = (1.0 - _FLAT_SHARE) * falling + _FLAT_SHARE / span
+    result: Floats = np.where(known, np.log(density), 0.0)
+    return result
+
+
 def crowd_density(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Floats:
     """ln of the normalised density in ln d (per unit ln d) of a crowd line at each ring, (m,).
 
@@ -42,5 +65,5 @@ def crowd_density(table: LineTable, phases: NDArray[np.int64], pattern: Pattern)
     density = flat if total == 0 else histogram / total * _BINS / span
     density = (1.0 - _FLAT_SHARE) * density + _FLAT_SHARE * flat
     bins = np.clip(((pattern.x - low) / span * _BINS).astype(int), 0, _BINS - 1)
-    result: Floats = np.log(density[bins])
-    return result
+    position: Floats = np.log(density[bins])
+    return position

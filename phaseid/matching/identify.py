@@ -15,7 +15,7 @@ from phaseid.library.phase import Phase
 from phaseid.matching.answer import build_hypothesis
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.confidence import Standing, weigh
-from phaseid.matching.crowd import crowd_density
+from phaseid.matching.crowd import crowd
 from phaseid.matching.groups import indistinguishable, pairing, rivals_of
 from phaseid.matching.identification import (
     Hypothesis,
@@ -65,7 +65,7 @@ def identify(
     model = Model(
         patterns=tuple(prepared),
         lines=tuple(gather(t, allowed, p) for t, p in zip(own, prepared, strict=True)),
-        crowd=tuple(crowd_density(t, allowed, p) for t, p in zip(own, prepared, strict=True)),
+        crowd=tuple(crowd(t, allowed, p) for t, p in zip(own, prepared, strict=True)),
     )
     sets = [elements[i] for i in allowed]
     search = Search(

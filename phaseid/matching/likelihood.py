@@ -43,7 +43,7 @@ class Model:
     """All that the likelihood of a hypothesis depends on.
 
     `patterns` (K); `lines` one LineSet per pattern over the same candidate phases; `crowd` one (m,)
-    array of ln line density per pattern.
+    array per pattern: ln density of a ring that no phase explains, in ln d and ln intensity.
     """
 
     patterns: tuple[Pattern, ...]
@@ -164,9 +164,7 @@ class _PatternWork:
         self.odd = scatter.odd_intensity**2 + reading
         self.spread2 = loose.spread**2
         self.window = np.maximum(4.5 * pattern.sigma, 0.6 * pattern.resolution)
-        # ln density of a ring from nowhere: position by the crowd, intensity flat in ln I
-        self.intensity_null = -log(1.0 - pattern.ln_limit + 0.5)
-        self.null = crowd + np.where(known, self.intensity_null, 0.0)
+        self.null = crowd
         self.ln_amplitude = np.zeros((self.b, self.k))
         self.odd_position = np.zeros((self.b, self.m), dtype=bool)
         self.claimed = np.ones((self.b, self.m), dtype=bool)
@@ -294,7 +292,8 @@ class _PatternWork:
 
     def unshifted(self, shift: _Shift) -> Floats:
         """(b, m) measured minus calculated position at zero scale, strain and angle errors."""
-        return self.placed(shift) - np.einsum("bkm,bkm->bm", self.share, self.centre)
+        result: Floats = self.placed(shift) - np.einsum("bkm,bkm->bm", self.share, self.centre)
+        return result
 
     def decide(self, residual: Floats) -> None:
         """Give each ring to the phases or to nowhere, whichever is the likelier."""
@@ -376,9 +375,7 @@ def nothing_listed(model: Model) -> float:
     total = 0.0
     stay = log(UNLISTED_RING_COUNT / (1.0 + UNLISTED_RING_COUNT))
     for pattern, crowd in zip(model.patterns, model.crowd, strict=True):
-        known = np.isfinite(pattern.intensity_sd)
-        flat = -log(1.0 - pattern.ln_limit + 0.5)
-        total += float((crowd + np.where(known, flat, 0.0)).sum())
+        total += float(crowd.sum())
         total += lgamma(len(pattern) + 1.0) + len(pattern) * stay - log(1.0 + UNLISTED_RING_COUNT)
     return total
 

@@ -206,7 +206,8 @@ class Search:
     def relatives(self, sets: list[Judged]) -> list[Loosened]:
         """Unlisted relatives of members of `sets`.
 
-        Each member of each set in turn is let loose: another cell of the same structure type.
+        Each member of each set in turn is let loose: another cell of the same structure type, with
+        like atoms and with others, each flavour an entry of its own.
         """
         found = []
         by_size: dict[int, list[tuple[Judged, int]]] = {}
@@ -216,29 +217,33 @@ class Search:
         for _, items in sorted(by_size.items()):
             members = np.array([judged.members for judged, _ in items], dtype=np.int64)
             offsets = np.stack([judged.offset for judged, _ in items])
-            loose = self._relaxed(members, np.array([w for _, w in items]))
-            for part, fit in evaluate_in_batches(self.model, members, offsets, loose):
-                for row, index in enumerate(part):
-                    judged, loosened = items[index]
-                    found.append(
-                        Loosened(
-                            members=judged.members,
-                            which=loosened,
-                            log_likelihood=float(fit.log_likelihood[row]),
-                            strain=float(fit.strain[row, loosened]),
-                            strain_sigma=float(fit.strain_sd[row, loosened]),
+            loosened = np.array([w for _, w in items])
+            for spread in RELATIVE_INTENSITY:
+                loose = self._relaxed(members, loosened, spread)
+                for part, fit in evaluate_in_batches(self.model, members, offsets, loose):
+                    for row, index in enumerate(part):
+                        judged, k = items[index]
+                        found.append(
+                            Loosened(
+                                members=judged.members,
+                                which=k,
+                                log_likelihood=float(fit.log_likelihood[row]),
+                                strain=float(fit.strain[row, k]),
+                                strain_sigma=float(fit.strain_sd[row, k]),
+                            )
                         )
-                    )
         return found
 
-    def _relaxed(self, members: NDArray[np.int64], which: NDArray[np.int64]) -> Looseness:
+    def _relaxed(
+        self, members: NDArray[np.int64], which: NDArray[np.int64], spread: float
+    ) -> Looseness:
         """Looseness of sets (b, k) of which member `which` (b,) is only an unlisted relative."""
         loose = Looseness.listed((members.shape[0], members.shape[1]))
         axial = tuple(np.zeros((*members.shape, lines.x.shape[1], 3)) for lines in self.model.lines)
         for row, k in enumerate(which):
             candidate = int(members[row, k])
             loose.strain[row, k] = RELATIVE_STRAIN
-            loose.spread[row, k] = RELATIVE_INTENSITY
+            loose.spread[row, k] = spread
             for own, levers in zip(axial, self._levers(candidate), strict=True):
                 own[row, k, : len(levers.values)] = RELATIVE_AXIAL * levers.values
             loose.jitter[row, k] = RELATIVE_JITTER[self._levers(candidate)[0].free]

@@ -44,12 +44,12 @@ STRAIN = 0.0015
 RELATIVE_STRAIN = 0.02
 """The same for an unlisted relative: a phase of the listed structure type with another cell."""
 RELATIVE_AXIAL = 0.01
-"""One-sigma of the further strain of each cell edge of a relative whose cell has several lengths."""
+"""One-sigma of the further strain of each edge of a relative whose cell has several lengths."""
 RELATIVE_JITTER = {1: 0.0, 2: 0.0003, 3: 0.0008}
 """Line-by-line scatter left after that (angles, further parameters), by number of free lengths."""
-RELATIVE_INTENSITY = 0.35
-"""Extra scatter of ln intensity of an unlisted relative: other atoms on the same sites."""
-RELATIVE_PRIOR = 0.15
+RELATIVE_INTENSITY = (0.1, 0.6)
+"""Extra scatter of ln intensity of a relative: of like atoms, or of others on the same sites."""
+RELATIVE_PRIOR = 0.3
 """How many unlisted relatives there are for each listed phase."""
 
 ZERO_SHIFT_DEG = 0.02
