@@ -10,7 +10,7 @@ import typer
 from typer.core import TyperGroup
 
 from phaseid import __version__
-from phaseid.cli import calibrate, guide, identify, library, lines, near
+from phaseid.cli import calibrate, guide, identify, library, lines, near, ratio
 from phaseid.errors import PhaseidError
 
 INTERRUPTED = 130
@@ -84,6 +84,7 @@ def front(
 app.command("identify", short_help="Name the phases behind rings.")(identify.identify)
 app.command("lines", short_help="List the lines of a phase.")(lines.lines)
 app.command("near", short_help="List phases with lines near spacings.")(near.near)
+app.command("ratio", short_help="Name structure types by ring ratios.")(ratio.ratio)
 app.command("calibrate", short_help="Scale by a known standard.")(calibrate.calibrate)
 app.add_typer(library.app, name="library", short_help="Add structures, look them up.")
 app.command("guide", short_help="Show the manual.")(guide.guide)
