@@ -222,6 +222,8 @@ def _refined(
             spacing.append(log(table.d_A[row]) + strain + residual)
             sigma.append(pattern.sigma[ring])
     scale_sigma = float(fit.scale_sd[0].min())
+    # zero shift and displacement leave the strain less certain than the rings' own sigmas say
+    common = max(scale_sigma, float(fit.strain_sd[0, k]))
     if hkl:
         refined = refine_cell(
             phase.cell,
@@ -229,7 +231,7 @@ def _refined(
             np.array(hkl, dtype=np.int64),
             np.exp(np.array(spacing)),
             np.array(sigma),
-            scale_sigma,
+            common,
         )
         if refined is not None:
             return refined
