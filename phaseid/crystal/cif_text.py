@@ -60,10 +60,12 @@ class Block:
         """Return the first given value among the tags, unquoted, white space joined, else ""."""
         for tag in tags:
             raw = self._pairs.get(tag)
-            if raw is None and tag in self._loops:
-                column = self.column(tag)
-                raw = column[0] if column else None
-            if raw is not None and raw not in ("?", ".", ""):
+            if raw is None:
+                column = self.column(tag) if tag in self._loops else ()
+                if not column:
+                    continue
+                raw = column[0]
+            if raw not in ("?", ".", ""):
                 value = " ".join(gemmi.cif.as_string(raw).split())
                 if value not in ("", "?", "."):
                     return value
@@ -72,7 +74,10 @@ class Block:
     def number(self, *tags: str) -> float | None:
         """Return the first readable number among the tags, its standard uncertainty dropped."""
         for tag in tags:
-            value = parse_number(self.text(tag))
+            if tag not in self:
+                continue
+            plain = gemmi.cif.as_number(self._pairs.get(tag, "?"))
+            value = plain if math.isfinite(plain) else parse_number(self.text(tag))
             if value is not None:
                 return value
         return None

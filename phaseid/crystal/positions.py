@@ -144,11 +144,11 @@ def close_pairs(
     return ClosePairs(pair // n, pair % n, np.sqrt(squared[nearest][first]))
 
 
-def _pairs_of_few(
-    fract: Floats, images: Floats, metric: Floats, within_A: float
-) -> ClosePairs | None:
+def _pairs_of_few(fract: Floats, images: Floats, metric: Floats, within_A: float) -> ClosePairs:
     """Return the close pairs by working out every distance; `images` (m, n, 3)."""
     first, second = _every_pair(len(fract))
+    if not len(first):
+        return ClosePairs(first, second, np.empty(0))
     delta = images[:, second] - fract[first]
     delta -= np.rint(delta)
     rows = delta.reshape(-1, 3)
@@ -228,26 +228,26 @@ def _place(
     fract: Floats, occupancy: Floats, rotations: Floats, translations: Floats, metric: Floats
 ) -> tuple[Floats, NDArray[np.int64], NDArray[np.bool_]]:
     offsets, squared = _own_images(fract, rotations, translations, metric)
-    exact = squared < _EXACT_A**2
-    if np.array_equal(exact, squared < CROWDED_A**2):  # as a careful source writes it
-        return fract, len(rotations) // exact.sum(axis=0), np.zeros(len(fract), dtype=np.bool_)
-    near = squared < ROUNDING_A**2
-    near_count = near.sum(axis=0)
-    wide = squared < SPLIT_A**2
-    wide_count = wide.sum(axis=0)
-    # images within SPLIT_A that would be more than one atom together are one atom
-    merge = (wide_count > near_count) & (occupancy * wide_count > FULL * near_count)
-    if merge.any():
-        near = np.where(merge, wide, near)
-        near_count = np.where(merge, wide_count, near_count)
+    near: NDArray[np.bool_] = squared < ROUNDING_A**2
+    near_count = np.add.reduce(near, axis=0)
+    alone = np.array_equal(near, squared < CROWDED_A**2)  # no second image in doubtful reach
+    if not alone:
+        wide = squared < SPLIT_A**2
+        wide_count = wide.sum(axis=0)
+        # images within SPLIT_A that would be more than one atom together are one atom
+        merge = (wide_count > near_count) & (occupancy * wide_count > FULL * near_count)
+        if merge.any():
+            near = np.where(merge, wide, near)
+            near_count = np.where(merge, wide_count, near_count)
     placed = fract
-    if (near_count > 1).any():
-        drift = (offsets * near[:, :, None]).sum(axis=0) / near_count[:, None]
+    if (near & (squared > _EXACT_A**2)).any():
+        drift = np.einsum("mn,mnk->nk", near, offsets) / near_count[:, None]
         drift[np.abs(drift) < 1e-9] = 0.0
         placed = fract + drift
-        if drift.any():
-            _, squared = _own_images(placed, rotations, translations, metric)
-        near_count = np.maximum((squared < 1e-4).sum(axis=0), 1)
+        _, squared = _own_images(placed, rotations, translations, metric)
+        near_count = np.maximum(np.add.reduce(squared < 1e-4, axis=0), 1)
+    if alone:
+        return placed, len(rotations) // near_count, np.zeros(len(fract), dtype=np.bool_)
     crowd = (squared < CROWDED_A**2).sum(axis=0)
     crowded = (crowd > near_count) & (occupancy * crowd > FULL * near_count)
     return placed, len(rotations) // near_count, crowded

@@ -91,10 +91,10 @@ def conditions(block: Block) -> tuple[float | None, float | None, tuple[Finding,
     kilopascal = block.number("_diffrn_ambient_pressure", "_cell_measurement_pressure")
     pressure = None if kilopascal is None else kilopascal / _KPA_PER_GPA
     title = block.text("_publ_section_title")
-    stated = _PRESSURE.search(title)
+    stated = _PRESSURE.search(title) if "=" in title else None
     if pressure is None and stated:
         pressure = float(stated.group(1)) * _GPA[stated.group(2).lower()]
-    stated = _TEMPERATURE.search(title)
+    stated = _TEMPERATURE.search(title) if "=" in title else None
     if temperature is None and stated:
         temperature = float(stated.group(1)) + (273.15 if stated.group(2) == "C" else 0.0)
     if temperature is not None and temperature < 0:
