@@ -10,7 +10,8 @@ import typer
 from typer.core import TyperGroup
 
 from phaseid import __version__
-from phaseid.cli import calibrate, guide, identify, library, lines, near, ratio
+from phaseid.cli import calibrate, compare, guide, identify, library, lines, near, ratio
+from phaseid.cli.options import say
 from phaseid.errors import PhaseidError
 
 INTERRUPTED = 130
@@ -37,7 +38,7 @@ class Commands(TyperGroup):
         except PhaseidError as error:
             if ctx.params.get("debug"):
                 raise
-            print(f"phaseid: {error}", file=sys.stderr)
+            say(f"phaseid: {error}")
             raise typer.Exit(error.exit_code) from None
         except BrokenPipeError:
             _silence_stdout()
@@ -85,6 +86,7 @@ app.command("identify", short_help="Name the phases behind rings.")(identify.ide
 app.command("lines", short_help="List the lines of a phase.")(lines.lines)
 app.command("near", short_help="List phases with lines near spacings.")(near.near)
 app.command("ratio", short_help="Name structure types by ring ratios.")(ratio.ratio)
+app.command("compare", short_help="Can two phases be told apart?")(compare.compare)
 app.command("calibrate", short_help="Scale by a known standard.")(calibrate.calibrate)
 app.add_typer(library.app, name="library", short_help="Add structures, look them up.")
 app.command("guide", short_help="Show the manual.")(guide.guide)
@@ -107,10 +109,9 @@ def run(arguments: list[str] | None = None) -> None:
         if debug:
             raise
         what = f"{type(error).__name__}: {error}".splitlines()[0]
-        print(
+        say(
             f"phaseid: something went wrong inside phaseid ({what}). "
-            "Run the same command with --debug to see where.",
-            file=sys.stderr,
+            "Run the same command with --debug to see where."
         )
         sys.exit(1)
     finally:

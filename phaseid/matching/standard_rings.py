@@ -69,7 +69,7 @@ class Plate:
             raise InputError(
                 f"{standard.label} shows no line to {probe.label}", remedy="Check the probe."
             )
-        return merged(lines, _resolution(lines.x, probe))
+        return merged(lines, resolution(lines.x, probe))
 
     def spacings_A(self, x: Floats) -> Floats:
         """True spacings of lines at `x` as `lines` states them."""
@@ -130,7 +130,8 @@ def tangent_excess(d_A: Floats, wavelength_A: float) -> Floats:
     return np.asarray(np.log(np.tan(angle) * d_A / wavelength_A), dtype=np.float64)
 
 
-def _resolution(x: Floats, probe: Probe) -> Floats:
+def resolution(x: Floats, probe: Probe) -> Floats:
+    """Distance in ln d below which this probe shows two lines (at x) as one."""
     scatter = SCATTER[probe.kind]
     if probe.geometry in ("ring", "time-of-flight"):
         return np.full(len(x), scatter.resolution)
