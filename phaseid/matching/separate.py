@@ -12,6 +12,8 @@ from phaseid.matching.patterns import Floats, Pattern
 
 _SURE = 3.0
 """How many sigmas a difference has to be worth before it separates."""
+_CLEAR, _TRACE = 0.7, -0.7
+"""How far above ln of the detection limit a line is sure to be seen; from where on it may be."""
 _FAR = 0.02
 """A line without a counterpart this near (in ln d) stands alone."""
 
@@ -29,10 +31,12 @@ class Telling:
     distance: float
 
 
-def _shown(lines: LineSet, phase: int, pattern: Pattern) -> tuple[Floats, Floats]:
-    """ln d and table rows of the lines well above the detection limit inside the rings' range."""
+def _shown(
+    lines: LineSet, phase: int, pattern: Pattern, margin: float = _CLEAR
+) -> tuple[Floats, Floats]:
+    """ln d and table rows of the lines inside the rings' range, `margin` above ln of the limit."""
     x = lines.x[phase]
-    strong = np.log(np.maximum(lines.visible[phase], 1e-12)) > pattern.ln_limit + 0.7
+    strong = np.log(np.maximum(lines.visible[phase], 1e-12)) > pattern.ln_limit + margin
     inside = (x > pattern.x[0] - 0.03) & (x < pattern.x[-1] + 0.03)
     chosen = strong & inside
     return x[chosen], lines.row[phase][chosen].astype(float)
@@ -42,7 +46,7 @@ def common_shift(lines: LineSet, first: int, second: int, pattern: Pattern) -> f
     """Shift in ln d that lays the lines of `second` on those of `first` best (median of
     neighbours)."""
     x, _ = _shown(lines, first, pattern)
-    y, _ = _shown(lines, second, pattern)
+    y, _ = _shown(lines, second, pattern, _TRACE)
     if not len(x) or not len(y):
         return 0.0
     nearest = y[np.argmin(np.abs(x[:, None] - y), axis=1)]
@@ -54,7 +58,7 @@ def telling_lines(lines: LineSet, first: int, second: int, pattern: Pattern) -> 
     """Lines of `first` that `second` does not show at the same place, the most telling first."""
     shift = common_shift(lines, first, second, pattern)
     x, rows = _shown(lines, first, pattern)
-    y, _ = _shown(lines, second, pattern)
+    y, _ = _shown(lines, second, pattern, _TRACE)
     found = []
     for value, row in zip(x, rows, strict=True):
         distance = float(np.abs(value - y - shift).min()) if len(y) else np.inf
