@@ -5,8 +5,11 @@ B = 8π²U, s = sinθ/λ = 1/(2d). It multiplies amplitudes; intensities fall wi
 
 from __future__ import annotations
 
+import csv
 import math
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
+from functools import cache
+from importlib import resources
 
 import numpy as np
 from numpy.typing import NDArray
@@ -25,16 +28,38 @@ DEFAULT_U_A2 = DEFAULT_B_A2 / (8 * math.pi**2)
 def isotropic_U_A2(sites: Sequence[Site], cell: Cell) -> list[float]:
     """Return one mean square displacement per site in Å².
 
-    That of the source, or the mean of an anisotropic one; where the source is silent, B = 0.5 Å².
+    That of the source, or the mean of an anisotropic one; where the source is silent, the default.
     Negative values, which no atom can have, count as silence.
     """
+    silent = default_U_A2({site.element for site in sites})
     values = []
     for site in sites:
         u_A2 = site.u_iso_A2
         if u_A2 is None and site.u_aniso_A2 is not None:
             u_A2 = _equivalent(site.u_aniso_A2, cell)
-        values.append(DEFAULT_U_A2 if u_A2 is None or not 0 <= u_A2 < math.inf else u_A2)
+        values.append(silent if u_A2 is None or not 0 <= u_A2 < math.inf else u_A2)
     return values
+
+
+def default_U_A2(elements: Collection[str]) -> float:
+    """Return the displacement in Å² of sites whose source states none, in a crystal of `elements`.
+
+    An element by itself takes its own at 293 K where the table beside this module (which says its
+    source) has it: from B = 0.22 Å² in tungsten to 14 Å² in rubidium. Everything else takes
+    B = 0.5 Å², for how far an element swings in a compound depends on the compound.
+    """
+    if len(elements) != 1:
+        return DEFAULT_U_A2
+    (element,) = elements
+    return _of_elements().get(element, DEFAULT_U_A2)
+
+
+@cache
+def _of_elements() -> dict[str, float]:
+    table = resources.files("phaseid.crystal") / "tables" / "element_displacements.csv"
+    lines = table.read_text(encoding="utf-8").splitlines()
+    rows = csv.DictReader(line for line in lines if not line.startswith("#"))
+    return {row["element"]: float(row["B_A2"]) / (8 * math.pi**2) for row in rows}
 
 
 def exponents(
