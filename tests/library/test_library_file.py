@@ -88,6 +88,33 @@ def test_lines_come_back_to_the_precision_they_are_stored_with(library: Library)
         )  # fmt: skip
 
 
+def test_lines_at_another_energy_carry_its_dispersion(starter_library: Library) -> None:
+    """110 of ferrite at Co Kα1 (6930 eV) against Cu Kα1; f0, f′, f″ are those of xraydb.
+
+    |F|² ∝ (f0 + f′)² + f″²; the tables of f′ (Chantler 1995 there, Cromer & Liberman 1981 here)
+    differ by 0.1 to 0.2 electrons, 2 % of |F|².
+    """
+    xraydb = pytest.importorskip("xraydb")
+    ferrite = starter_library.choose("ferrite").phase_id
+    copper, cobalt = 8047.8, 6930.4
+    stored, other = starter_library.lines(ferrite), starter_library.lines_at(ferrite, cobalt)
+    assert tuple(other.hkl[0]) == (1, 1, 0)
+    f0 = float(xraydb.f0("Fe", 1 / (2 * float(other.d_A[0])))[0])
+    expected = [
+        (f0 + xraydb.f1_chantler("Fe", energy)) ** 2 + xraydb.f2_chantler("Fe", energy) ** 2
+        for energy in (cobalt, copper)
+    ]
+    found = other.f2_xray[0] / stored.f2_xray[0]
+    assert found == pytest.approx(expected[0] / expected[1], rel=0.02)
+    assert abs(found - 1) > 0.05
+    np.testing.assert_allclose(other.f2_electron[:20], stored.f2_electron[:20], rtol=1e-6)
+    assert (other.floor, other.complete_to_A) == (stored.floor, stored.complete_to_A)
+    with pytest.raises(InputError, match="energy"):
+        starter_library.lines_at(ferrite, -1.0)
+    with pytest.raises(InputError, match="no phase"):
+        starter_library.lines_at("nothing", cobalt)
+
+
 @pytest.mark.parametrize("kind", ["x-ray", "electron", "neutron"])
 def test_the_line_table_is_all_the_lines(starter_library: Library, kind: str) -> None:
     table = starter_library.line_table(kind)  # type: ignore[arg-type]
