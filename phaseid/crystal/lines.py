@@ -54,8 +54,8 @@ def compute_lines(
 
     Without `d_min_A` they reach 0.6 Å, or as far as about 1000 unique reflections go, but at least
     1.2 Å. `xray_energy_eV` is that of f′ and f″ (Cu Kα1 unless told otherwise); None leaves them
-    out. |F|² is the mean of Friedel mates; atoms are neutral; sites without displacement take that of
-    `displacement.default_U_A2`. Tables and their ranges: `phaseid.crystal.scattering`.
+    out. |F|² is the mean of Friedel mates; atoms are neutral; sites without displacement take the
+    default of `phaseid.crystal.displacement`. Tables: `phaseid.crystal.scattering`.
 
     Raises InputError if the cell has no volume, the operations are no group, an atom has no
     tabulated scattering factors, or `d_min_A` asks for more reflections than can be listed.
