@@ -69,8 +69,8 @@ class Comparison:
     """Whether two phases can be told apart.
 
     `confidence`: in which share of such measurements the true one of the two would be the likelier,
-    either being as probable beforehand; `reading_sigma` median relative one-sigma of a ring; `telling` the
-    rings that tell, the most telling first.
+    either being as probable beforehand; `reading_sigma` median relative one-sigma of a ring;
+    `telling` the rings that tell, the most telling first.
     """
 
     phases: tuple[Phase, Phase]

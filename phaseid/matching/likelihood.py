@@ -34,6 +34,8 @@ from phaseid.matching.settings import (
 _HALF_LOG_2PI = 0.5 * log(2.0 * pi)
 _AMPLITUDE_PRIOR_SD = 3.0
 _AXES = 3
+_HIDDEN = 1.2
+"""Two lines nearer than this many resolutions make one ring."""
 _EXCUSED_LINES = 8.0
 """Rings beyond a phase's stored lines are taken as if it had this many lines somewhere there."""
 
@@ -184,6 +186,7 @@ class _PatternWork:
             extra = extra + (wide - 1.0) * np.abs(self.axial).max(axis=3)
         near = np.abs(distance) < self.window[ring] + extra
         near &= self.intensity > 0
+        near = self._together(near, ring, position, distance)
         self.ring = np.where(near, ring, -1)
         cell = (np.arange(self.b * self.k).reshape(self.b, self.k, 1) * self.m + ring)[near]
         size = self.b * self.k * self.m
@@ -205,6 +208,26 @@ class _PatternWork:
         with np.errstate(invalid="ignore"):
             covered = self.pattern.seen_weight(np.where(np.isfinite(position), position, 50.0))
         self.covered = np.where(self.visible > 0, covered, 0.0)
+
+    def _together(
+        self, near: NDArray[np.bool_], ring: NDArray[np.int64], position: Floats, distance: Floats
+    ) -> NDArray[np.bool_]:
+        """Keep, of the lines near a ring, its main line and what cannot be told from that.
+
+        A line that would have made a ring of its own is not hidden by being near another.
+        """
+        key = np.arange(self.b)[:, None, None] * self.m + ring
+        with np.errstate(divide="ignore"):
+            score = np.log(self.intensity) + self.ln_amplitude[:, :, None]
+        score = np.where(near, score - 0.5 * (distance / (1.5 * self.pattern.sigma[ring])) ** 2, 0)
+        best = np.full(self.b * self.m, -np.inf)
+        np.maximum.at(best, key[near], score[near])
+        main = near & (score >= best[key])
+        middle = np.zeros(self.b * self.m)
+        middle[key[main]] = position[main]
+        apart = np.abs(position - middle[key])
+        result: NDArray[np.bool_] = near & (apart < _HIDDEN * self.pattern.resolution[ring])
+        return result | main
 
     def _missing(self) -> Floats:
         """(b, k, n) chance that the range covers a line that meets no claimed ring."""

@@ -57,7 +57,7 @@ DISPLACEMENT_DEG = 0.04
 """One-sigma of the zero shift and of the specimen displacement's shift (× cos θ), degrees of two-
 theta."""
 
-SIGMA_INFLATION = ((1.0, 0.5), (1.6, 0.3), (2.5, 0.2))
+SIGMA_INFLATION = ((1.0, 0.6), (1.6, 0.28), (2.5, 0.12))
 """(factor, prior): stated sigmas are often too small; marginalised per pattern."""
 ODD_POSITION_FACTOR = 3.5
 ODD_POSITION_SHARE = 0.04
