@@ -152,6 +152,48 @@ def test_a_shifted_origin_changes_nothing(example: Crystal, shift: tuple[int, in
     same(compute_lines(example, d_min_A=0.8), compute_lines(moved, d_min_A=0.8))
 
 
+def in_other_axes(crystal: Crystal, basis: np.ndarray) -> Crystal:
+    """The same crystal with other edges of the cell: (a', b', c') = (a, b, c) P, det P = ±1."""
+    inverse = np.rint(np.linalg.inv(basis)).astype(int)
+    triplets = []
+    for triplet in crystal.operations:
+        op = gemmi.Op(triplet)
+        op.rot = (inverse @ np.array(op.rot) @ basis).tolist()
+        op.tran = [int(t) % gemmi.Op.DEN for t in inverse @ np.array(op.tran)]
+        triplets.append(op.triplet())
+    sites = tuple(
+        dataclasses.replace(s, fract=tuple(float(x) for x in inverse @ np.array(s.fract)))
+        for s in crystal.sites
+    )
+    edges = np.array(gemmi.UnitCell(*crystal.cell).orth.mat) @ basis
+    lengths = np.linalg.norm(edges, axis=0)
+    angles = [
+        math.degrees(math.acos(edges[:, i] @ edges[:, j] / (lengths[i] * lengths[j])))
+        for i, j in ((1, 2), (0, 2), (0, 1))
+    ]
+    cell = (*map(float, lengths), *angles)
+    return dataclasses.replace(crystal, cell=cell, operations=tuple(triplets), sites=sites)
+
+
+@settings(max_examples=25, deadline=None)
+@given(
+    example=st.sampled_from(examples()),
+    steps=st.lists(
+        st.tuples(st.integers(0, 2), st.integers(1, 2), st.sampled_from([-1, 1])), max_size=3
+    ),
+    order=st.permutations(range(3)),
+)
+def test_any_setting_has_the_same_lines(
+    example: Crystal, steps: list[tuple[int, int, int]], order: list[int]
+) -> None:
+    """Axes swapped and sheared (a' = a ± b and so on): hkl change, nothing else does."""
+    basis = np.eye(3, dtype=int)[:, order]
+    for i, further, sign in steps:
+        basis[:, i] += sign * basis[:, (i + further) % 3]
+    turned = in_other_axes(example, basis)
+    same(compute_lines(example, d_min_A=0.9), compute_lines(turned, d_min_A=0.9))
+
+
 @settings(max_examples=15, deadline=None)
 @given(
     example=st.sampled_from(examples()),

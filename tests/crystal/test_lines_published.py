@@ -201,3 +201,27 @@ def test_reference_intensity_ratios(name: str, starter_library: Library) -> None
     corundum = strongest_per_gram(starter_library, "corundum", (1, 1, 3))
     found = strongest_per_gram(starter_library, name) / corundum
     assert RATIOS[name] == pytest.approx(found, rel=0.12 if name == "eskolaite" else 0.10)
+
+
+CERTIFIED = json.loads(
+    (Path(__file__).parent.parent / "reference" / "certified_cells.json").read_text("utf-8")
+)["rows"]
+STANDARDS = {
+    "Si": "silicon", "LaB6": "LaB6", "Al2O3": "corundum", "ZnO": "zincite", "TiO2 rutile": "rutile",
+    "Cr2O3": "eskolaite", "CeO2": "cerianite",
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("material", STANDARDS)
+def test_spacings_are_those_of_the_certified_cells(material: str, starter_library: Library) -> None:
+    """Every line of the shipped structure against each certified cell: d within 0.05 %."""
+    lines = starter_library.lines(starter_library.choose(STANDARDS[material]).phase_id)
+    rows = [row for row in CERTIFIED if row["material"] == material and "a_A" in row]
+    assert rows
+    for row in rows:
+        a_A, c_A = row["a_A"], row.get("c_A", row["a_A"])
+        cell = gemmi.UnitCell(a_A, a_A, c_A, 90, 90, 120 if "c_A" in row else 90)
+        if material == "TiO2 rutile":
+            cell = gemmi.UnitCell(a_A, a_A, c_A, 90, 90, 90)
+        expected = cell.calculate_d_array(lines.hkl)
+        np.testing.assert_allclose(lines.d_A, expected, rtol=5e-4, err_msg=row["srm"])
