@@ -44,7 +44,9 @@ class InputError(PhaseidError):
             where = f"{where} line {line}".strip()
         message = f"{where}: {what}" if where else what
         if remedy is not None:
-            message += remedy if message.endswith("\n") else f". {remedy}"
+            if not message.endswith("\n"):
+                message += " " if message.endswith((".", "?", "!")) else ". "
+            message += remedy
         super().__init__(message)
 
 

@@ -25,7 +25,7 @@ from phaseid.errors import InputError
 if TYPE_CHECKING:
     from phaseid.rings import RingList
 
-TYPED_NUMBER = re.compile(r"[+]?[\d.,]*\d[\d.,]*(e[+-]?\d+)?(\(\d+\))?", re.IGNORECASE)
+TYPED_NUMBER = re.compile(r"[+-]?[\d.,]*\d[\d.,]*(e[+-]?\d+)?(\(\d+\))?", re.IGNORECASE)
 UNITS = "d_A, d_nm, g_1/nm, g_1/A, q_1/A, q_1/nm, two_theta_deg, radius_mm, diameter_mm, radius_px"
 
 
@@ -92,9 +92,10 @@ def identify(
     from phaseid.matching.identify import identify as rank
 
     chemistry = Chemistry.parse(must, only, exclude)
-    numbers = [word for word in rings if _is_number(word)]
-    if numbers and len(numbers) < len(rings):
-        stray = next(word for word in rings if word not in numbers)
+    typed = [_numbers(word) for word in rings]
+    numbers = [number for several in typed for number in several]
+    if numbers and not all(typed):
+        stray = rings[typed.index([])]
         raise InputError(
             f"typed spacings and files do not mix ('{numbers[0]}' and '{stray}')",
             remedy="Give only files or only numbers; rings of a second pattern belong in a file",
@@ -168,5 +169,13 @@ def _read(
     )
 
 
-def _is_number(word: str) -> bool:
-    return TYPED_NUMBER.fullmatch(word) is not None and not Path(word).is_file()
+def _numbers(word: str) -> list[str]:
+    """Return the numbers typed in one word, "2.34" or "2.34, 2.02; 1.43"; none for a file.
+
+    A comma may be a decimal one: it separates only where every part has a point of its own.
+    """
+    if Path(word).is_file():
+        return []
+    listed = all("." in part for part in word.strip(", ").split(","))
+    parts = re.split(r"[\s;,]+" if listed else r"[\s;]+", word.strip("\t ,;"))
+    return parts if all(TYPED_NUMBER.fullmatch(part) for part in parts) else []

@@ -27,6 +27,7 @@ AddTo = Annotated[
     typer.Option(
         "--library",
         metavar="FILE",
+        readable=False,  # Library.open says it, with its own exit code
         help="The library to add to, made if it does not exist; default: your own.",
     ),
 ]
@@ -36,7 +37,9 @@ AddTo = Annotated[
 def add(
     paths: Annotated[
         list[Path] | None,
-        typer.Argument(metavar="PATH...", help="CIF files, folders, .zip and .tar archives."),
+        typer.Argument(
+            metavar="PATH...", readable=False, help="CIF files, folders, .zip and .tar archives."
+        ),
     ] = None,
     library: AddTo = None,
     starter: Annotated[

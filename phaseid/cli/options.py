@@ -20,6 +20,7 @@ LibraryFile = Annotated[
     typer.Option(
         "--library",
         metavar="FILE",
+        readable=False,  # Library.open says it, with its own exit code
         help="The library to search; default: $PHASEID_LIBRARY, else your own, made on first use.",
     ),
 ]
@@ -33,8 +34,12 @@ Exclude = Annotated[str | None, typer.Option("--not", metavar="EL,EL", help="Non
 
 
 def say(message: str) -> None:
-    """Tell the person something beside the result, on standard error."""
-    print(message, file=sys.stderr, flush=True)
+    """Tell the person something beside the result, on standard error.
+
+    What could steer a terminal becomes `?`: file names and file contents are quoted in messages.
+    """
+    plain = "".join(c if c.isprintable() or c == "\n" else "?" for c in message)
+    print(plain, file=sys.stderr, flush=True)
 
 
 def width() -> int:

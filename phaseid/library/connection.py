@@ -46,7 +46,7 @@ def _plain_words(path: Path, error: Exception) -> str:
     if isinstance(error, PermissionError):
         return f"{path}: permission denied. Check the permissions, or use --library FILE."
     if "full" in text or getattr(error, "errno", None) == errno.ENOSPC:
-        return f"{path}: the disk is full. What was added is kept; free some space and add again."
+        return f"{path}: the disk is full. What was stored is kept; free some space and try again."
     if "locked" in text or "busy" in text:
         return (
             f"{path}: another program is writing to the library. Wait for it to end and try again."
@@ -170,7 +170,10 @@ def publish_new(path: Path, build: Callable[[Path], None]) -> bool:
             )
         with tempfile.TemporaryDirectory(prefix=f".{path.name}-", dir=path.parent) as folder:
             made = Path(folder) / path.name
-            build(made)
+            try:
+                build(made)
+            except LibraryError as error:  # the reader knows of `path` alone
+                raise LibraryError(str(error).replace(str(made), str(path))) from error
             try:
                 path.hardlink_to(made)
             except FileExistsError:

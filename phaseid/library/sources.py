@@ -106,10 +106,13 @@ def read_all(paths: Iterable[Path]) -> Iterator[Found]:
     """
     for path in paths:
         if path.is_dir():
-            inside = list(_in_folder(path))
-            if inside:
-                yield from read_all(inside)
-            else:
+            closed: list[OSError] = []
+            inside = list(_in_folder(path, closed.append))
+            yield from read_all(inside)
+            for error in closed:
+                reason = f"the folder cannot be opened ({_words(error)})"
+                yield _rejected(Path(error.filename), "unreadable", reason)
+            if not inside and not closed:
                 yield _rejected(
                     path, "no_structures", "the folder holds no CIF file and no archive"
                 )
@@ -117,8 +120,10 @@ def read_all(paths: Iterable[Path]) -> Iterator[Found]:
             yield from _from_file(path)
 
 
-def _in_folder(folder: Path) -> Iterator[Path]:
-    for here, folders, files in os.walk(folder):
+def _in_folder(
+    folder: Path, on_closed: Callable[[OSError], object] | None = None
+) -> Iterator[Path]:
+    for here, folders, files in os.walk(folder, onerror=on_closed):
         folders.sort()
         for name in sorted(files):
             if _wanted(name) or name.lower().endswith(_ARCHIVE):

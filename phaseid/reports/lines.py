@@ -61,9 +61,10 @@ def lines_text(phase: Phase, probe: Probe, lines: Lines, width: int = 80) -> str
     )
     page = wrap(head, width, indent="")
     page += wrap(f"{phase.phase_id}; {source_text(phase)}", width, indent="")
+    assumed = "" if probe.wavelength_stated else " (assumed, for none was stated)"
     page += wrap(
-        f"{probe.label}, wavelength {probe.wavelength_A:.5f} Å; intensity as this probe shows it, "
-        f"strongest = 100; |F|² in {F2_UNITS[probe.kind]} per cell",
+        f"{probe.label}, wavelength {probe.wavelength_A:.5f} Å{assumed}; intensity as this probe "
+        f"shows it, strongest = 100; |F|² in {F2_UNITS[probe.kind]} per cell",
         width,
         indent="",
     )

@@ -7,6 +7,7 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
+from phaseid.reports.headline import doubts, headline, next_steps
 from phaseid.reports.plain import (
     Column,
     cell_text,
@@ -49,24 +50,29 @@ def as_text(answer: Identification, *, width: int = 80, bold: bool = False) -> s
     `bold` marks headings with the terminal's bold face; nothing is said by it alone.
     """
     page = _Page(max(width, 60), bold)
-    page.paragraph(_headline(answer))
+    page.paragraph(headline(answer))
     page.paragraph(f"Verdict: {VERDICTS[answer.verdict]}.")
+    for doubt in doubts(answer):
+        page.paragraph(doubt)
+    page.items("What to do next", next_steps(answer))
     _alternatives(page, answer)
-    if answer.hypotheses:
-        best = answer.hypotheses[0]
+    best = answer.hypotheses[0] if answer.hypotheses else None
+    if best is not None and (best.assignments or answer.verdict != "no-match"):
         for number in range(len(answer.patterns)):
             _rings(page, answer, best, number)
         _against(page, answer, best)
         for part in best.phases:
-            _phase(page, part)
-    for match in answer.type_matches:
-        page.heading("A structure type that would fit")
-        page.item(
+            _phase(page, part, alone=len(best.phases) == 1)
+    page.items(
+        "Structure types that would fit",
+        [
             f"{match.type_name} (as in {phase_text(match.like)}) with a = {match.a_A:.4f} "
             f"± {match.a_sigma_A:.4f} Å, probability {probability_text(match.probability)}"
-        )
+            for match in answer.type_matches
+        ],
+    )
     page.items("Remarks", _remarks(answer))
-    page.items("Safety", [_caution(answer, caution) for caution in answer.cautions])
+    page.items("Safety", _cautions(answer))
     page.blank()
     library = answer.library
     page.paragraph(
@@ -117,34 +123,6 @@ class _Page:
 
     def text(self) -> str:
         return "\n".join(self._lines).rstrip() + "\n"
-
-
-def _headline(answer: Identification) -> str:
-    nothing = f"something not in this library, probability {answer.unlisted_probability:.2f}"
-    if not answer.hypotheses:
-        return f"No phase in this library explains these rings: {nothing}."
-    best = answer.hypotheses[0]
-    named = _joined([phase_text(part.phase) for part in best.phases])
-    chance = f"probability {probability_text(best.probability)}"
-    if answer.verdict == "no-match":
-        return f"Probably {nothing}. The nearest answer is {named}, {chance}."
-    stand_ins = "".join(_stand_in(part) for part in best.phases)
-    if answer.verdict == "ambiguous":
-        return f"Undecided; the likeliest is {named}, {chance}.{stand_ins}"
-    return f"{named[0].upper()}{named[1:]}, {chance}.{stand_ins}"
-
-
-def _joined(names: list[str]) -> str:
-    return names[0] if len(names) == 1 else f"{', '.join(names[:-1])} and {names[-1]}"
-
-
-def _stand_in(part: PhaseAnswer) -> str:
-    others = part.indistinguishable
-    if not others:
-        return ""
-    first = phase_text(others[0])
-    which = first if len(others) == 1 else f"{len(others)} other entries, such as {first},"
-    return f" In place of {phase_text(part.phase)} these rings allow {which} just as well."
 
 
 def _alternatives(page: _Page, answer: Identification) -> None:
@@ -233,7 +211,7 @@ def _against(page: _Page, answer: Identification, best: Hypothesis) -> None:
     page.items("What speaks against it", items)
 
 
-def _phase(page: _Page, part: PhaseAnswer) -> None:
+def _phase(page: _Page, part: PhaseAnswer, *, alone: bool) -> None:
     phase = part.phase
     page.heading(phase_text(phase))
     page.item(
@@ -243,7 +221,7 @@ def _phase(page: _Page, part: PhaseAnswer) -> None:
     page.item(f"Source: {source_text(phase)}")
     if phase.source.reference:
         page.item(f"Reference: {phase.source.reference}")
-    if part.share is not None:
+    if part.share is not None and not alone:
         error = "" if part.share_sigma is None else f" ± {100 * part.share_sigma:.0f}"
         page.item(f"Share by weight: {100 * part.share:.0f}{error} %")
     if part.cell is not None:
@@ -270,27 +248,26 @@ def _phase(page: _Page, part: PhaseAnswer) -> None:
 
 
 def _remarks(answer: Identification) -> list[str]:
-    """Remarks on the whole, then those on one pattern, each once."""
+    """Remarks on the whole, then those on one pattern, each once; slips stand at the top."""
     many = len(answer.patterns) > 1
     own = [
         (f"Pattern {number}: {remark}" if many else remark, remark)
         for number, pattern in enumerate(answer.patterns, start=1)
         for remark in pattern.remarks
     ]
+    slips = {slip for pattern in answer.patterns for slip in pattern.slips}
     common = [remark for remark in answer.remarks if remark not in {plain for _, plain in own}]
-    return list(dict.fromkeys([*common, *(told for told, _ in own)]))
+    return list(dict.fromkeys([*common, *(told for told, plain in own if plain not in slips)]))
 
 
-def _caution(answer: Identification, caution: str) -> str:
-    """Say for which of the phases named a caution is meant."""
-    named = (
-        phase
-        for hypothesis in answer.hypotheses
-        for part in hypothesis.phases
-        for phase in (part.phase, *part.indistinguishable)
-    )
-    names = list(dict.fromkeys(phase_text(phase) for phase in named if caution in phase.cautions))
-    if not names:
-        return caution
-    more = f" and {len(names) - SHOWN_CAUTIONED} more" if len(names) > SHOWN_CAUTIONED else ""
-    return f"{', '.join(names[:SHOWN_CAUTIONED])}{more}: {caution}"
+def _cautions(answer: Identification) -> list[str]:
+    """Cautions on the phases that this text names, each with the phases it is about."""
+    named = [part.phase for hypothesis in answer.hypotheses for part in hypothesis.phases]
+    for part in answer.hypotheses[0].phases if answer.hypotheses else ():
+        named += part.indistinguishable[:SHOWN_ALIKE]
+    told = []
+    for caution in dict.fromkeys(caution for phase in named for caution in phase.cautions):
+        names = dict.fromkeys(phase_text(phase) for phase in named if caution in phase.cautions)
+        more = f" and {len(names) - SHOWN_CAUTIONED} more" if len(names) > SHOWN_CAUTIONED else ""
+        told.append(f"{', '.join([*names][:SHOWN_CAUTIONED])}{more}: {caution}")
+    return told

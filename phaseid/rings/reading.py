@@ -178,8 +178,8 @@ def rings_from_table(
         metadata=dict(table.metadata),
         camera_constant=constant,
     )
-    where = [row.where for row in table.rows]
-    return replace(rings, remarks=(*the_probe.remarks, *remarks, *slips(rings, where)))
+    found = tuple(slips(rings, [row.where for row in table.rows]))
+    return replace(rings, remarks=(*the_probe.remarks, *remarks, *found), slips=found)
 
 
 def _cell(value: float | str | None) -> str:

@@ -36,7 +36,8 @@ class RingList:
     middle of its interval; `intensity_range` (m, 2) the interval a grade stands for, both equal to
     `intensity` for a number, NaN where absent; `grades` (m,) the grade or "". `notes` (m,) are
     the file's. `sigma_stated` is False where a default was used for any ring.
-    `remarks` are sentences to show with the answer (defaults applied, likely slips).
+    `remarks` are sentences to show with the answer (defaults applied, likely slips); `slips` those
+    among them that make the whole pattern doubtful, such as a wrong unit.
     `metadata` are all keys of the file as written, known or not; `camera_constant` is that of the
     file where it states one.
     """
@@ -55,6 +56,7 @@ class RingList:
     sigma_stated: bool
     source: str = ""
     remarks: tuple[str, ...] = ()
+    slips: tuple[str, ...] = ()
     metadata: Mapping[str, str] = field(default_factory=dict)
     camera_constant: CameraConstant | None = None
 

@@ -172,8 +172,10 @@ def refuse_rows(problems: list[tuple[str, str]], source: str) -> None:
     shown = [f"\n  {where}: {what}" for where, what in problems[:20]]
     if len(problems) > 20:
         shown.append(f"\n  and {len(problems) - 20} more")
+    if path is None:
+        together = "Correct them."
     raise InputError(
-        f"{len(problems)} rows cannot be used{''.join(shown)}", path=path, remedy=together
+        f"{len(problems)} rows cannot be used{''.join(shown)}\n", path=path, remedy=together
     )
 
 

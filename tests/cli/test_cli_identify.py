@@ -48,6 +48,21 @@ def test_typed_spacings_are_identified(phaseid) -> None:
     assert [ring["grade"] for ring in value["patterns"][0]["rings"]] == GRADES
 
 
+@pytest.mark.parametrize("between", [" ", ", ", ",", "; "])
+def test_spacings_may_be_typed_in_one_word(phaseid, between: str) -> None:
+    typed = between.join(f"{d:.3f}" for d in SPACINGS)
+    value = phaseid("identify", typed, *PROBE, "--only", "Al", "--json").json("identification-1")
+    rings = value["patterns"][0]["rings"]
+    assert [ring["d_A"] for ring in rings] == pytest.approx(SPACINGS, abs=1e-3)
+
+
+def test_a_decimal_comma_is_read(phaseid) -> None:
+    typed = [f"{d:.3f}".replace(".", ",") for d in SPACINGS]
+    value = phaseid("identify", *typed, *PROBE, "--only", "Al", "--json").json("identification-1")
+    rings = value["patterns"][0]["rings"]
+    assert [ring["d_A"] for ring in rings] == pytest.approx(SPACINGS, abs=1e-3)
+
+
 def test_typed_angles_need_their_unit(phaseid) -> None:
     angles = [f"{2 * math.degrees(math.asin(1.5406 / 2 / d)):.2f}" for d in SPACINGS]
     words = ("identify", *angles, "--unit", "two_theta_deg", "--probe", "x-ray Cu Ka1")
@@ -116,6 +131,9 @@ def test_text_says_the_answer_first(
         (("2.34", "2.02", *PROBE, "--intensities", "vs"), "1 intensities for 2 rings"),
         (("2.34", "2.02", *PROBE, "--scale-uncertainty", "much"), "much"),
         (("0", "2.02", *PROBE), "zero"),
+        (("0", "2.02", "0", *PROBE), "value 3: d_A is zero (0)\nCorrect them."),
+        ((*PROBE, "--", "2.34", "-2.02"), "value 2: d_A is negative"),
+        (("2.34,2.02,none", *PROBE), "none"),
         (("2.34", "2.02", *PROBE, "--max-phases", "9"), "--max-phases"),
     ],
 )

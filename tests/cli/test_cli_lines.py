@@ -130,6 +130,11 @@ def test_wrong_words_are_exit_code_2(phaseid, words: tuple[str, ...]) -> None:
     assert done.err
 
 
+def test_a_wavelength_that_was_assumed_is_told(phaseid) -> None:
+    assert "(assumed, for none was stated)" in phaseid("lines", "Al", "--probe", "electron").out
+    assert "assumed" not in phaseid("lines", "Al", "--probe", "electron 200 kV").out
+
+
 def test_near_finds_the_line_asked_for(phaseid) -> None:
     value = phaseid("near", "2.338", "--tolerance", "0.5 %", "--only", "Al", "--json").json(
         "near-1"

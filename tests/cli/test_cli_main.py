@@ -7,6 +7,7 @@ import subprocess
 import sys
 import time
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -79,6 +80,31 @@ def test_a_missing_library_is_exit_code_3(phaseid, tmp_path: Path, command: list
     done = phaseid(*command, "--library", str(tmp_path / "none.sqlite"))
     assert done.code == 3
     assert "none.sqlite" in done.err
+
+
+def test_a_library_that_may_not_be_read_is_exit_code_3(
+    phaseid, tmp_path: Path, starter_library_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    mine = tmp_path / "mine.sqlite"
+    mine.write_bytes(starter_library_path.read_bytes())
+    opened = Path.open
+
+    def refuse(self: Path, *args: Any, **kwargs: Any) -> Any:
+        if self == mine:  # permissions do not stop an administrator, who may run these tests
+            raise PermissionError(13, "Permission denied")
+        return opened(self, *args, **kwargs)
+
+    monkeypatch.setattr(Path, "open", refuse)
+    monkeypatch.setattr("os.access", lambda *_args, **_kwargs: False)
+    done = phaseid("near", "2", "--library", str(mine))
+    assert done.code == 3
+    assert "permission denied" in done.err
+
+
+def test_a_message_cannot_steer_the_terminal(phaseid, tmp_path: Path) -> None:
+    done = phaseid("identify", str(tmp_path / "a\x1b[2J\u202eb.csv"))
+    assert done.code == 2
+    assert "a?[2J?b.csv: cannot be read" in done.err
 
 
 def test_a_file_that_is_no_library_is_exit_code_3(phaseid, tmp_path: Path) -> None:

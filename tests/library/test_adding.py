@@ -8,17 +8,19 @@ import hashlib
 import io
 import itertools
 import lzma
+import os
 import sqlite3
 import tarfile
 import zipfile
 from collections.abc import Callable
 from pathlib import Path
+from typing import Any
 
 import pytest
 
 from phaseid.crystal.cif import read_cif
 from phaseid.errors import LibraryError
-from phaseid.library import Library, connection
+from phaseid.library import Library, connection, open_default
 from phaseid.library.adding import suggested_workers
 from phaseid.library.entries import entry
 from phaseid.library.writer import combined
@@ -319,6 +321,46 @@ def test_a_full_disk_is_told_and_loses_nothing(
     assert (len(library), library.digest) == (1, digest)
     monkeypatch.undo()
     assert library.add(paths).added == 30
+
+
+def test_a_full_disk_while_the_starter_library_is_built_names_the_library(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    mine = tmp_path / "mine.sqlite"
+    monkeypatch.setenv("PHASEID_LIBRARY", str(mine))
+    open_for_writing = connection.open_for_writing
+
+    def small(path: Path) -> sqlite3.Connection:
+        conn = open_for_writing(path)
+        conn.execute("PRAGMA max_page_count = 40")
+        return conn
+
+    monkeypatch.setattr(connection, "open_for_writing", small)
+    with pytest.raises(LibraryError) as full:
+        open_default()
+    assert str(full.value).startswith(f"{mine}: the disk is full")
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_folder_that_cannot_be_opened_is_told(
+    library: Library, tmp_path: Path, write_cif: WriteCif, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    write_cif("folder/open.cif", "MgO")
+    closed = tmp_path / "folder" / "closed"
+    closed.mkdir()
+    scandir = os.scandir
+
+    def refuse(path: Any) -> Any:
+        if Path(path) == closed:
+            raise PermissionError(13, "Permission denied", str(closed))
+        return scandir(path)
+
+    monkeypatch.setattr(os, "scandir", refuse)
+    tally = library.add([tmp_path / "folder"])
+    assert tally.added == 1
+    assert [(r.file, r.reason) for r in tally.rejects] == [
+        ("closed", "the folder cannot be opened (Permission denied)")
+    ]
 
 
 def test_an_entry_does_not_depend_on_where_its_file_lies() -> None:

@@ -28,6 +28,7 @@ from phaseid.matching.identification import (
 from phaseid.probes.probe import Probe
 from phaseid.rings.ringlist import RingList
 
+CAUTIONS = ("Fine powders: avoid dust; follow the local rules.",)
 A_AL, A_MGO = 4.0495, 4.2112
 RINGS = [  # hkl, phase, intensity
     ((2, 0, 0), 1, 60.0),
@@ -62,6 +63,7 @@ def answer() -> Identification:
     periclase = replace(
         _cubic_phase("MgO-bbbb", "periclase", "MgO", A_MGO, "mgo.cif"),
         findings=(Finding("theoretical", "A computed cell, not a measured one."),),
+        cautions=CAUTIONS,
     )
     silver = _cubic_phase("Ag-cccc", "silver", "Ag", 4.0862, "ag.cif")
     cells = (A_AL, A_MGO)
@@ -127,5 +129,5 @@ def answer() -> Identification:
         unlisted_probability=0.03,
         library=LibraryStamp("/data/starter.sqlite", 120, "0123456789abcdef"),
         remarks=("Only phases of Al, Mg, O and Ag were considered.",),
-        cautions=("Fine powders: avoid dust; follow the local rules.",),
+        cautions=CAUTIONS,
     )

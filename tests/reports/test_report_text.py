@@ -26,9 +26,15 @@ def _with_name(answer: Identification, name: str) -> Identification:
     return replace(answer, hypotheses=(best, *answer.hypotheses[1:]))
 
 
+def _plain(text: str) -> str:
+    return " ".join(text.split())
+
+
 def test_the_answer_comes_first_in_one_sentence(answer: Identification) -> None:
-    first = as_text(answer).splitlines()[0]
-    assert first.startswith("Aluminium (Al) and periclase (MgO), probability 0.94.")
+    assert _plain(as_text(answer)).startswith(
+        "Aluminium (Al) or silver (Ag) (the rings cannot tell which) and periclase (MgO), "
+        "probability 0.94 together."
+    )
 
 
 def test_the_parts_come_in_order(answer: Identification) -> None:
@@ -91,13 +97,60 @@ def test_bold_adds_no_words(answer: Identification) -> None:
 
 def test_ambiguous_is_said_first(answer: Identification) -> None:
     text = as_text(replace(answer, verdict="ambiguous"))
-    assert text.startswith("Undecided; the likeliest is aluminium (Al) and periclase (MgO)")
+    assert text.startswith("Undecided; the likeliest is aluminium (Al) or silver (Ag)")
 
 
 def test_no_match_names_the_unlisted_first(answer: Identification) -> None:
     best = replace(answer.hypotheses[0], probability=0.1)
     none = replace(answer, verdict="no-match", hypotheses=(best,), unlisted_probability=0.85)
-    assert as_text(none).startswith("Probably something not in this library, probability 0.85.")
+    text = as_text(none)
+    assert text.startswith("Probably something not in this library, probability 0.85. The nearest")
+    assert "What to do next" in text
+    assert "phaseid near 2.112 2.345 2.031" in " ".join(text.split())
+
+
+def test_an_answer_that_explains_no_ring_is_not_told_ring_by_ring(answer: Identification) -> None:
+    rings = range(len(answer.patterns[0]))
+    idle = replace(
+        answer.hypotheses[1],
+        assignments=(),
+        unexplained=tuple(Unexplained(0, ring) for ring in rings),
+        missing=(),
+    )
+    text = as_text(replace(answer, verdict="no-match", hypotheses=(idle,)))
+    assert "nearest answer" not in text
+    assert "Why: ring by ring" not in text
+    assert "0/5" in text
+
+
+def test_rings_left_over_are_told_at_once(answer: Identification) -> None:
+    best = answer.hypotheses[0]
+    assert "probability 0.94 together. 1 of 5 rings remains unexplained." in _plain(as_text(answer))
+    few = replace(
+        best,
+        assignments=best.assignments[:2],
+        unexplained=tuple(Unexplained(0, ring) for ring in (2, 3, 4)),
+    )
+    text = _plain(as_text(replace(answer, hypotheses=(few,))))
+    assert "But 3 of 5 rings remain unexplained: most of this is something else." in text
+    clean = replace(best, unexplained=(), assignments=best.assignments * 2)
+    assert "unexplained" not in _plain(as_text(replace(answer, hypotheses=(clean,))))[:200]
+
+
+def test_a_slip_is_told_before_the_alternatives_and_once(answer: Identification) -> None:
+    slip = "All spacings are below 0.5 Å: were they in nm? Then name the column d_nm."
+    pattern = answer.patterns[0]
+    doubtful = replace(pattern, remarks=(*pattern.remarks, slip), slips=(slip,))
+    text = _plain(as_text(replace(answer, patterns=(doubtful,))))
+    assert f"Check first: {slip} Alternatives" in text
+    assert text.count("were they in nm") == 1
+
+
+def test_a_share_of_all_is_not_told(answer: Identification) -> None:
+    best = answer.hypotheses[0]
+    alone = replace(best, phases=best.phases[:1], assignments=best.assignments[1:])
+    alone = replace(alone, assignments=tuple(replace(a, phase=0) for a in alone.assignments))
+    assert "Share by weight" not in as_text(replace(answer, hypotheses=(alone,)))
 
 
 def test_an_empty_answer_still_answers(answer: Identification) -> None:
@@ -113,13 +166,20 @@ def test_a_structure_type_is_offered(answer: Identification) -> None:
 
 
 def test_a_caution_says_whom_it_is_about(answer: Identification) -> None:
-    assert "\n  Fine powders: avoid dust" in as_text(answer)
+    assert "\n  periclase (MgO): Fine powders: avoid dust" in as_text(answer)
+
+
+def test_a_caution_on_a_phase_that_is_not_named_is_left_out(answer: Identification) -> None:
     best = answer.hypotheses[0]
-    phase = replace(best.phases[1].phase, cautions=answer.cautions)
-    best = replace(best, phases=(best.phases[0], replace(best.phases[1], phase=phase)))
-    assert "periclase (MgO): Fine powders: avoid dust" in as_text(
-        replace(answer, hypotheses=(best,))
-    )
+    part = best.phases[0]
+    silver = part.indistinguishable[0]
+    toxic = replace(silver, name="hidden", cautions=("Toxic.",))
+    for others, told in (((toxic,), True), ((silver,) * 8 + (toxic,), False)):
+        longer = replace(part, indistinguishable=others)
+        text = as_text(
+            replace(answer, hypotheses=(replace(best, phases=(longer, *best.phases[1:])),))
+        )
+        assert ("hidden (Ag): Toxic." in text) == told
 
 
 def test_remarks_are_told_once(answer: Identification) -> None:
@@ -141,7 +201,7 @@ def test_a_long_group_is_cut_short(answer: Identification) -> None:
     part = replace(best.phases[0], indistinguishable=best.phases[0].indistinguishable * 50)
     best = replace(best, phases=(part, *best.phases[1:]))
     text = as_text(replace(answer, hypotheses=(best,)))
-    assert "50 other entries, such as silver (Ag)" in " ".join(text.split())
+    assert "one of 50 others that these rings allow as well, such as silver (Ag)" in _plain(text)
     assert "and 42 more; --json lists them all" in text
     assert text.count("silver (Ag), Fm-3m") == 8
 
