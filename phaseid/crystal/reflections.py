@@ -1,18 +1,17 @@
-"""Unique reflections of a cell, and those that only multiple scattering can show."""
+"""Unique reflections of a cell."""
 
 from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 
-from phaseid.crystal.crystal import Crystal
 from phaseid.crystal.metric import Cell, inverse_metric, volume_A3
-from phaseid.crystal.operations import INDEX_CODE, MAX_INDEX, Operations, read_operations
+from phaseid.crystal.operations import MAX_INDEX, Operations
 from phaseid.errors import InputError
 
 Floats = NDArray[np.float64]
@@ -25,7 +24,6 @@ _MOST_POINTS = 100_000_000
 _SLAB = 1 << 14  # points looked at together: they stay in the cache, and memory stays flat
 _LADDER = (2, 3, 4, 5, 6, 7, 8, 10, 12, 14, 16, 20, 24, 28, 32, 40, 48)  # sizes of boxes kept
 _MOST_KEPT = 1 << 14  # points of a box: some 100 kB of reflections
-_FIRST_BEAMS = 30  # of the longest d: strong enough to be scattered again
 _INTEGER = 1e-3  # h·t is a multiple of 1/24; anything nearer to an integer than this is one
 
 
@@ -234,30 +232,3 @@ def _domain(operations: Operations) -> _Domain:
     axes = operations.from_primitive.T
     centring = axes[np.abs(axes - np.rint(axes)).max(axis=1) > _INTEGER]
     return _Domain(ranks, identity, tuple(chosen), nonnegative, centring, gliding)
-
-
-def multiple_scattering_lines(
-    crystal: Crystal, d_min_A: float | None = None
-) -> tuple[NDArray[np.int32], Floats]:
-    """Return hkl (n, 3) and d (n,) in Å, falling, of lines that only multiple scattering can show.
-
-    These are reflections that a glide plane or screw axis forbids and the lattice allows, and that
-    are the sum of two allowed ones, so that electrons scattered twice can put a ring there (double
-    diffraction: 200 of silicon, 00l with l odd of a hexagonal close-packed metal). One hkl per d;
-    the range is that of `unique_reflections`.
-    """
-    operations = read_operations(crystal.operations)
-    allowed = unique_reflections(crystal.cell, operations, d_min_A)
-    straight = replace(operations, translations=np.zeros_like(operations.translations))
-    every = unique_reflections(crystal.cell, straight, allowed.d_min_A)
-    forbidden = ~np.isin(every.hkl @ INDEX_CODE, allowed.hkl @ INDEX_CODE)
-    hkl, d_A = every.hkl[forbidden], every.inverse_d2[forbidden] ** -0.5
-    both = np.concatenate([operations.rotations, -operations.rotations])
-    beams = (allowed.hkl @ both).reshape(-1, 3)
-    first = (allowed.hkl[:_FIRST_BEAMS] @ both).reshape(-1, 3)
-    codes = beams @ INDEX_CODE
-    reached = np.array([np.isin((h - first) @ INDEX_CODE, codes).any() for h in hkl], dtype=bool)
-    hkl, d_A = hkl[reached], d_A[reached]
-    new = np.ones(len(d_A), dtype=bool)
-    new[1:] = d_A[1:] < d_A[:-1] * (1 - 2e-5)
-    return hkl[new].astype(np.int32), d_A[new]

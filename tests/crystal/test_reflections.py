@@ -7,11 +7,10 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from known_crystals import PROTOTYPES, crystal, prototype
+from known_crystals import PROTOTYPES, crystal
 
-from phaseid.crystal.crystal import Site
 from phaseid.crystal.operations import read_operations
-from phaseid.crystal.reflections import multiple_scattering_lines, unique_reflections
+from phaseid.crystal.reflections import unique_reflections
 from phaseid.errors import InputError
 
 
@@ -199,30 +198,3 @@ def test_too_many_reflections_are_refused() -> None:
 def test_the_smallest_d_must_be_a_positive_number(d_min_A: float) -> None:
     with pytest.raises(InputError, match="positive number"):
         unique_reflections((4, 4, 4, 90, 90, 90), read_operations(("x,y,z",)), d_min_A)
-
-
-def test_double_diffraction_shows_200_of_silicon_and_001_of_hexagonal_metals() -> None:
-    """Hirsch et al. 1965, Electron Microscopy of Thin Crystals (from memory)."""
-    silicon = prototype("diamond", ("Si",), (5.4309, 5.4309, 5.4309, 90, 90, 90))
-    hkl, d_A = multiple_scattering_lines(silicon, 1.2)
-    assert [tuple(h) for h in hkl.tolist()] == [(2, 0, 0), (4, 2, 0)]
-    np.testing.assert_allclose(d_A, 5.4309 / np.sqrt([4, 20]), rtol=1e-12)
-    titanium = prototype("hcp", ("Ti",), (2.95, 2.95, 4.686, 90, 90, 120))
-    hkl, _ = multiple_scattering_lines(titanium, 1.0)
-    assert (0, 0, 1) in {tuple(h) for h in hkl.tolist()}
-    assert all(h == k and m % 2 for h, k, m in hkl.tolist())
-
-
-def test_lattices_without_glides_have_no_lines_of_double_diffraction() -> None:
-    """bcc and fcc: what the centring forbids is no lattice point and cannot appear."""
-    for name, a_A in (("fcc", 4.05), ("bcc", 3.16)):
-        hkl, d_A = multiple_scattering_lines(prototype(name, ("W",), (a_A, a_A, a_A, 90, 90, 90)))
-        assert hkl.shape == (0, 3)
-        assert d_A.shape == (0,)
-
-
-def test_a_screw_axis_alone_does_not_reach_its_own_row() -> None:
-    """In P 21 the forbidden 010 is the sum of 1 1 0 and -1 0 0, both allowed."""
-    site = Site("C", "C", 0, (0.1, 0.2, 0.3), 1.0)
-    hkl, _ = multiple_scattering_lines(crystal("P 1 21 1", (5, 6, 7, 90, 100, 90), [site]), 1.5)
-    assert {tuple(h) for h in hkl.tolist()} == {(0, 1, 0), (0, 3, 0)}
