@@ -15,7 +15,6 @@ from phaseid.cli.ring_input import (
     ScaleUncertainty,
     Sigma,
     Unit,
-    is_number,
     ring_table,
 )
 from phaseid.errors import InputError
@@ -118,9 +117,4 @@ def _standard(names: list[str], temperature_C: float | None, library: Path | Non
 
 
 def _across(text: str | None, unit: str, sigma: str | None) -> RingTable | None:
-    if text is None:
-        return None
-    words = text.replace(";", " ").split()
-    if all(is_number(word) for word in words):
-        return ring_table(words, unit=unit, sigma=sigma)
-    return ring_table([text])
+    return None if text is None else ring_table([text], unit=unit, sigma=sigma)

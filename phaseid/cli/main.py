@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import os
 import sys
 from typing import Annotated, Any
@@ -102,23 +103,30 @@ def run(arguments: list[str] | None = None) -> None:
         if hasattr(stream, "reconfigure"):  # a terminal without Å shows a substitute
             stream.reconfigure(errors="replace")
     try:
-        app(args=words, prog_name="phaseid")
+        try:
+            app(args=words, prog_name="phaseid")
+        finally:
+            _flush()
     except KeyboardInterrupt:
         sys.exit(INTERRUPTED)
     except Exception as error:
         if debug:
             raise
+        if isinstance(error, OSError) and error.errno in (errno.ENOSPC, errno.EDQUOT):
+            _silence_stdout()
+            say("phaseid: the answer could not be written, the disk is full. Free some space.")
+            sys.exit(1)
         what = f"{type(error).__name__}: {error}".splitlines()[0]
         say(
             f"phaseid: something went wrong inside phaseid ({what}). "
             "Run the same command with --debug to see where."
         )
         sys.exit(1)
-    finally:
-        _flush()
 
 
 def _flush() -> None:
+    if sys.stdout is None:  # closed by whoever called
+        return
     try:
         sys.stdout.flush()
     except BrokenPipeError:

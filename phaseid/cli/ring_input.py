@@ -23,7 +23,7 @@ Rings = Annotated[
     list[str],
     typer.Argument(
         metavar="RINGS",
-        help="A ring list file, - for standard input, or typed numbers.",
+        help="Ring list files, - for standard input, or typed numbers.",
         show_default=False,
     ),
 ]
@@ -62,50 +62,74 @@ Intensities = Annotated[
 ]
 
 
-def is_number(word: str) -> bool:
-    """Whether a word is a typed position: a number, and no file is called so."""
-    return _NUMBER.fullmatch(word) is not None and not Path(word).is_file()
+def typed_numbers(word: str) -> list[str]:
+    """Return the numbers typed in one word, "2.34" or "2.34, 2.02; 1.43"; none for a file.
+
+    A comma may be a decimal one: it separates only where every part has a point of its own.
+    """
+    if Path(word).is_file():
+        return []
+    listed = all("." in part for part in word.strip(", ").split(","))
+    parts = re.split(r"[\s;,]+" if listed else r"[\s;]+", word.strip("\t ,;"))
+    return parts if all(_NUMBER.fullmatch(part) for part in parts) else []
 
 
-def all_numbers(words: list[str]) -> bool:
-    """Whether the words are typed positions; raises InputError where they are mixed with files."""
-    numbers = [word for word in words if is_number(word)]
-    if numbers and len(numbers) < len(words):
-        stray = next(word for word in words if word not in numbers)
+def all_numbers(words: list[str]) -> list[str]:
+    """Return the positions typed, none where the words are files.
+
+    Raises InputError where numbers and files are mixed.
+    """
+    typed = [typed_numbers(word) for word in words]
+    numbers = [number for several in typed for number in several]
+    if numbers and not all(typed):
         raise InputError(
-            f"typed numbers and files do not mix ('{numbers[0]}' and '{stray}')",
+            f"typed numbers and files do not mix ('{numbers[0]}' and '{words[typed.index([])]}')",
             remedy="Give only files or only numbers; rings of a second pattern belong in a file",
         )
-    return bool(numbers)
+    return numbers
 
 
-def ring_table(
+def ring_tables(
     words: list[str],
     *,
     unit: str = "d_A",
     sigma: str | None = None,
     intensities: str | None = None,
-) -> RingTable:
-    """The cells of one pattern; raises InputError where it cannot be read or there are several."""
+) -> list[RingTable]:
+    """The cells of each pattern; raises InputError where one cannot be read.
+
+    `unit`, `sigma`, `intensities` are those of typed numbers, which make one pattern.
+    """
     from phaseid.rings import parse_table, read_text, table_from_values
 
-    if all_numbers(words):
+    numbers = all_numbers(words)
+    if numbers:
         levels = None if intensities is None else intensities.replace(",", " ").split()
-        return table_from_values(words, column=unit, sigma=sigma, intensities=levels)
-    if len(words) > 1:
+        return [table_from_values(numbers, column=unit, sigma=sigma, intensities=levels)]
+    if words.count("-") > 1:
+        raise InputError("standard input can be read only once", remedy="Name files instead")
+    return [
+        parse_table(_standard_input(), STDIN) if word == "-" else parse_table(read_text(word), word)
+        for word in words
+    ]
+
+
+def ring_table(words: list[str], *, unit: str = "d_A", sigma: str | None = None) -> RingTable:
+    """The cells of one pattern; raises InputError where it cannot be read or there are several."""
+    if len(words) > 1 and not all_numbers(words):
         raise InputError(
             f"this command takes one ring list, not {len(words)}",
             remedy=f"Give '{words[0]}' alone.",
         )
-    if words[0] != "-":
-        return parse_table(read_text(words[0]), words[0])
-    return parse_table(_standard_input(), STDIN)
+    return ring_tables(words, unit=unit, sigma=sigma)[0]
 
 
 def _standard_input() -> str:
+    from phaseid.rings import text_of
+
+    if sys.stdin is None or sys.stdin.closed:
+        raise InputError("cannot be read: it is closed", path=STDIN, remedy="Name a file instead")
     if sys.stdin.isatty():
         say("Reading a ring list from the keyboard; end it with Ctrl-D.")
-    try:
-        return sys.stdin.read()
-    except UnicodeDecodeError:
-        raise InputError("is not UTF-8 text", path=STDIN, remedy="Save the list as UTF-8") from None
+    # bytes: what they mean does not depend on the language of the terminal
+    return text_of(sys.stdin.buffer.read(), STDIN)

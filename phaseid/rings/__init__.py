@@ -10,7 +10,7 @@ from phaseid.rings.reading import (
     table_from_values,
 )
 from phaseid.rings.ringlist import GRADES, RingList
-from phaseid.rings.table import RingTable, parse_table, read_text
+from phaseid.rings.table import RingTable, parse_table, read_text, text_of
 from phaseid.rings.writing import rings_to_text, write_rings
 
 __all__ = [
@@ -29,5 +29,6 @@ __all__ = [
     "rings_from_values",
     "rings_to_text",
     "table_from_values",
+    "text_of",
     "write_rings",
 ]

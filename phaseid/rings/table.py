@@ -75,6 +75,11 @@ def read_text(path: str | Path) -> str:
         raise InputError(
             f"cannot be read: {reason}", path=path, remedy="Give the path of a ring list file."
         ) from None
+    return text_of(data, str(path))
+
+
+def text_of(data: bytes, path: str) -> str:
+    """The text in the bytes of a ring list called `path`; raises InputError if it is no text."""
     if len(data) > MAX_BYTES:
         raise InputError(
             f"is larger than {MAX_BYTES // 1_000_000} MB, too large for a ring list",

@@ -26,6 +26,11 @@ def ring_file(tmp_path: Path) -> str:
     return str(path)
 
 
+def _typed(data: bytes) -> io.TextIOWrapper:
+    """Standard input as a terminal without UTF-8 sees it."""
+    return io.TextIOWrapper(io.BytesIO(data), encoding="ascii", errors="surrogateescape")
+
+
 def _formulas(value: Any) -> list[str]:
     return [phase["formula"] for phase in value["hypotheses"][0]["phases"]]
 
@@ -73,7 +78,7 @@ def test_typed_angles_need_their_unit(phaseid) -> None:
 
 def test_standard_input_is_read(phaseid, ring_file: str, monkeypatch: pytest.MonkeyPatch) -> None:
     text = Path(ring_file).read_text(encoding="utf-8")
-    monkeypatch.setattr(sys, "stdin", io.StringIO(text))
+    monkeypatch.setattr(sys, "stdin", _typed(text.encode()))
     value = phaseid("identify", "-", "--only", "Al", "--json").json("identification-1")
     assert _formulas(value) == ["Al"]
 
@@ -146,7 +151,46 @@ def test_wrong_input_is_exit_code_2(phaseid, words: tuple[str, ...], said: str) 
 
 
 def test_an_empty_pattern_is_refused(phaseid, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr(sys, "stdin", io.StringIO(""))
+    monkeypatch.setattr(sys, "stdin", _typed(b""))
     done = phaseid("identify", "-")
     assert done.code == 2
     assert "standard input" in done.err
+
+
+@pytest.mark.parametrize(
+    ("data", "said"),
+    [
+        (b"d_A\n2.3\n\xff\n", "standard input line 3: is not UTF-8 text"),
+        (b"\x89PNG\r\n\x1a\n\x00", "standard input: is a binary file"),
+    ],
+)
+def test_standard_input_that_is_no_text_is_refused(
+    phaseid, data: bytes, said: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(sys, "stdin", _typed(data))
+    done = phaseid("identify", "-")
+    assert done.code == 2
+    assert said in done.err
+
+
+def test_titles_on_standard_input_may_hold_any_letter(
+    phaseid, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    rows = "".join(f"{d:.3f}\n" for d in SPACINGS)
+    text = f"# title: Stück 图\n# probe: electron 200 kV\nd_A\n{rows}"
+    monkeypatch.setattr(sys, "stdin", _typed(text.encode()))
+    value = phaseid("identify", "-", "--only", "Al", "--json").json("identification-1")
+    assert value["patterns"][0]["title"] == "Stück 图"
+
+
+def test_standard_input_is_read_once(phaseid) -> None:
+    done = phaseid("identify", "-", "-")
+    assert done.code == 2
+    assert "only once" in done.err
+
+
+def test_closed_standard_input_is_told(phaseid, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(sys, "stdin", None)
+    done = phaseid("identify", "-")
+    assert done.code == 2
+    assert "standard input: cannot be read: it is closed" in done.err

@@ -158,6 +158,28 @@ def test_a_closed_pipe_is_a_quiet_end(starter_library_path: Path) -> None:
         assert process.wait() == 0
 
 
+@pytest.mark.skipif(not Path("/dev/full").exists(), reason="this system has no /dev/full")
+def test_an_answer_that_cannot_be_written_is_told() -> None:
+    with Path("/dev/full").open("w") as full:
+        done = subprocess.run(
+            [sys.executable, "-m", "phaseid", "guide", "rings"],
+            stdout=full,
+            stderr=subprocess.PIPE,
+            text=True,
+            check=False,
+        )
+    assert done.returncode == 1
+    assert done.stderr == (
+        "phaseid: the answer could not be written, the disk is full. Free some space.\n"
+    )
+
+
+def test_closed_standard_output_is_a_quiet_end() -> None:
+    command = f"exec {sys.executable} -m phaseid guide rings >&-"
+    done = subprocess.run(["sh", "-c", command], capture_output=True, text=True, check=False)
+    assert (done.returncode, done.stderr) == (0, "")
+
+
 def test_a_terminal_without_our_letters_still_gets_an_answer(starter_library_path: Path) -> None:
     done = _shell(
         "lines", "Al", PHASEID_LIBRARY=str(starter_library_path), PYTHONIOENCODING="ascii"
