@@ -16,7 +16,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from phaseid.probes.probe import Probe
+from phaseid.probes.probe import Probe, Quantity
 from phaseid.units import electron_voltage_kV, relativistic_mass_factor
 
 _MAX_A = 200.0  # beyond, J0's integral is 1/2 within 1 %
@@ -48,8 +48,9 @@ def two_beam_weights(
     *,
     volume_A3: float,
     thickness_A: float,
+    quantity: Quantity = "mean",
 ) -> NDArray[np.float64]:
-    """`Probe.weights` (mean along the ring) of electrons times the two-beam ratio of each line.
+    """`Probe.weights` of electrons times the two-beam ratio of each line.
 
     `f2_A2` is |F|² (Å², no relativistic factor) of one reflection of the cell of `volume_A3`;
     `thickness_A` the crystallite's thickness along the beam. A line of merged unlike reflections is
@@ -58,4 +59,4 @@ def two_beam_weights(
     mass = relativistic_mass_factor(electron_voltage_kV(probe.wavelength_A))
     amplitude = np.sqrt(np.asarray(f2_A2, dtype=np.float64))
     A = probe.wavelength_A * mass * amplitude * thickness_A / volume_A3
-    return probe.weights(d_A, multiplicity, f2_A2) * blackman_ratio(A)
+    return probe.weights(d_A, multiplicity, f2_A2, quantity=quantity) * blackman_ratio(A)

@@ -99,7 +99,7 @@ def test_the_table_fits_the_terminal(
         line.split() for line in done.out.splitlines() if line.split()[:3] == ["2"] + ["0"] * 2
     )
     assert row[3] == f"{A_NACL / 2:.5f}"
-    assert row[6] == "100.0"
+    assert "100.0" in row
 
 
 def test_several_structures_in_a_file_are_told(phaseid, tmp_path: Path) -> None:
