@@ -22,8 +22,8 @@ WANTED_REFLECTIONS = 1000
 MOST_REFLECTIONS = 20_000
 _MOST_POINTS = 100_000_000
 _SLAB = 1 << 14  # points looked at together: they stay in the cache, and memory stays flat
-_LADDER = (2, 3, 4, 5, 6, 7, 8, 10, 12, 14, 16, 20, 24, 28, 32, 40, 48)  # sizes of boxes kept
-_MOST_KEPT = 1 << 14  # points of a box: some 100 kB of reflections
+_LADDER = (3, 5, 8, 12, 16, 24, 32, 48)  # half sizes of boxes kept; they fit one byte
+_MOST_KEPT = 1 << 14  # points of a box: at most 64 kB of reflections
 _INTEGER = 1e-3  # h·t is a multiple of 1/24; anything nearer to an integer than this is one
 
 
@@ -94,27 +94,30 @@ def _enumerate(
     limit = [int(length / d_min_A * (1 + 1e-9)) for length in cell[:3]]
     domain = _domain(operations)
     box = tuple(next((rung for rung in _LADDER if rung >= n), n) for n in limit)
-    if math.prod(_counts(box, domain.nonnegative)) <= _MOST_KEPT:
-        hkl, multiplicity = _sets_in_box(operations, box)
+    if max(box) <= _LADDER[-1] and math.prod(_counts(box, domain.nonnegative)) <= _MOST_KEPT:
+        kept, counts = _sets_in_box(operations, box)
+        hkl = kept.astype(np.float64)
         inverse_d2 = np.einsum("ij,ij->i", hkl @ reciprocal, hkl)
         (inside,) = (inverse_d2 <= d_min_A**-2 * (1 + 1e-12)).nonzero()
         order = inside[inverse_d2[inside].argsort(kind="stable")]
-    else:
-        if max(limit) > MAX_INDEX or math.prod(_counts(limit, domain.nonnegative)) > _MOST_POINTS:
-            raise InputError(
-                f"a cell of {' × '.join(f'{x:.0f}' for x in cell[:3])} Å has too many reflections"
-                f" down to {d_min_A:g} Å",
-                remedy="Ask for a larger smallest d",
-            )
-        slabs = _slabs(limit, reciprocal, d_min_A, domain.nonnegative)
-        parts = [_first_of_each_set(*slab, operations) for slab in slabs]
-        hkl, inverse_d2, multiplicity = map(np.concatenate, zip(*parts, strict=True))
-        order = inverse_d2.argsort(kind="stable")
+        return Reflections(hkl[order], inverse_d2[order], counts[order].astype(np.int64), d_min_A)
+    if max(limit) > MAX_INDEX or math.prod(_counts(limit, domain.nonnegative)) > _MOST_POINTS:
+        raise InputError(
+            f"a cell of {' × '.join(f'{x:.0f}' for x in cell[:3])} Å has too many reflections"
+            f" down to {d_min_A:g} Å",
+            remedy="Ask for a larger smallest d",
+        )
+    slabs = _slabs(limit, reciprocal, d_min_A, domain.nonnegative)
+    parts = [_first_of_each_set(*slab, operations) for slab in slabs]
+    hkl, inverse_d2, multiplicity = map(np.concatenate, zip(*parts, strict=True))
+    order = inverse_d2.argsort(kind="stable")
     return Reflections(hkl[order], inverse_d2[order], multiplicity[order], d_min_A)
 
 
-@lru_cache(maxsize=256)
-def _sets_in_box(operations: Operations, box: tuple[int, ...]) -> tuple[Floats, NDArray[np.int64]]:
+@lru_cache(maxsize=1024)
+def _sets_in_box(
+    operations: Operations, box: tuple[int, ...]
+) -> tuple[NDArray[np.int8], NDArray[np.int8]]:
     """Return hkl (n, 3) and multiplicity (n,) of every set with |h|, |k|, |l| inside a box.
 
     Neither depends on the lengths and angles of a cell, so all crystals of a group share them.
@@ -125,7 +128,7 @@ def _sets_in_box(operations: Operations, box: tuple[int, ...]) -> tuple[Floats, 
     ]
     hkl = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 3)
     first, _, multiplicity = _first_of_each_set(hkl, np.zeros(len(hkl)), operations)
-    return first, multiplicity
+    return first.astype(np.int8), multiplicity.astype(np.int8)
 
 
 def _counts(limit: Sequence[int], nonnegative: tuple[bool, ...]) -> list[int]:
