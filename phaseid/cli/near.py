@@ -17,6 +17,8 @@ from phaseid.cli.options import (
     say,
     width,
 )
+from phaseid.cli.ring_input import Unit, typed_numbers
+from phaseid.errors import InputError
 
 if TYPE_CHECKING:
     from phaseid.matching.near import NearLine
@@ -26,8 +28,10 @@ SCHEMA = "phaseid.near/1"
 
 def near(
     spacings: Annotated[
-        list[float], typer.Argument(metavar="D", help="Spacings in Å.", show_default=False)
+        list[str],
+        typer.Argument(metavar="D", help="Spacings in Å, or see --unit.", show_default=False),
     ],
+    unit: Unit = "d_A",
     tolerance: Annotated[
         str, typer.Option("--tolerance", metavar="REL", help="How near: 1% or 0.01, of d.")
     ] = "1%",
@@ -61,9 +65,10 @@ def near(
     beam = parse_probe(probe)
     chemistry = Chemistry.parse(must, only, exclude)
     allowed = parse_relative(tolerance, "tolerance")
+    wanted = _spacings_A(spacings, unit, probe)
     with open_library(library) as shelf:
         matches = near_lines(
-            spacings,
+            wanted,
             shelf,
             beam,
             tolerance=allowed,
@@ -99,6 +104,19 @@ def near(
     print("\n".join(_table([match for match in matches if match.phase.phase_id in shown])))
     if len(phases) > top:
         say(f"{len(phases) - top} more phases have such lines; see them with --top {len(phases)}.")
+
+
+def _spacings_A(words: list[str], unit: str, probe: str) -> list[float]:
+    from phaseid.rings import rings_from_values
+
+    typed = [typed_numbers(word) for word in words]
+    if not all(typed):
+        raise InputError(
+            f"'{words[typed.index([])]}' is no number",
+            remedy="Give spacings in Å, such as 2.338; rings in a file are for phaseid identify",
+        )
+    numbers = [number for several in typed for number in several]
+    return [float(d) for d in rings_from_values(numbers, column=unit, probe=probe).d_A]
 
 
 def _table(matches: list[NearLine]) -> list[str]:

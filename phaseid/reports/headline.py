@@ -10,7 +10,8 @@ ASKED = 3  # rings named in the example of `phaseid near`
 
 def headline(answer: Identification) -> str:
     """Return the answer in a sentence or two: phases, probability, rings left over."""
-    nothing = f"something not in this library, probability {answer.unlisted_probability:.2f}"
+    unlisted = probability_text(answer.unlisted_probability)
+    nothing = f"something not in this library, probability {unlisted}"
     if not answer.hypotheses:
         return f"No phase in this library explains these rings: {nothing}."
     best = answer.hypotheses[0]

@@ -189,3 +189,16 @@ def test_a_tolerance_that_is_none_is_refused(phaseid, tolerance: str) -> None:
 def test_a_spacing_that_is_none_is_refused(phaseid) -> None:
     assert phaseid("near", "--", "-2.3").code == 2
     assert phaseid("near", "nan").code == 2
+    done = phaseid("near", "2.3", "rings.csv")
+    assert done.code == 2
+    assert "'rings.csv' is no number" in done.err
+
+
+@pytest.mark.parametrize(
+    "words",
+    [("2,338", "2,025"), ("2.338, 2.025",), ("4.2772", "4.9383", "--unit", "g_1/nm")],
+)
+def test_near_takes_spacings_as_people_type_them(phaseid, words: tuple[str, ...]) -> None:
+    value = phaseid("near", *words, "--only", "Al", "--json").json("near-1")
+    wanted = {round(match["wanted_d_A"], 3) for match in value["matches"]}
+    assert wanted == {2.338, 2.025}

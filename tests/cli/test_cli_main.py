@@ -12,6 +12,7 @@ from typing import Any
 import pytest
 
 import phaseid as package
+from phaseid.__main__ import start
 from phaseid.cli import lines, options
 from phaseid.cli.guide import PAGES, page
 
@@ -119,6 +120,19 @@ def test_interruption_is_exit_code_130(phaseid, monkeypatch: pytest.MonkeyPatch)
 
     monkeypatch.setattr(lines, "find_crystal", interrupt)
     assert phaseid("lines", "Al").code == 130
+
+
+def test_interruption_while_loading_is_exit_code_130(monkeypatch: pytest.MonkeyPatch) -> None:
+    class Interrupting:
+        def find_spec(self, name: str, *_: Any) -> None:
+            if name == "phaseid.cli.main":
+                raise KeyboardInterrupt
+
+    monkeypatch.delitem(sys.modules, "phaseid.cli.main")
+    monkeypatch.setattr(sys, "meta_path", [Interrupting(), *sys.meta_path])
+    with pytest.raises(SystemExit) as end:
+        start()
+    assert end.value.code == 130
 
 
 def test_a_slip_of_ours_is_one_line(phaseid, monkeypatch: pytest.MonkeyPatch) -> None:
