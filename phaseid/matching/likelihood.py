@@ -25,6 +25,7 @@ from phaseid.matching.settings import (
     FOREIGN_RINGS,
     ODD_POSITION_FACTOR,
     ODD_POSITION_SHARE,
+    SCATTER_INFLATION,
     SIGMA_INFLATION,
     STRAIN,
     UNLISTED_PRIOR,
@@ -226,8 +227,8 @@ class _PatternWork:
         middle = np.zeros(self.b * self.m)
         middle[key[main]] = position[main]
         apart = np.abs(position - middle[key])
-        result: NDArray[np.bool_] = near & (apart < _HIDDEN * self.pattern.resolution[ring])
-        return result | main
+        hidden = near & (apart < _HIDDEN * self.pattern.resolution[ring])
+        return np.asarray(hidden | main)
 
     def _missing(self) -> Floats:
         """(b, k, n) chance that the range covers a line that meets no claimed ring."""
@@ -274,17 +275,30 @@ class _PatternWork:
             )
         self.share, self.ln_total, self.hessian = share, ln_total, hessian
 
-    def ring_terms(self) -> Floats:
-        """(b, m) ln likelihood of each ring's intensity and of its being seen, if claimed."""
+    def ring_terms(self, factor: float = 1.0) -> Floats:
+        """(b, m) ln likelihood of each ring's intensity and of its being seen, if claimed.
+
+        `factor` widens the ordinary scatter of intensities.
+        """
         scatter = self.pattern.scatter
         error = self.pattern.ln_intensity - self.ln_total
         spread = np.einsum("bkm,bk->bm", self.share, self.spread2)
+        spread = spread + (factor**2 - 1.0) * scatter.intensity**2
         narrow, odd = self.narrow + spread, self.odd + spread
         ordinary = log(1.0 - scatter.odd_share) - 0.5 * (error**2 / narrow + np.log(narrow))
         strange = log(scatter.odd_share) - 0.5 * (error**2 / odd + np.log(odd))
         intensity = np.where(self.known, np.logaddexp(ordinary, strange) - _HALF_LOG_2PI, 0.0)
         seen = _logistic(DETECTION_SLOPE * (self.ln_total - self.pattern.ln_limit))
         result: Floats = intensity + np.log(np.maximum(seen, 1e-12))
+        return result
+
+    def intensity_term(self) -> Floats:
+        """(b,) ln likelihood of the claimed rings' intensities, their scatter marginalised."""
+        terms = [
+            log(prior) + np.where(self.claimed, self.ring_terms(factor), 0.0).sum(axis=1)
+            for factor, prior in SCATTER_INFLATION
+        ]
+        result: Floats = np.logaddexp.reduce(terms, axis=0)
         return result
 
     def variance(self) -> Floats:
@@ -520,8 +534,7 @@ def evaluate(
     mean, covariance, _ = positions.solve(targets, SIGMA_INFLATION[0][0])
     total = positions.marginal(targets) + _leftover(works)
     for work in works:
-        total = total + np.where(work.claimed, work.ring_terms(), 0.0).sum(axis=1)
-        total = total + work.missing_term() + work.occam_term()
+        total = total + work.intensity_term() + work.missing_term() + work.occam_term()
     deviation = np.sqrt(np.maximum(np.einsum("bqq->bq", covariance), 0.0))
     first = np.cumsum([0, *positions.widths])
     scales = np.stack(

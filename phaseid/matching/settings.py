@@ -63,16 +63,19 @@ ODD_POSITION_FACTOR = 3.5
 ODD_POSITION_SHARE = 0.04
 """A ring read this many times worse than its sigma, and how often that happens."""
 
+SCATTER_INFLATION = ((1.0, 0.75), (1.9, 0.25))
+"""(factor, prior): intensities of a specimen may stray more than its probe's usual (texture)."""
+
 DETECTION_SLOPE = 2.6
 """Slope of the logistic chance of seeing a line against ln(intensity / limit)."""
 
-FOREIGN_RINGS = 0.4
+FOREIGN_RINGS = 0.6
 """Expected number of rings from nowhere in a pattern (Poisson)."""
 
 AMPLITUDE_WIDTH = 4.0
 """Width of the flat prior on ln(amplitude) of each phase."""
 
-PHASE_COUNT_PRIOR = (0.56, 0.27, 0.12, 0.05)
+PHASE_COUNT_PRIOR = (0.70, 0.22, 0.06, 0.02)
 """Prior of one, two, three, four listed phases."""
 UNLISTED_PRIOR = 0.15
 """Prior that an unlisted phase is in the specimen, alone or beside listed ones."""
