@@ -6,6 +6,7 @@ import json
 import re
 from collections import Counter
 from functools import cache
+from math import log
 from pathlib import Path
 from typing import Any
 
@@ -37,6 +38,28 @@ def published_rings(phase: str) -> RingList:
         probe="x-ray Cu Ka1",
         intensities=[line["I"] for line in lines],
         title=phase,
+    )
+
+
+def added(shares: dict[str, float]) -> RingList:
+    """Published patterns added with these weights; rings nearer than 0.15 % become one."""
+    lines = [
+        (line["d_A"], share * line["I"])
+        for name, share in shares.items()
+        for line in PATTERNS[name]["lines"]
+    ]
+    merged: list[tuple[float, float]] = []
+    for d, height in sorted(lines, reverse=True):
+        if merged and log(merged[-1][0] / d) < 0.0015:
+            before = merged[-1]
+            total = before[1] + height
+            merged[-1] = ((before[0] * before[1] + d * height) / total, total)
+        else:
+            merged.append((d, height))
+    strongest = max(height for _, height in merged)
+    kept = [(d, height) for d, height in merged if height > 0.01 * strongest]
+    return rings_from_values(
+        [d for d, _ in kept], probe="x-ray Cu Ka1", intensities=[height for _, height in kept]
     )
 
 

@@ -15,8 +15,7 @@ from phaseid.matching.identification import Hypothesis
 from phaseid.matching.identify import identify
 from phaseid.rings import rings_from_values
 from tests.matching.minerals import MINERALS, mixed, powder
-from tests.matching.published import group, is_phase, names_exactly, reference
-from tests.matching.test_search import added
+from tests.matching.published import added, group, is_phase, names_exactly, reference
 
 FORMULAS = {
     "corundum": ("Al2O3", 167),

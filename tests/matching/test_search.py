@@ -5,7 +5,6 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import replace
 from itertools import combinations
-from math import log
 
 import numpy as np
 import pytest
@@ -17,32 +16,10 @@ from phaseid.matching.likelihood import evaluate
 from phaseid.probes import parse_probe
 from phaseid.rings import RingList, rings_from_values
 from tests.matching.conftest import Searched
-from tests.matching.published import PATTERNS, is_published, published_rings
+from tests.matching.published import added, is_published, published_rings
 from tests.matching.toys import Selection
 
 NAMES = ("corundum", "fluorite", "halite", "quartz (alpha)", "hematite", "rutile", "periclase")
-
-
-def added(shares: dict[str, float]) -> RingList:
-    """Published patterns added with these weights; rings nearer than 0.15 % become one."""
-    lines = [
-        (line["d_A"], share * line["I"])
-        for name, share in shares.items()
-        for line in PATTERNS[name]["lines"]
-    ]
-    merged: list[tuple[float, float]] = []
-    for d, height in sorted(lines, reverse=True):
-        if merged and log(merged[-1][0] / d) < 0.0015:
-            before = merged[-1]
-            total = before[1] + height
-            merged[-1] = ((before[0] * before[1] + d * height) / total, total)
-        else:
-            merged.append((d, height))
-    strongest = max(height for _, height in merged)
-    kept = [(d, height) for d, height in merged if height > 0.01 * strongest]
-    return rings_from_values(
-        [d for d, _ in kept], probe="x-ray Cu Ka1", intensities=[height for _, height in kept]
-    )
 
 
 @pytest.fixture(scope="module")
