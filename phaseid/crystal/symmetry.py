@@ -14,6 +14,7 @@ import gemmi
 import numpy as np
 from numpy.typing import NDArray
 
+from phaseid.crystal.closure import is_group
 from phaseid.crystal.crystal import Finding
 from phaseid.crystal.hermann_mauguin import groups_named, short_symbol
 from phaseid.crystal.metric import Cell, metric_tensor
@@ -307,22 +308,7 @@ def _integer_arrays(
 
 
 def _is_group(operations: list[gemmi.Op]) -> bool:
-    """Tell whether the operations are closed under multiplication modulo lattice translations."""
+    """Tell whether distinct operations are a group of lattice rotations and translations."""
     if any(abs(op.det_rot()) != _DEN**3 for op in operations):
         return False
-    rotations, translations = _integer_arrays(operations)
-    if np.abs(rotations).max() > 2:
-        return False
-    keys = _keys(rotations, translations)
-    for rotation, translation in zip(rotations, translations, strict=True):
-        products = _keys(rotation @ rotations, (translations @ rotation.T + translation) % _DEN)
-        if not np.isin(products, keys).all():
-            return False
-    return True
-
-
-def _keys(rotations: NDArray[np.int64], translations: NDArray[np.int64]) -> NDArray[np.int64]:
-    """Return one whole number (m,) per operation, equal only for equal operations."""
-    weights = np.concatenate([25 ** np.arange(9), np.array([1, _DEN, _DEN**2])]).astype(np.int64)
-    rotation_key = (rotations.reshape(-1, 9) + 12) @ weights[:9]
-    return rotation_key * _DEN**3 + translations @ weights[9:]
+    return is_group(*_integer_arrays(operations))
