@@ -38,10 +38,13 @@ def _session_folder(factory: pytest.TempPathFactory) -> Path:
 
 @pytest.fixture(scope="session", autouse=True)
 def _own_default_library(tmp_path_factory: pytest.TempPathFactory) -> Iterator[None]:
-    """Keep the default library of whoever runs the tests out of reach."""
+    """Keep the default library and the settings of whoever runs the tests out of reach."""
     with pytest.MonkeyPatch.context() as patch:
-        path = _session_folder(tmp_path_factory) / "default-library" / "library.sqlite"
-        patch.setenv("PHASEID_LIBRARY", str(path))
+        folder = _session_folder(tmp_path_factory)
+        patch.setenv("PHASEID_LIBRARY", str(folder / "default-library" / "library.sqlite"))
+        patch.setenv("PHASEID_CONFIG", str(folder / "no-settings" / "config.toml"))
+        for name in ("PROBE", "CALIBRATION", "MUST", "ONLY", "NOT"):
+            patch.delenv(f"PHASEID_{name}", raising=False)
         yield
 
 

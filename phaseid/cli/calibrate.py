@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from phaseid.cli.options import Json, LibraryFile, width
+from phaseid.cli.options import Json, LibraryFile, say, width
 from phaseid.cli.ring_input import (
     CameraConstantText,
     ProbeOverFile,
@@ -17,6 +17,7 @@ from phaseid.cli.ring_input import (
     Unit,
     ring_table,
 )
+from phaseid.cli.settings import calibration_folder, setting
 from phaseid.errors import InputError
 
 if TYPE_CHECKING:
@@ -55,6 +56,10 @@ def calibrate(
     camera_constant: CameraConstantText = None,
     unit: Unit = "d_A",
     sigma: Sigma = None,
+    save: Annotated[
+        str | None,
+        typer.Option("--save", metavar="NAME", help="Keep it for --calibration NAME."),
+    ] = None,
     library: LibraryFile = None,
     as_json: Json = False,
 ) -> None:
@@ -63,15 +68,18 @@ def calibrate(
     Which ring is which line is found by itself; radii need no camera constant.
 
     \b
-    phaseid calibrate gold.csv --standard Au
+    phaseid calibrate gold.csv --standard Au --save cm200-80cm
     phaseid calibrate 10.65 12.30 17.39 20.40 --unit radius_mm --standard Au \\
         --probe "electron 200 kV" --sigma 0.05
     """
     from phaseid.matching.calibrate import calibrate as fit
 
     known = _standard(standard or [], temperature, library)
+    table = ring_table(rings, unit=unit, sigma=sigma)
+    if probe is None and "probe" not in table.keys:
+        probe = setting("probe")
     result = fit(
-        ring_table(rings, unit=unit, sigma=sigma),
+        table,
         known,
         probe=probe,
         camera_constant=camera_constant,
@@ -80,11 +88,17 @@ def calibrate(
         camera_length_mm=camera_length,
         temperature_C=temperature,
     )
+    if save is not None:
+        from phaseid.matching.calibrate import record
+        from phaseid.rings.calibration_record import save_calibration
+
+        path = save_calibration(record(result, save), calibration_folder())
+        say(f"Saved as '{save}' in {path}; use it with --calibration {save}")
     if as_json:
         from phaseid.reports.calibration import calibration_dict
         from phaseid.reports.json import dumps
 
-        print(dumps(calibration_dict(result)))
+        print(dumps(calibration_dict(result, save)))
     else:
         from phaseid.reports.calibration import calibration_text
 

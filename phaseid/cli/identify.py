@@ -17,6 +17,7 @@ from phaseid.cli.options import (
     width,
 )
 from phaseid.cli.ring_input import (
+    CalibrationName,
     CameraConstantText,
     Intensities,
     ProbeOverFile,
@@ -24,9 +25,8 @@ from phaseid.cli.ring_input import (
     ScaleUncertainty,
     Sigma,
     Unit,
-    ring_tables,
+    ring_lists,
 )
-from phaseid.errors import InputError
 
 
 def identify(
@@ -35,6 +35,7 @@ def identify(
     probe: ProbeOverFile = None,
     scale_uncertainty: ScaleUncertainty = None,
     camera_constant: CameraConstantText = None,
+    calibration: CalibrationName = None,
     unit: Unit = "d_A",
     sigma: Sigma = None,
     intensities: Intensities = None,
@@ -56,24 +57,18 @@ def identify(
     """
     from phaseid.matching.chemistry import Chemistry
     from phaseid.matching.identify import identify as rank
-    from phaseid.rings import rings_from_table
 
     chemistry = Chemistry.parse(must, only, exclude)
-    tables = ring_tables(rings, unit=unit, sigma=sigma, intensities=intensities)
-    if probe is None and not tables[0].source:
-        raise InputError(
-            "typed rings need a probe",
-            remedy='Add --probe "electron 200 kV", "x-ray Cu Ka" or "neutron 1.54 A"',
-        )
-    patterns = [
-        rings_from_table(
-            table,
-            probe=probe,
-            scale_uncertainty=scale_uncertainty,
-            camera_constant=camera_constant,
-        )
-        for table in tables
-    ]
+    patterns = ring_lists(
+        rings,
+        unit=unit,
+        sigma=sigma,
+        intensities=intensities,
+        probe=probe,
+        scale_uncertainty=scale_uncertainty,
+        camera_constant=camera_constant,
+        calibration=calibration,
+    )
     with open_library(library) as shelf:
         answer = rank(patterns, shelf, chemistry=chemistry, max_phases=max_phases, top=top)
     if as_json:

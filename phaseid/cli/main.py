@@ -11,8 +11,20 @@ import typer
 from typer.core import TyperGroup
 
 from phaseid import __version__
-from phaseid.cli import calibrate, compare, guide, identify, library, lines, near, ratio
+from phaseid.cli import (
+    calibrate,
+    compare,
+    config,
+    guide,
+    identify,
+    library,
+    lines,
+    near,
+    ratio,
+    screen,
+)
 from phaseid.cli.options import say
+from phaseid.cli.settings import command_defaults
 from phaseid.errors import PhaseidError
 
 INTERRUPTED = 130
@@ -79,6 +91,8 @@ def front(
     standard error. Exit codes: 0 answered, 2 wrong input, 3 library missing or unreadable,
     130 interrupted.
     """
+    if ctx.invoked_subcommand in ("identify", "near", "lines", "compare"):
+        ctx.default_map = command_defaults()
     if ctx.invoked_subcommand is None:
         print(FIRST_STEPS.format(version=__version__), end="")
 
@@ -87,9 +101,11 @@ app.command("identify", short_help="Name the phases behind rings.")(identify.ide
 app.command("lines", short_help="List the lines of a phase.")(lines.lines)
 app.command("near", short_help="List phases with lines near spacings.")(near.near)
 app.command("ratio", short_help="Name structure types by ring ratios.")(ratio.ratio)
+app.command("screen", short_help="Find what should not be there.")(screen.screen)
 app.command("compare", short_help="Can two phases be told apart?")(compare.compare)
 app.command("calibrate", short_help="Scale by a known standard.")(calibrate.calibrate)
 app.add_typer(library.app, name="library", short_help="Add structures, look them up.")
+app.command("config", short_help="Show the defaults in force.")(config.config)
 app.command("guide", short_help="Show the manual.")(guide.guide)
 
 

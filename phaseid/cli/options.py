@@ -10,6 +10,8 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
+from phaseid.cli.settings import setting, variable
+
 if TYPE_CHECKING:
     from phaseid.library import Library
 
@@ -54,10 +56,12 @@ def bold() -> bool:
 
 
 def open_library(path: Path | None) -> Library:
-    """Open the library named, or the default one, which is built on first use.
+    """Open the library named, or that of the settings, or the default one, built on first use.
 
     Raises LibraryError (exit code 3) where it is missing, unreadable or newer.
     """
     from phaseid.library import Library, open_default
 
+    if path is None and not os.environ.get(variable("library")) and (named := setting("library")):
+        path = Path(named).expanduser()
     return open_default(say) if path is None else Library.open(path)

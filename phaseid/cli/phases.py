@@ -10,7 +10,7 @@ from phaseid.errors import InputError
 
 if TYPE_CHECKING:
     from phaseid.crystal.crystal import Crystal
-    from phaseid.library import Phase
+    from phaseid.library import Library, Phase
 
 
 def find_crystal(text: str, library: Path | None) -> tuple[Phase, Crystal]:
@@ -18,14 +18,27 @@ def find_crystal(text: str, library: Path | None) -> tuple[Phase, Crystal]:
 
     Raises InputError where nothing fits, or several phases do.
     """
+    if (found := _named_file(text)) is not None:
+        return found
+    with open_library(library) as shelf:
+        return find_in(shelf, text)
+
+
+def find_in(shelf: Library, text: str) -> tuple[Phase, Crystal]:
+    """The same in a library that is open."""
+    if (found := _named_file(text)) is not None:
+        return found
+    phase = shelf.choose(text)
+    return phase, shelf.crystal(phase.phase_id)
+
+
+def _named_file(text: str) -> tuple[Phase, Crystal] | None:
     path = Path(text)
     if path.is_file():
         return _from_file(path)
     if path.suffix.lower() in (".cif", ".gz"):
         raise InputError("there is no such file", path=path, remedy="Check the path")
-    with open_library(library) as shelf:
-        phase = shelf.choose(text)
-        return phase, shelf.crystal(phase.phase_id)
+    return None
 
 
 def _from_file(path: Path) -> tuple[Phase, Crystal]:

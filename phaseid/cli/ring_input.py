@@ -10,10 +10,11 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from phaseid.cli.options import say
+from phaseid.cli.settings import calibration_folder, setting
 from phaseid.errors import InputError
 
 if TYPE_CHECKING:
-    from phaseid.rings import RingTable
+    from phaseid.rings import RingList, RingTable
 
 STDIN = "standard input"
 _NUMBER = re.compile(r"[+-]?[\d.,]*\d[\d.,]*(e[+-]?\d+)?(\(\d+\))?", re.IGNORECASE)
@@ -58,6 +59,14 @@ Intensities = Annotated[
         "--intensities",
         metavar="LIST",
         help='Of typed rings, in their order: "100 40 25" or grades "vs m w".',
+    ),
+]
+CalibrationName = Annotated[
+    str | None,
+    typer.Option(
+        "--calibration",
+        metavar="NAME",
+        help="A calibration saved by `phaseid calibrate --save NAME`; over the file.",
     ),
 ]
 
@@ -114,14 +123,88 @@ def ring_tables(
     ]
 
 
+def ring_lists(
+    words: list[str],
+    *,
+    unit: str = "d_A",
+    sigma: str | None = None,
+    intensities: str | None = None,
+    probe: str | None = None,
+    scale_uncertainty: str | None = None,
+    camera_constant: str | None = None,
+    calibration: str | None = None,
+) -> list[RingList]:
+    """The patterns given, read as typed, else as they say, else by the defaults in force.
+
+    A calibration named here is used for every pattern; one set as default only for radii that state
+    no camera constant. Raises InputError like `ring_tables`.
+    """
+    if calibration is not None and camera_constant is not None:
+        raise InputError(
+            "--calibration and --camera-constant are both given", remedy="Give one of them"
+        )
+    tables = ring_tables(words, unit=unit, sigma=sigma, intensities=intensities)
+    return [
+        _ring_list(table, probe, scale_uncertainty, camera_constant, calibration)
+        for table in tables
+    ]
+
+
+def ring_list(words: list[str], **given: str | None) -> RingList:
+    """The one pattern given; raises InputError where there are several, and like `ring_lists`."""
+    _single(words)
+    unit = given.pop("unit", None) or "d_A"
+    return ring_lists(words, unit=unit, **given)[0]
+
+
+def _ring_list(
+    table: RingTable,
+    probe: str | None,
+    scale_uncertainty: str | None,
+    camera_constant: str | None,
+    calibration: str | None,
+) -> RingList:
+    from phaseid.rings import rings_from_table
+
+    if calibration is None and _needs_constant(table) and camera_constant is None:
+        calibration = setting("calibration")
+    if calibration is not None:
+        from phaseid.rings.calibration_record import load_calibration
+
+        record = load_calibration(calibration, calibration_folder())
+        rings = record.apply(table, probe=probe, scale_uncertainty=scale_uncertainty)
+        for remark in rings.remarks:
+            if remark.startswith("Warning:"):
+                say(remark)
+        return rings
+    if probe is None and "probe" not in table.keys:
+        probe = setting("probe")
+        if probe is None and not table.source:
+            raise InputError(
+                "typed rings need a probe",
+                remedy='Add --probe "electron 200 kV", "x-ray Cu Ka" or "neutron 1.54 A"',
+            )
+    return rings_from_table(
+        table, probe=probe, scale_uncertainty=scale_uncertainty, camera_constant=camera_constant
+    )
+
+
+def _needs_constant(table: RingTable) -> bool:
+    return table.column.quantity == "radius" and "camera constant" not in table.keys
+
+
 def ring_table(words: list[str], *, unit: str = "d_A", sigma: str | None = None) -> RingTable:
     """The cells of one pattern; raises InputError where it cannot be read or there are several."""
+    _single(words)
+    return ring_tables(words, unit=unit, sigma=sigma)[0]
+
+
+def _single(words: list[str]) -> None:
     if len(words) > 1 and not all_numbers(words):
         raise InputError(
             f"this command takes one ring list, not {len(words)}",
             remedy=f"Give '{words[0]}' alone.",
         )
-    return ring_tables(words, unit=unit, sigma=sigma)[0]
 
 
 def _standard_input() -> str:

@@ -16,6 +16,8 @@ from phaseid.matching.standards import Standard
 from phaseid.probes.probe import Probe
 from phaseid.rings import CameraConstant, RingList, RingTable, rings_from_table
 from phaseid.rings.calibration import Fit, Ints, lay
+from phaseid.rings.calibration_record import CalibrationRecord, today_text
+from phaseid.rings.columns import COLUMNS
 
 GUESSED_PROBE = "electron 200 kV"
 _ACROSS_SD = 0.03
@@ -161,6 +163,30 @@ def calibrate(
         scatter=fit.scatter,
         probability=fit.probability,
         remarks=(*rings.remarks, *remarks),
+    )
+
+
+def record(result: Calibration, name: str) -> CalibrationRecord:
+    """The calibration as it is kept under a name, with today's date."""
+    column = COLUMNS[result.rings.position_column]
+    constant = result.camera_constant
+    wavelength = result.wavelength_A
+    return CalibrationRecord(
+        name=name,
+        created=today_text(),
+        standard=result.standard.label,
+        cell_source=result.standard.source,
+        probe=result.rings.probe.label,
+        wavelength_A=result.rings.probe.wavelength_A if wavelength is None else wavelength.value,
+        quantity=column.quantity,
+        relative_sigma=result.relative_sigma
+        if constant is None
+        else constant.sigma / constant.value,
+        camera_constant=None if constant is None else constant.value,
+        plate_unit=column.plate_unit,
+        factor=result.factor.value,
+        zero_shift_deg=result.zero_shift_deg or 0.0,
+        rings=len(result.assignments),
     )
 
 
