@@ -19,7 +19,7 @@ from phaseid.crystal.composition import reduced
 from phaseid.crystal.crystal import Crystal, Finding
 from phaseid.crystal.elements import parse_formula
 from phaseid.crystal.metric import Cell, volume_A3
-from phaseid.crystal.provenance import conditions, phase_name, source
+from phaseid.crystal.provenance import conditions, phase_names, source
 from phaseid.crystal.structure import StructureProblem, build
 from phaseid.crystal.symmetry import (
     MAX_OPERATIONS,
@@ -133,19 +133,21 @@ def _read_block(block: Block, file: str, findings: tuple[Finding, ...]) -> Cryst
     if isinstance(structure, StructureProblem):
         raise _Refusal(structure.code, structure.reason)
     reduced_formula, z = reduced(structure.contents, structure.units)
+    name, *other_names = phase_names(block) or ("",)
     return Crystal(
         cell=cell,
         space_group_number=structure.symmetry.number,
         space_group_symbol=structure.symmetry.symbol,
         operations=structure.symmetry.operations,
         sites=structure.sites,
-        name=phase_name(block),
+        name=name,
         formula=reduced_formula,
         z=z,
         source=source(block, file),
         temperature_K=temperature,
         pressure_GPa=pressure,
         findings=(*findings, *cell_findings, *sites.findings, *structure.findings, *marks),
+        other_names=tuple(other_names),
     )
 
 

@@ -10,7 +10,12 @@ import re
 from phaseid.crystal.crystal import Crystal, Site
 from phaseid.crystal.elements import parse_formula
 from phaseid.crystal.formula import hill_formula
-from phaseid.crystal.provenance import REFERENCE_TAG, SOURCE_DATABASE_TAG, SOURCE_ID_TAG
+from phaseid.crystal.provenance import (
+    NAME_TAGS,
+    REFERENCE_TAG,
+    SOURCE_DATABASE_TAG,
+    SOURCE_ID_TAG,
+)
 
 _SAFE = re.compile(r"[A-Za-z0-9+\-.,()/:*|@!%^&~]+$")
 _CELL_TAGS = (
@@ -35,7 +40,8 @@ _GPA_TO_KPA = 1e6
 def crystal_to_cif(crystal: Crystal) -> str:
     """Return CIF 1.1 text of a crystal: one block, all operations, numbers in full precision."""
     block = re.sub(r"\W", "_", crystal.source.id or crystal.name or crystal.formula) or "structure"
-    pairs: list[tuple[str, str]] = [("_chemical_name_mineral", crystal.name)]
+    names = (crystal.name, *crystal.other_names)
+    pairs: list[tuple[str, str]] = list(zip(NAME_TAGS, names, strict=False))
     if crystal.source.database in _ID_TAGS:
         pairs.append((_ID_TAGS[crystal.source.database], crystal.source.id))
     elif crystal.source.id:

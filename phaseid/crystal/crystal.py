@@ -67,7 +67,7 @@ class Crystal:
     setting where it is not the standard one.
     `formula` is the reduced formula of what the sites hold, as chemists write it; `z` how many of
     them the cell holds. `name` is what people call the phase (mineral or common name), "" if the
-    source has none.
+    source has none; `other_names` what else it is called.
     """
 
     cell: tuple[float, float, float, float, float, float]
@@ -82,3 +82,4 @@ class Crystal:
     temperature_K: float | None = None
     pressure_GPa: float | None = None
     findings: tuple[Finding, ...] = ()
+    other_names: tuple[str, ...] = ()

@@ -15,7 +15,7 @@ SOURCE_ID_TAG = "_phaseid_source_id"
 REFERENCE_TAG = "_citation_special_details"
 _KPA_PER_GPA = 1e6
 _MAX_NAME = 200
-_NAME_TAGS = (
+NAME_TAGS = (
     "_chemical_name_mineral",
     "_chemical_name_common",
     "_chemical_name_systematic",
@@ -43,10 +43,14 @@ _COMBINING = {
 _ACCENT = re.compile(r"\\(['`\"^~,;<=.(>%])([A-Za-z])")
 
 
-def phase_name(block: Block) -> str:
-    """Return the mineral name, else the common, else the systematic name, else ""."""
-    name = plain_text(block.text(*_NAME_TAGS))[:_MAX_NAME]
-    return "" if name.startswith("?") else name  # a template line left in place
+def phase_names(block: Block) -> tuple[str, ...]:
+    """Return the names of the phase, each once: mineral, common, systematic, as far as given."""
+    found = (plain_text(block.text(tag))[:_MAX_NAME] for tag in NAME_TAGS)
+    names: dict[str, str] = {}
+    for name in found:
+        if name and not name.startswith("?"):  # a template line left in place
+            names.setdefault(name.casefold(), name)
+    return tuple(names.values())
 
 
 def source(block: Block, file: str) -> Source:

@@ -76,9 +76,8 @@ def entry(crystal: Crystal, location: str) -> Entry:
 
 
 def _labels(crystal: Crystal) -> tuple[tuple[str, str, str], ...]:
-    labels = []
-    if name_key(crystal.name):
-        labels.append(("name", crystal.name, name_key(crystal.name)))
+    names = (crystal.name, *crystal.other_names)
+    labels = [("name", name, name_key(name)) for name in names if name_key(name)]
     if crystal.source.id:
         number = crystal.source.id.casefold()
         labels.append(("number", f"{crystal.source.database} {crystal.source.id}", number))

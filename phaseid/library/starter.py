@@ -66,7 +66,11 @@ def _read(path: Path) -> Iterator[Crystal]:
 
 
 def _sourced(crystal: Crystal, data: bytes, stem: str) -> Crystal:
-    """Add what the shipped files say beyond the CIF dictionary: the reference and a mark."""
+    """Add what the shipped files say beyond the CIF dictionary: the reference and a mark.
+
+    Their common name goes before the mineral's: TiN is titanium nitride to those who meet it,
+    osbornite to few.
+    """
     stated = _REFERENCE.search(data)
     reference = crystal.source.reference or (stated[1].decode() if stated else "")
     findings = crystal.findings
@@ -75,7 +79,10 @@ def _sourced(crystal: Crystal, data: bytes, stem: str) -> Crystal:
     if code and code not in {finding.code for finding in findings}:
         findings = (*findings, Finding(code, MARKS.get(code, code)))
     source = Source(DATABASE, stem, crystal.source.file, reference)
-    return replace(crystal, source=source, findings=findings)
+    *minerals, name = (crystal.name, *crystal.other_names)
+    return replace(
+        crystal, source=source, findings=findings, name=name, other_names=tuple(minerals)
+    )
 
 
 def _kind(crystal: Crystal) -> tuple[str, int]:

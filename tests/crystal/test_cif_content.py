@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import random
+import re
 from dataclasses import replace
 from pathlib import Path
 
@@ -179,6 +180,7 @@ def test_written_cif_reads_back_the_same(name: str) -> None:
     (again,) = read_cif(crystal_to_cif(first).encode(), first.source.file).crystals
     for item in ("cell", "space_group_number", "formula", "z", "temperature_K", "name"):
         assert getattr(again, item) == getattr(first, item), item
+    assert again.other_names == first.other_names
     assert again.pressure_GPa == pytest.approx(first.pressure_GPa)
     assert set(again.operations) == set(first.operations)
     assert again.source.reference == first.source.reference
@@ -193,6 +195,24 @@ def test_written_cif_reads_back_the_same(name: str) -> None:
         )
         assert (a.u_iso_A2, a.u_aniso_A2) == (b.u_iso_A2, b.u_aniso_A2)
     assert content_key(again) == content_key(first)
+
+
+def test_every_name_is_kept_once_the_mineral_first() -> None:
+    # the order of the tags is ours; the tags are those of the CIF core dictionary
+    text = (CIF / "no_label_column.cif").read_text(encoding="utf-8")
+    text = re.sub(r"^_chemical_name_.*\n", "", text, flags=re.MULTILINE)
+    named = text.replace(
+        "_cell_length_a",
+        "_chemical_name_systematic 'Sodium chloride'\n_chemical_name_common 'sodium chloride'\n"
+        "_chemical_name_mineral Halite\n_cell_length_a",
+        1,
+    )
+    (first,) = read_cif(named.encode(), "x.cif").crystals
+    assert (first.name, first.other_names) == ("Halite", ("sodium chloride",))
+    (again,) = read_cif(crystal_to_cif(first).encode(), "x.cif").crystals
+    assert (again.name, again.other_names) == ("Halite", ("sodium chloride",))
+    (bare,) = read_cif(text.encode(), "x.cif").crystals
+    assert (bare.name, bare.other_names) == ("", ())
 
 
 def test_gemmi_reads_the_written_cif() -> None:

@@ -145,6 +145,24 @@ def test_an_element_has_its_other_name(starter_library: Library, text: str, form
     assert starter_library.choose(text).formula == formula
 
 
+@pytest.mark.parametrize(
+    ("mineral", "name"),
+    [  # common practice, no source
+        ("osbornite", "titanium nitride"),
+        ("halite", "sodium chloride"),
+        ("qusongite", "tungsten carbide"),
+        ("cohenite", "cementite"),
+    ],
+)
+def test_what_is_mostly_made_goes_by_its_common_name(
+    starter_library: Library, mineral: str, name: str
+) -> None:
+    assert starter_library.choose(mineral).name == name
+    assert starter_library.choose(name) == starter_library.choose(mineral)
+    phase = starter_library.choose(mineral)
+    assert starter_library.crystal(phase.phase_id).other_names == (mineral,)
+
+
 def test_a_textbook_formula_finds_the_real_phase(starter_library: Library) -> None:
     phase = starter_library.choose("FeO")
     assert (phase.elements, phase.space_group_number) == (("Fe", "O"), 225)  # wüstite, Fe1-xO
