@@ -31,7 +31,7 @@ def _no_network() -> Iterator[None]:
 
 
 def _session_folder(factory: pytest.TempPathFactory) -> Path:
-    """Return the folder that all workers of this session share."""
+    """Return the folder that all workers of this run share."""
     base = factory.getbasetemp()
     return base.parent if "PYTEST_XDIST_WORKER" in os.environ else base
 
@@ -50,7 +50,7 @@ def _own_default_library(tmp_path_factory: pytest.TempPathFactory) -> Iterator[N
 
 @pytest.fixture(scope="session")
 def starter_library_path(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    """Path of the starter library, built once a session, whichever worker asks first."""
+    """Path of the starter library, built once a run, whichever worker asks first."""
     path = _session_folder(tmp_path_factory) / "starter.sqlite"
     try:
         os.close(os.open(path.with_suffix(".lock"), os.O_CREAT | os.O_EXCL))

@@ -29,6 +29,7 @@ PHASE_COLUMNS = (
 )
 
 _SHOWN_CHOICES = 12
+_NAME_SHOWN = 30  # characters, so that a choice fits on a line
 _SUGGESTIONS = 5
 _TRIGRAM = 3
 _NAMES_COMPARED = 20_000
@@ -198,10 +199,9 @@ def _table(phases: Sequence[Phase]) -> str:
     rows = [
         (
             phase.phase_id,
-            phase.name,
-            f"{phase.space_group_symbol} ({phase.space_group_number})",
-            " ".join(f"{edge:.3f}" for edge in phase.cell[:3]) + " Å",
-            f"{phase.source.database} {phase.source.id}".strip(),
+            _cut(phase.name),
+            phase.space_group_symbol,
+            " ".join(f"{edge:.2f}" for edge in phase.cell[:3]) + " Å",
         )
         for phase in phases[:_SHOWN_CHOICES]
     ]
@@ -213,6 +213,10 @@ def _table(phases: Sequence[Phase]) -> str:
     if len(phases) > _SHOWN_CHOICES:
         lines.append(f"  and {len(phases) - _SHOWN_CHOICES} more: phaseid library find shows all")
     return "\n".join(lines)
+
+
+def _cut(name: str) -> str:
+    return name if len(name) <= _NAME_SHOWN else f"{name[: _NAME_SHOWN - 1]}…"
 
 
 def _nearest(conn: sqlite3.Connection, text: str) -> str:

@@ -90,7 +90,8 @@ def test_several_that_differ_are_told_apart(library: Library) -> None:
     message = str(caught.value)
     for phase in library.phases():
         assert phase.phase_id in message
-        assert f"{phase.cell[0]:.3f}" in message
+        assert f"{phase.cell[0]:.2f}" in message
+    assert max(map(len, message.splitlines()[1:])) <= 80
     assert library.choose("two").cell[0] == 4.6
 
 
