@@ -33,6 +33,27 @@ Floats = NDArray[np.float64]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class AffineMaps:
+    """Symmetry operations as maps of rows (x, y, z, 1): one product gives all images of all sites.
+
+    `images` (4, 3m) leads to the m images, `steps` (4, 3m) from a site to them.
+    """
+
+    images: Floats
+    steps: Floats
+
+    def __len__(self) -> int:
+        return int(self.images.shape[1]) // 3
+
+
+def affine_maps(rotations: Floats, translations: Floats) -> AffineMaps:
+    """Return the maps of rotations (m, 3, 3) and translations (m, 3) in fractional coordinates."""
+    images = np.concatenate([rotations, translations[:, :, None]], axis=2)
+    steps = images - np.eye(3, 4)
+    return AffineMaps(images.reshape(-1, 4).T.copy(), steps.reshape(-1, 4).T.copy())
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class Placed:
     """Sites on their exact positions.
 
@@ -65,40 +86,39 @@ def multiplicities(
     """
     sites = np.asarray(fract, dtype=np.float64).reshape(-1, 3)
     metric = metric_tensor(cell)
+    maps = affine_maps(rotations, translations)
     counts = np.empty(len(sites), dtype=np.int64)
     step = max(1, _CHUNK // len(rotations))
     for start in range(0, len(sites), step):
         part = sites[start : start + step]
-        _, squared = _own_images(part, rotations, translations, metric)
-        stabiliser = (squared < _MULTIPLICITY_TOLERANCE_A**2).sum(axis=0)
+        _, squared = _steps(part, maps, metric)
+        stabiliser = np.add.reduce(squared < _MULTIPLICITY_TOLERANCE_A**2, axis=1)
         counts[start : start + step] = len(rotations) // np.maximum(stabiliser, 1)
     return counts
 
 
-def place(
-    fract: Floats, occupancy: Floats, rotations: Floats, translations: Floats, cell: Cell
-) -> Placed:
+def place(fract: Floats, occupancy: Floats, maps: AffineMaps, cell: Cell) -> Placed:
     """Put sites (n, 3) of occupancy (n,) onto their special positions and count their images."""
     metric = metric_tensor(cell)
-    multiplicity = np.full(len(fract), len(rotations), dtype=np.int64)
+    multiplicity = np.full(len(fract), len(maps), dtype=np.int64)
     crowded = np.zeros(len(fract), dtype=np.bool_)
-    if len(rotations) == 1:
-        return Placed(fract, multiplicity, np.zeros(len(fract)), crowded)
+    shift = np.zeros(len(fract))
+    if len(maps) == 1:
+        return Placed(fract, multiplicity, shift, crowded)
     placed = fract.copy()
-    step = max(1, _CHUNK // len(rotations))
+    step = max(1, _CHUNK // len(maps))
     for start in range(0, len(fract), step):
         part = slice(start, start + step)
         placed[part], multiplicity[part], crowded[part] = _place(
-            fract[part], occupancy[part], rotations, translations, metric
+            fract[part], occupancy[part], maps, metric
         )
     moved = placed - fract
-    shift = np.sqrt(((moved @ metric) * moved).sum(axis=1))
+    if moved.any():
+        shift = np.sqrt(np.einsum("ij,ij->i", moved @ metric, moved))
     return Placed(placed, multiplicity, shift, crowded)
 
 
-def close_pairs(
-    fract: Floats, rotations: Floats, translations: Floats, cell: Cell, within_A: float
-) -> ClosePairs | None:
+def close_pairs(fract: Floats, maps: AffineMaps, cell: Cell, within_A: float) -> ClosePairs | None:
     """Return pairs of different sites with images closer than `within_A`, each at its nearest.
 
     Images are sorted along one axis and only neighbours in that order are compared. None means that
@@ -107,15 +127,14 @@ def close_pairs(
     """
     metric = metric_tensor(cell)
     n = len(fract)
-    images = _images(fract, rotations, translations)
-    if n * n * len(rotations) <= _FEW:
-        return _pairs_of_few(fract, images, metric, within_A)
-    images = images.reshape(-1, 3)
+    if n * n * len(maps) <= _FEW:
+        return _pairs_of_few(fract, maps, metric, within_A)
+    images = _images(fract, maps).reshape(-1, 3)
     images -= np.floor(images)
     order, low, high = _neighbours(fract, images, metric, within_A)
     if (high - low).sum() > _MAX_COMPARED:
         return None
-    owner = np.tile(np.arange(n), len(rotations))[order]
+    owner = np.repeat(np.arange(n), len(maps))[order]
     images = images[order]
     pairs: list[NDArray[np.int64]] = [np.empty(0, dtype=np.int64)]
     squares: list[Floats] = [np.empty(0)]
@@ -134,7 +153,7 @@ def close_pairs(
         pairs.append(site[close] * n + owner[image[close]])
         squares.append(squared[close])
         held += len(pairs[-1])
-        if held > len(rotations) * _MAX_PAIRS_PER_SITE * n:
+        if held > len(maps) * _MAX_PAIRS_PER_SITE * n:
             return None
     pair, squared = np.concatenate(pairs), np.concatenate(squares)
     nearest = np.lexsort((squared, pair))
@@ -144,16 +163,16 @@ def close_pairs(
     return ClosePairs(pair // n, pair % n, np.sqrt(squared[nearest][first]))
 
 
-def _pairs_of_few(fract: Floats, images: Floats, metric: Floats, within_A: float) -> ClosePairs:
-    """Return the close pairs by working out every distance; `images` (m, n, 3)."""
+def _pairs_of_few(fract: Floats, maps: AffineMaps, metric: Floats, within_A: float) -> ClosePairs:
+    """Return the close pairs by working out every distance."""
     first, second = _every_pair(len(fract))
     if not len(first):
         return ClosePairs(first, second, np.empty(0))
-    delta = images[:, second] - fract[first]
+    delta = _images(fract, maps)[second] - fract[first, None]
     delta -= np.rint(delta)
     rows = delta.reshape(-1, 3)
-    squared = np.einsum("ij,ij->i", rows @ metric, rows).reshape(len(images), -1)
-    nearest = np.minimum.reduce(squared, axis=0)
+    squared = np.einsum("ij,ij->i", rows @ metric, rows).reshape(len(first), -1)
+    nearest = np.minimum.reduce(squared, axis=1)
     (close,) = (nearest < within_A**2).nonzero()
     return ClosePairs(first[close], second[close], np.sqrt(nearest[close]))
 
@@ -205,49 +224,47 @@ def _runs(lengths: NDArray[np.int64]) -> list[tuple[int, int]]:
     return [*runs, (start, len(lengths))]
 
 
-def _own_images(
-    fract: Floats, rotations: Floats, translations: Floats, metric: Floats
-) -> tuple[Floats, Floats]:
-    """Return offsets (m, n, 3) from sites to their nearest images, and their squares (m, n), Å²."""
-    offsets = _images(fract, rotations, translations)
-    offsets -= fract
-    offsets -= np.rint(offsets)
-    rows = offsets.reshape(-1, 3)
+def _steps(fract: Floats, maps: AffineMaps, metric: Floats) -> tuple[Floats, Floats]:
+    """Return steps (n, m, 3) from sites to their nearest images, and their squares (n, m), Å²."""
+    steps = fract @ maps.steps[:3]
+    steps += maps.steps[3]
+    steps -= np.rint(steps)
+    rows = steps.reshape(-1, 3)
     squared = np.einsum("ij,ij->i", rows @ metric, rows)
-    return offsets, squared.reshape(len(rotations), -1)
+    return steps.reshape(len(fract), -1, 3), squared.reshape(len(fract), -1)
 
 
-def _images(fract: Floats, rotations: Floats, translations: Floats) -> Floats:
-    """Return the images (m, n, 3) of sites (n, 3) under every operation, in one product."""
-    turned = rotations.reshape(-1, 3) @ fract.T  # (3m, n)
-    images = turned.reshape(len(rotations), 3, -1).transpose(0, 2, 1) + translations[:, None, :]
-    return np.ascontiguousarray(images)
+def _images(fract: Floats, maps: AffineMaps) -> Floats:
+    """Return the images (n, m, 3) of sites (n, 3) under every operation."""
+    images = fract @ maps.images[:3]
+    images += maps.images[3]
+    return images.reshape(len(fract), -1, 3)
 
 
 def _place(
-    fract: Floats, occupancy: Floats, rotations: Floats, translations: Floats, metric: Floats
+    fract: Floats, occupancy: Floats, maps: AffineMaps, metric: Floats
 ) -> tuple[Floats, NDArray[np.int64], NDArray[np.bool_]]:
-    offsets, squared = _own_images(fract, rotations, translations, metric)
+    steps, squared = _steps(fract, maps, metric)
     near: NDArray[np.bool_] = squared < ROUNDING_A**2
-    near_count = np.add.reduce(near, axis=0)
+    near_count = np.add.reduce(near, axis=1)
     alone = np.array_equal(near, squared < CROWDED_A**2)  # no second image in doubtful reach
     if not alone:
         wide = squared < SPLIT_A**2
-        wide_count = wide.sum(axis=0)
+        wide_count = wide.sum(axis=1)
         # images within SPLIT_A that would be more than one atom together are one atom
         merge = (wide_count > near_count) & (occupancy * wide_count > FULL * near_count)
         if merge.any():
-            near = np.where(merge, wide, near)
+            near = np.where(merge[:, None], wide, near)
             near_count = np.where(merge, wide_count, near_count)
     placed = fract
     if (near & (squared > _EXACT_A**2)).any():
-        drift = np.einsum("mn,mnk->nk", near, offsets) / near_count[:, None]
+        drift = np.einsum("nm,nmk->nk", near, steps) / near_count[:, None]
         drift[np.abs(drift) < 1e-9] = 0.0
         placed = fract + drift
-        _, squared = _own_images(placed, rotations, translations, metric)
-        near_count = np.maximum(np.add.reduce(squared < 1e-4, axis=0), 1)
+        _, squared = _steps(placed, maps, metric)
+        near_count = np.maximum(np.add.reduce(squared < 1e-4, axis=1), 1)
     if alone:
-        return placed, len(rotations) // near_count, np.zeros(len(fract), dtype=np.bool_)
-    crowd = (squared < CROWDED_A**2).sum(axis=0)
+        return placed, len(maps) // near_count, np.zeros(len(fract), dtype=np.bool_)
+    crowd = (squared < CROWDED_A**2).sum(axis=1)
     crowded = (crowd > near_count) & (occupancy * crowd > FULL * near_count)
-    return placed, len(rotations) // near_count, crowded
+    return placed, len(maps) // near_count, crowded

@@ -99,7 +99,7 @@ def _enumerate(
         hkl = kept.astype(np.float64)
         inverse_d2 = np.einsum("ij,ij->i", hkl @ reciprocal, hkl)
         (inside,) = (inverse_d2 <= d_min_A**-2 * (1 + 1e-12)).nonzero()
-        order = inside[inverse_d2[inside].argsort(kind="stable")]
+        order = inside[inverse_d2[inside].argsort()]
         return Reflections(hkl[order], inverse_d2[order], counts[order].astype(np.int64), d_min_A)
     if max(limit) > MAX_INDEX or math.prod(_counts(limit, domain.nonnegative)) > _MOST_POINTS:
         raise InputError(

@@ -131,13 +131,13 @@ def _structure(
     sites = [*read.sites, *read.unknown]
     fract = np.array([site.fract for site in sites], dtype=np.float64)
     occupancy = np.array([site.occupancy for site in sites])
-    placed = place(fract, occupancy, symmetry.rotations, symmetry.translations, cell)
+    placed = place(fract, occupancy, symmetry.maps, cell)
     if placed.multiplicity.sum() > MAX_ATOMS:
         return StructureProblem(
             "too_many_sites",
             f"the cell would hold {placed.multiplicity.sum()} atoms, at most {MAX_ATOMS} are taken",
         )
-    pairs = close_pairs(placed.fract, symmetry.rotations, symmetry.translations, cell, NEIGHBOUR_A)
+    pairs = close_pairs(placed.fract, symmetry.maps, cell, NEIGHBOUR_A)
     if pairs is None:
         return StructureProblem("overlapping_atoms", "most of the listed atoms lie on each other")
     settled = settle_positions(sites, pairs, placed.crowded)

@@ -18,6 +18,7 @@ from phaseid.crystal.closure import is_group
 from phaseid.crystal.crystal import Finding
 from phaseid.crystal.hermann_mauguin import groups_named, short_symbol
 from phaseid.crystal.metric import Cell, metric_tensor
+from phaseid.crystal.positions import AffineMaps, affine_maps
 from phaseid.crystal.spglib_questions import group_type
 
 MAX_OPERATIONS = 1536  # 192 in the largest conventional cell; eightfold cells still pass
@@ -41,9 +42,9 @@ class Symmetry:
     """A space group in one setting.
 
     `rotations` (m, 3, 3) and `translations` (m, 3) float64 are the operations in fractional
-    coordinates, in the order of `operations`. `guess` marks one of several settings that the same
-    symbol can mean. `last_resort` marks the other origin of a group whose operations are listed: to
-    be used only where the listed ones cannot be meant.
+    coordinates, in the order of `operations`; `maps` are the same ready for use. `guess` marks one
+    of several settings that the same symbol can mean. `last_resort` marks the other origin of a
+    group whose operations are listed: to be used only where the listed ones cannot be meant.
     """
 
     number: int
@@ -51,6 +52,7 @@ class Symmetry:
     operations: tuple[str, ...]
     rotations: NDArray[np.float64]
     translations: NDArray[np.float64]
+    maps: AffineMaps
     findings: tuple[Finding, ...] = field(default=())
     guess: bool = False
     last_resort: bool = False
@@ -242,7 +244,8 @@ def _symmetry(
 ) -> Symmetry:
     triplets = tuple(op.triplet() for op in operations)
     rotations, translations = operation_arrays(triplets)
-    return Symmetry(number, symbol, triplets, rotations, translations, findings, guess)
+    maps = affine_maps(rotations, translations)
+    return Symmetry(number, symbol, triplets, rotations, translations, maps, findings, guess)
 
 
 def _from_triplets(items: SymmetryItems, named: tuple[Symmetry, ...]) -> Symmetry | SymmetryProblem:

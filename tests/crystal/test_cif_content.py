@@ -22,7 +22,7 @@ from phaseid.crystal.composition import (
 from phaseid.crystal.content_key import content_key
 from phaseid.crystal.crystal import Crystal, Site
 from phaseid.crystal.elements import parse_formula, species
-from phaseid.crystal.positions import close_pairs, place
+from phaseid.crystal.positions import affine_maps, close_pairs, place
 from phaseid.crystal.provenance import plain_text
 from phaseid.crystal.symmetry import operation_arrays
 
@@ -145,7 +145,9 @@ def test_contents_agree_with_the_sites_gemmi_expands(name: str) -> None:
 def test_place_near_a_mirror(z: float, occupancy: float, count: int, *, snapped: bool) -> None:
     rotations, translations = operation_arrays(("x,y,z", "x,y,-z"))
     fract = np.array([[0.1, 0.2, z]])
-    placed = place(fract, np.array([occupancy]), rotations, translations, (5, 5, 5, 90, 90, 90))
+    placed = place(
+        fract, np.array([occupancy]), affine_maps(rotations, translations), (5, 5, 5, 90, 90, 90)
+    )
     assert placed.multiplicity.tolist() == [count]
     assert placed.fract[0, 2] == (0 if snapped else z)
 
@@ -157,7 +159,7 @@ def test_close_pairs_agree_with_every_distance_worked_out() -> None:
     )
     cell = (6.0, 7.0, 8.0, 80.0, 95.0, 110.0)
     fract = rng.random((40, 3))
-    found = close_pairs(fract, rotations, translations, cell, 1.3)
+    found = close_pairs(fract, affine_maps(rotations, translations), cell, 1.3)
     assert found is not None
     orthogonal = np.array(gemmi.UnitCell(*cell).orth.mat.tolist())
     shifts = np.array([[i, j, k] for i in (-1, 0, 1) for j in (-1, 0, 1) for k in (-1, 0, 1)])
