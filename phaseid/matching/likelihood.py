@@ -21,19 +21,23 @@ from phaseid.matching.lineset import LineSet
 from phaseid.matching.patterns import Floats, Pattern
 from phaseid.matching.settings import (
     AMPLITUDE_WIDTH,
+    BESIDE_PRIOR,
     DETECTION_SLOPE,
     FOREIGN_RINGS,
+    LISTED_JITTER,
     ODD_POSITION_FACTOR,
     ODD_POSITION_SHARE,
     SCATTER_INFLATION,
     SIGMA_INFLATION,
     STRAIN,
-    UNLISTED_PRIOR,
+    TREND_SD,
     UNLISTED_RING_COUNT,
 )
 
 _HALF_LOG_2PI = 0.5 * log(2.0 * pi)
 _AMPLITUDE_PRIOR_SD = 3.0
+_OWN_PART = 0.3
+"""A phase that makes less than this part of every ring does not show."""
 _AXES = 3
 _HIDDEN = 1.2
 """Two lines nearer than this many resolutions make one ring."""
@@ -83,6 +87,7 @@ class Fit:
 
     `log_likelihood` (b,); `offset` (b, k, K) fitted shift of each phase in each pattern (scale plus
     strain); `scale`, `scale_sd` (b, K) the common shift alone; `strain`, `strain_sd` (b, k);
+    `shows` (b,) whether every phase makes at least one ring for the greater part;
     `patterns` one PatternFit per pattern.
     """
 
@@ -92,6 +97,7 @@ class Fit:
     scale_sd: Floats
     strain: Floats
     strain_sd: Floats
+    shows: NDArray[np.bool_]
     patterns: tuple[PatternFit, ...]
 
 
@@ -100,7 +106,7 @@ class Looseness:
     """How far each phase may stray from its listed structure: (b, k) arrays.
 
     `strain` one-sigma of its isotropic strain; `jitter` line-by-line scatter in ln d; `spread`
-    extra one-sigma of ln intensity. A listed phase has (STRAIN, 0, 0). `axial`, per pattern
+    extra one-sigma of ln intensity. A listed phase has (STRAIN, LISTED_JITTER, 0). `axial`, per pattern
     (b, k, n, 3), is the shift in ln d of each line for one sigma of each of three independent axial
     strains; None where no phase has any.
     """
@@ -113,7 +119,7 @@ class Looseness:
     @classmethod
     def listed(cls, shape: tuple[int, int]) -> Looseness:
         """Every phase as it is listed."""
-        return cls(np.full(shape, STRAIN), np.zeros(shape), np.zeros(shape))
+        return cls(np.full(shape, STRAIN), np.full(shape, LISTED_JITTER), np.zeros(shape))
 
     def rows(self, part: NDArray[np.int64]) -> Looseness:
         """The looseness of some of the hypotheses."""
@@ -123,6 +129,20 @@ class Looseness:
 
 def _logistic(z: Floats) -> Floats:
     result: Floats = 1.0 / (1.0 + np.exp(-np.clip(z, -40.0, 40.0)))
+    return result
+
+
+def _windows(pattern: Pattern) -> Floats:
+    """(m,) how far from a ring a line may be to be thought of as its.
+
+    Far enough for an odd reading, but not past the middle between two rings.
+    """
+    near = np.maximum(4.5 * pattern.sigma, 0.6 * pattern.resolution)
+    if len(pattern) == 1:
+        return np.maximum(near, 9.0 * pattern.sigma)
+    gaps = np.diff(pattern.x)
+    middle = 0.5 * np.minimum(np.append(gaps, np.inf), np.append(np.inf, gaps))
+    result: Floats = np.maximum(near, np.minimum(9.0 * pattern.sigma, middle))
     return result
 
 
@@ -166,9 +186,13 @@ class _PatternWork:
         self.narrow = scatter.intensity**2 + reading
         self.odd = scatter.odd_intensity**2 + reading
         self.spread2 = loose.spread**2
-        self.window = np.maximum(4.5 * pattern.sigma, 0.6 * pattern.resolution)
+        self.window = _windows(pattern)
         self.null = crowd
         self.ln_amplitude = np.zeros((self.b, self.k))
+        self.trend = np.zeros(self.b)
+        curve = 0.5 * np.exp(-2.0 * pattern.x)
+        self.curve = curve - curve.mean()
+        self.line_curve = 0.5 * np.exp(-2.0 * self.x) - curve.mean()
         self.odd_position = np.zeros((self.b, self.m), dtype=bool)
         self.claimed = np.ones((self.b, self.m), dtype=bool)
 
@@ -238,16 +262,20 @@ class _PatternWork:
         return result
 
     def fit_amplitudes(self, rounds: int) -> None:
-        """Newton steps for ln amplitude (b, k): ring intensities, rings seen, lines not seen."""
+        """Newton steps for ln amplitude (b, k) and trend (b,).
+
+        They answer to ring intensities, rings seen and lines not seen.
+        """
         scatter, limit = self.pattern.scatter, self.pattern.ln_limit
         keep = (1.0 - scatter.lost) * self._missing()
         used = self.claimed & (self.sum.sum(axis=1) > 0)
-        eye = np.eye(self.k)
+        stiffness = np.diag([_AMPLITUDE_PRIOR_SD**-2 + 1e-3] * self.k + [TREND_SD**-2])
+        lever = np.broadcast_to(-self.curve, (self.b, 1, self.m))
         for _ in range(rounds):
             part = np.exp(self.ln_amplitude)[:, :, None] * self.sum
             total = np.maximum(part.sum(axis=1), 1e-12)
             share = part / total[:, None, :]
-            ln_total = np.log(total)
+            ln_total = np.log(total) - self.trend[:, None] * self.curve
             error = self.pattern.ln_intensity - ln_total
             spread = np.einsum("bkm,bk->bm", share, self.spread2)
             narrow, odd = self.narrow + spread, self.odd + spread
@@ -259,21 +287,32 @@ class _PatternWork:
             pull = weight * error + np.where(used, DETECTION_SLOPE * (1.0 - seen), 0.0)
             stiff = weight + np.where(used, DETECTION_SLOPE**2 * seen * (1.0 - seen), 0.0)
 
-            would = _logistic(
-                DETECTION_SLOPE * (self.ln_amplitude[:, :, None] + self.with_ln_visible - limit)
-            )
+            would = _logistic(DETECTION_SLOPE * self._ln_shown())
             slope = keep * DETECTION_SLOPE * would * (1.0 - would) / (1.0 - keep * would)
-            gradient = np.einsum("bkm,bm->bk", share, pull) - slope.sum(axis=2)
-            gradient -= self.ln_amplitude / _AMPLITUDE_PRIOR_SD**2
-            hessian = np.einsum("bkm,bm,blm->bkl", share, stiff, share)
-            bend = DETECTION_SLOPE * (slope * (1.0 - would)).sum(axis=2) + 1e-3
-            bend += 1.0 / _AMPLITUDE_PRIOR_SD**2
-            hessian = hessian + bend[:, :, None] * eye
+            bend = DETECTION_SLOPE * slope * (1.0 - would)
+            effect = np.concatenate([share, lever], axis=1)
+            gradient = np.einsum("bkm,bm->bk", effect, pull)
+            gradient[:, : self.k] -= slope.sum(axis=2) + self.ln_amplitude / _AMPLITUDE_PRIOR_SD**2
+            gradient[:, self.k] += (slope * self.line_curve).sum(axis=(1, 2))
+            gradient[:, self.k] -= self.trend / TREND_SD**2
+            hessian = np.einsum("bkm,bm,blm->bkl", effect, stiff, effect) + stiffness
+            diagonal = np.arange(self.k)
+            hessian[:, diagonal, diagonal] += bend.sum(axis=2)
+            cross = (bend * self.line_curve).sum(axis=2)
+            hessian[:, : self.k, self.k] -= cross
+            hessian[:, self.k, : self.k] -= cross
+            hessian[:, self.k, self.k] += (bend * self.line_curve**2).sum(axis=(1, 2))
             step = np.linalg.solve(hessian, gradient[:, :, None])[:, :, 0]
-            self.ln_amplitude = np.clip(
-                self.ln_amplitude + np.clip(step, -1.0, 1.0), limit - 2.0, 4.0
-            )
+            step = np.clip(step, -1.0, 1.0)
+            self.ln_amplitude = np.clip(self.ln_amplitude + step[:, :-1], limit - 2.0, 4.0)
+            self.trend = self.trend + step[:, -1]
         self.share, self.ln_total, self.hessian = share, ln_total, hessian
+
+    def _ln_shown(self) -> Floats:
+        """(b, k, n) ln of each line's expected intensity over the detection limit."""
+        shown = self.ln_amplitude[:, :, None] + self.with_ln_visible - self.pattern.ln_limit
+        result: Floats = shown - self.trend[:, None, None] * self.line_curve
+        return result
 
     def ring_terms(self, factor: float = 1.0) -> Floats:
         """(b, m) ln likelihood of each ring's intensity and of its being seen, if claimed.
@@ -347,20 +386,22 @@ class _PatternWork:
     def missing_term(self) -> Floats:
         """(b,) ln chance that all lines that meet no ring stayed unseen."""
         keep = (1.0 - self.pattern.scatter.lost) * self._missing()
-        would = _logistic(
-            DETECTION_SLOPE
-            * (self.ln_amplitude[:, :, None] + self.with_ln_visible - self.pattern.ln_limit)
-        )
+        would = _logistic(DETECTION_SLOPE * self._ln_shown())
         result: Floats = np.log1p(-keep * would).sum(axis=(1, 2))
         return result
 
     def occam_term(self) -> Floats:
-        """(b,) ln of posterior over prior volume of the amplitudes (Laplace)."""
-        if self.k == 0:
-            return np.zeros(self.b)
+        """(b,) ln of posterior over prior volume of amplitudes and trend (Laplace)."""
         _, log_det = np.linalg.slogdet(self.hessian)
-        result: Floats = self.k * (_HALF_LOG_2PI - log(AMPLITUDE_WIDTH)) - 0.5 * log_det
-        return np.minimum(result, 0.0)
+        volume = self.k * (_HALF_LOG_2PI - log(AMPLITUDE_WIDTH)) - log(TREND_SD) - 0.5 * log_det
+        result: Floats = np.minimum(volume, 0.0) - 0.5 * (self.trend / TREND_SD) ** 2
+        return result
+
+    def shows(self) -> NDArray[np.bool_]:
+        """(b, k) whether a phase makes some claimed ring for a good part."""
+        made = (self.share > _OWN_PART) & self.claimed[:, None, :]
+        result: NDArray[np.bool_] = made.any(axis=2)
+        return result
 
     def excused(self) -> NDArray[np.bool_]:
         """(b, m) unclaimed rings beyond the spacing down to which a phase's lines are stored."""
@@ -368,12 +409,8 @@ class _PatternWork:
         return result
 
     def result(self, target: Floats, residual: Floats) -> PatternFit:
-        amplitude = np.exp(self.ln_amplitude)[:, :, None]
-        if self.k:
-            covariance = np.linalg.inv(self.hessian)
-            deviation = np.sqrt(np.maximum(np.einsum("bkk->bk", covariance), 0.0))
-        else:
-            deviation = np.zeros((self.b, 0))
+        variance = np.einsum("bkk->bk", np.linalg.inv(self.hessian))[:, : self.k]
+        shown = np.exp(self._ln_shown() + self.pattern.ln_limit)
         return PatternFit(
             line_ring=self.ring,
             share=self.share,
@@ -382,8 +419,8 @@ class _PatternWork:
             unshifted=target,
             ln_total=self.ln_total,
             ln_amplitude=self.ln_amplitude,
-            amplitude_sd=deviation,
-            shown=self._missing() * self.visible * amplitude,
+            amplitude_sd=np.sqrt(np.maximum(variance, 0.0)),
+            shown=self._missing() * np.where(self.visible > 0, shown, 0.0),
         )
 
 
@@ -391,8 +428,8 @@ def _leftover(works: list[_PatternWork]) -> Floats:
     """(b,) ln density of the rings no phase claims: a few from nowhere, or an unlisted phase's."""
     size = works[0].b
     density = np.zeros(size)
-    nowhere = np.full(size, log(1.0 - UNLISTED_PRIOR))
-    unlisted = np.full(size, log(UNLISTED_PRIOR))
+    nowhere = np.full(size, log(1.0 - BESIDE_PRIOR))
+    unlisted = np.full(size, log(BESIDE_PRIOR))
     factorial = np.array([lgamma(n + 1.0) for n in range(max(w.m for w in works) + 1)])
     stay = log(UNLISTED_RING_COUNT / (1.0 + UNLISTED_RING_COUNT))
     for work in works:
@@ -552,5 +589,6 @@ def evaluate(
         scale_sd=scale_sds,
         strain=mean[:, strains] * loose.strain,
         strain_sd=deviation[:, strains] * loose.strain,
+        shows=np.logical_or.reduce([work.shows() for work in works]).all(axis=1),
         patterns=tuple(map(_PatternWork.result, works, targets, residuals)),
     )

@@ -22,6 +22,10 @@ from phaseid.rings.ringlist import RingList
 
 Floats = NDArray[np.float64]
 
+_FINEST, _COARSEST = 1e-4, 0.05
+"""Relative ring sigmas below or above these are taken as these: no listed cell is known better, and
+a ring known worse says nothing."""
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Pattern:
@@ -136,7 +140,7 @@ def _detection_limit(ln_intensity: Floats, intensity_sd: Floats) -> float:
 def prepare(rings: RingList) -> Pattern:
     """Return the pattern that the likelihood works on."""
     ln_d = np.log(rings.d_A)
-    relative = rings.sigma_A / rings.d_A
+    relative = np.clip(rings.sigma_A / rings.d_A, _FINEST, _COARSEST)
     groups = _group_duplicates(ln_d, relative)
     first = np.array([group[0] for group in groups])
     x, sigma = ln_d[first], relative[first]

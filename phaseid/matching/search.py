@@ -40,7 +40,10 @@ _BATCH_CELLS = 150_000
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Judged:
-    """One set of phases, judged. `log_posterior` is unnormalised; `offset` (k, K)."""
+    """One set of phases, judged. `log_posterior` is unnormalised; `offset` (k, K).
+
+    A set of which a phase makes no ring is no answer: its log_posterior is -inf.
+    """
 
     members: Members
     log_likelihood: float
@@ -119,8 +122,9 @@ class Search:
         for part, fit in evaluate_in_batches(self.model, sets, offsets):
             for row, index in enumerate(part):
                 value = float(fit.log_likelihood[row])
+                prior = self.prior_of(keys[index]) if fit.shows[row] else -np.inf
                 self.judged[keys[index]] = Judged(
-                    keys[index], value, value + self.prior_of(keys[index]), fit.offset[row]
+                    keys[index], value, value + prior, fit.offset[row]
                 )
 
     def _singles(self) -> None:
@@ -201,7 +205,9 @@ class Search:
 
     def accepted(self) -> list[Judged]:
         """Every judged set that may be an answer, best first."""
-        return [j for j in self.ranked() if self.accepts(j.members)]
+        return [
+            j for j in self.ranked() if np.isfinite(j.log_posterior) and self.accepts(j.members)
+        ]
 
     def relatives(self, sets: list[Judged]) -> list[Loosened]:
         """Unlisted relatives of members of `sets`.
@@ -222,6 +228,8 @@ class Search:
                 loose = self._relaxed(members, loosened, spread)
                 for part, fit in evaluate_in_batches(self.model, members, offsets, loose):
                     for row, index in enumerate(part):
+                        if not fit.shows[row]:
+                            continue
                         judged, k = items[index]
                         found.append(
                             Loosened(

@@ -41,6 +41,9 @@ SCATTER: dict[Kind, Scatter] = {
 STRAIN = 0.0015
 """One-sigma of the isotropic strain, alloying or warmth of a listed phase (relative, on d)."""
 
+LISTED_JITTER = 2e-4
+"""Line-by-line scatter in ln d of a listed phase: its axial ratios are known no better."""
+
 RELATIVE_STRAIN = 0.02
 """The same for an unlisted relative: a phase of the listed structure type with another cell."""
 RELATIVE_AXIAL = 0.01
@@ -49,7 +52,7 @@ RELATIVE_JITTER = {1: 0.0, 2: 0.0003, 3: 0.0008}
 """Line-by-line scatter left after that (angles, further parameters), by number of free lengths."""
 RELATIVE_INTENSITY = (0.1, 0.6)
 """Extra scatter of ln intensity of a relative: of like atoms, or of others on the same sites."""
-RELATIVE_PRIOR = 0.3
+RELATIVE_PRIOR = 0.2
 """How many unlisted relatives there are for each listed phase."""
 
 ZERO_SHIFT_DEG = 0.02
@@ -66,6 +69,10 @@ ODD_POSITION_SHARE = 0.04
 SCATTER_INFLATION = ((1.0, 0.75), (1.9, 0.25))
 """(factor, prior): intensities of a specimen may stray more than its probe's usual (texture)."""
 
+TREND_SD = 0.8
+"""One-sigma (Å²) of a trend of ln intensity with 1/2d²: displacement unlike the file's, peak heights
+for areas, absorption. Published sheets need up to about 1."""
+
 DETECTION_SLOPE = 2.6
 """Slope of the logistic chance of seeing a line against ln(intensity / limit)."""
 
@@ -78,6 +85,8 @@ AMPLITUDE_WIDTH = 4.0
 PHASE_COUNT_PRIOR = (0.70, 0.22, 0.06, 0.02)
 """Prior of one, two, three, four listed phases."""
 UNLISTED_PRIOR = 0.15
-"""Prior that an unlisted phase is in the specimen, alone or beside listed ones."""
+"""Prior that no listed phase is in the specimen."""
+BESIDE_PRIOR = 0.08
+"""Prior that an unlisted phase is there beside listed ones."""
 UNLISTED_RING_COUNT = 12.0
 """Mean number of rings of an unlisted phase (geometric)."""

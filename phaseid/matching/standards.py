@@ -26,8 +26,8 @@ ROOM_C, ROOM_SIGMA_K, STATED_SIGMA_K = 23.0, 5.0, 1.0
 UNCERTIFIED_SIGMA = 2.5e-4
 """Relative one-sigma of a cell from a library: compilations agree to about 5e-4."""
 UNKNOWN_EXPANSION = 2e-5
-_MOST_LINES = 60
-_WEAKEST = 0.5
+_MOST_LINES = 80
+_WEAKEST = 0.03
 
 
 @dataclass(frozen=True, slots=True)
