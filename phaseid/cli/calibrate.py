@@ -68,7 +68,7 @@ def calibrate(
     Which ring is which line is found by itself; radii need no camera constant.
 
     \b
-    phaseid calibrate gold.csv --standard Au --save cm200-80cm
+    phaseid calibrate gold.csv --standard Au --save plate-80cm
     phaseid calibrate 10.65 12.30 17.39 20.40 --unit radius_mm --standard Au \\
         --probe "electron 200 kV" --sigma 0.05
     """

@@ -43,9 +43,12 @@ def identify(
     only: Only = None,
     exclude: Exclude = None,
     max_phases: Annotated[
-        int, typer.Option("--max-phases", min=1, max=4, help="Phases in a mixture, at most.")
+        int,
+        typer.Option(
+            "--max-phases", metavar="N", min=1, max=4, help="Phases in a mixture, at most."
+        ),
     ] = 3,
-    top: Annotated[int, typer.Option("--top", min=1, help="Answers to list.")] = 5,
+    top: Annotated[int, typer.Option("--top", metavar="N", min=1, help="Answers to list.")] = 5,
     as_json: Json = False,
 ) -> None:
     """Rank the phases and mixtures that explain a list of rings.

@@ -47,7 +47,9 @@ def add(
     ] = False,
     jobs: Annotated[
         int | None,
-        typer.Option("--jobs", min=1, help="Processes that share the work; default: as it pays."),
+        typer.Option(
+            "--jobs", metavar="N", min=1, help="Processes that share the work; default: as it pays."
+        ),
     ] = None,
     as_json: Json = False,
 ) -> None:

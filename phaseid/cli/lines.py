@@ -25,7 +25,11 @@ def lines(
     ],
     probe: Annotated[
         str,
-        typer.Option("--probe", help='Such as "electron 200 kV" or "x-ray Mo Ka debye-scherrer".'),
+        typer.Option(
+            "--probe",
+            metavar="PROBE",
+            help='Such as "electron 200 kV" or "x-ray Mo Ka debye-scherrer".',
+        ),
     ] = DEFAULT_PROBE,
     d_min: Annotated[
         float | None,

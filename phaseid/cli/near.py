@@ -36,17 +36,20 @@ def near(
         str, typer.Option("--tolerance", metavar="REL", help="How near: 1% or 0.01, of d.")
     ] = "1%",
     probe: Annotated[
-        str, typer.Option("--probe", help="Whose intensities say what is strong.")
+        str, typer.Option("--probe", metavar="PROBE", help="Whose intensities say what is strong.")
     ] = DEFAULT_PROBE,
     min_intensity: Annotated[
         float,
-        typer.Option("--min-intensity", min=0, max=100, help="Weakest line (strongest = 100)."),
+        typer.Option(
+            "--min-intensity", metavar="I", min=0, max=100, help="Weakest line (strongest = 100)."
+        ),
     ] = 10.0,
     must: Must = None,
     only: Only = None,
     exclude: Exclude = None,
     top: Annotated[
-        int, typer.Option("--top", min=1, help="Phases to show as text (JSON holds all).")
+        int,
+        typer.Option("--top", metavar="N", min=1, help="Phases to show as text (JSON holds all)."),
     ] = 20,
     library: LibraryFile = None,
     as_json: Json = False,

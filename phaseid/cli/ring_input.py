@@ -30,7 +30,11 @@ Rings = Annotated[
 ]
 ProbeOverFile = Annotated[
     str | None,
-    typer.Option("--probe", help='Such as "electron 200 kV" or "x-ray Cu Ka"; over the file.'),
+    typer.Option(
+        "--probe",
+        metavar="PROBE",
+        help='Such as "electron 200 kV" or "x-ray Cu Ka"; over the file.',
+    ),
 ]
 ScaleUncertainty = Annotated[
     str | None,
@@ -43,7 +47,9 @@ ScaleUncertainty = Annotated[
 CameraConstantText = Annotated[
     str | None,
     typer.Option(
-        "--camera-constant", help='For radii: "25.1 +- 0.3 A mm" or "... A px"; over the file.'
+        "--camera-constant",
+        metavar="CONSTANT",
+        help='For radii: "25.1 +- 0.3 A mm" or "... A px"; over the file.',
     ),
 ]
 Unit = Annotated[
@@ -51,7 +57,9 @@ Unit = Annotated[
 ]
 Sigma = Annotated[
     str | None,
-    typer.Option("--sigma", help="One sigma of each typed number, in its unit or in %."),
+    typer.Option(
+        "--sigma", metavar="SIGMA", help="One sigma of each typed number, in its unit or in %."
+    ),
 ]
 Intensities = Annotated[
     str | None,

@@ -206,7 +206,7 @@ def _path(name: str, folder: Path) -> Path:
     if _NAME.fullmatch(name) is None:
         raise InputError(
             f"'{name}' cannot be the name of a calibration",
-            remedy="Use letters, digits, '-', '_' and '.', such as cm200-80cm.",
+            remedy="Use letters, digits, '-', '_' and '.', such as plate-80cm.",
         )
     return folder / f"{name}.json"
 
