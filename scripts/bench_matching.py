@@ -280,7 +280,8 @@ def main() -> None:
     wanted = [w for w in options.families.split(",") if w]
     chosen = [i for i, f in enumerate(FAMILIES) if not wanted or any(w in f.name for w in wanted)]
     print(
-        f"{'family':28s} {'top-1 %':12s}  {'abstains %':12s}  {'wrong ≥ 0.9 %':12s}   ms   by hand %"
+        f"{'family':28s} {'top-1 %':12s}  {'abstains %':12s}  {'wrong ≥ 0.9 %':12s}"
+        "   ms   by hand %"
     )
     everything: list[Outcome] = []
     with ProcessPoolExecutor(options.jobs) as pool:

@@ -28,7 +28,7 @@ GRADES = ((70.0, "vs"), (45.0, "s"), (22.0, "m"), (9.0, "w"), (0.0, "vw"))
 
 @dataclass(frozen=True)
 class Powder:
-    """Reflections of one structure: d (Å), multiplicity × |F|² for each probe, per volume squared."""
+    """Reflections of one structure: d (Å), multiplicity × |F|² / volume² for each probe."""
 
     d_A: Floats
     strength: dict[str, Floats]
