@@ -13,9 +13,11 @@ from phaseid.rings.calibration import Fit, Readings, lay
 
 _FITS = 3.0
 """ln evidence from which on the rings are taken as the standard's."""
-_BETTER = 8.0
+_DOUBTFUL, _BETTER = 2.0, 8.0
+"""ln evidence by which another standard has to be better to be mentioned, to be believed."""
+_FEW = 4
 _UNDECIDED, _SURE = 0.5, 0.95
-_STRONG = 30.0
+_STRONG = 15.0
 
 
 def checked(
@@ -24,7 +26,11 @@ def checked(
     """Refuse a fit that is none or is one of several; else return it, with remarks on doubts."""
     rings = plate.rings
     others = list(other_standards(standard, temperature_C))
-    if fit is None or (fit.log_evidence < _FITS and not (len(rings) <= 2 and plate.known)):
+    fits_all = fit is not None and len(fit.used) == len(rings)
+    few = len(rings) < _FEW and fits_all
+    if few and not plate.known and fit is not None and fit.log_evidence < _FITS:
+        raise _several_ways(fit, plate, standard)
+    if fit is None or (fit.log_evidence < _FITS and not few):
         raise InputError(
             f"the ring ratios do not fit {standard.label}{_likely(plate, others, 0.0)}",
             path=rings.source or None,
@@ -33,8 +39,8 @@ def checked(
     remarks: list[str] = []
     lines = plate.lines(standard)
     gaps = [j for j in fit.missing if lines.intensity[j] > _STRONG]
-    likely = _likely(plate, others, fit.log_evidence + _BETTER) if gaps else ""
-    if likely and len(gaps) > 1:
+    likely = _likely(plate, others, fit.log_evidence + _DOUBTFUL) if gaps else ""
+    if len(gaps) > 1 and _likely(plate, others, fit.log_evidence + _BETTER):
         names = ", ".join("".join(map(str, lines.hkl[j])) for j in gaps)
         raise InputError(
             f"{standard.label} would also show {names}{likely}",
@@ -44,15 +50,7 @@ def checked(
     if likely:
         remarks.append(f"The rings fit {standard.label} less well than others{likely}.")
     if fit.probability < _UNDECIDED:
-        ways = ", ".join(
-            f"{_constant_text(plate, shift)} ({weight:.0%})"
-            for shift, weight in ((fit.shift, fit.probability), *fit.rivals[:2])
-        )
-        raise InputError(
-            f"the rings fit {standard.label} in several ways: {ways}",
-            path=rings.source or None,
-            remedy=f"Measure more rings, or state a rough scale: {_rough(plate)}.",
-        )
+        raise _several_ways(fit, plate, standard)
     if fit.probability < _SURE and fit.rivals:
         shift, weight = fit.rivals[0]
         remarks.append(
@@ -68,6 +66,18 @@ def checked(
             "the uncertainty has been raised accordingly."
         )
     return fit, remarks
+
+
+def _several_ways(fit: Fit, plate: Plate, standard: Standard) -> InputError:
+    ways = ", ".join(
+        f"{_constant_text(plate, shift)} ({weight:.0%})"
+        for shift, weight in ((fit.shift, fit.probability), *fit.rivals[:2])
+    )
+    return InputError(
+        f"so few rings fit {standard.label} in several ways: {ways}",
+        path=plate.rings.source or None,
+        remedy=f"Measure more rings, or state a rough scale: {_rough(plate)}.",
+    )
 
 
 def _rough(plate: Plate) -> str:

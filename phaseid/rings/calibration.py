@@ -27,6 +27,8 @@ _HALF_SEEN = 12.0
 """Relative intensity of a line that is listed in half of the cases."""
 _LISTED = 0.88
 """Chance that a strong line is in the list: texture and short lists leave lines out."""
+_INNER, _INNER_REACH = 0.6, 0.25
+"""Chance that the list reaches a line just inside its first ring, and how it falls off in ln d."""
 _NEAR = 4.0
 _TRIED = 12
 _PRIOR_READINGS = 4.0
@@ -191,7 +193,9 @@ class _Search:
         ]
         met = (np.abs(away) < _NEAR).any(axis=0)
         between = (self.lines.x > x.min()) & (self.lines.x < x.max())
-        unseen = np.log1p(-self.listed[between & ~met]).sum()
+        inner = np.clip((self.lines.x - x.max()) / _INNER_REACH, 0.0, 30.0)
+        covered = np.where(between, 1.0, np.where(inner > 0, _INNER * np.exp(-inner), 0.0))
+        unseen = np.log1p(-(self.listed * covered)[~met]).sum()
         return float(np.logaddexp.reduce(rings) + unseen)
 
     def refined(self, shift: float) -> _Trial | None:

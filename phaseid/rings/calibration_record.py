@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import os
 import re
-from dataclasses import asdict, dataclass, replace
+from dataclasses import asdict, dataclass, fields, replace
 from datetime import date, datetime
 from difflib import get_close_matches
 from math import hypot, log
@@ -217,7 +217,12 @@ def _read(path: Path) -> list[dict[str, Any]]:
         records = held["records"]
     except (OSError, ValueError, KeyError, TypeError):
         raise _damaged(path) from None
-    if not isinstance(records, list) or held.get("schema") != SCHEMA:
+    names = {field.name for field in fields(CalibrationRecord)}
+    if (
+        not isinstance(records, list)
+        or held.get("schema") != SCHEMA
+        or not all(isinstance(one, dict) and names == set(one) for one in records)
+    ):
         raise _damaged(path)
     return records
 
