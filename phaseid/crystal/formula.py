@@ -4,12 +4,13 @@ The chemist's order is the element sequence of IUPAC, Nomenclature of Inorganic 
 table VI, run from its electropositive end. In oxides, chalcogenides and halides the custom of the
 trade refines it: the metals beyond the alkalis, alkaline earths and rare earths come by rising
 charge, of equal charge the heavier first (PbTiO3, BiFeO3, ZnFe2O4, Cu2ZnSnS4, where the table alone
-would say TiPbO3). Hydrogen keeps its place in the table: KPH2O4 is KH2PO4.
+would say TiPbO3). The hydrogen of oxides and their salts stands behind the metals, ammonium with
+it (NaHCO3, KH2PO4), before carbon or phosphorus.
 """
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Set
 
 # Table VI, group by group from the most electropositive end; from memory.
 _SEQUENCE = (
@@ -34,6 +35,12 @@ _SALT_PLACE = _PLACE | {
     symbol: _PLACE["Sc"] + (place + 1) / 1000
     for place, symbol in enumerate(" ".join(_USUAL_CHARGES).split())
 }
+_HYDROUS_PLACE = _SALT_PLACE | {
+    symbol: _PLACE["B"] + (place - 4) / 10 for place, symbol in enumerate(["N", "D", "H"])
+}
+_METALS = frozenset(
+    symbol for symbol, place in _SALT_PLACE.items() if _PLACE["He"] < place < _PLACE["B"]
+)
 _SALT_FORMERS = frozenset({"O", "S", "Se", "Te", "F", "Cl", "Br", "I"})
 
 
@@ -43,9 +50,16 @@ def chemical_formula(amounts: Mapping[str, float]) -> str:
     >>> chemical_formula({"O": 3, "Ti": 1, "Pb": 1}), chemical_formula({"Al": 1, "Ti": 1})
     ('PbTiO3', 'TiAl')
     """
-    place = _PLACE if _SALT_FORMERS.isdisjoint(amounts) else _SALT_PLACE
+    place = _places(amounts.keys())
     order = sorted(amounts, key=lambda symbol: (place.get(symbol, -1.0), symbol))
     return "".join(symbol + _amount(amounts[symbol]) for symbol in order)
+
+
+def _places(symbols: Set[str]) -> Mapping[str, float]:
+    if _SALT_FORMERS.isdisjoint(symbols):
+        return _PLACE
+    hydrous = "O" in symbols and bool(symbols & {"H", "D"}) and bool(symbols & _METALS)
+    return _HYDROUS_PLACE if hydrous else _SALT_PLACE
 
 
 def hill_formula(amounts: Mapping[str, float], separator: str = "") -> str:
