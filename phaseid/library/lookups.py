@@ -97,6 +97,11 @@ def find(conn: sqlite3.Connection, text: str) -> list[Hit]:
     note_all(Match.ID, "SELECT id FROM phase WHERE phase_id = ?", wanted)
     by_number = "SELECT phase FROM label WHERE kind = 'number' AND key = ?"
     note_all(Match.NUMBER, by_number, wanted.casefold())
+    database, named, number = wanted.casefold().replace(":", " ").rpartition(" ")
+    if named:  # "COD 9008460"
+        both = (number, f"{database.strip()} {number}")
+        for (row_id,) in conn.execute(by_number + " AND lower(text) = ?", both):
+            note(Match.NUMBER, row_id)
     by_formula = "SELECT id FROM phase WHERE formula_key = ?"
     literal = formula_keys(wanted)
     for formula_key in literal:

@@ -38,7 +38,8 @@ def shelf(library: Library, write_cif: WriteCif) -> Library:
     [
         ("MgO", "MgO"), ("OMg", "MgO"), ("mgo", "MgO"), ("Mg2O2", "MgO"), ("Mg O", "MgO"),
         ("periclase", "MgO"), ("PERICLASE", "MgO"), ("pericl", "MgO"), ("clase", "MgO"),
-        ("burnt lime", "CaO"), ("lime nt", "CaO"), ("9000003", "KCl"), ("ClNa", "NaCl"),
+        ("burnt lime", "CaO"), ("lime nt", "CaO"), ("9000003", "KCl"), ("COD 9000003", "KCl"), ("cod: 9000003", "KCl"),
+        ("ClNa", "NaCl"),
         ("FLi", "LiF"),
     ],
 )  # fmt: skip
