@@ -150,7 +150,7 @@ def lines_dict(shown: LineList) -> dict[str, Any]:
 
 
 def lines_text(shown: LineList, width: int = 80) -> str:
-    """Return a heading, a table of the lines of at least 0.1 of 100, and what else may show."""
+    """Return a heading, the lines of at least 0.1 of 100, what else may show, and findings."""
     reached, intensity = shown.reached(), shown.intensity()
     strong = [k for k in reached if intensity[k] >= WEAKEST_SHOWN]
     page = [*_heading(shown, width), "", *_table(shown, strong, intensity, width)]
@@ -158,7 +158,12 @@ def lines_text(shown: LineList, width: int = 80) -> str:
     if weak:
         left_out = f"Weaker than {WEAKEST_SHOWN} of 100 and left out: {weak}."
         page += ["", *wrap(left_out, width, indent="")]
-    return "\n".join([*page, *_forbidden(shown, width), *_ghosts(shown, width)]) + "\n"
+    page += [*_forbidden(shown, width), *_ghosts(shown, width)]
+    if shown.phase.findings:
+        page += ["", *wrap("What to know of this structure:", width, indent="")]
+        for finding in shown.phase.findings:
+            page += wrap(finding.message, width, indent="    ", first="  - ")
+    return "\n".join(page) + "\n"
 
 
 def _heading(shown: LineList, width: int) -> list[str]:

@@ -128,3 +128,41 @@ def test_every_page_fits_the_terminal(
     done = phaseid("lines", "corundum", "--probe", probe)
     assert done.code == 0
     assert max(len(line) for line in done.out.splitlines()) <= columns
+
+
+CROWDED = """\
+data_crowded
+_cell_length_a 4
+_cell_length_b 4
+_cell_length_c 4
+_cell_angle_alpha 90
+_cell_angle_beta 90
+_cell_angle_gamma 90
+_space_group_name_H-M_alt 'P 1'
+_chemical_formula_sum 'Fe O'
+loop_
+_atom_site_label
+_atom_site_fract_x
+_atom_site_fract_y
+_atom_site_fract_z
+_atom_site_occupancy
+Fe 0 0 0 {occupancy}
+O 0.5 0.5 {z} 1
+"""
+
+
+@pytest.mark.parametrize(
+    ("occupancy", "z", "says"), [("1.2", "0.5", "1.2"), ("0.5", "0.5", "formula"), ("1", "?", "O")]
+)
+def test_doubts_about_a_structure_stand_beside_its_lines_or_instead(
+    phaseid, tmp_path, occupancy: str, z: str, says: str
+) -> None:
+    path = tmp_path / "crowded.cif"
+    path.write_text(CROWDED.format(occupancy=occupancy, z=z), encoding="utf-8")
+    done = phaseid("lines", str(path))
+    if z == "?":
+        assert (done.code, done.out) == (2, "")
+        assert says in done.err
+    else:
+        assert done.code == 0
+        assert says in done.out.split("What to know of this structure:")[1]
