@@ -37,18 +37,16 @@ def checked(
             remedy="Check --standard, the column's unit and the list.",
         )
     remarks: list[str] = []
-    lines = plate.lines(standard)
-    gaps = [j for j in fit.missing if lines.intensity[j] > _STRONG]
-    likely = _likely(plate, others, fit.log_evidence + _DOUBTFUL) if gaps else ""
-    if len(gaps) > 1 and _likely(plate, others, fit.log_evidence + _BETTER):
-        names = ", ".join("".join(map(str, lines.hkl[j])) for j in gaps)
+    used = set(fit.used.tolist())
+    if _likely(plate, others, fit.log_evidence + _BETTER, used):
         raise InputError(
-            f"{standard.label} would also show {names}{likely}",
+            f"{_shortcoming(fit, plate, standard)}"
+            f"{_likely(plate, others, fit.log_evidence + _BETTER, used)}",
             path=rings.source or None,
             remedy="Check --standard.",
         )
-    if likely:
-        remarks.append(f"The rings fit {standard.label} less well than others{likely}.")
+    if likely := _likely(plate, others, fit.log_evidence + _DOUBTFUL, used):
+        remarks.append(f"{_shortcoming(fit, plate, standard)}{likely}.")
     if fit.probability < _UNDECIDED:
         raise _several_ways(fit, plate, standard)
     if fit.probability < _SURE and fit.rivals:
@@ -93,19 +91,38 @@ def _constant_text(plate: Plate, shift: float) -> str:
     return f"factor {exp(shift):.5g}"
 
 
-def _likely(plate: Plate, others: list[Standard], at_least: float) -> str:
-    """Which other standard the rings fit, in words; empty where none does."""
+def _shortcoming(fit: Fit, plate: Plate, standard: Standard) -> str:
+    """Where the standard fits less well than it should."""
+    lines = plate.lines(standard)
+    gaps = [j for j in fit.missing if lines.intensity[j] > _STRONG]
+    said = f"{standard.label} fits {len(fit.used)} of {len(plate.rings)} rings"
+    if gaps:
+        names = ", ".join("".join(map(str, lines.hkl[j])) for j in gaps)
+        said += f" and would also show {names}"
+    return said
+
+
+def _likely(
+    plate: Plate, others: list[Standard], at_least: float, used: set[int] | None = None
+) -> str:
+    """Which other standard fits, in words; empty where none does.
+
+    `used` are rings that it has to explain too: rings of another standard on the same plate are no
+    reason to doubt this one.
+    """
     found = []
     for other in others:
         fit = plate.lay(other)
-        if fit is not None and fit.log_evidence > max(at_least, _FITS):
+        if fit is None or fit.log_evidence < max(at_least, _FITS):
+            continue
+        if used is None or used <= set(fit.used.tolist()):
             found.append((fit.log_evidence, other.label, len(fit.used)))
     if not found:
         return ""
     found.sort(reverse=True)
     names = [label for evidence, label, _ in found if found[0][0] - evidence < 3.0][:4]
     fitting = "which fits" if len(names) == 1 else "which fit"
-    return f"; likely {' or '.join(names)}, {fitting} {found[0][2]} of {len(plate.rings)} rings"
+    return f"; likely {' or '.join(names)}, {fitting} {found[0][2]} of {len(plate.rings)}"
 
 
 def _other_scale(fit: Fit, plate: Plate, others: list[Standard]) -> list[str]:

@@ -1,0 +1,237 @@
+"""Screening: what is foreign, what may have made it, and limits checked by simulation."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from phaseid.crystal.crystal import Crystal
+from phaseid.crystal.lines import compute_lines
+from phaseid.errors import InputError
+from phaseid.library import Library, Phase
+from phaseid.matching.limits import COMMON_SCATTER
+from phaseid.matching.screen import Screening, screen
+from phaseid.matching.settings import SCATTER
+from phaseid.matching.watch import Watched, watch_lists
+from phaseid.probes import parse_probe
+from phaseid.resources import data_path
+from phaseid.rings import RingList, read_rings, rings_from_values
+
+DEMO = data_path("demo")
+Find = Callable[[str], tuple[Phase, Crystal]]
+
+
+@pytest.fixture
+def find(starter_library: Library) -> Find:
+    def found(text: str) -> tuple[Phase, Crystal]:
+        phase = starter_library.choose(text)
+        return phase, starter_library.crystal(phase.phase_id)
+
+    return found
+
+
+@pytest.fixture
+def screened(starter_library: Library, find: Find):
+    def held(rings: RingList, *expected: str, watch: list[Watched] | None = None) -> Screening:
+        listed = watch_lists() if watch is None else watch
+        return screen(rings, starter_library, [find(e) for e in expected], listed, find)
+
+    return held
+
+
+def _simulated(
+    parts: list[tuple[Phase, Crystal, float]], probe_text: str, limit: float, seed: int
+) -> RingList:
+    """A ring list of a mixture (weight shares), with the scatter and losses of its probe.
+
+    Shares follow v·m|F|²/V² with v = share / density, the reference-intensity-ratio method
+    (Chung 1974, J. Appl. Cryst. 7, 519).
+    """
+    generator = np.random.default_rng(seed)
+    probe = parse_probe(probe_text)
+    scatter = SCATTER[probe.kind]
+    lines: list[tuple[float, float]] = []
+    for phase, crystal, share in parts:
+        own = compute_lines(crystal, d_min_A=0.85)
+        level = probe.weights(own.d_A, own.multiplicity, probe.f2(own)) / own.volume_A3**2
+        level = level * share / phase.density_g_cm3
+        level = level * np.exp(COMMON_SCATTER[probe.kind] * generator.normal())
+        level = level * np.exp(scatter.intensity * generator.normal(size=len(level)))
+        lines += zip(own.d_A.tolist(), level.tolist(), strict=True)
+    merged: list[tuple[float, float]] = []
+    for d, level in sorted(lines, reverse=True):
+        if merged and _merges(merged[-1][0], d, probe_text):
+            before, strength = merged[-1]
+            total = strength + level
+            merged[-1] = ((before * strength + d * level) / total, total)
+        else:
+            merged.append((d, level))
+    d_A, level = np.array(merged).T
+    level = level / level.max()
+    listed = generator.random(len(level)) < 1.0 / (1.0 + (limit / level) ** 2.6)
+    listed &= generator.random(len(level)) > scatter.lost
+    listed[np.argmax(level)] = True
+    d_A, level = d_A[listed], level[listed]
+    sigma = 0.002 * d_A
+    if probe.kind == "x-ray":
+        theta = np.arcsin(probe.wavelength_A / 2 / d_A)
+        sigma = 0.5 * d_A * np.radians(0.02) / np.tan(theta)
+    read = d_A * (1 + probe.scale_sigma * generator.normal()) + sigma * generator.normal(
+        size=len(d_A)
+    )
+    return rings_from_values(
+        read.tolist(),
+        probe=probe,
+        sigma=[repr(s) for s in sigma.tolist()],
+        intensities=(100 * level).tolist(),
+    )
+
+
+def _merges(one: float, other: float, probe_text: str) -> bool:
+    probe = parse_probe(probe_text)
+    scatter = SCATTER[probe.kind]
+    if probe.geometry == "ring":
+        return math.log(one / other) < scatter.resolution
+    half = [math.asin(probe.wavelength_A / 2 / d) for d in (one, other)]
+    return 2 * math.degrees(half[1] - half[0]) < scatter.resolution_two_theta_deg
+
+
+def test_what_is_expected_is_clean(screened) -> None:
+    result = screened(read_rings(DEMO / "foil_xrays.csv"), "Al", "MgO")
+    assert result.verdict == "clean"
+    assert result.foreign == ()
+    assert all(part.seen for part in result.expected)
+    rings = sorted(ring.ring for part in result.expected for ring in part.rings)
+    assert rings == list(range(13))
+    assert len(result.limits) > 60
+    assert all(
+        0 < limit.share_even < limit.share <= 1 for limit in result.limits if not limit.hidden
+    )
+
+
+def test_a_contaminant_of_the_watch_list_is_named(screened) -> None:
+    result = screened(read_rings(DEMO / "foil_xrays.csv"), "Al")
+    assert result.verdict == "foreign-rings"
+    assert [ring.ring for ring in result.foreign] == [0, 2, 4, 7, 10]  # those of MgO
+    for ring in result.foreign:
+        assert ring.candidates[0].phase.formula == "MgO"
+        assert ring.candidates[0].probability > 0.9
+        assert ring.candidates[0].lists
+        assert sum(c.probability for c in ring.candidates) < 1.0 + 1e-6
+    assert [c.phase.formula for c in result.found] == ["MgO"]
+    assert all(limit.phase.formula != "MgO" for limit in result.limits)
+
+
+def test_two_contaminants_are_both_named(screened) -> None:
+    result = screened(read_rings(DEMO / "foil_xrays.csv"), "corundum")
+    assert {c.phase.formula for c in result.found} == {"Al", "MgO"}
+    assert not result.expected[0].seen  # and what was expected is not there
+    assert result.expected[0].rings == ()
+
+
+def test_a_contaminant_outside_the_watch_list_comes_from_the_library(screened) -> None:
+    result = screened(read_rings(DEMO / "foil_xrays.csv"), "Al", watch=[])
+    assert result.foreign[0].candidates[0].phase.formula == "MgO"
+    assert result.foreign[0].candidates[0].lists == ()
+    assert result.limits == ()
+
+
+def test_a_phase_beside_the_library_can_be_expected(
+    find: Find, tmp_path: Path, starter_library: Library
+) -> None:
+    """An empty library, everything given as structures: the same verdict."""
+    rings = read_rings(DEMO / "foil_xrays.csv")
+    with Library.create(tmp_path / "empty.sqlite") as empty:
+        result = screen(rings, empty, [find("Al"), find("MgO")], watch_lists(), find)
+    assert result.verdict == "clean"
+    assert len(result.limits) > 60
+
+
+def test_nothing_or_too_much_expected_is_refused(screened) -> None:
+    rings = read_rings(DEMO / "foil_xrays.csv")
+    with pytest.raises(InputError, match="--expect"):
+        screened(rings)
+    with pytest.raises(InputError, match="--expect"):
+        screened(rings, *["Al"] * 9)
+
+
+@pytest.mark.parametrize(
+    ("probe", "host", "guest", "limit"),
+    [("x-ray Cu Ka", "corundum", "Si", 0.02), ("electron 200 kV", "Al", "NaCl", 0.03)],
+)
+def test_limits_hold_in_simulation(
+    probe: str, host: str, guest: str, limit: float, find: Find, tmp_path: Path
+) -> None:
+    """A guest at its limits is found in about half, nearly all, and (at twice) all of the cases."""
+    watch = [Watched(guest, False, ("mine",), ())]
+
+    small = Library.create(tmp_path / "small.sqlite")  # as good as a large one, and faster
+    small.add_crystals(find(name)[1] for name in (host, guest, "Au", "quartz"))
+
+    def held(share: float, seed: int) -> Screening:
+        parts = [(*find(host), 1 - share), (*find(guest), share)]
+        rings = _simulated(parts[: 2 if share else 1], probe, limit, seed)
+        return screen(rings, small, [find(host)], watch, find, weakest=limit)
+
+    pure = [held(0.0, seed) for seed in range(3)]
+    assert [result.verdict for result in pure] == ["clean"] * 3
+    sure = float(np.median([result.limits[0].share for result in pure]))
+    even = float(np.median([result.limits[0].share_even for result in pure]))
+
+    def found(share: float) -> float:
+        return float(
+            np.mean([held(share, 100 + seed).verdict == "foreign-rings" for seed in range(14)])
+        )
+
+    # binomial: 14 draws at 0.5 lie within 0.14 and 0.86 in 99 % of cases, at 0.95 above 0.71
+    assert 0.14 <= found(even) <= 0.86
+    assert found(sure) > 0.71
+    assert found(2 * sure) >= 0.85
+    small.close()
+
+
+def test_every_phase_of_the_watch_list_comes_with_phaseid() -> None:
+    listed = watch_lists()
+    assert len(listed) > 60
+    names = {path.stem for path in data_path("starter").rglob("*.cif")}
+    assert {watched.name for watched in listed} <= names
+    assert all(watched.why and watched.lists for watched in listed)
+    about = {name for watched in listed for name in watched.lists}
+    assert len(about) == 7
+
+
+def test_lists_of_your_own(tmp_path: Path) -> None:
+    plain = tmp_path / "furnace.txt"
+    plain.write_text("# what our furnace sheds\nMgO  # lining\n\nSiC-6H\n", encoding="utf-8")
+    toml = tmp_path / "more.toml"
+    toml.write_text(
+        'about = "more"\n[[phase]]\nphase = "halite"\nwhy = "hands"\n', encoding="utf-8"
+    )
+    listed = watch_lists([plain, toml], shipped=False)
+    assert [(w.name, w.lists, w.why) for w in listed] == [
+        ("MgO", ("furnace",), ("lining",)),
+        ("SiC-6H", ("furnace",), ()),
+        ("halite", ("more",), ("hands",)),
+    ]
+    assert len(watch_lists([plain])) == len(watch_lists()) + 2
+
+
+@pytest.mark.parametrize(
+    ("name", "text"),
+    [
+        ("a.txt", "# nothing\n"),
+        ("a.toml", "phase = [1]\n"),
+        ("a.toml", "[[phase]]\nwhy = 'x'\n"),
+        ("a.toml", "[[phase"),
+        ("a.toml", ""),
+    ],
+)
+def test_a_list_that_is_none_is_told(name: str, text: str, tmp_path: Path) -> None:
+    path = tmp_path / name
+    path.write_text(text, encoding="utf-8")
+    with pytest.raises(InputError, match="a\\.t"):
+        watch_lists([path])
