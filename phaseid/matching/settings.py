@@ -38,7 +38,7 @@ SCATTER: dict[Kind, Scatter] = {
     "electron": Scatter(0.45, 1.20, 0.15, 0.06, 0.0, 0.008),
 }
 
-STRAIN = 0.0015
+STRAIN = 0.001
 """One-sigma of the isotropic strain, alloying or warmth of a listed phase (relative, on d)."""
 
 LISTED_JITTER = 2e-4
@@ -52,7 +52,7 @@ RELATIVE_JITTER = {1: 0.0, 2: 0.0003, 3: 0.0008}
 """Line-by-line scatter left after that (angles, further parameters), by number of free lengths."""
 RELATIVE_INTENSITY = (0.1, 0.6)
 """Extra scatter of ln intensity of a relative: of like atoms, or of others on the same sites."""
-RELATIVE_PRIOR = 0.2
+RELATIVE_PRIOR = 0.15
 """How many unlisted relatives there are for each listed phase."""
 
 ZERO_SHIFT_DEG = 0.02
