@@ -48,12 +48,16 @@ def _trimmed(lines: list[str]) -> list[str]:
 def _place(library: Path) -> Iterator[None]:
     """Work in a folder of its own that sees data/, on a copy of the library."""
     before = Path.cwd()
-    kept = {name: os.environ.get(name) for name in ("PHASEID_LIBRARY", "COLUMNS")}
+    kept = {name: os.environ.get(name) for name in ("PHASEID_LIBRARY", "PHASEID_CONFIG", "COLUMNS")}
     with tempfile.TemporaryDirectory() as folder:
         shutil.copy(library, Path(folder) / "library.sqlite")
         shutil.copytree(ROOT / "data" / "demo", Path(folder) / "data" / "demo")
         shutil.copytree(ROOT / "data" / "starter", Path(folder) / "data" / "starter")
-        os.environ |= {"PHASEID_LIBRARY": "library.sqlite", "COLUMNS": "80"}
+        os.environ |= {
+            "PHASEID_LIBRARY": "library.sqlite",
+            "PHASEID_CONFIG": "config.toml",
+            "COLUMNS": "80",
+        }
         os.chdir(folder)
         try:
             yield

@@ -15,6 +15,9 @@ PAGES = {
     "chemistry": "saying which elements can be there",
     "answer": "reading the answer, and how sure is sure",
     "library": "the structures searched, and how to add your own",
+    "calibrate": "scaling an instrument by a standard",
+    "screen": "what should not be there; telling two phases apart",
+    "settings": "defaults, environment, completion",
 }
 
 

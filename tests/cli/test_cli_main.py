@@ -16,7 +16,10 @@ from phaseid.__main__ import start
 from phaseid.cli import lines, options
 from phaseid.cli.guide import PAGES, page
 
-COMMANDS = ["identify", "lines", "near", "library", "guide"]
+COMMANDS = [
+    *("identify", "lines", "near", "ratio", "screen", "compare", "calibrate"),
+    *("library", "config", "guide"),
+]
 
 
 def _shell(*words: str, **environment: str) -> subprocess.CompletedProcess[str]:
