@@ -129,7 +129,8 @@ def _merged(
     summed = np.add.reduceat(weighted, first, axis=1)
     highest = np.maximum.reduceat(weighted[0], first)[line]
     (strong,) = (weighted[0] >= highest * (1 - 1e-6)).nonzero()
-    strong = strong[(hkl[strong] @ INDEX_CODE).argsort()]  # of equals the one of highest h, k, l
+    if len(strong) > len(first):  # of equals the one of highest h, k, l
+        strong = strong[(hkl[strong] @ INDEX_CODE).argsort()]
     strongest = np.empty_like(first)
     strongest[line[strong]] = strong
     return hkl[strongest], total, inverse_d2[strongest], summed / total

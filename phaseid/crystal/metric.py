@@ -29,11 +29,16 @@ def metric_tensor(cell: Cell) -> NDArray[np.float64]:
 
 @lru_cache(maxsize=64)
 def inverse_metric(cell: Cell) -> NDArray[np.float64]:
-    """Return the reciprocal metric tensor (3, 3) in Å⁻²; it cannot be written to.
+    """Return the reciprocal metric tensor (3, 3) in Å⁻² of a cell that has a volume.
 
-    Raises numpy.linalg.LinAlgError for a cell without volume.
+    It cannot be written to. Raises ZeroDivisionError for a cell without volume.
     """
-    return _kept(np.asarray(np.linalg.inv(metric_tensor(cell)), dtype=np.float64))
+    (aa, ab, ac), (_, bb, bc), (_, _, cc) = metric_tensor(cell).tolist()
+    xx, yy, zz = bb * cc - bc * bc, aa * cc - ac * ac, aa * bb - ab * ab
+    xy, xz, yz = ac * bc - ab * cc, ab * bc - ac * bb, ab * ac - aa * bc
+    v2 = aa * xx + ab * xy + ac * xz
+    rows = ((xx, xy, xz), (xy, yy, yz), (xz, yz, zz))
+    return _kept(np.array([[x / v2 for x in row] for row in rows]))
 
 
 def _cosine(angle_deg: float) -> float:

@@ -28,6 +28,7 @@ _BASE = 4001
 _RANKING = np.array([_BASE**2, _BASE, 1], dtype=np.float64)
 _HEXAGONAL_RANKING = _BASE**3 + _RANKING
 MAX_INDEX = (_BASE - 1) // 4
+_EXPANSIONS_KEPT = 64
 INDEX_CODE = _RANKING
 """The product with hkl is one number per triple up to |index| = 1000, ordered by h, then k, l."""
 
@@ -56,15 +57,23 @@ class Operations:
     products: Ints
     image_map: Floats
     step_map: Floats
-    _cosets: dict[bytes, Ints] = field(default_factory=dict)
+    _expansions: dict[bytes, tuple[Ints, Ints, Ints]] = field(default_factory=dict)
 
-    def cosets(self, stabiliser: NDArray[np.bool_]) -> Ints:
-        """Indices of one operation per distinct image of a site that `stabiliser` (n,) leaves."""
-        key = stabiliser.tobytes()
-        found = self._cosets.get(key)
+    def expansion(self, stabilisers: NDArray[np.bool_]) -> tuple[Ints, Ints, Ints]:
+        """Site and operation (k,) of each distinct image of s sites, and their counts (s,).
+
+        `stabilisers` (s, n) marks the operations that leave each site where it is. What was asked
+        last is kept: crystals of one type ask the same.
+        """
+        key = stabilisers.tobytes()
+        found = self._expansions.get(key)
         if found is None:
-            found = np.unique(self.products[:, stabiliser].min(axis=1))
-            self._cosets[key] = found
+            kept = [np.unique(self.products[:, row].min(axis=1)) for row in stabilisers]
+            counts = np.array([len(k) for k in kept], dtype=np.int64)
+            found = np.repeat(np.arange(len(kept)), counts), np.concatenate(kept), counts
+            if len(self._expansions) >= _EXPANSIONS_KEPT:
+                self._expansions.clear()
+            self._expansions[key] = found
         return found
 
     @property

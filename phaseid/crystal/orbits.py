@@ -47,18 +47,11 @@ def orbits(cell: Cell, operations: Operations, sites: Sequence[Site]) -> Orbits:
         stabiliser = stabiliser | alike[:, n:]
     order = np.add.reduce(alike, axis=1)
     multiplicity = alike.shape[1] * len(operations.centrings) // order
-    images = (fract @ operations.image_map[:3] + operations.image_map[3]).reshape(-1, n, 3)
-    if order.max(initial=1) == 1:
-        site = np.repeat(np.arange(len(sites)), n)
-        operation = np.tile(np.arange(n), len(sites))
-        weight = (occupancy * multiplicity / n)[site]
-        return Orbits(images.reshape(-1, 3), site, operation, weight, multiplicity)
-    kept = [operations.cosets(row) for row in stabiliser]
-    counts = np.array([len(k) for k in kept], dtype=np.int64)
-    operation = np.concatenate(kept)
-    site = np.repeat(np.arange(len(sites)), counts)
+    images = fract @ operations.image_map[:3]
+    images += operations.image_map[3]
+    site, operation, counts = operations.expansion(stabiliser)
     return Orbits(
-        fract=images[site, operation],
+        fract=images.reshape(-1, n, 3)[site, operation],
         site=site,
         operation=operation,
         weight=(occupancy * multiplicity / counts)[site],
@@ -97,7 +90,8 @@ def _settle(fract: Floats, operations: Operations, metric: Floats) -> NDArray[np
 
 def _steps(fract: Floats, operations: Operations, tensor: Floats) -> tuple[Floats, Floats]:
     """Return steps (s, n or 2n, 3) from sites to images, primitive basis, and their squares, Å²."""
-    steps = fract @ operations.step_map[:3] + operations.step_map[3]
+    steps = fract @ operations.step_map[:3]
+    steps += operations.step_map[3]
     steps -= np.rint(steps)
     rows = steps.reshape(-1, 3)
     length2 = np.einsum("ij,ij->i", rows @ tensor, rows).reshape(len(fract), -1)

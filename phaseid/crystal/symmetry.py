@@ -7,6 +7,7 @@ cell unchanged and whose contents fit the stated formula.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field, replace
 from functools import lru_cache
 
@@ -111,31 +112,39 @@ def symmetry_candidates(items: SymmetryItems) -> tuple[Symmetry, ...] | Symmetry
 
 def metric_mismatch(symmetry: Symmetry, cell: Cell) -> float:
     """Return by how much the operations change the cell's metric tensor, relative."""
-    change, entry = _metric_change(symmetry)
-    metric = metric_tensor(cell)
-    lengths = np.sqrt(metric.diagonal())
-    scale = lengths[_ROWS] * lengths[_COLUMNS]
-    return float(np.abs((change @ metric[_ROWS, _COLUMNS]) / scale[entry]).max(initial=0.0))
+    metric = metric_tensor(cell).tolist()
+    entries = [metric[i][j] for i, j in _ENTRIES]
+    scale = [math.sqrt(metric[i][i] * metric[j][j]) for i, j in _ENTRIES]
+    worst = 0.0
+    for entry, terms in _metric_changes(symmetry):
+        change = sum([factor * entries[k] for k, factor in terms])
+        worst = max(worst, abs(change) / scale[entry])
+    return worst
 
 
-_ROWS, _COLUMNS = np.array([[0, 1, 2, 0, 0, 1], [0, 1, 2, 1, 2, 2]])
+_ENTRIES = ((0, 0), (1, 1), (2, 2), (0, 1), (0, 2), (1, 2))
 
 
 @lru_cache(maxsize=1024)
-def _metric_change(symmetry: Symmetry) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
-    """Return by how much operations change a metric tensor, as a linear map of its six entries.
+def _metric_changes(
+    symmetry: Symmetry,
+) -> tuple[tuple[int, tuple[tuple[int, float], ...]], ...]:
+    """Return by how much the operations change a metric tensor, each distinct change once.
 
-    Rows (k, 6), distinct and none zero, and the entry (k,) that each changes.
+    A change is the entry of the tensor, and the (entry, factor) that sum to how much it changes.
     """
+    rows, columns = np.array(_ENTRIES).T
     unit = np.zeros((6, 3, 3))
-    unit[np.arange(6), _ROWS, _COLUMNS] = unit[np.arange(6), _COLUMNS, _ROWS] = 1.0
+    unit[np.arange(6), rows, columns] = unit[np.arange(6), columns, rows] = 1.0
     rotations = symmetry.rotations[:, None]
     changed = rotations.transpose(0, 1, 3, 2) @ unit @ rotations - unit
-    rows = changed[:, :, _ROWS, _COLUMNS].transpose(0, 2, 1).reshape(-1, 6)
-    entries = np.tile(np.arange(6), len(symmetry.rotations))
-    distinct = np.unique(np.column_stack([entries, rows]), axis=0)
-    distinct = distinct[distinct[:, 1:].any(axis=1)]
-    return distinct[:, 1:].copy(), distinct[:, 0].astype(np.int64)
+    factors = changed[:, :, rows, columns].transpose(0, 2, 1).tolist()  # operation, entry, unit
+    found = {
+        (entry, tuple((k, factor) for k, factor in enumerate(row) if factor))
+        for operation in factors
+        for entry, row in enumerate(operation)
+    }
+    return tuple(sorted(change for change in found if change[1]))
 
 
 def fits_cell(symmetry: Symmetry, cell: Cell) -> bool:
