@@ -100,20 +100,21 @@ def multiplicities(
 def place(fract: Floats, occupancy: Floats, maps: AffineMaps, cell: Cell) -> Placed:
     """Put sites (n, 3) of occupancy (n,) onto their special positions and count their images."""
     metric = metric_tensor(cell)
-    multiplicity = np.full(len(fract), len(maps), dtype=np.int64)
-    crowded = np.zeros(len(fract), dtype=np.bool_)
     shift = np.zeros(len(fract))
     if len(maps) == 1:
-        return Placed(fract, multiplicity, shift, crowded)
-    placed = fract.copy()
+        alone = np.zeros(len(fract), dtype=np.bool_)
+        return Placed(fract, np.ones(len(fract), dtype=np.int64), shift, alone)
     step = max(1, _CHUNK // len(maps))
-    for start in range(0, len(fract), step):
-        part = slice(start, start + step)
-        placed[part], multiplicity[part], crowded[part] = _place(
-            fract[part], occupancy[part], maps, metric
-        )
-    moved = placed - fract
-    if moved.any():
+    if len(fract) <= step:
+        placed, multiplicity, crowded = _place(fract, occupancy, maps, metric)
+    else:
+        parts = [
+            _place(fract[start : start + step], occupancy[start : start + step], maps, metric)
+            for start in range(0, len(fract), step)
+        ]
+        placed, multiplicity, crowded = map(np.concatenate, zip(*parts, strict=True))
+    if placed is not fract:
+        moved = placed - fract
         shift = np.sqrt(np.einsum("ij,ij->i", moved @ metric, moved))
     return Placed(placed, multiplicity, shift, crowded)
 
@@ -174,6 +175,8 @@ def _pairs_of_few(fract: Floats, maps: AffineMaps, metric: Floats, within_A: flo
     squared = np.einsum("ij,ij->i", rows @ metric, rows).reshape(len(first), -1)
     nearest = np.minimum.reduce(squared, axis=1)
     (close,) = (nearest < within_A**2).nonzero()
+    if not len(close):
+        return ClosePairs(close, close, np.empty(0))
     return ClosePairs(first[close], second[close], np.sqrt(nearest[close]))
 
 

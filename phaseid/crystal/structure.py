@@ -132,10 +132,11 @@ def _structure(
     fract = np.array([site.fract for site in sites], dtype=np.float64)
     occupancy = np.array([site.occupancy for site in sites])
     placed = place(fract, occupancy, symmetry.maps, cell)
-    if placed.multiplicity.sum() > MAX_ATOMS:
+    counts, furthest_A = placed.multiplicity.tolist(), max(placed.shift_A.tolist())
+    if sum(counts) > MAX_ATOMS:
         return StructureProblem(
             "too_many_sites",
-            f"the cell would hold {placed.multiplicity.sum()} atoms, at most {MAX_ATOMS} are taken",
+            f"the cell would hold {sum(counts)} atoms, at most {MAX_ATOMS} are taken",
         )
     pairs = close_pairs(placed.fract, symmetry.maps, cell, NEIGHBOUR_A)
     if pairs is None:
@@ -144,8 +145,11 @@ def _structure(
     if isinstance(settled, str):
         return StructureProblem("bad_occupancy", settled)
     kept, notes = settled
-    findings = [*symmetry.findings, *_shifts(sites, placed), *notes]
-    moved = [(_moved(sites[i], placed, i), int(placed.multiplicity[i])) for i in kept]
+    shifted = _shifts(sites, placed) if furthest_A > _NOTABLE_SHIFT_A else []
+    findings = [*symmetry.findings, *shifted, *notes]
+    if furthest_A > 0:
+        sites = [_moved(site, placed, i) for i, site in enumerate(sites)]
+    moved = [(sites[i], counts[i]) for i in kept]
     known = [(site, count) for site, count in moved if site.element]
     unknown = [(site, count) for site, count in moved if not site.element]
     contents = _contents(known)
@@ -184,7 +188,7 @@ def _structure(
     agreement = agree(contents, volume, stated)
     merged = any(note.code == "duplicate_sites" for note in notes)
     overlapping = any(note.code == "overlapping_atoms" for note in notes)
-    sound = placed.shift_A.max() < ROUNDING_A and not overlapping
+    sound = furthest_A < ROUNDING_A and not overlapping
     return Structure(
         symmetry,
         tuple(site for site, _ in known),
@@ -212,8 +216,6 @@ def _contents(sites: Sequence[tuple[Site, int]]) -> dict[str, float]:
 
 def _shifts(sites: Sequence[Site], placed: Placed) -> list[Finding]:
     labels = [sites[i].label for i in np.flatnonzero(placed.shift_A > _NOTABLE_SHIFT_A).tolist()]
-    if not labels:
-        return []
     return [
         Finding(
             "special_position",
