@@ -106,7 +106,7 @@ def calibrate(
 
 
 def _standard(names: list[str], temperature_C: float | None, library: Path | None) -> Standard:
-    from phaseid.cli.phases import find_crystal
+    from phaseid.cli.phases import find_crystal, is_file
     from phaseid.matching.standards import (
         find_standard,
         standard_names,
@@ -124,7 +124,7 @@ def _standard(names: list[str], temperature_C: float | None, library: Path | Non
             if not names
             else "Calibrate with one; the rings of the other then check it.",
         )
-    if not Path(names[0]).is_file() and (found := find_standard(names[0], temperature_C)):
+    if not is_file(names[0]) and (found := find_standard(names[0], temperature_C)):
         return found
     phase, crystal = find_crystal(names[0], library)
     return standard_of(phase, temperature_C) or uncertified(phase, crystal, temperature_C)

@@ -32,9 +32,17 @@ def find_in(shelf: Library, text: str) -> tuple[Phase, Crystal]:
     return phase, shelf.crystal(phase.phase_id)
 
 
+def is_file(text: str) -> bool:
+    """Whether a file is called so; a name too long for one is none."""
+    try:
+        return Path(text).is_file()
+    except (OSError, ValueError):
+        return False
+
+
 def _named_file(text: str) -> tuple[Phase, Crystal] | None:
     path = Path(text)
-    if path.is_file():
+    if is_file(text):
         return _from_file(path)
     if path.suffix.lower() in (".cif", ".gz"):
         raise InputError("there is no such file", path=path, remedy="Check the path")

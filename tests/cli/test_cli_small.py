@@ -78,6 +78,7 @@ def test_calibrate_with_any_phase_says_that_it_is_no_standard(phaseid) -> None:
         (("--standard", "Au", "--standard", "Si"), "2 standards"),
         (("--standard", "Si"), "likely"),
         (("--standard", "Auu"), "Auu"),
+        (("--standard", "A" * 300), "no phase called"),
         (("--standard", "TiO2"), "rutile"),
         (("--standard", "Au", "--save", "../x"), "name"),
         (("--standard", "Au", "--across", "1.8 2.5"), "--across"),
