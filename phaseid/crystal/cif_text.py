@@ -39,9 +39,9 @@ class Block:
         self._values: dict[int, list[str]] = {}  # of loops read, by identity
         self._tags = ""  # all tags, each on a line of its own
         for item in block:
-            if item.pair is not None:
-                tag, value = cast("tuple[str, str]", item.pair)
-                self._pairs.setdefault(tag.lower(), value)
+            pair = cast("tuple[str, str] | None", item.pair)
+            if pair is not None:
+                self._pairs.setdefault(pair[0].lower(), pair[1])
                 continue
             loop = item.loop
             if loop is not None:

@@ -66,8 +66,8 @@ def compute_lines(
     found = unique_reflections(crystal.cell, operations, d_min_A)
     f2 = squared_amplitudes(crystal, operations, found, xray_energy_eV)
     hkl, multiplicity, inverse_d2 = found.hkl, found.multiplicity, found.inverse_d2
-    lit = f2.any(axis=0)
-    if not lit.all():
+    if not f2.all():
+        lit = f2.any(axis=0)
         hkl, multiplicity, inverse_d2, f2 = hkl[lit], multiplicity[lit], inverse_d2[lit], f2[:, lit]
     hkl, multiplicity, inverse_d2, f2 = _merged(hkl, multiplicity, inverse_d2, f2)
     return Lines(
