@@ -11,6 +11,9 @@ from phaseid.matching.standard_rings import Plate
 from phaseid.matching.standards import Standard, other_standards
 from phaseid.rings.calibration import Fit, Readings, lay
 
+Others = list[tuple[Standard, Fit | None]]
+"""Every other standard and how it lies on the rings."""
+
 _FITS = 3.0
 """ln evidence from which on the rings are taken as the standard's."""
 _DOUBTFUL, _BETTER = 2.0, 8.0
@@ -25,7 +28,9 @@ def checked(
 ) -> tuple[Fit, list[str]]:
     """Refuse a fit that is none or is one of several; else return it, with remarks on doubts."""
     rings = plate.rings
-    others = list(other_standards(standard, temperature_C))
+    others: Others = []
+    if _suspicious(fit, plate, standard):
+        others = [(o, plate.lay(o)) for o in other_standards(standard, temperature_C)]
     fits_all = fit is not None and len(fit.used) == len(rings)
     few = len(rings) < _FEW and fits_all
     if few and not plate.known and fit is not None and fit.log_evidence < _FITS:
@@ -66,6 +71,16 @@ def checked(
     return fit, remarks
 
 
+def _suspicious(fit: Fit | None, plate: Plate, standard: Standard) -> bool:
+    """Whether anything is wrong enough to look at other standards."""
+    if fit is None or fit.log_evidence < _FITS or len(fit.used) < len(plate.rings):
+        return True
+    intensity = plate.lines(standard).intensity
+    if any(intensity[j] > _STRONG for j in fit.missing):
+        return True
+    return plate.known and abs(fit.shift) > 3.0 * hypot(plate.rings.probe.scale_sigma, fit.sigma)
+
+
 def _several_ways(fit: Fit, plate: Plate, standard: Standard) -> InputError:
     ways = ", ".join(
         f"{_constant_text(plate, shift)} ({weight:.0%})"
@@ -102,17 +117,14 @@ def _shortcoming(fit: Fit, plate: Plate, standard: Standard) -> str:
     return said
 
 
-def _likely(
-    plate: Plate, others: list[Standard], at_least: float, used: set[int] | None = None
-) -> str:
+def _likely(plate: Plate, others: Others, at_least: float, used: set[int] | None = None) -> str:
     """Which other standard fits, in words; empty where none does.
 
     `used` are rings that it has to explain too: rings of another standard on the same plate are no
     reason to doubt this one.
     """
     found = []
-    for other in others:
-        fit = plate.lay(other)
+    for other, fit in others:
         if fit is None or fit.log_evidence < max(at_least, _FITS):
             continue
         if used is None or used <= set(fit.used.tolist()):
@@ -125,14 +137,13 @@ def _likely(
     return f"; likely {' or '.join(names)}, {fitting} {found[0][2]} of {len(plate.rings)}"
 
 
-def _other_scale(fit: Fit, plate: Plate, others: list[Standard]) -> list[str]:
+def _other_scale(fit: Fit, plate: Plate, others: Others) -> list[str]:
     """Note a factor that the stated scale does not allow, and the standards that it would."""
     allowed = hypot(plate.rings.probe.scale_sigma, fit.sigma)
     if abs(fit.shift) < 3.0 * allowed:
         return []
     hints = []
-    for other in others:
-        found = plate.lay(other)
+    for other, found in others:
         if found is None or len(found.used) < len(fit.used):
             continue
         if abs(found.shift) < 2.0 * allowed:
@@ -146,7 +157,7 @@ def _other_scale(fit: Fit, plate: Plate, others: list[Standard]) -> list[str]:
     ]
 
 
-def _second_standard(fit: Fit, plate: Plate, others: list[Standard]) -> list[str]:
+def _second_standard(fit: Fit, plate: Plate, others: Others) -> list[str]:
     """Note a further standard among the rejected rings."""
     left = np.flatnonzero(fit.line < 0)
     if len(left) < 3:
@@ -160,7 +171,7 @@ def _second_standard(fit: Fit, plate: Plate, others: list[Standard]) -> list[str
         sigma_stated=readings.sigma_stated,
     )
     remarks = []
-    for other in others:
+    for other, _ in others:
         found = lay(rest, plate.lines(other))
         if found is not None and found.log_evidence > _FITS + 2.0 and len(found.used) >= 3:
             shown = ", ".join(str(left[i] + 1) for i in found.used)

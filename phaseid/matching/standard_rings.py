@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import contextlib
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 
 import numpy as np
@@ -27,6 +27,7 @@ class Plate:
 
     rings: RingList
     known: bool
+    _lines: dict[str, ReferenceLines] = field(default_factory=dict, compare=False, repr=False)
 
     @cached_property
     def column(self) -> Column:
@@ -59,6 +60,11 @@ class Plate:
         On a plate at large angles x is that of the spacing which the small-angle form would read.
         Raises InputError where the probe shows none.
         """
+        if standard.label not in self._lines:
+            self._lines[standard.label] = self._shown(standard)
+        return self._lines[standard.label]
+
+    def _shown(self, standard: Standard) -> ReferenceLines:
         probe = self.rings.probe
         lines = standard.lines(probe)
         if self.tangent:
