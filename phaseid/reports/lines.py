@@ -107,7 +107,9 @@ def lines_dict(shown: LineList) -> dict[str, Any]:
     """Return the object that `phaseid lines --json` prints: every line the probe can reach."""
     lines, probe = shown.lines, shown.probe
     f2, intensity = probe.f2(lines), shown.intensity()
-    two_theta_deg = two_theta_from_d(lines.d_A, probe.wavelength_A)
+    two_theta_deg = None
+    if probe.geometry != "time-of-flight":  # there the angle is the instrument's, the same for all
+        two_theta_deg = two_theta_from_d(lines.d_A, probe.wavelength_A)
     return {
         "schema": SCHEMA,
         "phase": phase_dict(shown.phase),
@@ -123,7 +125,7 @@ def lines_dict(shown: LineList) -> dict[str, Any]:
                 "d_A": float(lines.d_A[k]),
                 "g_inv_A": g_from_d(float(lines.d_A[k])),
                 "q_inv_A": q_from_d(float(lines.d_A[k])),
-                "two_theta_deg": float(two_theta_deg[k]),
+                "two_theta_deg": None if two_theta_deg is None else float(two_theta_deg[k]),
                 "radius": _radius(shown, float(lines.d_A[k])),
                 "multiplicity": int(lines.multiplicity[k]),
                 "f2": float(f2[k]),
@@ -154,10 +156,11 @@ def lines_text(shown: LineList, width: int = 80) -> str:
     reached, intensity = shown.reached(), shown.intensity()
     strong = [k for k in reached if intensity[k] >= WEAKEST_SHOWN]
     page = [*_heading(shown, width), "", *_table(shown, strong, intensity, width)]
-    weak = len(reached) - len(strong)
-    if weak:
-        left_out = f"Weaker than {WEAKEST_SHOWN} of 100 and left out: {weak}."
-        page += ["", *wrap(left_out, width, indent="")]
+    range_A = max(shown.lines.complete_to_A, shown.probe.d_min_A)
+    said = f"Complete down to {range_A:.4g} Å"
+    if len(reached) > len(strong):
+        said += f"; {len(reached) - len(strong)} weaker than {WEAKEST_SHOWN} of 100 are left out"
+    page += ["", *wrap(f"{said}.", width, indent="")]
     page += [*_forbidden(shown, width), *_ghosts(shown, width)]
     if shown.phase.findings:
         page += ["", *wrap("What to know of this structure:", width, indent="")]
@@ -221,10 +224,13 @@ def _table(
                 f"{f2[k]:.5g}",
             ]
         )
-    if width < _WIDE:  # q says nothing that 1/d does not
-        del columns[3]
+    dropped = [3] if width < _WIDE else []  # q says nothing that 1/d does not
+    if shown.probe.geometry == "time-of-flight" and not unit:
+        dropped.insert(0, 4)
+    for column in dropped:
+        del columns[column]
         for row in rows:
-            del row[3]
+            del row[column]
     return table(columns, rows, width)
 
 

@@ -62,6 +62,24 @@ def test_q_is_two_pi_over_d(phaseid) -> None:
         assert line["radius"] is None
 
 
+def test_a_white_beam_has_spacings_and_no_angles(phaseid) -> None:
+    """Time of flight: intensity m|F|²d⁴ (Buras & Gerward 1975, Acta Cryst. A31, 372)."""
+    words = ("lines", "Si", "--probe", "neutron tof")
+    value = phaseid(*words, "--json").json("lines-1")
+    weights = [line["multiplicity"] * line["f2"] * line["d_A"] ** 4 for line in value["lines"]]
+    for line, weight in zip(value["lines"], weights, strict=True):
+        assert line["two_theta_deg"] is None
+        assert line["intensity"] == pytest.approx(100 * weight / max(weights), rel=1e-9)
+    assert "2θ" not in phaseid(*words).out
+
+
+def test_the_page_says_how_far_it_goes(phaseid) -> None:
+    assert "Complete down to 1.5 Å." in phaseid("lines", "Si", "--d-min", "1.5").out
+    whole = phaseid("lines", "corundum", *ELECTRONS[:2]).out
+    assert "Complete down to 0.6 Å; " in whole
+    assert "are left out" in whole
+
+
 def test_double_diffraction_is_listed_for_electrons_alone(phaseid) -> None:
     """200 of silicon (Hirsch et al. 1965, Electron Microscopy of Thin Crystals, from memory)."""
     value = phaseid("lines", "Si", *ELECTRONS).json("lines-1")
