@@ -57,7 +57,7 @@ def weigh(search: Search) -> Standing:
     outside = [log(UNLISTED_PRIOR) + nothing_listed(search.model)]
     relatives: list[tuple[float, Loosened]] = []
     flavour = log(RELATIVE_PRIOR / len(RELATIVE_INTENSITY))
-    for loose in search.relatives(near + distant):
+    for loose in search.relatives([*near, *distant]):
         value = loose.log_likelihood + search.prior_of(loose.members) + flavour
         rest = loose.members[: loose.which] + loose.members[loose.which + 1 :]
         if rest in weights:

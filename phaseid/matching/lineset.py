@@ -76,8 +76,10 @@ def gather(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Lin
 
     keep = relative > BELOW_LIMIT * np.exp(pattern.ln_limit)
     rows, owner, x, relative = rows[keep], owner[keep], x[keep], np.minimum(relative[keep], 50.0)
+    visible = _visible(owner, x, relative, pattern)
     order = np.lexsort((-relative, owner))
     rows, owner, x, relative = rows[order], owner[order], x[order], relative[order]
+    visible = visible[order]
     starts = np.searchsorted(owner, np.arange(count))
     rank = np.arange(len(owner)) - starts[owner]
     top = rank < MOST_LINES
@@ -89,11 +91,13 @@ def gather(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Lin
     padded_x[owner[top], rank[top]] = x[top]
     padded_i[owner[top], rank[top]] = relative[top]
     padded_row[owner[top], rank[top]] = rows[top]
+    padded_v = np.zeros((count, width))
+    padded_v[owner[top], rank[top]] = visible[top]
     return LineSet(
         x=padded_x,
         intensity=padded_i,
         row=padded_row,
-        visible=_merge_neighbours(padded_x, padded_i, pattern),
+        visible=padded_v,
         strength=strongest / table.volume_A3[phases] ** 2,
         complete=np.log(table.complete_to_A[phases]),
     )
@@ -114,8 +118,7 @@ def _join(
     rows, owner, x, intensity = rows[shown], owner[shown], x[shown], intensity[shown]
     if len(rows) == 0:
         return rows, owner, x, intensity
-    cell = np.floor(_CELLS * pattern.resolved(x)).astype(np.int64)
-    first = np.flatnonzero(np.append(True, (np.diff(owner) != 0) | (np.diff(cell) != 0)))
+    first = _starts(owner, np.floor(_CELLS * pattern.resolved(x)))
     total = np.add.reduceat(intensity, first)
     centre = np.add.reduceat(x * intensity, first) / total
     group = np.repeat(np.arange(len(first)), np.diff(np.append(first, len(x))))
@@ -123,23 +126,20 @@ def _join(
     return rows[order[first]], owner[first], centre, total
 
 
-def _merge_neighbours(x: Floats, intensity: Floats, pattern: Pattern) -> Floats:
-    """Give each line the intensity of the weaker ones within the resolution; zero those."""
-    finite = np.where(np.isfinite(x), x, 0.0)
-    nearest = np.clip(np.searchsorted(pattern.x, finite), 0, len(pattern) - 1)
-    reach = np.maximum(pattern.resolution[nearest], 1e-4)
-    visible = intensity.copy()
-    # strongest first, so a line is absorbed by the first stronger one that is close enough
-    for j in range(1, x.shape[1]):
-        with np.errstate(invalid="ignore"):
-            close = (np.abs(x[:, :j] - x[:, j : j + 1]) < reach[:, j : j + 1]) & (
-                visible[:, :j] > 0
-            )
-        absorbed = close.any(axis=1) & (intensity[:, j] > 0)
-        into = np.argmax(close, axis=1)
-        visible[absorbed, into[absorbed]] += visible[absorbed, j]
-        visible[absorbed, j] = 0.0
+def _visible(owner: NDArray[np.int64], x: Floats, intensity: Floats, pattern: Pattern) -> Floats:
+    """Give the strongest line of each resolution cell the cell's whole intensity, the others 0."""
+    visible = np.zeros(len(x))
+    if len(x):
+        first = _starts(owner, np.floor(pattern.resolved(x)))
+        group = np.repeat(np.arange(len(first)), np.diff(np.append(first, len(x))))
+        strongest = np.lexsort((-intensity, group))[first]
+        visible[strongest] = np.add.reduceat(intensity, first)
     return visible
+
+
+def _starts(owner: NDArray[np.int64], cell: Floats) -> NDArray[np.int64]:
+    """Where a new phase or a new cell begins, in lines sorted by phase and falling d."""
+    return np.flatnonzero(np.append(True, (np.diff(owner) != 0) | (np.diff(cell) != 0)))
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -6,7 +6,7 @@ later phases: a ring already explained may be shared, it is just no longer worth
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass, field
 from math import lgamma, log
 
@@ -31,10 +31,10 @@ from phaseid.matching.settings import (
 Members = tuple[int, ...]
 
 _SINGLES = 240
-_BASES = {1: 24, 2: 14, 3: 8}
-_ADDITIONS = {1: 40, 2: 30, 3: 20}
-_EXCHANGED = 6
-_EXCHANGE_WIDTH = 40
+_BASES = {1: 16, 2: 10, 3: 6}
+_ADDITIONS = {1: 30, 2: 24, 3: 16}
+_EXCHANGED = 4
+_EXCHANGE_WIDTH = 30
 _BATCH_CELLS = 150_000
 
 
@@ -42,12 +42,26 @@ _BATCH_CELLS = 150_000
 class Judged:
     """One set of phases, judged. `log_posterior` is unnormalised; `offset` (k, K).
 
+    `scale`, `scale_sd` (K,) are the common shift of each pattern; `claimed` (m,) per pattern the
+    rings explained.
+
     A set of which a phase makes no ring is no answer: its log_posterior is -inf.
     """
 
     members: Members
     log_likelihood: float
     log_posterior: float
+    offset: Floats
+    scale: Floats
+    scale_sd: Floats
+    claimed: tuple[NDArray[np.bool_], ...]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Start:
+    """A set of phases to begin from, with a guess of its shifts (k, K)."""
+
+    members: Members
     offset: Floats
 
 
@@ -124,7 +138,13 @@ class Search:
                 value = float(fit.log_likelihood[row])
                 prior = self.prior_of(keys[index]) if fit.shows[row] else -np.inf
                 self.judged[keys[index]] = Judged(
-                    keys[index], value, value + prior, fit.offset[row]
+                    members=keys[index],
+                    log_likelihood=value,
+                    log_posterior=value + prior,
+                    offset=fit.offset[row],
+                    scale=fit.scale[row],
+                    scale_sd=fit.scale_sd[row],
+                    claimed=tuple(part.claimed[row] for part in fit.patterns),
                 )
 
     def _singles(self) -> None:
@@ -173,18 +193,16 @@ class Search:
 
     def _additions(self, base: Judged, count: int) -> list[tuple[Members, Floats]]:
         """Sets made of `base` and one more phase that may explain what it leaves."""
-        members = np.array([base.members], dtype=np.int64)
-        fit = evaluate(self.model, members, base.offset[None])
         total: Floats = np.zeros(len(self.log_prior))
         shifts = []
         wanted_any = False
         for i, (pattern, lines) in enumerate(
             zip(self.model.patterns, self.model.lines, strict=True)
         ):
-            wanted = ~fit.patterns[i].claimed[0]
+            wanted = ~base.claimed[i]
             wanted_any = wanted_any or bool(wanted.any())
-            centre = float(fit.scale[0, i])
-            spread = float(np.hypot(fit.scale_sd[0, i], 1.5 * STRAIN))
+            centre = float(base.scale[i])
+            spread = float(np.hypot(base.scale_sd[i], 1.5 * STRAIN))
             ruler = make_ruler(pattern, centre=centre, reach=3.0 * spread, wanted=wanted)
             known = wanted & np.isfinite(pattern.intensity_sd)
             strongest = float(pattern.ln_intensity[known].max()) if known.any() else 0.0
@@ -209,14 +227,14 @@ class Search:
             j for j in self.ranked() if np.isfinite(j.log_posterior) and self.accepts(j.members)
         ]
 
-    def relatives(self, sets: list[Judged]) -> list[Loosened]:
+    def relatives(self, sets: Sequence[Start | Judged]) -> list[Loosened]:
         """Unlisted relatives of members of `sets`.
 
         Each member of each set in turn is let loose: another cell of the same structure type, with
         like atoms and with others, each flavour an entry of its own.
         """
         found = []
-        by_size: dict[int, list[tuple[Judged, int]]] = {}
+        by_size: dict[int, list[tuple[Start | Judged, int]]] = {}
         for judged in sets:
             for which in range(len(judged.members)):
                 by_size.setdefault(len(judged.members), []).append((judged, which))
@@ -266,7 +284,7 @@ class Search:
             )
         return self.levers[candidate]
 
-    def distant_relatives(self, count: int) -> list[Judged]:
+    def distant_relatives(self, count: int) -> list[Start]:
         """Single phases whose pattern fits at a shift the scale does not allow, to start from."""
         total: Floats = np.zeros(len(self.log_prior))
         shifts = []
@@ -279,10 +297,7 @@ class Search:
             total = total + score
             shifts.append(shift)
         offsets = np.stack(shifts, axis=1)
-        return [
-            Judged((int(c),), 0.0, 0.0, offsets[c : c + 1])
-            for c in _top(total + self.log_prior, count)
-        ]
+        return [Start((int(c),), offsets[c : c + 1]) for c in _top(total + self.log_prior, count)]
 
 
 def evaluate_in_batches(
