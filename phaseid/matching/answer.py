@@ -27,7 +27,8 @@ from phaseid.matching.shares import weight_shares
 from phaseid.probes.probe import Probe
 
 _LOG_ODDS_LIMIT = 50.0
-_MISSING_CHANCE = 0.7
+_MISSING_CHANCE = 0.75
+_MISSING_LEAST = 0.05
 _OWN_RING = 0.7
 """A ring counts for a phase's cell where that phase, by one line, makes up so much of it."""
 
@@ -163,7 +164,9 @@ def _assign(
                     hkl=_hkl(table, row),
                     d_calc_A=d_calc,
                     residual_sigma=float(residual),
-                    relative_intensity=float(_relative_intensity(model, judged, index, k)[best]),
+                    relative_intensity=min(
+                        100.0, float(_relative_intensity(model, judged, index, k)[best])
+                    ),
                 )
             )
     return sorted(found, key=lambda a: a.ring)
@@ -180,7 +183,8 @@ def _missing(
         chance = 1.0 / (1.0 + np.exp(-DETECTION_SLOPE * (np.log(shown) - pattern.ln_limit)))
         x = lines.x[candidate] + judged.offset[k, index]
         inside = (x > pattern.x[0] - 0.004) & (x < pattern.x[-1] + 0.004)
-        for j in np.flatnonzero((chance > _MISSING_CHANCE) & inside):
+        strong = lines.intensity[candidate] > _MISSING_LEAST
+        for j in np.flatnonzero((chance > _MISSING_CHANCE) & inside & strong):
             row = int(lines.row[candidate, j])
             found.append(
                 Missing(
@@ -188,7 +192,7 @@ def _missing(
                     phase=k,
                     hkl=_hkl(table, row),
                     d_calc_A=float(table.d_A[row]),
-                    relative_intensity=float(100.0 * lines.visible[candidate, j]),
+                    relative_intensity=min(100.0, 100.0 * float(lines.intensity[candidate, j])),
                 )
             )
     return found

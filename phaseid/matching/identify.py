@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import replace
+from math import log
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,6 +36,9 @@ _SURE = 0.9
 _NOTHING = 0.5
 _SHOWN_TYPES = 3
 _TYPE_PROBABILITY = 0.02
+_SAME_TYPE = 0.01
+"""Two relatives of one group whose edges agree to this (ln) are one structure type."""
+_SETS_TRIED = 2000
 
 
 def identify(
@@ -55,6 +59,11 @@ def identify(
     first = tables[patterns[0].probe.kind]
     elements = first.elements
     allowed = np.array([i for i, e in enumerate(elements) if chemistry.admits(e)], dtype=np.int64)
+    if len(first) == 0:
+        raise InputError(
+            f"the library {library.path} holds no phases",
+            remedy="Add structures with `phaseid library add`, or `phaseid library add --starter`.",
+        )
     if len(allowed) == 0:
         raise InputError(
             f"none of the library's {len(first)} phases is allowed by the chemistry given",
@@ -75,6 +84,7 @@ def identify(
         tables=own,
         phases=allowed,
         accepts=lambda members: chemistry.satisfied_by([sets[i] for i in members]),
+        rarity=_rarity(chemistry, sets, max_phases),
     )
     search.run()
     standing = weigh(search)
@@ -87,7 +97,7 @@ def identify(
         hypotheses=hypotheses,
         unlisted_probability=standing.unlisted,
         library=LibraryStamp(str(library.path), len(library), library.digest),
-        remarks=_remarks(patterns, chemistry),
+        remarks=_remarks(patterns, chemistry, hypotheses),
         cautions=_cautions(hypotheses),
         type_matches=_type_matches(standing, phase_of, listed),
     )
@@ -96,6 +106,13 @@ def identify(
 def _check(patterns: Sequence[RingList], max_phases: int, top: int) -> None:
     if not patterns or any(len(p) == 0 for p in patterns):
         raise InputError("there are no rings to identify", remedy="Give at least one spacing.")
+    for i, one in enumerate(patterns):
+        for other in patterns[:i]:
+            if _same(one, other):
+                raise InputError(
+                    f"two of the patterns are the same list of rings ({one.title or one.source})",
+                    remedy="Give each measurement once.",
+                )
     if not 1 <= max_phases <= len(PHASE_COUNT_PRIOR):
         raise InputError(
             f"--max-phases {max_phases} is out of range",
@@ -103,6 +120,34 @@ def _check(patterns: Sequence[RingList], max_phases: int, top: int) -> None:
         )
     if top < 1:
         raise InputError(f"--top {top} is out of range", remedy="Give 1 or more.")
+
+
+def _same(one: RingList, other: RingList) -> bool:
+    return (
+        one.probe.label == other.probe.label
+        and np.array_equal(one.position, other.position)
+        and np.array_equal(one.intensity, other.intensity, equal_nan=True)
+    )
+
+
+def _rarity(chemistry: Chemistry, elements: list[frozenset[str]], most: int) -> tuple[float, ...]:
+    """ln of the share of random sets of one, two, … phases that hold the required elements.
+
+    What is not listed is as rarely right in its elements: without this, requiring elements would
+    speak for an unlisted phase.
+    """
+    if not chemistry.must:
+        return (0.0,) * most
+    random = np.random.default_rng(0)
+    least = 1.0 / (len(elements) + 1.0)
+    shares = []
+    for size in range(1, most + 1):
+        picks = random.integers(0, len(elements), (_SETS_TRIED, size))
+        hits = float(sum(chemistry.satisfied_by([elements[i] for i in row]) for row in picks))
+        if size == 1:
+            hits = _SETS_TRIED * sum(chemistry.must <= e for e in elements) / len(elements)
+        shares.append(log(max(hits / _SETS_TRIED, least)))
+    return tuple(shares)
 
 
 def _log_prior(table: LineTable, allowed: NDArray[np.int64]) -> NDArray[np.float64]:
@@ -192,11 +237,14 @@ def _verdict(hypotheses: tuple[Hypothesis, ...], listed: float) -> Verdict:
     return "no-match" if listed < _NOTHING else "ambiguous"
 
 
-def _remarks(patterns: Sequence[RingList], chemistry: Chemistry) -> tuple[str, ...]:
+def _remarks(
+    patterns: Sequence[RingList], chemistry: Chemistry, hypotheses: tuple[Hypothesis, ...]
+) -> tuple[str, ...]:
     remarks = [remark for rings in patterns for remark in rings.remarks]
     if chemistry.describe():
         remarks.append(chemistry.describe())
-    if any(p.probe.kind == "electron" for p in patterns):
+    mixed = any(len(h.phases) > 1 for h in hypotheses)
+    if mixed and any(p.probe.kind == "electron" for p in patterns):
         remarks.append(
             "Electron ring intensities are too uneven for shares by weight; "
             "none are taken from them."
@@ -219,12 +267,16 @@ def _type_matches(standing: Standing, phase_of: _Phases, listed: float) -> tuple
     """Structure types whose ratios fit with another cell, where nothing listed is sure."""
     if listed >= _SURE:
         return ()
-    found = []
-    for relative in standing.relatives[:_SHOWN_TYPES]:
-        if relative.probability < _TYPE_PROBABILITY:
+    found: list[TypeMatch] = []
+    seen: list[tuple[int, float]] = []
+    for relative in standing.relatives:
+        if relative.probability < _TYPE_PROBABILITY or len(found) == _SHOWN_TYPES:
             continue
         like = phase_of(relative.phase)
         a = like.cell[0] * float(np.exp(relative.strain))
+        if any(like.space_group_number == n and abs(log(a / b)) < _SAME_TYPE for n, b in seen):
+            continue
+        seen.append((like.space_group_number, a))
         found.append(
             TypeMatch(
                 type_name=f"{like.name} type",

@@ -106,9 +106,9 @@ class Looseness:
     """How far each phase may stray from its listed structure: (b, k) arrays.
 
     `strain` one-sigma of its isotropic strain; `jitter` line-by-line scatter in ln d; `spread`
-    extra one-sigma of ln intensity. A listed phase has (STRAIN, LISTED_JITTER, 0). `axial`, per pattern
-    (b, k, n, 3), is the shift in ln d of each line for one sigma of each of three independent axial
-    strains; None where no phase has any.
+    extra one-sigma of ln intensity. A listed phase has (STRAIN, LISTED_JITTER, 0). `axial`, per
+    pattern (b, k, n, 3), is the shift in ln d of each line for one sigma of each of three
+    independent axial strains; None where no phase has any.
     """
 
     strain: Floats

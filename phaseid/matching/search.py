@@ -86,7 +86,7 @@ class Search:
     `log_prior` (c,) is ln of each phase's share of the prior, summing to one over the candidates.
     `tables` one line table per pattern; `phases` (c,) the table's index of each candidate.
     `accepts` says whether a set of candidates may be an answer (required elements); sets it refuses
-    are still built upon.
+    are still built upon; `rarity` is ln of the share of sets of each size that it accepts.
     """
 
     model: Model
@@ -95,6 +95,7 @@ class Search:
     tables: tuple[LineTable, ...]
     phases: NDArray[np.int64]
     accepts: Callable[[Members], bool] = field(default=lambda members: True)
+    rarity: tuple[float, ...] = ()
     judged: dict[Members, Judged] = field(default_factory=dict)
     levers: dict[int, tuple[Levers, ...]] = field(default_factory=dict)
 
@@ -114,6 +115,8 @@ class Search:
         """ln prior of exactly these listed phases."""
         k = len(members)
         total = log(PHASE_COUNT_PRIOR[k - 1]) + log(1.0 - UNLISTED_PRIOR) + lgamma(k + 1.0)
+        if self.rarity and self.accepts(members):
+            total -= self.rarity[k - 1]
         return total + float(self.log_prior[list(members)].sum())
 
     def spread(self, pattern_index: int, strain: float) -> float:

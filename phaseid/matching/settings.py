@@ -70,8 +70,8 @@ SCATTER_INFLATION = ((1.0, 0.75), (1.9, 0.25))
 """(factor, prior): intensities of a specimen may stray more than its probe's usual (texture)."""
 
 TREND_SD = 0.8
-"""One-sigma (Å²) of a trend of ln intensity with 1/2d²: displacement unlike the file's, peak heights
-for areas, absorption. Published sheets need up to about 1."""
+"""One-sigma (Å²) of a trend of ln intensity with 1/2d²: displacement unlike the file's, heights for
+areas, absorption. Published sheets need up to about 1."""
 
 DETECTION_SLOPE = 2.6
 """Slope of the logistic chance of seeing a line against ln(intensity / limit)."""
