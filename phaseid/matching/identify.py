@@ -17,6 +17,7 @@ from phaseid.matching.answer import build_hypothesis
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.confidence import Standing, weigh
 from phaseid.matching.crowd import crowd
+from phaseid.matching.dispersion import at_own_energy, needs_own_energy
 from phaseid.matching.groups import indistinguishable, pairing, rivals_of
 from phaseid.matching.identification import (
     Hypothesis,
@@ -33,6 +34,8 @@ from phaseid.matching.settings import PHASE_COUNT_PRIOR
 from phaseid.rings.ringlist import RingList
 
 _SURE = 0.9
+_SETS_AT_OWN_ENERGY = 60
+"""The best sets whose phases get f′ and f″ at the X-ray energy, where it is not Cu Kα's."""
 _NOTHING = 0.5
 _SHOWN_TYPES = 3
 _TYPE_PROBABILITY = 0.02
@@ -70,26 +73,20 @@ def identify(
             remedy="Allow more elements with --only, or exclude fewer with --not.",
         )
     own = tuple(tables[p.probe.kind] for p in patterns)
-    prepared = prepare_all(patterns)
-    model = Model(
-        patterns=tuple(prepared),
-        lines=tuple(gather(t, allowed, p) for t, p in zip(own, prepared, strict=True)),
-        crowd=tuple(crowd(t, allowed, p) for t, p in zip(own, prepared, strict=True)),
-    )
-    sets = [elements[i] for i in allowed]
-    search = Search(
-        model,
-        log_prior=_log_prior(first, allowed),
-        max_phases=min(max_phases, len(allowed)),
-        tables=own,
-        phases=allowed,
-        accepts=lambda members: chemistry.satisfied_by([sets[i] for i in members]),
-        rarity=_rarity(chemistry, sets, max_phases),
-    )
-    search.run()
+    search = _search(patterns, own, allowed, chemistry, max_phases)
+    if any(needs_own_energy(p.probe) for p in patterns):
+        best = search.ranked()[:_SETS_AT_OWN_ENERGY]
+        phases = sorted({int(allowed[i]) for judged in best for i in judged.members})
+        own = tuple(
+            at_own_energy(library, table, phases, rings.probe)
+            if needs_own_energy(rings.probe)
+            else table
+            for table, rings in zip(own, patterns, strict=True)
+        )
+        search = _search(patterns, own, allowed, chemistry, max_phases)
     standing = weigh(search)
     phase_of = _Phases(library, first, allowed)
-    hypotheses = _hypotheses(model, own, standing, phase_of, top)
+    hypotheses = _hypotheses(search.model, own, standing, phase_of, top)
     listed = 1.0 - standing.unlisted
     return Identification(
         verdict=_verdict(hypotheses, listed),
@@ -101,6 +98,36 @@ def identify(
         cautions=_cautions(hypotheses),
         type_matches=_type_matches(standing, phase_of, listed),
     )
+
+
+def _search(
+    patterns: Sequence[RingList],
+    tables: tuple[LineTable, ...],
+    allowed: NDArray[np.int64],
+    chemistry: Chemistry,
+    max_phases: int,
+) -> Search:
+    """Search the allowed phases of the tables, one table per pattern."""
+    prepared = prepare_all(patterns)
+    pairs = list(zip(tables, prepared, strict=True))
+    model = Model(
+        patterns=tuple(prepared),
+        lines=tuple(gather(table, allowed, pattern) for table, pattern in pairs),
+        crowd=tuple(crowd(table, allowed, pattern) for table, pattern in pairs),
+    )
+    elements = tables[0].elements
+    sets = [elements[i] for i in allowed]
+    search = Search(
+        model,
+        log_prior=_log_prior(tables[0], allowed),
+        max_phases=min(max_phases, len(allowed)),
+        tables=tables,
+        phases=allowed,
+        accepts=lambda members: chemistry.satisfied_by([sets[i] for i in members]),
+        rarity=_rarity(chemistry, sets, max_phases),
+    )
+    search.run()
+    return search
 
 
 def _check(patterns: Sequence[RingList], max_phases: int, top: int) -> None:
