@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from phaseid.crystal.crystal import Site
-from phaseid.crystal.metric import Cell, metric_tensor
+from phaseid.crystal.metric import Cell, metric_tensor, squares
 from phaseid.crystal.operations import Operations
 
 Floats = NDArray[np.float64]
@@ -93,6 +93,5 @@ def _steps(fract: Floats, operations: Operations, tensor: Floats) -> tuple[Float
     steps = fract @ operations.step_map[:3]
     steps += operations.step_map[3]
     steps -= np.rint(steps)
-    rows = steps.reshape(-1, 3)
-    length2 = np.einsum("ij,ij->i", rows @ tensor, rows).reshape(len(fract), -1)
+    length2 = squares(steps.reshape(-1, 3), tensor).reshape(len(fract), -1)
     return steps.reshape(len(fract), -1, 3), length2

@@ -16,7 +16,7 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
-from phaseid.crystal.metric import Cell, metric_tensor
+from phaseid.crystal.metric import Cell, metric_tensor, squares
 
 ROUNDING_A = 0.1
 SPLIT_A = 0.5
@@ -115,7 +115,7 @@ def place(fract: Floats, occupancy: Floats, maps: AffineMaps, cell: Cell) -> Pla
         placed, multiplicity, crowded = map(np.concatenate, zip(*parts, strict=True))
     if placed is not fract:
         moved = placed - fract
-        shift = np.sqrt(np.einsum("ij,ij->i", moved @ metric, moved))
+        shift = np.sqrt(squares(moved, metric))
     return Placed(placed, multiplicity, shift, crowded)
 
 
@@ -138,7 +138,7 @@ def close_pairs(fract: Floats, maps: AffineMaps, cell: Cell, within_A: float) ->
     owner = np.repeat(np.arange(n), len(maps))[order]
     images = images[order]
     pairs: list[NDArray[np.int64]] = [np.empty(0, dtype=np.int64)]
-    squares: list[Floats] = [np.empty(0)]
+    found: list[Floats] = [np.empty(0)]
     held = 0
     for start, stop in _runs(high - low):
         lengths = (high - low)[start:stop]
@@ -149,14 +149,14 @@ def close_pairs(fract: Floats, maps: AffineMaps, cell: Cell, within_A: float) ->
         site, image = site[keep], image[keep]
         delta = images[image] - fract[site]
         delta -= np.round(delta)
-        squared = ((delta @ metric) * delta).sum(axis=1)
+        squared = squares(delta, metric)
         close = squared < within_A**2
         pairs.append(site[close] * n + owner[image[close]])
-        squares.append(squared[close])
+        found.append(squared[close])
         held += len(pairs[-1])
         if held > len(maps) * _MAX_PAIRS_PER_SITE * n:
             return None
-    pair, squared = np.concatenate(pairs), np.concatenate(squares)
+    pair, squared = np.concatenate(pairs), np.concatenate(found)
     nearest = np.lexsort((squared, pair))
     pair, first = np.unique(pair[nearest], return_index=True)
     if len(pair) > _MAX_PAIRS_PER_SITE * n:
@@ -171,8 +171,7 @@ def _pairs_of_few(fract: Floats, maps: AffineMaps, metric: Floats, within_A: flo
         return ClosePairs(first, second, np.empty(0))
     delta = _images(fract, maps)[second] - fract[first, None]
     delta -= np.rint(delta)
-    rows = delta.reshape(-1, 3)
-    squared = np.einsum("ij,ij->i", rows @ metric, rows).reshape(len(first), -1)
+    squared = squares(delta.reshape(-1, 3), metric).reshape(len(first), -1)
     nearest = np.minimum.reduce(squared, axis=1)
     (close,) = (nearest < within_A**2).nonzero()
     if not len(close):
@@ -232,8 +231,7 @@ def _steps(fract: Floats, maps: AffineMaps, metric: Floats) -> tuple[Floats, Flo
     steps = fract @ maps.steps[:3]
     steps += maps.steps[3]
     steps -= np.rint(steps)
-    rows = steps.reshape(-1, 3)
-    squared = np.einsum("ij,ij->i", rows @ metric, rows)
+    squared = squares(steps.reshape(-1, 3), metric)
     return steps.reshape(len(fract), -1, 3), squared.reshape(len(fract), -1)
 
 

@@ -10,7 +10,7 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
-from phaseid.crystal.metric import Cell, inverse_metric, volume_A3
+from phaseid.crystal.metric import Cell, inverse_metric, squares, volume_A3
 from phaseid.crystal.operations import MAX_INDEX, Operations
 from phaseid.errors import InputError
 
@@ -97,7 +97,7 @@ def _enumerate(
     if max(box) <= _LADDER[-1] and math.prod(_counts(box, domain.nonnegative)) <= _MOST_KEPT:
         kept, counts = _sets_in_box(operations, box)
         hkl = kept.astype(np.float64)
-        inverse_d2 = np.einsum("ij,ij->i", hkl @ reciprocal, hkl)
+        inverse_d2 = squares(hkl, reciprocal)
         (inside,) = (inverse_d2 <= d_min_A**-2 * (1 + 1e-12)).nonzero()
         order = inside[inverse_d2[inside].argsort()]
         return Reflections(hkl[order], inverse_d2[order], counts[order].astype(np.int64), d_min_A)
