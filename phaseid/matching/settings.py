@@ -86,7 +86,7 @@ PHASE_COUNT_PRIOR = (0.70, 0.22, 0.06, 0.02)
 """Prior of one, two, three, four listed phases."""
 UNLISTED_PRIOR = 0.15
 """Prior that no listed phase is in the specimen."""
-BESIDE_PRIOR = 0.08
+BESIDE_PRIOR = 0.03
 """Prior that an unlisted phase is there beside listed ones."""
 UNLISTED_RING_COUNT = 12.0
 """Mean number of rings of an unlisted phase (geometric)."""
