@@ -68,10 +68,9 @@ def _settle(fract: Floats, operations: Operations, metric: Floats) -> NDArray[np
     steps, length2 = _steps(fract, operations, tensor)
     reach2 = SAME_ATOM_A**2
     alike: NDArray[np.bool_] = length2 <= reach2
-    off = alike & (length2 > _ON_THE_SPOT_A**2)
-    if not off.any():
+    if np.count_nonzero(alike) == np.count_nonzero(length2 <= _ON_THE_SPOT_A**2):
         return alike
-    special = np.flatnonzero(off.any(axis=1))
+    special = np.flatnonzero((alike & (length2 > _ON_THE_SPOT_A**2)).any(axis=1))
     while len(special):
         chosen = alike[special]
         total = (steps[special] * chosen[..., None]).sum(axis=1)

@@ -248,7 +248,8 @@ def _place(
     steps, squared = _steps(fract, maps, metric)
     near: NDArray[np.bool_] = squared < ROUNDING_A**2
     near_count = np.add.reduce(near, axis=1)
-    alone = np.array_equal(near, squared < CROWDED_A**2)  # no second image in doubtful reach
+    held = np.count_nonzero(near)
+    alone = held == np.count_nonzero(squared < CROWDED_A**2)  # no image in doubtful reach
     if not alone:
         wide = squared < SPLIT_A**2
         wide_count = wide.sum(axis=1)
@@ -258,7 +259,7 @@ def _place(
             near = np.where(merge[:, None], wide, near)
             near_count = np.where(merge, wide_count, near_count)
     placed = fract
-    if (near & (squared > _EXACT_A**2)).any():
+    if not alone or np.count_nonzero(squared < _EXACT_A**2) < held:
         drift = np.einsum("nm,nmk->nk", near, steps) / near_count[:, None]
         drift[np.abs(drift) < 1e-9] = 0.0
         placed = fract + drift
