@@ -27,6 +27,8 @@ from tests.matching.toys import Toy, part_of, toy_model, toy_rings
 
 D_A = (3.0, 2.2, 1.7, 1.35)
 SIGMA, SCALE = 0.004, 0.01
+PLACED = float(np.hypot(SIGMA, settings.LISTED_JITTER))
+"""One-sigma of a ring of a listed phase: of the reading, and of the line's own place."""
 EVEN = Toy(D_A, (100, 80, 60, 40))
 Floats = NDArray[np.float64]
 
@@ -68,11 +70,11 @@ def log_normal_mixture(residual: Floats, sigma: Floats, common: Floats) -> float
     ],
 )
 def test_positions_have_the_density_of_a_multivariate_normal(shift: Sequence[float]) -> None:
-    """Reading errors, one common scale, one strain: diag(σ²f²) + (s² + t²) 11ᵀ."""
+    """Reading errors and jitter, one common scale, one strain: diag(σ²f²) + (s² + t²) 11ᵀ."""
     at_rest, _ = toy_model([EVEN], [moved((0, 0, 0, 0))])
     displaced, _ = toy_model([EVEN], [moved(shift)])
     common = np.full((4, 4), SCALE**2 + settings.STRAIN**2)
-    sigma = np.full(4, SIGMA)
+    sigma = np.full(4, PLACED)
     expected = log_normal_mixture(np.array(shift), sigma, common) - log_normal_mixture(
         np.zeros(4), sigma, common
     )
@@ -85,12 +87,12 @@ def test_scale_and_strain_are_the_mean_of_their_joint_normal_distribution() -> N
     model, _ = toy_model([EVEN], [moved(shift.tolist())])
     fit = fit_of(model, 0)
     prior = SCALE**2 + settings.STRAIN**2
-    gain = prior / (prior + SIGMA**2 / 4)
+    gain = prior / (prior + PLACED**2 / 4)
     assert fit.scale[0, 0] == pytest.approx(shift.mean() * gain * SCALE**2 / prior, rel=1e-6)
     assert fit.strain[0, 0] == pytest.approx(
         shift.mean() * gain * settings.STRAIN**2 / prior, rel=1e-6
     )
-    scale_sd = SCALE * np.sqrt(1 - SCALE**2 / (prior + SIGMA**2 / 4))
+    scale_sd = SCALE * np.sqrt(1 - SCALE**2 / (prior + PLACED**2 / 4))
     assert fit.scale_sd[0, 0] == pytest.approx(scale_sd, rel=1e-6)
 
 
@@ -116,7 +118,7 @@ def test_a_diffractometer_may_be_off_by_zero_shift_and_displacement() -> None:
     displacement = misread(settings.DISPLACEMENT_DEG * np.cos(theta))
     common = np.full((4, 4), 5e-4**2 + settings.STRAIN**2)
     common = common + np.outer(zero, zero) + np.outer(displacement, displacement)
-    sigma = np.full(4, SIGMA / 10)
+    sigma = np.full(4, np.hypot(SIGMA / 10, settings.LISTED_JITTER))
     expected = log_normal_mixture(shift[::-1], sigma, common) - log_normal_mixture(
         np.zeros(4), sigma, common
     )
@@ -132,7 +134,7 @@ def test_two_patterns_share_the_strain_of_a_phase_but_not_their_scales(
     first, second = (0.003, 0.001, 0.002, 0.004), (-0.002, 0.001, 0.001, -0.001)
     at_rest, _ = toy_model([EVEN], [moved((0, 0, 0, 0)), moved((0, 0, 0, 0))])
     displaced, _ = toy_model([EVEN], [moved(first), moved(second)])
-    covariance = np.full((8, 8), settings.STRAIN**2) + np.diag(np.full(8, SIGMA**2))
+    covariance = np.full((8, 8), settings.STRAIN**2) + np.diag(np.full(8, PLACED**2))
     covariance[:4, :4] += SCALE**2
     covariance[4:, 4:] += SCALE**2
     expected = multivariate_normal.logpdf(
@@ -149,7 +151,7 @@ def test_two_phases_share_the_scale_of_a_pattern_but_not_their_strains(
     shift = np.array((0.003, 0.001, -0.002, -0.001))
     at_rest, _ = toy_model(toys, [moved((0, 0, 0, 0))])
     displaced, _ = toy_model(toys, [moved(shift.tolist())])
-    covariance = np.full((4, 4), SCALE**2) + np.diag(np.full(4, SIGMA**2))
+    covariance = np.full((4, 4), SCALE**2) + np.diag(np.full(4, PLACED**2))
     covariance[:2, :2] += settings.STRAIN**2
     covariance[2:, 2:] += settings.STRAIN**2
     expected = multivariate_normal.logpdf(shift, cov=covariance) - multivariate_normal.logpdf(
@@ -231,9 +233,9 @@ def test_a_line_beyond_the_recorded_range_is_not_missing() -> None:
 def leftover(count: int) -> float:
     """ln density of how many rings are left: from nowhere (Poisson), or an unlisted phase's."""
     stay = settings.UNLISTED_RING_COUNT / (1 + settings.UNLISTED_RING_COUNT)
-    nowhere = log(1 - settings.UNLISTED_PRIOR) - settings.FOREIGN_RINGS
+    nowhere = log(1 - settings.BESIDE_PRIOR) - settings.FOREIGN_RINGS
     nowhere += count * log(settings.FOREIGN_RINGS)
-    unlisted = log(settings.UNLISTED_PRIOR) + log(1 - stay) + count * log(stay) + lgamma(count + 1)
+    unlisted = log(settings.BESIDE_PRIOR) + log(1 - stay) + count * log(stay) + lgamma(count + 1)
     return float(np.logaddexp(nowhere, unlisted))
 
 
@@ -255,7 +257,8 @@ def test_a_ring_far_off_is_given_up_rather_than_explained() -> None:
         model, _ = toy_model([EVEN], [moved((0, error, 0, 0))])
         value.append(value_of(model, 0))
     assert value[0] > value[1] > value[2]
-    assert value[2] == pytest.approx(value[3], abs=1e-6)
+    # not to the last digit: the trend of intensities is told from the mean place of all rings
+    assert value[2] == pytest.approx(value[3], abs=1e-3)
 
 
 def test_nothing_listed_is_worth_the_crowds_density_alone() -> None:
@@ -268,20 +271,26 @@ def test_nothing_listed_is_worth_the_crowds_density_alone() -> None:
 # ---------------------------------------------------------------- intensities
 
 
-def ln_intensity_density(model: Model, rows: NDArray[np.int64], ln_amplitude: Floats) -> float:
-    """What the fit of amplitudes maximises, written out with loops over rings and lines.
+def ln_intensity_density(model: Model, rows: NDArray[np.int64], sought: Floats) -> float:
+    """What the fit maximises, written out with loops over rings and lines.
 
-    Rings: ln I strays from the summed lines by a normal law with a heavy tail, and each was seen
-    with a chance that rises with its intensity; lines without a ring were not.
+    `sought`: ln amplitude of each phase, then the trend B of a factor exp(-B (sin θ/λ)²·2), that is
+    ln I falling with 1/2d² from its mean over the rings. Rings: ln I strays from the summed lines
+    by a normal law with a heavy tail, and each was seen with a chance that rises with its
+    intensity; lines without a ring were not.
     """
     pattern, lines = model.patterns[0], model.lines[0]
     scatter = pattern.scatter
-    total = -0.5 * float((ln_amplitude**2).sum()) / 3.0**2
+    ln_amplitude, trend = sought[:-1], float(sought[-1])
+    total = -0.5 * float((ln_amplitude**2).sum()) / 3.0**2 - 0.5 * (trend / settings.TREND_SD) ** 2
+    mean = float(np.mean(1 / (2 * np.exp(pattern.x) ** 2)))
     amount = np.zeros(len(pattern))
     for k, phase in enumerate(rows):
         for j in np.flatnonzero(lines.intensity[phase] > 0):
             distance = np.abs(lines.x[phase, j] - pattern.x)
             shown = float(np.exp(ln_amplitude[k]) * lines.intensity[phase, j])
+            place = pattern.x[distance.argmin()] if distance.min() < 0.005 else lines.x[phase, j]
+            shown *= float(np.exp(-trend * (1 / (2 * np.exp(place) ** 2) - mean)))
             if distance.min() < 0.005:
                 amount[distance.argmin()] += shown
             else:
@@ -296,9 +305,17 @@ def ln_intensity_density(model: Model, rows: NDArray[np.int64], ln_amplitude: Fl
     return total
 
 
-@pytest.mark.parametrize("intensities", [(100, 62, 45, 30, 12), (40, 100, 33, 20, 25)])
-def test_amplitudes_are_those_a_general_minimiser_finds(intensities: Sequence[float]) -> None:
-    """Two phases with one ring in common; one line of each is missing."""
+@pytest.mark.parametrize(
+    ("intensities", "sigmas"), [((100, 62, 45, 30, 12), 1e-4), ((40, 100, 33, 20, 25), 0.3)]
+)
+def test_amplitudes_are_those_a_general_minimiser_finds(
+    intensities: Sequence[float], sigmas: float
+) -> None:
+    """Two phases with one ring in common; one line of each is missing.
+
+    Where intensities stray far, the few steps the fit takes stop within 0.3 of one-sigma of the
+    maximum, 0.03 of ln likelihood below it.
+    """
     spacings = (3.0, 2.2, 1.7, 1.35, 1.1)
     toys = [
         Toy((3.0, 2.5, 2.2, 1.35), (100, 4, 60, 30)),
@@ -310,12 +327,13 @@ def test_amplitudes_are_those_a_general_minimiser_finds(intensities: Sequence[fl
     rows = np.arange(2)
     best = minimize(
         lambda a: -ln_intensity_density(model, rows, a),
-        np.zeros(2),
+        np.zeros(3),
         method="Nelder-Mead",
         options={"xatol": 1e-6, "fatol": 1e-9},
     )
     assert part.claimed.all()
-    assert part.ln_amplitude[0] == pytest.approx(best.x, abs=0.02)
+    away = np.abs(part.ln_amplitude[0] - best.x[:2]) / part.amplitude_sd[0]
+    assert away.max() < sigmas
 
 
 def test_the_amplitude_of_one_phase_is_known_to_the_scatter_over_root_n() -> None:

@@ -26,6 +26,20 @@ SCHEMA = json.loads(
 
 SOME = list(PATTERNS)[::4]
 
+_UNLISTED = "an unlisted phase of the same structure type"
+UNSURE = {
+    "silver": "gold, its cell 0.2 % shorter",
+    "nickel": _UNLISTED,
+    "tungsten": _UNLISTED,
+    "chromium": _UNLISTED,
+    "silicon": _UNLISTED,
+    "germanium": "zinc selenide, its cell 0.2 % longer",
+    "halite": _UNLISTED,
+    "gallium arsenide": "zinc selenide, its cell 0.3 % longer, and aluminium arsenide",
+    "titanium nitride": _UNLISTED,
+}
+"""The best answer has less than 0.9, and what has most of the rest: 9 of 33, 6 to 11 rings each."""
+
 
 @pytest.mark.parametrize("name", PATTERNS)
 def test_the_best_answer_is_the_published_phase(published_answer: Published, name: str) -> None:
@@ -37,7 +51,7 @@ def test_the_best_answer_is_the_published_phase(published_answer: Published, nam
     entry = PATTERNS[name]
     best = answer.hypotheses[0]
     assert names_exactly(best, [name]), [a.phase.name for a in best.phases]
-    assert answer.verdict != "no-match"
+    assert answer.verdict in (("identified", "ambiguous") if name in UNSURE else ("identified",))
 
     found = best.phases[0]
     if not is_published(found.phase, name):

@@ -206,7 +206,9 @@ def test_the_order_of_patterns_does_not_matter(shelf: Selection) -> None:
     assert swapped == {(a.pattern, a.ring, a.hkl) for a in one.hypotheses[0].assignments}
 
 
-def test_two_patterns_together_are_surer_than_either_alone(shelf: Selection) -> None:
+def test_two_patterns_together_are_surer_than_either_alone(
+    starter_library: Library,
+) -> None:
     """Few rings at a poor scale: together they leave less to other explanations."""
     few = rings_from_values(
         PLATE[:4].tolist(),
@@ -217,7 +219,7 @@ def test_two_patterns_together_are_surer_than_either_alone(shelf: Selection) -> 
     xray = rings_from_values(PLATE[:3].tolist(), probe="x-ray Cu Ka1", intensities=HEIGHTS[:3])
 
     def chance(patterns: Sequence[RingList]) -> float:
-        answer = identify(patterns, shelf, top=20)  # type: ignore[arg-type]
+        answer = identify(patterns, starter_library, top=20)
         return sum(
             h.probability
             for h in answer.hypotheses
