@@ -83,12 +83,21 @@ def test_standard_input_is_read(phaseid, ring_file: str, monkeypatch: pytest.Mon
     assert _formulas(value) == ["Al"]
 
 
-def test_several_patterns_are_one_question(phaseid, ring_file: str) -> None:
-    value = phaseid("identify", ring_file, ring_file, "--only", "Al", "--json").json(
+def test_several_patterns_are_one_question(phaseid, ring_file: str, tmp_path: Path) -> None:
+    fewer = tmp_path / "again.csv"
+    lines = Path(ring_file).read_text(encoding="utf-8").splitlines()
+    fewer.write_text("\n".join(lines[:-1]) + "\n", encoding="utf-8")
+    value = phaseid("identify", ring_file, str(fewer), "--only", "Al", "--json").json(
         "identification-1"
     )
     assert len(value["patterns"]) == 2
     assert {a["pattern"] for a in value["hypotheses"][0]["assignments"]} == {0, 1}
+
+
+def test_one_pattern_given_twice_is_refused(phaseid, ring_file: str) -> None:
+    outcome = phaseid("identify", ring_file, ring_file, "--only", "Al")
+    assert outcome.code == 2
+    assert "same list of rings" in outcome.err
 
 
 def test_probe_and_scale_override_the_file(phaseid, ring_file: str) -> None:
