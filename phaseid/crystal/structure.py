@@ -62,16 +62,12 @@ def build(
     volume = volume_A3(cell)
     if volume < MIN_VOLUME_A3:
         return StructureProblem("absurd_cell", f"the cell has a volume of only {volume:.3g} Å³")
-    fitting = [symmetry for symmetry in candidates if fits_cell(symmetry, cell)]
-    if not fitting:
-        return StructureProblem(
-            "cell_symmetry_conflict",
-            f"the cell {_shown(cell)} does not have the symmetry {candidates[0].symbol} stated",
-        )
     tried: list[Structure] = []
     problem: StructureProblem | None = None
-    for symmetry in fitting:
+    for symmetry in candidates:
         if symmetry.last_resort and any(s.score == _BEST for s in tried):
+            continue
+        if not fits_cell(symmetry, cell):
             continue
         result = _structure(cell, volume, symmetry, read, stated)
         if isinstance(result, StructureProblem):
@@ -83,8 +79,10 @@ def build(
         if result.score == _BEST and not symmetry.guess and not _only_identity(symmetry, stated):
             break
     if not tried:
-        assert problem is not None
-        return problem
+        return problem or StructureProblem(
+            "cell_symmetry_conflict",
+            f"the cell {_shown(cell)} does not have the symmetry {candidates[0].symbol} stated",
+        )
     return _chosen(tried, stated)
 
 
