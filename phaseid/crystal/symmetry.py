@@ -136,7 +136,8 @@ def _metric_changes(
     rows, columns = np.array(_ENTRIES).T
     unit = np.zeros((6, 3, 3))
     unit[np.arange(6), rows, columns] = unit[np.arange(6), columns, rows] = 1.0
-    rotations = symmetry.rotations[:, None]
+    distinct = np.unique(symmetry.rotations.reshape(-1, 9), axis=0)  # centrings change nothing
+    rotations = distinct.reshape(-1, 1, 3, 3)
     changed = rotations.transpose(0, 1, 3, 2) @ unit @ rotations - unit
     factors = changed[:, :, rows, columns].transpose(0, 2, 1).tolist()  # operation, entry, unit
     found = {
