@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Annotated
 
 import typer
@@ -14,6 +15,7 @@ from phaseid.cli.options import (
     Only,
     bold,
     open_library,
+    say,
     width,
 )
 from phaseid.cli.ring_input import (
@@ -49,6 +51,12 @@ def identify(
         ),
     ] = 3,
     top: Annotated[int, typer.Option("--top", metavar="N", min=1, help="Answers to list.")] = 5,
+    plot: Annotated[
+        Path | None,
+        typer.Option(
+            "--plot", metavar="FILE", help="Draw the answer, too: FILE.png, FILE.svg or FILE.pdf."
+        ),
+    ] = None,
     as_json: Json = False,
 ) -> None:
     """Rank the phases and mixtures that explain a list of rings.
@@ -57,10 +65,15 @@ def identify(
     phaseid identify foil.csv --must Al
     phaseid identify electrons.csv xrays.csv --json
     phaseid identify 2.34 2.02 1.43 1.22 --probe "electron 200 kV"
+    phaseid identify foil.csv --plot foil.pdf
     """
     from phaseid.matching.chemistry import Chemistry
     from phaseid.matching.identify import identify as rank
 
+    if plot is not None:
+        from phaseid.reports.picture_file import check_picture_path
+
+        check_picture_path(plot)
     chemistry = Chemistry.parse(must, only, exclude)
     patterns = ring_lists(
         rings,
@@ -82,3 +95,8 @@ def identify(
         from phaseid.reports.text import as_text
 
         print(as_text(answer, width=width(), bold=bold()), end="")
+    if plot is not None:
+        from phaseid.reports.picture_file import write_picture
+
+        write_picture(answer, plot)
+        say(f"Picture written to {plot}.")

@@ -21,6 +21,7 @@ from phaseid.cli import (
     lines,
     near,
     ratio,
+    report,
     screen,
 )
 from phaseid.cli.options import say
@@ -91,13 +92,14 @@ def front(
     standard error. Exit codes: 0 answered, 2 wrong input, 3 library missing or unreadable,
     130 interrupted.
     """
-    if ctx.invoked_subcommand in ("identify", "near", "lines", "compare"):
+    if ctx.invoked_subcommand in ("identify", "report", "near", "lines", "compare"):
         ctx.default_map = command_defaults()
     if ctx.invoked_subcommand is None:
         print(FIRST_STEPS.format(version=__version__), end="")
 
 
 app.command("identify", short_help="Name the phases behind rings.")(identify.identify)
+app.command("report", short_help="Write the answer as one page.")(report.report)
 app.command("lines", short_help="List the lines of a phase.")(lines.lines)
 app.command("near", short_help="List phases with lines near spacings.")(near.near)
 app.command("ratio", short_help="Name structure types by ring ratios.")(ratio.ratio)

@@ -60,7 +60,7 @@ def as_text(answer: Identification, *, width: int = 80, bold: bool = False) -> s
     if best is not None and (best.assignments or answer.verdict != "no-match"):
         for number in range(len(answer.patterns)):
             _rings(page, answer, best, number)
-        _against(page, answer, best)
+        page.items("What speaks against it", against(answer, best))
         for part in best.phases:
             _phase(page, part, alone=len(best.phases) == 1)
     page.items(
@@ -71,8 +71,8 @@ def as_text(answer: Identification, *, width: int = 80, bold: bool = False) -> s
             for match in answer.type_matches
         ],
     )
-    page.items("Remarks", _remarks(answer))
-    page.items("Safety", _cautions(answer))
+    page.items("Remarks", remarks(answer))
+    page.items("Safety", cautions(answer))
     page.blank()
     library = answer.library
     page.paragraph(
@@ -155,7 +155,7 @@ def _rings(page: _Page, answer: Identification, best: Hypothesis, number: int) -
     for ring in range(len(pattern)):
         found = [a for a in best.assignments if (a.pattern, a.ring) == (number, ring)]
         measured = [str(ring + 1), f"{pattern.d_A[ring]:.4f}"]
-        intensity = _measured_intensity(pattern, ring)
+        intensity = measured_intensity(pattern, ring)
         if not found:
             rows.append([*measured, "", "", "unexplained", "", intensity, ""])
         for order, a in enumerate(found):
@@ -179,14 +179,16 @@ def _rings(page: _Page, answer: Identification, best: Hypothesis, number: int) -
             )
 
 
-def _measured_intensity(pattern: RingList, ring: int) -> str:
+def measured_intensity(pattern: RingList, ring: int) -> str:
+    """Write a ring's measured intensity: its grade, its number, or nothing."""
     if pattern.grades[ring]:
         return pattern.grades[ring]
     value = float(pattern.intensity[ring])
     return "" if math.isnan(value) else f"{value:.0f}"
 
 
-def _against(page: _Page, answer: Identification, best: Hypothesis) -> None:
+def against(answer: Identification, best: Hypothesis) -> list[str]:
+    """Return what speaks against an answer: rings left, lines missing, the worst deviation."""
     many = len(answer.patterns) > 1
     items = []
     for u in best.unexplained:
@@ -208,7 +210,7 @@ def _against(page: _Page, answer: Identification, best: Hypothesis) -> None:
         items.append(f"Ring {worst.ring + 1}{where} lies {off} sigma from its line")
     if not items:
         items.append("Nothing: every ring is explained and no strong line is missing")
-    page.items("What speaks against it", items)
+    return items
 
 
 def _phase(page: _Page, part: PhaseAnswer, *, alone: bool) -> None:
@@ -247,8 +249,8 @@ def _phase(page: _Page, part: PhaseAnswer, *, alone: bool) -> None:
             page.item(f"{phase_text(separator.other)}: {separator.text}", indent="    ")
 
 
-def _remarks(answer: Identification) -> list[str]:
-    """Remarks on the whole, then those on one pattern, each once; slips stand at the top."""
+def remarks(answer: Identification) -> list[str]:
+    """Return remarks on the whole, then on each pattern, each once; slips stand at the top."""
     many = len(answer.patterns) > 1
     own = [
         (f"Pattern {number}: {remark}" if many else remark, remark)
@@ -260,8 +262,8 @@ def _remarks(answer: Identification) -> list[str]:
     return list(dict.fromkeys([*common, *(told for told, plain in own if plain not in slips)]))
 
 
-def _cautions(answer: Identification) -> list[str]:
-    """Cautions on the phases that this text names, each with the phases it is about."""
+def cautions(answer: Identification) -> list[str]:
+    """Return cautions on the phases that this text names, each with the phases it is about."""
     named = [part.phase for hypothesis in answer.hypotheses for part in hypothesis.phases]
     for part in answer.hypotheses[0].phases if answer.hypotheses else ():
         named += part.indistinguishable[:SHOWN_ALIKE]

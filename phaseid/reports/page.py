@@ -1,0 +1,213 @@
+"""An identification as one self-contained page: look at it, keep it, send it.
+
+No network, no script but its own, readable with scripts off; names from files are text, never run.
+"""
+
+from __future__ import annotations
+
+import base64
+import hashlib
+import json
+import platform
+from collections.abc import Sequence
+from dataclasses import dataclass
+from importlib.metadata import version
+from importlib.resources import files
+from pathlib import Path
+
+from phaseid import __version__
+from phaseid.matching.identification import Identification
+from phaseid.reports.headline import doubts, headline, next_steps
+from phaseid.reports.json import dumps, identification_dict
+from phaseid.reports.page_answer import answer_section
+from phaseid.reports.page_compare import side_by_side
+from phaseid.reports.page_html import facts, items, scrolling, words
+from phaseid.reports.picture import Picture
+from phaseid.reports.picture_axis import AxisName
+from phaseid.reports.picture_sheet import (
+    BAR_HEIGHT,
+    OTHERS,
+    UNLISTED,
+    bar_shapes,
+    probability_parts,
+)
+from phaseid.reports.picture_style import DARK, LIGHT, palette_css, picture_css
+from phaseid.reports.picture_svg import svg
+from phaseid.reports.plain import phase_text, probability_text, safe
+from phaseid.reports.text import STANDING, VERDICTS, cautions, remarks
+
+LARGEST_BYTES = 900_000
+"""Answers beyond the first are drawn as long as the page stays below this."""
+
+
+@dataclass(frozen=True, slots=True)
+class Provenance:
+    """How the answer came about: the command that gives it again, its settings, the time."""
+
+    command: str
+    made: str
+    settings: tuple[tuple[str, str], ...] = ()
+
+
+def page(answer: Identification, provenance: Provenance, *, axis: AxisName | None = None) -> str:
+    """Return the page as HTML text.
+
+    `axis` is that of the sticks; without one, the axis nearest to how a pattern was measured.
+    Raises InputError for an axis that a pattern does not have.
+    """
+    machine = _machine_copy(answer)
+    sections, drawn = _sections(answer, axis, LARGEST_BYTES - len(machine))
+    style, script = _style(), _resource("page.js")
+    policy = (
+        f"default-src 'none'; style-src '{_hash(style)}'; script-src '{_hash(script)}'; "
+        "base-uri 'none'; form-action 'none'"
+    )
+    title = words(f"{headline(answer).split('. ')[0]} · phaseid")
+    return (
+        '<!DOCTYPE html>\n<html lang="en"><head><meta charset="utf-8">'
+        f'<meta http-equiv="Content-Security-Policy" content="{policy}">'
+        '<meta name="viewport" content="width=device-width,initial-scale=1">'
+        f'<meta name="generator" content="phaseid {__version__}">'
+        f"<title>{title}</title><style>{style}</style></head><body>"
+        f"<header>{_head(answer)}</header><main>{_choice(answer, drawn)}{sections}"
+        f"{side_by_side(answer)}{_notes(answer)}</main>"
+        f"<footer>{_origin(answer, provenance)}</footer>"
+        f'<script type="application/json" id="identification">{machine}</script>'
+        f"<script>{script}</script></body></html>\n"
+    )
+
+
+def _resource(name: str) -> str:
+    return files("phaseid").joinpath("reports", name).read_text(encoding="utf-8")
+
+
+def _style() -> str:
+    dark = f"@media (prefers-color-scheme:dark){{:root{{{palette_css(DARK)}}}}}"
+    paper = f"@media print{{:root{{color-scheme:light;{palette_css(LIGHT)}}}}}"
+    grounds = f":root{{{palette_css(LIGHT)}}}\n{dark}\n"
+    return f"{grounds}{picture_css()}\n{_resource('page.css')}{paper}"
+
+
+def _hash(text: str) -> str:
+    digest = hashlib.sha256(text.encode()).digest()
+    return f"sha256-{base64.b64encode(digest).decode()}"
+
+
+def _machine_copy(answer: Identification) -> str:
+    """The JSON of the answer; no letter in it can end the element that holds it."""
+    compact = json.dumps(
+        json.loads(dumps(identification_dict(answer))), separators=(",", ":"), allow_nan=False
+    )
+    return compact.replace("&", "\\u0026").replace("<", "\\u003c").replace(">", "\\u003e")
+
+
+def _head(answer: Identification) -> str:
+    parts = [
+        f"<h1>{words(headline(answer))}</h1>",
+        f"<p>Verdict: {words(VERDICTS[answer.verdict])}.</p>",
+        *(f'<p class="doubt">{words(doubt)}</p>' for doubt in doubts(answer)),
+        items("What to do next", next_steps(answer)),
+    ]
+    return "".join(parts)
+
+
+def _choice(answer: Identification, drawn: int) -> str:
+    """The probability as a bar, and the answers to choose from."""
+    width = 1000.0
+    label = "; ".join(f"{name} {probability_text(p)}" for name, p in probability_parts(answer))
+    bar = svg(Picture(width, BAR_HEIGHT, f"Probability: {label}", tuple(bar_shapes(answer, width))))
+    bar = bar.replace('class="picture"', 'class="picture bar" preserveAspectRatio="none"', 1)
+    rings = sum(map(len, answer.patterns))
+    rows = []
+    for h in answer.hypotheses:
+        names = words(
+            " + ".join(
+                f"{phase_text(part.phase)} {safe(part.phase.space_group_symbol)}"
+                for part in h.phases
+            )
+        )
+        groups = sum(len(part.indistinguishable) for part in h.phases)
+        alike = f" (with {groups} alike)" if groups else ""
+        explained = len({(a.pattern, a.ring) for a in h.assignments})
+        radio = ""
+        if h.rank <= drawn:
+            checked = " checked" if h.rank == 1 else ""
+            radio = (
+                f'<input class="choose" type="radio" name="answer" value="{h.rank}" '
+                f'id="choose-{h.rank}"{checked}>'
+            )
+            names = f'<label for="choose-{h.rank}">{names}</label>'
+        cells = (str(h.rank), probability_text(h.probability), f"{explained}/{rings}")
+        numbers = "".join(f'<td class="n">{cell}</td>' for cell in cells)
+        rows.append(f'<tr>{numbers}<td class="wide">{radio}{names}{alike}</td></tr>')
+    for name, share in probability_parts(answer):
+        if name in (OTHERS, UNLISTED):
+            sign = "hatched: " if name == UNLISTED else ""
+            rows.append(
+                f'<tr><td></td><td class="n">{words(probability_text(share))}</td><td></td>'
+                f'<td class="wide">{sign}{name}</td></tr>'
+            )
+    heads = "".join(
+        f'<th scope="col"{" class=n" if number else ""}>{name}</th>'
+        for name, number in (("rank", 1), ("probability", 1), ("rings", 1), ("phases", 0))
+    )
+    table = (
+        "<table><caption>The answers; the bar shows them in this order</caption>"
+        f"<thead><tr>{heads}</tr></thead><tbody>{''.join(rows)}</tbody></table>"
+    )
+    undrawn = len(answer.hypotheses) - drawn
+    more = (
+        f'<p class="quiet">The last {undrawn} are not drawn, to keep the page small; '
+        "the JSON in it holds them.</p>"
+        if undrawn > 0
+        else ""
+    )
+    return f"{bar}{scrolling(table, 'Answers, scrolls sideways')}{more}"
+
+
+def _sections(answer: Identification, axis: AxisName | None, room: int) -> tuple[str, int]:
+    """The answers in full while there is room, the first always; and how many these are."""
+    if not answer.hypotheses:
+        return answer_section(answer, None, axis=axis), 0
+    parts: list[str] = []
+    for hypothesis in answer.hypotheses:
+        section = answer_section(answer, hypothesis, axis=axis)
+        room -= len(section.encode())
+        if parts and room < 0:
+            break
+        parts.append(section)
+    return "".join(parts), len(parts)
+
+
+def _notes(answer: Identification) -> str:
+    types = [
+        f"{match.type_name} (as in {phase_text(match.like)}) with a = {match.a_A:.4f} ± "
+        f"{match.a_sigma_A:.4f} Å, probability {probability_text(match.probability)}"
+        for match in answer.type_matches
+    ]
+    return (
+        items("Structure types that would fit", types)
+        + items("Remarks", remarks(answer))
+        + items("Safety", cautions(answer))
+    )
+
+
+def _origin(answer: Identification, provenance: Provenance) -> str:
+    library = answer.library
+    pairs: Sequence[tuple[str, str]] = [
+        ("made", provenance.made),
+        ("phaseid", __version__),
+        ("Python", platform.python_version()),
+        *((name, version(name)) for name in ("numpy", "gemmi")),
+        ("library", f"{library.phases} phases, {Path(library.path).name}"),
+        ("library digest", library.digest),
+        *provenance.settings,
+    ]
+    command = words(provenance.command)
+    return (
+        f"<h2>Where this comes from</h2>{facts(pairs)}"
+        f"<p>The same answer again: <code>{command}</code></p>"
+        '<p class="quiet">The whole answer for machines is inside this page, in the script element '
+        "“identification” (JSON, phaseid.identification/1).</p>"
+        f"<p>{words(STANDING)}</p>"
+    )

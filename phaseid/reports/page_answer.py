@@ -1,0 +1,215 @@
+"""One answer on the page: pictures, rings in a table, what speaks against it, its phases."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
+from phaseid.reports.page_html import facts, items, scrolling, tag, words
+from phaseid.reports.picture_axis import AxisName, axis_for
+from phaseid.reports.picture_disc import disc, disc_of_two
+from phaseid.reports.picture_scene import Scene, missing_key, ring_key, scene
+from phaseid.reports.picture_sticks import sticks
+from phaseid.reports.picture_svg import svg
+from phaseid.reports.plain import (
+    cell_text,
+    hkl_text,
+    phase_text,
+    probability_text,
+    safe,
+    signed_text,
+    source_text,
+)
+from phaseid.reports.text import SHOWN_ALIKE, against, measured_intensity
+
+HEADS = (
+    ("ring", True),
+    ("d measured, Å", True),
+    ("sigma, Å", True),
+    ("d calculated, Å", True),
+    ("hkl", True),
+    ("phase", False),
+    ("off by, sigma", True),
+    ("I measured", True),
+    ("I calculated", True),
+)
+
+
+def answer_section(
+    answer: Identification, hypothesis: Hypothesis | None, *, axis: AxisName | None
+) -> str:
+    """Everything about one answer; with None the pattern alone, which nothing explains."""
+    rank = "" if hypothesis is None else str(hypothesis.rank)
+    scenes = [scene(answer, hypothesis, number) for number in range(len(answer.patterns))]
+    parts = [f'<section class="answer" data-rank="{rank}" aria-labelledby="answer-{rank}">']
+    parts.append(f'<h2 id="answer-{rank}">{words(_title(hypothesis))}</h2>')
+    doubts = ""
+    if hypothesis is not None:
+        doubts = items("What speaks against it", against(answer, hypothesis), level=3)
+    if len(scenes) == 2:
+        caption = "Two probes, one half each; the radius is 1/d after each fitted scale."
+        parts.append(
+            f'<div class="pattern"><figure>{svg(disc_of_two(*scenes))}'
+            f"<figcaption>{caption}</figcaption></figure><div>{doubts}</div></div>"
+        )
+    parts += [_pattern(answer, one, axis) for one in scenes]
+    if hypothesis is not None:
+        parts.append("" if len(scenes) == 2 else doubts)
+        alone = len(hypothesis.phases) == 1
+        parts += [_phase(part, k, alone=alone) for k, part in enumerate(hypothesis.phases)]
+    parts.append("</section>")
+    return "".join(parts)
+
+
+def _title(hypothesis: Hypothesis | None) -> str:
+    if hypothesis is None:
+        return "The rings as measured"
+    names = " + ".join(phase_text(part.phase) for part in hypothesis.phases)
+    chance = probability_text(hypothesis.probability)
+    return f"Answer {hypothesis.rank}: {names}, probability {chance}"
+
+
+def _pattern(answer: Identification, one: Scene, axis: AxisName | None) -> str:
+    many = len(answer.patterns) > 1
+    title = pattern_title(answer, one.number)
+    heading = f"Pattern {one.number + 1}: {title}" if many else title
+    figures = (
+        f'<figure class="disc">{svg(disc(one))}<figcaption>Left half measured, right half '
+        "calculated: lines that explain a ring, and strong ones that are missing. The line’s "
+        "weight is its intensity, calculated ones laid on the measured phase by phase.</figcaption>"
+        "</figure>"
+    )
+    stick_picture = svg(sticks(one, axis_for(one.pattern, axis)))
+    figures += (
+        f'<div><figure class="sticks">{scrolling(stick_picture, "Sticks, scrolls sideways")}'
+        f"</figure></div>"
+    )
+    table = scrolling(_table(one), f"Rings of {title}, scrolls sideways")
+    note = (
+        f"Measured d / calculated d: {one.scale_text}; deviations are taken after it. "
+        "Calculated intensity: strongest line of each phase = 100."
+    )
+    return (
+        f'<div class="pattern"><h3>{words(heading)}</h3>{figures}</div>{table}'
+        f'<p class="quiet">{words(note)}</p>'
+    )
+
+
+def pattern_title(answer: Identification, number: int) -> str:
+    """Title, file and probe of a pattern."""
+    pattern = answer.patterns[number]
+    title = safe(pattern.title) or safe(Path(pattern.source).name) or "typed rings"
+    return f"{title}, {safe(pattern.probe.label)}"
+
+
+def _table(one: Scene) -> str:
+    heads = "".join(
+        f'<th scope="col"{" class=n" if number else ""}>{name}</th>' for name, number in HEADS
+    )
+    rows = "".join(_ring_rows(one, ring) for ring in range(len(one.pattern)))
+    rows += _missing_rows(one)
+    return (
+        f"<table><caption>Ring by ring</caption><thead><tr>{heads}</tr></thead>"
+        f"<tbody>{rows}</tbody></table>"
+    )
+
+
+def _ring_rows(one: Scene, ring: int) -> str:
+    pattern, hypothesis = one.pattern, one.hypothesis
+    measured = [str(ring + 1), f"{pattern.d_A[ring]:.4f}", f"{pattern.sigma_A[ring]:.4f}"]
+    intensity = measured_intensity(pattern, ring)
+    key = ring_key(one.number, ring)
+    found = [
+        a
+        for a in (() if hypothesis is None else hypothesis.assignments)
+        if (a.pattern, a.ring) == (one.number, ring)
+    ]
+    if not found or hypothesis is None:
+        hint = _hint(one, ring)
+        cells = [*measured, "", "", "", "", intensity, ""]
+        return _row(cells, f"? unexplained{': ' + words(hint) if hint else ''}", key, strong=True)
+    rows = []
+    for order, a in enumerate(found):
+        formula = words(hypothesis.phases[a.phase].phase.formula)
+        cells = [
+            *(measured if order == 0 else ["", "", ""]),
+            f"{a.d_calc_A:.4f}",
+            hkl_text(a.hkl),
+            "",
+            signed_text(a.residual_sigma),
+            intensity if order == 0 else "",
+            f"{a.relative_intensity:.0f}",
+        ]
+        rows.append(_row(cells, tag(a.phase) + formula, key))
+    return "".join(rows)
+
+
+def _hint(one: Scene, ring: int) -> str:
+    if one.hypothesis is None:
+        return ""
+    return next(
+        (u.hint for u in one.hypothesis.unexplained if (u.pattern, u.ring) == (one.number, ring)),
+        "",
+    )
+
+
+def _missing_rows(one: Scene) -> str:
+    if one.hypothesis is None:
+        return ""
+    own = [m for m in one.hypothesis.missing if m.pattern == one.number]
+    rows = []
+    for order, m in enumerate(own):
+        formula = words(one.hypothesis.phases[m.phase].phase.formula)
+        cells = ["", "", "", f"{m.d_calc_A:.4f}", hkl_text(m.hkl), "", "", ""]
+        cells.append(f"{m.relative_intensity:.0f}")
+        key = missing_key(one.number, order)
+        rows.append(_row(cells, f"{tag(m.phase)}{formula} × missing", key, strong=True))
+    return "".join(rows)
+
+
+def _row(cells: list[str], phase_html: str, key: str, *, strong: bool = False) -> str:
+    """A row of the table; the phase's cell comes as HTML, the others as words."""
+    shown = "".join(
+        f'<td class="{"n" if number else "wide"}">'
+        f"{words(cell) if name != 'phase' else phase_html}</td>"
+        for cell, (name, number) in zip(cells, HEADS, strict=True)
+    )
+    return f'<tr data-key="{key}" tabindex="0"{" class=left" if strong else ""}>{shown}</tr>'
+
+
+def _phase(part: PhaseAnswer, number: int, *, alone: bool) -> str:
+    phase = part.phase
+    error = "" if part.share_sigma is None else f" ± {100 * part.share_sigma:.0f}"
+    share = "" if part.share is None or alone else f"{100 * part.share:.0f}{error} % by weight"
+    axis = "" if part.fibre_axis is None else f"[{hkl_text(part.fibre_axis)}] along the beam"
+    pairs = [
+        ("space group", f"{phase.space_group_symbol} (no. {phase.space_group_number})"),
+        ("cell in the library", cell_text(phase.cell)),
+        ("refined cell", "" if part.cell is None else cell_text(part.cell, part.cell_sigma)),
+        ("share", share),
+        ("texture, fibre axis", axis),
+        ("entry", phase.phase_id),
+        ("source", source_text(phase)),
+        ("reference", phase.source.reference),
+        *(("about the entry", finding.message) for finding in phase.findings),
+    ]
+    alike = [
+        f"{phase_text(other)}, {safe(other.space_group_symbol)}, {cell_text(other.cell)}; "
+        f"{source_text(other)}"
+        for other in part.indistinguishable[:SHOWN_ALIKE]
+    ]
+    more = len(part.indistinguishable) - SHOWN_ALIKE
+    if more > 0:
+        alike.append(f"and {more} more; the JSON inside this page lists them all")
+    tells = [f"{phase_text(s.other)}: {s.text}" for s in part.separators]
+    return (
+        f"<h3>{tag(number)}{words(phase_text(phase))}</h3>{facts(pairs)}"
+        + _listed("These rings cannot tell it from", alike)
+        + _listed("What would separate them", tells)
+    )
+
+
+def _listed(introduction: str, texts: list[str]) -> str:
+    if not texts:
+        return ""
+    return f"<p>{introduction}:</p><ul>{''.join(f'<li>{words(t)}</li>' for t in texts)}</ul>"

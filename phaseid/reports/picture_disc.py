@@ -1,0 +1,213 @@
+"""The disc: one half as measured, the other as calculated; rings of the truth meet on the diameter.
+
+For two probes of one specimen each has a half. The radius is 1/d for every probe, measured spacings
+after the fitted scale. The line's weight shows the intensity.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable
+from typing import Literal
+
+from phaseid.reports.picture import (
+    Arc,
+    Group,
+    Line,
+    Picture,
+    Room,
+    Shape,
+    Text,
+    tick_text,
+    ticks,
+)
+from phaseid.reports.picture_scene import CalculatedLine, MeasuredRing, Scene
+from phaseid.reports.picture_style import phase_letter, phase_role
+from phaseid.reports.plain import shorten
+from phaseid.units import A_PER_NM
+
+Side = Literal["left", "right"]
+WIDTH, RADIUS, TOP = 480.0, 212.0, 34.0
+CENTRE_X, CENTRE_Y = WIDTH / 2, TOP + RADIUS
+RULER_Y = TOP + 2 * RADIUS + 16
+LEGEND_Y, LEGEND_STEP = RULER_Y + 58, 20.0
+LABEL_SIZE = 11.0
+_LETTERS_WIDE = 56
+
+
+def disc(scene: Scene) -> Picture:
+    """Measured rings on the left half, the answer's lines on the right."""
+    reach = _reach([scene])
+    room = Room([])
+    right = (
+        _calculated_half(scene.calculated, reach, room)
+        if scene.calculated
+        else [Text(CENTRE_X + RADIUS / 2, CENTRE_Y, "no line matches", "soft", 13.0, "middle")]
+    )
+    shapes = [
+        *_ground(reach),
+        *right,
+        *_measured_half(scene.measured, "left", reach, room),
+        *_heads("measured", "calculated"),
+    ]
+    left = sum(not ring.phases for ring in scene.measured)
+    missing = sum(line.ring is None for line in scene.calculated)
+    label = (
+        f"Disc of rings, left half measured ({len(scene.measured)} rings, {left} unexplained), "
+        f"right half calculated ({missing} strong lines missing). Every ring stands in the table."
+    )
+    return _with_legend(shapes, [scene], label)
+
+
+def disc_of_two(first: Scene, second: Scene) -> Picture:
+    """The rings of two probes of one specimen, one half each."""
+    reach = _reach([first, second])
+    room = Room([])
+    shapes = [
+        *_ground(reach),
+        *_measured_half(first.measured, "left", reach, room),
+        *_measured_half(second.measured, "right", reach, room),
+        *_heads(*(shorten(s.pattern.probe.label, 24) for s in (first, second))),
+    ]
+    label = (
+        f"Disc of rings, left half measured with {first.pattern.probe.label}, "
+        f"right half with {second.pattern.probe.label}."
+    )
+    return _with_legend(shapes, [first, second], label)
+
+
+def _reach(scenes: Iterable[Scene]) -> float:
+    """Largest 1/d (1/Å) to be drawn."""
+    spacings = [mark.true_d_A for scene in scenes for mark in scene.measured]
+    spacings += [line.d_A for scene in scenes for line in scene.calculated]
+    return 1.04 / min(spacings, default=1.0)
+
+
+def _ground(reach: float) -> list[Shape]:
+    """The ruler of 1/d, the diameter and the beam's spot."""
+    marks: list[Shape] = [
+        Line(((CENTRE_X, TOP - 4), (CENTRE_X, RULER_Y)), "soft", 1.0),
+        Line(((CENTRE_X, RULER_Y), (CENTRE_X + RADIUS, RULER_Y)), "soft", 1.0),
+    ]
+    values = ticks(0.0, reach * A_PER_NM, 6)
+    for value in values:
+        x = CENTRE_X + RADIUS * value / (reach * A_PER_NM)
+        marks.append(Line(((x, RULER_Y), (x, RULER_Y + 5)), "soft", 1.0))
+        marks.append(Text(x, RULER_Y + 17, tick_text(value, values), "soft", 11.0, "middle"))
+    marks.append(Text(CENTRE_X - 12, RULER_Y + 17, "1/d in 1/nm", "soft", 11.0, "end"))
+    marks.append(Line(_spot(2.5), "ink", filled=True))
+    return marks
+
+
+def _spot(radius: float) -> tuple[tuple[float, float], ...]:
+    turns = [math.tau * k / 16 for k in range(16)]
+    return tuple((CENTRE_X + radius * math.cos(t), CENTRE_Y + radius * math.sin(t)) for t in turns)
+
+
+def _heads(left: str, right: str) -> list[Shape]:
+    return [
+        Text(CENTRE_X - 10, 18, left, "ink", 14.0, "end", bold=True),
+        Text(CENTRE_X + 10, 18, right, "ink", 14.0, "start", bold=True),
+    ]
+
+
+def line_weight(height: float) -> float:
+    """Width of a ring that shows a relative intensity (strongest = 100)."""
+    return 1.0 + 4.0 * math.sqrt(max(height, 0.0) / 100.0)
+
+
+def _measured_half(
+    rings: tuple[MeasuredRing, ...], side: Side, reach: float, room: Room
+) -> list[Shape]:
+    marks: list[Shape] = []
+    ordered = sorted(rings, key=lambda ring: (bool(ring.phases), -ring.height))
+    for ring in ordered:
+        radius = RADIUS / ring.true_d_A / reach
+        weight = line_weight(ring.height)
+        shapes: list[Line | Arc | Text] = []
+        if ring.phases:
+            step = 180.0 / len(ring.phases)
+            for part, phase in enumerate(ring.phases):
+                low = (90.0 if side == "left" else -90.0) + part * step
+                shapes.append(_arc(radius, low, low + step, f"ring {phase_role(phase)}", weight))
+        else:
+            low = 90.0 if side == "left" else -90.0
+            shapes.append(_arc(radius, low, low + 180, "leftover ink", weight + 3.0))
+            shapes.append(_arc(radius, low, low + 180, "hollow ground", weight + 0.4))
+        words = str(ring.ring + 1) if ring.phases else f"{ring.ring + 1} ?"
+        role = phase_role(ring.phases[0]) if ring.phases else "ink"
+        if label := _label(words, role, radius, side, room, bold=not ring.phases):
+            shapes.append(label)
+        marks.append(Group(tuple(shapes), ring.key, ring.title))
+    return marks
+
+
+def _calculated_half(lines: tuple[CalculatedLine, ...], reach: float, room: Room) -> list[Shape]:
+    marks: list[Shape] = []
+    for line in sorted(lines, key=lambda line: (line.ring is not None, -line.height)):
+        radius = RADIUS / line.d_A / reach
+        role = phase_role(line.phase)
+        kind = "ring" if line.ring is not None else "missing"
+        weight = line_weight(line.height)
+        shapes: list[Line | Arc | Text] = [_arc(radius, -90, 90, f"{kind} {role}", weight)]
+        hkl = "".join(str(k) if 0 <= k <= 9 else f" {k} " for k in line.hkl).strip()
+        words = f"{phase_letter(line.phase)} {hkl}" + (" ×" if line.ring is None else "")
+        if label := _label(words, role, radius, "right", room, bold=line.ring is None):
+            shapes.append(label)
+        marks.append(Group(tuple(shapes), line.key, line.title))
+    return marks
+
+
+def _arc(radius: float, start: float, end: float, role: str, width: float) -> Arc:
+    return Arc(CENTRE_X, CENTRE_Y, radius, start, end, role, width)
+
+
+def _label(
+    words: str, role: str, radius: float, side: Side, room: Room, *, bold: bool
+) -> Text | None:
+    """Words on a ring, at the first free place along it; None where the half is full."""
+    places = (12, -12, 30, -30, 48, -48, 64, -64, 21, -21, 39, -39, 56, -56, 72, -72, 2)
+    turn = 180.0 if side == "left" else 0.0
+    return room.first_free(
+        Text(
+            CENTRE_X + radius * math.cos(math.radians(turn + angle)),
+            CENTRE_Y - radius * math.sin(math.radians(turn + angle)) + 0.35 * LABEL_SIZE,
+            words,
+            role,
+            LABEL_SIZE,
+            "middle",
+            bold=bold,
+        )
+        for angle in places
+    )
+
+
+def _with_legend(shapes: list[Shape], scenes: list[Scene], label: str) -> Picture:
+    y, x = LEGEND_Y, 16.0
+    for k, name in enumerate(scenes[0].names):
+        shapes.append(Line(((x, y - 4), (x + 44, y - 4)), f"ring {phase_role(k)}", 3.0))
+        shapes.append(Text(x + 54, y, shorten(name, _LETTERS_WIDE), phase_role(k), 12.0))
+        y += LEGEND_STEP
+    if any(not ring.phases for scene in scenes for ring in scene.measured):
+        for role, weight in (("leftover ink", 6.0), ("hollow ground", 3.0)):
+            shapes.append(Line(((x, y - 4), (x + 44, y - 4)), role, weight))
+        shapes.append(Text(x + 54, y, "?  measured, unexplained", "ink", 12.0, bold=True))
+        y += LEGEND_STEP
+    if len(scenes) == 1 and any(line.ring is None for line in scenes[0].calculated):
+        shapes.append(Line(((x, y - 4), (x + 44, y - 4)), "missing ink", 3.0))
+        shapes.append(Text(x + 54, y, "×  calculated strong, not measured", "ink", 12.0, bold=True))
+        y += LEGEND_STEP
+    for note in _notes(scenes):
+        shapes.append(Text(x, y, note, "soft", 11.0))
+        y += LEGEND_STEP - 3
+    return Picture(WIDTH, y, label, tuple(shapes))
+
+
+def _notes(scenes: list[Scene]) -> list[str]:
+    many = len(scenes) > 1
+    notes = []
+    for scene, half in zip(scenes, ("left: ", "right: "), strict=False):
+        notes.append(f"{half if many else ''}{scene.scale_text}; radii after it")
+        if not scene.has_intensity:
+            notes.append(f"{half if many else ''}no intensities given: lines of one weight")
+    return notes

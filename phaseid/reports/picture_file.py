@@ -1,0 +1,82 @@
+"""An identification drawn into a PNG, SVG or PDF file."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+
+from phaseid.errors import InputError
+from phaseid.matching.identification import Identification
+from phaseid.reports.picture_axis import AxisName
+
+SUFFIXES = (".png", ".svg", ".pdf")
+
+
+def check_picture_path(path: str | Path) -> None:
+    """Refuse a file name that no picture can have, before any work is done.
+
+    Raises InputError for another suffix than .png, .svg, .pdf, or a folder that is not there.
+    """
+    if Path(path).suffix.lower() not in SUFFIXES:
+        raise InputError(
+            "a picture cannot be written in a file of that name",
+            path=path,
+            remedy=f"Let it end in {SUFFIXES[0]}, {SUFFIXES[1]} or {SUFFIXES[2]}.",
+        )
+    check_folder(path)
+
+
+def check_folder(path: str | Path) -> None:
+    """Refuse a file in a folder that is not there, and a folder; raises InputError."""
+    file = Path(path)
+    if file.is_dir():
+        raise InputError("is a folder", path=path, remedy="Name a file in it.")
+    if not file.absolute().parent.is_dir():
+        raise InputError(
+            "cannot be written: there is no such folder",
+            path=path,
+            remedy="Make the folder first, or choose another place.",
+        )
+
+
+def picture_bytes(answer: Identification, suffix: str, *, axis: AxisName | None = None) -> bytes:
+    """The picture in the format of `suffix` (.png, .svg, .pdf)."""
+    from phaseid.reports.picture_sheet import sheet
+
+    picture = sheet(answer, axis=axis)
+    if suffix == ".svg":
+        from phaseid.reports.picture_svg import svg_file
+
+        return svg_file(picture).encode()
+    from phaseid.reports.picture_paper import paper
+
+    return paper(picture, "png" if suffix == ".png" else "pdf")
+
+
+def write_picture(
+    answer: Identification, path: str | Path, *, axis: AxisName | None = None
+) -> None:
+    """Draw the identification into a file; its suffix says how.
+
+    Raises InputError for another suffix than .png, .svg, .pdf, or where it cannot be written.
+    """
+    check_picture_path(path)
+    write_whole(path, picture_bytes(answer, Path(path).suffix.lower(), axis=axis))
+
+
+def write_whole(path: str | Path, content: bytes) -> None:
+    """Write a file whole or not at all; raises InputError where it cannot be written."""
+    file = Path(path)
+    part = file.with_name(f".{file.name}.{os.getpid()}.part")
+    try:
+        if file.exists() and not file.is_file():  # a device or a pipe is written to, not replaced
+            file.write_bytes(content)
+        else:
+            part.write_bytes(content)
+            part.replace(file)
+    except OSError as error:
+        part.unlink(missing_ok=True)
+        reason = (error.strerror or str(error)).lower()
+        raise InputError(
+            f"cannot be written: {reason}", path=path, remedy="Choose another place."
+        ) from None

@@ -1,0 +1,210 @@
+"""What there is to draw of one pattern: rings as measured, lines as one answer calculates them."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from phaseid.matching.identification import (
+    Assignment,
+    Hypothesis,
+    Identification,
+    Missing,
+    Scale,
+)
+from phaseid.reports.picture_style import phase_letter
+from phaseid.reports.plain import hkl_text, phase_text, safe, signed_text
+from phaseid.rings.ringlist import RingList
+
+UNKNOWN_HEIGHT = 45.0
+
+
+@dataclass(frozen=True, slots=True)
+class MeasuredRing:
+    """A ring: `d_A` as measured, `true_d_A` after the fitted scale, so that it meets its line.
+
+    `height` is its relative intensity (strongest = 100), `UNKNOWN_HEIGHT` where none was given;
+    `phases` are those whose lines explain it, none for a ring left over; `residuals` are theirs.
+    """
+
+    ring: int
+    d_A: float
+    true_d_A: float
+    height: float
+    phases: tuple[int, ...]
+    residuals: tuple[float, ...]
+    key: str
+    title: str
+
+
+@dataclass(frozen=True, slots=True)
+class CalculatedLine:
+    """A line of phase `phase` that explains `ring`, or is missing (`ring` None).
+
+    `height` is its intensity on the scale of the measured ones, per phase.
+    """
+
+    phase: int
+    hkl: tuple[int, int, int]
+    d_A: float
+    height: float
+    ring: int | None
+    key: str
+    title: str
+
+
+@dataclass(frozen=True, slots=True)
+class Scene:
+    """One pattern beside one answer; `number` counts patterns from 0."""
+
+    number: int
+    pattern: RingList
+    hypothesis: Hypothesis | None
+    measured: tuple[MeasuredRing, ...]
+    calculated: tuple[CalculatedLine, ...]
+    scale: Scale | None
+    has_intensity: bool
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """The phases of the answer, each with its letter."""
+        if self.hypothesis is None:
+            return ()
+        return tuple(
+            f"{phase_letter(k)}  {phase_text(part.phase)}"
+            for k, part in enumerate(self.hypothesis.phases)
+        )
+
+    @property
+    def scale_text(self) -> str:
+        """The fitted scale beside the uncertainty that was stated."""
+        stated = f"stated to {100 * self.pattern.probe.scale_sigma:.2g} %"
+        if self.scale is None:
+            return f"scale not fitted, {stated}"
+        return f"scale {self.scale.factor:.4f} ± {self.scale.sigma:.4f}, {stated}"
+
+
+def scene(answer: Identification, hypothesis: Hypothesis | None, number: int) -> Scene:
+    """Gather the rings and lines of pattern `number` under `hypothesis` (None: no answer)."""
+    pattern = answer.patterns[number]
+    heights = [float(value) for value in pattern.intensity]
+    scale = None
+    if hypothesis is not None:
+        scale = next((s for s in hypothesis.scale if s.pattern == number), None)
+    factor = 1.0 if scale is None else scale.factor
+    return Scene(
+        number=number,
+        pattern=pattern,
+        hypothesis=hypothesis,
+        measured=tuple(
+            _measured(pattern, hypothesis, number, ring, factor) for ring in range(len(pattern))
+        ),
+        calculated=() if hypothesis is None else _calculated(hypothesis, number, heights),
+        scale=scale,
+        has_intensity=any(not math.isnan(value) for value in heights),
+    )
+
+
+def _measured(
+    pattern: RingList, hypothesis: Hypothesis | None, number: int, ring: int, factor: float
+) -> MeasuredRing:
+    found = [
+        a
+        for a in (() if hypothesis is None else hypothesis.assignments)
+        if (a.pattern, a.ring) == (number, ring)
+    ]
+    d_A, height = float(pattern.d_A[ring]), float(pattern.intensity[ring])
+    told = f"Ring {ring + 1}, measured {d_A:.4f} Å"
+    if pattern.grades[ring] or not math.isnan(height):
+        told += f", intensity {pattern.grades[ring] or f'{height:.0f}'}"
+    for a in found:
+        formula = hypothesis.phases[a.phase].phase.formula if hypothesis else ""
+        told += (
+            f"; {phase_letter(a.phase)} {safe(formula)} {hkl_text(a.hkl)} at {a.d_calc_A:.4f} Å, "
+            f"off by {signed_text(a.residual_sigma)} sigma"
+        )
+    if not found:
+        told += "; unexplained"
+    return MeasuredRing(
+        ring=ring,
+        d_A=d_A,
+        true_d_A=d_A / factor,
+        height=UNKNOWN_HEIGHT if math.isnan(height) else height,
+        phases=tuple(a.phase for a in found),
+        residuals=tuple(a.residual_sigma for a in found),
+        key=ring_key(number, ring),
+        title=told,
+    )
+
+
+def ring_key(number: int, ring: int) -> str:
+    """What links a ring of the picture to its row in the table."""
+    return f"p{number + 1}r{ring + 1}"
+
+
+def missing_key(number: int, order: int) -> str:
+    """What links a missing line of the picture to its row."""
+    return f"p{number + 1}m{order + 1}"
+
+
+def _calculated(
+    hypothesis: Hypothesis, number: int, heights: list[float]
+) -> tuple[CalculatedLine, ...]:
+    factors = [
+        _intensity_factor(hypothesis, number, phase, heights)
+        for phase in range(len(hypothesis.phases))
+    ]
+    matched = [
+        CalculatedLine(
+            phase=a.phase,
+            hkl=a.hkl,
+            d_A=a.d_calc_A,
+            height=min(100.0, a.relative_intensity * factors[a.phase]),
+            ring=a.ring,
+            key=ring_key(number, a.ring),
+            title=f"{_told(hypothesis, a)}, ring {a.ring + 1}",
+        )
+        for a in hypothesis.assignments
+        if a.pattern == number
+    ]
+    missing = [
+        CalculatedLine(
+            phase=m.phase,
+            hkl=m.hkl,
+            d_A=m.d_calc_A,
+            height=min(100.0, m.relative_intensity * factors[m.phase]),
+            ring=None,
+            key=missing_key(number, order),
+            title=f"Missing: {_told(hypothesis, m)}",
+        )
+        for order, m in enumerate(m for m in hypothesis.missing if m.pattern == number)
+    ]
+    return tuple(sorted([*matched, *missing], key=lambda line: -line.d_A))
+
+
+def _told(hypothesis: Hypothesis, line: Assignment | Missing) -> str:
+    formula = safe(hypothesis.phases[line.phase].phase.formula)
+    return (
+        f"{phase_letter(line.phase)} {formula} {hkl_text(line.hkl)}, calculated "
+        f"{line.d_calc_A:.4f} Å, intensity {line.relative_intensity:.0f} of 100"
+    )
+
+
+def _intensity_factor(
+    hypothesis: Hypothesis, number: int, phase: int, heights: list[float]
+) -> float:
+    """What lays a phase's calculated intensities on the measured ones: the ratio of their sums.
+
+    Over rings that this phase alone explains, else over all of its; 1 where none was measured.
+    """
+    own = [a for a in hypothesis.assignments if a.pattern == number and a.phase == phase]
+    shared = {a.ring for a in hypothesis.assignments if a.pattern == number and a.phase != phase}
+    for pairs in (
+        [(heights[a.ring], a.relative_intensity) for a in own if a.ring not in shared],
+        [(heights[a.ring], a.relative_intensity) for a in own],
+    ):
+        seen = [(m, c) for m, c in pairs if not math.isnan(m)]
+        calculated = sum(c for _, c in seen)
+        if calculated > 0:
+            return sum(m for m, _ in seen) / calculated
+    return 1.0
