@@ -14,6 +14,7 @@ PAGES = {
     "probes": "electrons, X-rays, neutrons: what each shows",
     "chemistry": "saying which elements can be there",
     "answer": "reading the answer, and how sure is sure",
+    "report": "pictures, and a page to keep and send",
     "library": "the structures searched, and how to add your own",
     "calibrate": "scaling an instrument by a standard",
     "screen": "what should not be there; telling two phases apart",
