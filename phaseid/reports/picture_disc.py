@@ -32,6 +32,7 @@ CENTRE_X, CENTRE_Y = WIDTH / 2, TOP + RADIUS
 RULER_Y = TOP + 2 * RADIUS + 16
 LEGEND_Y, LEGEND_STEP = RULER_Y + 58, 20.0
 LABEL_SIZE = 11.0
+UNCROWDED = 16
 _LETTERS_WIDE = 56
 
 
@@ -111,9 +112,10 @@ def _heads(left: str, right: str) -> list[Shape]:
     ]
 
 
-def line_weight(height: float) -> float:
-    """Width of a ring that shows a relative intensity (strongest = 100)."""
-    return 1.0 + 4.0 * math.sqrt(max(height, 0.0) / 100.0)
+def line_weight(height: float, rings: int) -> float:
+    """Width of a ring that shows a relative intensity (strongest = 100), finer among many."""
+    fine = min(1.0, math.sqrt(UNCROWDED / max(rings, 1)))
+    return fine * (1.0 + 4.0 * math.sqrt(max(height, 0.0) / 100.0))
 
 
 def _measured_half(
@@ -123,7 +125,7 @@ def _measured_half(
     ordered = sorted(rings, key=lambda ring: (bool(ring.phases), -ring.height))
     for ring in ordered:
         radius = RADIUS / ring.true_d_A / reach
-        weight = line_weight(ring.height)
+        weight = line_weight(ring.height, len(rings))
         shapes: list[Line | Arc | Text] = []
         if ring.phases:
             step = 180.0 / len(ring.phases)
@@ -148,7 +150,7 @@ def _calculated_half(lines: tuple[CalculatedLine, ...], reach: float, room: Room
         radius = RADIUS / line.d_A / reach
         role = phase_role(line.phase)
         kind = "ring" if line.ring is not None else "missing"
-        weight = line_weight(line.height)
+        weight = line_weight(line.height, len(lines))
         shapes: list[Line | Arc | Text] = [_arc(radius, -90, 90, f"{kind} {role}", weight)]
         hkl = "".join(str(k) if 0 <= k <= 9 else f" {k} " for k in line.hkl).strip()
         words = f"{phase_letter(line.phase)} {hkl}" + (" ×" if line.ring is None else "")
@@ -207,7 +209,8 @@ def _notes(scenes: list[Scene]) -> list[str]:
     many = len(scenes) > 1
     notes = []
     for scene, half in zip(scenes, ("left: ", "right: "), strict=False):
-        notes.append(f"{half if many else ''}{scene.scale_text}; radii after it")
+        after = "" if scene.scale is None else "; radii after it"
+        notes.append(f"{half if many else ''}{scene.scale_text}{after}")
         if not scene.has_intensity:
             notes.append(f"{half if many else ''}no intensities given: lines of one weight")
     return notes

@@ -24,17 +24,21 @@ class MeasuredRing:
     """A ring: `d_A` as measured, `true_d_A` after the fitted scale, so that it meets its line.
 
     `height` is its relative intensity (strongest = 100), `UNKNOWN_HEIGHT` where none was given;
-    `phases` are those whose lines explain it, none for a ring left over; `residuals` are theirs.
+    `matches` are (phase, deviation in sigma) of the lines that explain it; none for one left over.
     """
 
     ring: int
     d_A: float
     true_d_A: float
     height: float
-    phases: tuple[int, ...]
-    residuals: tuple[float, ...]
+    matches: tuple[tuple[int, float], ...]
     key: str
     title: str
+
+    @property
+    def phases(self) -> tuple[int, ...]:
+        """The phases that explain it, each once."""
+        return tuple(dict.fromkeys(phase for phase, _ in self.matches))
 
 
 @dataclass(frozen=True, slots=True)
@@ -130,8 +134,7 @@ def _measured(
         d_A=d_A,
         true_d_A=d_A / factor,
         height=UNKNOWN_HEIGHT if math.isnan(height) else height,
-        phases=tuple(a.phase for a in found),
-        residuals=tuple(a.residual_sigma for a in found),
+        matches=tuple((a.phase, a.residual_sigma) for a in found),
         key=ring_key(number, ring),
         title=told,
     )

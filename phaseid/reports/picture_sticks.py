@@ -58,7 +58,7 @@ def sticks(scene: Scene, axis: Axis) -> Picture:
         *_frame(span, scene),
         *(_down(line, span, room) for line in lines),
         *(_up(ring, span, room) for ring in rings),
-        *(_residual(ring, span) for ring in measured if ring.phases),
+        *(_residual(ring, span, room) for ring in measured if ring.phases),
     ]
     label = (
         f"Sticks on an axis of {axis.title}: {len(measured)} measured lines up, "
@@ -161,16 +161,21 @@ def _down(line: CalculatedLine, span: _Span, room: Room) -> Group:
     return Group(tuple(shapes), line.key, line.title)
 
 
-def _residual(ring: MeasuredRing, span: _Span) -> Group:
+def _residual(ring: MeasuredRing, span: _Span, room: Room) -> Group:
     x = span.x(ring.true_d_A)
     shapes: list[Line | Text] = []
-    for phase, value in zip(ring.phases, ring.residuals, strict=True):
+    for phase, value in ring.matches:
         shown = max(-FARTHEST_SIGMA, min(FARTHEST_SIGMA, value))
         shapes.append(_marker(x, _sigma_y(shown), phase))
         if shown != value:
-            below = shown < 0
-            y = _sigma_y(shown) + (-8 if below else 16)
-            shapes.append(Text(x + 7, y, signed_text(value), "ink", LABEL_SIZE, bold=True))
+            places = [
+                Text(
+                    x, _sigma_y(shown) + drop, signed_text(value), "ink", 11.0, "middle", bold=True
+                )
+                for drop in ((-8, -20) if shown < 0 else (16, 28))
+            ]
+            if label := room.first_free(places):
+                shapes.append(label)
     return Group(tuple(shapes), ring.key, ring.title)
 
 

@@ -29,7 +29,12 @@ LIGHT = Palette(
 DARK = Palette(
     "#15181c", "#eceef0", "#a9b0b8", "#3a4048", ("#6cb8ee", "#f0a04b", "#3fc79b", "#e49ac4")
 )
-DASHES: tuple[tuple[float, ...], ...] = ((), (9.0, 4.0), (2.5, 3.0), (11.0, 3.5, 2.5, 3.5))
+DASHES: tuple[tuple[float, ...], ...] = (
+    (),
+    (10.0, 4.0),
+    (10.0, 3.0, 3.0, 3.0),
+    (10.0, 3.0, 3.0, 3.0, 3.0, 3.0),
+)
 MISSING_DASH = (1.5, 4.5)
 
 
