@@ -21,6 +21,7 @@ from phaseid.cli.ring_input import (
     Unit,
     ring_lists,
 )
+from phaseid.cli.settings import settings
 
 AxisText = Annotated[
     str | None,
@@ -114,6 +115,11 @@ def report(
             ("nothing but", only or ""),
             ("none of", exclude or ""),
             ("phases at most", str(max_phases)),
+            *(
+                (f"default {held.key}", held.value or "")
+                for held in settings()
+                if held.key in ("probe", "calibration")
+            ),
         ),
     )
     content = page(answer, provenance, axis=chosen).encode()

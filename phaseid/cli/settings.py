@@ -142,6 +142,7 @@ def command_defaults() -> dict[str, dict[str, str]]:
     probe = {"probe": given["probe"]} if "probe" in given else {}
     return {
         "identify": chemistry,
+        "report": chemistry,
         "near": {**chemistry, **probe},
         "lines": dict(probe),
         "compare": dict(probe),

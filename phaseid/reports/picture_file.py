@@ -29,9 +29,13 @@ def check_picture_path(path: str | Path) -> None:
 def check_folder(path: str | Path) -> None:
     """Refuse a file in a folder that is not there, and a folder; raises InputError."""
     file = Path(path)
-    if file.is_dir():
+    try:
+        is_folder, has_place = file.is_dir(), file.absolute().parent.is_dir()
+    except OSError as error:  # a name that no file can have
+        raise _unwritable(path, error) from None
+    if is_folder:
         raise InputError("is a folder", path=path, remedy="Name a file in it.")
-    if not file.absolute().parent.is_dir():
+    if not has_place:
         raise InputError(
             "cannot be written: there is no such folder",
             path=path,
@@ -67,7 +71,7 @@ def write_picture(
 def write_whole(path: str | Path, content: bytes) -> None:
     """Write a file whole or not at all; raises InputError where it cannot be written."""
     file = Path(path)
-    part = file.with_name(f".{file.name}.{os.getpid()}.part")
+    part = file.with_name(f".phaseid-{os.getpid()}.part")
     try:
         if file.exists() and not file.is_file():  # a device or a pipe is written to, not replaced
             file.write_bytes(content)
@@ -76,7 +80,9 @@ def write_whole(path: str | Path, content: bytes) -> None:
             part.replace(file)
     except OSError as error:
         part.unlink(missing_ok=True)
-        reason = (error.strerror or str(error)).lower()
-        raise InputError(
-            f"cannot be written: {reason}", path=path, remedy="Choose another place."
-        ) from None
+        raise _unwritable(path, error) from None
+
+
+def _unwritable(path: str | Path, error: OSError) -> InputError:
+    reason = (error.strerror or str(error)).lower()
+    return InputError(f"cannot be written: {reason}", path=path, remedy="Choose another place.")
