@@ -64,7 +64,9 @@ def _settle(fract: Floats, operations: Operations, metric: Floats) -> NDArray[np
 
     Shape (s, n) or, in a centrosymmetric group, (s, 2n): site; image, then the images inverted.
     """
-    tensor = operations.from_primitive.T @ metric @ operations.from_primitive
+    tensor = metric
+    if len(operations.centrings) > 1:
+        tensor = operations.from_primitive.T @ metric @ operations.from_primitive
     steps, length2 = _steps(fract, operations, tensor)
     reach2 = SAME_ATOM_A**2
     alike: NDArray[np.bool_] = length2 <= reach2

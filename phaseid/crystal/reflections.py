@@ -23,6 +23,7 @@ MOST_REFLECTIONS = 20_000
 _MOST_POINTS = 100_000_000
 _SLAB = 1 << 14  # points looked at together: they stay in the cache, and memory stays flat
 _LADDER = (3, 5, 8, 12, 16, 24, 32, 48)  # half sizes of boxes kept; they fit one byte
+_RUNGS = [next(rung for rung in _LADDER if rung >= n) for n in range(_LADDER[-1] + 1)]
 _MOST_KEPT = 1 << 14  # points of a box: at most 64 kB of reflections
 _INTEGER = 1e-3  # h·t is a multiple of 1/24; anything nearer to an integer than this is one
 
@@ -93,8 +94,8 @@ def _enumerate(
 ) -> Reflections:
     limit = [int(length / d_min_A * (1 + 1e-9)) for length in cell[:3]]
     domain = _domain(operations)
-    box = tuple(next((rung for rung in _LADDER if rung >= n), n) for n in limit)
-    if max(box) <= _LADDER[-1] and math.prod(_counts(box, domain.nonnegative)) <= _MOST_KEPT:
+    box = tuple(_RUNGS[n] for n in limit) if max(limit) < len(_RUNGS) else None
+    if box is not None and math.prod(_counts(box, domain.nonnegative)) <= _MOST_KEPT:
         kept, counts = _sets_in_box(operations, box)
         hkl = kept.astype(np.float64)
         inverse_d2 = squares(hkl, reciprocal)

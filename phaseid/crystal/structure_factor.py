@@ -42,14 +42,14 @@ def squared_amplitudes(
     """
     atoms = _atoms(crystal, operations)
     n = len(reflections.hkl)
-    out = np.empty((3, n))
-    step = max(1, min(n, _CHUNK // len(atoms.images.site)))
-    for start in range(0, n, step):
-        part = slice(start, start + step)
-        hkl, inverse_d2 = reflections.hkl[part], reflections.inverse_d2[part]
+    step = max(1, _CHUNK // len(atoms.images.site))
+    parts = []
+    for start in range(0, max(n, 1), step):
+        hkl = reflections.hkl[start : start + step]
+        inverse_d2 = reflections.inverse_d2[start : start + step]
         sums = _geometric_sums(atoms, hkl, inverse_d2)
-        out[:, part] = _intensities(atoms, sums, inverse_d2, xray_energy_eV)
-    return out
+        parts.append(_intensities(atoms, sums, inverse_d2, xray_energy_eV))
+    return parts[0] if len(parts) == 1 else np.concatenate(parts, axis=1)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
