@@ -85,10 +85,9 @@ def _pattern(answer: Identification, one: Scene, axis: AxisName | None) -> str:
         f"</figure></div>"
     )
     table = scrolling(_table(one), f"Rings of {title}, scrolls sideways")
-    note = (
-        f"Measured d / calculated d: {one.scale_text}; deviations are taken after it. "
-        "Calculated intensity: strongest line of each phase = 100."
-    )
+    note = f"Measured d / calculated d: {one.scale_text}"
+    note += "." if one.scale is None else "; deviations are taken after it."
+    note += " Calculated intensity: strongest line of each phase = 100."
     return (
         f'<div class="pattern"><h3>{words(heading)}</h3>{figures}</div>{table}'
         f'<p class="quiet">{words(note)}</p>'
