@@ -19,6 +19,7 @@ from phaseid.cli import (
     identify,
     library,
     lines,
+    measure,
     near,
     ratio,
     report,
@@ -100,6 +101,7 @@ def front(
 
 app.command("identify", short_help="Name the phases behind rings.")(identify.identify)
 app.command("report", short_help="Write the answer as one page.")(report.report)
+app.command("measure", short_help="Find rings in images and profiles.")(measure.measure)
 app.command("lines", short_help="List the lines of a phase.")(lines.lines)
 app.command("near", short_help="List phases with lines near spacings.")(near.near)
 app.command("ratio", short_help="Name structure types by ring ratios.")(ratio.ratio)

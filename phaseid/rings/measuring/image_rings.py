@@ -1,0 +1,171 @@
+"""From an image to its rings."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from phaseid.errors import InputError
+from phaseid.rings.measuring.along_ring import AlongRing, follow
+from phaseid.rings.measuring.centre import guess_geometry
+from phaseid.rings.measuring.defects import lone_pixels, shadow
+from phaseid.rings.measuring.fitting import PeakFit
+from phaseid.rings.measuring.geometry import Floats, Geometry, Pixels
+from phaseid.rings.measuring.images import read_image
+from phaseid.rings.measuring.measurement import MeasuredRing, Measurement, no_rings
+from phaseid.rings.measuring.peaks import find_peaks
+from phaseid.rings.measuring.polar import PolarSums, polar_sums
+from phaseid.rings.measuring.refining import refine_geometry
+
+STEP_PX = 0.5
+SECTORS = 72
+MIN_COVERAGE = 0.12  # of a circle, below which its mean is not used
+MIN_POSITIVE = 0.6  # of the sectors show a ring, else it is single spots or chance
+MIN_BRIGHT = 0.2  # of the sectors hold a clear spot of a spotty ring
+SPOTTY = 0.35
+
+
+def measure_image(path: str | Path) -> Measurement:
+    """Centre, ellipse and rings of an image; radii in px after the ellipse is made a circle.
+
+    Raises InputError if the file cannot be used or shows no rings.
+    """
+    image, usable = read_image(path)
+    return measure_pixels(image, usable, source=str(path))
+
+
+def measure_pixels(image: Pixels, usable: NDArray[np.bool_], *, source: str) -> Measurement:
+    """As `measure_image`, of counts (h, w) and which of them are usable."""
+    saturated = float(1.0 - usable.mean())
+    usable = usable & ~lone_pixels(image, usable)
+    if usable.mean() < 0.2:
+        raise no_rings(source, "most pixels are saturated or dead")
+    geometry = guess_geometry(image, usable)
+    usable &= ~shadow(image, usable, geometry)
+    if usable.mean() < 0.1:
+        raise no_rings(source, "most of the image is dark")
+    start = _start_radius(polar_sums(image, usable, geometry, step=1.0, sectors=36))
+    geometry = refine_geometry(image, usable, geometry, r_min=start)
+    sums = polar_sums(image, usable, geometry, step=STEP_PX, sectors=SECTORS)
+    radius, mean, sigma, noise, first = _profile(sums)
+    found = find_peaks(radius, mean, sigma, origin=0.0)
+    if found.fit is None:
+        raise _nothing(image, usable, source, found.broad)
+    cells, number = _cells(sums, first, len(radius))
+    along = follow(found.fit, radius, cells, number, noise)
+    even = (along.positive >= MIN_POSITIVE) & (along.median_score > 2.5)
+    keep = even | (along.bright > MIN_BRIGHT)
+    keep &= np.isfinite(along.position_sigma)
+    if not keep.any():
+        raise _nothing(image, usable, source, found.broad)
+    rings = tuple(_ring(found.fit, along, k, geometry) for k in np.flatnonzero(keep))
+    with np.errstate(invalid="ignore"):
+        median = np.nanmedian(np.where(number > 0, cells, np.nan), axis=1)
+    remarks = []
+    if saturated > 0.001:
+        remarks.append(f"{100 * saturated:.1f} % of the image is saturated and was left out.")
+    if not geometry.ellipse_known:
+        remarks.append("The ellipse is not determined by this image; circles were assumed.")
+    spotty = sum(1 for ring in rings if (ring.spottiness or 0) > SPOTTY)
+    if spotty:
+        remarks.append(f"{spotty} of {len(rings)} rings are spotty or textured (see their notes).")
+    return Measurement(
+        source=source,
+        column="radius_px",
+        rings=rings,
+        curve=np.stack([radius, mean, median, found.background], axis=1),
+        limit=found.limit,
+        halos=found.broad,
+        geometry=replace(geometry),
+        shape=(image.shape[0], image.shape[1]),
+        masked=float(1.0 - usable.mean()),
+        remarks=tuple(remarks),
+    )
+
+
+def _start_radius(sums: PolarSums) -> float:
+    """Radius (px) from which on circles are seen well, outside the beam and its stop."""
+    share = sums.number.sum(axis=1) / np.maximum(sums.frame.sum(axis=1), 1)
+    seen = np.flatnonzero((share > 0.4) & (sums.number.sum(axis=1) > 20))
+    return float(max(4.0, seen[0] + 2.0 if seen.size else 4.0))
+
+
+def _profile(sums: PolarSums) -> tuple[Floats, Floats, Floats, Floats, int]:
+    """Radius, mean, its one-sigma and the noise of a pixel (n,), and the first bin used."""
+    from scipy.ndimage import median_filter
+
+    number = sums.number.sum(axis=1)
+    middle = (np.arange(len(number)) + 0.5) * sums.step
+    full = 2.0 * np.pi * middle * sums.step
+    in_frame = sums.frame.sum(axis=1)
+    good = (number > MIN_COVERAGE * full) & (number > 0.3 * in_frame) & (middle > 4.0)
+    good &= number >= 12
+    runs = np.flatnonzero(good)
+    if runs.size < 40:
+        return (*(np.zeros(0),) * 4, 0)
+    # the longest stretch without a break
+    breaks = np.flatnonzero(np.diff(runs) > 1)
+    bounds = np.concatenate([[0], breaks + 1, [runs.size]])
+    longest = int(np.argmax(np.diff(bounds)))
+    part = slice(int(runs[bounds[longest]]), int(runs[bounds[longest + 1] - 1]) + 1)
+    n, total, square = (a[part] for a in (sums.number, sums.total, sums.square))
+    count = n.sum(axis=1)
+    mean = total.sum(axis=1) / count
+    within = (square - np.where(n > 0, total**2 / np.maximum(n, 1), 0.0)).sum(axis=1)
+    dof = count - (n > 0).sum(axis=1)
+    var = np.where(dof > 5, within / np.maximum(dof, 1), np.nan)
+    known = np.isfinite(var)
+    index = np.arange(len(var))
+    var = np.interp(index, index[known], var[known])
+    noise = np.sqrt(np.maximum(median_filter(var, 5), 0.5 * var) + 1e-12 * mean.max() ** 2)
+    return sums.radius[part], mean, noise / np.sqrt(count), noise, part.start
+
+
+def _cells(sums: PolarSums, first: int, n: int) -> tuple[Floats, Floats]:
+    part = slice(first, first + n)
+    number = sums.number[part]
+    return np.where(number > 0, sums.total[part] / np.maximum(number, 1), 0.0), number
+
+
+def _ring(fit: PeakFit, along: AlongRing, k: int, geometry: Geometry) -> MeasuredRing:
+    position = float(fit.position[k])
+    sigma = float(max(along.position_sigma[k], 0.5 * fit.position_sigma[k]))
+    if along.coverage[k] < 0.9:  # a part of a circle moves with its centre
+        sigma = float(np.hypot(sigma, np.sqrt(np.diag(geometry.covariance)[:2].max())))
+    spottiness = float(along.spottiness[k])
+    note = ""
+    if spottiness > SPOTTY:
+        note = "textured" if along.alike[k] > 0.5 else "spotty"
+    return MeasuredRing(
+        position=position,
+        sigma=sigma,
+        width=float(fit.fwhm[k]),
+        width_sigma=float(fit.fwhm_sigma[k]),
+        intensity=float(fit.area[k]),
+        intensity_sigma=float(
+            np.hypot(fit.area_sigma[k], fit.area[k] * spottiness / np.sqrt(SECTORS))
+        ),
+        total=float(fit.area[k] * 2.0 * np.pi * position),
+        spottiness=spottiness,
+        coverage=float(along.coverage[k]),
+        note=note,
+    )
+
+
+def _nothing(
+    image: Pixels, usable: NDArray[np.bool_], source: str, broad: tuple[float, ...]
+) -> InputError:
+    """The error that says what the image shows instead of rings."""
+    if broad:
+        at = ", ".join(f"{r:.0f}" for r in broad)
+        return no_rings(source, f"only broad halos of amorphous matter (radius {at} px)")
+    values = image[usable]
+    low, middle, high = (float(v) for v in np.percentile(values, [16, 50, 99.95]))
+    spread = max(middle - low, 1e-6)
+    bright = values > middle + 0.3 * (high - middle)
+    if high > middle + 15 * spread and 1e-5 < float(bright.mean()) < 0.01:
+        return no_rings(source, "the image shows single spots, as a single crystal does")
+    return no_rings(source, "nothing in it is concentric")

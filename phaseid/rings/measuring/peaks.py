@@ -1,0 +1,194 @@
+"""Which peaks a curve holds: search by matched filter, fit, look again at what is left over."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from phaseid.rings.measuring.fitting import (
+    FWHM_PER_SIGMA,
+    Floats,
+    PeakFit,
+    Satellite,
+    background_basis,
+    fit_background,
+    fit_peaks,
+)
+
+DETECTION = 5.0  # sigmas above the background below which no peak is claimed
+WIDTHS = 2.0 ** np.arange(0.0, 5.0, 0.5)  # sigmas looked for, in steps of the abscissa
+MAX_PEAKS = 150
+PASSES = 4
+
+
+@dataclass(frozen=True, slots=True)
+class Found:
+    """Peaks of a curve: their fit, detection limit (area, at the median background), halos."""
+
+    fit: PeakFit | None
+    background: Floats
+    limit: float
+    broad: tuple[float, ...]
+    fwhm: float
+
+
+def kernel(width: float) -> Floats:
+    """Matched filter for a Gaussian of sigma `width` steps, blind to a parabola beneath it."""
+    half = int(np.ceil(4.0 * width)) + 1
+    t = np.arange(-half, half + 1, dtype=np.float64)
+    gauss = np.exp(-0.5 * (t / width) ** 2)
+    smooth = np.stack([np.ones_like(t), t * t], axis=1)
+    inner = gauss - smooth @ np.linalg.lstsq(smooth, gauss, rcond=None)[0]
+    return np.asarray(inner / (inner @ gauss))
+
+
+def significance(y: Floats, sigma: Floats, width: float) -> Floats:
+    """Height of a peak of `width` steps at each point over its one-sigma (n,)."""
+    weights = kernel(width)
+    half = len(weights) // 2
+    if len(y) <= 2 * half + 1:
+        return np.zeros_like(y)
+    height = np.convolve(y, weights, mode="same")
+    spread = np.sqrt(np.convolve(sigma**2, weights**2, mode="same"))
+    score = height / spread
+    edge = half // 2
+    padded = np.pad(y, half, mode="reflect", reflect_type="odd")
+    score_edge = np.convolve(padded, weights, mode="same")[half:-half] / spread
+    score[:half], score[-half:] = score_edge[:half], score_edge[-half:]
+    score[:edge], score[len(score) - edge :] = 0.0, 0.0
+    return np.asarray(score)
+
+
+def candidates(
+    y: Floats, sigma: Floats, widths: Floats, threshold: float
+) -> list[tuple[int, float, float]]:
+    """(index, sigma in steps, significance) of peaks that stand out, strongest first."""
+    scores = np.stack([significance(y, sigma, width) for width in widths])
+    best = scores.argmax(axis=0)
+    top = scores.max(axis=0)
+    inner = (top[1:-1] >= top[:-2]) & (top[1:-1] > top[2:]) & (top[1:-1] > threshold)
+    places = np.flatnonzero(inner) + 1
+    found: list[tuple[int, float, float]] = []
+    for place in places[np.argsort(-top[places])]:
+        width = float(widths[best[place]])
+        if all(abs(place - p) > 1.6 * max(min(width, w), 1.0) for p, w, _ in found):
+            found.append((int(place), width, float(top[place])))
+    return found
+
+
+def narrowest_first(y: Floats, sigma: Floats, threshold: float) -> list[tuple[int, float, float]]:
+    """As `candidates`, each at the narrowest scale at which it stands out, with its own width.
+
+    Narrow scales see a peak alone, wide ones would take it together with its neighbours. The width
+    is where the curve bends: the inflections of a Gaussian lie one sigma from its top.
+    """
+    from scipy.ndimage import gaussian_filter1d
+
+    found: list[tuple[int, float, float]] = []
+    for scale in WIDTHS:
+        score = significance(y, sigma, scale)
+        inner = (score[1:-1] >= score[:-2]) & (score[1:-1] > score[2:]) & (score[1:-1] > threshold)
+        places = np.flatnonzero(inner) + 1
+        bend = gaussian_filter1d(y, scale, order=2, mode="nearest")
+        fresh = []
+        for place in places[np.argsort(-score[places])]:
+            if any(abs(place - p) < 3.0 * max(scale, w) for p, w, _ in found):
+                continue
+            left = np.flatnonzero(bend[:place] > 0)
+            right = np.flatnonzero(bend[place:] > 0)
+            if not left.size or not right.size or bend[place] >= 0:
+                continue
+            half = 0.5 * (place + right[0] - left[-1] - 1.0)
+            width = float(np.sqrt(max(half**2 - scale**2, 0.25)))
+            fresh.append((int(place), width, float(score[place])))
+        found += fresh
+    return found
+
+
+def find_peaks(
+    x: Floats,
+    y: Floats,
+    sigma: Floats,
+    *,
+    origin: float | None = None,
+    satellite: Satellite | None = None,
+    detection: float = DETECTION,
+) -> Found:
+    """Peaks of y ± sigma (n,) at evenly spaced x; `origin` is where a direct beam's tail begins.
+
+    Peaks much wider than the others are halos and go to `broad` (their positions).
+    """
+    step = float(np.median(np.diff(x)))
+    first = narrowest_first(y, sigma, detection + 1.0)
+    if not first:
+        basis = background_basis(x, 12.0 * step, origin=origin)
+        level = fit_background(y, sigma, basis)
+        return Found(None, level, _limit(sigma, 3.0, step, detection), (), 6.0 * step)
+    typical = _typical_width(first)
+    widths = WIDTHS[(typical / 2.1 <= WIDTHS) & (typical * 2.1 >= WIDTHS)]
+    basis = background_basis(x, typical * FWHM_PER_SIGMA * step, origin=origin)
+    position: list[float] = []
+    fwhm: list[float] = []
+    fit: PeakFit | None = None
+    broad: list[float] = []
+    level = fit_background(y, sigma, basis)
+    residual = y - level
+    for turn in range(PASSES):
+        spread = sigma if fit is None else sigma * max(1.0, fit.chi2_reduced) ** 0.5
+        seen = [c for c in first if typical / 2.5 < c[1] < 2.5 * typical] if turn == 0 else None
+        fresh = [
+            c
+            for c in seen or candidates(residual, spread, widths, detection)
+            if all(abs(x[c[0]] - p) > 0.6 * w for p, w in zip(position, fwhm, strict=True))
+        ]
+        fresh = fresh[: MAX_PEAKS - len(position)]
+        if not fresh:
+            break
+        position += [float(x[place]) for place, _, _ in fresh]
+        fwhm += [width * FWHM_PER_SIGMA * step for _, width, _ in fresh]
+        for _ in range(3):
+            fit = fit_peaks(
+                x, y, sigma, np.array(position), np.array(fwhm), basis, satellite=satellite
+            )
+            keep, wide = _sound(fit, typical * FWHM_PER_SIGMA * step, x, detection)
+            broad += [float(p) for p in fit.position[wide]]
+            position, fwhm = list(fit.position[keep]), list(fit.fwhm[keep])
+            if keep.all():
+                break
+            if not position:
+                fit = None
+                break
+        if fit is None:
+            break
+        level = fit.background
+        residual = y - fit.model
+    width = typical if fit is None else float(np.median(fit.fwhm)) / FWHM_PER_SIGMA / step
+    limit = _limit(sigma, width, step, detection)
+    return Found(fit, level, limit, tuple(broad), width * FWHM_PER_SIGMA * step)
+
+
+def _typical_width(found: list[tuple[int, float, float]]) -> float:
+    strongest = sorted(found, key=lambda f: -f[2])[:8]
+    widths = [width for _, width, score in strongest if score > 0.1 * strongest[0][2]]
+    return max(1.0, float(np.percentile(widths, 40)))
+
+
+def _sound(
+    fit: PeakFit, typical_fwhm: float, x: Floats, detection: float
+) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+    """Which peaks stand (m,), and which are halos (m,)."""
+    usual = max(float(np.median(fit.fwhm)), typical_fwhm)
+    strong = fit.area > 0.7 * detection * fit.area_sigma
+    strong &= fit.position_sigma < 0.5 * fit.fwhm
+    inside = (fit.position > x[0]) & (fit.position < x[-1])
+    wide = strong & (fit.fwhm > 3.0 * usual)
+    return strong & inside & ~wide & (fit.fwhm > 0.3 * usual), wide
+
+
+def _limit(sigma: Floats, width: float, step: float, detection: float) -> float:
+    """Smallest area that is found: `detection` sigmas of a peak at the median noise."""
+    weights = kernel(width)
+    height = detection * float(np.median(sigma)) * float(np.sqrt((weights**2).sum()))
+    return height * width * step * float(np.sqrt(2.0 * np.pi))
