@@ -8,6 +8,7 @@ from typing import Annotated
 import typer
 
 from phaseid.cli.options import (
+    AxisText,
     Exclude,
     Json,
     LibraryFile,
@@ -29,6 +30,7 @@ from phaseid.cli.ring_input import (
     Unit,
     ring_lists,
 )
+from phaseid.errors import InputError
 
 
 def identify(
@@ -57,6 +59,7 @@ def identify(
             "--plot", metavar="FILE", help="Draw the answer, too: FILE.png, FILE.svg or FILE.pdf."
         ),
     ] = None,
+    axis: AxisText = None,
     as_json: Json = False,
 ) -> None:
     """Rank the phases and mixtures that explain a list of rings.
@@ -69,11 +72,15 @@ def identify(
     """
     from phaseid.matching.chemistry import Chemistry
     from phaseid.matching.identify import identify as rank
+    from phaseid.reports.picture_axis import axis_for, axis_name
 
+    chosen = None if axis is None else axis_name(axis)
     if plot is not None:
         from phaseid.reports.picture_file import check_picture_path
 
         check_picture_path(plot)
+    elif chosen is not None:
+        raise InputError("--axis is that of a picture", remedy="Add --plot FILE.png.")
     chemistry = Chemistry.parse(must, only, exclude)
     patterns = ring_lists(
         rings,
@@ -85,6 +92,8 @@ def identify(
         camera_constant=camera_constant,
         calibration=calibration,
     )
+    for pattern in patterns:
+        axis_for(pattern, chosen)
     with open_library(library) as shelf:
         answer = rank(patterns, shelf, chemistry=chemistry, max_phases=max_phases, top=top)
     if as_json:
@@ -98,5 +107,5 @@ def identify(
     if plot is not None:
         from phaseid.reports.picture_file import write_picture
 
-        write_picture(answer, plot)
+        write_picture(answer, plot, axis=chosen)
         say(f"Picture written to {plot}.")

@@ -32,6 +32,14 @@ Must = Annotated[
     typer.Option("--must", metavar="EL,EL", help="Elements the answer's phases hold together."),
 ]
 Only = Annotated[str | None, typer.Option("--only", metavar="EL,EL", help="No element but these.")]
+AxisText = Annotated[
+    str | None,
+    typer.Option(
+        "--axis",
+        metavar="AXIS",
+        help="Of the sticks drawn: d, 1/d, q or two-theta; default: as measured.",
+    ),
+]
 Exclude = Annotated[str | None, typer.Option("--not", metavar="EL,EL", help="None of these.")]
 
 

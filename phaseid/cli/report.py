@@ -9,7 +9,15 @@ from typing import Annotated
 
 import typer
 
-from phaseid.cli.options import Exclude, LibraryFile, Must, Only, open_library, say
+from phaseid.cli.options import (
+    AxisText,
+    Exclude,
+    LibraryFile,
+    Must,
+    Only,
+    open_library,
+    say,
+)
 from phaseid.cli.ring_input import (
     CalibrationName,
     CameraConstantText,
@@ -22,15 +30,6 @@ from phaseid.cli.ring_input import (
     ring_lists,
 )
 from phaseid.cli.settings import settings
-
-AxisText = Annotated[
-    str | None,
-    typer.Option(
-        "--axis",
-        metavar="AXIS",
-        help="Of the sticks: d, 1/d, q or two-theta; default: as measured.",
-    ),
-]
 
 
 def report(

@@ -131,3 +131,13 @@ def test_a_picture_that_cannot_be_drawn_is_refused_before_the_work(
     done = phaseid("identify", ring_file, "--plot", str(tmp_path / name))
     assert (done.code, done.out) == (2, "")
     assert said in done.err
+
+
+def test_the_axis_of_a_picture_is_chosen(phaseid, ring_file: str, tmp_path: Path) -> None:
+    path = tmp_path / "foil.svg"
+    words = ("identify", ring_file, "--only", "Al", "--axis", "q")
+    assert phaseid(*words, "--plot", str(path)).code == 0
+    assert "q = 2π/d in 1/Å" in path.read_text(encoding="utf-8")
+    done = phaseid(*words)
+    assert done.code == 2
+    assert "Add --plot" in done.err
