@@ -37,12 +37,13 @@ def build_hypothesis(
     model: Model,
     tables: tuple[LineTable, ...],
     judged: Judged,
+    axes: list[tuple[int, int, int] | None],
     phases: list[Phase],
     members: list[list[tuple[int, Phase]]],
     probability: float,
     rank: int,
 ) -> Hypothesis:
-    """Assemble the hypothesis of `judged`, whose members are `phases`.
+    """Assemble the hypothesis of `judged`, whose members are `phases` with fibre `axes`.
 
     `members` lists, for each phase, the (candidate, phase) that these rings cannot tell from it.
     """
@@ -84,6 +85,7 @@ def build_hypothesis(
                 indistinguishable=tuple(other for _, other in members[k]),
                 cell=cell.cell,
                 cell_sigma=cell.sigma,
+                fibre_axis=axes[k],
                 separators=tuple(
                     Separator(
                         other,

@@ -85,8 +85,8 @@ def identify(
         )
         search = _search(patterns, own, allowed, chemistry, max_phases)
     standing = weigh(search)
-    phase_of = _Phases(library, first, allowed)
-    hypotheses = _hypotheses(search.model, own, standing, phase_of, top)
+    phase_of = _Phases(library, first, search.phases)
+    hypotheses = _hypotheses(search, own, standing, phase_of, top)
     listed = 1.0 - standing.unlisted
     return Identification(
         verdict=_verdict(hypotheses, listed),
@@ -199,7 +199,7 @@ class _Phases:
 
 
 def _hypotheses(
-    model: Model,
+    search: Search,
     tables: tuple[LineTable, ...],
     standing: Standing,
     phase_of: _Phases,
@@ -211,14 +211,15 @@ def _hypotheses(
     answers: list[Hypothesis] = []
     while remaining and len(answers) < top:
         leader = remaining[0]
-        twins = _twins(model, leader, remaining)
-        taken = _same_answer(leader, twins, remaining)
+        twins = _twins(search, leader, remaining)
+        taken = _same_answer(search, leader, twins, remaining)
         total = min(sum(probability[members] for members in taken), 1.0)
         answers.append(
             build_hypothesis(
-                model,
+                search.model,
                 tables,
                 leader,
+                [search.axes.get(c) for c in leader.members],
                 [phase_of(c) for c in leader.members],
                 [[(c, phase_of(c)) for c in others] for others in twins],
                 total,
@@ -230,25 +231,32 @@ def _hypotheses(
     return tuple(replace(h, rank=i + 1) for i, h in enumerate(answers))
 
 
-def _twins(model: Model, leader: Judged, remaining: list[Judged]) -> list[list[int]]:
-    """For each phase of the leader, the candidates that cannot be told from it."""
-    twins: list[list[int]] = [[] for _ in leader.members]
-    for rival, same in indistinguishable(model, leader, rivals_of(leader, remaining)):
+def _twins(search: Search, leader: Judged, remaining: list[Judged]) -> list[list[int]]:
+    """For each phase of the leader, the phases that cannot be told from it, textured or not."""
+    own = search.plain(leader.members)
+    twins: list[list[int]] = [[] for _ in own]
+    rivals = [r for r in rivals_of(leader, remaining) if set(search.plain(r.members)) != set(own)]
+    for rival, same in indistinguishable(search.model, leader, rivals):
         if same:
             position, candidate = pairing(leader.members, rival.members)
-            twins[position].append(candidate)
+            (plain,) = search.plain((candidate,))
+            if plain not in twins[position]:
+                twins[position].append(plain)
     return twins
 
 
-def _same_answer(leader: Judged, twins: list[list[int]], remaining: list[Judged]) -> set[Members]:
-    """Sets that differ from the leader only by phases that cannot be told apart."""
-    groups = [{c, *others} for c, others in zip(leader.members, twins, strict=True)]
+def _same_answer(
+    search: Search, leader: Judged, twins: list[list[int]], remaining: list[Judged]
+) -> set[Members]:
+    """Sets that differ from the leader only by texture or by phases that cannot be told apart."""
+    own = search.plain(leader.members)
+    groups = [{c, *others} for c, others in zip(own, twins, strict=True)]
     taken = {leader.members}
     for judged in remaining:
         if len(judged.members) != len(groups):
             continue
         free = list(groups)
-        for member in judged.members:
+        for member in search.plain(judged.members):
             home = next((g for g in free if member in g), None)
             if home is None:
                 break

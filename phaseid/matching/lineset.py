@@ -153,13 +153,8 @@ class Levers:
     free: int
 
 
-def axial_levers(table: LineTable, phase: int, rows: NDArray[np.int64]) -> Levers:
-    """How the lines `rows` (n,) of a phase answer to a relative change of each cell edge.
-
-    ∂ln d/∂ln a_i = h_i (G* h)_i d², with G* the reciprocal metric, summing to one over the edges.
-    G* is had from the phase's own lines, of which 1/d² = hᵀ G* h holds. Edges that symmetry makes
-    alike share one lever.
-    """
+def reciprocal_metric(table: LineTable, phase: int) -> Floats:
+    """G* (3, 3), Å⁻², from the phase's own lines, of which 1/d² = hᵀ G* h holds."""
     own = slice(table.offsets[phase], table.offsets[phase + 1])
     h = table.hkl[own].astype(np.float64)
     products = np.stack([h[:, i] * h[:, j] * (1 if i == j else 2) for i, j in _PAIRS], axis=1)
@@ -167,6 +162,42 @@ def axial_levers(table: LineTable, phase: int, rows: NDArray[np.int64]) -> Lever
     metric = np.empty((3, 3))
     for value, (i, j) in zip(g, _PAIRS, strict=True):
         metric[i, j] = metric[j, i] = value
+    return metric
+
+
+def with_variants(
+    lines: LineSet, parents: NDArray[np.int64], factors: list[Floats], pattern: Pattern
+) -> LineSet:
+    """Append copies of the candidates `parents`, line intensities times `factors` (n,) of each."""
+    factor = np.stack(factors)
+    x, row = lines.x[parents], lines.row[parents]
+    intensity = lines.intensity[parents] * factor
+    visible = lines.visible[parents] * factor
+    inside = (x > pattern.x[0] - 0.03) & (x < pattern.x[-1] + 0.03)
+    strongest = np.maximum(np.where(inside, intensity, 0.0).max(axis=1), 1e-12)
+    order = np.argsort(-intensity, axis=1, kind="stable")
+    rows = np.arange(len(parents))[:, None]
+
+    def appended(old: Floats, new: Floats) -> Floats:
+        return np.concatenate([old, new])
+
+    return LineSet(
+        x=appended(lines.x, x[rows, order]),
+        intensity=appended(lines.intensity, (intensity / strongest[:, None])[rows, order]),
+        row=np.concatenate([lines.row, row[rows, order]]),
+        visible=appended(lines.visible, (visible / strongest[:, None])[rows, order]),
+        strength=appended(lines.strength, lines.strength[parents] * strongest),
+        complete=appended(lines.complete, lines.complete[parents]),
+    )
+
+
+def axial_levers(table: LineTable, phase: int, rows: NDArray[np.int64]) -> Levers:
+    """How the lines `rows` (n,) of a phase answer to a relative change of each cell edge.
+
+    ∂ln d/∂ln a_i = h_i (G* h)_i d², with G* the reciprocal metric, summing to one over the edges.
+    Edges that symmetry makes alike share one lever.
+    """
+    metric = reciprocal_metric(table, phase)
     chosen = table.hkl[rows].astype(np.float64)
     values: Floats = chosen * (chosen @ metric) * table.d_A[rows, None] ** 2
     edges = np.diag(metric)

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from phaseid.library.linetable import LineTable
 from phaseid.matching.candidates import best_shift, make_ruler, scan
 from phaseid.matching.likelihood import Fit, Looseness, Model, evaluate
-from phaseid.matching.lineset import Levers, axial_levers
+from phaseid.matching.lineset import Levers, axial_levers, reciprocal_metric, with_variants
 from phaseid.matching.patterns import Floats
 from phaseid.matching.settings import (
     PHASE_COUNT_PRIOR,
@@ -25,8 +25,10 @@ from phaseid.matching.settings import (
     RELATIVE_JITTER,
     RELATIVE_STRAIN,
     STRAIN,
+    TEXTURE_PRIOR,
     UNLISTED_PRIOR,
 )
+from phaseid.matching.texture import Axis, can_show_texture, fibre_factors, likely_axes
 
 Members = tuple[int, ...]
 
@@ -35,6 +37,8 @@ _BASES = {1: 16, 2: 10, 3: 6}
 _ADDITIONS = {1: 30, 2: 24, 3: 16}
 _EXCHANGED = 4
 _EXCHANGE_WIDTH = 30
+_TEXTURED = 40
+_AXES_EACH = 3
 _BATCH_CELLS = 150_000
 
 
@@ -87,6 +91,8 @@ class Search:
     `tables` one line table per pattern; `phases` (c,) the table's index of each candidate.
     `accepts` says whether a set of candidates may be an answer (required elements); sets it refuses
     are still built upon; `rarity` is ln of the share of sets of each size that it accepts.
+    Candidates beyond the allowed phases are textured variants: `axes` their fibre axis, `parents`
+    the candidate they are variants of.
     """
 
     model: Model
@@ -98,14 +104,67 @@ class Search:
     rarity: tuple[float, ...] = ()
     judged: dict[Members, Judged] = field(default_factory=dict)
     levers: dict[int, tuple[Levers, ...]] = field(default_factory=dict)
+    axes: dict[int, Axis] = field(default_factory=dict)
+    parents: dict[int, int] = field(default_factory=dict)
 
     def run(self) -> list[Judged]:
         """Search, and return every judged set, best first."""
         self._singles()
+        self._add_textured()
         for size in range(1, self.max_phases):
             self._extend(size)
         self._exchange()
         return self.ranked()
+
+    def plain(self, members: Members) -> Members:
+        """The candidates without texture that these are or are variants of."""
+        return tuple(self.parents.get(i, i) for i in members)
+
+    def _add_textured(self) -> None:
+        """Let the best single phases be judged as films with a fibre axis, too."""
+        if not any(can_show_texture(p.probe) for p in self.model.patterns):
+            return
+        singles = [j for j in self.ranked() if np.isfinite(j.log_posterior)]
+        # texture upsets intensities and hides lines: rings met count first
+        singles.sort(key=lambda j: -sum(int(claimed.sum()) for claimed in j.claimed))
+        best = singles[:_TEXTURED]
+        parents: list[int] = []
+        axes: list[Axis] = []
+        factors: list[list[Floats]] = [[] for _ in self.model.patterns]
+        for judged in best:
+            (candidate,) = judged.members
+            phase = int(self.phases[candidate])
+            likely = likely_axes(reciprocal_metric(self.tables[0], phase))
+            parents += [candidate] * len(likely)
+            axes += likely
+            for i, (pattern, table, lines) in enumerate(
+                zip(self.model.patterns, self.tables, self.model.lines, strict=True)
+            ):
+                rows = lines.row[candidate]
+                factors[i].extend(
+                    fibre_factors(table, phase, rows, likely, pattern.probe)
+                    if can_show_texture(pattern.probe)
+                    else np.ones((len(likely), len(rows)))
+                )
+        if not parents:
+            return
+        first = len(self.log_prior)
+        chosen = np.array(parents, dtype=np.int64)
+        widened = tuple(
+            with_variants(own, chosen, factor, pattern)
+            for own, factor, pattern in zip(
+                self.model.lines, factors, self.model.patterns, strict=True
+            )
+        )
+        self.model = Model(self.model.patterns, widened, self.model.crowd)
+        shared = log(TEXTURE_PRIOR / _AXES_EACH)
+        self.log_prior = np.concatenate([self.log_prior, self.log_prior[chosen] + shared])
+        self.phases = np.concatenate([self.phases, self.phases[chosen]])
+        for number, (parent, axis) in enumerate(zip(parents, axes, strict=True), first):
+            self.parents[number] = parent
+            self.axes[number] = axis
+        offsets = [self.judged[(i,)].offset for i in parents]
+        self.judge(((first + n,), offset) for n, offset in enumerate(offsets))
 
     def ranked(self) -> list[Judged]:
         """Every judged set, best first; ties by members."""
@@ -115,7 +174,7 @@ class Search:
         """ln prior of exactly these listed phases."""
         k = len(members)
         total = log(PHASE_COUNT_PRIOR[k - 1]) + log(1.0 - UNLISTED_PRIOR) + lgamma(k + 1.0)
-        if self.rarity and self.accepts(members):
+        if self.rarity and self.accepts(self.plain(members)):
             total -= self.rarity[k - 1]
         return total + float(self.log_prior[list(members)].sum())
 
@@ -129,7 +188,8 @@ class Search:
         for members, offset in proposals:
             order = np.argsort(members, kind="stable")
             key = tuple(members[i] for i in order)
-            if key not in self.judged and key not in fresh and len(set(key)) == len(key):
+            once = len(set(self.plain(key))) == len(key)
+            if key not in self.judged and key not in fresh and once:
                 fresh[key] = offset[order]
         if not fresh:
             return
@@ -227,7 +287,9 @@ class Search:
     def accepted(self) -> list[Judged]:
         """Every judged set that may be an answer, best first."""
         return [
-            j for j in self.ranked() if np.isfinite(j.log_posterior) and self.accepts(j.members)
+            j
+            for j in self.ranked()
+            if np.isfinite(j.log_posterior) and self.accepts(self.plain(j.members))
         ]
 
     def relatives(self, sets: Sequence[Start | Judged]) -> list[Loosened]:

@@ -84,6 +84,9 @@ AMPLITUDE_WIDTH = 4.0
 
 PHASE_COUNT_PRIOR = (0.70, 0.22, 0.06, 0.02)
 """Prior of one, two, three, four listed phases."""
+TEXTURE_PRIOR = 0.15
+"""Prior that a phase of a film or flat specimen has a fibre axis, shared by its likely axes."""
+
 UNLISTED_PRIOR = 0.15
 """Prior that no listed phase is in the specimen."""
 BESIDE_PRIOR = 0.03
