@@ -20,6 +20,7 @@ from phaseid.reports.plain import (
     table,
     wrap,
 )
+from phaseid.reports.strip import strip
 from phaseid.rings.ringlist import RingList
 
 STANDING = (
@@ -60,6 +61,7 @@ def as_text(answer: Identification, *, width: int = 80, bold: bool = False) -> s
     if best is not None and (best.assignments or answer.verdict != "no-match"):
         for number in range(len(answer.patterns)):
             _rings(page, answer, best, number)
+            page.drawing(strip(answer, number, page.width))
         page.items("What speaks against it", against(answer, best))
         for part in best.phases:
             _phase(page, part, alone=len(best.phases) == 1)
@@ -117,6 +119,10 @@ class _Page:
     def row(self, rank: str, probability: float, rings: str, text: str) -> None:
         first = f"{rank:>6}  {probability_text(probability):>5}  {rings:>6}  "
         self._lines += wrap(text, self.width, first=first, indent=" " * (len(first) + 2))
+
+    def drawing(self, lines: Sequence[str]) -> None:
+        if lines:
+            self._lines += ["", *lines]
 
     def table(self, columns: tuple[Column, ...], rows: list[list[str]]) -> None:
         self._lines += table(columns, rows, self.width)
