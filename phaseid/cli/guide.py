@@ -16,6 +16,7 @@ PAGES = {
     "answer": "reading the answer, and how sure is sure",
     "report": "pictures, and a page to keep and send",
     "library": "the structures searched, and how to add your own",
+    "measure": "rings from an image, peaks from a profile",
     "calibrate": "scaling an instrument by a standard",
     "screen": "what should not be there; telling two phases apart",
     "settings": "defaults, environment, completion",

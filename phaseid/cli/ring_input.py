@@ -24,7 +24,7 @@ Rings = Annotated[
     list[str],
     typer.Argument(
         metavar="RINGS",
-        help="Ring list files, - for standard input, or typed numbers.",
+        help="Ring list files, images, profiles, typed numbers, or - for standard input.",
         show_default=False,
     ),
 ]
@@ -112,12 +112,14 @@ def ring_tables(
     unit: str = "d_A",
     sigma: str | None = None,
     intensities: str | None = None,
+    probe: str | None = None,
 ) -> list[RingTable]:
     """The cells of each pattern; raises InputError where one cannot be read.
 
-    `unit`, `sigma`, `intensities` are those of typed numbers, which make one pattern.
+    `unit`, `sigma`, `intensities` are those of typed numbers, which make one pattern. Images and
+    profiles are measured on the way; `probe` tells a profile's Kα pairs.
     """
-    from phaseid.rings import parse_table, read_text, table_from_values
+    from phaseid.rings import table_from_values
 
     numbers = all_numbers(words)
     if numbers:
@@ -125,10 +127,30 @@ def ring_tables(
         return [table_from_values(numbers, column=unit, sigma=sigma, intensities=levels)]
     if words.count("-") > 1:
         raise InputError("standard input can be read only once", remedy="Name files instead")
-    return [
-        parse_table(_standard_input(), STDIN) if word == "-" else parse_table(read_text(word), word)
-        for word in words
-    ]
+    return [_table(word, probe) for word in words]
+
+
+def _table(word: str, probe: str | None) -> RingTable:
+    from phaseid.rings import parse_table, read_text
+
+    if word == "-":
+        return parse_table(_standard_input(), STDIN)
+    if measurable(word):
+        from phaseid.cli.measure import find_rings
+
+        found = find_rings(Path(word), probe=probe)
+        say(f"{word}: {len(found.rings)} rings measured; `phaseid measure` shows them.")
+        return parse_table(found.ring_list_text(), word)
+    return parse_table(read_text(word), word)
+
+
+def measurable(word: str) -> bool:
+    """Return whether a file is an image or a profile, from which rings are measured first."""
+    from phaseid.rings.measuring.images import is_image
+    from phaseid.rings.measuring.telling import is_profile
+
+    path = Path(word)
+    return path.is_file() and (is_image(path) or is_profile(path))
 
 
 def ring_lists(
@@ -151,9 +173,16 @@ def ring_lists(
         raise InputError(
             "--calibration and --camera-constant are both given", remedy="Give one of them"
         )
-    tables = ring_tables(words, unit=unit, sigma=sigma, intensities=intensities)
+    tables = ring_tables(words, unit=unit, sigma=sigma, intensities=intensities, probe=probe)
     return [
-        _ring_list(table, probe, scale_uncertainty, camera_constant, calibration)
+        _ring_list(
+            table,
+            # a profile measured here already has it, and may have told Kα1 from Kα
+            None if "probe" in table.keys and measurable(table.source) else probe,
+            scale_uncertainty,
+            camera_constant,
+            calibration,
+        )
         for table in tables
     ]
 

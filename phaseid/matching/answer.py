@@ -17,7 +17,8 @@ from phaseid.matching.identification import (
     Separator,
     Unexplained,
 )
-from phaseid.matching.likelihood import Fit, Model, PatternFit, evaluate
+from phaseid.matching.likelihood import evaluate
+from phaseid.matching.model import Fit, Model, PatternFit
 from phaseid.matching.patterns import Floats, Pattern
 from phaseid.matching.refine import RefinedCell, refine_cell, scaled_cell
 from phaseid.matching.search import Judged

@@ -16,8 +16,9 @@ from phaseid.errors import InputError
 from phaseid.library.linetable import LineTable
 from phaseid.library.phase import Phase
 from phaseid.matching.crowd import crowd
-from phaseid.matching.likelihood import Looseness, Model, evaluate
+from phaseid.matching.likelihood import evaluate
 from phaseid.matching.lineset import gather
+from phaseid.matching.model import Looseness, Model
 from phaseid.matching.patterns import Floats, Pattern, prepare
 from phaseid.matching.small_library import table_of
 from phaseid.matching.standard_rings import resolution

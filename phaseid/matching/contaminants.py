@@ -7,7 +7,8 @@ from math import log
 
 import numpy as np
 
-from phaseid.matching.likelihood import Fit, Model, PatternFit, evaluate
+from phaseid.matching.likelihood import evaluate
+from phaseid.matching.model import Fit, Model, PatternFit
 from phaseid.matching.patterns import Floats
 
 Members = tuple[int, ...]

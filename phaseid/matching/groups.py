@@ -11,7 +11,8 @@ from dataclasses import replace
 
 import numpy as np
 
-from phaseid.matching.likelihood import Fit, Model, evaluate
+from phaseid.matching.likelihood import evaluate
+from phaseid.matching.model import Fit, Model
 from phaseid.matching.search import Judged, Members
 
 DISTANCE = 1.5

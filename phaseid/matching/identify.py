@@ -26,8 +26,8 @@ from phaseid.matching.identification import (
     TypeMatch,
     Verdict,
 )
-from phaseid.matching.likelihood import Model
 from phaseid.matching.lineset import gather
+from phaseid.matching.model import Model
 from phaseid.matching.patterns import prepare_all
 from phaseid.matching.search import Judged, Members, Search
 from phaseid.matching.settings import PHASE_COUNT_PRIOR

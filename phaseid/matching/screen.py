@@ -14,9 +14,10 @@ from phaseid.library import Library
 from phaseid.library.phase import Phase
 from phaseid.matching.contaminants import Contaminants, Suspect, explain
 from phaseid.matching.crowd import crowd
-from phaseid.matching.likelihood import Fit, Model, evaluate
+from phaseid.matching.likelihood import evaluate
 from phaseid.matching.limits import Limit, expected_weight, limit_of
 from phaseid.matching.lineset import gather
+from phaseid.matching.model import Fit, Model
 from phaseid.matching.patterns import Pattern, prepare
 from phaseid.matching.pool import Found, Pool
 from phaseid.matching.settings import STRAIN

@@ -15,8 +15,9 @@ from numpy.typing import NDArray
 
 from phaseid.library.linetable import LineTable
 from phaseid.matching.candidates import best_shift, make_ruler, scan
-from phaseid.matching.likelihood import Fit, Looseness, Model, evaluate
+from phaseid.matching.likelihood import evaluate
 from phaseid.matching.lineset import Levers, axial_levers, reciprocal_metric, with_variants
+from phaseid.matching.model import Fit, Looseness, Model
 from phaseid.matching.patterns import Floats
 from phaseid.matching.settings import (
     PHASE_COUNT_PRIOR,

@@ -17,10 +17,17 @@
 
   for (const section of answers) {
     let pinned = null;
+    const readout = document.createElement("p");
+    readout.className = "readout";
+    readout.setAttribute("aria-live", "polite");
+    section.append(readout);
     function light(key) {
       section.classList.toggle("lighting", key !== null);
       for (const mark of section.querySelectorAll("[data-key]"))
         mark.classList.toggle("lit", mark.dataset.key === key);
+      const titles = Array.from(section.querySelectorAll(".mark.lit > title"));
+      titles.sort((one, other) => other.textContent.length - one.textContent.length);
+      readout.textContent = titles.length ? titles[0].textContent : "";
     }
     function keyOf(event) {
       const mark = event.target.closest("[data-key]");

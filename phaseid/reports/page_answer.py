@@ -49,7 +49,7 @@ def answer_section(
     if len(scenes) == 2:
         caption = "Two probes, one half each; the radius is 1/d after each fitted scale."
         parts.append(
-            f'<div class="pattern"><figure>{svg(disc_of_two(*scenes))}'
+            f'<div class="pattern"><figure>{svg(disc_of_two(*scenes), hits=True)}'
             f"<figcaption>{caption}</figcaption></figure><div>{doubts}</div></div>"
         )
     parts += [_pattern(answer, one, axis) for one in scenes]
@@ -74,12 +74,12 @@ def _pattern(answer: Identification, one: Scene, axis: AxisName | None) -> str:
     title = pattern_title(answer, one.number)
     heading = f"Pattern {one.number + 1}: {title}" if many else title
     figures = (
-        f'<figure class="disc">{svg(disc(one))}<figcaption>Left half measured, right half '
+        f'<figure class="disc">{svg(disc(one), hits=True)}<figcaption>Left half measured, right half '
         "calculated: lines that explain a ring, and strong ones that are missing. The line’s "
         "weight is its intensity, calculated ones laid on the measured phase by phase.</figcaption>"
         "</figure>"
     )
-    stick_picture = svg(sticks(one, axis_for(one.pattern, axis)))
+    stick_picture = svg(sticks(one, axis_for(one.pattern, axis)), hits=True)
     figures += (
         f'<div><figure class="sticks">{scrolling(stick_picture, "Sticks, scrolls sideways")}'
         f"</figure></div>"

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from html import escape
 
 from phaseid.reports.picture import Arc, Group, Line, Picture, Shape, Text, arc_points
@@ -10,12 +11,21 @@ from phaseid.reports.picture_style import LIGHT, dashes, palette_css, picture_cs
 from phaseid.reports.plain import safe
 
 
-def svg(picture: Picture) -> str:
-    """The picture as an `<svg>` element; its colours come from the style sheet around it."""
+HIT_WIDTH = 9.0  # a line this wide can be hit with a finger or an unsteady mouse
+
+
+def svg(picture: Picture, *, hits: bool = False) -> str:
+    """The picture as an `<svg>` element; its colours come from the style sheet around it.
+
+    With `hits`, unseen wide lines lie under those of rings, to be pointed at.
+    """
+    groups = [shape for shape in picture.shapes if isinstance(shape, Group)]
+    unseen = "".join(_hit(group) for group in groups) if hits else ""
     return (
         f'<svg class="picture" xmlns="http://www.w3.org/2000/svg" role="img" '
         f'viewBox="0 0 {_n(picture.width)} {_n(picture.height)}" '
         f'aria-label="{_words(picture.label)}">'
+        + unseen
         + "".join(_shape(shape) for shape in picture.shapes)
         + "</svg>"
     )
@@ -46,6 +56,15 @@ def _shape(shape: Shape) -> str:
     if isinstance(shape, Arc):
         return f'<path class="{shape.role}" d="{_arc_path(shape)}"{_stroke(shape)}/>'
     return _text(shape)
+
+
+def _hit(group: Group) -> str:
+    """The first line of a group, wide and unseen."""
+    line = next((part for part in group.shapes if isinstance(part, Line | Arc)), None)
+    if line is None or (isinstance(line, Line) and line.filled):
+        return ""
+    wide = _shape(replace(line, role="hit", width=HIT_WIDTH))
+    return wide.replace(" ", f' data-key="{_words(group.key)}" ', 1)
 
 
 def _text(text: Text) -> str:

@@ -17,9 +17,10 @@ from scipy.special import expit
 from scipy.stats import multivariate_normal
 
 from phaseid.library import Library
-from phaseid.matching import likelihood, settings
-from phaseid.matching.likelihood import Fit, Model, evaluate, nothing_listed
+from phaseid.matching import positions, settings
+from phaseid.matching.likelihood import evaluate, nothing_listed
 from phaseid.matching.lineset import gather
+from phaseid.matching.model import Fit, Model
 from phaseid.matching.patterns import prepare
 from phaseid.rings import RingList
 from tests.matching.published import published_rings
@@ -130,7 +131,7 @@ def test_a_diffractometer_may_be_off_by_zero_shift_and_displacement() -> None:
 def test_two_patterns_share_the_strain_of_a_phase_but_not_their_scales(
     monkeypatch: pytest.MonkeyPatch,
 ) -> None:
-    monkeypatch.setattr(likelihood, "SIGMA_INFLATION", ((1.0, 0.5), (1.0, 0.5)))
+    monkeypatch.setattr(positions, "SIGMA_INFLATION", ((1.0, 0.5), (1.0, 0.5)))
     first, second = (0.003, 0.001, 0.002, 0.004), (-0.002, 0.001, 0.001, -0.001)
     at_rest, _ = toy_model([EVEN], [moved((0, 0, 0, 0)), moved((0, 0, 0, 0))])
     displaced, _ = toy_model([EVEN], [moved(first), moved(second)])
@@ -146,7 +147,7 @@ def test_two_patterns_share_the_strain_of_a_phase_but_not_their_scales(
 def test_two_phases_share_the_scale_of_a_pattern_but_not_their_strains(
     monkeypatch: pytest.MonkeyPatch,
 ) -> None:
-    monkeypatch.setattr(likelihood, "SIGMA_INFLATION", ((1.0, 0.5), (1.0, 0.5)))
+    monkeypatch.setattr(positions, "SIGMA_INFLATION", ((1.0, 0.5), (1.0, 0.5)))
     toys = [Toy(D_A[:2], (100, 80)), Toy(D_A[2:], (100, 70), ("O",))]
     shift = np.array((0.003, 0.001, -0.002, -0.001))
     at_rest, _ = toy_model(toys, [moved((0, 0, 0, 0))])

@@ -17,7 +17,8 @@ from phaseid.matching import settings
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.crowd import crowd_intensity
 from phaseid.matching.identify import identify
-from phaseid.matching.likelihood import Fit, evaluate
+from phaseid.matching.likelihood import evaluate
+from phaseid.matching.model import Fit
 from phaseid.matching.patterns import prepare
 from tests.matching.conftest import Searched
 from tests.matching.published import published_rings

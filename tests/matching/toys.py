@@ -10,8 +10,8 @@ import numpy as np
 from phaseid.library import Library
 from phaseid.library.linetable import Kind, LineTable, elements_bits
 from phaseid.library.phase import Phase
-from phaseid.matching.likelihood import Model
 from phaseid.matching.lineset import gather
+from phaseid.matching.model import Model
 from phaseid.matching.patterns import prepare
 from phaseid.probes import Probe, parse_probe
 from phaseid.rings import RingList, rings_from_values

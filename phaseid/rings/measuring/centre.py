@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -44,7 +46,8 @@ def _by_gradients(level: Floats, weight: Floats) -> tuple[float, float]:
     from scipy.ndimage import gaussian_filter, minimum_filter
 
     smooth = _smooth(level, weight, 1.5)
-    gy, gx = np.gradient(smooth)
+    slopes: list[Floats] = list(np.gradient(smooth))
+    gy, gx = slopes
     strength = np.hypot(gx, gy) * minimum_filter(weight, 5)
     strength[:3], strength[-3:], strength[:, :3], strength[:, -3:] = 0, 0, 0, 0
     rows, columns = np.nonzero(strength > np.percentile(strength, 75))
@@ -90,7 +93,7 @@ def _sharpest(level: Floats, weight: Floats, starts: list[tuple[float, float]]) 
     y, x = (c.astype(np.float32) for c in np.nonzero(good))
     reach = int(2.5 * max(level.shape)) + 3
 
-    def objective(picture: Floats, width: float):  # type: ignore[no-untyped-def]
+    def objective(picture: Floats, width: float) -> Callable[[Floats], float]:
         values = picture[good]
 
         def dullness(p: Floats) -> float:

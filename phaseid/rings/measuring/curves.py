@@ -233,7 +233,7 @@ def _curve(
             path=source,
             remedy="Give raw counts, or the one-sigma as a third column.",
         )
-    remarks = ()
+    remarks: tuple[str, ...] = ()
     if not stated:
         remarks = ("Uncertainties follow from counting statistics: the column is taken as counts.",)
     return Curve(source, column, place, level, spread, stated, dict(metadata), remarks)

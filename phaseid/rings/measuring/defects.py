@@ -83,4 +83,4 @@ def _background(image: Pixels, usable: Mask, geometry: Geometry) -> Floats:
     low = percentile_filter(level, 20, size=25)
     # a stop over the whole centre: what lies further out is a bound from below
     outer = np.maximum.accumulate(low[::-1])[::-1]
-    return np.maximum(low, 0.6 * outer)
+    return np.asarray(np.maximum(low, 0.6 * outer))

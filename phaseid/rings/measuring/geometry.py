@@ -53,7 +53,7 @@ class Geometry:
             along = np.array([0.0, 0.0, 1.0, 0.0])
         else:
             along = np.array([0.0, 0.0, self.stretch_c, self.stretch_s]) / self.stretch
-        return float(np.sqrt(max(along @ self.covariance @ along, 0.0)))
+        return float(np.sqrt(max(float(along @ self.covariance @ along), 0.0)))
 
     @property
     def ratio_sigma(self) -> float:
@@ -66,7 +66,7 @@ class Geometry:
         if self.stretch == 0:
             return 90.0
         across = np.array([0.0, 0.0, -self.stretch_s, self.stretch_c]) / self.stretch
-        spread = float(np.sqrt(max(across @ self.covariance @ across, 0.0)))
+        spread = float(np.sqrt(max(float(across @ self.covariance @ across), 0.0)))
         return min(90.0, float(np.degrees(0.5 * spread / self.stretch)))
 
     def straighten(self, x: Pixels, y: Pixels) -> tuple[Pixels, Pixels]:

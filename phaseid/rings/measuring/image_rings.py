@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -51,6 +50,8 @@ def measure_pixels(image: Pixels, usable: NDArray[np.bool_], *, source: str) -> 
     geometry = refine_geometry(image, usable, geometry, r_min=start)
     sums = polar_sums(image, usable, geometry, step=STEP_PX, sectors=SECTORS)
     radius, mean, sigma, noise, first = _profile(sums)
+    if not radius.size:
+        raise no_rings(source, "no stretch of radii is seen well enough")
     found = find_peaks(radius, mean, sigma, origin=0.0)
     if found.fit is None:
         raise _nothing(image, usable, source, found.broad)
@@ -61,9 +62,8 @@ def measure_pixels(image: Pixels, usable: NDArray[np.bool_], *, source: str) -> 
     keep &= np.isfinite(along.position_sigma)
     if not keep.any():
         raise _nothing(image, usable, source, found.broad)
-    rings = tuple(_ring(found.fit, along, k, geometry) for k in np.flatnonzero(keep))
-    with np.errstate(invalid="ignore"):
-        median = np.nanmedian(np.where(number > 0, cells, np.nan), axis=1)
+    rings = tuple(_ring(found.fit, along, k, geometry) for k in np.flatnonzero(keep).tolist())
+    median = np.nanmedian(np.where(number > 0, cells, np.nan), axis=1)
     remarks = []
     if saturated > 0.001:
         remarks.append(f"{100 * saturated:.1f} % of the image is saturated and was left out.")
@@ -79,7 +79,7 @@ def measure_pixels(image: Pixels, usable: NDArray[np.bool_], *, source: str) -> 
         curve=np.stack([radius, mean, median, found.background], axis=1),
         limit=found.limit,
         halos=found.broad,
-        geometry=replace(geometry),
+        geometry=geometry,
         shape=(image.shape[0], image.shape[1]),
         masked=float(1.0 - usable.mean()),
         remarks=tuple(remarks),

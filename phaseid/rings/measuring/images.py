@@ -117,8 +117,9 @@ def _read_picture(path: Path) -> NDArray[np.generic]:
                 if width * height > MAX_PIXELS:
                     raise _too_large(width, height, path)
                 if picture.mode in ("P", "1"):
-                    picture = picture.convert("RGB" if picture.mode == "P" else "L")  # noqa: PLW2901
-                array = np.asarray(picture)
+                    array = np.asarray(picture.convert("RGB" if picture.mode == "P" else "L"))
+                else:
+                    array = np.asarray(picture)
     except UnidentifiedImageError:
         raise InputError(
             "is not an image that can be read",

@@ -78,8 +78,7 @@ class Measurement:
         if strongest > 0:
             share = 100.0 * self.limit / strongest
             lines.append(f"# detection limit: {plain_number(round(share, 4))} (strongest = 100)")
-        for halo in self.halos:
-            lines.append(f"# amorphous halo: about {halo:.4g}")
+        lines += [f"# amorphous halo: about {halo:.4g}" for halo in self.halos]
         lines.append(f"{self.column},sigma,intensity,note")
         for ring in self.rings:
             level = 100.0 * ring.intensity / strongest

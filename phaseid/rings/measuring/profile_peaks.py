@@ -82,7 +82,11 @@ def measure_curve(curve: Curve, *, probe: str | None = None) -> Measurement:
 
 def _even(curve: Curve) -> tuple[Floats, Floats, Floats]:
     """The profile at even steps; interpolated only where its own are uneven."""
+    from scipy.ndimage import gaussian_filter1d
+
     x, y, sigma = curve.position, curve.counts, curve.sigma
+    if not curve.sigma_stated:  # a point's own count would give low points too much weight
+        sigma = np.sqrt(np.maximum(gaussian_filter1d(y, 1.5), 1.0))
     if len(x) > MAX_POINTS:
         raise InputError(
             f"has {len(x)} points, more than {MAX_POINTS}",
@@ -125,7 +129,7 @@ def _satellite(anode: str) -> Satellite:
 
 
 def _misfit(found: Found) -> float:
-    """What to compare fits by: chi-squared per degree of freedom, three parameters a peak dearer."""
+    """What to compare fits by: chi-squared and six a peak."""
     if found.fit is None:
         return float("inf")
     n = len(found.background)

@@ -58,7 +58,8 @@ def _iterate(
         if size < 2e-3 or (size > 0.9 * last and size < 0.02):
             break
         last = size
-    return Geometry(*(float(v) for v in p), covariance=covariance)
+    x_c, y_c, stretch_c, stretch_s = (float(v) for v in p)
+    return Geometry(x_c, y_c, stretch_c, stretch_s, covariance)
 
 
 def _shift(

@@ -1,0 +1,331 @@
+"""Laying the lines of hypotheses on one pattern: which ring, how strong, claimed or not.
+
+A batch of b hypotheses of k phases at once, refined over a few rounds by `likelihood.evaluate`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from math import log, pi
+
+import numpy as np
+from numpy.typing import NDArray
+
+from phaseid.matching.lineset import LineSet
+from phaseid.matching.model import Looseness, PatternFit
+from phaseid.matching.patterns import Floats, Pattern
+from phaseid.matching.settings import (
+    AMPLITUDE_WIDTH,
+    DETECTION_SLOPE,
+    FOREIGN_RINGS,
+    ODD_POSITION_FACTOR,
+    ODD_POSITION_SHARE,
+    SCATTER_INFLATION,
+    SIGMA_INFLATION,
+    TREND_SD,
+)
+
+HALF_LOG_2PI = 0.5 * log(2.0 * pi)
+_AMPLITUDE_PRIOR_SD = 3.0
+_OWN_PART = 0.3
+"""A phase that makes less than this part of every ring does not show."""
+_HIDDEN = 1.2
+"""Two lines nearer than this many resolutions make one ring."""
+
+
+def _logistic(z: Floats) -> Floats:
+    result: Floats = 1.0 / (1.0 + np.exp(-np.clip(z, -40.0, 40.0)))
+    return result
+
+
+def _windows(pattern: Pattern) -> Floats:
+    """(m,) how far from a ring a line may be to be thought of as its.
+
+    Far enough for an odd reading, but not past the middle between two rings.
+    """
+    near = np.maximum(4.5 * pattern.sigma, 0.6 * pattern.resolution)
+    if len(pattern) == 1:
+        return np.maximum(near, 9.0 * pattern.sigma)
+    gaps = np.diff(pattern.x)
+    middle = 0.5 * np.minimum(np.append(gaps, np.inf), np.append(np.inf, gaps))
+    result: Floats = np.maximum(near, np.minimum(9.0 * pattern.sigma, middle))
+    return result
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Shift:
+    """Where a pattern's lines are moved: `offset` (b, k) of each phase, `correction` (b, m) of the
+    rings by zero shift and displacement, `axial` (b, k, 3) axial strains in their sigmas."""
+
+    offset: Floats
+    correction: Floats
+    axial: Floats
+
+
+class PatternWork:
+    """One pattern's part of a batch, refined over a few rounds."""
+
+    def __init__(
+        self,
+        pattern: Pattern,
+        lines: LineSet,
+        crowd: Floats,
+        members: NDArray[np.int64],
+        loose: Looseness,
+        axial: Floats | None,
+    ) -> None:
+        self.pattern = pattern
+        self.axial = axial
+        self.crowd = crowd
+        self.x = lines.x[members]
+        self.intensity = lines.intensity[members]
+        self.visible = lines.visible[members]
+        self.with_ln_visible = np.log(np.maximum(self.visible, 1e-12))
+        self.b, self.k, self.n = self.x.shape
+        self.m = len(pattern)
+        self.complete = lines.complete[members].max(axis=1) if self.k else np.full(self.b, -np.inf)
+        self.jitter2 = loose.jitter**2
+        scatter = pattern.scatter
+        known = np.isfinite(pattern.intensity_sd)
+        self.known = known
+        reading = np.where(known, pattern.intensity_sd, 0.0) ** 2
+        self.narrow = scatter.intensity**2 + reading
+        self.odd = scatter.odd_intensity**2 + reading
+        self.spread2 = loose.spread**2
+        self.window = _windows(pattern)
+        self.null = crowd
+        self.ln_amplitude = np.zeros((self.b, self.k))
+        self.trend = np.zeros(self.b)
+        curve = 0.5 * np.exp(-2.0 * pattern.x)
+        self.curve = curve - curve.mean()
+        self.line_curve = 0.5 * np.exp(-2.0 * self.x) - curve.mean()
+        self.odd_position = np.zeros((self.b, self.m), dtype=bool)
+        self.claimed = np.ones((self.b, self.m), dtype=bool)
+
+    def associate(self, shift: Shift, wide: float) -> None:
+        """Let every line fall on the ring nearest to it, if within the window (`wide` of it)."""
+        correction = shift.correction
+        position = self.x + shift.offset[:, :, None]
+        if self.axial is not None:
+            position = position + np.einsum("bkna,bka->bkn", self.axial, shift.axial)
+        middles = 0.5 * (self.pattern.x[1:] + self.pattern.x[:-1])
+        ring = np.searchsorted(middles, position)
+        batch = np.arange(self.b)[:, None, None]
+        distance = position - self.pattern.x[ring] + correction[batch, ring]
+        extra = np.sqrt(self.jitter2)[:, :, None] * 3.0
+        if self.axial is not None:
+            extra = extra + (wide - 1.0) * np.abs(self.axial).max(axis=3)
+        near = np.abs(distance) < self.window[ring] + extra
+        near &= self.intensity > 0
+        near = self._together(near, ring, position, distance)
+        self.ring = np.where(near, ring, -1)
+        cell = (np.arange(self.b * self.k).reshape(self.b, self.k, 1) * self.m + ring)[near]
+        size = self.b * self.k * self.m
+        weight = self.intensity[near]
+        shape = (self.b, self.k, self.m)
+        self.sum = np.bincount(cell, weights=weight, minlength=size).reshape(shape)
+        weight_sum = np.maximum(self.sum, 1e-300)
+        away = distance[near]
+        moment = np.bincount(cell, weights=weight * away, minlength=size).reshape(shape)
+        square = np.bincount(cell, weights=weight * away**2, minlength=size).reshape(shape)
+        self.centre = moment / weight_sum
+        self.square = square / weight_sum
+        if self.axial is not None:
+            levers = [
+                np.bincount(cell, weights=weight * self.axial[..., a][near], minlength=size)
+                for a in range(self.axial.shape[3])
+            ]
+            self.lever = np.stack(levers, axis=1).reshape(*shape, -1) / weight_sum[..., None]
+        with np.errstate(invalid="ignore"):
+            covered = self.pattern.seen_weight(np.where(np.isfinite(position), position, 50.0))
+        self.covered = np.where(self.visible > 0, covered, 0.0)
+
+    def _together(
+        self, near: NDArray[np.bool_], ring: NDArray[np.int64], position: Floats, distance: Floats
+    ) -> NDArray[np.bool_]:
+        """Keep, of the lines near a ring, its main line and what cannot be told from that.
+
+        A line that would have made a ring of its own is not hidden by being near another.
+        """
+        key = np.arange(self.b)[:, None, None] * self.m + ring
+        with np.errstate(divide="ignore"):
+            score = np.log(self.intensity) + self.ln_amplitude[:, :, None]
+        score = np.where(near, score - 0.5 * (distance / (1.5 * self.pattern.sigma[ring])) ** 2, 0)
+        best = np.full(self.b * self.m, -np.inf)
+        np.maximum.at(best, key[near], score[near])
+        main = near & (score >= best[key])
+        middle = np.zeros(self.b * self.m)
+        middle[key[main]] = position[main]
+        apart = np.abs(position - middle[key])
+        hidden = near & (apart < _HIDDEN * self.pattern.resolution[ring])
+        return np.asarray(hidden | main)
+
+    def _missing(self) -> Floats:
+        """(b, k, n) chance that the range covers a line that meets no claimed ring."""
+        batch = np.arange(self.b)[:, None, None]
+        met = (self.ring >= 0) & self.claimed[batch, np.maximum(self.ring, 0)]
+        result: Floats = np.where(met, 0.0, self.covered)
+        return result
+
+    def fit_amplitudes(self, rounds: int) -> None:
+        """Newton steps for ln amplitude (b, k) and trend (b,).
+
+        They answer to ring intensities, rings seen and lines not seen.
+        """
+        scatter, limit = self.pattern.scatter, self.pattern.ln_limit
+        keep = (1.0 - scatter.lost) * self._missing()
+        used = self.claimed & (self.sum.sum(axis=1) > 0)
+        stiffness = np.diag([_AMPLITUDE_PRIOR_SD**-2 + 1e-3] * self.k + [TREND_SD**-2])
+        lever = np.broadcast_to(-self.curve, (self.b, 1, self.m))
+        for _ in range(rounds):
+            part = np.exp(self.ln_amplitude)[:, :, None] * self.sum
+            total = np.maximum(part.sum(axis=1), 1e-12)
+            share = part / total[:, None, :]
+            ln_total = np.log(total) - self.trend[:, None] * self.curve
+            error = self.pattern.ln_intensity - ln_total
+            spread = np.einsum("bkm,bk->bm", share, self.spread2)
+            narrow, odd = self.narrow + spread, self.odd + spread
+            likely = (1.0 - scatter.odd_share) * np.exp(-0.5 * error**2 / narrow) / np.sqrt(narrow)
+            rare = scatter.odd_share * np.exp(-0.5 * error**2 / odd) / np.sqrt(odd) + 1e-30
+            trust = likely / (likely + rare)
+            weight = np.where(used & self.known, trust / narrow + (1.0 - trust) / odd, 0.0)
+            seen = _logistic(DETECTION_SLOPE * (ln_total - limit))
+            pull = weight * error + np.where(used, DETECTION_SLOPE * (1.0 - seen), 0.0)
+            stiff = weight + np.where(used, DETECTION_SLOPE**2 * seen * (1.0 - seen), 0.0)
+
+            would = _logistic(DETECTION_SLOPE * self._ln_shown())
+            slope = keep * DETECTION_SLOPE * would * (1.0 - would) / (1.0 - keep * would)
+            bend = DETECTION_SLOPE * slope * (1.0 - would)
+            effect = np.concatenate([share, lever], axis=1)
+            gradient = np.einsum("bkm,bm->bk", effect, pull)
+            gradient[:, : self.k] -= slope.sum(axis=2) + self.ln_amplitude / _AMPLITUDE_PRIOR_SD**2
+            gradient[:, self.k] += (slope * self.line_curve).sum(axis=(1, 2))
+            gradient[:, self.k] -= self.trend / TREND_SD**2
+            hessian = np.einsum("bkm,bm,blm->bkl", effect, stiff, effect) + stiffness
+            diagonal = np.arange(self.k)
+            hessian[:, diagonal, diagonal] += bend.sum(axis=2)
+            cross = (bend * self.line_curve).sum(axis=2)
+            hessian[:, : self.k, self.k] -= cross
+            hessian[:, self.k, : self.k] -= cross
+            hessian[:, self.k, self.k] += (bend * self.line_curve**2).sum(axis=(1, 2))
+            step = np.linalg.solve(hessian, gradient[:, :, None])[:, :, 0]
+            step = np.clip(step, -1.0, 1.0)
+            self.ln_amplitude = np.clip(self.ln_amplitude + step[:, :-1], limit - 2.0, 4.0)
+            self.trend = self.trend + step[:, -1]
+        self.share, self.ln_total, self.hessian = share, ln_total, hessian
+
+    def _ln_shown(self) -> Floats:
+        """(b, k, n) ln of each line's expected intensity over the detection limit."""
+        shown = self.ln_amplitude[:, :, None] + self.with_ln_visible - self.pattern.ln_limit
+        result: Floats = shown - self.trend[:, None, None] * self.line_curve
+        return result
+
+    def ring_terms(self, factor: float = 1.0) -> Floats:
+        """(b, m) ln likelihood of each ring's intensity and of its being seen, if claimed.
+
+        `factor` widens the ordinary scatter of intensities.
+        """
+        scatter = self.pattern.scatter
+        error = self.pattern.ln_intensity - self.ln_total
+        spread = np.einsum("bkm,bk->bm", self.share, self.spread2)
+        spread = spread + (factor**2 - 1.0) * scatter.intensity**2
+        narrow, odd = self.narrow + spread, self.odd + spread
+        ordinary = log(1.0 - scatter.odd_share) - 0.5 * (error**2 / narrow + np.log(narrow))
+        strange = log(scatter.odd_share) - 0.5 * (error**2 / odd + np.log(odd))
+        intensity = np.where(self.known, np.logaddexp(ordinary, strange) - HALF_LOG_2PI, 0.0)
+        seen = _logistic(DETECTION_SLOPE * (self.ln_total - self.pattern.ln_limit))
+        result: Floats = intensity + np.log(np.maximum(seen, 1e-12))
+        return result
+
+    def intensity_term(self) -> Floats:
+        """(b,) ln likelihood of the claimed rings' intensities, their scatter marginalised."""
+        terms = [
+            log(prior) + np.where(self.claimed, self.ring_terms(factor), 0.0).sum(axis=1)
+            for factor, prior in SCATTER_INFLATION
+        ]
+        result: Floats = np.logaddexp.reduce(terms, axis=0)
+        return result
+
+    def variance(self) -> Floats:
+        """(b, m) position variance of each ring, odd readings included."""
+        base = self._ordinary_variance()
+        result: Floats = np.where(self.odd_position, base * ODD_POSITION_FACTOR**2, base)
+        return result
+
+    def _ordinary_variance(self) -> Floats:
+        """(b, m) reading error, jitter of loose phases, and the centre of a ring of several lines.
+
+        The centre of lines that merge moves with their intensities: by the scatter of intensity
+        times the width of the group.
+        """
+        jitter = np.einsum("bkm,bk->bm", self.share, self.jitter2)
+        centre = np.einsum("bkm,bkm->bm", self.share, self.centre)
+        width2 = np.einsum("bkm,bkm->bm", self.share, self.square) - centre**2
+        merged = self.pattern.scatter.intensity**2 * np.maximum(width2, 0.0)
+        result: Floats = self.pattern.sigma**2 + jitter + merged
+        return result
+
+    def placed(self, shift: Shift) -> Floats:
+        """(b, m) shift in ln d of each ring by the nuisances."""
+        total = np.einsum("bkm,bk->bm", self.share, shift.offset) + shift.correction
+        if self.axial is not None:
+            total = total + np.einsum("bkm,bkma,bka->bm", self.share, self.lever, shift.axial)
+        return np.asarray(total)
+
+    def unshifted(self, shift: Shift) -> Floats:
+        """(b, m) measured minus calculated position at zero scale, strain and angle errors."""
+        result: Floats = self.placed(shift) - np.einsum("bkm,bkm->bm", self.share, self.centre)
+        return result
+
+    def decide(self, residual: Floats) -> None:
+        """Give each ring to the phases or to nowhere, whichever is the likelier."""
+        factor = SIGMA_INFLATION[1][0]
+        spread = self._ordinary_variance() * factor**2
+        near = log(1.0 - ODD_POSITION_SHARE) - 0.5 * (residual**2 / spread + np.log(spread))
+        spread = spread * ODD_POSITION_FACTOR**2
+        far = log(ODD_POSITION_SHARE) - 0.5 * (residual**2 / spread + np.log(spread))
+        self.odd_position = far > near
+        claim = np.maximum(near, far) - HALF_LOG_2PI + self.ring_terms()
+        foreign = self.null + log(FOREIGN_RINGS)
+        self.claimed = (claim > foreign) & (self.sum.sum(axis=1) > 0)
+
+    def missing_term(self) -> Floats:
+        """(b,) ln chance that all lines that meet no ring stayed unseen."""
+        keep = (1.0 - self.pattern.scatter.lost) * self._missing()
+        would = _logistic(DETECTION_SLOPE * self._ln_shown())
+        result: Floats = np.log1p(-keep * would).sum(axis=(1, 2))
+        return result
+
+    def occam_term(self) -> Floats:
+        """(b,) ln of posterior over prior volume of amplitudes and trend (Laplace)."""
+        _, log_det = np.linalg.slogdet(self.hessian)
+        volume = self.k * (HALF_LOG_2PI - log(AMPLITUDE_WIDTH)) - log(TREND_SD) - 0.5 * log_det
+        result: Floats = np.minimum(volume, 0.0) - 0.5 * (self.trend / TREND_SD) ** 2
+        return result
+
+    def shows(self) -> NDArray[np.bool_]:
+        """(b, k) whether a phase makes some claimed ring for a good part."""
+        made = (self.share > _OWN_PART) & self.claimed[:, None, :]
+        result: NDArray[np.bool_] = made.any(axis=2)
+        return result
+
+    def excused(self) -> NDArray[np.bool_]:
+        """(b, m) unclaimed rings beyond the spacing down to which a phase's lines are stored."""
+        result: NDArray[np.bool_] = ~self.claimed & (self.pattern.x < self.complete[:, None])
+        return result
+
+    def result(self, target: Floats, residual: Floats) -> PatternFit:
+        """What the last round came to; `target`, `residual` (b, m) in ln d."""
+        variance = np.einsum("bkk->bk", np.linalg.inv(self.hessian))[:, : self.k]
+        shown = np.exp(self._ln_shown() + self.pattern.ln_limit)
+        return PatternFit(
+            line_ring=self.ring,
+            share=self.share,
+            claimed=self.claimed,
+            residual=residual / self.pattern.sigma,
+            unshifted=target,
+            ln_total=self.ln_total,
+            ln_amplitude=self.ln_amplitude,
+            amplitude_sd=np.sqrt(np.maximum(variance, 0.0)),
+            shown=self._missing() * np.where(self.visible > 0, shown, 0.0),
+        )
