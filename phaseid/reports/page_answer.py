@@ -74,9 +74,10 @@ def _pattern(answer: Identification, one: Scene, axis: AxisName | None) -> str:
     title = pattern_title(answer, one.number)
     heading = f"Pattern {one.number + 1}: {title}" if many else title
     figures = (
-        f'<figure class="disc">{svg(disc(one), hits=True)}<figcaption>Left half measured, right half '
-        "calculated: lines that explain a ring, and strong ones that are missing. The line’s "
-        "weight is its intensity, calculated ones laid on the measured phase by phase.</figcaption>"
+        f'<figure class="disc">{svg(disc(one), hits=True)}<figcaption>Left half measured, '
+        "right half calculated: lines that explain a ring, and strong ones that are missing. The "
+        "line’s weight is its intensity, calculated ones laid on the measured phase by phase."
+        "</figcaption>"
         "</figure>"
     )
     stick_picture = svg(sticks(one, axis_for(one.pattern, axis)), hits=True)

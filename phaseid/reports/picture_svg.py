@@ -10,7 +10,6 @@ from phaseid.reports.picture import Arc, Group, Line, Picture, Shape, Text, arc_
 from phaseid.reports.picture_style import LIGHT, dashes, palette_css, picture_css
 from phaseid.reports.plain import safe
 
-
 HIT_WIDTH = 9.0  # a line this wide can be hit with a finger or an unsteady mouse
 
 

@@ -200,6 +200,29 @@ def test_a_ring_lights_up_in_table_and_picture(opened: _Browser) -> None:
     assert opened.run("document.querySelector('g[data-key=p1r1]').matches('.lit')") is False
 
 
+def test_a_ring_is_hit_beside_its_line_and_told(opened: _Browser) -> None:
+    where = opened.run(
+        "(() => {const disc = document.querySelector('.disc svg');"
+        "disc.scrollIntoView({block: 'center'});"
+        "const ring = disc.querySelector('.mark[data-key=p1r4] path');"
+        "const p = ring.getPointAtLength(ring.getTotalLength() * 0.3), m = ring.getScreenCTM();"
+        "return [p.x * m.a + m.e + 3 * m.a, p.y * m.d + m.f]})()"
+    )
+    for kind in ("mousePressed", "mouseReleased"):
+        opened.ask(
+            "Input.dispatchMouseEvent",
+            type=kind,
+            x=where[0],
+            y=where[1],
+            button="left",
+            clickCount=1,
+        )
+    opened.ask("Input.dispatchMouseEvent", type="mouseMoved", x=2, y=2)
+    assert "TR p1r4" in opened.run(LIT)
+    told = opened.run("document.querySelector('section:not([hidden]) .readout').textContent")
+    assert told.startswith("Ring 4, measured 1.4360 Å, intensity 30; A Al 2 2 0 at 1.4317 Å")
+
+
 def test_the_keyboard_does_it_too(opened: _Browser) -> None:
     opened.run("document.querySelector('tr[data-key=p1r1]').focus()")
     opened.key("ArrowDown")
