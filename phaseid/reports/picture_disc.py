@@ -195,9 +195,11 @@ def _with_legend(shapes: list[Shape], scenes: list[Scene], label: str) -> Pictur
             shapes.append(Line(((x, y - 4), (x + 44, y - 4)), role, weight))
         shapes.append(Text(x + 54, y, "?  measured, unexplained", "ink", 12.0, bold=True))
         y += LEGEND_STEP
-    if len(scenes) == 1 and any(line.ring is None for line in scenes[0].calculated):
+    if any(line.ring is None for scene in scenes for line in scene.calculated):
+        where = " (in the sticks)" if len(scenes) > 1 else ""
+        words = f"×  calculated strong, not measured{where}"
         shapes.append(Line(((x, y - 4), (x + 44, y - 4)), "missing ink", 3.0))
-        shapes.append(Text(x + 54, y, "×  calculated strong, not measured", "ink", 12.0, bold=True))
+        shapes.append(Text(x + 54, y, words, "ink", 12.0, bold=True))
         y += LEGEND_STEP
     for note in _notes(scenes):
         shapes.append(Text(x, y, note, "soft", 11.0))

@@ -27,7 +27,7 @@ RESIDUAL_TOP, RESIDUAL_END = 286.0, 370.0
 RULER_Y = RESIDUAL_END
 FARTHEST_SIGMA = 4.0
 LABEL_SIZE = 11.0
-SMALLEST_STICK = 3.0
+SMALLEST_STICK, SMALLEST_LEFTOVER = 3.0, 9.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -111,7 +111,8 @@ def _sigma_y(sigma: float) -> float:
 
 def _up(ring: MeasuredRing, span: _Span, room: Room) -> Group:
     x = span.x(ring.true_d_A)
-    top = BASE - max(ring.height / 100.0 * (BASE - UP_TOP), SMALLEST_STICK)
+    smallest = SMALLEST_STICK if ring.phases else SMALLEST_LEFTOVER
+    top = BASE - max(ring.height / 100.0 * (BASE - UP_TOP), smallest)
     shapes: list[Line | Text]
     if ring.phases:
         step = (BASE - top) / len(ring.phases)
