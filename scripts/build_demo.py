@@ -15,6 +15,8 @@ from pathlib import Path
 
 import gemmi
 import numpy as np
+from numpy.typing import NDArray
+from PIL import Image
 
 ROOT = Path(__file__).resolve().parent.parent
 STARTER, DEMO = ROOT / "data" / "starter", ROOT / "data" / "demo"
@@ -27,6 +29,7 @@ CU_KA_A = (2 * 1.5405929 + 1.5444274) / 3  # Int. Tables C 4.2.2.1, 2:1 mean of 
 CU_KA_EV = 12398.419843 / CU_KA_A
 MIDDLES = {"vs": 90.0, "s": 70.0, "m": 40.0, "w": 15.0, "vw": 5.0}  # common practice, no source
 SEED = 20
+PLATE_PX, PLATE_CONSTANT_A_PX = 300, 256.0
 
 
 def lines(path: str, *, electrons: bool) -> list[tuple[float, float]]:
@@ -125,12 +128,28 @@ def foil_xrays(rng: np.random.Generator) -> str:
     return "\n".join(head) + "\n"
 
 
+def foil_plate(rng: np.random.Generator) -> NDArray[np.uint8]:
+    """Return the electrons' plate as an image: off centre, elliptical, with a beam stop."""
+    y, x = np.mgrid[0:PLATE_PX, 0:PLATE_PX].astype(float)
+    x, y = x - 148.3, y - 155.6
+    turn = math.radians(35.0)
+    along, across = x * math.cos(turn) + y * math.sin(turn), y * math.cos(turn) - x * math.sin(turn)
+    r = np.hypot(along / 1.003, across * 1.003)
+    picture = 12.0 + 120.0 * np.exp(-r / 18.0)
+    for d_A, strength in mixture(electrons=True, resolution=0.0):
+        picture += 0.9 * strength * np.exp(-0.5 * ((r - PLATE_CONSTANT_A_PX / d_A) / 1.5) ** 2)
+    picture[(np.abs(y + 0.2 * x) < 5) & (x < 0)] *= 0.03
+    counts: NDArray[np.uint8] = np.minimum(rng.poisson(picture), 255).astype(np.uint8)
+    return counts
+
+
 def main() -> None:
-    """Write both files."""
+    """Write the two lists and the image."""
     rng = np.random.default_rng(SEED)
     DEMO.mkdir(exist_ok=True)
     (DEMO / "foil_electrons.csv").write_text(foil_electrons(rng), encoding="utf-8")
     (DEMO / "foil_xrays.csv").write_text(foil_xrays(rng), encoding="utf-8")
+    Image.fromarray(foil_plate(rng)).save(DEMO / "foil_plate.png", optimize=True)
 
 
 if __name__ == "__main__":

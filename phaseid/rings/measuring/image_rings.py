@@ -23,7 +23,7 @@ STEP_PX = 0.5
 SECTORS = 72
 MIN_COVERAGE = 0.12  # of a circle, below which its mean is not used
 MIN_POSITIVE = 0.6  # of the sectors show a ring, else it is single spots or chance
-MIN_BRIGHT = 0.2  # of the sectors hold a clear spot of a spotty ring
+MIN_BRIGHT = 0.35  # of the sectors hold a clear spot of a spotty ring
 SPOTTY = 0.35
 
 
