@@ -123,6 +123,29 @@ def test_two_probes_share_a_disc(answer: Identification) -> None:
     assert "x-ray Cu Kα" in words
 
 
+def test_three_patterns_have_a_disc_each(answer: Identification) -> None:
+    pattern, best = answer.patterns[0], answer.hypotheses[0]
+    three = replace(
+        answer,
+        patterns=(pattern,) * 3,
+        hypotheses=(
+            replace(
+                best,
+                assignments=tuple(
+                    replace(a, pattern=number) for number in range(3) for a in best.assignments
+                ),
+                unexplained=tuple(
+                    replace(u, pattern=number) for number in range(3) for u in best.unexplained
+                ),
+            ),
+        ),
+    )
+    picture = sheet(three)
+    words = [text.text for text in _tree(picture).iter(f"{SVG}text")]
+    assert words.count("measured") == words.count("calculated") == 3
+    assert picture.height > 3 * disc(scene(three, three.hypotheses[0], 0)).height
+
+
 @pytest.mark.parametrize(
     ("name", "value"),
     # d = 2.338 Å with Cu Kα1 (λ = 1.5406 Å, from memory): 2θ = 2 asin(λ/2d) = 38.47°
