@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from phaseid.errors import InputError
 from phaseid.rings.measuring.along_ring import AlongRing, follow
-from phaseid.rings.measuring.centre import guess_geometry
+from phaseid.rings.measuring.centre import guess_geometry, shrink
 from phaseid.rings.measuring.defects import lone_pixels, shadow
 from phaseid.rings.measuring.fitting import PeakFit
 from phaseid.rings.measuring.geometry import Floats, Geometry, Pixels
@@ -19,11 +19,14 @@ from phaseid.rings.measuring.peaks import find_peaks
 from phaseid.rings.measuring.polar import PolarSums, polar_sums
 from phaseid.rings.measuring.refining import refine_geometry
 
+FIRST_LOOK_PX = 1024
 STEP_PX = 0.5
+MAX_BINS = 2400
 SECTORS = 72
 MIN_COVERAGE = 0.12  # of a circle, below which its mean is not used
 MIN_POSITIVE = 0.6  # of the sectors show a ring, else it is single spots or chance
 MIN_BRIGHT = 0.35  # of the sectors hold a clear spot of a spotty ring
+MIN_BRIGHT_BESIDE = 0.25
 SPOTTY = 0.35
 
 
@@ -42,13 +45,12 @@ def measure_pixels(image: Pixels, usable: NDArray[np.bool_], *, source: str) -> 
     usable = usable & ~lone_pixels(image, usable)
     if usable.mean() < 0.2:
         raise no_rings(source, "most pixels are saturated or dead")
-    geometry = guess_geometry(image, usable)
-    usable &= ~shadow(image, usable, geometry)
+    geometry, start = _first_look(image, usable)
     if usable.mean() < 0.1:
         raise no_rings(source, "most of the image is dark")
-    start = _start_radius(polar_sums(image, usable, geometry, step=1.0, sectors=36))
     geometry = refine_geometry(image, usable, geometry, r_min=start)
-    sums = polar_sums(image, usable, geometry, step=STEP_PX, sectors=SECTORS)
+    step = max(STEP_PX, geometry.reach(image.shape) / MAX_BINS)
+    sums = polar_sums(image, usable, geometry, step=step, sectors=SECTORS)
     radius, mean, sigma, noise, first = _profile(sums)
     if not radius.size:
         raise no_rings(source, "no stretch of radii is seen well enough")
@@ -59,6 +61,8 @@ def measure_pixels(image: Pixels, usable: NDArray[np.bool_], *, source: str) -> 
     along = follow(found.fit, radius, cells, number, noise)
     even = (along.positive >= MIN_POSITIVE) & (along.median_score > 2.5)
     keep = even | (along.bright > MIN_BRIGHT)
+    if keep.any():  # it is a pattern of rings: others may be of fewer crystallites
+        keep |= along.bright > MIN_BRIGHT_BESIDE
     keep &= np.isfinite(along.position_sigma)
     if not keep.any():
         raise _nothing(image, usable, source, found.broad)
@@ -84,6 +88,25 @@ def measure_pixels(image: Pixels, usable: NDArray[np.bool_], *, source: str) -> 
         masked=float(1.0 - usable.mean()),
         remarks=tuple(remarks),
     )
+
+
+def _first_look(image: Pixels, usable: NDArray[np.bool_]) -> tuple[Geometry, float]:
+    """Rough geometry and the radius (px) to start from; takes what is in shadow from `usable`.
+
+    A large image is looked at in blocks.
+    """
+    factor = max(1, int(np.ceil(max(image.shape) / FIRST_LOOK_PX)))
+    small, clear = image, usable
+    if factor > 1:
+        mean, share = shrink(image, usable, factor)
+        small, clear = mean.astype(np.float32), share > 0.5
+    geometry = guess_geometry(small, clear)
+    dark = shadow(small, clear, geometry)
+    sums = polar_sums(small, clear & ~dark, geometry, step=1.0, sectors=36)
+    start = _start_radius(sums) * factor
+    h, w = small.shape[0] * factor, small.shape[1] * factor
+    usable[:h, :w] &= ~np.repeat(np.repeat(dark, factor, axis=0), factor, axis=1)
+    return geometry.scaled(factor, (factor - 1) / 2), start
 
 
 def _start_radius(sums: PolarSums) -> float:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from phaseid.errors import InputError
 from phaseid.rings.measuring.geometry import Pixels
 
-MAX_PIXELS = 16384 * 16384 // 2
+MAX_PIXELS = 50_000_000  # about 7000 × 7000, under 1 GB of memory on the way
 MIN_SIDE = 32
 SUFFIXES = (".tif", ".tiff", ".png", ".mrc", ".mrcs", ".map", ".jpg", ".jpeg", ".bmp", ".gif")
 
@@ -98,9 +98,10 @@ def _saturated(image: Pixels, high: float, usable: NDArray[np.bool_]) -> NDArray
     return wide
 
 
-def _too_large(width: int, height: int, path: Path) -> InputError:
+def _too_large(path: Path, size: tuple[int, int] | None = None) -> InputError:
+    extent = "is" if size is None else f"is {size[0]} × {size[1]} pixels,"
     return InputError(
-        f"is {width} × {height} pixels, more than phaseid takes into memory",
+        f"{extent} larger than phaseid takes into memory ({MAX_PIXELS / 1e6:.0f} million pixels)",
         path=path,
         remedy="Bin the image, or cut out the part with the rings.",
     )
@@ -109,30 +110,30 @@ def _too_large(width: int, height: int, path: Path) -> InputError:
 def _read_picture(path: Path) -> NDArray[np.generic]:
     from PIL import Image, UnidentifiedImageError
 
+    array, size = np.zeros(0), (0, 0)
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
             with Image.open(path) as picture:
-                width, height = picture.size
-                if width * height > MAX_PIXELS:
-                    raise _too_large(width, height, path)
-                if picture.mode in ("P", "1"):
-                    array = np.asarray(picture.convert("RGB" if picture.mode == "P" else "L"))
-                else:
-                    array = np.asarray(picture)
+                size = picture.size
+                if size[0] * size[1] <= MAX_PIXELS:
+                    mode = {"P": "RGB", "1": "L"}.get(picture.mode)
+                    array = np.asarray(picture if mode is None else picture.convert(mode))
     except UnidentifiedImageError:
         raise InputError(
             "is not an image that can be read",
             path=path,
             remedy="Grey TIFF, PNG and MRC can; export the image as one of them.",
         ) from None
-    except InputError:
-        raise
+    except Image.DecompressionBombError:
+        raise _too_large(path) from None
     except Exception as error:  # decoders raise anything on a damaged file
         reason = f"{error}".splitlines()[0][:100] if f"{error}" else type(error).__name__
         raise InputError(
             f"is damaged or cut short ({reason})", path=path, remedy="Export the image again."
         ) from None
+    if size[0] * size[1] > MAX_PIXELS:
+        raise _too_large(path, size)
     if array.ndim == 3:
         array = _grey(array, path)
     if array.ndim != 2 or array.size == 0:
@@ -175,7 +176,7 @@ def _read_mrc(path: Path, head: bytes) -> NDArray[np.generic]:
             f"holds {sections} images", path=path, remedy="Save the one with the rings by itself."
         )
     if columns * rows > MAX_PIXELS:
-        raise _too_large(columns, rows, path)
+        raise _too_large(path, (columns, rows))
     kind = np.dtype(order + _MRC_MODES[mode])
     start = _MRC_HEADER + extended
     if path.stat().st_size < start + columns * rows * kind.itemsize:
