@@ -39,6 +39,14 @@ def measure(
             "--unit", metavar="COLUMN", help="What the positions of a profile are, if unstated."
         ),
     ] = None,
+    plot: Annotated[
+        Path | None,
+        typer.Option(
+            "--plot",
+            metavar="FILE",
+            help="Draw the curve and what was found: FILE.png, FILE.svg or FILE.pdf.",
+        ),
+    ] = None,
     as_json: Json = False,
 ) -> None:
     """Find the rings of an image, or the peaks of a profile.
@@ -62,6 +70,11 @@ def measure(
         spacings = None
     if output is not None:
         write(found, output)
+    if plot is not None:
+        from phaseid.reports.measuring_picture import draw_measurement
+
+        draw_measurement(found, plot)
+        say(f"Picture written to {plot}")
     if as_json:
         from phaseid.reports.json import dumps
 

@@ -95,3 +95,12 @@ def test_a_list_that_cannot_be_written_ends_with_code_2(phaseid, tmp_path) -> No
     done = phaseid("measure", PLATE, "-o", str(tmp_path / "no" / "rings.csv"))
     assert done.code == 2
     assert "cannot be written" in done.err
+
+
+def test_the_picture_of_what_was_found(phaseid, scan, tmp_path) -> None:
+    path = tmp_path / "found.svg"
+    assert phaseid("measure", str(scan), "--plot", str(path)).code == 0
+    assert path.read_text(encoding="utf-8").count("<path") > 20
+    done = phaseid("measure", str(scan), "--plot", str(tmp_path / "found.txt"))
+    assert done.code == 2
+    assert ".svg" in done.err

@@ -10,7 +10,7 @@ from phaseid.rings.measuring import measure_profile, read_curve
 
 A_LAB6_A = 4.156826  # NIST SRM 660c certificate, 22.5 °C
 CU_KA1_A, CU_KA2_A = 1.5405929, 1.5444274  # International Tables C, 4.2.2.1
-SUMS = (1, 2, 3, 4, 5, 6, 8, 9, 10, 11, 12, 13)  # h² + k² + l² of a primitive cubic cell
+SUMS = (1, 2, 3, 4, 5, 6, 8, 9)  # h² + k² + l² of a primitive cubic cell
 
 
 def angle(total: int, wavelength_A: float) -> float:
@@ -18,16 +18,16 @@ def angle(total: int, wavelength_A: float) -> float:
 
 
 def profile(seed: int, *, doublet: bool, pair: float = 0.0) -> tuple[np.ndarray, np.ndarray]:
-    """Angles and counts; `pair` adds a peak so far above each of the two strongest."""
+    """Angles and counts; `pair` adds a peak so far above each of two."""
     rng = np.random.default_rng(seed)
-    x = np.arange(18.0, 92.0, 0.03)
+    x = np.arange(18.0, 69.0, 0.03)
     y = 80.0 + 200.0 * np.exp(-(x - 18.0) / 15.0)
     for i, total in enumerate(SUMS):
         height = 2500.0 / (1 + (5 * i) % 7)
         lines = [(angle(total, CU_KA1_A), height)]
         if doublet:
             lines.append((angle(total, CU_KA2_A), 0.5 * height))
-        if pair and i in (0, 7):
+        if pair and i in (0, 5):
             lines.append((angle(total, CU_KA1_A) + pair, 0.5 * height))
         for at, top in lines:
             width = 0.09 + 0.0005 * at

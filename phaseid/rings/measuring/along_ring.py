@@ -18,7 +18,8 @@ class AlongRing:
     intensity beyond noise, share of sectors seen, share of those in which the ring is positive,
     the median intensity of a sector over its uncertainty, the share of sectors in which the ring
     is bright less five times that in which it is dark, both by 3 sigma, and how alike neighbouring
-    sectors are (1 alike, 0 not at all).
+    sectors are (1 alike, 0 not at all). `lean_x`, `lean_y`: mean direction of the sectors seen,
+    0 for a full circle.
     """
 
     position_sigma: Floats
@@ -28,6 +29,8 @@ class AlongRing:
     median_score: Floats
     bright: Floats
     alike: Floats
+    lean_x: Floats
+    lean_y: Floats
 
 
 def follow(fit: PeakFit, radius: Floats, mean: Floats, number: Floats, noise: Floats) -> AlongRing:
@@ -38,7 +41,7 @@ def follow(fit: PeakFit, radius: Floats, mean: Floats, number: Floats, noise: Fl
     distortion, whichever they are.
     """
     m, sectors = len(fit.position), mean.shape[1]
-    out = np.full((7, m), np.nan)
+    out = np.full((9, m), np.nan)
     value, by_place, _, _ = shape(radius, fit.position, fit.fwhm, fit.lorentzian)
     for k in range(m):
         near = np.abs(radius - fit.position[k]) < 1.6 * fit.fwhm[k]
@@ -59,6 +62,7 @@ def follow(fit: PeakFit, radius: Floats, mean: Floats, number: Floats, noise: Fl
         if design.shape[1] > near.sum() - 1:
             design = design[:, :4]
         height, shift, height_var = [], [], []
+        directions = []
         seen = 0
         for s in range(sectors):
             n = number[near, s]
@@ -66,6 +70,7 @@ def follow(fit: PeakFit, radius: Floats, mean: Floats, number: Floats, noise: Fl
             if (n > 0).mean() < 0.85:
                 continue
             seen += 1
+            directions.append((s + 0.5) * 2.0 * np.pi / sectors)
             weight = np.sqrt(n) / noise[near]
             normal = (design * weight[:, None] ** 2).T @ design
             inverse = np.linalg.pinv(normal, hermitian=True)
@@ -76,6 +81,7 @@ def follow(fit: PeakFit, radius: Floats, mean: Floats, number: Floats, noise: Fl
         out[2, k] = seen / sectors
         if seen < MIN_CELLS:
             continue
+        out[7, k], out[8, k] = np.cos(directions).mean(), np.sin(directions).mean()
         a, d, va = np.array(height), np.array(shift), np.array(height_var)
         total = a.sum()
         if total <= 0:

@@ -28,21 +28,25 @@ def gain(image: Pixels, usable: Mask) -> float:
 
 
 def lone_pixels(image: Pixels, usable: Mask) -> Mask:
-    """Pixels (h, w) far above or below all four neighbours: hot or dead."""
-    per_count = gain(image, usable)
+    """Pixels (h, w) far above or below three of their four neighbours at least: hot or dead."""
+    per_count = np.float32(gain(image, usable))
     found = np.zeros(image.shape, dtype=np.bool_)
     rows = max(64, 500_000 // image.shape[1])
-    for start in range(0, image.shape[0] - 2, rows):  # in strips that stay in the cache
-        strip = slice(start, min(start + rows + 2, image.shape[0]))
-        found[strip.start + 1 : strip.stop - 1, 1:-1] = _lone(image[strip], np.float32(per_count))
+    for start in range(0, image.shape[0], rows):  # in strips that stay in the cache
+        stop = min(start + rows, image.shape[0])
+        above, below = max(start - 1, 0), min(stop + 1, image.shape[0])
+        rim = ((int(start == 0), int(stop == image.shape[0])), (1, 1))
+        found[start:stop] = _lone(np.pad(image[above:below], rim, mode="reflect"), per_count)
     return found
 
 
 def _lone(image: Pixels, per_count: np.float32) -> Mask:
     """The same for the inner pixels (h - 2, w - 2)."""
-    around = [image[:-2, 1:-1], image[2:, 1:-1], image[1:-1, :-2], image[1:-1, 2:]]
-    high = np.maximum(np.maximum(around[0], around[1]), np.maximum(around[2], around[3]))
-    low = np.minimum(np.minimum(around[0], around[1]), np.minimum(around[2], around[3]))
+    up, down, left, right = image[:-2, 1:-1], image[2:, 1:-1], image[1:-1, :-2], image[1:-1, 2:]
+    high_a, low_a = np.maximum(up, down), np.minimum(up, down)
+    high_b, low_b = np.maximum(left, right), np.minimum(left, right)
+    high = np.maximum(np.minimum(high_a, high_b), np.maximum(low_a, low_b))  # second highest
+    low = np.minimum(np.maximum(low_a, low_b), np.minimum(high_a, high_b))  # second lowest
     inner = image[1:-1, 1:-1]
     noise = np.sqrt(per_count * np.maximum(high, 1.0))
     return np.asarray((inner > 1.8 * high + 6.0 * noise) | (inner < 0.4 * low - 4.0 * noise))
@@ -88,7 +92,7 @@ def _background(image: Pixels, usable: Mask, geometry: Geometry) -> Floats:
     level = np.zeros(len(cells))
     level[filled] = np.nanmedian(cells[filled], axis=1)
     level = np.interp(np.arange(len(cells)), np.flatnonzero(filled), level[filled])
-    low = percentile_filter(level, 20, size=25)
+    low = percentile_filter(level, 10, size=51)
     # a stop over the whole centre: what lies further out is a bound from below
     outer = np.maximum.accumulate(low[::-1])[::-1]
     return np.asarray(np.maximum(low, 0.6 * outer))

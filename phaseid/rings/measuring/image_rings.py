@@ -156,8 +156,9 @@ def _cells(sums: PolarSums, first: int, n: int) -> tuple[Floats, Floats]:
 def _ring(fit: PeakFit, along: AlongRing, k: int, geometry: Geometry) -> MeasuredRing:
     position = float(fit.position[k])
     sigma = float(max(along.position_sigma[k], 0.5 * fit.position_sigma[k]))
-    if along.coverage[k] < 0.9:  # a part of a circle moves with its centre
-        sigma = float(np.hypot(sigma, np.sqrt(np.diag(geometry.covariance)[:2].max())))
+    # a part of a circle moves with its centre
+    lean = np.array([along.lean_x[k], along.lean_y[k]])
+    sigma = float(np.sqrt(sigma**2 + max(float(lean @ geometry.covariance[:2, :2] @ lean), 0.0)))
     spottiness = float(along.spottiness[k])
     note = ""
     if spottiness > SPOTTY:

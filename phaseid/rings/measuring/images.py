@@ -110,7 +110,8 @@ def _too_large(path: Path, size: tuple[int, int] | None = None) -> InputError:
 def _read_picture(path: Path) -> NDArray[np.generic]:
     from PIL import Image, UnidentifiedImageError
 
-    array, size = np.zeros(0), (0, 0)
+    array: NDArray[np.generic] = np.zeros(0)
+    size = (0, 0)
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")

@@ -16,6 +16,7 @@ from phaseid.rings.measuring.fitting import (
     fit_background,
     fit_peaks,
 )
+from phaseid.rings.measuring.halos import find_halos
 
 DETECTION = 5.0  # sigmas above the background below which no peak is claimed
 WIDTHS = 2.0 ** np.arange(0.0, 5.0, 0.5)  # sigmas looked for, in steps of the abscissa
@@ -102,7 +103,8 @@ def narrowest_first(y: Floats, sigma: Floats, threshold: float) -> list[tuple[in
                 continue
             half = 0.5 * (place + right[0] - left[-1] - 1.0)
             width = float(np.sqrt(max(half**2 - scale**2, 0.25)))
-            fresh.append((int(place), width, float(score[place])))
+            if width > 0.5 * scale:  # else it would have stood out at a narrower scale
+                fresh.append((int(place), width, float(score[place])))
         found += fresh
     return found
 
@@ -118,21 +120,23 @@ def find_peaks(
 ) -> Found:
     """Peaks of y ± sigma (n,) at evenly spaced x; `origin` is where a direct beam's tail begins.
 
-    Peaks much wider than the others are halos and go to `broad` (their positions).
+    What is much wider than a peak is background; its maxima go to `broad` (their positions).
     """
+    from scipy.ndimage import gaussian_filter1d
+
     step = float(np.median(np.diff(x)))
     first = narrowest_first(y, sigma, detection + 1.0)
     if not first:
         basis = background_basis(x, 12.0 * step, origin=origin)
         level = fit_background(y, sigma, basis)
-        return Found(None, level, _limit(sigma, 3.0, step, detection), (), 6.0 * step)
+        broad = find_halos(x, level, sigma, 6.0 * step)
+        return Found(None, level, _limit(sigma, 3.0, step, detection), broad, 6.0 * step)
     typical = _typical_width(first)
     widths = WIDTHS[(typical / 2.1 <= WIDTHS) & (typical * 2.1 >= WIDTHS)]
     basis = background_basis(x, typical * FWHM_PER_SIGMA * step, origin=origin)
     position: list[float] = []
     fwhm: list[float] = []
     fit: PeakFit | None = None
-    broad: list[float] = []
     level = fit_background(y, sigma, basis)
     residual = y - level
     for turn in range(PASSES):
@@ -152,8 +156,7 @@ def find_peaks(
             fit = fit_peaks(
                 x, y, sigma, np.array(position), np.array(fwhm), basis, satellite=satellite
             )
-            keep, wide = _sound(fit, typical * FWHM_PER_SIGMA * step, x, detection)
-            broad += [float(p) for p in fit.position[wide]]
+            keep = _sound(fit, typical * FWHM_PER_SIGMA * step, x, detection)
             position, fwhm = list(fit.position[keep]), list(fit.fwhm[keep])
             if keep.all():
                 break
@@ -164,9 +167,12 @@ def find_peaks(
             break
         level = fit.background
         residual = y - fit.model
-    width = typical if fit is None else float(np.median(fit.fwhm)) / FWHM_PER_SIGMA / step
+    width = min(typical, 4.0) if fit is None else float(np.median(fit.fwhm)) / FWHM_PER_SIGMA / step
     limit = _limit(sigma, width, step, detection)
-    return Found(fit, level, limit, tuple(broad), width * FWHM_PER_SIGMA * step)
+    if fit is None:  # nothing narrow: what is there is halo or background
+        level = np.asarray(gaussian_filter1d(y, 4.0, mode="nearest"))
+    broad = find_halos(x, level, sigma, width * FWHM_PER_SIGMA * step)
+    return Found(fit, level, limit, broad, width * FWHM_PER_SIGMA * step)
 
 
 def _typical_width(found: list[tuple[int, float, float]]) -> float:
@@ -175,16 +181,13 @@ def _typical_width(found: list[tuple[int, float, float]]) -> float:
     return max(1.0, float(np.percentile(widths, 40)))
 
 
-def _sound(
-    fit: PeakFit, typical_fwhm: float, x: Floats, detection: float
-) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
-    """Which peaks stand (m,), and which are halos (m,)."""
+def _sound(fit: PeakFit, typical_fwhm: float, x: Floats, detection: float) -> NDArray[np.bool_]:
+    """Which peaks stand (m,): significant, inside, as wide as peaks of this curve are."""
     usual = max(float(np.median(fit.fwhm)), typical_fwhm)
     strong = fit.area > 0.7 * detection * fit.area_sigma
     strong &= fit.position_sigma < 0.5 * fit.fwhm
     inside = (fit.position > x[0]) & (fit.position < x[-1])
-    wide = strong & (fit.fwhm > 3.0 * usual)
-    return strong & inside & ~wide & (fit.fwhm > 0.3 * usual), wide
+    return np.asarray(strong & inside & (fit.fwhm < 3.0 * usual) & (fit.fwhm > 0.3 * usual))
 
 
 def _limit(sigma: Floats, width: float, step: float, detection: float) -> float:

@@ -1,0 +1,46 @@
+"""Broad halos of amorphous matter, told from the tail of the beam and from rings."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from phaseid.rings.measuring.fitting import Floats
+
+MIN_FWHM = 3.0  # widths of a ring; a halo is broader
+MIN_RISE = 0.1  # of the tail beneath it
+MIN_SIGMAS = 10.0  # of one bin's noise
+
+
+def find_halos(x: Floats, level: Floats, sigma: Floats, fwhm: float) -> tuple[float, ...]:
+    """Positions of broad maxima of the background `level` (n,) at x above a convex tail.
+
+    A beam's tail falls off convexly, so the convex hull from below spans what is not halo. `sigma`
+    (n,) is the noise of the curve, `fwhm` the usual width of its rings.
+    """
+    from scipy.signal import find_peaks
+
+    ground = _hull(x, level)
+    rise = level - ground
+    step = float(np.median(np.diff(x)))
+    places, facts = find_peaks(
+        rise, prominence=MIN_SIGMAS * float(np.median(sigma)), width=MIN_FWHM * fwhm / step
+    )
+    margin = MIN_FWHM * fwhm
+    return tuple(
+        float(x[place])
+        for place, prominence in zip(places, facts["prominences"], strict=True)
+        if prominence > MIN_RISE * abs(ground[place]) and x[0] + margin < x[place] < x[-1] - margin
+    )
+
+
+def _hull(x: Floats, y: Floats) -> Floats:
+    """The convex curve (n,) that touches y from below."""
+    corners: list[int] = []
+    for i in range(len(x)):
+        while len(corners) > 1:
+            a, b = corners[-2], corners[-1]
+            if (y[b] - y[a]) * (x[i] - x[a]) < (y[i] - y[a]) * (x[b] - x[a]):
+                break
+            corners.pop()
+        corners.append(i)
+    return np.asarray(np.interp(x, x[corners], y[corners]))
