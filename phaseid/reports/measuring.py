@@ -84,7 +84,7 @@ def measurement_text(found: Measurement, d_A: list[float] | None = None) -> str:
     for i, ring in enumerate(found.rings):
         d = "" if d_A is None else f" {d_A[i]:6.4f}"
         lines.append(
-            f"  {i + 1:4d} {ring.position:13.3f} {ring.sigma:8.4f} {ring.width:8.3f} "
+            f"  {i + 1:4d} {ring.position:13.3f} {ring.sigma:8.2g} {ring.width:8.3f} "
             f"{100 * ring.intensity / strongest:6.1f}{d}  {ring.note}".rstrip()
         )
     lines += ["", *found.remarks]

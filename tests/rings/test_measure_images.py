@@ -228,3 +228,9 @@ def test_damaged_files_are_refused(tmp_path) -> None:
     path.write_bytes(b"")
     with pytest.raises(InputError, match="empty"):
         measure_image(path)
+
+
+def test_a_halo_alone_is_named(tmp_path) -> None:
+    scene = replace(PLAIN, radii=(80.0,), heights=(60.0,), sigma=20.0)
+    with pytest.raises(InputError, match="halos of amorphous matter"):
+        measured(scene)

@@ -27,6 +27,7 @@ MIN_COVERAGE = 0.12  # of a circle, below which its mean is not used
 MIN_POSITIVE = 0.6  # of the sectors show a ring, else it is single spots or chance
 MIN_BRIGHT = 0.35  # of the sectors hold a clear spot of a spotty ring
 MIN_BRIGHT_BESIDE = 0.25
+MAX_UNEVENNESS = 0.1  # of sectors against radii, beyond which nothing is concentric
 SPOTTY = 0.35
 
 
@@ -54,10 +55,12 @@ def measure_pixels(image: Pixels, usable: NDArray[np.bool_], *, source: str) -> 
     radius, mean, sigma, noise, first = _profile(sums)
     if not radius.size:
         raise no_rings(source, "no stretch of radii is seen well enough")
+    cells, number = _cells(sums, first, len(radius))
+    if _unevenness(mean, cells, number, noise) > MAX_UNEVENNESS:
+        raise _nothing(image, usable, source, ())
     found = find_peaks(radius, mean, sigma, origin=0.0)
     if found.fit is None:
         raise _nothing(image, usable, source, found.broad)
-    cells, number = _cells(sums, first, len(radius))
     along = follow(found.fit, radius, cells, number, noise)
     even = (along.positive >= MIN_POSITIVE) & (along.median_score > 2.5)
     keep = even | (along.bright > MIN_BRIGHT)
@@ -151,6 +154,17 @@ def _cells(sums: PolarSums, first: int, n: int) -> tuple[Floats, Floats]:
     part = slice(first, first + n)
     number = sums.number[part]
     return np.where(number > 0, sums.total[part] / np.maximum(number, 1), 0.0), number
+
+
+def _unevenness(mean: Floats, cells: Floats, number: Floats, noise: Floats) -> float:
+    """How much sectors differ beyond noise at the usual radius, over how much radii differ."""
+    seen = number >= 2
+    count = np.maximum(seen.sum(axis=1), 1)
+    off = np.where(seen, cells - mean[:, None], 0.0)
+    by_noise = np.where(seen, noise[:, None] ** 2 / np.maximum(number, 1), 0.0)
+    extra = ((off**2).sum(axis=1) - by_noise.sum(axis=1)) / count
+    low, high = np.percentile(mean, [5, 95])
+    return float(np.sqrt(max(float(np.median(extra)), 0.0)) / max(float(high - low), 1e-12))
 
 
 def _ring(fit: PeakFit, along: AlongRing, k: int, geometry: Geometry) -> MeasuredRing:
