@@ -16,8 +16,8 @@ from phaseid.matching.likelihood import nothing_listed
 from phaseid.matching.search import Judged, Loosened, Members, Search
 from phaseid.matching.settings import RELATIVE_INTENSITY, RELATIVE_PRIOR, UNLISTED_PRIOR
 
-_LOOSENED = 40
-_DISTANT = 40
+_LOOSENED = 24
+_DISTANT = 24
 _WORTH_LOOSENING = 12.0
 _RELATIVES_TOLD = 5
 

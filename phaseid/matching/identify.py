@@ -34,6 +34,8 @@ from phaseid.matching.settings import PHASE_COUNT_PRIOR
 from phaseid.rings.ringlist import RingList
 
 _SURE = 0.9
+_TWINS_FROM = 0.003
+"""Answers less probable than this are not searched for phases that could stand in."""
 _SETS_AT_OWN_ENERGY = 60
 """The best sets whose phases get f′ and f″ at the X-ray energy, where it is not Cu Kα's."""
 _NOTHING = 0.5
@@ -211,7 +213,8 @@ def _hypotheses(
     answers: list[Hypothesis] = []
     while remaining and len(answers) < top:
         leader = remaining[0]
-        twins = _twins(search, leader, remaining)
+        told = probability[leader.members] > _TWINS_FROM
+        twins = _twins(search, leader, remaining if told else [])
         taken = _same_answer(search, leader, twins, remaining)
         total = min(sum(probability[members] for members in taken), 1.0)
         answers.append(

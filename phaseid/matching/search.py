@@ -33,12 +33,12 @@ from phaseid.matching.texture import Axis, can_show_texture, fibre_factors, like
 
 Members = tuple[int, ...]
 
-_SINGLES = 240
+_SINGLES = 180
 _BASES = {1: 16, 2: 10, 3: 6}
 _ADDITIONS = {1: 30, 2: 24, 3: 16}
 _EXCHANGED = 4
 _EXCHANGE_WIDTH = 30
-_TEXTURED = 40
+_TEXTURED = 30
 _AXES_EACH = 3
 _BATCH_CELLS = 150_000
 
