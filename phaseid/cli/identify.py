@@ -12,6 +12,7 @@ from phaseid.cli.options import (
     Exclude,
     Json,
     LibraryFile,
+    MaxPhases,
     Must,
     Only,
     bold,
@@ -46,12 +47,7 @@ def identify(
     must: Must = None,
     only: Only = None,
     exclude: Exclude = None,
-    max_phases: Annotated[
-        int,
-        typer.Option(
-            "--max-phases", metavar="N", min=1, max=4, help="Phases in a mixture, at most."
-        ),
-    ] = 3,
+    max_phases: MaxPhases = 3,
     top: Annotated[int, typer.Option("--top", metavar="N", min=1, help="Answers to list.")] = 5,
     plot: Annotated[
         Path | None,

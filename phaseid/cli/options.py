@@ -27,6 +27,10 @@ LibraryFile = Annotated[
     ),
 ]
 Json = Annotated[bool, typer.Option("--json", help="Print one JSON object and nothing else.")]
+MaxPhases = Annotated[
+    int,
+    typer.Option("--max-phases", metavar="N", min=1, max=4, help="Phases in a mixture, at most."),
+]
 Must = Annotated[
     str | None,
     typer.Option("--must", metavar="EL,EL", help="Elements the answer's phases hold together."),

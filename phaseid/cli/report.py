@@ -13,6 +13,7 @@ from phaseid.cli.options import (
     AxisText,
     Exclude,
     LibraryFile,
+    MaxPhases,
     Must,
     Only,
     open_library,
@@ -48,12 +49,7 @@ def report(
     must: Must = None,
     only: Only = None,
     exclude: Exclude = None,
-    max_phases: Annotated[
-        int,
-        typer.Option(
-            "--max-phases", metavar="N", min=1, max=4, help="Phases in a mixture, at most."
-        ),
-    ] = 3,
+    max_phases: MaxPhases = 3,
     top: Annotated[int, typer.Option("--top", metavar="N", min=1, help="Answers to show.")] = 5,
     axis: AxisText = None,
 ) -> None:
