@@ -140,7 +140,7 @@ def _table(word: str, probe: str | None) -> RingTable:
 
         found = find_rings(Path(word), probe=probe)
         say(f"{word}: {len(found.rings)} rings measured; `phaseid measure` shows them.")
-        return parse_table(found.ring_list_text(), word)
+        return found.ring_table()
     return parse_table(read_text(word), word)
 
 

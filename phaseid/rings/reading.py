@@ -177,6 +177,7 @@ def rings_from_table(
         source=table.source,
         metadata=dict(table.metadata),
         camera_constant=constant,
+        disc=table.disc,
     )
     found = tuple(slips(rings, [row.where for row in table.rows]))
     return replace(rings, remarks=(*the_probe.remarks, *remarks, *found), slips=found)

@@ -4,12 +4,16 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
 from phaseid.probes.probe import Probe
 from phaseid.rings.camera import CameraConstant
+
+if TYPE_CHECKING:
+    from phaseid.rings.measuring.disc import Disc
 
 GRADES: dict[str, tuple[float, float]] = {
     # interval of relative intensity (strongest = 100) each grade stands for:
@@ -39,7 +43,8 @@ class RingList:
     `remarks` are sentences to show with the answer (defaults applied, likely slips); `slips` those
     among them that make the whole pattern doubtful, such as a wrong unit.
     `metadata` are all keys of the file as written, known or not; `camera_constant` is that of the
-    file where it states one.
+    file where it states one. `disc` is a picture of the image on which the rings were measured,
+    None for any list that was read from a file.
     """
 
     title: str
@@ -59,6 +64,7 @@ class RingList:
     slips: tuple[str, ...] = ()
     metadata: Mapping[str, str] = field(default_factory=dict)
     camera_constant: CameraConstant | None = None
+    disc: Disc | None = None
 
     def __len__(self) -> int:
         return len(self.d_A)

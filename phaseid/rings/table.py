@@ -12,9 +12,13 @@ import unicodedata
 from dataclasses import dataclass, field
 from difflib import get_close_matches
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from phaseid.errors import InputError
 from phaseid.rings.columns import COLUMNS, Column
+
+if TYPE_CHECKING:
+    from phaseid.rings.measuring.disc import Disc
 
 KNOWN_KEYS = ("title", "probe", "scale uncertainty", "camera constant")
 OPTIONAL_COLUMNS = ("sigma", "intensity", "note")
@@ -54,7 +58,10 @@ class Row:
 
 @dataclass(slots=True)
 class RingTable:
-    """A ring list taken apart; `metadata` has keys as spelt, `keys` the known ones with line."""
+    """A ring list taken apart; `metadata` has keys as spelt, `keys` the known ones with line.
+
+    `disc` is a picture of the image the rings were measured on, if they were just now.
+    """
 
     source: str
     column: Column
@@ -62,6 +69,7 @@ class RingTable:
     metadata: dict[str, str] = field(default_factory=dict)
     keys: dict[str, tuple[str, int | None]] = field(default_factory=dict)
     remarks: list[str] = field(default_factory=list)
+    disc: Disc | None = None
 
 
 def read_text(path: str | Path) -> str:

@@ -81,6 +81,10 @@ class Geometry:
         v = np.float32(ch + sh * c) * dy - np.float32(sh * s) * dx
         return u, v
 
+    def bend(self, u: Pixels, v: Pixels) -> tuple[Pixels, Pixels]:
+        """The inverse of `straighten`: offsets (dx, dy) from the centre as the image has them."""
+        return Geometry(0.0, 0.0, -self.stretch_c, -self.stretch_s).straighten(u, v)
+
     def scaled(self, factor: float, offset: float) -> Geometry:
         """The same in pixels of another size: position × factor + offset."""
         return Geometry(

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from phaseid.rings.measuring.fitting import Floats
+from phaseid.rings.measuring.hull import convex_below
 
 MIN_FWHM = 3.0  # widths of a ring; a halo is broader
 MIN_RISE = 0.1  # of the tail beneath it
@@ -19,7 +20,7 @@ def find_halos(x: Floats, level: Floats, sigma: Floats, fwhm: float) -> tuple[fl
     """
     from scipy.signal import find_peaks
 
-    ground = _hull(x, level)
+    ground = convex_below(x, level)
     rise = level - ground
     step = float(np.median(np.diff(x)))
     places, facts = find_peaks(
@@ -31,16 +32,3 @@ def find_halos(x: Floats, level: Floats, sigma: Floats, fwhm: float) -> tuple[fl
         for place, prominence in zip(places, facts["prominences"], strict=True)
         if prominence > MIN_RISE * abs(ground[place]) and x[0] + margin < x[place] < x[-1] - margin
     )
-
-
-def _hull(x: Floats, y: Floats) -> Floats:
-    """The convex curve (n,) that touches y from below."""
-    corners: list[int] = []
-    for i in range(len(x)):
-        while len(corners) > 1:
-            a, b = corners[-2], corners[-1]
-            if (y[b] - y[a]) * (x[i] - x[a]) < (y[i] - y[a]) * (x[b] - x[a]):
-                break
-            corners.pop()
-        corners.append(i)
-    return np.asarray(np.interp(x, x[corners], y[corners]))

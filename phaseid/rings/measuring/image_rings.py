@@ -11,6 +11,7 @@ from phaseid.errors import InputError
 from phaseid.rings.measuring.along_ring import AlongRing, follow
 from phaseid.rings.measuring.centre import guess_geometry, shrink
 from phaseid.rings.measuring.defects import lone_pixels, shadow
+from phaseid.rings.measuring.disc import straightened
 from phaseid.rings.measuring.fitting import PeakFit
 from phaseid.rings.measuring.geometry import Floats, Geometry, Pixels
 from phaseid.rings.measuring.images import read_image
@@ -29,6 +30,7 @@ MIN_BRIGHT = 0.35  # of the sectors hold a clear spot of a spotty ring
 MIN_BRIGHT_BESIDE = 0.25
 MAX_UNEVENNESS = 0.1  # of sectors against radii, beyond which nothing is concentric
 SPOTTY = 0.35
+MARGIN = 1.15  # of the outermost ring, that the picture shows
 
 
 def measure_image(path: str | Path) -> Measurement:
@@ -90,6 +92,13 @@ def measure_pixels(image: Pixels, usable: NDArray[np.bool_], *, source: str) -> 
         shape=(image.shape[0], image.shape[1]),
         masked=float(1.0 - usable.mean()),
         remarks=tuple(remarks),
+        disc=straightened(
+            image,
+            geometry,
+            radius,
+            found.background,
+            reach_px=min(float(radius[-1]), MARGIN * rings[-1].position),
+        ),
     )
 
 

@@ -9,9 +9,11 @@ import numpy as np
 
 from phaseid.errors import InputError
 from phaseid.probes.numbers import plain_number
+from phaseid.rings.measuring.disc import Disc
 from phaseid.rings.measuring.geometry import Floats, Geometry
-from phaseid.rings.reading import rings_from_text
+from phaseid.rings.reading import rings_from_table
 from phaseid.rings.ringlist import RingList
+from phaseid.rings.table import RingTable, parse_table
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,6 +47,7 @@ class Measurement:
     (equal to the mean for a profile) and fitted background. `limit` is the smallest intensity that
     would have been found at the median background. `halos` are positions of broad rings of
     amorphous matter. `masked` is the share of the image left out. `metadata` goes to the list.
+    `disc` is the image about its centre, None for a profile.
     """
 
     source: str
@@ -58,6 +61,7 @@ class Measurement:
     masked: float = 0.0
     remarks: tuple[str, ...] = ()
     metadata: Mapping[str, str] = field(default_factory=dict)
+    disc: Disc | None = None
 
     def ring_list_text(self) -> str:
         """The text of the ring list file, whole even where a probe or a constant is missing."""
@@ -86,6 +90,12 @@ class Measurement:
             lines.append(f"{ring.position:.5f},{ring.sigma:.5f},{level:.3f},{note}")
         return "\n".join(lines) + "\n"
 
+    def ring_table(self) -> RingTable:
+        """The cells of the ring list, with the picture of the image."""
+        table = parse_table(self.ring_list_text(), self.source)
+        table.disc = self.disc
+        return table
+
     def ring_list(
         self,
         *,
@@ -94,9 +104,8 @@ class Measurement:
         camera_constant: str | None = None,
     ) -> RingList:
         """The ring list; raises InputError where no probe or camera constant is known."""
-        return rings_from_text(
-            self.ring_list_text(),
-            source=self.source,
+        return rings_from_table(
+            self.ring_table(),
             probe=probe,
             scale_uncertainty=scale_uncertainty,
             camera_constant=camera_constant,
