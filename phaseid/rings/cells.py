@@ -16,6 +16,7 @@ NAN = float("nan")
 _NUMBER = r"[+-]?(?:\d+(?:[.,]\d*)?|[.,]\d+)(?:[eE][+-]?\d{1,3})?"
 _POSITION = re.compile(rf"({_NUMBER})\s*(?:\(\s*(\d{{1,4}})\s*\))?")
 _PERCENT = re.compile(rf"({_NUMBER})\s*(%)?")
+_LIMIT = re.compile(rf"({_NUMBER})\s*%?\s*(?:\(.*\))?")  # a remark may follow in brackets
 _GRADE_WORDS = {
     "very strong": "vs",
     "strong": "s",
@@ -102,6 +103,29 @@ def read_intensity(text: str) -> Intensity:
         raise Refused(f"intensity '{text.strip()}' is neither a number nor vs s m w vw{hint}")
     low, high = GRADES[grade]
     return Intensity(sqrt(low * high), low, high, grade)
+
+
+def read_unevenness(text: str, name: str) -> float:
+    """A relative scatter of the intensity along a ring, zero or above; NaN where absent."""
+    plain = _plain(text)
+    if not plain or plain in ("-", "?"):
+        return NAN
+    match = _PERCENT.fullmatch(plain)
+    if match is None:
+        raise Refused(f"{name} '{text.strip()}' is not a number")
+    value = _float(match[1]) * (0.01 if match[2] else 1.0)
+    if value < 0:
+        raise Refused(f"{name} is negative ({match[1]})")
+    return value
+
+
+def read_limit(text: str, factor: float) -> float:
+    """A detection limit times `factor`, which puts the strongest ring at 100."""
+    match = _LIMIT.fullmatch(_plain(text))
+    limit = factor * _float(match[1]) if match else NAN
+    if not 0 < limit < 100:
+        raise Refused(f"detection limit '{text}' is no intensity below that of the strongest ring")
+    return limit
 
 
 def _plain(text: str) -> str:

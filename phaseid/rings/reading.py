@@ -19,8 +19,10 @@ from phaseid.rings.cells import (
     Position,
     Refused,
     read_intensity,
+    read_limit,
     read_position,
     read_sigma,
+    read_unevenness,
 )
 from phaseid.rings.columns import COLUMNS, Column, Floats
 from phaseid.rings.plausibility import slips
@@ -147,7 +149,7 @@ def rings_from_table(
     remarks = [*table.remarks]
 
     cells, d_A = _usable(table, the_probe, 1.0 if constant is None else constant.value)
-    positions, sigmas, levels = zip(*cells, strict=True)
+    positions, sigmas, levels, uneven = zip(*cells, strict=True)
     position = np.array([cell.value for cell in positions], dtype=np.float64)
     slope = column.slope_A(position, d_A, the_probe.wavelength_A)
     stated = np.array(sigmas, dtype=np.float64)
@@ -159,7 +161,8 @@ def rings_from_table(
         stated = np.where(missing, default, stated)
         which = "each ring" if missing.all() else f"{missing.sum()} of {len(missing)} rings"
         remarks.append(f"Sigma not stated for {which}: {words} assumed, rounding added.")
-    intensity, interval = _relative(levels, remarks)
+    intensity, interval, factor = _relative(levels, remarks)
+    spottiness, arcs = (np.array(column, dtype=np.float64) for column in zip(*uneven, strict=True))
     title, _ = table.keys.get("title", ("", None))
     rings = RingList(
         title=title or Path(table.source).stem or "rings",
@@ -177,6 +180,9 @@ def rings_from_table(
         source=table.source,
         metadata=dict(table.metadata),
         camera_constant=constant,
+        detection_limit=_detection_limit(table, factor),
+        spottiness=None if np.isnan(spottiness).all() else spottiness,
+        arcs=None if np.isnan(arcs).all() else arcs,
         disc=table.disc,
     )
     found = tuple(slips(rings, [row.where for row in table.rows]))
@@ -221,6 +227,20 @@ def _scale(
             raise _located(error, table, line) from None
     relative = None if constant is None else constant.relative_sigma
     return None if relative is None else check_relative(relative)
+
+
+def _detection_limit(table: RingTable, factor: float) -> float | None:
+    """The file's limit on the scale on which the strongest is 100, None where it states none."""
+    if "detection limit" not in table.keys:
+        return None
+    text, line = table.keys["detection limit"]
+    try:
+        return read_limit(text, factor)
+    except Refused as reason:
+        remedy = (
+            "Give the weakest intensity that would have been seen, on the scale of 'intensity'."
+        )
+        raise InputError(str(reason), path=table.source or None, line=line, remedy=remedy) from None
 
 
 def _probe(table: RingTable, given: str | Probe | None, scale: float | None) -> Probe:
@@ -275,8 +295,11 @@ def _check_convertible(table: RingTable, probe: Probe, constant: CameraConstant 
 
 def _usable(
     table: RingTable, probe: Probe, constant: float
-) -> tuple[list[tuple[Position, float, Intensity]], Floats]:
-    """Position, sigma, intensity and spacing (Å) of every row; all bad rows refused together."""
+) -> tuple[list[tuple[Position, float, Intensity, tuple[float, float]]], Floats]:
+    """Position, sigma, intensity, (spottiness, arcs) and spacing (Å) of every row.
+
+    All bad rows are refused together.
+    """
     cells, spacings, problems = [], [], []
     for row in table.rows:
         if row.defect:
@@ -286,11 +309,13 @@ def _usable(
             position = read_position(row.position, table.column.name)
             sigma = read_sigma(row.sigma, position.value)
             level = read_intensity(row.intensity)
+            spottiness = read_unevenness(row.spottiness, "spottiness")
+            uneven = spottiness, read_unevenness(row.arcs, "arcs")
             spacings.append(_spacing(table.column, position.value, probe, constant))
         except Refused as reason:
             problems.append((row.where, str(reason)))
             continue
-        cells.append((position, position.sigma if isnan(sigma) else sigma, level))
+        cells.append((position, position.sigma if isnan(sigma) else sigma, level, uneven))
     refuse_rows(problems, table.source)
     return cells, np.array(spacings, dtype=np.float64)
 
@@ -319,17 +344,18 @@ def _default_reading(column: Column, probe: Probe, d_A: Floats) -> tuple[Floats,
     return np.maximum(angle * per_degree, SMALLEST_READING * d_A), f"{angle:g}° in 2θ"
 
 
-def _relative(levels: Sequence[Intensity], remarks: list[str]) -> tuple[Floats, Floats]:
-    """Intensities (m,), intervals (m, 2); numbers scaled so that their strongest is 100."""
+def _relative(levels: Sequence[Intensity], remarks: list[str]) -> tuple[Floats, Floats, float]:
+    """Intensities (m,), intervals (m, 2) and the factor that makes the strongest number 100."""
     value = np.array([level.value for level in levels], dtype=np.float64)
     interval = np.array([(level.low, level.high) for level in levels], dtype=np.float64)
     number = np.array([not level.grade for level in levels]) & ~np.isnan(value)
+    scale = 1.0
     if number.any():
-        scale = 100.0 / value[number].max()
+        scale = float(100.0 / value[number].max())
         value[number] *= scale
         interval[number] *= scale
     if number.any() and any(level.grade for level in levels):
         remarks.append(
             "Numbers and grades are mixed: the strongest number was taken as 100 beside the grades."
         )
-    return value, interval
+    return value, interval, scale

@@ -43,8 +43,11 @@ class RingList:
     `remarks` are sentences to show with the answer (defaults applied, likely slips); `slips` those
     among them that make the whole pattern doubtful, such as a wrong unit.
     `metadata` are all keys of the file as written, known or not; `camera_constant` is that of the
-    file where it states one. `disc` is a picture of the image on which the rings were measured,
-    None for any list that was read from a file.
+    file where it states one. `detection_limit` is the weakest intensity that would have been seen,
+    on the scale of `intensity`, None where not stated. `spottiness` (m,) is the relative one-sigma
+    scatter of the intensity along each ring beyond counting noise, `arcs` (m,) that part of it
+    which changes smoothly, as in a textured specimen; NaN where not stated, None where for no ring.
+    `disc` is a picture of the image on which the rings were measured, None for a list from a file.
     """
 
     title: str
@@ -64,6 +67,9 @@ class RingList:
     slips: tuple[str, ...] = ()
     metadata: Mapping[str, str] = field(default_factory=dict)
     camera_constant: CameraConstant | None = None
+    detection_limit: float | None = None
+    spottiness: NDArray[np.float64] | None = None
+    arcs: NDArray[np.float64] | None = None
     disc: Disc | None = None
 
     def __len__(self) -> int:

@@ -20,8 +20,8 @@ from phaseid.rings.columns import COLUMNS, Column
 if TYPE_CHECKING:
     from phaseid.rings.measuring.disc import Disc
 
-KNOWN_KEYS = ("title", "probe", "scale uncertainty", "camera constant")
-OPTIONAL_COLUMNS = ("sigma", "intensity", "note")
+KNOWN_KEYS = ("title", "probe", "scale uncertainty", "camera constant", "detection limit")
+OPTIONAL_COLUMNS = ("sigma", "intensity", "spottiness", "arcs", "note")
 MAX_BYTES = 2_000_000
 MAX_RINGS = 2000
 MAX_LINE = 5000
@@ -52,6 +52,8 @@ class Row:
     position: str
     sigma: str = ""
     intensity: str = ""
+    spottiness: str = ""
+    arcs: str = ""
     note: str = ""
     defect: str = ""
 
@@ -162,6 +164,8 @@ def parse_table(text: str, source: str) -> RingTable:
                 position=by_name.get(position, ""),
                 sigma=by_name.get("sigma", ""),
                 intensity=by_name.get("intensity", ""),
+                spottiness=by_name.get("spottiness", ""),
+                arcs=by_name.get("arcs", ""),
                 note=by_name.get("note", ""),
                 defect=_TOO_MANY.format(len(cells), len(columns)) if extra else "",
             )
@@ -269,7 +273,9 @@ def _columns(names: list[str], source: str, line: int, remarks: list[str]) -> li
                 "the header line is missing, numbers come first",
                 "Put a line such as 'd_A,intensity' above them.",
             )
-        if re.match(r"(title|probe|scale uncertainty|camera constant)\s*:", names[0].lower()):
+        if re.match(
+            r"(title|probe|scale uncertainty|camera constant|detection limit)\s*:", names[0].lower()
+        ):
             raise refuse(
                 f"'{names[0]}' stands where the header should be",
                 "Begin metadata lines with '#'.",

@@ -25,6 +25,8 @@ def rings_to_text(rings: RingList) -> str:
     lines.append(f"# scale uncertainty: {plain_number(rings.probe.scale_sigma)}")
     if rings.camera_constant is not None:
         lines.append(f"# camera constant: {rings.camera_constant}")
+    if rings.detection_limit is not None:
+        lines.append(f"# detection limit: {plain_number(rings.detection_limit)}")
     known = {*KNOWN_KEYS}
     for key, value in rings.metadata.items():
         if " ".join(key.replace("_", " ").replace("-", " ").lower().split()) not in known:
@@ -32,7 +34,9 @@ def rings_to_text(rings: RingList) -> str:
     has_intensity = not bool(np.isnan(rings.intensity).all())
     has_note = any(rings.notes)
     header = [rings.position_column, "sigma"]
-    header += ["intensity"] * has_intensity + ["note"] * has_note
+    uneven = {"spottiness": rings.spottiness, "arcs": rings.arcs}
+    given = {name: values for name, values in uneven.items() if values is not None}
+    header += ["intensity"] * has_intensity + [*given] + ["note"] * has_note
     stream = io.StringIO()
     writer = csv.writer(stream, lineterminator="\n")
     writer.writerow(header)
@@ -41,6 +45,7 @@ def rings_to_text(rings: RingList) -> str:
         if has_intensity:
             level = rings.intensity[i]
             row.append(rings.grades[i] or ("" if np.isnan(level) else plain_number(level)))
+        row += ["" if np.isnan(v[i]) else plain_number(v[i]) for v in given.values()]
         if has_note:
             row.append(_one_line(rings.notes[i]))
         writer.writerow(row)

@@ -7,6 +7,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from phaseid.errors import InputError
 from phaseid.probes import parse_probe
 from phaseid.rings import (
     GRADES,
@@ -38,6 +39,10 @@ def _same(a: RingList, b: RingList) -> None:
         assert getattr(a, name) == pytest.approx(getattr(b, name), rel=1e-15, nan_ok=True), name
     assert (a.title, a.position_column, a.grades) == (b.title, b.position_column, b.grades)
     assert (a.notes, a.camera_constant) == (b.notes, b.camera_constant)
+    for name in ("detection_limit", "spottiness", "arcs"):
+        one, other = getattr(a, name), getattr(b, name)
+        assert (one is None) == (other is None)
+        assert one is None or one == pytest.approx(other, rel=1e-15, nan_ok=True)
     assert a.probe.wavelength_A == b.probe.wavelength_A
     assert a.probe.scale_sigma == b.probe.scale_sigma
 
@@ -278,3 +283,39 @@ def test_unknown_metadata_survives_writing() -> None:
     text = rings_to_text(rings_from_text(FILM))
     assert "# operator's remark: slightly out of focus" in text
     assert text.count("# probe:") == 1
+
+
+MEASURED = """\
+# probe: electron 200 kV
+# detection limit: 0.6
+d_A,sigma,intensity,spottiness,arcs,note
+2.338,0.004,50,0.12,0,
+2.025,0.004,25,80 %,0.4,textured
+1.432,0.003,,,,
+"""
+
+
+def test_what_measuring_adds_is_carried() -> None:
+    rings = rings_from_text(MEASURED)
+    assert rings.detection_limit == pytest.approx(1.2)  # with intensity: strongest = 100
+    assert rings.spottiness == pytest.approx([0.12, 0.8, np.nan], nan_ok=True)
+    assert rings.arcs == pytest.approx([0.0, 0.4, np.nan], nan_ok=True)
+    _same(rings, rings_from_text(rings_to_text(rings)))
+
+
+def test_a_list_without_them_states_nothing() -> None:
+    rings = rings_from_text("# probe: electron 200 kV\nd_A,intensity\n2.3,100\n")
+    assert rings.detection_limit is rings.spottiness is rings.arcs is None
+
+
+@pytest.mark.parametrize("limit", ["-1", "0", "weak", "60", "nan"])
+def test_a_limit_that_is_none_is_refused(limit: str) -> None:
+    with pytest.raises(InputError, match="detection limit") as error:
+        rings_from_text(MEASURED.replace("0.6", limit))
+    assert error.value.line == 2
+
+
+@pytest.mark.parametrize("cell", ["-0.1", "some"])
+def test_an_unevenness_that_is_none_is_refused(cell: str) -> None:
+    with pytest.raises(InputError, match="spottiness"):
+        rings_from_text(MEASURED.replace("0.12", cell))
