@@ -1,4 +1,4 @@
-"""A picture as a short list of shapes, drawn once; SVG and matplotlib each show the same list.
+"""A picture as a short list of shapes, drawn once; SVG, PNG and PDF each show the same list.
 
 Coordinates are picture units (a CSS pixel, 1/100 inch on paper), x to the right, y downward. A
 shape carries words for what it is ("phase1", "leftover"), never a colour: `picture_style` gives

@@ -52,9 +52,13 @@ def picture_bytes(answer: Identification, suffix: str, *, axis: AxisName | None 
         from phaseid.reports.picture_svg import svg_file
 
         return svg_file(picture).encode()
-    from phaseid.reports.picture_paper import paper
+    if suffix == ".png":
+        from phaseid.reports.picture_pixels import png
 
-    return paper(picture, "png" if suffix == ".png" else "pdf")
+        return png(picture)
+    from phaseid.reports.picture_paper import pdf
+
+    return pdf(picture)
 
 
 def write_picture(

@@ -1,4 +1,4 @@
-"""A picture as PNG or PDF, drawn with matplotlib without a screen."""
+"""A picture as PDF, drawn with matplotlib without a screen."""
 
 from __future__ import annotations
 
@@ -15,7 +15,6 @@ if TYPE_CHECKING:
 
 UNITS_PER_INCH = 100.0
 POINTS = 72.0 / UNITS_PER_INCH
-PNG_DPI = 200
 _SIDE: dict[str, Literal["left", "center", "right"]] = {
     "start": "left",
     "middle": "center",
@@ -23,17 +22,17 @@ _SIDE: dict[str, Literal["left", "center", "right"]] = {
 }
 
 
-def paper(picture: Picture, kind: Literal["png", "pdf"]) -> bytes:
-    """The bytes of a PNG (200 dots per inch) or PDF file; letters in a PDF stay letters."""
+def pdf(picture: Picture) -> bytes:
+    """The bytes of a PDF file; letters stay letters."""
     from matplotlib import rc_context
-    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.backends.backend_pdf import FigureCanvasPdf
     from matplotlib.figure import Figure
 
     figure = Figure(
         figsize=(picture.width / UNITS_PER_INCH, picture.height / UNITS_PER_INCH),
         facecolor=LIGHT.ground,
     )
-    FigureCanvasAgg(figure)
+    FigureCanvasPdf(figure)
     axes = figure.add_axes((0.0, 0.0, 1.0, 1.0))
     axes.set_xlim(0.0, picture.width)
     axes.set_ylim(picture.height, 0.0)
@@ -41,12 +40,10 @@ def paper(picture: Picture, kind: Literal["png", "pdf"]) -> bytes:
     for order, shape in enumerate(picture.shapes):
         _draw(axes, shape, order)
     stream = io.BytesIO()
-    metadata = {"Title": safe(picture.label)}
-    if kind == "pdf":
-        metadata |= {"CreationDate": None}  # type: ignore[dict-item]
+    metadata: dict[str, Any] = {"Title": safe(picture.label), "CreationDate": None}
     with warnings.catch_warnings(), rc_context({"pdf.fonttype": 42}):
         warnings.simplefilter("ignore")  # a letter the face lacks is shown as a box
-        figure.savefig(stream, format=kind, dpi=PNG_DPI, metadata=metadata)
+        figure.savefig(stream, format="pdf", metadata=metadata)
     return stream.getvalue()
 
 

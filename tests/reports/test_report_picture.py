@@ -7,6 +7,8 @@ import io
 import math
 import os
 import re
+import subprocess
+import sys
 import xml.etree.ElementTree as ET
 from dataclasses import replace
 from itertools import combinations
@@ -18,10 +20,11 @@ from numpy.typing import NDArray
 
 from phaseid.errors import InputError
 from phaseid.matching.identification import Identification
-from phaseid.reports.picture import Picture, Room, Text, tick_text, ticks
+from phaseid.reports.picture import Arc, Line, Picture, Room, Text, rectangle, tick_text, ticks
 from phaseid.reports.picture_axis import axis_for, axis_name
 from phaseid.reports.picture_disc import RADIUS, disc, disc_of_two
 from phaseid.reports.picture_file import write_picture
+from phaseid.reports.picture_pixels import DOTS, _face, png
 from phaseid.reports.picture_scene import scene
 from phaseid.reports.picture_sheet import probability_parts, sheet
 from phaseid.reports.picture_sticks import sticks
@@ -231,7 +234,68 @@ def test_a_picture_is_written_whole(answer: Identification, tmp_path: Path, suff
         with Image.open(io.BytesIO(data)) as image:
             image.load()
             assert image.width == pytest.approx(2 * sheet(answer).width, abs=2)
+            assert image.info["dpi"] == pytest.approx((200, 200), abs=0.1)
             assert len(image.convert("RGB").getcolors(1 << 24) or []) > 10
+
+
+def _grey(picture: Picture) -> NDArray[np.float64]:
+    from PIL import Image
+
+    with Image.open(io.BytesIO(png(picture))) as image:
+        return np.asarray(image.convert("L"), dtype=np.float64)
+
+
+def _ink(picture: Picture) -> float:
+    """Area (square units) that black shapes of a PNG cover."""
+    return float((255.0 - _grey(picture)).sum()) / 255.0 / DOTS**2
+
+
+# areas by Euclid: a stroke is length × width, a half ring π r × width
+def test_pixels_cover_what_the_shapes_do() -> None:
+    black = 255.0 / (255.0 - float(_grey(_one(rectangle(10, 10, 5, 5, "ink")))[24, 24]))
+    for shape, area in (
+        (Line(((20.0, 30.0), (80.0, 30.0)), "ink", 3.0), 180.0),
+        (Line(((20.0, 30.0), (20.0, 80.0)), "ink", 1.0), 50.0),
+        (Line(((10.0, 10.0), (70.0, 90.0)), "ink", 2.0), 200.0),
+        (Arc(50.0, 50.0, 40.0, 90.0, 270.0, "ink", 2.0), 80.0 * math.pi),
+    ):
+        assert black * _ink(_one(shape)) == pytest.approx(area, rel=0.06)
+    dotted = Line(((10.0, 50.0), (90.0, 50.0)), "missing ink", 2.0)
+    share = MISSING_DASH[0] / sum(MISSING_DASH)
+    assert black * _ink(_one(dotted)) == pytest.approx(160.0 * share, rel=0.1)
+
+
+def _one(shape: Line | Arc) -> Picture:
+    return Picture(100.0, 100.0, "a test", (shape,))
+
+
+def test_a_half_ring_lies_on_its_side() -> None:
+    left = _grey(_one(Arc(50.0, 50.0, 40.0, 90.0, 270.0, "ink", 4.0))) < 128
+    rows, columns = np.nonzero(left)
+    assert columns.max() <= 50 * DOTS + 1
+    assert columns.min() == pytest.approx((50 - 42) * DOTS, abs=1)
+    assert (rows.min(), rows.max()) == pytest.approx((8 * DOTS, 92 * DOTS), abs=1)
+
+
+def test_a_png_needs_no_matplotlib() -> None:
+    code = (
+        "import sys; from phaseid.reports.picture import Picture, Text;"
+        "from phaseid.reports.picture_pixels import png;"
+        "png(Picture(50.0, 50.0, 'a', (Text(5, 20, 'Å'),)));"
+        "sys.exit('matplotlib' in sys.modules)"
+    )
+    assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
+
+
+def test_the_face_has_the_letters_of_the_trade() -> None:
+    from PIL import ImageFont
+
+    face = _face(24, bold=False)
+    assert isinstance(face, ImageFont.FreeTypeFont)
+    lacking = face.getmask("\U0010ffff").getbbox(), bytes(face.getmask("\U0010ffff"))
+    for letter in "Åθλσαβγπ²³±×°µ…–’":
+        mask = face.getmask(letter)
+        assert (mask.getbbox(), bytes(mask)) != lacking, letter
 
 
 def test_a_picture_is_the_same_each_time(answer: Identification, tmp_path: Path) -> None:
