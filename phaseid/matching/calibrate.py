@@ -18,6 +18,7 @@ from phaseid.rings import CameraConstant, RingList, RingTable, rings_from_table
 from phaseid.rings.calibration import Fit, Ints, lay
 from phaseid.rings.calibration_record import CalibrationRecord, today_text
 from phaseid.rings.columns import COLUMNS
+from phaseid.rings.distortion import between, corrected_ellipse, stated_direction
 
 GUESSED_PROBE = "electron 200 kV"
 _ACROSS_SD = 0.03
@@ -53,12 +54,17 @@ class MissingLine:
 
 @dataclass(frozen=True, slots=True)
 class Ellipse:
-    """Axes of an elliptical distortion: long over short, and which direction is the long one."""
+    """Axes of an elliptical distortion: long over short, and the direction of the long one.
+
+    `long_axis` names that of two directions at right angles, `along` and `across` are the constants
+    in them; None where an image was measured, whose radii are those of the mean circle.
+    """
 
     ratio: Value
-    long_axis: Literal["along", "across"]
-    along: Value
-    across: Value
+    angle_deg: float
+    long_axis: Literal["along", "across"] | None = None
+    along: Value | None = None
+    across: Value | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -128,8 +134,10 @@ def calibrate(
         constant = Value(value, value * sigma)
         if across is not None:
             ellipse, constant = _across(across, plate, standard, fit, constant)
-            if abs(ellipse.ratio.value - 1.0) < 2.0 * ellipse.ratio.sigma:
+            if not _seen(ellipse):
                 remarks.append("The two directions agree within two sigma: no ellipse is seen.")
+        elif (own := corrected_ellipse(table.metadata)) is not None:
+            ellipse = Ellipse(Value(own.ratio, own.ratio_sigma), own.long_axis_deg)
         length, pixel = _lengths(plate, constant, camera_length_mm)
         if length is not None and camera_length_mm is not None and pixel is None:
             found = length / camera_length_mm
@@ -171,6 +179,7 @@ def record(result: Calibration, name: str) -> CalibrationRecord:
     column = COLUMNS[result.rings.position_column]
     constant = result.camera_constant
     wavelength = result.wavelength_A
+    ellipse = result.ellipse if result.ellipse and _seen(result.ellipse) else None
     return CalibrationRecord(
         name=name,
         created=today_text(),
@@ -187,7 +196,14 @@ def record(result: Calibration, name: str) -> CalibrationRecord:
         factor=result.factor.value,
         zero_shift_deg=result.zero_shift_deg or 0.0,
         rings=len(result.assignments),
+        ellipse_ratio=1.0 if ellipse is None else ellipse.ratio.value,
+        ellipse_ratio_sigma=0.0 if ellipse is None else ellipse.ratio.sigma,
+        long_axis_deg=0.0 if ellipse is None else ellipse.angle_deg,
     )
+
+
+def _seen(ellipse: Ellipse) -> bool:
+    return ellipse.ratio.value - 1.0 > 2.0 * ellipse.ratio.sigma
 
 
 def _across(
@@ -211,11 +227,13 @@ def _across(
         )
     common = (along.sigma / along.value) ** 2 - fit.sigma**2
     ratio_sigma = hypot(fit.sigma, second.sigma)
-    ratio = exp(abs(second.shift))
     across = along.value * exp(second.shift)
+    direction = stated_direction(plate.rings.metadata, plate.rings.source) or 0.0
+    axes = between(along.value, across, ratio_sigma, direction)
     mean = along.value * exp(second.shift / 2)
     ellipse = Ellipse(
-        ratio=Value(ratio, ratio * ratio_sigma),
+        ratio=Value(axes.ratio, axes.ratio_sigma),
+        angle_deg=axes.long_axis_deg,
         long_axis="along" if second.shift < 0 else "across",
         along=along,
         across=Value(across, across * sqrt(second.sigma**2 + common)),

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from phaseid.matching.calibrate import Calibration, Value
+from phaseid.matching.calibrate import Calibration, Ellipse, Value
 from phaseid.reports.json import CELL_KEYS, phase_dict, probe_dict
 from phaseid.reports.plain import (
     Column,
@@ -58,6 +58,7 @@ def calibration_dict(result: Calibration, saved: str | None = None) -> dict[str,
         else {
             "ratio": ellipse.ratio.value,
             "ratio_sigma": ellipse.ratio.sigma,
+            "angle_deg": ellipse.angle_deg,
             "long_axis": ellipse.long_axis,
             "along": _value(ellipse.along),
             "across": _value(ellipse.across),
@@ -147,10 +148,16 @@ def _further(result: Calibration) -> list[str]:
     if result.ellipse is not None:
         ellipse = result.ellipse
         found.append(
-            f"Ellipse: axes {value_text(ellipse.ratio)} to 1, the long one {ellipse.long_axis}; "
+            f"Ellipse: axes {value_text(ellipse.ratio)} to 1, the long one "
+            f"{_long_axis(ellipse)}; "
             "the constant is that of the mean circle"
         )
     return found
+
+
+def _long_axis(ellipse: Ellipse) -> str:
+    angle = f"{ellipse.angle_deg:.3g}°"
+    return f"at {angle}" if ellipse.long_axis is None else f"{ellipse.long_axis} ({angle})"
 
 
 def _rows(result: Calibration) -> list[list[str]]:

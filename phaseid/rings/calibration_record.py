@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import os
 import re
-from dataclasses import asdict, dataclass, fields, replace
+from dataclasses import MISSING, asdict, dataclass, fields, replace
 from datetime import date, datetime
 from difflib import get_close_matches
 from math import hypot, log
@@ -18,6 +18,7 @@ from phaseid.errors import InputError
 from phaseid.probes import Probe, parse_probe
 from phaseid.rings.camera import CameraConstant
 from phaseid.rings.columns import COLUMNS
+from phaseid.rings.distortion import Distortion, corrected_ellipse, stated_direction
 from phaseid.rings.reading import rings_from_table
 from phaseid.rings.ringlist import RingList
 from phaseid.rings.table import RingTable
@@ -40,6 +41,7 @@ class CalibrationRecord:
     wavelength, calibrated where `quantity` is "two_theta". `camera_constant` (Å times `plate_unit`)
     for radii; `factor` multiplies measured d otherwise; `relative_sigma` is the one-sigma of
     either; `zero_shift_deg` measured − true 2θ. `standard` and `cell_source` say what it rests on.
+    `ellipse_ratio` is 1 where no ellipse was seen; the constant is that of the mean circle.
     """
 
     name: str
@@ -55,6 +57,16 @@ class CalibrationRecord:
     factor: float = 1.0
     zero_shift_deg: float = 0.0
     rings: int = 0
+    ellipse_ratio: float = 1.0
+    ellipse_ratio_sigma: float = 0.0
+    long_axis_deg: float = 0.0
+
+    @property
+    def ellipse(self) -> Distortion | None:
+        """The ellipse that the instrument makes of circles, None where none was seen."""
+        if self.ellipse_ratio == 1.0:
+            return None
+        return Distortion(self.ellipse_ratio, self.ellipse_ratio_sigma, self.long_axis_deg)
 
     def describe(self) -> str:
         """In a few words: "camera constant 25.084 Å mm ± 0.09 %, Au, 2024-05-01"."""
@@ -64,6 +76,8 @@ class CalibrationRecord:
             what = f"wavelength {self.wavelength_A:.6g} Å"
         else:
             what = f"measured d × {self.factor:.6g}"
+        if self.ellipse is not None:
+            what += f", axes {self.ellipse_ratio:.4f} to 1, the long one at {self.long_axis_deg:g}°"
         return (
             f"{what} ± {100 * self.relative_sigma:.2g} %, {self.standard}, {self.probe}, "
             f"{self.created}"
@@ -126,6 +140,9 @@ class CalibrationRecord:
                 f"{rings.probe.label}: the scale is taken as uncertain by "
                 f"{100 * rings.probe.scale_sigma:.2g} %. Calibrate at this voltage."
             )
+        if kind == "radius" and self.ellipse is not None:
+            rings, said = _rounded(rings, self.ellipse, widen=scale_uncertainty is None)
+            remarks.append(said)
         age = ((today or date.today()) - date.fromisoformat(self.created)).days
         if age > OLD_DAYS:
             remarks.append(
@@ -142,6 +159,31 @@ class CalibrationRecord:
         return replace(
             rings, probe=probe, d_A=d_A, sigma_A=np.maximum(rings.position_sigma * slope, 1e-9)
         )
+
+
+def _rounded(rings: RingList, ellipse: Distortion, *, widen: bool) -> tuple[RingList, str]:
+    """Spacings by the mean circle, the scale as uncertain as the ellipse leaves it; and a remark.
+
+    Positions stay as measured.
+    """
+    if corrected_ellipse(rings.metadata) is not None:
+        return rings, "The list's own ellipse was measured; that of the calibration is not used."
+    direction = stated_direction(rings.metadata, rings.source)
+    spread = ellipse.sigma(direction)
+    if widen:
+        wider = min(hypot(rings.probe.scale_sigma, spread), _WIDEST)
+        rings = replace(rings, probe=rings.probe.with_scale(wider))
+    if direction is None:
+        return rings, (
+            f"The direction of the radii is not stated: the ellipse adds {100 * spread:.2g} % to "
+            "the scale's uncertainty. A line '# direction: 30' (degrees) lets it be corrected."
+        )
+    stretch = ellipse.stretch(direction)
+    rings = replace(rings, d_A=rings.d_A * stretch, sigma_A=rings.sigma_A * stretch)
+    return rings, (
+        f"Radii measured at {direction:g}° were divided by {stretch:.4f}, by the ellipse of the "
+        "calibration."
+    )
 
 
 def save_calibration(record: CalibrationRecord, folder: Path) -> Path:
@@ -189,6 +231,8 @@ def load_calibration(name: str, folder: Path) -> CalibrationRecord:
         raise _damaged(path) from None
     if not (record.relative_sigma > 0 and record.wavelength_A > 0 and record.factor > 0):
         raise _damaged(path)
+    if not (record.ellipse_ratio >= 1 and record.ellipse_ratio_sigma >= 0):
+        raise _damaged(path)
     return record
 
 
@@ -218,10 +262,11 @@ def _read(path: Path) -> list[dict[str, Any]]:
     except (OSError, ValueError, KeyError, TypeError):
         raise _damaged(path) from None
     names = {field.name for field in fields(CalibrationRecord)}
+    needed = {field.name for field in fields(CalibrationRecord) if field.default is MISSING}
     if (
         not isinstance(records, list)
         or held.get("schema") != SCHEMA
-        or not all(isinstance(one, dict) and names == set(one) for one in records)
+        or not all(isinstance(one, dict) and needed <= set(one) <= names for one in records)
     ):
         raise _damaged(path)
     return records

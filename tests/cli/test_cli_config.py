@@ -68,9 +68,9 @@ def test_a_default_probe_serves_lists_that_state_none(phaseid, config_file: Path
 def test_a_default_calibration_serves_radii_alone(phaseid, config_file: Path) -> None:
     gold = ["10.62", "12.26", "17.34", "20.33", "21.24"]  # Au at 25 Å mm
     unit = ("--unit", "radius_mm", "--probe", "electron 200 kV")
-    phaseid("calibrate", *gold, *unit, "--standard", "Au", "--save", "cm200")
-    assert phaseid("config", "calibration", "cm200").code == 0
-    assert "cm200" in phaseid("config").out
+    phaseid("calibrate", *gold, *unit, "--standard", "Au", "--save", "plate80")
+    assert phaseid("config", "calibration", "plate80").code == 0
+    assert "plate80" in phaseid("config").out
     value = phaseid("identify", *RADII, *unit, "--only", "Al", "--json").json("identification-1")
     assert value["patterns"][0]["rings"][0]["d_A"] == pytest.approx(2.338, rel=2e-3)
     stated = ("--camera-constant", "26 +- 0.1 A mm")

@@ -101,28 +101,28 @@ def test_a_negative_radius_is_told_by_its_line(phaseid, tmp_path: Path) -> None:
 
 
 def test_a_saved_calibration_serves_later_lists(phaseid, gold: str, tmp_path: Path) -> None:
-    saved = phaseid("calibrate", gold, "--standard", "Au", "--save", "cm200", "--json")
-    assert saved.json("calibration-1")["saved"] == "cm200"
-    assert "--calibration cm200" in saved.err
+    saved = phaseid("calibrate", gold, "--standard", "Au", "--save", "plate80", "--json")
+    assert saved.json("calibration-1")["saved"] == "plate80"
+    assert "--calibration plate80" in saved.err
     plate = tmp_path / "plate.csv"
     radii = [f"{25.0 * math.sqrt(sum(i * i for i in hkl)) / 4.0496:.3f}" for hkl in HKL]
     plate.write_text(HEAD + "".join(f"{r},0.02\n" for r in radii), encoding="utf-8")
-    words = ("--calibration", "cm200", "--only", "Al,Au", "--json")
+    words = ("--calibration", "plate80", "--only", "Al,Au", "--json")
     answer = phaseid("identify", str(plate), *words).json("identification-1")
     pattern = answer["patterns"][0]
     assert pattern["rings"][0]["d_A"] == pytest.approx(4.0496 / math.sqrt(3), rel=5e-4)
     assert pattern["probe"]["scale_sigma"] < 1e-3
-    assert any("cm200" in remark for remark in pattern["remarks"])
+    assert any("plate80" in remark for remark in pattern["remarks"])
     assert answer["hypotheses"][0]["phases"][0]["formula"] == "Al"
-    held = phaseid("screen", str(plate), "--expect", "Al", "--calibration", "cm200", "--json")
+    held = phaseid("screen", str(plate), "--expect", "Al", "--calibration", "plate80", "--json")
     assert held.json("screening-1")["verdict"] == "clean"
 
 
 def test_another_voltage_is_warned_about(phaseid, gold: str, tmp_path: Path) -> None:
-    phaseid("calibrate", gold, "--standard", "Au", "--save", "cm200")
+    phaseid("calibrate", gold, "--standard", "Au", "--save", "plate80")
     plate = tmp_path / "plate.csv"
     plate.write_text(Path(gold).read_text("utf-8").replace("200 kV", "120 kV"), "utf-8")
-    done = phaseid("identify", str(plate), "--calibration", "cm200", "--only", "Au")
+    done = phaseid("identify", str(plate), "--calibration", "plate80", "--only", "Au")
     assert "Warning" in done.err
     assert "120 kV" in done.err
 

@@ -22,6 +22,10 @@ PUBLISHED = {
         "patterns"
     ]
 }
+STANDARD_RINGS = {
+    table["formula"]: table
+    for table in json.loads((REFERENCE / "standard_rings.json").read_text("utf-8"))["tables"]
+}
 CERTIFIED = json.loads((REFERENCE / "certified_cells.json").read_text("utf-8"))["rows"]
 HANDBOOK = json.loads((REFERENCE / "handbook_cells.json").read_text("utf-8"))["rows"]
 ELECTRONS = "electron 200 kV"
@@ -132,6 +136,24 @@ def test_printed_ring_tables_give_the_camera_constant(formula: str) -> None:
             assert sorted(map(abs, ring.hkl)) == sorted(map(abs, printed[ring.ring]))
 
 
+@pytest.mark.parametrize("left_out", [None, 0, 2])
+@pytest.mark.parametrize("formula", ["Au", "Pt", "LaB6", "TlCl"])
+def test_tables_of_cubic_standards_give_the_constant(formula: str, left_out: int | None) -> None:
+    """NBS tables (from memory), also with a ring missing, against the cells of handbooks."""
+    lines = [line for k, line in enumerate(STANDARD_RINGS[formula]["lines"]) if k != left_out]
+    radii = [f"{25.0 / d:.4f}" for d, *_ in lines]
+    result = calibrate(_table(radii, "0.02%"), _standard(formula), probe=ELECTRONS)
+    constant = result.camera_constant
+    assert constant is not None
+    assert abs(constant.value - 25.0) < 3 * constant.sigma
+    # compilations of TlCl disagree by 0.2 %, and its uncertainty says so
+    assert constant.sigma / constant.value < (2e-3 if formula == "TlCl" else 5e-4)
+    assert result.rejected == ()
+    assert [sum(i * i for i in ring.hkl) for ring in result.assignments] == [
+        sum(i * i for i in hkl) for _, *hkl in lines
+    ]
+
+
 def test_radii_need_no_camera_constant() -> None:
     result = _gold()
     assert result.camera_constant is not None
@@ -197,6 +219,37 @@ def test_a_round_pattern_has_no_ellipse() -> None:
     same = _table(_radii(4.0782, 25.0))
     result = calibrate(same, _standard("Au"), probe=ELECTRONS, across=same)
     assert any("no ellipse" in remark for remark in result.remarks)
+    assert record(result, "round").ellipse is None
+
+
+def test_a_saved_ellipse_brings_both_directions_to_one_spacing() -> None:
+    """Radii of gold 1 % longer at 120° than at 30°: later lists of either give the same d."""
+    along, across = (_radii(4.0782, c) for c in (25.0, 25.25))
+    text = "# probe: electron 200 kV\n# direction: {}\nradius_mm,sigma\n"
+    first = text.format(30) + "".join(f"{r},0.02\n" for r in along)
+    result = calibrate(parse_table(first, "a.csv"), _standard("Au"), across=_table(across))
+    kept = record(result, "oval")
+    assert kept.long_axis_deg == pytest.approx(120.0)
+    for angle, radii in ((30, along), (120, across)):
+        later = text.format(angle) + "".join(f"{r},0.02\n" for r in radii)
+        rings = kept.apply(parse_table(later, "later.csv"))
+        edges = rings.d_A * [math.sqrt(sum(i * i for i in h)) for h in FCC]
+        assert np.allclose(edges, 4.0782, rtol=4 * rings.probe.scale_sigma)
+
+
+def test_an_ellipse_measured_on_the_image_is_kept() -> None:
+    """`phaseid measure` writes the ellipse it took off its radii into the list."""
+    text = (
+        "# probe: electron 200 kV\n"
+        "# ellipse corrected: axes ratio 1.00812 +- 0.00010, long axis at 34.1 +- 0.2 degrees\n"
+        "radius_px,sigma\n"
+    ) + "".join(f"{r},0.2\n" for r in _radii(4.0782, 1000.0))
+    result = calibrate(parse_table(text, "plate.csv"), _standard("Au"))
+    assert result.ellipse is not None
+    assert result.camera_constant is not None
+    assert result.camera_constant.value == pytest.approx(1000.0, rel=3e-4)
+    kept = record(result, "plate")
+    assert (kept.ellipse_ratio, kept.long_axis_deg) == (1.00812, 34.1)
 
 
 def test_x_rays_on_a_flat_plate_follow_the_tangent() -> None:
@@ -270,7 +323,7 @@ def test_angles_without_a_probe_are_refused() -> None:
 
 def test_a_record_keeps_what_is_needed_later() -> None:
     result = _gold()
-    kept = record(result, "cm200")
+    kept = record(result, "plate80")
     assert kept.camera_constant == pytest.approx(25.0, rel=2e-4)
     assert kept.relative_sigma == pytest.approx(result.relative_sigma)
     assert (kept.standard, kept.quantity, kept.plate_unit) == ("Au", "radius", "mm")

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import json
+import math
 from dataclasses import replace
 from datetime import date
 from pathlib import Path
@@ -19,7 +21,7 @@ from phaseid.rings.calibration_record import (
 
 TODAY = date(2024, 5, 10)
 PLATE = CalibrationRecord(
-    name="cm200",
+    name="plate80",
     created="2024-05-01",
     standard="Au",
     cell_source="handbook",
@@ -48,7 +50,7 @@ def test_radii_are_read_with_the_constant_and_its_uncertainty() -> None:
     rings = PLATE.apply(parse_table(RADII, "r.csv"), today=TODAY)
     assert rings.d_A.tolist() == pytest.approx([2.5, 2.0])
     assert rings.probe.scale_sigma == pytest.approx(0.001)
-    assert any("cm200" in remark for remark in rings.remarks)
+    assert any("plate80" in remark for remark in rings.remarks)
     assert not any("Warning" in remark for remark in rings.remarks)
 
 
@@ -108,9 +110,9 @@ def test_a_calibration_of_another_kind_is_refused(record: CalibrationRecord, tex
 def test_the_newest_of_a_name_is_used_and_none_is_lost(tmp_path: Path) -> None:
     save_calibration(PLATE, tmp_path / "kept")
     path = save_calibration(replace(PLATE, camera_constant=26.0), tmp_path / "kept")
-    assert load_calibration("cm200", tmp_path / "kept").camera_constant == 26.0
+    assert load_calibration("plate80", tmp_path / "kept").camera_constant == 26.0
     assert "25.0" in path.read_text(encoding="utf-8")
-    assert calibration_names(tmp_path / "kept") == ["cm200"]
+    assert calibration_names(tmp_path / "kept") == ["plate80"]
 
 
 @pytest.mark.parametrize("name", ["", "../up", "a/b", ".hidden", "x" * 80])
@@ -122,7 +124,7 @@ def test_a_name_that_is_no_file_name_is_refused(name: str, tmp_path: Path) -> No
 
 def test_an_unknown_name_is_told_the_nearest(tmp_path: Path) -> None:
     save_calibration(PLATE, tmp_path)
-    with pytest.raises(InputError, match="cm200"):
+    with pytest.raises(InputError, match="plate80"):
         load_calibration("cm20", tmp_path)
     with pytest.raises(InputError, match="--save"):
         load_calibration("cm20", tmp_path / "empty")
@@ -139,10 +141,63 @@ def test_an_unknown_name_is_told_the_nearest(tmp_path: Path) -> None:
     ],
 )
 def test_a_damaged_record_is_told_and_left(text: str, tmp_path: Path) -> None:
-    path = tmp_path / "cm200.json"
+    path = tmp_path / "plate80.json"
     path.write_text(text, encoding="latin-1")
-    with pytest.raises(InputError, match=r"cm200\.json"):
-        load_calibration("cm200", tmp_path)
-    with pytest.raises(InputError, match=r"cm200\.json"):
+    with pytest.raises(InputError, match=r"plate80\.json"):
+        load_calibration("plate80", tmp_path)
+    with pytest.raises(InputError, match=r"plate80\.json"):
         save_calibration(PLATE, tmp_path)
     assert path.read_text(encoding="latin-1") == text
+
+
+OVAL = replace(PLATE, ellipse_ratio=1.02, ellipse_ratio_sigma=0.001, long_axis_deg=30.0)
+LONG, SHORT = math.sqrt(1.02), 1 / math.sqrt(1.02)
+
+
+@pytest.mark.parametrize(("direction", "stretch"), [("30", LONG), ("120 degrees", SHORT)])
+def test_the_ellipse_is_taken_off_radii_of_a_known_direction(
+    direction: str, stretch: float
+) -> None:
+    """Half-axes of an ellipse of the area of a unit circle are √ratio and 1/√ratio."""
+    text = f"# probe: electron 200 kV\n# direction: {direction}\nradius_mm\n{10 * stretch:.6f}\n"
+    rings = OVAL.apply(parse_table(text, "r.csv"), today=TODAY)
+    assert rings.d_A[0] == pytest.approx(2.5, rel=1e-6)
+    assert rings.probe.scale_sigma == pytest.approx(math.hypot(0.001, 0.001 / 1.02 / 2))
+    assert rings.position[0] == pytest.approx(10 * stretch, rel=1e-6)
+
+
+@pytest.mark.parametrize("turn", [0.0, 20.0, 45.0, 77.0, 110.0])
+def test_points_of_an_ellipse_lie_on_it(turn: float) -> None:
+    x, y = (OVAL.ellipse.stretch(30.0 + turn) * f(math.radians(turn)) for f in (math.cos, math.sin))
+    assert (x / LONG) ** 2 + (y / SHORT) ** 2 == pytest.approx(1.0)
+
+
+def test_an_unknown_direction_widens_the_scale_by_the_ellipse() -> None:
+    """The root mean square of ln stretch over all directions, by brute force."""
+    every = [math.log(OVAL.ellipse.stretch(angle)) for angle in range(180)]
+    spread = math.sqrt(sum(e * e for e in every) / 180)
+    rings = OVAL.apply(parse_table(RADII, "r.csv"), today=TODAY)
+    assert rings.d_A.tolist() == pytest.approx([2.5, 2.0])
+    assert rings.probe.scale_sigma == pytest.approx(math.hypot(0.001, spread), rel=0.02)
+    assert any("direction" in remark for remark in rings.remarks)
+
+
+def test_an_ellipse_measured_on_the_image_itself_is_enough() -> None:
+    own = "# ellipse corrected: axes ratio 1.01 +- 0.001, long axis at 3.0 +- 1.0 degrees\n"
+    rings = OVAL.apply(parse_table(own + RADII, "r.csv"), today=TODAY)
+    assert rings.d_A.tolist() == pytest.approx([2.5, 2.0])
+    assert rings.probe.scale_sigma == pytest.approx(0.001)
+
+
+def test_a_direction_that_is_none_is_told() -> None:
+    with pytest.raises(InputError, match="direction 'upward'"):
+        OVAL.apply(parse_table("# direction: upward\n" + RADII, "r.csv"), today=TODAY)
+
+
+def test_a_record_of_before_ellipses_is_still_read(tmp_path: Path) -> None:
+    path = save_calibration(PLATE, tmp_path)
+    held = json.loads(path.read_text("utf-8"))
+    for key in ("ellipse_ratio", "ellipse_ratio_sigma", "long_axis_deg"):
+        del held["records"][0][key]
+    path.write_text(json.dumps(held), encoding="utf-8")
+    assert load_calibration(PLATE.name, tmp_path) == PLATE
