@@ -15,6 +15,7 @@ if TYPE_CHECKING:
     from phaseid.library.phase import Phase
 
 SHOWN_REJECTS = 20
+MOST_JOBS = 60  # Windows waits for no more processes at a time
 
 app = typer.Typer(
     help="The structures that are searched: add your own, look them up.",
@@ -48,7 +49,19 @@ def add(
     jobs: Annotated[
         int | None,
         typer.Option(
-            "--jobs", metavar="N", min=1, help="Processes that share the work; default: as it pays."
+            "--jobs",
+            metavar="N",
+            min=1,
+            max=MOST_JOBS,
+            help="Processes that share the work; default: as it pays.",
+        ),
+    ] = None,
+    scheduler: Annotated[
+        str | None,
+        typer.Option(
+            "--scheduler",
+            metavar="ADDRESS",
+            help="Share the work with the Dask workers of a scheduler, such as tcp://HOST:8786.",
         ),
     ] = None,
     as_json: Json = False,
@@ -61,14 +74,21 @@ def add(
     \b
     phaseid library add structures/ more.zip
     phaseid library add Al2O3.cif --library mine.sqlite
+    phaseid library add structures/ --scheduler tcp://192.0.2.1:8786
     """
     given = paths or []
     if not given and not starter:
         raise InputError(
             "nothing to add", remedy="Name CIF files, folders or archives, or give --starter."
         )
+    if scheduler is not None and jobs is not None:
+        raise InputError("--jobs and --scheduler are both given", remedy="Give one of them.")
     with _open_to_add(library) as opened:
-        tally = _add(opened, given, starter=starter, jobs=jobs)
+        try:
+            tally = _add(opened, given, starter=starter, jobs=jobs, scheduler=scheduler)
+        except KeyboardInterrupt:
+            say("Stopped. What was added is kept; the same command goes on from there.")
+            raise
     if as_json:
         from phaseid.reports.json import dumps
 
@@ -178,17 +198,23 @@ def _open_to_add(path: Path | None) -> Library:
     return Library.create(path)
 
 
-def _add(library: Library, paths: list[Path], *, starter: bool, jobs: int | None) -> ImportTally:
+def _add(
+    library: Library, paths: list[Path], *, starter: bool, jobs: int | None, scheduler: str | None
+) -> ImportTally:
     from phaseid.cli.progress import progress_bar
     from phaseid.library import ImportTally
     from phaseid.library.adding import suggested_workers
+    from phaseid.library.cluster import cluster
     from phaseid.library.starter import starter_crystals
 
     tally = ImportTally()
     with progress_bar("adding") as advance:
         if starter:
             tally += library.add_crystals(starter_crystals(), advance)
-        if paths:
+        if paths and scheduler is not None:
+            with cluster(scheduler) as (executor, workers):
+                tally += library.add(paths, advance, workers=workers, executor=executor)
+        elif paths:
             workers = jobs or suggested_workers(paths)
             tally += library.add(paths, advance, workers=workers)
     return tally

@@ -9,28 +9,26 @@ from __future__ import annotations
 
 import os
 import sqlite3
-from collections import deque
 from collections.abc import Callable, Iterable, Iterator
-from concurrent.futures import Future, ProcessPoolExecutor
-from itertools import islice
-from multiprocessing import get_context
+from concurrent.futures import Executor
+from contextlib import closing
 from pathlib import Path
-from typing import TypeVar
 
 from phaseid.crystal.crystal import Crystal
 from phaseid.library.entries import Entry, entry
 from phaseid.library.outcome import Outcome
+from phaseid.library.sharing import bundles, bytes_of, shared
 from phaseid.library.sources import Found, count_structure_files, read_all
 from phaseid.library.tally import ImportTally, Rejected
 from phaseid.library.writer import Writer
 
 Progress = Callable[[int, int | None], None]
-T = TypeVar("T")
 
-_BATCH = 500  # files a transaction
+_BATCH = 500  # files a transaction, at most
+_BATCH_BYTES = 64 << 20  # of files that need not be read again
+_BATCH_S = 5.0  # what a killed run loses, at most
 _MANY = 2000  # files from which on several processes pay
 _WORKERS_MAX = 8
-_CHUNK = 32  # files a message to a worker process
 
 
 def work(found: Found) -> Outcome:
@@ -83,13 +81,20 @@ def suggested_workers(paths: list[Path]) -> int:
 
 
 def add_paths(
-    conn: sqlite3.Connection, paths: list[Path], progress: Progress | None, *, workers: int
+    conn: sqlite3.Connection,
+    paths: list[Path],
+    progress: Progress | None,
+    *,
+    workers: int,
+    executor: Executor | None = None,
 ) -> ImportTally:
     """Add every structure file in `paths`; see `Library.add`."""
     writer = Writer(conn, work)
     total = None if progress is None else count_structure_files(paths)
     found = map(writer.marked, read_all(paths))
-    return _write(writer, _outcomes(found, workers), progress, total)
+    outcomes = shared(work, found, workers=workers, executor=executor)
+    with closing(outcomes):
+        return _write(writer, outcomes, progress, total)
 
 
 def add_crystals(
@@ -117,31 +122,10 @@ def _write(
             if progress is not None:
                 progress(done, total)
 
-    for batch in _batches(counted(), _BATCH):
+    for batch in bundles(counted(), _BATCH, _BATCH_BYTES, _bytes_held, _BATCH_S):
         writer.write(batch)
     return writer.tally
 
 
-def _outcomes(found: Iterator[Found], workers: int) -> Iterator[Outcome]:
-    """Yield what `work` makes of each file, in order, with at most a few chunks in flight."""
-    if workers <= 1:
-        yield from map(work, found)
-        return
-    flying: deque[Future[list[Outcome]]] = deque()
-    with ProcessPoolExecutor(workers, mp_context=get_context("spawn")) as pool:
-        for chunk in _batches(found, _CHUNK):
-            flying.append(pool.submit(_work_all, chunk))
-            if len(flying) > 2 * workers:
-                yield from flying.popleft().result()
-        while flying:
-            yield from flying.popleft().result()
-
-
-def _work_all(chunk: list[Found]) -> list[Outcome]:
-    return [work(found) for found in chunk]
-
-
-def _batches(items: Iterable[T], size: int) -> Iterator[list[T]]:
-    rest = iter(items)
-    while batch := list(islice(rest, size)):
-        yield batch
+def _bytes_held(outcome: Outcome) -> int:
+    return 0 if outcome.file is None else bytes_of(outcome.file)

@@ -17,6 +17,7 @@ from phaseid.library.phase import Phase
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
+    from concurrent.futures import Executor
 
     from phaseid.crystal.crystal import Crystal
     from phaseid.crystal.lines import Lines
@@ -176,19 +177,27 @@ class Library:
         return line_table(kind, rows)
 
     def add(
-        self, paths: Iterable[str | Path], progress: Progress | None = None, *, workers: int = 1
+        self,
+        paths: Iterable[str | Path],
+        progress: Progress | None = None,
+        *,
+        workers: int = 1,
+        executor: Executor | None = None,
     ) -> ImportTally:
         """Add the structures in CIF files, folders and archives.
 
         No single file stops the rest: what cannot be read is in the tally and among `rejects`, with
         the reason. Added before: nothing changes. A new version of an entry replaces the old one.
-        `workers` processes share the work; the result is the same. Raises LibraryError where the
-        library cannot be written.
+        `workers` processes share the work, or an `executor` of yours (of concurrent.futures, or a
+        cluster's), which gets 2 × `workers` chunks of files at a time and stays open; the result is
+        the same. Raises LibraryError where the library cannot be written, InputError where the
+        workers fail as a whole.
         """
         from phaseid.library.adding import add_paths
 
+        given = [Path(path) for path in paths]
         with self._writer() as conn:
-            return add_paths(conn, [Path(path) for path in paths], progress, workers=workers)
+            return add_paths(conn, given, progress, workers=workers, executor=executor)
 
     def add_crystals(
         self, crystals: Iterable[Crystal], progress: Progress | None = None
