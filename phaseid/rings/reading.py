@@ -184,6 +184,7 @@ def rings_from_table(
         spottiness=None if np.isnan(spottiness).all() else spottiness,
         arcs=None if np.isnan(arcs).all() else arcs,
         disc=table.disc,
+        curve=table.curve,
     )
     found = tuple(slips(rings, [row.where for row in table.rows]))
     return replace(rings, remarks=(*the_probe.remarks, *remarks, *found), slips=found)

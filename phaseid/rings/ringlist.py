@@ -48,6 +48,8 @@ class RingList:
     scatter of the intensity along each ring beyond counting noise, `arcs` (m,) that part of it
     which changes smoothly, as in a textured specimen; NaN where not stated, None where for no ring.
     `disc` is a picture of the image on which the rings were measured, None for a list from a file.
+    `curve` (k, 2) is the curve they were measured on, position in the unit of `position` and counts
+    above the background; None for a list from a file.
     """
 
     title: str
@@ -71,6 +73,7 @@ class RingList:
     spottiness: NDArray[np.float64] | None = None
     arcs: NDArray[np.float64] | None = None
     disc: Disc | None = None
+    curve: NDArray[np.float64] | None = None
 
     def __len__(self) -> int:
         return len(self.d_A)

@@ -18,6 +18,9 @@ from phaseid.errors import InputError
 from phaseid.rings.columns import COLUMNS, Column
 
 if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
     from phaseid.rings.measuring.disc import Disc
 
 KNOWN_KEYS = ("title", "probe", "scale uncertainty", "camera constant", "detection limit")
@@ -62,7 +65,8 @@ class Row:
 class RingTable:
     """A ring list taken apart; `metadata` has keys as spelt, `keys` the known ones with line.
 
-    `disc` is a picture of the image the rings were measured on, if they were just now.
+    `disc` is a picture of the image the rings were measured on, `curve` (k, 2) the curve (position
+    in the column's unit, counts above the background), if they were measured just now.
     """
 
     source: str
@@ -72,6 +76,7 @@ class RingTable:
     keys: dict[str, tuple[str, int | None]] = field(default_factory=dict)
     remarks: list[str] = field(default_factory=list)
     disc: Disc | None = None
+    curve: NDArray[np.float64] | None = None
 
 
 def read_text(path: str | Path) -> str:

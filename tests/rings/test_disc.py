@@ -75,3 +75,15 @@ def test_what_lies_outside_the_frame_is_not_seen() -> None:
     assert not disc.seen[round(disc.centre), 0]
     assert disc.seen[round(disc.centre), -1]
     assert not disc.grey[~disc.seen].any()
+
+
+def test_the_curve_goes_with_the_ring_list() -> None:
+    image = draw(SCENE).astype(np.float32)
+    found = measure_pixels(image, np.ones(image.shape, dtype=bool), source="drawn")
+    rings = found.ring_list(probe="electron 200 kV", camera_constant="980 A px")
+    assert rings.curve is not None
+    radius, counts = rings.curve.T
+    for ring, drawn, height in zip(rings.position, SCENE.radii, SCENE.heights, strict=True):
+        near = np.abs(radius - ring) < 10
+        assert radius[near][np.argmax(counts[near])] == pytest.approx(drawn, abs=1.5)
+        assert counts[near].max() == pytest.approx(height, rel=0.15)

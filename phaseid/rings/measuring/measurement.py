@@ -91,9 +91,11 @@ class Measurement:
         return "\n".join(lines) + "\n"
 
     def ring_table(self) -> RingTable:
-        """The cells of the ring list, with the picture of the image."""
+        """The cells of the ring list, with the picture of the image and the curve."""
         table = parse_table(self.ring_list_text(), self.source)
         table.disc = self.disc
+        position, mean, _, background = self.curve.T
+        table.curve = np.stack([position, mean - background], axis=1)
         return table
 
     def ring_list(
