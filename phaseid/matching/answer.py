@@ -184,9 +184,9 @@ def _missing(
     for k, candidate in enumerate(judged.members):
         shown = np.maximum(part.shown[0, k], 1e-12)
         chance = 1.0 / (1.0 + np.exp(-DETECTION_SLOPE * (np.log(shown) - pattern.ln_limit)))
-        x = lines.x[candidate] + judged.offset[k, index]
+        x = lines.x[candidate, : len(shown)] + judged.offset[k, index]
         inside = (x > pattern.x[0] - 0.004) & (x < pattern.x[-1] + 0.004)
-        strong = lines.intensity[candidate] > _MISSING_LEAST
+        strong = lines.intensity[candidate, : len(shown)] > _MISSING_LEAST
         for j in np.flatnonzero((chance > _MISSING_CHANCE) & inside & strong):
             row = int(lines.row[candidate, j])
             found.append(

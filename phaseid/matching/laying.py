@@ -28,7 +28,7 @@ from phaseid.matching.settings import (
 HALF_LOG_2PI = 0.5 * log(2.0 * pi)
 _AMPLITUDE_PRIOR_SD = 3.0
 _OWN_PART = 0.3
-"""A phase that makes less than this part of every ring does not show."""
+"""A phase that makes less than this part of a ring does not show in it."""
 _HIDDEN = 1.2
 """Two lines nearer than this many resolutions make one ring."""
 
@@ -75,11 +75,12 @@ class PatternWork:
         axial: Floats | None,
     ) -> None:
         self.pattern = pattern
-        self.axial = axial
+        used = int(lines.count[members].max(initial=1))
+        self.axial = None if axial is None else axial[:, :, :used]
         self.crowd = crowd
-        self.x = lines.x[members]
-        self.intensity = lines.intensity[members]
-        self.visible = lines.visible[members]
+        self.x = lines.x[members, :used]
+        self.intensity = lines.intensity[members, :used]
+        self.visible = lines.visible[members, :used]
         self.with_ln_visible = np.log(np.maximum(self.visible, 1e-12))
         self.b, self.k, self.n = self.x.shape
         self.m = len(pattern)
@@ -303,10 +304,10 @@ class PatternWork:
         result: Floats = np.minimum(volume, 0.0) - 0.5 * (self.trend / TREND_SD) ** 2
         return result
 
-    def shows(self) -> NDArray[np.bool_]:
-        """(b, k) whether a phase makes some claimed ring for a good part."""
+    def own_rings(self) -> NDArray[np.int64]:
+        """(b, k) how many claimed rings a phase makes for a good part."""
         made = (self.share > _OWN_PART) & self.claimed[:, None, :]
-        result: NDArray[np.bool_] = made.any(axis=2)
+        result: NDArray[np.int64] = made.sum(axis=2)
         return result
 
     def excused(self) -> NDArray[np.bool_]:

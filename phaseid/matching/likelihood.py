@@ -27,6 +27,8 @@ from phaseid.matching.settings import (
     UNLISTED_RING_COUNT,
 )
 
+_RINGS_OF_A_FURTHER_PHASE = 2
+"""One ring alone names no phase of a mixture: common practice, no source."""
 _EXCUSED_LINES = 8.0
 """Rings beyond a phase's stored lines are taken as if it had this many lines somewhere there."""
 
@@ -115,6 +117,7 @@ def evaluate(
     )
     offsets = np.stack([shift.offset for shift in positions.place(mean)], axis=2)
     strains = slice(positions.strains, positions.axials)
+    least = 1 if members.shape[1] == 1 else _RINGS_OF_A_FURTHER_PHASE
     return Fit(
         log_likelihood=total,
         offset=offsets,
@@ -122,6 +125,6 @@ def evaluate(
         scale_sd=scale_sds,
         strain=mean[:, strains] * loose.strain,
         strain_sd=deviation[:, strains] * loose.strain,
-        shows=np.logical_or.reduce([work.shows() for work in works]).all(axis=1),
+        shows=np.all(np.sum([work.own_rings() for work in works], axis=0) >= least, axis=1),
         patterns=tuple(map(PatternWork.result, works, targets, residuals)),
     )

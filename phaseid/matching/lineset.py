@@ -10,8 +10,9 @@ from numpy.typing import NDArray
 from phaseid.library.linetable import LineTable
 from phaseid.matching.patterns import Floats, Pattern
 
-MOST_LINES = 128
-"""Lines kept per phase and pattern: the strongest of those within reach of the rings."""
+LINES_LEAST, LINES_PER_RING, LINES_MOST = 128, 5, 1000
+"""Lines kept per phase and pattern, the strongest of those within reach of the rings: so many for
+each ring, at least and at most these."""
 _PAIRS = ((0, 0), (1, 1), (2, 2), (1, 2), (0, 2), (0, 1))
 _CELLS = 3.0
 """Cells per resolution within which lines are summed before anything is left out."""
@@ -30,7 +31,8 @@ class LineSet:
     `visible` (c, n) is the intensity a line would show when missing: its own plus that of weaker
     neighbours it cannot be told from, 0 for those neighbours. `strength` (c,) is the absolute
     intensity per cell volume squared of what counts as 1 in `intensity`.
-    `complete` (c,) is ln of the spacing down to which the phase's lines are known.
+    `complete` (c,) is ln of the spacing down to which the phase's lines are known; `count` (c,) how
+    many lines there are, the rest of each row being filled up.
     """
 
     x: Floats
@@ -39,6 +41,7 @@ class LineSet:
     visible: Floats
     strength: Floats
     complete: Floats
+    count: NDArray[np.int64]
 
 
 def _ragged(offsets: NDArray[np.int64], phases: NDArray[np.int64]) -> tuple[NDArray[np.int64], ...]:
@@ -82,7 +85,7 @@ def gather(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Lin
     visible = visible[order]
     starts = np.searchsorted(owner, np.arange(count))
     rank = np.arange(len(owner)) - starts[owner]
-    top = rank < MOST_LINES
+    top = rank < np.clip(LINES_PER_RING * len(pattern), LINES_LEAST, LINES_MOST)
     width = int(rank[top].max()) + 1 if top.any() else 1
 
     padded_x = np.full((count, width), np.inf)
@@ -100,6 +103,7 @@ def gather(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Lin
         visible=padded_v,
         strength=strongest / table.volume_A3[phases] ** 2,
         complete=np.log(table.complete_to_A[phases]),
+        count=np.bincount(owner[top], minlength=count),
     )
 
 
@@ -188,6 +192,7 @@ def with_variants(
         visible=appended(lines.visible, (visible / strongest[:, None])[rows, order]),
         strength=appended(lines.strength, lines.strength[parents] * strongest),
         complete=appended(lines.complete, lines.complete[parents]),
+        count=np.concatenate([lines.count, lines.count[parents]]),
     )
 
 

@@ -54,7 +54,7 @@ class Fit:
 
     `log_likelihood` (b,); `offset` (b, k, K) fitted shift of each phase in each pattern (scale plus
     strain); `scale`, `scale_sd` (b, K) the common shift alone; `strain`, `strain_sd` (b, k);
-    `shows` (b,) whether every phase makes at least one ring for the greater part;
+    `shows` (b,) whether every phase makes a ring for a good part, in a mixture two;
     `patterns` one PatternFit per pattern.
     """
 

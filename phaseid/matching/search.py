@@ -369,14 +369,23 @@ class Search:
 def evaluate_in_batches(
     model: Model, members: NDArray[np.int64], offsets: Floats, loose: Looseness | None = None
 ) -> Iterable[tuple[NDArray[np.int64], Fit]]:
-    """Yield (row indices, Fit) for parts of the batch small enough to stay in cache."""
-    cells = max(lines.x.shape[1] for lines in model.lines) * max(members.shape[1], 1)
-    size = max(1, _BATCH_CELLS // cells)
-    for start in range(0, len(members), size):
-        part = np.arange(start, min(start + size, len(members)))
-        chosen = None
-        if loose is not None:
-            chosen = loose.rows(part)
+    """Yield (row indices, Fit) for parts of the batch small enough to stay in cache.
+
+    Sets of about as many lines go together, so that little of the padding is computed.
+    """
+    counts = np.max([lines.count[members].max(axis=1) for lines in model.lines], axis=0)
+    cells = np.maximum(counts, 1) * members.shape[1]
+    order = np.argsort(cells, kind="stable")
+    start = 0
+    while start < len(order):
+        size = max(1, _BATCH_CELLS // int(cells[order[start]]))
+        while size > 1 and size * int(cells[order[min(start + size, len(order)) - 1]]) > (
+            2 * _BATCH_CELLS
+        ):
+            size = (size + 1) // 2
+        part = order[start : start + size]
+        start += size
+        chosen = None if loose is None else loose.rows(part)
         yield part, evaluate(model, members[part], offsets[part], chosen)
 
 
