@@ -38,6 +38,7 @@ _TRIPLET_TAGS = (
 )
 _MAX_SYMBOL = 100
 _MAX_FORMULA = 2000
+_MAX_BLOCK_NAME = 100
 _LENGTH_RANGE_A = (1.0, 1000.0)
 _ANGLE_RANGE_DEG = (5.0, 175.0)
 _SUPERSPACE = (
@@ -83,7 +84,8 @@ def read_cif(data: bytes, file: str) -> CifReading:
         try:
             crystals.append(_read_block(block, file, findings))
         except _Refusal as refusal:
-            rejects.append(Reject(refusal.code, refusal.reason, block.name))
+            name = block.name[:_MAX_BLOCK_NAME]
+            rejects.append(Reject(refusal.code, refusal.reason, name))
     if crystals:  # bibliography and reflection blocks beside a structure are no refusals
         rejects = [reject for reject in rejects if reject.code != "no_structure"]
     if not crystals and not rejects:

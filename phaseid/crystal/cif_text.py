@@ -18,6 +18,8 @@ from phaseid.crystal.crystal import Finding
 
 MAX_BYTES = 32 * 1024 * 1024
 MAX_BLOCKS = 100_000
+_MAX_NUMBER = 100  # characters
+_MAX_MESSAGE = 400
 _UTF8_BOM = b"\xef\xbb\xbf"
 _UTF16_BOMS = (b"\xff\xfe", b"\xfe\xff")
 _DATA = re.compile(r"^data_", re.IGNORECASE | re.MULTILINE)
@@ -120,6 +122,8 @@ class Unreadable:
 
 def parse_number(text: str) -> float | None:
     """Return a CIF number ("0.707(2)") or a simple fraction ("3/4"); None for anything else."""
+    if len(text) > _MAX_NUMBER:
+        return None
     if _NUMBER.match(text):
         value = float(text.partition("(")[0])
         return value if math.isfinite(value) else None
@@ -154,7 +158,8 @@ def parse_cif(data: bytes) -> tuple[list[Block], tuple[Finding, ...]] | Unreadab
 def _decode(data: bytes, findings: list[Finding]) -> str | None:
     if data.startswith(_UTF16_BOMS):
         findings.append(Finding("encoding", "the text is UTF-16, CIF asks for ASCII"))
-        return data.decode("utf-16", errors="replace")
+        text = data.decode("utf-16", errors="replace")
+        return None if "\0" in text else text
     data = data.removeprefix(_UTF8_BOM)
     if b"\0" in data:
         return None
@@ -233,5 +238,6 @@ def _readable(message: str) -> str:
     """Return a parser message with its place written as "line N"."""
     place = _PLACE.match(message)
     if place is None:
-        return message
-    return f"line {place.group(1)}: {message[place.end() :].removeprefix('in ')}"
+        return message[:_MAX_MESSAGE]
+    words = message[place.end() :].removeprefix("in ")
+    return f"line {place.group(1)}: {words[:_MAX_MESSAGE]}"

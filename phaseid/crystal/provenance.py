@@ -15,6 +15,9 @@ SOURCE_ID_TAG = "_phaseid_source_id"
 REFERENCE_TAG = "_citation_special_details"
 _KPA_PER_GPA = 1e6
 _MAX_NAME = 200
+_MAX_ID = 100
+_MAX_CITATION = 2000
+_MAX_TITLE = 2000
 NAME_TAGS = (
     "_chemical_name_mineral",
     "_chemical_name_common",
@@ -56,14 +59,15 @@ def phase_names(block: Block) -> tuple[str, ...]:
 def source(block: Block, file: str) -> Source:
     """Return database and number as the block states them ("file" and "" if it does not)."""
     for database, tags in _DATABASES:
-        number = block.text(*tags)
+        number = block.text(*tags)[:_MAX_ID]
         if number:
             return Source(database, number, file, citation(block))
     if _COD_NUMBER.match(block.name) and block.has_prefix("_cod_", "_[local]_cod_"):
         return Source("COD", block.name, file, citation(block))
-    number = block.text(SOURCE_ID_TAG)
+    number = block.text(SOURCE_ID_TAG)[:_MAX_ID]
     if number:
-        return Source(block.text(SOURCE_DATABASE_TAG) or "file", number, file, citation(block))
+        database = block.text(SOURCE_DATABASE_TAG)[:_MAX_ID] or "file"
+        return Source(database, number, file, citation(block))
     computed = _MP_NAME.search(block.name)
     if computed:
         return Source("Materials Project", computed.group(1), file, citation(block))
@@ -83,7 +87,7 @@ def citation(block: Block) -> str:
     place = " ".join(part for part in (journal, volume, year and f"({year})", page) if part)
     parts = (" ".join(authors.split()), place, doi and f"doi:{doi}")
     stated = ", ".join(part for part in parts if part not in ("", "?", "."))
-    return plain_text(stated or block.text(REFERENCE_TAG))
+    return plain_text((stated or block.text(REFERENCE_TAG))[:_MAX_CITATION])
 
 
 def conditions(block: Block) -> tuple[float | None, float | None, tuple[Finding, ...]]:
@@ -94,7 +98,7 @@ def conditions(block: Block) -> tuple[float | None, float | None, tuple[Finding,
     temperature = block.number("_diffrn_ambient_temperature", "_cell_measurement_temperature")
     kilopascal = block.number("_diffrn_ambient_pressure", "_cell_measurement_pressure")
     pressure = None if kilopascal is None else kilopascal / _KPA_PER_GPA
-    title = block.text("_publ_section_title")
+    title = block.text("_publ_section_title")[:_MAX_TITLE]
     stated = _PRESSURE.search(title) if "=" in title else None
     if pressure is None and stated:
         pressure = float(stated.group(1)) * _GPA[stated.group(2).lower()]

@@ -5,43 +5,34 @@ Nothing is unpacked to disk; a member's name is only a name.
 
 from __future__ import annotations
 
-import bz2
-import gzip
 import hashlib
-import lzma
 import os
 import tarfile
 import zipfile
-import zlib
-from collections.abc import Callable, Iterable, Iterator
-from contextlib import AbstractContextManager, nullcontext
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
-from typing import IO, Any
+from typing import IO
 
 from phaseid import __version__
 from phaseid.crystal.cif_text import MAX_BYTES
 from phaseid.library.tally import Rejected
+from phaseid.library.unpacking import (
+    BAD_ARCHIVE,
+    PACKED,
+    Allowance,
+    Metered,
+    TooFull,
+    content,
+    unpacked,
+)
+from phaseid.library.walking import Shut, no_file, walk
 
 _CIF = (".cif", ".mcif")
-_UNPACKING: dict[str, Callable[[IO[bytes]], AbstractContextManager[Any]]] = {
-    "gz": lambda file: gzip.GzipFile(fileobj=file),
-    "bz2": bz2.BZ2File,
-    "xz": lzma.LZMAFile,
-}
 _TAR = (".tar", ".tar.gz", ".tgz", ".tar.bz2", ".tbz2", ".tar.xz", ".txz")
 _ARCHIVE = (".zip", *_TAR)
-_BAD_ARCHIVE = (
-    zipfile.BadZipFile,
-    tarfile.TarError,
-    OSError,
-    EOFError,
-    lzma.LZMAError,
-    zlib.error,
-    NotImplementedError,  # a zip compression that Python does not know
-    RuntimeError,  # an encrypted zip member
-    ValueError,  # a zip member's header that makes no sense
-)
+_NESTED = "an archive inside an archive is not opened; unpack the outer one and add the folder"
+_LARGE = f"more than {MAX_BYTES >> 20} MB, the most that is read; split it"
 
 
 @dataclass(frozen=True, slots=True)
@@ -71,32 +62,37 @@ def is_structure_file(name: str) -> bool:
 
 
 def _without_packing(name: str) -> str:
-    for ending in (".gz", ".bz2", ".xz"):
+    for ending in PACKED:
         if name.endswith(ending):
             return name[: -len(ending)]
     return name
 
 
 def count_structure_files(paths: Iterable[Path]) -> int | None:
-    """Return how many structure files `read_all` will find, None where only reading tells."""
+    """Return how many files `read_all` will tell of, None where only reading tells."""
     total = 0
     for path in paths:
-        if path.is_dir():
-            inside = count_structure_files(_in_folder(path))
-            if inside is None:
+        inside = _in_folder(path) if _is_folder(path) else iter((path,))
+        for item in inside:
+            number = 1 if isinstance(item, Shut) else _count(item)
+            if number is None:
                 return None
-            total += inside
-        elif path.name.lower().endswith(_TAR):
-            return None
-        elif path.name.lower().endswith(".zip"):
-            try:
-                with zipfile.ZipFile(path) as archive:
-                    total += sum(_wanted(info.filename) for info in archive.infolist())
-            except _BAD_ARCHIVE:
-                total += 1
-        else:
-            total += 1
+            total += number
     return total
+
+
+def _count(path: Path) -> int | None:
+    """Return how many structure files are in a file, None where only reading it tells."""
+    name = path.name.lower()
+    if name.endswith(_TAR):
+        return None
+    if name.endswith(".zip") and no_file(path) is None:
+        try:
+            with zipfile.ZipFile(path) as archive:
+                return sum(_told(info.filename) for info in archive.infolist())
+        except BAD_ARCHIVE:
+            return 1
+    return 1
 
 
 def read_all(paths: Iterable[Path]) -> Iterator[Found]:
@@ -105,35 +101,42 @@ def read_all(paths: Iterable[Path]) -> Iterator[Found]:
     What cannot be read comes as a Rejected, with the reason; nothing is raised.
     """
     for path in paths:
-        if path.is_dir():
-            closed: list[OSError] = []
-            inside = list(_in_folder(path, closed.append))
-            yield from read_all(inside)
-            for error in closed:
-                reason = f"the folder cannot be opened ({_words(error)})"
-                yield _rejected(Path(error.filename), "unreadable", reason)
-            if not inside and not closed:
-                yield _rejected(
-                    path, "no_structures", "the folder holds no CIF file and no archive"
-                )
+        if _is_folder(path):
+            empty = True
+            for item in _in_folder(path):
+                empty = False
+                if isinstance(item, Shut):
+                    yield _rejected(item.path, item.code, item.reason)
+                else:
+                    yield from _from_file(item)
+            if empty:
+                reason = "the folder holds no CIF file and no archive"
+                yield _rejected(path, "no_structures", reason)
         else:
-            yield from _from_file(path)
+            problem = no_file(path)
+            if problem is None:
+                yield from _from_file(path)
+            else:
+                yield _rejected(path, *problem)
 
 
-def _in_folder(
-    folder: Path, on_closed: Callable[[OSError], object] | None = None
-) -> Iterator[Path]:
-    for here, folders, files in os.walk(folder, onerror=on_closed):
-        folders.sort()
-        for name in sorted(files):
-            if _wanted(name) or name.lower().endswith(_ARCHIVE):
-                yield Path(here, name)
+def _is_folder(path: Path) -> bool:
+    return os.path.isdir(path)  # noqa: PTH112 - Path.is_dir raises where a folder above is closed
+
+
+def _in_folder(folder: Path) -> Iterator[Path | Shut]:
+    return walk(folder, lambda name: _wanted(name) or name.lower().endswith(_ARCHIVE))
 
 
 def _wanted(member: str) -> bool:
     name = member.rsplit("/", 1)[-1]
     hidden = name.startswith(".") or member.startswith("__MACOSX/")
     return is_structure_file(name) and not hidden
+
+
+def _told(member: str) -> bool:
+    """Whether a member of an archive is read, or refused for being an archive itself."""
+    return _wanted(member) or member.lower().endswith(_ARCHIVE)
 
 
 def _from_file(path: Path) -> Iterator[Found]:
@@ -146,60 +149,95 @@ def _from_file(path: Path) -> Iterator[Found]:
             yield _rejected(path, "bad_archive", "this is no zip archive, or a damaged one")
         else:
             with path.open("rb") as file:
-                yield _member(file, path.name.lower(), str(path.absolute()), path.name)
-    except FileNotFoundError:
-        yield _rejected(path, "no_such_file", "there is no such file or folder")
-    except _BAD_ARCHIVE as error:
+                yield _file(file, _plain(path.absolute()), _plain(path.name))
+    except TooFull as error:
+        yield _rejected(path, "bomb", f"not read further: {error}")
+    except BAD_ARCHIVE as error:
         yield _rejected(path, "unreadable", f"the file cannot be read ({_words(error)})")
 
 
 def _from_zip(path: Path) -> Iterator[Found]:
+    allowance = Allowance(path.stat().st_size)
     with zipfile.ZipFile(path) as archive:
-        wanted = [info for info in archive.infolist() if _wanted(info.filename)]
-        if not wanted:
+        told = [info for info in archive.infolist() if _told(info.filename)]
+        if not told:
             yield _rejected(path, "no_structures", "the archive holds no CIF file")
-        for info in wanted:
-            location = f"{path.absolute()}!{info.filename}"
+        for info in told:
+            location, shown = _member_of(path, info.filename)
+            refused = _refused(info.filename, info.file_size)
+            if refused is not None:
+                yield Rejected(location, shown, "", *refused)
+                continue
             try:
                 with archive.open(info) as file:
-                    found = _member(file, info.filename.lower(), location, info.filename)
-            except _BAD_ARCHIVE as error:
+                    found = _file(file, location, shown)
+            except BAD_ARCHIVE as error:
                 reason = f"the member cannot be read ({_words(error)})"
-                found = Rejected(location, info.filename, "", "unreadable", reason)
-            yield found
+                found = Rejected(location, shown, "", "unreadable", reason)
+            yield _within(allowance, found)
 
 
 def _from_tar(path: Path) -> Iterator[Found]:
+    allowance = Allowance(path.stat().st_size)
     empty = True
-    with tarfile.open(path, mode="r|*") as archive:
+    with (
+        path.open("rb") as packed,
+        unpacked(packed) as stream,
+        tarfile.open(fileobj=Metered(stream, allowance), mode="r|") as archive,
+    ):
         for info in archive:
-            if not info.isfile() or not _wanted(info.name):
+            if not info.isfile() or not _told(info.name):
                 continue
             empty = False
+            location, shown = _member_of(path, info.name)
+            refused = _refused(info.name, info.size)
+            if refused is not None:
+                yield Rejected(location, shown, "", *refused)
+                continue
             file = archive.extractfile(info)
             if file is not None:
                 with file:
-                    yield _member(
-                        file, info.name.lower(), f"{path.absolute()}!{info.name}", info.name
-                    )
+                    yield _within(allowance, _file(file, location, shown))
     if empty:
         yield _rejected(path, "no_structures", "the archive holds no CIF file")
 
 
-def _member(file: IO[bytes], name: str, location: str, shown: str) -> Found:
-    """Read one structure file, bounded in size, unpacking .gz, .bz2 and .xz on the way."""
-    ending = name.rsplit(".", 1)[-1]
+def _refused(member: str, size: int) -> tuple[str, str] | None:
+    """Return why a member is not even opened, None where it is."""
+    if not _wanted(member):
+        return "nested_archive", _NESTED
+    return ("too_large", f"the member holds {_LARGE}") if size > MAX_BYTES else None
+
+
+def _within(allowance: Allowance, found: Found) -> Found:
+    if isinstance(found, StructureFile):
+        allowance.spend(len(found.data))
+    return found
+
+
+def _file(file: IO[bytes], location: str, shown: str) -> Found:
     try:
-        with _UNPACKING.get(ending, nullcontext)(file) as plain:
-            data = plain.read(MAX_BYTES + 1)  # the reader of CIF text refuses what is longer
-    except _BAD_ARCHIVE as error:
+        data = content(file, shown)
+    except TooFull:
+        raise
+    except BAD_ARCHIVE as error:
         reason = f"the file cannot be read ({_words(error)})"
         return Rejected(location, shown, "", "unreadable", reason)
     return StructureFile(location, shown, data)
 
 
+def _member_of(path: Path, member: str) -> tuple[str, str]:
+    shown = _plain(member)
+    return f"{_plain(path.absolute())}!{shown}", shown
+
+
 def _rejected(path: Path, code: str, reason: str) -> Rejected:
-    return Rejected(str(path.absolute()), path.name, "", code, reason)
+    return Rejected(_plain(path.absolute()), _plain(path.name), "", code, reason)
+
+
+def _plain(name: str | Path) -> str:
+    """Return a name as text that can be stored: what is no character is written out."""
+    return str(name).encode("utf-8", "backslashreplace").decode()
 
 
 def _words(error: Exception) -> str:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+import zlib
 from pathlib import Path
 
 import pytest
@@ -11,6 +12,7 @@ from hypothesis import strategies as st
 
 from phaseid.crystal.cif import CifReading, read_cif, read_cif_file
 from phaseid.crystal.cif_text import MAX_BYTES
+from phaseid.library.records import pack_crystal
 
 FILES = [
     path.read_bytes()
@@ -21,6 +23,7 @@ HEAD = (
     b"data_x\n_cell_length_a 50\n_cell_length_b 50\n_cell_length_c 50\n_cell_angle_alpha 90\n"
     b"_cell_angle_beta 90\n_cell_angle_gamma 90\n_space_group_name_H-M_alt 'P 1'\n"
 )
+SMALL = HEAD.replace(b" 50\n", b" 5\n")
 LOOP = b"loop_\n_atom_site_label\n_atom_site_fract_x\n_atom_site_fract_y\n_atom_site_fract_z\n"
 RELAXED = settings(
     max_examples=150, deadline=None, suppress_health_check=[HealthCheck.too_slow], derandomize=True
@@ -110,3 +113,46 @@ def test_an_endless_file_is_not_read_to_its_end() -> None:
         pytest.skip("no endless file on this system")
     (reject,) = read_cif_file("/dev/zero").rejects
     assert reject.code == "too_large"
+
+
+@pytest.mark.parametrize(
+    "part",
+    [
+        b"_publ_section_title 'T = " + b"1" * 200_000 + b"'\n",
+        b"_publ_section_title 'P = " + b"1" * 200_000 + b"'\n",
+        b"_cell_measurement_temperature " + b"1" * 200_000 + b"x\n",
+        b"_chemical_name_mineral '" + b"<a" * 100_000 + b"'\n",
+        b"_cell_formula_units_Z 1e300\n",
+        b"_exptl_crystal_density_diffrn " + b"1" * 200_000 + b"(\n",
+    ],
+    ids=["title T", "title P", "temperature", "markup", "Z", "density"],
+)
+def test_a_long_value_takes_no_longer_than_it_is(part: bytes) -> None:
+    """Each would take minutes if the time grew with the square of the length."""
+    start = time.process_time()
+    (crystal,) = read_cif(SMALL + part + LOOP + b"C1 .1 .2 .3\n", "hostile").crystals
+    assert crystal.formula == "C"
+    assert time.process_time() - start < 2
+
+
+def test_what_is_kept_of_a_file_is_bounded() -> None:
+    long = b"x" * 100_000
+    text = (
+        SMALL
+        + b"_cod_database_code " + long + b"\n_journal_name_full " + long
+        + b"\n_chemical_name_mineral " + long + b"\n_chemical_formula_sum 'C " + long + b"'\n"
+        + LOOP + b"C" + long + b" .1 .2 .3\n"
+    )  # fmt: skip
+    (crystal,) = read_cif(text, "hostile").crystals
+    kept = pack_crystal(crystal)
+    assert len(zlib.decompress(kept)) < 5000
+    (reject,) = read_cif(b"data_" + long + b"\n_a 1\n", "hostile").rejects
+    assert len(reject.block) == 100
+    (reject,) = read_cif(b"data_x\n_" + long + b"\n_" + long + b"\n", "hostile").rejects
+    assert len(reject.reason) < 500
+
+
+def test_utf16_with_null_characters_is_no_text() -> None:
+    text = "data_x\n_chemical_name_mineral 'a\0b'\n".encode("utf-16")
+    (reject,) = read_cif(text, "hostile").rejects
+    assert reject.code == "not_text"
