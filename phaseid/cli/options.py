@@ -76,4 +76,4 @@ def open_library(path: Path | None) -> Library:
 
     if path is None and not os.environ.get(variable("library")) and (named := setting("library")):
         path = Path(named).expanduser()
-    return open_default(say) if path is None else Library.open(path)
+    return open_default(say) if path is None else Library.open(path, say)

@@ -6,11 +6,13 @@ import errno
 import sqlite3
 import tempfile
 from collections.abc import Callable, Iterator
-from contextlib import closing, contextmanager
+from contextlib import closing, contextmanager, suppress
 from pathlib import Path
 
 from phaseid.errors import LibraryError
 from phaseid.library.schema import SCHEMA_VERSION, apply_steps, stored_version
+
+Tell = Callable[[str], None]
 
 _WAIT_S = 60.0
 _MAGIC = b"SQLite format 3\x00"
@@ -74,11 +76,11 @@ def check_file(path: Path) -> None:
         raise LibraryError(f"{path}: this is not a library of phaseid. {_ANOTHER}")
 
 
-def open_for_reading(path: Path) -> sqlite3.Connection:
+def open_for_reading(path: Path, tell: Tell | None = None) -> sqlite3.Connection:
     """Open a library file so that nothing can change it.
 
-    An older schema is brought up to date first. Raises LibraryError: missing, a folder, not a
-    library, newer, damaged.
+    An older schema is brought up to date first, and `tell` is told so. Raises LibraryError:
+    missing, a folder, not a library, newer, damaged.
     """
     check_file(path)
     with told(path):
@@ -86,7 +88,7 @@ def open_for_reading(path: Path) -> sqlite3.Connection:
         version = _checked_version(conn, path)
         if version < SCHEMA_VERSION:
             conn.close()
-            open_for_writing(path).close()
+            close_after_writing(open_for_writing(path, tell))
             conn = _read_only(path)
     return conn
 
@@ -123,7 +125,7 @@ def _checked_version(conn: sqlite3.Connection, path: Path) -> int:
     )
 
 
-def open_for_writing(path: Path) -> sqlite3.Connection:
+def open_for_writing(path: Path, tell: Tell | None = None) -> sqlite3.Connection:
     """Open an existing library file for adding; an older schema is brought up to date.
 
     Transactions are explicit. Raises LibraryError as `open_for_reading`, and where the file or its
@@ -135,7 +137,7 @@ def open_for_writing(path: Path) -> sqlite3.Connection:
         version = _checked_version(conn, path)
         try:
             if version < SCHEMA_VERSION:
-                apply_steps(conn)
+                _bring_up_to_date(conn, path, version, tell)
             # readers go on reading while a writer adds; a killed writer loses one batch at most
             conn.execute("PRAGMA journal_mode = WAL")
             conn.execute("PRAGMA synchronous = NORMAL")
@@ -143,6 +145,30 @@ def open_for_writing(path: Path) -> sqlite3.Connection:
             conn.close()
             raise
     return conn
+
+
+def _bring_up_to_date(
+    conn: sqlite3.Connection, path: Path, version: int, tell: Tell | None
+) -> None:
+    """Apply the steps that are missing; the file as it was stays beside it."""
+    copy = path.with_name(f"{path.name}.schema-{version}")
+    number = 1
+    while copy.exists():
+        number += 1
+        copy = path.with_name(f"{path.name}.schema-{version}-{number}")
+    if tell is not None:
+        tell(
+            f"Bringing the library {path} up to date, once; as it was it is kept as {copy.name}, "
+            "which you may delete later ..."
+        )
+    with tempfile.TemporaryDirectory(prefix=f".{path.name}-", dir=path.parent) as folder:
+        made = Path(folder) / copy.name
+        with closing(sqlite3.connect(made)) as whole:
+            conn.backup(whole)
+        made.rename(copy)
+    apply_steps(conn)
+    with suppress(sqlite3.OperationalError):  # somebody reads, or the disk is nearly full
+        conn.execute("VACUUM")
 
 
 def close_after_writing(conn: sqlite3.Connection) -> None:

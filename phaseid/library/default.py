@@ -50,4 +50,4 @@ def open_default(progress: Callable[[str], None] | None = None) -> Library:
         with connection.told(path):
             path.parent.mkdir(parents=True, exist_ok=True)
         build_starter(path)
-    return Library.open(path)
+    return Library.open(path, progress)

@@ -3,16 +3,16 @@
 from __future__ import annotations
 
 import hashlib
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 from phaseid.crystal.crystal import Crystal
 from phaseid.library.formulas import composition_key, element_key, name_key
-from phaseid.library.linetable import pack_lines
+from phaseid.library.linetable import elements_bits
+from phaseid.library.packing import STORED_FLOOR, pack_lines
 from phaseid.library.quality import quality
 from phaseid.library.records import findings_json, pack_crystal
-
-STORED_FLOOR = 1e-3
-"""Lines weaker than this fraction of the strongest, for every probe, are not stored."""
+from phaseid.library.strongest import block_parts, strongest_lines
 
 
 @dataclass(frozen=True, slots=True)
@@ -21,14 +21,17 @@ class Entry:
 
     `content` is the SHA-256 (hex) of what the structure is, whatever its source calls it; `row` the
     columns of table `phase` by name, without ids; `labels` (kind, text, key) what it can be asked
-    for by.
+    for by; `operations` and `structure` are the crystal, `lines` its lines, `block` what the blocks
+    hold of it.
     """
 
     content: str
     row: dict[str, str | int | float]
     labels: tuple[tuple[str, str, str], ...]
+    operations: str
     structure: bytes
     lines: bytes
+    block: Mapping[str, bytes]
 
 
 def entry(crystal: Crystal, location: str) -> Entry:
@@ -41,11 +44,13 @@ def entry(crystal: Crystal, location: str) -> Entry:
     contents = cell_contents(crystal)
     source = crystal.source
     a, b, c, alpha, beta, gamma = crystal.cell
+    elements = sorted({element_key(symbol) for symbol in contents})
+    trust = quality(crystal)
     row: dict[str, str | int | float] = {
         "name": crystal.name or crystal.formula,
         "formula": crystal.formula,
         "formula_key": composition_key(contents),
-        "elements": " ".join(sorted({element_key(symbol) for symbol in contents})),
+        "elements": " ".join(elements),
         "space_group_number": crystal.space_group_number,
         "space_group_symbol": crystal.space_group_symbol,
         "a_A": a,
@@ -62,16 +67,20 @@ def entry(crystal: Crystal, location: str) -> Entry:
         "source_reference": source.reference,
         "location": location,
         "findings": findings_json(crystal.findings),
-        "quality": quality(crystal),
+        "quality": trust,
         "complete_to_A": lines.complete_to_A,
         "floor": lines.floor,
     }
+    operations, structure = pack_crystal(crystal)
+    strong = strongest_lines(lines) if len(lines.d_A) else {}
     return Entry(
         content=hashlib.sha256(content_key(crystal).encode()).hexdigest(),
         row=row,
         labels=_labels(crystal),
-        structure=pack_crystal(crystal),
+        operations=operations,
+        structure=structure,
         lines=pack_lines(lines),
+        block=block_parts(elements_bits(elements), trust, strong),
     )
 
 

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any, Self
 
 from phaseid.errors import InputError, LibraryError
 from phaseid.library import connection, lookups
-from phaseid.library.linetable import Kind, LineTable, line_table, unpack_lines
+from phaseid.library.linetable import LineTable, line_table
 from phaseid.library.lookups import PHASE_COLUMNS, phase_from_row
 from phaseid.library.phase import Phase
 
@@ -21,6 +21,8 @@ if TYPE_CHECKING:
 
     from phaseid.crystal.crystal import Crystal
     from phaseid.crystal.lines import Lines
+    from phaseid.library.packing import Kind
+    from phaseid.library.strongest import StrongLines
     from phaseid.library.tally import ImportTally
 
 Progress = Callable[[int, int | None], None]
@@ -38,14 +40,14 @@ class Library:
         self._conn = conn
 
     @classmethod
-    def open(cls, path: str | Path) -> Self:
-        """Open a library file.
+    def open(cls, path: str | Path, tell: Callable[[str], None] | None = None) -> Self:
+        """Open a library file; one of an older version is brought up to date, which `tell` hears.
 
         Raises LibraryError (exit code 3) where it is missing, a folder, no library of phaseid, from
         a newer version, or damaged.
         """
         path = Path(path)
-        return cls(path, connection.open_for_reading(path))
+        return cls(path, connection.open_for_reading(path, tell))
 
     @classmethod
     def create(cls, path: str | Path) -> Self:
@@ -140,20 +142,21 @@ class Library:
         from phaseid.library.records import unpack_crystal
 
         self.phase(phase_id)
-        row = self._one(
-            "SELECT data FROM structure JOIN phase ON phase.id = phase WHERE phase_id = ?", phase_id
-        )
-        return unpack_crystal(row[0])
-
-    def lines(self, phase_id: str) -> Lines:
-        """Return the stored lines of a phase; raises InputError as `phase`."""
-        self.phase(phase_id)
-        volume, complete, floor, data = self._one(
-            "SELECT volume_A3, complete_to_A, floor, data "
-            "FROM lines JOIN phase ON phase.id = phase WHERE phase_id = ?",
+        found = self._one(
+            "SELECT operations, data FROM phase JOIN structure ON phase = phase.id "
+            "JOIN symmetry ON symmetry.id = symmetry WHERE phase_id = ?",
             phase_id,
         )
-        return unpack_lines(data, volume_A3=volume, complete_to_A=complete, floor=floor)
+        return unpack_crystal(*found)
+
+    def lines(self, phase_id: str) -> Lines:
+        """Return the lines of a phase, computed from its structure; raises InputError as `phase`.
+
+        They are those of `line_table` without the rounding of what is stored.
+        """
+        from phaseid.crystal.scattering import CU_KA1_EV
+
+        return self.lines_at(phase_id, CU_KA1_EV)
 
     def lines_at(self, phase_id: str, xray_energy_eV: float) -> Lines:
         """Return the lines of a phase with f′ and f″ at a photon energy; the stored have Cu Kα1.
@@ -163,18 +166,31 @@ class Library:
         not positive.
         """
         from phaseid.crystal.lines import compute_lines, trim
-        from phaseid.library.entries import STORED_FLOOR
+        from phaseid.library.packing import STORED_FLOOR
 
         lines = compute_lines(self.crystal(phase_id), xray_energy_eV=xray_energy_eV)
         return trim(lines, STORED_FLOOR)
 
-    def line_table(self, kind: Kind) -> LineTable:
-        """Return the lines of every phase as that kind of probe sees them."""
-        rows = self._rows(
-            "SELECT phase_id, volume_A3, complete_to_A, floor, quality, elements, data "
-            "FROM phase JOIN lines ON lines.phase = phase.id ORDER BY phase.id"
+    def line_table(self, kind: Kind, phases: Sequence[int] | None = None) -> LineTable:
+        """Return the lines of every phase as that kind of probe sees them.
+
+        With `phases`, only of those row numbers (`StrongLines.row`), in that order.
+        """
+        columns = (
+            "phase_id, a_A, b_A, c_A, alpha_deg, beta_deg, gamma_deg, volume_A3, complete_to_A, "
+            "floor, quality, elements, data FROM phase JOIN lines ON lines.phase = phase.id"
         )
-        return line_table(kind, rows)
+        if phases is None:
+            return line_table(kind, self._rows(f"SELECT {columns} ORDER BY phase.id"))
+        one = f"SELECT {columns} WHERE phase.id = ?"
+        return line_table(kind, [tuple(self._one(one, int(row))) for row in phases])
+
+    def strong_lines(self, kind: Kind) -> StrongLines:
+        """Return the strongest lines of every phase, in the order of `line_table`."""
+        from phaseid.library.strongest import read_blocks
+
+        with self._told():
+            return read_blocks(self._conn, kind)
 
     def add(
         self,

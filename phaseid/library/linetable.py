@@ -1,34 +1,20 @@
-"""Lines packed for storage, and the lines of a whole library as a few long arrays.
+"""The lines of a whole library, or of some of its phases, as a few long arrays.
 
 numpy is loaded only where arrays are made: look-ups by name never need it.
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any, Literal
+from typing import TYPE_CHECKING, Any
 
 from phaseid.library.formulas import ATOMIC_NUMBER, SYMBOLS
+from phaseid.library.packing import Kind, unpack_many
 
 if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
-
-    from phaseid.crystal.lines import Lines
-
-Kind = Literal["electron", "x-ray", "neutron"]
-
-# one line of one phase, little-endian; float32 keeps |F|² to 6e-8 of its value
-_RECORD: list[Any] = [
-    ("d_A", "<f8"),
-    ("hkl", "<i2", (3,)),
-    ("multiplicity", "<i4"),
-    ("f2_xray", "<f4"),
-    ("f2_electron", "<f4"),
-    ("f2_neutron", "<f4"),
-]
-_F2_FIELD = {"x-ray": "f2_xray", "electron": "f2_electron", "neutron": "f2_neutron"}
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -76,61 +62,44 @@ def elements_bits(elements: Iterable[str]) -> int:
     return bits
 
 
-def pack_lines(lines: Lines) -> bytes:
-    """Pack the arrays of `lines` into bytes, record after record."""
+def elements_masks(elements: Sequence[Iterable[str]]) -> NDArray[np.uint64]:
+    """Return `LineTable.elements_mask` (p, 2) of p sets of symbols."""
     import numpy as np
 
-    records = np.empty(len(lines.d_A), dtype=_RECORD)
-    for name in (field[0] for field in _RECORD):
-        records[name] = getattr(lines, name)
-    return records.tobytes()
-
-
-def unpack_lines(data: bytes, *, volume_A3: float, complete_to_A: float, floor: float) -> Lines:
-    """Rebuild `Lines` from what `pack_lines` made and the phase's own columns."""
-    import numpy as np
-
-    from phaseid.crystal.lines import Lines
-
-    records = np.frombuffer(data, dtype=_RECORD)
-    return Lines(
-        d_A=records["d_A"].astype(np.float64),
-        hkl=records["hkl"].astype(np.int32),
-        multiplicity=records["multiplicity"].astype(np.int32),
-        f2_xray=records["f2_xray"].astype(np.float64),
-        f2_electron=records["f2_electron"].astype(np.float64),
-        f2_neutron=records["f2_neutron"].astype(np.float64),
-        volume_A3=volume_A3,
-        complete_to_A=complete_to_A,
-        floor=floor,
-    )
+    bits = [elements_bits(symbols) for symbols in elements]
+    words = [(one & 0xFFFF_FFFF_FFFF_FFFF, one >> 64) for one in bits]
+    return np.array(words, dtype=np.uint64).reshape(-1, 2)
 
 
 def line_table(kind: Kind, rows: Iterable[tuple[Any, ...]]) -> LineTable:
     """Build the table.
 
-    Rows are phase id, volume_A3, complete_to_A, floor, quality, elements, packed lines.
+    Rows are phase id, cell (six numbers, Å and degrees), volume_A3, complete_to_A, floor, quality,
+    elements, packed lines.
     """
     import numpy as np
 
+    from phaseid.crystal.metric import inverse_metric
+
     held = list(rows)
-    dtype = np.dtype(_RECORD)
-    blobs = [row[6] for row in held]
-    records = np.frombuffer(b"".join(blobs), dtype=dtype)
-    counts = np.fromiter(map(len, blobs), dtype=np.int64, count=len(blobs)) // dtype.itemsize
-    numbers = np.array([row[1:5] for row in held], dtype=np.float64).reshape(-1, 4)
-    masks = [elements_bits(row[5].split()) for row in held]
-    words = [(bits & 0xFFFF_FFFF_FFFF_FFFF, bits >> 64) for bits in masks]
+    offsets, hkl, multiplicity, strength = unpack_many(kind, [row[12] for row in held])
+    metric = np.array([inverse_metric(row[1:7]) for row in held]).reshape(-1, 9)
+    numbers = np.array([row[7:11] for row in held], dtype=np.float64).reshape(-1, 4)
+    owner = np.repeat(np.arange(len(held)), np.diff(offsets))
+    inverse_d2 = np.zeros(len(owner))
+    for i, j, times in ((0, 0, 1), (1, 1, 1), (2, 2, 1), (1, 2, 2), (0, 2, 2), (0, 1, 2)):
+        product = hkl[:, i].astype(np.float64) * hkl[:, j]
+        inverse_d2 += times * product * metric[owner, 3 * i + j]
     return LineTable(
         phase_ids=tuple(row[0] for row in held),
-        offsets=np.concatenate([np.zeros(1, np.int64), np.cumsum(counts)]),
-        d_A=records["d_A"].astype(np.float64),
-        hkl=records["hkl"].astype(np.int16),
-        multiplicity=records["multiplicity"].astype(np.int32),
-        f2=records[_F2_FIELD[kind]].astype(np.float64),
+        offsets=offsets,
+        d_A=1.0 / np.sqrt(inverse_d2),
+        hkl=hkl,
+        multiplicity=multiplicity,
+        f2=strength * inverse_d2 / multiplicity,
         volume_A3=numbers[:, 0].copy(),
         complete_to_A=numbers[:, 1].copy(),
         floor=numbers[:, 2].copy(),
         quality=numbers[:, 3].copy(),
-        elements_mask=np.array(words, dtype=np.uint64).reshape(-1, 2),
+        elements_mask=elements_masks([row[11].split() for row in held]),
     )

@@ -1,7 +1,8 @@
 """The tables of a library file, as named steps that are applied once each.
 
 A library file is plain SQLite. `meta` says what it is; `phase` has one compact row per structure;
-`structure` and `lines` hold the bulky parts by phase so that look-ups never page through them;
+`structure` and `lines` hold the bulky parts by phase so that look-ups never page through them,
+`symmetry` the operations that many structures share, `block` what a search looks through first;
 `label` holds every name and source number a phase can be asked for by (with a trigram index);
 `seen` remembers files that were read without a reject,
 so that they need not be read again; `reject` what could not be read and why.
@@ -14,6 +15,7 @@ from collections.abc import Callable, Sequence
 from typing import TYPE_CHECKING
 
 from phaseid import __version__
+from phaseid.library.compact_tables import compact_tables
 
 if TYPE_CHECKING:
     from sqlite_utils import Database
@@ -77,7 +79,10 @@ def _first_tables(db: Database) -> None:
     db.table("reject").create_index(["location"])
 
 
-STEPS: tuple[Step, ...] = (("first tables", _first_tables),)
+STEPS: tuple[Step, ...] = (
+    ("first tables", _first_tables),
+    ("compact lines and blocks", compact_tables),
+)
 
 SCHEMA_VERSION = len(STEPS)
 

@@ -8,7 +8,9 @@ from dataclasses import replace
 
 from phaseid.library.entries import Entry
 from phaseid.library.outcome import Outcome
+from phaseid.library.records import symmetry_row
 from phaseid.library.sources import Found, StructureFile
+from phaseid.library.strongest import Parts, write_blocks
 from phaseid.library.tally import ImportTally, Rejected
 
 _DIGEST_RANGE = 1 << 128
@@ -37,6 +39,7 @@ class Writer:
         self._conn = conn
         self._read = read
         self._met: set[int] = set()  # rows that a file of this run stands for
+        self._changed: dict[int, Parts] = {}  # rows of this batch, for their blocks
 
     def marked(self, found: Found) -> Found:
         """Mark a file as known where all that was once read from these bytes is in the library."""
@@ -48,10 +51,12 @@ class Writer:
         """Write what a batch of files gave, in one transaction: all of it or nothing."""
         counts = (self.tally.added, self.tally.unchanged, self.tally.replaced)
         refused: list[Rejected] = []
+        self._changed = {}
         self._conn.execute("BEGIN IMMEDIATE")
         try:
             for outcome in batch:
                 refused.extend(self._take(outcome))
+            write_blocks(self._conn, self._changed)
             self._conn.execute("COMMIT")
         except BaseException:
             self.tally.added, self.tally.unchanged, self.tally.replaced = counts
@@ -157,8 +162,11 @@ class Writer:
             f"INSERT INTO phase ({columns}) VALUES ({marks})", tuple(row.values())
         )
         made = int(done.lastrowid or 0)
-        self._conn.execute("INSERT INTO structure VALUES (?, ?)", (made, entry.structure))
-        self._conn.execute("INSERT INTO lines VALUES (?, ?)", (made, entry.lines))
+        symmetry = symmetry_row(self._conn, entry.operations)
+        held = (made, symmetry, entry.structure)
+        self._conn.execute("INSERT INTO structure (phase, symmetry, data) VALUES (?, ?, ?)", held)
+        self._conn.execute("INSERT INTO lines (phase, data) VALUES (?, ?)", (made, entry.lines))
+        self._changed[made] = entry.block
         return made
 
     def _phase_id(self, entry: Entry) -> str:

@@ -10,6 +10,7 @@ from pathlib import Path
 import pytest
 
 from phaseid.library import Library
+from phaseid.library.schema import SCHEMA_VERSION
 from phaseid.resources import data_path
 from tests.cli.conftest import Command
 from tests.library.rock_salts import rock_salt
@@ -97,7 +98,7 @@ def test_info_says_what_it_holds(phaseid: Command, mine: Path) -> None:
     facts = phaseid("library", "info", "--library", str(mine), "--json").json("library-info-1")
     with Library.open(mine) as library:
         assert (facts["phases"], facts["digest"]) == (1, library.digest)
-    assert (facts["path"], facts["schema_version"]) == (str(mine), 1)
+    assert (facts["path"], facts["schema_version"]) == (str(mine), SCHEMA_VERSION)
     shown = phaseid("library", "info", "--library", str(mine)).out
     assert facts["digest"] in shown
     assert "COD" in shown
