@@ -92,6 +92,11 @@ def identify(
         axis_for(pattern, chosen)
     with open_library(library) as shelf:
         answer = rank(patterns, shelf, chemistry=chemistry, max_phases=max_phases, top=top)
+        if plot is not None:
+            from phaseid.reports.picture_file import picture_bytes, write_whole
+
+            suffix = plot.suffix.lower()
+            picture = picture_bytes(answer, suffix, axis=chosen, library=shelf)
     if as_json:
         from phaseid.reports.json import dumps, identification_dict
 
@@ -101,7 +106,5 @@ def identify(
 
         print(as_text(answer, width=width(), bold=bold()), end="")
     if plot is not None:
-        from phaseid.reports.picture_file import write_picture
-
-        write_picture(answer, plot, axis=chosen)
+        write_whole(plot, picture)
         say(f"Picture written to {plot}.")

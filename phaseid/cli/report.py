@@ -82,8 +82,6 @@ def report(
     )
     for pattern in patterns:
         axis_for(pattern, chosen)
-    with open_library(library) as shelf:
-        answer = rank(patterns, shelf, chemistry=chemistry, max_phases=max_phases, top=top)
     options = {
         "--library": None if library is None else str(library),
         "--probe": probe,
@@ -117,6 +115,8 @@ def report(
             ),
         ),
     )
-    content = page(answer, provenance, axis=chosen).encode()
+    with open_library(library) as shelf:
+        answer = rank(patterns, shelf, chemistry=chemistry, max_phases=max_phases, top=top)
+        content = page(answer, provenance, axis=chosen, library=shelf).encode()
     write_whole(output, content)
     say(f"Report written to {output} ({len(content) / 1000:.0f} kB).")

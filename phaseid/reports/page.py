@@ -14,12 +14,13 @@ from dataclasses import dataclass
 from importlib.metadata import version
 from importlib.resources import files
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from phaseid import __version__
 from phaseid.matching.identification import Identification
 from phaseid.reports.headline import doubts, headline, next_steps
 from phaseid.reports.json import dumps, identification_dict
-from phaseid.reports.page_answer import answer_section
+from phaseid.reports.page_answer import Drawing, answer_section
 from phaseid.reports.page_compare import side_by_side
 from phaseid.reports.page_html import facts, items, scrolling, words
 from phaseid.reports.picture import Picture
@@ -32,9 +33,12 @@ from phaseid.reports.picture_sheet import (
     probability_parts,
 )
 from phaseid.reports.picture_style import DARK, LIGHT, palette_css, picture_css
-from phaseid.reports.picture_svg import svg
+from phaseid.reports.picture_svg import Store, svg
 from phaseid.reports.plain import phase_text, probability_text, safe
 from phaseid.reports.text import STANDING, VERDICTS, cautions, remarks
+
+if TYPE_CHECKING:
+    from phaseid.library import Library
 
 LARGEST_BYTES = 900_000
 """Answers beyond the first are drawn as long as the page stays below this."""
@@ -49,18 +53,27 @@ class Provenance:
     settings: tuple[tuple[str, str], ...] = ()
 
 
-def page(answer: Identification, provenance: Provenance, *, axis: AxisName | None = None) -> str:
+def page(
+    answer: Identification,
+    provenance: Provenance,
+    *,
+    axis: AxisName | None = None,
+    library: Library | None = None,
+) -> str:
     """Return the page as HTML text.
 
-    `axis` is that of the sticks; without one, the axis nearest to how a pattern was measured.
+    `axis` is that of the sticks; without one, the axis nearest to how a pattern was measured. With
+    the answer's `library`, lines of the answers that are too weak to be seen are drawn faintly.
     Raises InputError for an axis that a pattern does not have.
     """
     machine = _machine_copy(answer)
-    sections, drawn = _sections(answer, axis, LARGEST_BYTES - len(machine))
+    store = Store()
+    drawing = Drawing(axis, library, store)
+    sections, drawn = _sections(answer, drawing, LARGEST_BYTES - len(machine))
     style, script = _style(), _resource("page.js")
     policy = (
-        f"default-src 'none'; style-src '{_hash(style)}'; script-src '{_hash(script)}'; "
-        "base-uri 'none'; form-action 'none'"
+        f"default-src 'none'; img-src data:; style-src '{_hash(style)}'; "
+        f"script-src '{_hash(script)}'; base-uri 'none'; form-action 'none'"
     )
     title = words(f"{headline(answer).split('. ')[0]} · phaseid")
     return (
@@ -69,12 +82,18 @@ def page(answer: Identification, provenance: Provenance, *, axis: AxisName | Non
         '<meta name="viewport" content="width=device-width,initial-scale=1">'
         f'<meta name="generator" content="phaseid {__version__}">'
         f"<title>{title}</title><style>{style}</style></head><body>"
-        f"<header>{_head(answer)}</header><main>{_choice(answer, drawn)}{sections}"
+        f"{_images(store)}<header>{_head(answer)}</header><main>{_choice(answer, drawn)}{sections}"
         f"{side_by_side(answer)}{_notes(answer)}</main>"
         f"<footer>{_origin(answer, provenance)}</footer>"
         f'<script type="application/json" id="identification">{machine}</script>'
         f"<script>{script}</script></body></html>\n"
     )
+
+
+def _images(store: Store) -> str:
+    """What several pictures show, in an element of no size."""
+    held = store.definitions()
+    return f'<svg class="store" aria-hidden="true">{held}</svg>' if held else ""
 
 
 def _resource(name: str) -> str:
@@ -165,13 +184,13 @@ def _choice(answer: Identification, drawn: int) -> str:
     return f"{bar}{scrolling(table, 'Answers, scrolls sideways')}{more}"
 
 
-def _sections(answer: Identification, axis: AxisName | None, room: int) -> tuple[str, int]:
+def _sections(answer: Identification, drawing: Drawing, room: int) -> tuple[str, int]:
     """The answers in full while there is room, the first always; and how many these are."""
     if not answer.hypotheses:
-        return answer_section(answer, None, axis=axis), 0
+        return answer_section(answer, None, drawing), 0
     parts: list[str] = []
     for hypothesis in answer.hypotheses:
-        section = answer_section(answer, hypothesis, axis=axis)
+        section = answer_section(answer, hypothesis, drawing)
         room -= len(section.encode())
         if parts and room < 0:
             break

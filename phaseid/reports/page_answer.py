@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
 from phaseid.reports.page_html import facts, items, scrolling, tag, words
+from phaseid.reports.picture import Picture
 from phaseid.reports.picture_axis import AxisName, axis_for
 from phaseid.reports.picture_disc import disc, disc_of_two
 from phaseid.reports.picture_scene import Scene, missing_key, ring_key, scene
 from phaseid.reports.picture_sticks import sticks
-from phaseid.reports.picture_svg import svg
+from phaseid.reports.picture_svg import Store, svg
 from phaseid.reports.plain import (
     cell_text,
     hkl_text,
@@ -22,25 +25,37 @@ from phaseid.reports.plain import (
 )
 from phaseid.reports.text import SHOWN_ALIKE, against, measured_intensity
 
+if TYPE_CHECKING:
+    from phaseid.library import Library
+
 HEADS = (
     ("ring", True),
     ("d measured, Å", True),
-    ("sigma, Å", True),
-    ("d calculated, Å", True),
-    ("hkl", True),
     ("phase", False),
+    ("hkl", True),
     ("off by, sigma", True),
+    ("d calculated, Å", True),
     ("I measured", True),
     ("I calculated", True),
+    ("sigma of d, Å", True),
 )
 
 
-def answer_section(
-    answer: Identification, hypothesis: Hypothesis | None, *, axis: AxisName | None
-) -> str:
+@dataclass(frozen=True, slots=True)
+class Drawing:
+    """How pictures are drawn: the axis of the sticks, where weak lines are, where images go."""
+
+    axis: AxisName | None
+    library: Library | None
+    store: Store
+
+
+def answer_section(answer: Identification, hypothesis: Hypothesis | None, drawing: Drawing) -> str:
     """Everything about one answer; with None the pattern alone, which nothing explains."""
     rank = "" if hypothesis is None else str(hypothesis.rank)
-    scenes = [scene(answer, hypothesis, number) for number in range(len(answer.patterns))]
+    scenes = [
+        scene(answer, hypothesis, number, drawing.library) for number in range(len(answer.patterns))
+    ]
     parts = [f'<section class="answer" data-rank="{rank}" aria-labelledby="answer-{rank}">']
     parts.append(f'<h2 id="answer-{rank}">{words(_title(hypothesis))}</h2>')
     doubts = ""
@@ -49,10 +64,10 @@ def answer_section(
     if len(scenes) == 2:
         caption = "Two probes, one half each; the radius is 1/d after each fitted scale."
         parts.append(
-            f'<div class="pattern"><figure>{svg(disc_of_two(*scenes), hits=True)}'
+            f'<div class="pattern"><figure>{_drawn(disc_of_two(*scenes), drawing)}'
             f"<figcaption>{caption}</figcaption></figure><div>{doubts}</div></div>"
         )
-    parts += [_pattern(answer, one, axis) for one in scenes]
+    parts += [_pattern(answer, one, drawing) for one in scenes]
     if hypothesis is not None:
         parts.append("" if len(scenes) == 2 else doubts)
         alone = len(hypothesis.phases) == 1
@@ -69,18 +84,19 @@ def _title(hypothesis: Hypothesis | None) -> str:
     return f"Answer {hypothesis.rank}: {names}, probability {chance}"
 
 
-def _pattern(answer: Identification, one: Scene, axis: AxisName | None) -> str:
+def _drawn(picture: Picture, drawing: Drawing) -> str:
+    return svg(picture, hits=True, store=drawing.store)
+
+
+def _pattern(answer: Identification, one: Scene, drawing: Drawing) -> str:
     many = len(answer.patterns) > 1
     title = pattern_title(answer, one.number)
     heading = f"Pattern {one.number + 1}: {title}" if many else title
     figures = (
-        f'<figure class="disc">{svg(disc(one), hits=True)}<figcaption>Left half measured, '
-        "right half calculated: lines that explain a ring, and strong ones that are missing. The "
-        "line’s weight is its intensity, calculated ones laid on the measured phase by phase."
-        "</figcaption>"
-        "</figure>"
+        f'<figure class="disc">{_drawn(disc(one), drawing)}<figcaption>{_caption(one)}'
+        "</figcaption></figure>"
     )
-    stick_picture = svg(sticks(one, axis_for(one.pattern, axis)), hits=True)
+    stick_picture = _drawn(sticks(one, axis_for(one.pattern, drawing.axis)), drawing)
     figures += (
         f'<div><figure class="sticks">{scrolling(stick_picture, "Sticks, scrolls sideways")}'
         f"</figure></div>"
@@ -92,6 +108,19 @@ def _pattern(answer: Identification, one: Scene, axis: AxisName | None) -> str:
     return (
         f'<div class="pattern"><h3>{words(heading)}</h3>{figures}</div>{table}'
         f'<p class="quiet">{words(note)}</p>'
+    )
+
+
+def _caption(one: Scene) -> str:
+    left = "Left half measured"
+    if one.pattern.disc is not None:
+        left += ": the image itself, straightened, its rings marked where the halves meet"
+    right = "right half calculated: lines that explain a ring, strong ones that are missing"
+    if any(line.kind == "weak" for line in one.calculated):
+        right += ", faintly those too weak to be seen"
+    return (
+        f"{left}; {right}. The line’s weight is its intensity, calculated ones laid on the "
+        "measured phase by phase."
     )
 
 
@@ -116,7 +145,8 @@ def _table(one: Scene) -> str:
 
 def _ring_rows(one: Scene, ring: int) -> str:
     pattern, hypothesis = one.pattern, one.hypothesis
-    measured = [str(ring + 1), f"{pattern.d_A[ring]:.4f}", f"{pattern.sigma_A[ring]:.4f}"]
+    measured = [str(ring + 1), f"{pattern.d_A[ring]:.4f}"]
+    sigma = f"{pattern.sigma_A[ring]:.4f}"
     intensity = measured_intensity(pattern, ring)
     key = ring_key(one.number, ring)
     found = [
@@ -126,19 +156,20 @@ def _ring_rows(one: Scene, ring: int) -> str:
     ]
     if not found or hypothesis is None:
         hint = _hint(one, ring)
-        cells = [*measured, "", "", "", "", intensity, ""]
+        cells = [*measured, "", "", "", "", intensity, "", sigma]
         return _row(cells, f"? unexplained{': ' + words(hint) if hint else ''}", key, strong=True)
     rows = []
     for order, a in enumerate(found):
         formula = words(hypothesis.phases[a.phase].phase.formula)
         cells = [
-            *(measured if order == 0 else ["", "", ""]),
-            f"{a.d_calc_A:.4f}",
-            hkl_text(a.hkl),
+            *(measured if order == 0 else ["", ""]),
             "",
+            hkl_text(a.hkl),
             signed_text(a.residual_sigma),
+            f"{a.d_calc_A:.4f}",
             intensity if order == 0 else "",
             f"{a.relative_intensity:.0f}",
+            sigma if order == 0 else "",
         ]
         rows.append(_row(cells, tag(a.phase) + formula, key))
     return "".join(rows)
@@ -160,8 +191,8 @@ def _missing_rows(one: Scene) -> str:
     rows = []
     for order, m in enumerate(own):
         formula = words(one.hypothesis.phases[m.phase].phase.formula)
-        cells = ["", "", "", f"{m.d_calc_A:.4f}", hkl_text(m.hkl), "", "", ""]
-        cells.append(f"{m.relative_intensity:.0f}")
+        spacing, intensity = f"{m.d_calc_A:.4f}", f"{m.relative_intensity:.0f}"
+        cells = ["", "", "", hkl_text(m.hkl), "", spacing, "", intensity, ""]
         key = missing_key(one.number, order)
         rows.append(_row(cells, f"{tag(m.phase)}{formula} × missing", key, strong=True))
     return "".join(rows)

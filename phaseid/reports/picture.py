@@ -10,7 +10,11 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
-from typing import Literal
+from typing import TYPE_CHECKING, Literal, overload
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
 
 Anchor = Literal["start", "middle", "end"]
 LETTER_WIDTH = 0.6  # of the size, for a sans-serif face; generous
@@ -52,16 +56,36 @@ class Text:
     bold: bool = False
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class Shade:
+    """Half of a photograph: `ink` (rows, columns) uint8, 0 the bare ground, 255 full ink.
+
+    It fills the box at (x, y), of which only what lies within `radius` of (centre_x, centre_y) is
+    shown.
+    """
+
+    ink: NDArray[np.uint8]
+    x: float
+    y: float
+    width: float
+    height: float
+    centre_x: float
+    centre_y: float
+    radius: float
+
+
 @dataclass(frozen=True, slots=True)
 class Group:
-    """Shapes that belong to one ring or line: `key` links them to a row, `title` tells of them."""
+    """Shapes that belong to one ring or line: `title` tells of them, `key` links them to a row of
+    the table; "" for what has none. `touched` is where they are pointed at, else the first line."""
 
     shapes: tuple[Line | Arc | Text, ...]
     key: str
     title: str
+    touched: Line | Arc | None = None
 
 
-Shape = Line | Arc | Text | Group
+Shape = Line | Arc | Text | Shade | Group
 
 
 @dataclass(frozen=True, slots=True)
@@ -78,10 +102,18 @@ def moved(shape: Shape, dx: float, dy: float) -> Shape:
     """The same shape elsewhere."""
     if isinstance(shape, Group):
         parts = tuple(_moved_part(part, dx, dy) for part in shape.shapes)
-        return replace(shape, shapes=parts)
+        touched = None if shape.touched is None else _moved_part(shape.touched, dx, dy)
+        return replace(shape, shapes=parts, touched=touched)
+    if isinstance(shape, Shade):
+        x, y = shape.centre_x + dx, shape.centre_y + dy
+        return replace(shape, x=shape.x + dx, y=shape.y + dy, centre_x=x, centre_y=y)
     return _moved_part(shape, dx, dy)
 
 
+@overload
+def _moved_part(part: Line | Arc, dx: float, dy: float) -> Line | Arc: ...
+@overload
+def _moved_part(part: Line | Arc | Text, dx: float, dy: float) -> Line | Arc | Text: ...
 def _moved_part(part: Line | Arc | Text, dx: float, dy: float) -> Line | Arc | Text:
     if isinstance(part, Line):
         return replace(part, points=tuple((x + dx, y + dy) for x, y in part.points))

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable
+from dataclasses import replace
 from typing import Literal
 
 from phaseid.reports.picture import (
@@ -21,6 +22,7 @@ from phaseid.reports.picture import (
     tick_text,
     ticks,
 )
+from phaseid.reports.picture_plate import half_plate
 from phaseid.reports.picture_scene import CalculatedLine, MeasuredRing, Scene
 from phaseid.reports.picture_style import phase_letter, phase_role
 from phaseid.reports.plain import shorten
@@ -33,6 +35,8 @@ RULER_Y = TOP + 2 * RADIUS + 16
 LEGEND_Y, LEGEND_STEP = RULER_Y + 58, 20.0
 LABEL_SIZE = 11.0
 UNCROWDED = 16
+MARK_LENGTH, LEFTOVER_GAP = 26.0, 4.5
+WEAK_WIDTH = 0.8
 _LETTERS_WIDE = 56
 
 
@@ -46,16 +50,19 @@ def disc(scene: Scene) -> Picture:
         else [Text(CENTRE_X + RADIUS / 2, CENTRE_Y, "no line matches", "soft", 13.0, "middle")]
     )
     shapes = [
+        *_plate(scene, "left", reach),
         *_ground(reach),
         *right,
-        *_measured_half(scene.measured, "left", reach, room),
+        *_measured_half(scene, "left", reach, room),
         *_heads("measured", "calculated"),
     ]
     left = sum(not ring.phases for ring in scene.measured)
-    missing = sum(line.ring is None for line in scene.calculated)
+    missing = sum(line.kind == "missing" for line in scene.calculated)
+    image = "the image itself, " if scene.pattern.disc is not None else ""
     label = (
-        f"Disc of rings, left half measured ({len(scene.measured)} rings, {left} unexplained), "
-        f"right half calculated ({missing} strong lines missing). Every ring stands in the table."
+        f"Disc of rings, left half measured ({image}{len(scene.measured)} rings, {left} "
+        f"unexplained), right half calculated ({missing} strong lines missing). Every ring stands "
+        "in the table."
     )
     return _with_legend(shapes, [scene], label)
 
@@ -65,9 +72,11 @@ def disc_of_two(first: Scene, second: Scene) -> Picture:
     reach = _reach([first, second])
     room = Room([])
     shapes = [
+        *_plate(first, "left", reach),
+        *_plate(second, "right", reach),
         *_ground(reach),
-        *_measured_half(first.measured, "left", reach, room),
-        *_measured_half(second.measured, "right", reach, room),
+        *_measured_half(first, "left", reach, room),
+        *_measured_half(second, "right", reach, room),
         *_heads(*(shorten(s.pattern.probe.label, 24) for s in (first, second))),
     ]
     label = (
@@ -82,6 +91,18 @@ def _reach(scenes: Iterable[Scene]) -> float:
     spacings = [mark.true_d_A for scene in scenes for mark in scene.measured]
     spacings += [line.d_A for scene in scenes for line in scene.calculated]
     return 1.04 / min(spacings, default=1.0)
+
+
+def _plate(scene: Scene, side: Side, reach: float) -> list[Shape]:
+    plate = half_plate(
+        scene.pattern,
+        scene.factor,
+        side,
+        units_per_g=RADIUS / reach,
+        centre=(CENTRE_X, CENTRE_Y),
+        radius=RADIUS,
+    )
+    return [] if plate is None else [plate]
 
 
 def _ground(reach: float) -> list[Shape]:
@@ -118,46 +139,85 @@ def line_weight(height: float, rings: int) -> float:
     return fine * (1.0 + 4.0 * math.sqrt(max(height, 0.0) / 100.0))
 
 
-def _measured_half(
-    rings: tuple[MeasuredRing, ...], side: Side, reach: float, room: Room
-) -> list[Shape]:
+def _measured_half(scene: Scene, side: Side, reach: float, room: Room) -> list[Shape]:
+    """The rings, by weight; on an image only their ends, so that the image is seen."""
     marks: list[Shape] = []
-    ordered = sorted(rings, key=lambda ring: (bool(ring.phases), -ring.height))
-    for ring in ordered:
+    rings = scene.measured
+    low = 90.0 if side == "left" else -90.0
+    for ring in sorted(rings, key=lambda ring: (bool(ring.phases), -ring.height)):
         radius = RADIUS / ring.true_d_A / reach
         weight = line_weight(ring.height, len(rings))
-        shapes: list[Line | Arc | Text] = []
-        if ring.phases:
-            step = 180.0 / len(ring.phases)
-            for part, phase in enumerate(ring.phases):
-                low = (90.0 if side == "left" else -90.0) + part * step
-                shapes.append(_arc(radius, low, low + step, f"ring {phase_role(phase)}", weight))
-        else:
-            low = 90.0 if side == "left" else -90.0
-            shapes.append(_arc(radius, low, low + 180, "leftover ink", weight + 3.0))
-            shapes.append(_arc(radius, low, low + 180, "hollow ground", weight + 0.4))
+        whole = _arc(radius, low, low + 180, "", weight)
+        draw = _full_ring if scene.pattern.disc is None else _marked_ring
+        shapes: list[Line | Arc | Text] = [*draw(ring, whole)]
         words = str(ring.ring + 1) if ring.phases else f"{ring.ring + 1} ?"
         role = phase_role(ring.phases[0]) if ring.phases else "ink"
         if label := _label(words, role, radius, side, room, bold=not ring.phases):
             shapes.append(label)
-        marks.append(Group(tuple(shapes), ring.key, ring.title))
+        marks.append(Group(tuple(shapes), ring.key, ring.title, touched=whole))
     return marks
+
+
+def _full_ring(ring: MeasuredRing, whole: Arc) -> list[Arc]:
+    if not ring.phases:
+        return [
+            replace(whole, role="leftover ink", width=whole.width + 3.0),
+            replace(whole, role="hollow ground", width=whole.width + 0.4),
+        ]
+    step = (whole.end_deg - whole.start_deg) / len(ring.phases)
+    return [
+        replace(
+            whole,
+            start_deg=whole.start_deg + part * step,
+            end_deg=whole.start_deg + (part + 1) * step,
+            role=f"ring {phase_role(phase)}",
+        )
+        for part, phase in enumerate(ring.phases)
+    ]
+
+
+def _marked_ring(ring: MeasuredRing, whole: Arc) -> list[Arc]:
+    if not ring.phases:
+        return [
+            replace(whole, role="leftover ink", radius=whole.radius + off, width=1.4)
+            for off in (-LEFTOVER_GAP, LEFTOVER_GAP)
+        ]
+    turn = math.degrees(MARK_LENGTH / whole.radius)
+    ends = (
+        (whole.start_deg, whole.start_deg + turn, ring.phases[0]),
+        (whole.end_deg - turn, whole.end_deg, ring.phases[-1]),
+    )
+    return [
+        replace(whole, start_deg=start, end_deg=end, role=phase_role(phase))
+        for start, end, phase in ends
+    ]
 
 
 def _calculated_half(lines: tuple[CalculatedLine, ...], reach: float, room: Room) -> list[Shape]:
     marks: list[Shape] = []
-    for line in sorted(lines, key=lambda line: (line.ring is not None, -line.height)):
+    strong = sum(line.kind != "weak" for line in lines)
+    order = {"weak": 0, "missing": 1, "found": 2}
+    for line in sorted(lines, key=lambda line: (order[line.kind], -line.height)):
         radius = RADIUS / line.d_A / reach
         role = phase_role(line.phase)
-        kind = "ring" if line.ring is not None else "missing"
-        weight = line_weight(line.height, len(lines))
+        if line.kind == "weak":
+            arc = _arc(radius, -90, 90, f"weak {role}", WEAK_WIDTH)
+            marks.append(Group((arc,), line.key, line.title))
+            continue
+        missing = line.kind == "missing"
+        weight = line_weight(line.height, strong)
+        kind = "missing" if missing else "ring"
         shapes: list[Line | Arc | Text] = [_arc(radius, -90, 90, f"{kind} {role}", weight)]
-        hkl = "".join(str(k) if 0 <= k <= 9 else f" {k} " for k in line.hkl).strip()
-        words = f"{phase_letter(line.phase)} {hkl}" + (" ×" if line.ring is None else "")
-        if label := _label(words, role, radius, "right", room, bold=line.ring is None):
+        words = f"{phase_letter(line.phase)} {_short_hkl(line.hkl)}" + (" ×" if missing else "")
+        if label := _label(words, role, radius, "right", room, bold=missing):
             shapes.append(label)
         marks.append(Group(tuple(shapes), line.key, line.title))
     return marks
+
+
+def _short_hkl(hkl: tuple[int, int, int]) -> str:
+    """Indices in a row where each is one digit, else with blanks: 111, 1 0 10, 1 1 -2."""
+    return "".join(map(str, hkl)) if all(0 <= k <= 9 for k in hkl) else " ".join(map(str, hkl))
 
 
 def _arc(radius: float, start: float, end: float, role: str, width: float) -> Arc:
@@ -195,11 +255,15 @@ def _with_legend(shapes: list[Shape], scenes: list[Scene], label: str) -> Pictur
             shapes.append(Line(((x, y - 4), (x + 44, y - 4)), role, weight))
         shapes.append(Text(x + 54, y, "?  measured, unexplained", "ink", 12.0, bold=True))
         y += LEGEND_STEP
-    if any(line.ring is None for scene in scenes for line in scene.calculated):
+    if any(line.kind == "missing" for scene in scenes for line in scene.calculated):
         where = " (in the sticks)" if len(scenes) > 1 else ""
         words = f"×  calculated strong, not measured{where}"
         shapes.append(Line(((x, y - 4), (x + 44, y - 4)), "missing ink", 3.0))
         shapes.append(Text(x + 54, y, words, "ink", 12.0, bold=True))
+        y += LEGEND_STEP
+    if len(scenes) == 1 and any(line.kind == "weak" for line in scenes[0].calculated):
+        shapes.append(Line(((x, y - 4), (x + 44, y - 4)), "weak ink", WEAK_WIDTH))
+        shapes.append(Text(x + 54, y, "calculated, too weak to be seen here", "ink", 12.0))
         y += LEGEND_STEP
     for note in _notes(scenes):
         shapes.append(Text(x, y, note, "soft", 11.0))
@@ -215,4 +279,6 @@ def _notes(scenes: list[Scene]) -> list[str]:
         notes.append(f"{half if many else ''}{scene.scale_text}{after}")
         if not scene.has_intensity:
             notes.append(f"{half if many else ''}no intensities given: lines of one weight")
+        if scene.pattern.disc is not None:
+            notes.append(f"{half if many else ''}the measured image; on light ground a negative")
     return notes

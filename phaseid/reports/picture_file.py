@@ -4,10 +4,14 @@ from __future__ import annotations
 
 import os
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from phaseid.errors import InputError
 from phaseid.matching.identification import Identification
 from phaseid.reports.picture_axis import AxisName
+
+if TYPE_CHECKING:
+    from phaseid.library import Library
 
 SUFFIXES = (".png", ".svg", ".pdf")
 
@@ -43,11 +47,17 @@ def check_folder(path: str | Path) -> None:
         )
 
 
-def picture_bytes(answer: Identification, suffix: str, *, axis: AxisName | None = None) -> bytes:
-    """The picture in the format of `suffix` (.png, .svg, .pdf)."""
+def picture_bytes(
+    answer: Identification,
+    suffix: str,
+    *,
+    axis: AxisName | None = None,
+    library: Library | None = None,
+) -> bytes:
+    """The picture in the format of `suffix` (.png, .svg, .pdf); `library` as in `sheet`."""
     from phaseid.reports.picture_sheet import sheet
 
-    picture = sheet(answer, axis=axis)
+    picture = sheet(answer, axis=axis, library=library)
     if suffix == ".svg":
         from phaseid.reports.picture_svg import svg_file
 
@@ -62,14 +72,20 @@ def picture_bytes(answer: Identification, suffix: str, *, axis: AxisName | None 
 
 
 def write_picture(
-    answer: Identification, path: str | Path, *, axis: AxisName | None = None
+    answer: Identification,
+    path: str | Path,
+    *,
+    axis: AxisName | None = None,
+    library: Library | None = None,
 ) -> None:
     """Draw the identification into a file; its suffix says how.
 
-    Raises InputError for another suffix than .png, .svg, .pdf, or where it cannot be written.
+    With the answer's `library`, its lines that are too weak to be seen are drawn faintly. Raises
+    InputError for another suffix than .png, .svg, .pdf, or where it cannot be written.
     """
     check_picture_path(path)
-    write_whole(path, picture_bytes(answer, Path(path).suffix.lower(), axis=axis))
+    suffix = Path(path).suffix.lower()
+    write_whole(path, picture_bytes(answer, suffix, axis=axis, library=library))
 
 
 def write_whole(path: str | Path, content: bytes) -> None:

@@ -6,7 +6,7 @@ import io
 import warnings
 from typing import TYPE_CHECKING, Any, Literal
 
-from phaseid.reports.picture import Arc, Group, Line, Picture, Shape, Text, arc_points
+from phaseid.reports.picture import Arc, Group, Line, Picture, Shade, Shape, Text, arc_points
 from phaseid.reports.picture_style import LIGHT, colour, dashes
 from phaseid.reports.plain import safe
 
@@ -55,12 +55,28 @@ def _draw(axes: Axes, shape: Shape, order: int) -> None:
                 _halo(axes, part, order)
     elif isinstance(shape, Text):
         _write(axes, shape, order)
+    elif isinstance(shape, Shade):
+        _lay(axes, shape, order)
     elif isinstance(shape, Line) and shape.filled:
         from matplotlib.patches import Polygon
 
         axes.add_patch(Polygon(shape.points, color=colour(shape.role), lw=0, zorder=order))
     else:
         _stroke(axes, shape, order)
+
+
+def _lay(axes: Axes, shade: Shade, order: int) -> None:
+    """Ink as opaque as the image has it, within its circle."""
+    import numpy as np
+    from matplotlib.patches import Circle
+
+    red, green, blue = (int(LIGHT.ink[k : k + 2], 16) for k in (1, 3, 5))
+    dots = np.empty((*shade.ink.shape, 4), dtype=np.uint8)
+    dots[..., 0], dots[..., 1], dots[..., 2], dots[..., 3] = red, green, blue, shade.ink
+    box = (shade.x, shade.x + shade.width, shade.y + shade.height, shade.y)
+    image = axes.imshow(dots, extent=box, aspect="auto", interpolation="none", zorder=order)
+    circle = Circle((shade.centre_x, shade.centre_y), shade.radius, transform=axes.transData)
+    image.set_clip_path(circle)
 
 
 def _stroke(axes: Axes, shape: Line | Arc, order: int) -> None:

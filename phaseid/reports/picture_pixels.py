@@ -14,7 +14,7 @@ from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from phaseid.reports.picture import Arc, Group, Line, Picture, Shape, Text
+from phaseid.reports.picture import Arc, Group, Line, Picture, Shade, Shape, Text
 from phaseid.reports.picture_style import LIGHT, colour, dashes
 from phaseid.reports.plain import safe
 
@@ -42,9 +42,10 @@ def png(picture: Picture) -> bytes:
     wide, high = (math.ceil(size * DOTS) for size in (picture.width, picture.height))
     sheet = Image.new("RGB", (wide, high), LIGHT.ground)
     parts = list(_parts(picture.shapes))
+    masks = {id(part): _mask(part) for part in parts if isinstance(part, Shade)}
     for top in range(0, high, _BAND):
         rows = min(_BAND, high - top)
-        sheet.paste(_band(parts, wide, rows, top), (0, top))
+        sheet.paste(_band(parts, masks, wide, rows, top), (0, top))
     _write(sheet, picture.shapes)
     told = PngInfo()
     told.add_itxt("Title", safe(picture.label))
@@ -58,15 +59,17 @@ def png(picture: Picture) -> bytes:
 _DEFLATE = 4  # quicker than the usual 6, and hardly larger for plain lines
 
 
-def _parts(shapes: tuple[Shape, ...]) -> Iterator[Line | Arc]:
+def _parts(shapes: tuple[Shape, ...]) -> Iterator[Line | Arc | Shade]:
     for shape in shapes:
         for part in shape.shapes if isinstance(shape, Group) else (shape,):
             if not isinstance(part, Text):
                 yield part
 
 
-def _band(parts: list[Line | Arc], wide: int, rows: int, top: int) -> Image:
-    """Some rows of the sheet, without words."""
+def _band(
+    parts: list[Line | Arc | Shade], masks: dict[int, Image], wide: int, rows: int, top: int
+) -> Image:
+    """Some rows of the sheet, without words; `masks` are those of the images, by identity."""
     from PIL import Image, ImageDraw
 
     fine = Image.new("RGB", (wide * _OVER, rows * _OVER), LIGHT.ground)
@@ -74,16 +77,37 @@ def _band(parts: list[Line | Arc], wide: int, rows: int, top: int) -> Image:
     low, high = top / DOTS, (top + rows) / DOTS
     for part in parts:
         above, below = _extent(part)
-        if below >= low and above <= high:
+        if below < low or above > high:
+            continue
+        if isinstance(part, Shade):
+            place = (round(part.x * _FINE), round((part.y - low) * _FINE))
+            fine.paste(LIGHT.ink, place, masks[id(part)])
+        else:
             _draw(pen, part, low)
     return fine.reduce(_OVER)
 
 
-def _extent(part: Line | Arc) -> tuple[float, float]:
+def _extent(part: Line | Arc | Shade) -> tuple[float, float]:
+    """How far up and down a part reaches."""
+    if isinstance(part, Shade):
+        return part.centre_y - part.radius, part.centre_y + part.radius
     if isinstance(part, Arc):
         return part.y - part.radius - part.width, part.y + part.radius + part.width
     heights = [y for _, y in part.points]
     return min(heights) - part.width, max(heights) + part.width
+
+
+def _mask(shade: Shade) -> Image:
+    """How much ink each fine dot of an image's box takes, none beyond its circle."""
+    from PIL import Image, ImageDraw
+
+    size = (round(shade.width * _FINE), round(shade.height * _FINE))
+    ink = Image.fromarray(shade.ink).resize(size, Image.Resampling.BILINEAR)
+    x, y = (shade.centre_x - shade.x) * _FINE, (shade.centre_y - shade.y) * _FINE
+    radius = shade.radius * _FINE
+    within = Image.new("L", size)
+    ImageDraw.Draw(within).ellipse((x - radius, y - radius, x + radius, y + radius), fill=255)
+    return Image.composite(ink, Image.new("L", size), within)
 
 
 def _draw(pen: ImageDraw, part: Line | Arc, low: float) -> None:
@@ -179,15 +203,17 @@ def _write(sheet: Image, shapes: tuple[Shape, ...]) -> None:
     from PIL import ImageDraw
 
     pen = ImageDraw.Draw(sheet)
-    for shape in shapes:
-        if isinstance(shape, Group):
-            for part in shape.shapes:
-                if isinstance(part, Text):
-                    _set(pen, part, halo=True)
-    for shape in shapes:
-        for part in shape.shapes if isinstance(shape, Group) else (shape,):
-            if isinstance(part, Text):
-                _set(pen, part, halo=False)
+    on_lines = [
+        part
+        for shape in shapes
+        if isinstance(shape, Group)
+        for part in shape.shapes
+        if isinstance(part, Text)
+    ]
+    for text in on_lines:
+        _set(pen, text, halo=True)
+    for text in (*on_lines, *(shape for shape in shapes if isinstance(shape, Text))):
+        _set(pen, text, halo=False)
 
 
 def _set(pen: ImageDraw, text: Text, *, halo: bool) -> None:

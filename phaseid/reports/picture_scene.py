@@ -4,6 +4,10 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Literal
+
+import numpy as np
+from numpy.typing import NDArray
 
 from phaseid.matching.identification import (
     Assignment,
@@ -13,8 +17,13 @@ from phaseid.matching.identification import (
     Scale,
 )
 from phaseid.reports.picture_style import phase_letter
+from phaseid.reports.picture_weak import WeakLine, weak_lines
 from phaseid.reports.plain import hkl_text, phase_text, safe, signed_text
+from phaseid.rings.columns import COLUMNS
 from phaseid.rings.ringlist import RingList
+
+if TYPE_CHECKING:
+    from phaseid.library import Library
 
 UNKNOWN_HEIGHT = 45.0
 
@@ -43,23 +52,27 @@ class MeasuredRing:
 
 @dataclass(frozen=True, slots=True)
 class CalculatedLine:
-    """A line of phase `phase` that explains `ring`, or is missing (`ring` None).
+    """A line of phase `phase`: it explains a ring, is strong and missing, or too weak to be seen.
 
     `height` is its intensity on the scale of the measured ones, per phase.
     """
 
+    kind: Literal["found", "missing", "weak"]
     phase: int
     hkl: tuple[int, int, int]
     d_A: float
     height: float
-    ring: int | None
     key: str
     title: str
 
 
 @dataclass(frozen=True, slots=True)
 class Scene:
-    """One pattern beside one answer; `number` counts patterns from 0."""
+    """One pattern beside one answer; `number` counts patterns from 0.
+
+    `curve` (k, 2) is the measured curve, true d (Å) and height (highest = 100); None for a list
+    from a file.
+    """
 
     number: int
     pattern: RingList
@@ -68,6 +81,12 @@ class Scene:
     calculated: tuple[CalculatedLine, ...]
     scale: Scale | None
     has_intensity: bool
+    curve: NDArray[np.float64] | None = None
+
+    @property
+    def factor(self) -> float:
+        """Measured d / true d; 1 where no scale was fitted."""
+        return 1.0 if self.scale is None else self.scale.factor
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -88,14 +107,26 @@ class Scene:
         return f"scale {self.scale.factor:.4f} ± {self.scale.sigma:.4f}, {stated}"
 
 
-def scene(answer: Identification, hypothesis: Hypothesis | None, number: int) -> Scene:
-    """Gather the rings and lines of pattern `number` under `hypothesis` (None: no answer)."""
+def scene(
+    answer: Identification,
+    hypothesis: Hypothesis | None,
+    number: int,
+    library: Library | None = None,
+) -> Scene:
+    """Gather the rings and lines of pattern `number` under `hypothesis` (None: no answer).
+
+    Lines too weak to be seen are in `library`, that of the answer; without it there are none.
+    Raises InputError where it does not hold a phase of the answer.
+    """
     pattern = answer.patterns[number]
     heights = [float(value) for value in pattern.intensity]
     scale = None
     if hypothesis is not None:
         scale = next((s for s in hypothesis.scale if s.pattern == number), None)
     factor = 1.0 if scale is None else scale.factor
+    weak: tuple[WeakLine, ...] = ()
+    if hypothesis is not None and library is not None:
+        weak = weak_lines(hypothesis, number, pattern, library)
     return Scene(
         number=number,
         pattern=pattern,
@@ -103,10 +134,29 @@ def scene(answer: Identification, hypothesis: Hypothesis | None, number: int) ->
         measured=tuple(
             _measured(pattern, hypothesis, number, ring, factor) for ring in range(len(pattern))
         ),
-        calculated=() if hypothesis is None else _calculated(hypothesis, number, heights),
+        calculated=() if hypothesis is None else _calculated(hypothesis, number, heights, weak),
         scale=scale,
         has_intensity=any(not math.isnan(value) for value in heights),
+        curve=_curve(pattern, factor),
     )
+
+
+def _curve(pattern: RingList, factor: float) -> NDArray[np.float64] | None:
+    """The measured curve on true spacings, as the rings' own spacings say where these are."""
+    if pattern.curve is None:
+        return None
+    position, height = pattern.curve[pattern.curve[:, 0] > 0].T
+    column, probe = COLUMNS[pattern.position_column], pattern.probe
+    constant = pattern.camera_constant.value if pattern.camera_constant else 1.0
+    plain = column.d_A(position, probe.wavelength_A, constant)
+    rings = column.d_A(pattern.position, probe.wavelength_A, constant)
+    order = np.argsort(pattern.position)
+    # a calibration moved the rings: the curve goes with them
+    moved = np.interp(position, pattern.position[order], (pattern.d_A / rings)[order])
+    d_A = plain * moved / factor
+    shown = (d_A >= pattern.d_A.min() / factor * 0.98) & (d_A <= pattern.d_A.max() / factor * 1.02)
+    highest = float(height[shown].max(initial=0.0))
+    return np.stack([d_A, height * (100.0 / highest)], axis=1) if highest > 0 else None
 
 
 def _measured(
@@ -151,7 +201,7 @@ def missing_key(number: int, order: int) -> str:
 
 
 def _calculated(
-    hypothesis: Hypothesis, number: int, heights: list[float]
+    hypothesis: Hypothesis, number: int, heights: list[float], weak: tuple[WeakLine, ...]
 ) -> tuple[CalculatedLine, ...]:
     factors = [
         _intensity_factor(hypothesis, number, phase, heights)
@@ -159,11 +209,11 @@ def _calculated(
     ]
     matched = [
         CalculatedLine(
+            kind="found",
             phase=a.phase,
             hkl=a.hkl,
             d_A=a.d_calc_A,
             height=min(100.0, a.relative_intensity * factors[a.phase]),
-            ring=a.ring,
             key=ring_key(number, a.ring),
             title=f"{_told(hypothesis, a)}, ring {a.ring + 1}",
         )
@@ -172,24 +222,42 @@ def _calculated(
     ]
     missing = [
         CalculatedLine(
+            kind="missing",
             phase=m.phase,
             hkl=m.hkl,
             d_A=m.d_calc_A,
             height=min(100.0, m.relative_intensity * factors[m.phase]),
-            ring=None,
             key=missing_key(number, order),
             title=f"Missing: {_told(hypothesis, m)}",
         )
         for order, m in enumerate(m for m in hypothesis.missing if m.pattern == number)
     ]
-    return tuple(sorted([*matched, *missing], key=lambda line: -line.d_A))
+    faint = [
+        CalculatedLine(
+            kind="weak",
+            phase=w.phase,
+            hkl=w.hkl,
+            d_A=w.d_A,
+            height=min(100.0, w.relative_intensity * factors[w.phase]),
+            key="",
+            title=f"Too weak to be seen, or behind another: {_line_told(hypothesis, *w)}",
+        )
+        for w in weak
+    ]
+    return tuple(sorted([*matched, *missing, *faint], key=lambda line: -line.d_A))
 
 
 def _told(hypothesis: Hypothesis, line: Assignment | Missing) -> str:
-    formula = safe(hypothesis.phases[line.phase].phase.formula)
+    return _line_told(hypothesis, line.phase, line.hkl, line.d_calc_A, line.relative_intensity)
+
+
+def _line_told(
+    hypothesis: Hypothesis, phase: int, hkl: tuple[int, int, int], d_A: float, intensity: float
+) -> str:
+    formula = safe(hypothesis.phases[phase].phase.formula)
     return (
-        f"{phase_letter(line.phase)} {formula} {hkl_text(line.hkl)}, calculated "
-        f"{line.d_calc_A:.4f} Å, intensity {line.relative_intensity:.0f} of 100"
+        f"{phase_letter(phase)} {formula} {hkl_text(hkl)}, calculated "
+        f"{d_A:.4f} Å, intensity {intensity:.0f} of 100"
     )
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import textwrap
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from phaseid import __version__
 from phaseid.matching.identification import Identification
@@ -15,15 +16,23 @@ from phaseid.reports.picture_scene import scene
 from phaseid.reports.picture_sticks import sticks
 from phaseid.reports.plain import phase_text, probability_text, safe, shorten
 
+if TYPE_CHECKING:
+    from phaseid.library import Library
+
 MARGIN, GAP = 24.0, 28.0
 BAR_HEIGHT = 16.0
 _LINE = 22.0
 
 
-def sheet(answer: Identification, *, axis: AxisName | None = None) -> Picture:
-    """Draw the best answer: two patterns share one disc, otherwise each pattern has its own."""
+def sheet(
+    answer: Identification, *, axis: AxisName | None = None, library: Library | None = None
+) -> Picture:
+    """Draw the best answer: two patterns share one disc, otherwise each pattern has its own.
+
+    With the answer's `library`, its lines that are too weak to be seen are drawn faintly.
+    """
     best = answer.hypotheses[0] if answer.hypotheses else None
-    scenes = [scene(answer, best, number) for number in range(len(answer.patterns))]
+    scenes = [scene(answer, best, number, library) for number in range(len(answer.patterns))]
     stick_pictures = [sticks(s, axis_for(s.pattern, axis)) for s in scenes]
     discs = [disc_of_two(*scenes)] if len(scenes) == 2 else [disc(s) for s in scenes]
     column = MARGIN + discs[0].width + GAP

@@ -27,7 +27,9 @@ RESIDUAL_TOP, RESIDUAL_END = 286.0, 370.0
 RULER_Y = RESIDUAL_END
 FARTHEST_SIGMA = 4.0
 LABEL_SIZE = 11.0
-SMALLEST_STICK, SMALLEST_LEFTOVER = 3.0, 9.0
+SMALLEST_STICK, SMALLEST_LEFTOVER, SMALLEST_WEAK = 3.0, 9.0, 1.5
+STICK, STICK_ON_CURVE = 3.0, 1.2
+CURVE_STEP = 0.75
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,12 +54,15 @@ def sticks(scene: Scene, axis: Axis) -> Picture:
     calculated = [line for line in scene.calculated if is_on(axis, line.d_A)]
     span = _span(axis, [r.true_d_A for r in measured] + [c.d_A for c in calculated])
     room = Room([])
-    lines = sorted(calculated, key=lambda line: (line.ring is not None, -line.height))
+    order = {"weak": 0, "missing": 1, "found": 2}
+    lines = sorted(calculated, key=lambda line: (order[line.kind], -line.height))
     rings = sorted(measured, key=lambda ring: (bool(ring.phases), -ring.height))
+    wide = STICK if scene.curve is None else STICK_ON_CURVE
     shapes: list[Shape] = [
+        *_curve(span, scene),
         *_frame(span, scene),
         *(_down(line, span, room) for line in lines),
-        *(_up(ring, span, room) for ring in rings),
+        *(_up(ring, span, room, wide) for ring in rings),
         *(_residual(ring, span, room) for ring in measured if ring.phases),
     ]
     label = (
@@ -90,6 +95,9 @@ def _frame(span: _Span, scene: Scene) -> list[Shape]:
     ]
     if not scene.has_intensity:
         shapes.append(Text(16.0, 16, "no intensities given: sticks of one height", "soft", 11.0))
+    elif scene.curve is not None:
+        words = "sticks: areas; behind them the measured curve less its background"
+        shapes.append(Text(16.0, 16, words, "soft", 11.0))
     for level in (-3.0, 0.0, 3.0):
         words = "0" if level == 0 else f"{level:+.0f}"
         shapes.append(Text(LEFT - 8, _sigma_y(level) + 4, words, "soft", 11.0, "end"))
@@ -104,12 +112,32 @@ def _frame(span: _Span, scene: Scene) -> list[Shape]:
     return shapes
 
 
+def _curve(span: _Span, scene: Scene) -> list[Shape]:
+    """The measured curve behind the sticks: in every step across the highest point of it."""
+    if scene.curve is None:
+        return []
+    highest: dict[int, float] = {}
+    for d_A, height in scene.curve.tolist():
+        x = span.x(d_A) if is_on(span.axis, d_A) else -1.0
+        if LEFT <= x <= RIGHT:
+            step = round(x / CURVE_STEP)
+            highest[step] = max(highest.get(step, 0.0), min(height, 100.0))
+    if len(highest) < 2:
+        return []
+    points = tuple(
+        (step * CURVE_STEP, BASE - height / 100.0 * (BASE - UP_TOP))
+        for step, height in sorted(highest.items())
+    )
+    under = ((points[-1][0], BASE), (points[0][0], BASE))
+    return [Line((*points, *under), "faint", filled=True), Line(points, "soft", 0.8)]
+
+
 def _sigma_y(sigma: float) -> float:
     middle = (RESIDUAL_TOP + RESIDUAL_END) / 2
     return middle - sigma / FARTHEST_SIGMA * (RESIDUAL_END - RESIDUAL_TOP) / 2
 
 
-def _up(ring: MeasuredRing, span: _Span, room: Room) -> Group:
+def _up(ring: MeasuredRing, span: _Span, room: Room, wide: float) -> Group:
     x = span.x(ring.true_d_A)
     smallest = SMALLEST_STICK if ring.phases else SMALLEST_LEFTOVER
     top = BASE - max(ring.height / 100.0 * (BASE - UP_TOP), smallest)
@@ -117,7 +145,7 @@ def _up(ring: MeasuredRing, span: _Span, room: Room) -> Group:
     if ring.phases:
         step = (BASE - top) / len(ring.phases)
         shapes = [
-            Line(((x, BASE - k * step), (x, BASE - (k + 1) * step)), phase_role(phase), 3.0)
+            Line(((x, BASE - k * step), (x, BASE - (k + 1) * step)), phase_role(phase), wide)
             for k, phase in enumerate(ring.phases)
         ]
         words = "".join(phase_letter(phase) for phase in ring.phases)
@@ -139,9 +167,13 @@ def _up(ring: MeasuredRing, span: _Span, room: Room) -> Group:
 
 def _down(line: CalculatedLine, span: _Span, room: Room) -> Group:
     x, role = span.x(line.d_A), phase_role(line.phase)
-    end = BASE + max(line.height / 100.0 * (DOWN_END - BASE - 14), SMALLEST_STICK)
+    smallest = SMALLEST_WEAK if line.kind == "weak" else SMALLEST_STICK
+    end = BASE + max(line.height / 100.0 * (DOWN_END - BASE - 14), smallest)
     letter = phase_letter(line.phase)
-    missing = line.ring is None
+    if line.kind == "weak":
+        stick = Line(((x, BASE), (x, end)), f"weak {role}", 2.0)
+        return Group((stick,), line.key, line.title)
+    missing = line.kind == "missing"
     shapes: list[Line | Text] = [
         Line(((x, BASE), (x, end)), f"missing {role}" if missing else role, 3.0)
     ]

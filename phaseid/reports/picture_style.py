@@ -36,6 +36,7 @@ DASHES: tuple[tuple[float, ...], ...] = (
     (10.0, 3.0, 3.0, 3.0, 3.0, 3.0),
 )
 MISSING_DASH = (1.5, 4.5)
+WEAK_OPACITY = 0.5
 
 
 def phase_letter(index: int) -> str:
@@ -49,18 +50,31 @@ def phase_role(index: int) -> str:
 
 
 def colour(role: str, palette: Palette = LIGHT) -> str:
-    """The colour of a role, whose first word decides; "missing phase2" is that of phase 2."""
-    for word in role.split():
+    """The colour of a role: "missing phase2" is that of phase 2, "weak phase2" half as strong."""
+    named = {
+        "ground": palette.ground,
+        "soft": palette.soft,
+        "faint": palette.faint,
+        "ink": palette.ink,
+    }
+    words = role.split()
+    found = palette.ink
+    for word in words:
         if word.startswith("phase"):
-            return palette.phases[int(word[5:]) - 1]
-        if word in ("ground", "soft", "faint", "ink"):
-            return {
-                "ground": palette.ground,
-                "soft": palette.soft,
-                "faint": palette.faint,
-                "ink": palette.ink,
-            }[word]
-    return palette.ink
+            found = palette.phases[int(word[5:]) - 1]
+            break
+        if word in named:
+            found = named[word]
+            break
+    return _mixed(found, palette.ground, WEAK_OPACITY) if "weak" in words else found
+
+
+def _mixed(colour: str, ground: str, opacity: float) -> str:
+    parts = (
+        round(opacity * int(colour[k : k + 2], 16) + (1 - opacity) * int(ground[k : k + 2], 16))
+        for k in (1, 3, 5)
+    )
+    return "#" + "".join(f"{part:02x}" for part in parts)
 
 
 def dashes(role: str) -> tuple[float, ...]:
@@ -96,6 +110,8 @@ def picture_css() -> str:
         "paint-order:stroke;stroke-linejoin:round}",
         ".picture polygon{fill:var(--ink);stroke:none}",
         ".picture text.bold{font-weight:600}",
+        "@media screen and (prefers-color-scheme:dark){.picture .image{filter:invert(1)}}",
+        f".picture polyline.weak,.picture path.weak{{stroke-opacity:{WEAK_OPACITY}}}",
     ]
     names = ["ground", "soft", "faint", *(f"phase{k + 1}" for k in range(PHASE_STYLES))]
     for name in names:

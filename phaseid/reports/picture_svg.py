@@ -2,31 +2,62 @@
 
 from __future__ import annotations
 
+import base64
+import io
 import math
 from dataclasses import replace
 from html import escape
 
-from phaseid.reports.picture import Arc, Group, Line, Picture, Shape, Text, arc_points
+import numpy as np
+
+from phaseid.reports.picture import Arc, Group, Line, Picture, Shade, Shape, Text, arc_points
 from phaseid.reports.picture_style import LIGHT, dashes, palette_css, picture_css
 from phaseid.reports.plain import safe
 
 HIT_WIDTH = 9.0  # a line this wide can be hit with a finger or an unsteady mouse
 
 
-def svg(picture: Picture, *, hits: bool = False) -> str:
+class Store:
+    """Images that several pictures of a page show: held once, under a name."""
+
+    def __init__(self) -> None:
+        self._images: dict[bytes, str] = {}
+        self._cuts = 0
+
+    def image(self, shade: Shade) -> str:
+        """The name of an image; the same one always the same."""
+        return self._images.setdefault(_shade_png(shade), f"image-{len(self._images) + 1}")
+
+    def cut(self) -> str:
+        """A name for one more shape to cut an image by."""
+        self._cuts += 1
+        return f"cut-{self._cuts}"
+
+    def definitions(self) -> str:
+        """All images, each one unit wide and two high; nothing where there are none."""
+        images = "".join(
+            f'<image id="{name}" width="1" height="2" preserveAspectRatio="none" '
+            f'href="data:image/png;base64,{base64.b64encode(png).decode()}"/>'
+            for png, name in self._images.items()
+        )
+        return f"<defs>{images}</defs>" if images else ""
+
+
+def svg(picture: Picture, *, hits: bool = False, store: Store | None = None) -> str:
     """The picture as an `<svg>` element; its colours come from the style sheet around it.
 
-    With `hits`, unseen wide lines lie under those of rings, to be pointed at.
+    With `hits`, unseen wide lines lie under those of rings, to be pointed at. With `store`, images
+    are only referred to: the page has to hold its definitions once.
     """
     groups = [shape for shape in picture.shapes if isinstance(shape, Group)]
     unseen = "".join(_hit(group) for group in groups) if hits else ""
+    held = store or Store()
+    shapes = "".join(_shape(shape, held) for shape in picture.shapes)
     return (
         f'<svg class="picture" xmlns="http://www.w3.org/2000/svg" role="img" '
         f'viewBox="0 0 {_n(picture.width)} {_n(picture.height)}" '
         f'aria-label="{_words(picture.label)}">'
-        + unseen
-        + "".join(_shape(shape) for shape in picture.shapes)
-        + "</svg>"
+        f"{'' if store else held.definitions()}{unseen}{shapes}</svg>"
     )
 
 
@@ -42,11 +73,17 @@ def svg_file(picture: Picture) -> str:
     )
 
 
-def _shape(shape: Shape) -> str:
+def _shape(shape: Shape, store: Store) -> str:
     if isinstance(shape, Group):
-        inner = "".join(_shape(part) for part in shape.shapes)
-        title = f"<title>{_words(shape.title)}</title>"
-        return f'<g class="mark" data-key="{_words(shape.key)}">{title}{inner}</g>'
+        inner = "".join(_part(part) for part in shape.shapes)
+        key = f' data-key="{_words(shape.key)}"' if shape.key else ""
+        return f'<g class="mark"{key}><title>{_words(shape.title)}</title>{inner}</g>'
+    if isinstance(shape, Shade):
+        return _shade(shape, store)
+    return _part(shape)
+
+
+def _part(shape: Line | Arc | Text) -> str:
     if isinstance(shape, Line):
         points = " ".join(f"{_n(x)},{_n(y)}" for x, y in shape.points)
         if shape.filled:
@@ -58,12 +95,37 @@ def _shape(shape: Shape) -> str:
 
 
 def _hit(group: Group) -> str:
-    """The first line of a group, wide and unseen."""
-    line = next((part for part in group.shapes if isinstance(part, Line | Arc)), None)
-    if line is None or (isinstance(line, Line) and line.filled):
+    """Where a group is touched, else its first line, wide and unseen."""
+    first = next((part for part in group.shapes if isinstance(part, Line | Arc)), None)
+    line = group.touched or first
+    if not group.key or line is None or (isinstance(line, Line) and line.filled):
         return ""
-    wide = _shape(replace(line, role="hit", width=HIT_WIDTH))
+    wide = _part(replace(line, role="hit", width=HIT_WIDTH))
     return wide.replace(" ", f' data-key="{_words(group.key)}" ', 1)
+
+
+def _shade_png(shade: Shade) -> bytes:
+    """The ink of an image as PNG: one colour, more or less opaque, in a palette of few entries."""
+    from PIL import Image
+
+    levels = np.unique(shade.ink)
+    image = Image.fromarray(np.searchsorted(levels, shade.ink).astype(np.uint8), "P")
+    ink = tuple(int(LIGHT.ink[k : k + 2], 16) for k in (1, 3, 5))
+    image.putpalette(ink * len(levels))
+    stream = io.BytesIO()
+    image.save(stream, "PNG", optimize=True, transparency=bytes(levels.tolist()))
+    return stream.getvalue()
+
+
+def _shade(shade: Shade, store: Store) -> str:
+    """An image cut to its circle."""
+    cut = store.cut()
+    centre = f'cx="{_n(shade.centre_x)}" cy="{_n(shade.centre_y)}" r="{_n(shade.radius)}"'
+    place = f"translate({_n(shade.x)} {_n(shade.y)}) scale({shade.width:.4f})"
+    return (
+        f'<clipPath id="{cut}"><circle {centre}/></clipPath><g clip-path="url(#{cut})">'
+        f'<use class="image" href="#{store.image(shade)}" transform="{place}"/></g>'
+    )
 
 
 def _text(text: Text) -> str:

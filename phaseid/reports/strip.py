@@ -41,7 +41,7 @@ def strip(answer: Identification, number: int, width: int) -> list[str]:
     measured = _row([(x, sign) for x, sign, _ in rings], columns)
     calculated = _row(
         [
-            (column(line.d_A), "x" if line.ring is None else phase_letter(line.phase))
+            (column(line.d_A), "x" if line.kind == "missing" else phase_letter(line.phase))
             for line in one.calculated
         ],
         columns,

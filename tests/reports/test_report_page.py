@@ -156,7 +156,7 @@ def test_pictures_and_tables_have_words_for_those_who_do_not_see_them(
     # WCAG 2.1 (W3C): text alternatives (1.1.1), language (3.1.1), labels (1.3.1), keyboard (2.1.1)
     elements = _Reader(page(answer, PROVENANCE)).elements
     assert ("html", {"lang": "en"}) in elements
-    assert all(a.get("aria-label") for tag, a in elements if tag == "svg")
+    assert all(a.get("aria-label") or a.get("aria-hidden") for tag, a in elements if tag == "svg")
     assert all(a.get("scope") for tag, a in elements if tag == "th")
     labels = {a["for"] for tag, a in elements if tag == "label"}
     assert labels == {a["id"] for tag, a in elements if tag == "input"}

@@ -1,0 +1,297 @@
+"""The image, the curve and the weak lines in the picture: each where its spacing belongs."""
+
+from __future__ import annotations
+
+import base64
+import io
+import math
+import re
+import xml.etree.ElementTree as ET
+from dataclasses import replace
+from types import SimpleNamespace
+from typing import Any, cast
+
+import numpy as np
+import pytest
+from numpy.typing import NDArray
+
+from phaseid.crystal.lines import Lines
+from phaseid.library import Library
+from phaseid.matching.identification import Identification
+from phaseid.reports.picture import Group, Line, Picture, Shade
+from phaseid.reports.picture_axis import axis_for
+from phaseid.reports.picture_disc import CENTRE_X, CENTRE_Y, RADIUS, disc, disc_of_two
+from phaseid.reports.picture_paper import pdf
+from phaseid.reports.picture_pixels import DOTS, png
+from phaseid.reports.picture_scene import scene
+from phaseid.reports.picture_sticks import BASE, UP_TOP, sticks
+from phaseid.reports.picture_svg import Store, svg, svg_file
+from phaseid.reports.picture_weak import weak_lines
+from phaseid.rings.measuring.disc import Disc
+
+CONSTANT = 980.0  # Å px
+SIDE = 401
+PX = 4.1
+
+
+def _with_image(answer: Identification, *, left_only: bool = False) -> Identification:
+    """The rings of the answer, drawn on an image one pixel of which is `PX` px."""
+    pattern = answer.patterns[0]
+    steps = (np.arange(SIDE) - (SIDE - 1) / 2) * PX
+    x, y = np.meshgrid(steps, steps)
+    radius = np.hypot(x, y)
+    grey = np.zeros((SIDE, SIDE))
+    for d_A in pattern.d_A[:4]:
+        grey += 255 * np.exp(-(((radius - CONSTANT / d_A) / 6.0) ** 2))
+    if left_only:
+        grey[x > 0] = 0
+    image = Disc(np.clip(grey, 0, 255).astype(np.uint8), np.ones((SIDE, SIDE), dtype=bool), PX)
+    rings = replace(
+        pattern,
+        position_column="radius_px",
+        position=CONSTANT / pattern.d_A,
+        disc=image,
+    )
+    return replace(answer, patterns=(rings,))
+
+
+def _grey(picture: Picture) -> NDArray[np.float64]:
+    from PIL import Image
+
+    with Image.open(io.BytesIO(png(picture))) as image:
+        return np.asarray(image.convert("L"), dtype=np.float64)
+
+
+def _profile(grey: NDArray[np.float64], angle_deg: float) -> NDArray[np.float64]:
+    """Darkness along a ray from the centre of the disc, at every unit of the picture."""
+    r = np.arange(20.0, RADIUS)
+    turn = math.radians(angle_deg)
+    columns = np.floor((CENTRE_X + r * math.cos(turn)) * DOTS).astype(int)
+    rows = np.floor((CENTRE_Y - r * math.sin(turn)) * DOTS).astype(int)
+    return np.stack([r, 255.0 - grey[rows, columns]], axis=1)
+
+
+def test_the_image_meets_the_calculated_rings(answer: Identification) -> None:
+    # d of Al 111 and 220 by a / sqrt(h² + k² + l²): 1/d in the ratio sqrt(3) : sqrt(8)
+    shown = _with_image(answer)
+    picture = disc(scene(shown, shown.hypotheses[0], 0))
+    grey = _grey(picture)
+    reach = 1.04 * math.sqrt(11) / 4.0495  # of 311, the outermost line: missing
+    for hkl2 in (3, 8):
+        expected = RADIUS * math.sqrt(hkl2) / 4.0495 / reach
+        for angle in (115.0, 217.0, 245.0):
+            r, dark = _profile(grey, angle).T
+            near = np.abs(r - expected) < 4
+            centre = float((r[near] * dark[near]).sum() / dark[near].sum())
+            assert dark[near].max() > 150
+            assert centre == pytest.approx(expected, abs=0.6)
+
+
+def test_the_image_keeps_to_its_half(answer: Identification) -> None:
+    shown = _with_image(answer)
+    bare = replace(shown.hypotheses[0], assignments=(), missing=(), unexplained=())
+    picture = disc(scene(shown, bare, 0))
+    shades = [shape for shape in picture.shapes if isinstance(shape, Shade)]
+    assert len(shades) == 1
+    assert shades[0].x + shades[0].width == pytest.approx(CENTRE_X)
+    assert shades[0].radius <= RADIUS
+    only = _grey(replace(picture, shapes=tuple(shades)))
+    assert only[:, int(CENTRE_X * DOTS) + 1 :].min() == 255
+    assert only[:, : int(CENTRE_X * DOTS)].min() < 100
+
+
+def test_a_leftover_ring_stands_out_on_the_image(answer: Identification) -> None:
+    shown = _with_image(answer)
+    picture = disc(scene(shown, shown.hypotheses[0], 0))
+    group = next(g for g in picture.shapes if isinstance(g, Group) and g.key == "p1r5")
+    lines = [part for part in group.shapes if getattr(part, "role", "") == "leftover ink"]
+    assert len(lines) == 2  # one on each side of the ring, which stays free
+    assert group.touched is not None
+
+
+def test_two_images_have_a_half_each(answer: Identification) -> None:
+    one = _with_image(answer)
+    best = one.hypotheses[0]
+    both = replace(
+        best,
+        assignments=(*best.assignments, *(replace(a, pattern=1) for a in best.assignments)),
+        unexplained=(*best.unexplained, *(replace(u, pattern=1) for u in best.unexplained)),
+    )
+    two = replace(one, patterns=one.patterns * 2, hypotheses=(both,))
+    picture = disc_of_two(scene(two, both, 0), scene(two, both, 1))
+    left, right = (shape for shape in picture.shapes if isinstance(shape, Shade))
+    assert left.x + left.width == pytest.approx(right.x)
+    assert np.array_equal(left.ink, right.ink[:, ::-1])  # the image drawn is symmetric
+
+
+def test_the_half_is_the_one_that_was_measured(answer: Identification) -> None:
+    lopsided = _with_image(answer, left_only=True)
+    picture = disc(scene(lopsided, lopsided.hypotheses[0], 0))
+    shade = next(shape for shape in picture.shapes if isinstance(shape, Shade))
+    assert shade.ink.max() == 255
+    assert len(np.unique(shade.ink)) <= 16
+
+
+def test_an_image_in_svg_is_held_once(answer: Identification) -> None:
+    shown = _with_image(answer)
+    picture = disc(scene(shown, shown.hypotheses[0], 0))
+    store = Store()
+    pages = svg(picture, store=store) + svg(picture, store=store)
+    assert "data:" not in pages
+    assert pages.count('href="#image-1"') == 2
+    cuts = re.findall(r'clipPath id="([^"]+)"', pages)
+    assert len(set(cuts)) == 2
+    assert store.definitions().count("<image ") == 1
+    root = ET.fromstring(svg_file(picture).encode())
+    image = next(root.iter("{http://www.w3.org/2000/svg}image"))
+    from PIL import Image
+
+    kind, data = image.attrib["href"].split(",", 1)
+    assert kind == "data:image/png;base64"
+    with Image.open(io.BytesIO(base64.b64decode(data))) as held:
+        ink = np.asarray(held.convert("RGBA"))[..., 3]
+    shade = next(shape for shape in picture.shapes if isinstance(shape, Shade))
+    assert np.array_equal(ink, shade.ink)
+    assert len(data) < 120_000
+
+
+def test_an_image_reaches_a_pdf(answer: Identification) -> None:
+    shown = _with_image(answer)
+    picture = disc(scene(shown, shown.hypotheses[0], 0))
+    assert b"/Subtype /Image" in pdf(picture)
+    assert b"/Subtype /Image" not in pdf(disc(scene(answer, answer.hypotheses[0], 0)))
+
+
+def _scanned(answer: Identification) -> Identification:
+    """X-ray angles with a peak at each of the answer's rings, heights as their intensities."""
+    pattern = answer.patterns[0]
+    position = np.degrees(2 * np.arcsin(1.5406 / 2 / pattern.d_A))  # Bragg
+    angle = np.arange(20.0, 80.0, 0.02)
+    counts = sum(
+        height * np.exp(-(((angle - at) / 0.15) ** 2))
+        for at, height in zip(position[:4], pattern.intensity[:4], strict=True)
+    )
+    probe = replace(pattern.probe, kind="x-ray", wavelength_A=1.5406, geometry="bragg-brentano")
+    rings = replace(
+        pattern,
+        probe=probe,
+        position_column="two_theta_deg",
+        position=position,
+        curve=np.stack([angle, counts], axis=1),
+    )
+    return replace(answer, patterns=(rings,))
+
+
+def _outline(picture: Picture) -> NDArray[np.float64]:
+    return np.array(
+        next(s.points for s in picture.shapes if isinstance(s, Line) and s.role == "soft")
+    )
+
+
+def test_the_curve_peaks_where_the_sticks_stand(answer: Identification) -> None:
+    scan = _scanned(answer)
+    one = scene(scan, scan.hypotheses[0], 0)
+    picture = sticks(one, axis_for(one.pattern, None))
+    x, y = _outline(picture).T
+    height = (BASE - y) / (BASE - UP_TOP)
+    for key, share in (("p1r1", 0.60), ("p1r2", 1.0), ("p1r3", 0.45), ("p1r4", 0.30)):
+        group = next(g for g in picture.shapes if isinstance(g, Group) and g.key == key)
+        stick = next(part for part in group.shapes if isinstance(part, Line))
+        near = np.abs(x - stick.points[0][0]) < 3
+        assert height[near].max() == pytest.approx(share, abs=0.02)
+        assert x[near][np.argmax(height[near])] == pytest.approx(stick.points[0][0], abs=0.8)
+
+
+def test_the_curve_follows_a_calibration(answer: Identification) -> None:
+    scan = _scanned(answer)
+    pattern = scan.patterns[0]
+    shifted = replace(
+        pattern,
+        position=pattern.position + 0.2,  # a zero shift that a calibration took off d
+        curve=cast(NDArray[np.float64], pattern.curve) + np.array([0.2, 0.0]),
+    )
+    curves = [
+        scene(replace(scan, patterns=(p,)), scan.hypotheses[0], 0).curve for p in (pattern, shifted)
+    ]
+    peaks = [float(c[np.argmax(c[:, 1]), 0]) for c in curves if c is not None]
+    assert peaks[1] == pytest.approx(peaks[0], rel=2e-4)
+
+
+# multiplicities of a face-centred cubic metal's lines, International Tables A (from memory)
+_FCC = {(1, 1, 1): 8, (2, 0, 0): 6, (2, 2, 0): 12, (3, 1, 1): 24, (2, 2, 2): 8}
+
+
+class _Shelf:
+    """A library of one phase: a point scatterer on a face-centred lattice, |F|² given."""
+
+    def __init__(self, f2: dict[tuple[int, int, int], float]) -> None:
+        hkl = np.array(list(_FCC))
+        squares = np.array([f2.get(one, 1.0) for one in _FCC])
+        self._lines = Lines(
+            d_A=4.0495 / np.sqrt((hkl**2).sum(axis=1)),
+            hkl=hkl,
+            multiplicity=np.array(list(_FCC.values())),
+            f2_xray=squares,
+            f2_electron=squares,
+            f2_neutron=squares,
+            volume_A3=4.0495**3,
+            complete_to_A=0.5,
+            floor=0.0,
+        )
+
+    def lines(self, phase_id: str) -> Lines:
+        assert phase_id == "Al-aaaa"
+        return self._lines
+
+
+def _alone(answer: Identification, **more: Any) -> Identification:
+    best = answer.hypotheses[0]
+    part = replace(best.phases[0], fibre_axis=None, **more)
+    own = tuple(a for a in best.assignments if a.phase == 0)
+    left = tuple(SimpleNamespace(pattern=0, ring=ring, hint="") for ring in (0, 4))
+    alone = replace(best, phases=(part,), assignments=own, missing=(), unexplained=cast(Any, left))
+    return replace(answer, hypotheses=(alone,))
+
+
+def test_weak_lines_are_those_nothing_else_tells_of(answer: Identification) -> None:
+    alone = _alone(answer)
+    pattern = replace(alone.patterns[0], d_A=np.append(alone.patterns[0].d_A[:4], 1.15))
+    shelf = cast(Library, _Shelf({(2, 2, 2): 0.1}))
+    found = weak_lines(alone.hypotheses[0], 0, pattern, shelf)
+    assert {line.hkl for line in found} == {(3, 1, 1), (2, 2, 2)}
+    # electrons along the ring: m |F|² d² (Vainshtein 1964), 111 the strongest
+    expected = 100 * (24 * 3 / 11) / 8
+    assert found[0].hkl == (3, 1, 1)
+    assert found[0].relative_intensity == pytest.approx(expected, rel=1e-6)
+    assert found[1].relative_intensity == pytest.approx(0.1 * 100 * (3 / 12), rel=1e-6)
+
+
+def test_weak_lines_end_with_the_pattern_and_with_texture(answer: Identification) -> None:
+    shelf = cast(Library, _Shelf({}))
+    alone = _alone(answer)
+    assert weak_lines(alone.hypotheses[0], 0, alone.patterns[0], shelf) == ()
+    wide = replace(alone.patterns[0], d_A=np.append(alone.patterns[0].d_A[:4], 1.15))
+    film = answer.hypotheses[0].phases[0]
+    textured = replace(alone.hypotheses[0], phases=(replace(film, fibre_axis=(1, 1, 1)),))
+    assert weak_lines(textured, 0, wide, shelf) == ()
+
+
+def test_weak_lines_are_drawn_faintly_and_named(answer: Identification) -> None:
+    alone = _alone(answer)
+    pattern = replace(alone.patterns[0], d_A=np.append(alone.patterns[0].d_A[:4], 1.15))
+    alone = replace(alone, patterns=(pattern,))
+    shelf = cast(Library, _Shelf({}))
+    one = scene(alone, alone.hypotheses[0], 0, shelf)
+    for picture in (disc(one), sticks(one, axis_for(pattern, None))):
+        faint = [
+            shape
+            for shape in picture.shapes
+            if isinstance(shape, Group) and shape.shapes[0].role == "weak phase1"
+        ]
+        assert len(faint) == 2
+        assert all("Too weak to be seen" in group.title for group in faint)
+        text = svg(picture, hits=True)
+        assert "Al 3 1 1, calculated 1.2210 Å" in text
+        assert 'data-key=""' not in text
+    words = "".join(ET.fromstring(svg_file(disc(one)).encode()).itertext())
+    assert "calculated, too weak to be seen here" in words
