@@ -1,11 +1,11 @@
 #!/usr/bin/env python3
-"""Write the invented patterns of data/demo: one foil seen by electrons and by X-rays.
+"""Write the invented patterns of data/demo: a foil by electrons and X-rays, a powder heated.
 
 The story: an evaporated aluminium foil with some periclase from the crucible; on the microscope's
 grid a crystal of salt from handling adds one spotty ring. Nothing here was measured. Positions and
 structure factors are gemmi's, not phaseid's, so that the example does not answer itself; they are
 then spoilt as readings are: a camera constant 0.7 % off, scatter, uneven intensities, weak rings
-lost.
+lost. The powder is anatase that turns into rutile, at five temperatures.
 """
 
 from __future__ import annotations
@@ -29,6 +29,9 @@ CU_KA_A = (2 * 1.5405929 + 1.5444274) / 3  # Int. Tables C 4.2.2.1, 2:1 mean of 
 CU_KA_EV = 12398.419843 / CU_KA_A
 MIDDLES = {"vs": 90.0, "s": 70.0, "m": 40.0, "w": 15.0, "vw": 5.0}  # common practice, no source
 SEED = 20
+HEATING_SEED = 21
+RUTILE_VOLUME_SHARES = {500: 0.0, 600: 0.12, 700: 0.45, 800: 0.88, 900: 1.0}  # °C: invented
+EXPANSION_PER_K = 9e-6  # about that of rutile along a, handbook, from memory
 PLATE_PX, PLATE_CONSTANT_A_PX = 300, 256.0
 
 
@@ -61,15 +64,17 @@ def lorentz_polarisation(d_A: float) -> float:
     return (1 + math.cos(2 * theta) ** 2) / (math.sin(theta) ** 2 * math.cos(theta))
 
 
-def mixture(*, electrons: bool, resolution: float) -> list[tuple[float, float]]:
-    """Return (d in Å, intensity) of the foil, lines nearer than `resolution` (of d) merged.
+def mixture(
+    *, electrons: bool, resolution: float, shares: dict[str, float] = VOLUME_SHARES
+) -> list[tuple[float, float]]:
+    """Return (d in Å, intensity) of a mixture, lines nearer than `resolution` (of d) merged.
 
     Intensity is the mean along the ring, strongest = 100: for electrons m|F|²d², for X-rays m|F|²
     times the Lorentz and polarisation factor.
     """
     rows = [
         (d_A, share * strength * (d_A**2 if electrons else lorentz_polarisation(d_A)))
-        for path, share in VOLUME_SHARES.items()
+        for path, share in shares.items()
         for d_A, strength in lines(path, electrons=electrons)
     ]
     rows.sort(reverse=True)
@@ -128,6 +133,32 @@ def foil_xrays(rng: np.random.Generator) -> str:
     return "\n".join(head) + "\n"
 
 
+def heating(rng: np.random.Generator) -> dict[str, str]:
+    """Return a diffractometer's patterns of a titania powder by temperature, by file name."""
+    files = {}
+    for celsius, rutile in RUTILE_VOLUME_SHARES.items():
+        shares = {"oxides/TiO2-anatase.cif": 1.0 - rutile, "oxides/TiO2-rutile.cif": rutile}
+        longer = 1.0 + EXPANSION_PER_K * (celsius - 25)
+        rows = []
+        shown = {path: share for path, share in shares.items() if share > 0}
+        for d_A, strength in mixture(electrons=False, resolution=0.002, shares=shown):
+            seen = strength * rng.lognormal(0.0, 0.15)
+            if seen > 4.0:
+                angle_deg = math.degrees(2 * math.asin(CU_KA_A / (2 * d_A * longer)))
+                rows.append((angle_deg + rng.normal(0.0, 0.02), seen))
+        strongest = max(seen for _, seen in rows)
+        head = [
+            f"# title: powder at {celsius} °C (invented)",
+            "# These data are invented for the demonstration; nothing here was measured.",
+            "# probe: x-ray Cu Ka",
+            f"# temperature: {celsius} °C",
+            "two_theta_deg,sigma,intensity",
+        ]
+        head += [f"{angle:.2f},0.02,{100 * seen / strongest:.0f}" for angle, seen in rows]
+        files[f"powder_{celsius}.csv"] = "\n".join(head) + "\n"
+    return files
+
+
 def foil_plate(rng: np.random.Generator) -> NDArray[np.uint8]:
     """Return the electrons' plate as an image: off centre, elliptical, with a beam stop."""
     y, x = np.mgrid[0:PLATE_PX, 0:PLATE_PX].astype(float)
@@ -144,12 +175,15 @@ def foil_plate(rng: np.random.Generator) -> NDArray[np.uint8]:
 
 
 def main() -> None:
-    """Write the two lists and the image."""
+    """Write the lists and the image."""
     rng = np.random.default_rng(SEED)
     DEMO.mkdir(exist_ok=True)
     (DEMO / "foil_electrons.csv").write_text(foil_electrons(rng), encoding="utf-8")
     (DEMO / "foil_xrays.csv").write_text(foil_xrays(rng), encoding="utf-8")
     Image.fromarray(foil_plate(rng)).save(DEMO / "foil_plate.png", optimize=True)
+    (DEMO / "heating").mkdir(exist_ok=True)
+    for name, text in heating(np.random.default_rng(HEATING_SEED)).items():
+        (DEMO / "heating" / name).write_text(text, encoding="utf-8")
 
 
 if __name__ == "__main__":

@@ -17,6 +17,7 @@ PAGES = {
     "report": "pictures, and a page to keep and send",
     "library": "the structures searched, and how to add your own",
     "measure": "rings from an image, peaks from a profile",
+    "series": "many patterns: what comes and goes",
     "calibrate": "scaling an instrument by a standard",
     "screen": "what should not be there; telling two phases apart",
     "settings": "defaults, environment, completion",

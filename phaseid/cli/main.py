@@ -24,6 +24,7 @@ from phaseid.cli import (
     ratio,
     report,
     screen,
+    series,
 )
 from phaseid.cli.options import say
 from phaseid.cli.settings import command_defaults
@@ -93,7 +94,7 @@ def front(
     standard error. Exit codes: 0 answered, 2 wrong input, 3 library missing or unreadable,
     130 interrupted.
     """
-    if ctx.invoked_subcommand in ("identify", "report", "near", "lines", "compare"):
+    if ctx.invoked_subcommand in ("identify", "report", "series", "near", "lines", "compare"):
         ctx.default_map = command_defaults()
     if ctx.invoked_subcommand is None:
         print(FIRST_STEPS.format(version=__version__), end="")
@@ -101,6 +102,7 @@ def front(
 
 app.command("identify", short_help="Name the phases behind rings.")(identify.identify)
 app.command("report", short_help="Write the answer as one page.")(report.report)
+app.command("series", short_help="Follow phases through many patterns.")(series.series)
 app.command("measure", short_help="Find rings in images and profiles.")(measure.measure)
 app.command("lines", short_help="List the lines of a phase.")(lines.lines)
 app.command("near", short_help="List phases with lines near spacings.")(near.near)

@@ -143,6 +143,7 @@ def command_defaults() -> dict[str, dict[str, str]]:
     return {
         "identify": chemistry,
         "report": chemistry,
+        "series": chemistry,
         "near": {**chemistry, **probe},
         "lines": dict(probe),
         "compare": dict(probe),

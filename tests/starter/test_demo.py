@@ -32,7 +32,15 @@ def test_the_files_are_what_the_script_writes(script: ModuleType) -> None:
         assert (ROOT / "data" / "demo" / name).read_text(encoding="utf-8") == text
 
 
-@pytest.mark.parametrize("name", FILES)
+def test_the_heating_is_what_the_script_writes(script: ModuleType) -> None:
+    texts = script.heating(np.random.default_rng(script.HEATING_SEED))
+    folder = ROOT / "data" / "demo" / "heating"
+    assert sorted(texts) == sorted(path.name for path in folder.iterdir())
+    for name, text in texts.items():
+        assert (folder / name).read_text(encoding="utf-8") == text
+
+
+@pytest.mark.parametrize("name", [*FILES, "heating/powder_700.csv"])
 def test_a_demonstration_says_that_it_is_invented(name: str) -> None:
     path = ROOT / "data" / "demo" / name
     assert "invented" in read_rings(path).title
