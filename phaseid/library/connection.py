@@ -4,18 +4,22 @@ from __future__ import annotations
 
 import errno
 import sqlite3
+import struct
 import tempfile
+import zlib
 from collections.abc import Callable, Iterator
 from contextlib import closing, contextmanager, suppress
 from pathlib import Path
 
-from phaseid.errors import LibraryError
+from phaseid.errors import InputError, LibraryError
 from phaseid.library.schema import SCHEMA_VERSION, apply_steps, stored_version
+from phaseid.library.seal import break_seal, is_broken, seal
 
 Tell = Callable[[str], None]
 
 _WAIT_S = 60.0
 _MAGIC = b"SQLite format 3\x00"
+MENDING = "Restore a copy, or move it away and add the structures anew."
 _ANOTHER = "Name another file with --library, or move this one away."
 
 
@@ -39,6 +43,22 @@ def told(path: Path) -> Iterator[None]:
         raise LibraryError(_plain_words(path, error)) from error
 
 
+@contextmanager
+def decoded(path: Path) -> Iterator[None]:
+    """As `told`, where stored bytes are given their meaning: what has none is damage.
+
+    Raises InputError for a question that is no text.
+    """
+    try:
+        with told(path):
+            yield
+    except UnicodeEncodeError as error:  # in what was asked for; what is stored gets decoded
+        raise InputError("this is no text that can be looked up", remedy="Use UTF-8.") from error
+    except (ArithmeticError, LookupError, TypeError, ValueError, struct.error, zlib.error) as error:
+        text = f"{type(error).__name__}: {error}"
+        raise LibraryError(f"{path}: the library is damaged ({text}). {MENDING}") from error
+
+
 def _plain_words(path: Path, error: Exception) -> str:
     text = str(error)
     if "readonly" in text:
@@ -53,10 +73,8 @@ def _plain_words(path: Path, error: Exception) -> str:
         return (
             f"{path}: another program is writing to the library. Wait for it to end and try again."
         )
-    if "malformed" in text or "not a database" in text:
-        return (
-            f"{path}: the library is damaged ({text}). Restore a copy, or add the structures anew."
-        )
+    if any(word in text for word in ("malformed", "not a database", "decode to UTF-8")):
+        return f"{path}: the library is damaged ({text}). {MENDING}"
     return f"{path}: the library cannot be used ({text}). Check the disk and the permissions."
 
 
@@ -88,7 +106,7 @@ def open_for_reading(path: Path, tell: Tell | None = None) -> sqlite3.Connection
         version = _checked_version(conn, path)
         if version < SCHEMA_VERSION:
             conn.close()
-            close_after_writing(open_for_writing(path, tell))
+            close_after_writing(open_for_writing(path, tell), path)
             conn = _read_only(path)
     return conn
 
@@ -114,9 +132,15 @@ def _checked_version(conn: sqlite3.Connection, path: Path) -> int:
     except sqlite3.Error:
         conn.close()
         raise
-    if 0 < version <= SCHEMA_VERSION:
+    broken = version <= SCHEMA_VERSION and is_broken(path)
+    if 0 < version <= SCHEMA_VERSION and not broken:
         return version
     conn.close()
+    if broken:
+        raise LibraryError(
+            f"{path}: the library is damaged, its bytes are not those that were written (a bad "
+            f"disk or a bad copy). {MENDING}"
+        )
     if version <= 0:
         raise LibraryError(f"{path}: this is a SQLite file but no library of phaseid. {_ANOTHER}")
     raise LibraryError(
@@ -136,6 +160,7 @@ def open_for_writing(path: Path, tell: Tell | None = None) -> sqlite3.Connection
         conn = _connect(path, "mode=rw")
         version = _checked_version(conn, path)
         try:
+            break_seal(conn)
             if version < SCHEMA_VERSION:
                 _bring_up_to_date(conn, path, version, tell)
             # readers go on reading while a writer adds; a killed writer loses one batch at most
@@ -171,13 +196,15 @@ def _bring_up_to_date(
         conn.execute("VACUUM")
 
 
-def close_after_writing(conn: sqlite3.Connection) -> None:
-    """Close a writing connection and leave one plain file behind, where no reader is in the way."""
+def close_after_writing(conn: sqlite3.Connection, path: Path) -> None:
+    """Close a writing connection; leave one plain file, sealed, where no reader is in the way."""
     try:
         conn.execute("PRAGMA busy_timeout = 0")
-        conn.execute("PRAGMA journal_mode = DELETE")
-    except sqlite3.OperationalError:
-        pass  # somebody reads: the file stays in WAL mode, which is as good
+        (mode,) = conn.execute("PRAGMA journal_mode = DELETE").fetchone()
+        if mode == "delete":
+            seal(conn, path)
+    except (sqlite3.OperationalError, OSError):
+        pass  # somebody reads: the file stays in WAL mode and without a seal until the next time
     finally:
         conn.close()
 

@@ -108,7 +108,8 @@ class Library:
     def phases(self) -> list[Phase]:
         """Return every phase, in the order of `line_table`."""
         rows = self._rows(f"SELECT {PHASE_COLUMNS} FROM phase ORDER BY id")
-        return [phase_from_row(row) for row in rows]
+        with self._told():
+            return [phase_from_row(row) for row in rows]
 
     def phase(self, phase_id: str) -> Phase:
         """Return the phase of that id; raises InputError where there is none."""
@@ -118,7 +119,8 @@ class Library:
                 f"the library has no phase with the id '{phase_id}'",
                 remedy="Look it up: phaseid library find NAME-OR-FORMULA",
             )
-        return phase_from_row(rows[0])
+        with self._told():
+            return phase_from_row(rows[0])
 
     def find(self, text: str) -> list[Phase]:
         """Return the phases that `text` can mean, the likeliest first.
@@ -147,7 +149,8 @@ class Library:
             "JOIN symmetry ON symmetry.id = symmetry WHERE phase_id = ?",
             phase_id,
         )
-        return unpack_crystal(*found)
+        with self._told():
+            return unpack_crystal(*found)
 
     def lines(self, phase_id: str) -> Lines:
         """Return the lines of a phase, computed from its structure; raises InputError as `phase`.
@@ -168,7 +171,9 @@ class Library:
         from phaseid.crystal.lines import compute_lines, trim
         from phaseid.library.packing import STORED_FLOOR
 
-        lines = compute_lines(self.crystal(phase_id), xray_energy_eV=xray_energy_eV)
+        crystal = self.crystal(phase_id)
+        with self._told():
+            lines = compute_lines(crystal, xray_energy_eV=xray_energy_eV)
         return trim(lines, STORED_FLOOR)
 
     def line_table(self, kind: Kind, phases: Sequence[int] | None = None) -> LineTable:
@@ -181,9 +186,12 @@ class Library:
             "floor, quality, elements, data FROM phase JOIN lines ON lines.phase = phase.id"
         )
         if phases is None:
-            return line_table(kind, self._rows(f"SELECT {columns} ORDER BY phase.id"))
-        one = f"SELECT {columns} WHERE phase.id = ?"
-        return line_table(kind, [tuple(self._one(one, int(row))) for row in phases])
+            rows = self._rows(f"SELECT {columns} ORDER BY phase.id")
+        else:
+            one = f"SELECT {columns} WHERE phase.id = ?"
+            rows = [tuple(self._one(one, int(row))) for row in phases]
+        with self._told():
+            return line_table(kind, rows)
 
     def strong_lines(self, kind: Kind) -> StrongLines:
         """Return the strongest lines of every phase, in the order of `line_table`."""
@@ -230,16 +238,16 @@ class Library:
         try:
             conn = connection.open_for_writing(self.path)
             try:
-                with self._told():
+                with connection.told(self.path):
                     yield conn
             finally:
-                connection.close_after_writing(conn)
+                connection.close_after_writing(conn, self.path)
         finally:
             self._conn = connection.open_for_reading(self.path)
 
     @contextmanager
     def _told(self) -> Iterator[None]:
-        with connection.told(self.path):
+        with connection.decoded(self.path):
             yield
 
     def _rows(self, sql: str, *values: object) -> list[tuple[Any, ...]]:
@@ -250,7 +258,6 @@ class Library:
         rows = self._rows(sql, *values)
         if not rows:
             raise LibraryError(
-                f"{self.path}: the library is damaged (a row is missing). "
-                "Restore a copy, or add the structures anew."
+                f"{self.path}: the library is damaged (a row is missing). {connection.MENDING}"
             )
         return rows[0]
