@@ -21,20 +21,13 @@ from phaseid.matching.identification import Identification
 from phaseid.reports.headline import doubts, headline, next_steps
 from phaseid.reports.json import dumps, identification_dict
 from phaseid.reports.page_answer import Drawing, answer_section
+from phaseid.reports.page_choice import choice
 from phaseid.reports.page_compare import side_by_side
-from phaseid.reports.page_html import facts, items, scrolling, words
-from phaseid.reports.picture import Picture
-from phaseid.reports.picture_axis import AxisName
-from phaseid.reports.picture_sheet import (
-    BAR_HEIGHT,
-    OTHERS,
-    UNLISTED,
-    bar_shapes,
-    probability_parts,
-)
+from phaseid.reports.page_html import facts, items, words
+from phaseid.reports.picture_axis import AxisName, common_axis
 from phaseid.reports.picture_style import DARK, LIGHT, palette_css, picture_css
-from phaseid.reports.picture_svg import Store, svg
-from phaseid.reports.plain import phase_text, probability_text, safe
+from phaseid.reports.picture_svg import Store
+from phaseid.reports.plain import phase_text, probability_text
 from phaseid.reports.text import STANDING, VERDICTS, cautions, remarks
 
 if TYPE_CHECKING:
@@ -42,6 +35,9 @@ if TYPE_CHECKING:
 
 LARGEST_BYTES = 900_000
 """Answers beyond the first are drawn as long as the page stays below this."""
+MACHINE_BYTES = 400_000
+SHOWN_RINGS, FEWEST_RINGS = 200, 20
+"""Rings drawn and listed of all patterns together, and at least of each: the strongest."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,9 +62,14 @@ def page(
     the answer's `library`, lines of the answers that are too weak to be seen are drawn faintly.
     Raises InputError for an axis that a pattern does not have.
     """
-    machine = _machine_copy(answer)
+    machine, held = _machine_copy(answer)
     store = Store()
-    drawing = Drawing(axis, library, store)
+    drawing = Drawing(
+        axis=common_axis(answer.patterns, axis),
+        library=library,
+        store=store,
+        rings=max(SHOWN_RINGS // len(answer.patterns), FEWEST_RINGS),
+    )
     sections, drawn = _sections(answer, drawing, LARGEST_BYTES - len(machine))
     style, script = _style(), _resource("page.js")
     policy = (
@@ -82,10 +83,9 @@ def page(
         '<meta name="viewport" content="width=device-width,initial-scale=1">'
         f'<meta name="generator" content="phaseid {__version__}">'
         f"<title>{title}</title><style>{style}</style></head><body>"
-        f"{_images(store)}<header>{_head(answer)}</header><main>{_choice(answer, drawn)}{sections}"
+        f"{_images(store)}<header>{_head(answer)}</header><main>{choice(answer, drawn)}{sections}"
         f"{side_by_side(answer)}{_notes(answer)}</main>"
-        f"<footer>{_origin(answer, provenance)}</footer>"
-        f'<script type="application/json" id="identification">{machine}</script>'
+        f"<footer>{_origin(answer, provenance, held)}</footer>{machine}"
         f"<script>{script}</script></body></html>\n"
     )
 
@@ -112,12 +112,25 @@ def _hash(text: str) -> str:
     return f"sha256-{base64.b64encode(digest).decode()}"
 
 
-def _machine_copy(answer: Identification) -> str:
-    """The JSON of the answer; no letter in it can end the element that holds it."""
-    compact = json.dumps(
-        json.loads(dumps(identification_dict(answer))), separators=(",", ":"), allow_nan=False
-    )
-    return compact.replace("&", "\\u0026").replace("<", "\\u003c").replace(">", "\\u003e")
+def _machine_copy(answer: Identification) -> tuple[str, int]:
+    """The JSON of the answer in its element, and how many hypotheses it holds.
+
+    As many of these as there is room for; no element where not even one fits. No letter in it can
+    end the element.
+    """
+    whole = json.loads(dumps(identification_dict(answer)))
+    sizes = [len(_compact(one)) + 1 for one in whole["hypotheses"]]
+    room = MACHINE_BYTES - len(_compact({**whole, "hypotheses": []}))
+    held = next((k for k in range(len(sizes), -1, -1) if sum(sizes[:k]) <= room), 0)
+    if room < 0 or (sizes and not held):
+        return "", 0
+    inner = _compact({**whole, "hypotheses": whole["hypotheses"][:held]})
+    return f'<script type="application/json" id="identification">{inner}</script>', held
+
+
+def _compact(value: object) -> str:
+    text = json.dumps(value, separators=(",", ":"), allow_nan=False)
+    return text.replace("&", "\\u0026").replace("<", "\\u003c").replace(">", "\\u003e")
 
 
 def _head(answer: Identification) -> str:
@@ -130,60 +143,6 @@ def _head(answer: Identification) -> str:
     return "".join(parts)
 
 
-def _choice(answer: Identification, drawn: int) -> str:
-    """The probability as a bar, and the answers to choose from."""
-    width = 1000.0
-    label = "; ".join(f"{name} {probability_text(p)}" for name, p in probability_parts(answer))
-    bar = svg(Picture(width, BAR_HEIGHT, f"Probability: {label}", tuple(bar_shapes(answer, width))))
-    bar = bar.replace('class="picture"', 'class="picture bar" preserveAspectRatio="none"', 1)
-    rings = sum(map(len, answer.patterns))
-    rows = []
-    for h in answer.hypotheses:
-        names = words(
-            " + ".join(
-                f"{phase_text(part.phase)} {safe(part.phase.space_group_symbol)}"
-                for part in h.phases
-            )
-        )
-        groups = sum(len(part.indistinguishable) for part in h.phases)
-        alike = f" (with {groups} alike)" if groups else ""
-        explained = len({(a.pattern, a.ring) for a in h.assignments})
-        radio = ""
-        if h.rank <= drawn:
-            checked = " checked" if h.rank == 1 else ""
-            radio = (
-                f'<input class="choose" type="radio" name="answer" value="{h.rank}" '
-                f'id="choose-{h.rank}"{checked}>'
-            )
-            names = f'<label for="choose-{h.rank}">{names}</label>'
-        cells = (str(h.rank), probability_text(h.probability), f"{explained}/{rings}")
-        numbers = "".join(f'<td class="n">{cell}</td>' for cell in cells)
-        rows.append(f'<tr>{numbers}<td class="wide">{radio}{names}{alike}</td></tr>')
-    for name, share in probability_parts(answer):
-        if name in (OTHERS, UNLISTED):
-            sign = "hatched: " if name == UNLISTED else ""
-            rows.append(
-                f'<tr><td></td><td class="n">{words(probability_text(share))}</td><td></td>'
-                f'<td class="wide">{sign}{name}</td></tr>'
-            )
-    heads = "".join(
-        f'<th scope="col"{" class=n" if number else ""}>{name}</th>'
-        for name, number in (("rank", 1), ("probability", 1), ("rings", 1), ("phases", 0))
-    )
-    table = (
-        "<table><caption>The answers; the bar shows them in this order</caption>"
-        f"<thead><tr>{heads}</tr></thead><tbody>{''.join(rows)}</tbody></table>"
-    )
-    undrawn = len(answer.hypotheses) - drawn
-    more = (
-        f'<p class="quiet">The last {undrawn} are not drawn, to keep the page small; '
-        "the JSON in it holds them.</p>"
-        if undrawn > 0
-        else ""
-    )
-    return f"{bar}{scrolling(table, 'Answers, scrolls sideways')}{more}"
-
-
 def _sections(answer: Identification, drawing: Drawing, room: int) -> tuple[str, int]:
     """The answers in full while there is room, the first always; and how many these are."""
     if not answer.hypotheses:
@@ -192,7 +151,7 @@ def _sections(answer: Identification, drawing: Drawing, room: int) -> tuple[str,
     for hypothesis in answer.hypotheses:
         section = answer_section(answer, hypothesis, drawing)
         room -= len(section.encode())
-        if parts and room < 0:
+        if parts and room < len(drawing.store.definitions()):
             break
         parts.append(section)
     return "".join(parts), len(parts)
@@ -211,7 +170,7 @@ def _notes(answer: Identification) -> str:
     )
 
 
-def _origin(answer: Identification, provenance: Provenance) -> str:
+def _origin(answer: Identification, provenance: Provenance, held: int) -> str:
     library = answer.library
     pairs: Sequence[tuple[str, str]] = [
         ("made", provenance.made),
@@ -226,7 +185,21 @@ def _origin(answer: Identification, provenance: Provenance) -> str:
     return (
         f"<h2>Where this comes from</h2>{facts(pairs)}"
         f"<p>The same answer again: <code>{command}</code></p>"
-        '<p class="quiet">The whole answer for machines is inside this page, in the script element '
-        "“identification” (JSON, phaseid.identification/1).</p>"
+        f'<p class="quiet">{_held(len(answer.hypotheses), held)}</p>'
         f"<p>{words(STANDING)}</p>"
+    )
+
+
+def _held(answers: int, held: int) -> str:
+    where = "in the script element “identification” (JSON, phaseid.identification/1)"
+    if held == answers:
+        return f"The whole answer for machines is inside this page, {where}."
+    if held:
+        return (
+            f"The first {held} of {answers} answers for machines are inside this page, {where}; "
+            "<code>phaseid identify --json</code> gives all."
+        )
+    return (
+        "For machines this answer is too long to be kept in a page: "
+        "<code>phaseid identify --json</code> gives it."
     )

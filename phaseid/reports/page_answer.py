@@ -43,18 +43,23 @@ HEADS = (
 
 @dataclass(frozen=True, slots=True)
 class Drawing:
-    """How pictures are drawn: the axis of the sticks, where weak lines are, where images go."""
+    """How pictures are drawn: the axis of the sticks, where weak lines are, where images go.
+
+    Of each pattern the `rings` strongest rings are shown.
+    """
 
     axis: AxisName | None
     library: Library | None
     store: Store
+    rings: int
 
 
 def answer_section(answer: Identification, hypothesis: Hypothesis | None, drawing: Drawing) -> str:
     """Everything about one answer; with None the pattern alone, which nothing explains."""
     rank = "" if hypothesis is None else str(hypothesis.rank)
     scenes = [
-        scene(answer, hypothesis, number, drawing.library) for number in range(len(answer.patterns))
+        scene(answer, hypothesis, number, drawing.library).strongest(drawing.rings)
+        for number in range(len(answer.patterns))
     ]
     parts = [f'<section class="answer" data-rank="{rank}" aria-labelledby="answer-{rank}">']
     parts.append(f'<h2 id="answer-{rank}">{words(_title(hypothesis))}</h2>')
@@ -105,6 +110,8 @@ def _pattern(answer: Identification, one: Scene, drawing: Drawing) -> str:
     note = f"Measured d / calculated d: {one.scale_text}"
     note += "." if one.scale is None else "; deviations are taken after it."
     note += " Calculated intensity: strongest line of each phase = 100."
+    if len(one.measured) < len(one.pattern):
+        note = f"Of {len(one.pattern)} rings the {len(one.measured)} strongest are shown. {note}"
     return (
         f'<div class="pattern"><h3>{words(heading)}</h3>{figures}</div>{table}'
         f'<p class="quiet">{words(note)}</p>'
@@ -135,7 +142,7 @@ def _table(one: Scene) -> str:
     heads = "".join(
         f'<th scope="col"{" class=n" if number else ""}>{name}</th>' for name, number in HEADS
     )
-    rows = "".join(_ring_rows(one, ring) for ring in range(len(one.pattern)))
+    rows = "".join(_ring_rows(one, ring.ring) for ring in one.measured)
     rows += _missing_rows(one)
     return (
         f"<table><caption>Ring by ring</caption><thead><tr>{heads}</tr></thead>"
@@ -188,8 +195,11 @@ def _missing_rows(one: Scene) -> str:
     if one.hypothesis is None:
         return ""
     own = [m for m in one.hypothesis.missing if m.pattern == one.number]
+    drawn = {line.key for line in one.calculated}
     rows = []
     for order, m in enumerate(own):
+        if missing_key(one.number, order) not in drawn:
+            continue
         formula = words(one.hypothesis.phases[m.phase].phase.formula)
         spacing, intensity = f"{m.d_calc_A:.4f}", f"{m.relative_intensity:.0f}"
         cells = ["", "", "", hkl_text(m.hkl), "", spacing, "", intensity, ""]
@@ -232,7 +242,9 @@ def _phase(part: PhaseAnswer, number: int, *, alone: bool) -> str:
     more = len(part.indistinguishable) - SHOWN_ALIKE
     if more > 0:
         alike.append(f"and {more} more; the JSON inside this page lists them all")
-    tells = [f"{phase_text(s.other)}: {s.text}" for s in part.separators]
+    tells = [f"{phase_text(s.other)}: {s.text}" for s in part.separators[:SHOWN_ALIKE]]
+    if len(part.separators) > SHOWN_ALIKE:
+        tells.append(f"and {len(part.separators) - SHOWN_ALIKE} more; the JSON lists them all")
     return (
         f"<h3>{tag(number)}{words(phase_text(phase))}</h3>{facts(pairs)}"
         + _listed("These rings cannot tell it from", alike)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal, get_args
 
@@ -66,6 +67,16 @@ def axis_for(pattern: RingList, name: AxisName | None) -> Axis:
             remedy="Use d, 1/d or q.",
         )
     return Axis(name or _usual(pattern), probe.wavelength_A)
+
+
+def common_axis(patterns: Sequence[RingList], name: AxisName | None) -> AxisName | None:
+    """The axis for patterns of one specimen: asked for, else their own where it is the same.
+
+    Else 1/d, which every probe has, so that the same line stands at the same side of each.
+    """
+    if name is None and len({_usual(pattern) for pattern in patterns}) > 1:
+        return "1/d"
+    return name
 
 
 def _usual(pattern: RingList) -> AxisName:

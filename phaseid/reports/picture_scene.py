@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -87,6 +87,22 @@ class Scene:
     def factor(self) -> float:
         """Measured d / true d; 1 where no scale was fitted."""
         return 1.0 if self.scale is None else self.scale.factor
+
+    def strongest(self, rings: int) -> Scene:
+        """The same with that many rings, and no more missing lines, the strongest of both."""
+        if max(len(self.measured), len(self.calculated)) <= rings:
+            return self
+        kept = sorted(self.measured, key=lambda ring: -ring.height)[:rings]
+        keys = {ring.key for ring in kept}
+        missing = [line for line in self.calculated if line.kind == "missing"]
+        keys |= {line.key for line in sorted(missing, key=lambda line: -line.height)[:rings]}
+        return replace(
+            self,
+            measured=tuple(ring for ring in self.measured if ring.key in keys),
+            calculated=tuple(
+                line for line in self.calculated if line.kind == "weak" or line.key in keys
+            ),
+        )
 
     @property
     def names(self) -> tuple[str, ...]:

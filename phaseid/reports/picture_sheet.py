@@ -7,20 +7,29 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from phaseid import __version__
-from phaseid.matching.identification import Identification
+from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
 from phaseid.reports.headline import headline
 from phaseid.reports.picture import Line, Picture, Shape, Text, placed, rectangle
-from phaseid.reports.picture_axis import AxisName, axis_for
+from phaseid.reports.picture_axis import AxisName, axis_for, common_axis
 from phaseid.reports.picture_disc import disc, disc_of_two
 from phaseid.reports.picture_scene import scene
 from phaseid.reports.picture_sticks import sticks
-from phaseid.reports.plain import phase_text, probability_text, safe, shorten
+from phaseid.reports.picture_style import phase_letter, phase_role
+from phaseid.reports.plain import (
+    cell_text,
+    hkl_text,
+    phase_text,
+    probability_text,
+    safe,
+    shorten,
+)
 
 if TYPE_CHECKING:
     from phaseid.library import Library
 
 MARGIN, GAP = 24.0, 28.0
 BAR_HEIGHT = 16.0
+NAMED = 8  # answers that the bar of probability shows one by one
 _LINE = 22.0
 
 
@@ -33,7 +42,8 @@ def sheet(
     """
     best = answer.hypotheses[0] if answer.hypotheses else None
     scenes = [scene(answer, best, number, library) for number in range(len(answer.patterns))]
-    stick_pictures = [sticks(s, axis_for(s.pattern, axis)) for s in scenes]
+    common = common_axis(answer.patterns, axis)
+    stick_pictures = [sticks(s, axis_for(s.pattern, common)) for s in scenes]
     discs = [disc_of_two(*scenes)] if len(scenes) == 2 else [disc(s) for s in scenes]
     column = MARGIN + discs[0].width + GAP
     width = column + stick_pictures[0].width + MARGIN
@@ -51,9 +61,48 @@ def sheet(
     if len(discs) < len(scenes):
         shapes += placed(discs[0], MARGIN, left_y)
         left_y += discs[0].height + GAP
+    if best is not None:
+        beside = right_y < left_y
+        x, y, wide = (column + 16, right_y, 100) if beside else (MARGIN + 16, left_y, 66)
+        told, y = _told(best, x, y, wide)
+        shapes += told
+        left_y, right_y = (left_y, y) if beside else (y, right_y)
     y = max(left_y, right_y)
     shapes.append(Text(MARGIN, y, origin_text(answer), "soft", 11.0))
     return Picture(width, y + 18, headline(answer), tuple(shapes))
+
+
+def _told(best: Hypothesis, x: float, y: float, letters: int) -> tuple[list[Shape], float]:
+    """What is known of each phase, in words; and where these end."""
+    shapes: list[Shape] = []
+    for k, part in enumerate(best.phases):
+        symbol = safe(part.phase.space_group_symbol)
+        name = shorten(f"{phase_letter(k)}  {phase_text(part.phase)}, {symbol}", letters)
+        shapes.append(Text(x, y, name, phase_role(k), 12.0, bold=True))
+        y += 17
+        for line in textwrap.wrap(
+            "; ".join(phase_facts(part, alone=len(best.phases) == 1)), letters
+        ):
+            shapes.append(Text(x + 14, y, line, "ink", 12.0))
+            y += 16
+        y += 8
+    return shapes, y + GAP - 8
+
+
+def phase_facts(part: PhaseAnswer, *, alone: bool) -> list[str]:
+    """What the picture says of a phase beside its name: cell, share, texture, those alike."""
+    facts = []
+    if part.cell is not None:
+        facts.append(f"refined cell {cell_text(part.cell, part.cell_sigma)}")
+    if part.share is not None and not alone:
+        error = "" if part.share_sigma is None else f" ± {100 * part.share_sigma:.0f}"
+        facts.append(f"{100 * part.share:.0f}{error} % by weight")
+    if part.fibre_axis is not None:
+        facts.append(f"film with fibre axis [{hkl_text(part.fibre_axis)}] along the beam")
+    if alike := len(part.indistinguishable):
+        others = "another phase" if alike == 1 else f"{alike} other phases"
+        facts.append(f"these rings cannot tell it from {others}")
+    return facts
 
 
 def origin_text(answer: Identification) -> str:
@@ -127,10 +176,10 @@ OTHERS = "other answers from this library"
 
 
 def probability_parts(answer: Identification) -> list[tuple[str, float]]:
-    """(Name, probability) of each answer listed, of the rest, of what is in no library."""
+    """(Name, probability) of the first answers, of the rest, of what is in no library."""
     parts = [
         (" + ".join(phase_text(part.phase) for part in h.phases), h.probability)
-        for h in answer.hypotheses
+        for h in answer.hypotheses[:NAMED]
     ]
     rest = 1 - sum(share for _, share in parts) - answer.unlisted_probability
     if rest >= 0.005:

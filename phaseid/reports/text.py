@@ -27,7 +27,7 @@ STANDING = (
     "A ring match is evidence, not a certified determination. For decisions on health, safety or "
     "law use an accredited laboratory and the local codes."
 )
-SHOWN_ALIKE, SHOWN_CAUTIONED = 8, 3
+SHOWN_ALIKE, SHOWN_CAUTIONED, SHOWN_AGAINST = 8, 3, 12
 VERDICTS = {
     "identified": "identified (one answer holds at least 0.9 of the probability)",
     "ambiguous": "ambiguous (no answer reaches a probability of 0.9)",
@@ -197,18 +197,22 @@ def against(answer: Identification, best: Hypothesis) -> list[str]:
     """Return what speaks against an answer: rings left, lines missing, the worst deviation."""
     many = len(answer.patterns) > 1
     items = []
-    for u in best.unexplained:
+    for u in best.unexplained[:SHOWN_AGAINST]:
         d_A = answer.patterns[u.pattern].d_A[u.ring]
         where = f" of pattern {u.pattern + 1}" if many else ""
         hint = f": {u.hint}" if u.hint else ""
         items.append(f"Ring {u.ring + 1}{where} at {d_A:.4f} Å is unexplained{hint}")
-    for m in best.missing:
+    if (more := len(best.unexplained) - SHOWN_AGAINST) > 0:
+        items.append(f"and {more} more rings are unexplained")
+    for m in best.missing[:SHOWN_AGAINST]:
         where = f" in pattern {m.pattern + 1}" if many else ""
         formula = safe(best.phases[m.phase].phase.formula)
         items.append(
             f"{formula} should also show {hkl_text(m.hkl)} at "
             f"{m.d_calc_A:.4f} Å (calculated intensity {m.relative_intensity:.0f} of 100){where}"
         )
+    if (more := len(best.missing) - SHOWN_AGAINST) > 0:
+        items.append(f"and {more} more lines should be there")
     worst = max(best.assignments, key=lambda a: abs(a.residual_sigma), default=None)
     if worst is not None and abs(worst.residual_sigma) > 3:
         where = f" of pattern {worst.pattern + 1}" if many else ""
@@ -251,8 +255,11 @@ def _phase(page: _Page, part: PhaseAnswer, *, alone: bool) -> None:
             page.item(f"and {more} more; --json lists them all", indent="    ")
     if part.separators:
         page.item("What would separate them:")
-        for separator in part.separators:
+        for separator in part.separators[:SHOWN_ALIKE]:
             page.item(f"{phase_text(separator.other)}: {separator.text}", indent="    ")
+        more = len(part.separators) - SHOWN_ALIKE
+        if more > 0:
+            page.item(f"and {more} more; --json lists them all", indent="    ")
 
 
 def remarks(answer: Identification) -> list[str]:

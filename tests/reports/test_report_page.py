@@ -12,6 +12,7 @@ from itertools import pairwise
 from pathlib import Path
 
 import jsonschema
+import numpy as np
 
 import phaseid
 from phaseid.matching.identification import Identification, Unexplained
@@ -184,8 +185,46 @@ def test_a_long_list_of_answers_stays_below_a_megabyte(answer: Identification) -
     drawn = sum(tag == "section" for tag, _ in reader.elements)
     assert 1 < drawn < 200
     assert f"The last {200 - drawn} are not drawn" in reader.text
-    assert len(json.loads(reader.scripts[0])["hypotheses"]) == 200
+    held = len(json.loads(reader.scripts[0])["hypotheses"])
+    assert 1 < held < 200
+    assert f"The first {held} of 200 answers for machines" in reader.text
     assert len(text.encode()) < LARGEST_BYTES + 100_000
+    assert text.count('class="choose"') == min(drawn, 50)
+    assert "other answers from this library, 150 of them asked for" in reader.text
+
+
+def test_a_list_of_a_thousand_rings_stays_below_a_megabyte(answer: Identification) -> None:
+    pattern, best = answer.patterns[0], answer.hypotheses[0]
+    many = 2000
+    d_A = np.linspace(6.0, 1.0, many)
+    rings = replace(
+        pattern,
+        position=d_A,
+        position_sigma=0.001 * d_A,
+        d_A=d_A,
+        sigma_A=0.001 * d_A,
+        intensity=np.linspace(1.0, 100.0, many),
+        intensity_range=np.zeros((many, 2)),
+        grades=("",) * many,
+        notes=("",) * many,
+    )
+    left = tuple(Unexplained(0, ring) for ring in range(4, many))
+    odd = replace(answer, patterns=(rings,), hypotheses=(replace(best, unexplained=left),))
+    text = page(odd, PROVENANCE)
+    assert len(text.encode()) < 1_000_000
+    reader = _Reader(text)
+    assert "Of 2000 rings the 200 strongest are shown." in reader.text
+    keys = [a["data-key"] for tag, a in reader.elements if tag == "tr" and "data-key" in a]
+    assert f"p1r{many}" in keys
+    assert "p1r5" not in keys
+    two = replace(odd, patterns=(rings, rings))
+    far = replace(
+        odd.hypotheses[0],
+        unexplained=(*left, *(Unexplained(1, ring) for ring in range(many))),
+    )
+    text = page(replace(two, hypotheses=(far,)), PROVENANCE)
+    assert len(text.encode()) < 1_000_000
+    assert "too long to be kept in a page" in _Reader(text).text
 
 
 def test_what_separates_two_answers_is_told(answer: Identification) -> None:

@@ -21,7 +21,7 @@ from numpy.typing import NDArray
 from phaseid.errors import InputError
 from phaseid.matching.identification import Identification
 from phaseid.reports.picture import Arc, Line, Picture, Room, Text, rectangle, tick_text, ticks
-from phaseid.reports.picture_axis import axis_for, axis_name
+from phaseid.reports.picture_axis import axis_for, axis_name, common_axis
 from phaseid.reports.picture_disc import RADIUS, disc, disc_of_two
 from phaseid.reports.picture_file import write_picture
 from phaseid.reports.picture_pixels import DOTS, _face, png
@@ -168,6 +168,16 @@ def test_the_axis_follows_the_measurement(column: str, value: float, usual: str)
     assert axis_for(rings, None).name == usual
 
 
+def test_patterns_of_one_specimen_share_an_axis() -> None:
+    angles, spacings = (
+        rings_from_values([38.5], column=column, probe=probe, scale_uncertainty=0.001)
+        for column, probe in (("two_theta_deg", "x-ray Cu Ka1"), ("d_A", "electron 200 kV"))
+    )
+    assert common_axis([angles, spacings], None) == "1/d"
+    assert common_axis([angles, spacings], "q") == "q"
+    assert axis_for(angles, common_axis([angles, angles], None)).name == "two-theta"
+
+
 def test_an_axis_that_is_none_is_refused() -> None:
     with pytest.raises(InputError, match="two-theta"):
         axis_name("radius")
@@ -201,6 +211,21 @@ def test_without_intensities_the_picture_says_so(answer: Identification) -> None
     plain = replace(pattern, intensity=nothing, grades=("",) * len(pattern))
     words = "".join(_tree(sheet(replace(answer, patterns=(plain,)))).itertext())
     assert "no intensities given" in words
+
+
+def test_the_picture_tells_cells_shares_and_those_alike(answer: Identification) -> None:
+    words = " ".join(text.text or "" for text in _tree(sheet(answer)).iter(f"{SVG}text"))
+    assert "refined cell a = 4.0501 ± 0.0020 Å; 80 ± 5 % by weight" in words
+    assert "fibre axis [1 1 1]" in words
+    assert "cannot tell it from another phase" in words
+
+
+def test_a_bar_of_many_answers_names_the_first(answer: Identification) -> None:
+    best = answer.hypotheses[0]
+    many = tuple(replace(best, rank=rank, probability=0.94 / 200) for rank in range(1, 201))
+    parts = probability_parts(replace(answer, hypotheses=many))
+    assert len(parts) == 10
+    assert parts[-2] == ("other answers from this library", pytest.approx(0.97 - 8 * 0.0047))
 
 
 def test_no_answer_is_drawn_too(answer: Identification) -> None:

@@ -204,6 +204,20 @@ def test_a_long_group_is_cut_short(answer: Identification) -> None:
     assert "one of 50 others that these rings allow as well, such as silver (Ag)" in _plain(text)
     assert "and 42 more; --json lists them all" in text
     assert text.count("silver (Ag), Fm-3m") == 8
+    best = replace(best, phases=(replace(part, separators=part.separators * 50),))
+    best = replace(best, assignments=best.assignments[1:2], missing=(), unexplained=())
+    left = tuple(Unexplained(0, ring) for ring in (0, 2, 3, 4))
+    text = as_text(replace(answer, hypotheses=(replace(best, unexplained=left),)))
+    assert text.count("calibrate the camera constant to 0.4 %") == 8
+
+
+def test_a_long_list_of_rings_left_is_cut_short(answer: Identification) -> None:
+    best = answer.hypotheses[0]
+    many = replace(best, unexplained=best.unexplained * 20, missing=best.missing * 20)
+    text = as_text(replace(answer, hypotheses=(many,)))
+    assert text.count("Ring 5 at 1.9000 Å is unexplained") == 12
+    assert "and 8 more rings are unexplained" in text
+    assert "and 8 more lines should be there" in text
 
 
 def test_several_patterns_are_told_apart(answer: Identification) -> None:
