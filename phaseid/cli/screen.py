@@ -18,7 +18,7 @@ from phaseid.cli.ring_input import (
     ScaleUncertainty,
     Sigma,
     Unit,
-    ring_list,
+    ring_lists,
 )
 
 if TYPE_CHECKING:
@@ -67,12 +67,13 @@ def screen(
 
     \b
     phaseid screen foil.csv --expect Al --expect Al2O3
+    phaseid screen electrons.csv xrays.csv --expect Al
     """
     from phaseid.matching.screen import screen as hold
     from phaseid.matching.watch import watch_lists
     from phaseid.probes import parse_relative
 
-    measured = ring_list(
+    measured = ring_lists(
         rings,
         calibration=calibration,
         probe=probe,

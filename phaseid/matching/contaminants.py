@@ -8,10 +8,12 @@ from math import log
 import numpy as np
 
 from phaseid.matching.likelihood import evaluate
-from phaseid.matching.model import Fit, Model, PatternFit
+from phaseid.matching.model import Fit, Model
 from phaseid.matching.patterns import Floats
 
 Members = tuple[int, ...]
+Ring = tuple[int, int]
+"""Pattern and ring of its list."""
 
 WATCHED_PRIOR, LISTED_PRIOR = 0.5, 0.3
 """Prior that a contaminant is on the watch list, or another phase of the library; else neither."""
@@ -34,11 +36,11 @@ class Suspect:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Contaminants:
-    """Suspects, the likeliest first; for each ring of the list those that make it, with the
+    """Suspects, the likeliest first; for each (pattern, ring) those that make it, with the
     probability that they do; the fit of the best set, and the set, expected phases first."""
 
     suspects: tuple[Suspect, ...]
-    by_ring: dict[int, tuple[tuple[int, float], ...]]
+    by_ring: dict[Ring, tuple[tuple[int, float], ...]]
     fit: Fit
     members: Members
 
@@ -51,11 +53,11 @@ class _Set:
     row: int
 
 
-def explain(model: Model, expected: Members, shift: float, watched: set[int]) -> Contaminants:
+def explain(model: Model, expected: Members, shift: Floats, watched: set[int]) -> Contaminants:
     """Add to the expected phases whatever explains the rings that are left, up to three phases.
 
-    Sets of phases are weighed by their likelihood and a prior that favours the watch list; "none of
-    them" takes part.
+    `shift` (K,) is the common shift of each pattern in ln d. Sets of phases are weighed by their
+    likelihood and a prior that favours the watch list; "none of them" takes part.
     """
     count = len(model.lines[0].x)
     others = count - len(watched)
@@ -87,35 +89,33 @@ def explain(model: Model, expected: Members, shift: float, watched: set[int]) ->
     return _weighed(model, list(sets.values()), expected, base)
 
 
-def _worth_trying(model: Model, parent: _Set, shift: float) -> list[int]:
+def _worth_trying(model: Model, parent: _Set, shift: Floats) -> list[int]:
     """Candidates with a strong line near a ring that is left."""
-    pattern, lines = model.patterns[0], model.lines[0]
-    left = np.flatnonzero(~_part(parent).claimed[parent.row])
-    if not len(left):
-        return []
-    window = np.maximum(4.0 * pattern.sigma, 0.6 * pattern.resolution)[left] + 0.002
-    near = np.zeros(lines.x.shape, dtype=bool)
-    for x, reach in zip(pattern.x[left], window, strict=True):
-        near |= np.abs(lines.x + shift - x) < reach
-    return np.flatnonzero((near & (lines.intensity > _WORTH)).any(axis=1)).tolist()
+    near = np.zeros(len(model.lines[0].x), dtype=bool)
+    for pattern, lines, part, common in zip(
+        model.patterns, model.lines, parent.fit.patterns, shift, strict=True
+    ):
+        left = np.flatnonzero(~part.claimed[parent.row])
+        strong = lines.intensity > _WORTH
+        window = np.maximum(4.0 * pattern.sigma, 0.6 * pattern.resolution)[left] + 0.002
+        for x, reach in zip(pattern.x[left], window, strict=True):
+            near |= (strong & (np.abs(lines.x + common - x) < reach)).any(axis=1)
+    return np.flatnonzero(near).tolist()
 
 
 def _judged(
-    model: Model, sets: list[Members], shift: float, prior: Floats, expected: Members
+    model: Model, sets: list[Members], shift: Floats, prior: Floats, expected: Members
 ) -> list[_Set]:
     judged = []
     for start in range(0, len(sets), _BATCH):
         some = sets[start : start + _BATCH]
         members = np.array(some, dtype=np.int64)
-        fit = evaluate(model, members, np.full((*members.shape, 1), shift))
+        start_at = np.broadcast_to(shift, (*members.shape, len(shift)))
+        fit = evaluate(model, members, start_at)
         for row, one in enumerate(some):
             added = float(sum(prior[c] for c in one[len(expected) :]))
             judged.append(_Set(one, float(fit.log_likelihood[row]) + added, fit, row))
     return judged
-
-
-def _part(one: _Set) -> PatternFit:
-    return one.fit.patterns[0]
 
 
 def _weighed(model: Model, sets: list[_Set], expected: Members, base: _Set) -> Contaminants:
@@ -123,19 +123,22 @@ def _weighed(model: Model, sets: list[_Set], expected: Members, base: _Set) -> C
     weight = np.exp(shifted - shifted.max())
     weight /= weight.sum()
     total: dict[int, float] = {}
-    by_ring: dict[int, dict[int, float]] = {}
-    pattern = model.patterns[0]
-    left = np.flatnonzero(~_part(base).claimed[base.row])
+    by_ring: dict[Ring, dict[int, float]] = {}
+    left = [np.flatnonzero(~part.claimed[base.row]) for part in base.fit.patterns]
     for one, w in zip(sets, weight.tolist(), strict=True):
-        part = _part(one)
         for k in range(len(expected), len(one.members)):
             candidate = one.members[k]
             total[candidate] = total.get(candidate, 0.0) + w
-            for ring in left:
-                if part.claimed[one.row, ring] and part.share[one.row, k, ring] > _MAIN_SHARE:
-                    for member in pattern.members[ring]:
-                        held = by_ring.setdefault(int(member), {})
-                        held[candidate] = held.get(candidate, 0.0) + w
+            for number, (pattern, part) in enumerate(
+                zip(model.patterns, one.fit.patterns, strict=True)
+            ):
+                for ring in left[number]:
+                    if not part.claimed[one.row, ring]:
+                        continue
+                    if part.share[one.row, k, ring] > _MAIN_SHARE:
+                        for member in pattern.members[ring]:
+                            held = by_ring.setdefault((number, int(member)), {})
+                            held[candidate] = held.get(candidate, 0.0) + w
     best = sets[int(np.argmax(weight))]
     again = evaluate(model, np.array([best.members]), best.fit.offset[best.row][None])
     return Contaminants(

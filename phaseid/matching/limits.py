@@ -27,16 +27,46 @@ _LOGISTIC = 1.702
 class Limit:
     """Shares by weight at which a phase would be seen in 95 % and in half of the cases.
 
-    1 where its rings all hide behind others. `d_A`, `hkl` are of the ring by which it would be seen
-    first.
+    1 where its rings all hide behind others. `pattern`, `d_A`, `hkl` are of the ring by which it
+    would be seen first.
     """
 
     phase: Phase
     share: float
     share_even: float
+    pattern: int
     d_A: float
     hkl: tuple[int, int, int]
     hidden: bool
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class View:
+    """One pattern as it shows the candidates: `weight` of what is there (`expected_weight`), the
+    fitted common `shift`; `line_hkl` indices by row of its line table."""
+
+    pattern: Pattern
+    lines: LineSet
+    line_hkl: NDArray[np.int16]
+    weight: float
+    shift: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Chances:
+    """How one pattern would show one candidate: `covered`, `ln_visible` (n,) of its lines, and
+    `ln_unit`, ln of the amplitude at which it would weigh as much as what is there."""
+
+    view: View
+    covered: Floats
+    ln_visible: Floats
+    ln_unit: float
+
+    def seen(self, ln_ratio: float) -> float:
+        """Chance that a ring of it is listed, at ln of its weight over what is there."""
+        return chance_seen(
+            ln_ratio + self.ln_unit, self.covered, self.ln_visible, self.view.pattern
+        )
 
 
 def expected_weight(
@@ -49,54 +79,63 @@ def expected_weight(
     return float((density * volume)[shown].sum())
 
 
-def limit_of(
-    pattern: Pattern,
-    lines: LineSet,
-    candidate: int,
-    phase: Phase,
-    line_hkl: NDArray[np.int16],
-    weight: float,
-    shift: float,
-) -> Limit:
-    """The limit of one candidate.
+def limit_of(views: Sequence[View], candidate: int, phase: Phase) -> Limit:
+    """The limit of one candidate in all patterns together, seen if any of them shows it.
 
-    `line_hkl` indices by row of the line table; `weight` of what is there (`expected_weight`);
-    `shift` the fitted common shift. A line is seen where it stands apart from every ring listed, as
-    a ring of its own.
+    A line is seen where it stands apart from every ring listed, as a ring of its own.
     """
-    x = lines.x[candidate] + shift
+    ways = [way for view in views if (way := _chances(view, candidate, phase)) is not None]
+    best: tuple[float, int, float, tuple[int, int, int]] = (-np.inf, 0, float("nan"), (0, 0, 0))
+    for way in ways:
+        with np.errstate(divide="ignore"):
+            level = np.log(way.covered) + way.ln_visible + way.ln_unit - way.view.pattern.ln_limit
+        first = int(np.argmax(level))
+        if level[first] > best[0]:
+            lines = way.view.lines
+            h, k, l = (int(i) for i in way.view.line_hkl[lines.row[candidate, first]])  # noqa: E741 (Miller's own letter)
+            spacing = float(np.exp(lines.x[candidate, first]))
+            best = (float(level[first]), views.index(way.view), spacing, (h, k, l))
+
+    def share_at(chance: float) -> float:
+        if not ways:
+            return 1.0
+        own = float(np.exp(_ln_ratio(chance, ways)))
+        return own / (own + 1.0)
+
+    share = share_at(SURE)
+    return Limit(phase, share, share_at(EVEN), best[1], best[2], best[3], share > 0.99)
+
+
+def _chances(view: View, candidate: int, phase: Phase) -> _Chances | None:
+    """How one pattern would show the candidate, None where nothing can be compared with it."""
+    pattern, lines = view.pattern, view.lines
+    strength = float(lines.strength[candidate])
+    if strength <= 0 or view.weight <= 0:
+        return None
+    x = lines.x[candidate] + view.shift
     visible = np.where(np.isfinite(x), lines.visible[candidate], 0.0)
     x = np.where(np.isfinite(x), x, 50.0)
     nearest = np.abs(x[:, None] - pattern.x[None, :])
     apart = np.maximum(pattern.resolution, _APART_SIGMAS * pattern.sigma)
     free = (nearest > apart[None, :]).all(axis=1) & (visible > 0)
-    scatter = pattern.scatter
-    covered = np.where(free, pattern.seen_weight(x), 0.0) * (1.0 - scatter.lost)
-    ln_visible = np.log(np.maximum(visible, 1e-12))
     density = max(phase.density_g_cm3, 1e-6)
-    strength = float(lines.strength[candidate])
-    first = int(np.argmax(np.where(free, covered * visible, -1.0)))
-    row = int(lines.row[candidate, first])
-    h, k, l = (int(i) for i in line_hkl[row])  # noqa: E741 (Miller's own letter)
-    spacing = float(np.exp(lines.x[candidate, first])) if visible[first] > 0 else float("nan")
-
-    def share_at(chance: float) -> float:
-        if strength <= 0 or weight <= 0:
-            return 1.0
-        ln_a = _amplitude(chance, covered, ln_visible, pattern)
-        own = density * float(np.exp(ln_a)) / strength
-        return own / (own + weight)
-
-    share = share_at(SURE)
-    return Limit(phase, share, share_at(EVEN), spacing, (h, k, l), share > 0.99)
+    return _Chances(
+        view=view,
+        covered=np.where(free, pattern.seen_weight(x), 0.0) * (1.0 - pattern.scatter.lost),
+        ln_visible=np.log(np.maximum(visible, 1e-12)),
+        ln_unit=float(np.log(view.weight * strength / density)),
+    )
 
 
-def _amplitude(chance: float, covered: Floats, ln_visible: Floats, pattern: Pattern) -> float:
-    """ln amplitude at which at least one line is seen with this chance, by bisection."""
-    low, high = pattern.ln_limit - 8.0, 25.0
+def _ln_ratio(chance: float, ways: list[_Chances]) -> float:
+    """ln of the weight over what is there at which the phase is seen with this chance."""
+    low, high = -25.0, 25.0
     for _ in range(48):
         middle = 0.5 * (low + high)
-        if chance_seen(middle, covered, ln_visible, pattern) < chance:
+        unseen = 1.0
+        for way in ways:
+            unseen *= 1.0 - way.seen(middle)
+        if 1.0 - unseen < chance:
             low = middle
         else:
             high = middle

@@ -1,4 +1,4 @@
-"""The phases of a library and a few beside it, numbered as in one line table."""
+"""The phases of a library and a few beside it, numbered as in its line tables."""
 
 from __future__ import annotations
 
@@ -21,9 +21,8 @@ Found = tuple[Phase, Crystal]
 class Pool:
     """Add phases by `add` and `add_watched`; then `table` holds the library and them."""
 
-    def __init__(self, library: Library, kind: Kind) -> None:
-        self._kind = kind
-        self._library_table = library.line_table(kind)
+    def __init__(self, library: Library) -> None:
+        self._library = library
         self._phases = library.phases()
         self._number = {phase.phase_id: i for i, phase in enumerate(self._phases)}
         self._shipped = {
@@ -61,9 +60,10 @@ class Pool:
         """The phase of that number."""
         return self._phases[number]
 
-    def table(self) -> LineTable:
-        """The lines of all phases, in the order of their numbers."""
+    def table(self, kind: Kind) -> LineTable:
+        """The lines of all phases to one kind of probe, in the order of their numbers."""
+        own = self._library.line_table(kind)
         if not self._beside:
-            return self._library_table
-        beside = table_of(self._kind, self._beside)
-        return joined(self._library_table, beside) if len(self._library_table) else beside
+            return own
+        beside = table_of(kind, self._beside)
+        return joined(own, beside) if len(own) else beside

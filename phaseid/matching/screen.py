@@ -11,14 +11,15 @@ import numpy as np
 
 from phaseid.errors import InputError
 from phaseid.library import Library
+from phaseid.library.linetable import LineTable
 from phaseid.library.phase import Phase
 from phaseid.matching.contaminants import Contaminants, Suspect, explain
 from phaseid.matching.crowd import crowd
 from phaseid.matching.likelihood import evaluate
-from phaseid.matching.limits import Limit, expected_weight, limit_of
+from phaseid.matching.limits import Limit, View, expected_weight, limit_of
 from phaseid.matching.lineset import gather
 from phaseid.matching.model import Fit, Model
-from phaseid.matching.patterns import Pattern, prepare
+from phaseid.matching.patterns import Floats, prepare_all
 from phaseid.matching.pool import Found, Pool
 from phaseid.matching.settings import STRAIN
 from phaseid.matching.watch import Watched
@@ -29,12 +30,14 @@ _SHIFTS = 61
 _SEEN = 2.0
 """ln likelihood that an expected phase adds from which on it counts as seen."""
 _FOUND = 0.5
+_OWN_SHARE = 0.3
 
 
 @dataclass(frozen=True, slots=True)
 class ExplainedRing:
     """A ring of an expected phase."""
 
+    pattern: int
     ring: int
     hkl: tuple[int, int, int]
     d_calc_A: float
@@ -64,6 +67,7 @@ class Candidate:
 class ForeignRing:
     """A ring that no expected phase explains, and what may have made it, the likeliest first."""
 
+    pattern: int
     ring: int
     d_A: float
     candidates: tuple[Candidate, ...]
@@ -71,25 +75,26 @@ class ForeignRing:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Screening:
-    """Whether a pattern shows only what is expected, and how much of what else it could hide.
+    """Whether patterns of a specimen show only what is expected, and how much else could hide.
 
     `found` are watch-list phases that are there with a probability above one half; `limits` the
-    others; `scale` the fitted measured d / calculated d and its one-sigma.
+    others; by pattern, `scales` the fitted measured d / calculated d and its one-sigma, and
+    `weakest_percent` the detection limit, of its strongest ring.
     """
 
-    rings: RingList
+    patterns: tuple[RingList, ...]
     verdict: Literal["clean", "foreign-rings"]
     expected: tuple[ExpectedPhase, ...]
     foreign: tuple[ForeignRing, ...]
     found: tuple[Candidate, ...]
     limits: tuple[Limit, ...]
-    weakest_percent: float
-    scale: tuple[float, float]
+    weakest_percent: tuple[float, ...]
+    scales: tuple[tuple[float, float], ...]
     remarks: tuple[str, ...]
 
 
 def screen(
-    rings: RingList,
+    patterns: Sequence[RingList],
     library: Library,
     expected: Sequence[Found],
     watch: Sequence[Watched],
@@ -99,28 +104,28 @@ def screen(
 ) -> Screening:
     """Hold the rings against the phases that are expected and those that are watched for.
 
-    `find` gives phase and structure of a name on a user's own list. `weakest` is the intensity
-    (strongest ring = 1) of the weakest ring that would have been listed; default: estimated from
-    the list. Raises InputError where nothing is expected, or too much.
+    `patterns` are of one specimen. `find` gives phase and structure of a name on a user's own list.
+    `weakest` is the intensity (strongest ring = 1) of the weakest ring that would have been listed;
+    default: estimated from each list. Raises InputError where nothing is expected, or too much.
     """
     if not 1 <= len(expected) <= MOST_EXPECTED:
         raise InputError(
             "nothing is expected" if not expected else f"{len(expected)} phases are expected",
             remedy=f"Name one to {MOST_EXPECTED} with --expect, each by itself.",
         )
-    pool = Pool(library, rings.probe.kind)
+    pool = Pool(library)
     members = tuple(dict.fromkeys(pool.add(*found) for found in expected))
     watched = pool.add_watched(watch, find)
-    pattern = prepare(rings)
-    if weakest is not None:
-        pattern = replace(pattern, ln_limit=log(weakest))
-    table = pool.table()
-    every = np.arange(len(table))
-    lines = gather(table, every, pattern)
-    model = Model((pattern,), (lines,), (crowd(table, every, pattern),))
+    tables = {kind: pool.table(kind) for kind in {rings.probe.kind for rings in patterns}}
+    own = tuple(tables[rings.probe.kind] for rings in patterns)
+    model = _model(patterns, own, weakest)
     fit, shift = _fitted(model, members)
-    claimed = fit.patterns[0].claimed[0]
-    left = [i for k in np.flatnonzero(~claimed) for i in pattern.members[k]]
+    left = [
+        (number, ring)
+        for number, (pattern, part) in enumerate(zip(model.patterns, fit.patterns, strict=True))
+        for k in np.flatnonzero(~part.claimed[0])
+        for ring in pattern.members[k]
+    ]
     result = (
         explain(model, members, shift, set(watched) - set(members))
         if left
@@ -128,13 +133,7 @@ def screen(
     )
     suspects = {s.candidate: s for s in result.suspects}
     present = [c for c, s in suspects.items() if s.probability > _FOUND]
-    phases = [pool.phase(c) for c in result.members]
-    weight = expected_weight(
-        pattern,
-        result.fit.patterns[0].ln_amplitude[0],
-        lines.strength[list(result.members)],
-        phases,
-    )
+    views = _views(model, own, result, [pool.phase(c) for c in result.members], shift)
 
     def candidate(suspect: Suspect, probability: float) -> Candidate:
         on = watched.get(suspect.candidate)
@@ -147,74 +146,138 @@ def screen(
 
     foreign = tuple(
         ForeignRing(
+            number,
             ring,
-            float(rings.d_A[ring]),
-            tuple(candidate(suspects[c], p) for c, p in result.by_ring.get(ring, ())),
+            float(patterns[number].d_A[ring]),
+            tuple(candidate(suspects[c], p) for c, p in result.by_ring.get((number, ring), ())),
         )
-        for ring in sorted(left)
+        for number, ring in sorted(left)
     )
     limits = [
-        limit_of(pattern, lines, c, pool.phase(c), table.hkl, weight, shift)
-        for c in watched
-        if c not in members and c not in present
+        limit_of(views, c, pool.phase(c)) for c in watched if c not in members and c not in present
     ]
     return Screening(
-        rings=rings,
+        patterns=tuple(patterns),
         verdict="foreign-rings" if foreign else "clean",
-        expected=tuple(_expected(model, members, k, fit, shift, pool) for k in range(len(members))),
+        expected=tuple(
+            _expected(model, own, members, k, fit, shift, pool.phase(members[k]))
+            for k in range(len(members))
+        ),
         foreign=foreign,
         found=tuple(
             candidate(suspects[c], suspects[c].probability) for c in present if c in watched
         ),
         limits=tuple(sorted(limits, key=lambda limit: limit.share)),
-        weakest_percent=100.0 * exp(pattern.ln_limit),
-        scale=(exp(shift), exp(shift) * float(fit.scale_sd[0, 0])),
-        remarks=(*rings.remarks, *_remarks(pattern, weakest, weight)),
+        weakest_percent=tuple(100.0 * exp(pattern.ln_limit) for pattern in model.patterns),
+        scales=tuple(
+            (exp(s), exp(s) * float(sd)) for s, sd in zip(shift, fit.scale_sd[0], strict=True)
+        ),
+        remarks=tuple(
+            dict.fromkeys(
+                remark
+                for view in views
+                for remark in (*view.pattern.rings.remarks, *_remarks(view, weakest))
+            )
+        ),
     )
 
 
-def _fitted(model: Model, members: tuple[int, ...]) -> tuple[Fit, float]:
-    """The expected phases on the rings, at the best of many common shifts."""
-    pattern = model.patterns[0]
+def _model(
+    patterns: Sequence[RingList], tables: tuple[LineTable, ...], weakest: float | None
+) -> Model:
+    """All phases of the tables, one table per pattern, as candidates."""
+    prepared = prepare_all(patterns)
+    if weakest is not None:
+        prepared = [replace(pattern, ln_limit=log(weakest)) for pattern in prepared]
+    pairs = list(zip(tables, prepared, strict=True))
+    every = np.arange(len(tables[0]))
+    return Model(
+        tuple(prepared),
+        tuple(gather(table, every, pattern) for table, pattern in pairs),
+        tuple(crowd(table, every, pattern) for table, pattern in pairs),
+    )
+
+
+def _views(
+    model: Model,
+    tables: tuple[LineTable, ...],
+    result: Contaminants,
+    phases: list[Phase],
+    shift: Floats,
+) -> list[View]:
+    """Each pattern with what is seen in it, to compare shares with."""
+    return [
+        View(
+            pattern,
+            lines,
+            table.hkl,
+            expected_weight(
+                pattern, part.ln_amplitude[0], lines.strength[list(result.members)], phases
+            ),
+            float(common),
+        )
+        for pattern, lines, table, part, common in zip(
+            model.patterns, model.lines, tables, result.fit.patterns, shift, strict=True
+        )
+    ]
+
+
+def _fitted(model: Model, members: tuple[int, ...]) -> tuple[Fit, Floats]:
+    """The expected phases on the rings; the best of many common shifts of each pattern."""
+    start = [
+        _best_shift(Model((pattern,), (lines,), (density,)), members)
+        for pattern, lines, density in zip(model.patterns, model.lines, model.crowd, strict=True)
+    ]
+    rows = np.array([members], dtype=np.int64)
+    fit = evaluate(model, rows, np.broadcast_to(start, (1, len(members), len(start))))
+    return fit, fit.offset[0].mean(axis=0)
+
+
+def _best_shift(model: Model, members: tuple[int, ...]) -> float:
+    (pattern,) = model.patterns
     reach = 3.0 * float(np.hypot(pattern.probe.scale_sigma, STRAIN))
     step = float(np.median(pattern.sigma))
     count = int(np.clip(2 * np.ceil(reach / step) + 1, 5, _SHIFTS))
     shifts = np.linspace(-reach, reach, count)
     rows = np.repeat(np.array([members], dtype=np.int64), count, axis=0)
     offset = np.broadcast_to(shifts[:, None, None], (count, len(members), 1))
-    best = int(np.argmax(evaluate(model, rows, offset).log_likelihood))
-    fit = evaluate(model, rows[:1], offset[best : best + 1])
-    return fit, float(fit.offset[0].mean())
+    return float(shifts[np.argmax(evaluate(model, rows, offset).log_likelihood)])
 
 
 def _expected(
-    model: Model, members: tuple[int, ...], k: int, fit: Fit, shift: float, pool: Pool
+    model: Model,
+    tables: tuple[LineTable, ...],
+    members: tuple[int, ...],
+    k: int,
+    fit: Fit,
+    shift: Floats,
+    phase: Phase,
 ) -> ExpectedPhase:
     """What one expected phase explains, and whether the rings need it."""
-    pattern, part, lines = model.patterns[0], fit.patterns[0], model.lines[0]
-    table = pool.table()
     rest = np.array([[m for m in members if m != members[k]]], dtype=np.int64)
-    without = evaluate(model, rest, np.full((1, rest.shape[1], 1), shift))
+    without = evaluate(model, rest, np.broadcast_to(shift, (1, rest.shape[1], len(shift))))
     gain = float(fit.log_likelihood[0] - without.log_likelihood[0])
     own = []
-    for ring in np.flatnonzero(part.claimed[0]):
-        if part.share[0, k, ring] < 0.3:
-            continue
-        on = np.flatnonzero(part.line_ring[0, k] == ring)
-        row = int(lines.row[members[k], on[np.argmax(lines.intensity[members[k], on])]])
-        h, k_, l = (int(i) for i in table.hkl[row])  # noqa: E741 (Miller's own letter)
-        d_calc = float(table.d_A[row])
-        for i in pattern.members[ring]:
-            measured, sigma = float(pattern.rings.d_A[i]), float(pattern.rings.sigma_A[i])
-            residual = (log(measured / d_calc) - shift) * measured / sigma
-            own.append(ExplainedRing(int(i), (h, k_, l), d_calc, residual))
-    return ExpectedPhase(
-        pool.phase(members[k]), gain > _SEEN, tuple(sorted(own, key=lambda ring: ring.ring))
-    )
+    for number, (pattern, part, lines, table) in enumerate(
+        zip(model.patterns, fit.patterns, model.lines, tables, strict=True)
+    ):
+        for ring in np.flatnonzero(part.claimed[0]):
+            if part.share[0, k, ring] < _OWN_SHARE:
+                continue
+            on = np.flatnonzero(part.line_ring[0, k] == ring)
+            row = int(lines.row[members[k], on[np.argmax(lines.intensity[members[k], on])]])
+            h, k_, l = (int(i) for i in table.hkl[row])  # noqa: E741 (Miller's own letter)
+            d_calc = float(table.d_A[row])
+            for i in pattern.members[ring]:
+                measured, sigma = float(pattern.rings.d_A[i]), float(pattern.rings.sigma_A[i])
+                residual = (log(measured / d_calc) - float(shift[number])) * measured / sigma
+                own.append(ExplainedRing(number, int(i), (h, k_, l), d_calc, residual))
+    own.sort(key=lambda ring: (ring.pattern, ring.ring))
+    return ExpectedPhase(phase, gain > _SEEN, tuple(own))
 
 
-def _remarks(pattern: Pattern, weakest: float | None, weight: float) -> list[str]:
-    said = []
+def _remarks(view: View, weakest: float | None) -> list[str]:
+    pattern, said = view.pattern, []
     if not pattern.has_intensity:
         said.append("No intensities are given: the limits rest on a guess of what was visible.")
     elif weakest is None:
@@ -224,6 +287,6 @@ def _remarks(pattern: Pattern, weakest: float | None, weight: float) -> list[str
         )
     if pattern.probe.kind == "electron":
         said.append("Electron intensities are uneven: limits are good to a factor of about two.")
-    if weight <= 0:
+    if view.weight <= 0:
         said.append("No expected phase is seen, so there is nothing to compare shares with.")
     return said

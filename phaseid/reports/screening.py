@@ -41,14 +41,26 @@ def screening_dict(result: Screening) -> dict[str, Any]:
     return {
         "schema": SCHEMA,
         "verdict": result.verdict,
-        "probe": probe_dict(result.rings.probe),
-        "scale": {"factor": result.scale[0], "sigma": result.scale[1]},
+        "probe": probe_dict(result.patterns[0].probe),
+        "scale": _scale(result, 0),
+        "patterns": [
+            {
+                "title": rings.title,
+                "source": rings.source,
+                "probe": probe_dict(rings.probe),
+                "rings": len(rings),
+                "scale": _scale(result, number),
+                "weakest_percent": result.weakest_percent[number],
+            }
+            for number, rings in enumerate(result.patterns)
+        ],
         "expected": [
             {
                 "phase": phase_dict(part.phase),
                 "seen": part.seen,
                 "rings": [
                     {
+                        "pattern": ring.pattern,
                         "ring": ring.ring,
                         "hkl": list(ring.hkl),
                         "d_calc_A": ring.d_calc_A,
@@ -61,6 +73,7 @@ def screening_dict(result: Screening) -> dict[str, Any]:
         ],
         "foreign": [
             {
+                "pattern": ring.pattern,
                 "ring": ring.ring,
                 "d_A": ring.d_A,
                 "candidates": [_candidate(candidate) for candidate in ring.candidates],
@@ -73,13 +86,14 @@ def screening_dict(result: Screening) -> dict[str, Any]:
                 "phase": phase_dict(limit.phase),
                 "share": limit.share,
                 "share_even": limit.share_even,
+                "pattern": None if limit.hidden else limit.pattern,
                 "hkl": None if limit.hidden else list(limit.hkl),
                 "d_A": None if limit.hidden else limit.d_A,
                 "hidden": limit.hidden,
             }
             for limit in result.limits
         ],
-        "weakest_percent": result.weakest_percent,
+        "weakest_percent": result.weakest_percent[0],
         "remarks": list(result.remarks),
     }
 
@@ -87,12 +101,16 @@ def screening_dict(result: Screening) -> dict[str, Any]:
 def screening_text(result: Screening, width: int = 80) -> str:
     """Return the verdict, what is there, what is foreign, and what could hide."""
     page = wrap(_headline(result), width, indent="")
+    if len(result.patterns) > 1:
+        for number, rings in enumerate(result.patterns, start=1):
+            name = safe(rings.title or rings.source)
+            page += wrap(f"pattern {number}: {name}, {safe(rings.probe.label)}", width)
     page += ["", "Expected"]
     for part in result.expected:
-        rings = ", ".join(str(ring.ring + 1) for ring in part.rings)
+        named = ", ".join(_ring_text(result, ring.pattern, ring.ring) for ring in part.rings)
         worst = max((abs(ring.residual_sigma) for ring in part.rings), default=0.0)
         state = (
-            f"seen in rings {rings} (off by {signed_text(worst).lstrip('+')} sigma at most)"
+            f"seen in rings {named} (off by {signed_text(worst).lstrip('+')} sigma at most)"
             if part.seen
             else "not seen: no ring needs it"
         )
@@ -108,6 +126,16 @@ def screening_text(result: Screening, width: int = 80) -> str:
     return "\n".join(page) + "\n"
 
 
+def _scale(result: Screening, number: int) -> dict[str, float]:
+    factor, sigma = result.scales[number]
+    return {"factor": factor, "sigma": sigma}
+
+
+def _ring_text(result: Screening, pattern: int, ring: int) -> str:
+    """A ring counted from 1; in several patterns, pattern and ring: "2.5"."""
+    return str(ring + 1) if len(result.patterns) == 1 else f"{pattern + 1}.{ring + 1}"
+
+
 def _candidate(candidate: Candidate) -> dict[str, Any]:
     return {
         "phase": phase_dict(candidate.phase),
@@ -118,7 +146,7 @@ def _candidate(candidate: Candidate) -> dict[str, Any]:
 
 
 def _headline(result: Screening) -> str:
-    count = len(result.rings)
+    count = sum(len(rings) for rings in result.patterns)
     if result.verdict == "clean":
         seen = [limit.share for limit in result.limits if not limit.hidden]
         worth = (
@@ -136,9 +164,11 @@ def _headline(result: Screening) -> str:
 def _foreign_rows(result: Screening) -> list[list[str]]:
     rows = []
     for ring in result.foreign:
-        level = result.rings.intensity[ring.ring]
-        intensity = result.rings.grades[ring.ring] or (f"{level:.0f}" if level == level else "")
-        head = [str(ring.ring + 1), f"{ring.d_A:.4f}", intensity]
+        rings = result.patterns[ring.pattern]
+        level = rings.intensity[ring.ring]
+        intensity = rings.grades[ring.ring] or (f"{level:.0f}" if level == level else "")
+        where = _ring_text(result, ring.pattern, ring.ring)
+        head = [where, f"{ring.d_A:.4f}", intensity]
         if not ring.candidates:
             rows.append([*head, "", "nothing in the library", ""])
         for candidate in ring.candidates[:SHOWN_CANDIDATES]:
@@ -164,10 +194,11 @@ def _limits(result: Screening, width: int) -> list[str]:
         page += ["", *wrap(heading, width, first="", indent="")]
         shown = seen if len(seen) <= SHOWN_LIMITS else seen[: SHOWN_LIMITS // 2]
         last = [] if len(seen) <= SHOWN_LIMITS else seen[-(SHOWN_LIMITS // 2) :]
-        rows = [_limit_row(limit) for limit in shown]
+        many = len(result.patterns) > 1
+        rows = [_limit_row(limit, many) for limit in shown]
         if last:
             rows.append(["…", "…", f"{len(seen) - SHOWN_LIMITS} more (--json)", ""])
-            rows += [_limit_row(limit) for limit in last]
+            rows += [_limit_row(limit, many) for limit in last]
         page += table(_LIMITS, rows, width)
     if hidden:
         names = ", ".join(phase_text(limit.phase) for limit in hidden)
@@ -175,12 +206,13 @@ def _limits(result: Screening, width: int) -> list[str]:
     return page
 
 
-def _limit_row(limit: Limit) -> list[str]:
+def _limit_row(limit: Limit, many: bool) -> list[str]:
+    where = f", pattern {limit.pattern + 1}" if many else ""
     return [
         _share_text(limit.share),
         _share_text(limit.share_even),
         phase_text(limit.phase),
-        f"{hkl_text(limit.hkl)} at {limit.d_A:.3f} Å",
+        f"{hkl_text(limit.hkl)} at {limit.d_A:.3f} Å{where}",
     ]
 
 

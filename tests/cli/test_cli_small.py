@@ -193,6 +193,18 @@ def test_screen_finds_the_salt_and_gives_limits(phaseid) -> None:
     assert all(0 < limit["share"] <= 1 for limit in value["limits"])
 
 
+def test_screen_takes_several_patterns_of_a_specimen(phaseid) -> None:
+    electrons = str(data_path("demo") / "foil_electrons.csv")
+    words = ("screen", electrons, XRAYS, "--expect", "Al", "--expect", "MgO")
+    value = phaseid(*words, "--json").json("screening-1")
+    assert [p["probe"]["kind"] for p in value["patterns"]] == ["electron", "x-ray"]
+    assert [(ring["pattern"], ring["ring"]) for ring in value["foreign"]] == [(0, 0)]
+    done = phaseid(*words)
+    assert "pattern 2: foil, X-rays" in done.out
+    assert "1.2, " in done.out
+    assert max(map(len, done.out.splitlines())) <= 80
+
+
 def test_screen_in_words(phaseid, tmp_path: Path) -> None:
     mine = tmp_path / "mine.txt"
     mine.write_text("gold # the coater\n", encoding="utf-8")

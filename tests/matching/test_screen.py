@@ -32,9 +32,14 @@ def find(starter_library: Library) -> Find:
 
 @pytest.fixture
 def screened(starter_library: Library, find: Find):
-    def held(rings: RingList, *expected: str, watch: list[Watched] | None = None) -> Screening:
+    def held(
+        rings: RingList,
+        *expected: str,
+        also: tuple[RingList, ...] = (),
+        watch: list[Watched] | None = None,
+    ) -> Screening:
         listed = watch_lists() if watch is None else watch
-        return screen(rings, starter_library, [find(e) for e in expected], listed, find)
+        return screen([rings, *also], starter_library, [find(e) for e in expected], listed, find)
 
     return held
 
@@ -85,7 +90,7 @@ def test_a_phase_beside_the_library_can_be_expected(
     """An empty library, everything given as structures: the same verdict."""
     rings = read_rings(DEMO / "foil_xrays.csv")
     with Library.create(tmp_path / "empty.sqlite") as empty:
-        result = screen(rings, empty, [find("Al"), find("MgO")], watch_lists(), find)
+        result = screen([rings], empty, [find("Al"), find("MgO")], watch_lists(), find)
     assert result.verdict == "clean"
     assert len(result.limits) > 60
 
@@ -96,6 +101,35 @@ def test_nothing_or_too_much_expected_is_refused(screened) -> None:
         screened(rings)
     with pytest.raises(InputError, match="--expect"):
         screened(rings, *["Al"] * 9)
+
+
+def test_patterns_of_one_specimen_are_screened_together(screened) -> None:
+    electrons, xrays = (read_rings(DEMO / f"foil_{kind}.csv") for kind in ("electrons", "xrays"))
+    result = screened(electrons, "Al", "MgO", also=(xrays,))
+    assert [(ring.pattern, ring.ring) for ring in result.foreign] == [(0, 0)]
+    assert {ring.pattern for part in result.expected for ring in part.rings} == {0, 1}
+    assert len(result.scales) == len(result.weakest_percent) == 2
+    # two looks find no less than either alone
+    single = [screened(rings, "Al", "MgO") for rings in (electrons, xrays)]
+    for limit in result.limits:
+        alone = [
+            other.share
+            for one in single
+            for other in one.limits
+            if other.phase.phase_id == limit.phase.phase_id
+        ]
+        assert limit.share <= min(alone) * 1.02 + 1e-6
+
+
+def test_one_pattern_twice_as_sure_as_once_only_in_what_scatters(screened) -> None:
+    """Two looks of even chance see together what one sees in three of four cases."""
+    rings = read_rings(DEMO / "foil_xrays.csv")
+    (once,) = screened(rings, "Al", "MgO", watch=[Watched("NaCl", False, ("m",), ())]).limits
+    (twice,) = screened(
+        rings, "Al", "MgO", also=(rings,), watch=[Watched("NaCl", False, ("m",), ())]
+    ).limits
+    assert once.share_even / 2 < twice.share_even < once.share_even
+    assert once.share / 2 < twice.share < once.share
 
 
 @pytest.mark.parametrize(
@@ -114,7 +148,7 @@ def test_limits_hold_in_simulation(
     def held(share: float, seed: int) -> Screening:
         parts = [(*find(host), 1 - share), (*find(guest), share)]
         rings = simulated(parts[: 2 if share else 1], probe, limit, seed)
-        return screen(rings, small, [find(host)], watch, find, weakest=limit)
+        return screen([rings], small, [find(host)], watch, find, weakest=limit)
 
     pure = [held(0.0, seed) for seed in range(3)]
     assert [result.verdict for result in pure] == ["clean"] * 3
