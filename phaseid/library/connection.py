@@ -69,6 +69,11 @@ def _plain_words(path: Path, error: Exception) -> str:
         return f"{path}: permission denied. Check the permissions, or use --library FILE."
     if "full" in text or getattr(error, "errno", None) == errno.ENOSPC:
         return f"{path}: the disk is full. What was stored is kept; free some space and try again."
+    if "disk I/O" in text:
+        return (
+            f"{path}: the disk refused to write or read ({text}). What was stored is kept; check "
+            "the disk, the network behind it, and any limit on the size of files."
+        )
     if "locked" in text or "busy" in text:
         return (
             f"{path}: another program is writing to the library. Wait for it to end and try again."

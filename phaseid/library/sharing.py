@@ -7,12 +7,14 @@ costs nobody but itself.
 
 from __future__ import annotations
 
+import os
 import signal
 import time
 from collections import deque
 from collections.abc import Callable, Generator, Iterable, Iterator
 from concurrent.futures import BrokenExecutor, Executor, Future, ProcessPoolExecutor
-from multiprocessing import get_context
+from multiprocessing import get_context, parent_process
+from threading import Thread
 from typing import TypeVar
 
 from phaseid import __version__
@@ -132,14 +134,20 @@ class _Hired:
 
 
 def _pool(workers: int) -> ProcessPoolExecutor:
-    return ProcessPoolExecutor(
-        workers, mp_context=get_context("spawn"), initializer=_leave_interrupts
-    )
+    return ProcessPoolExecutor(workers, mp_context=get_context("spawn"), initializer=_start)
 
 
-def _leave_interrupts() -> None:
-    """Ctrl-C reaches the whole group of processes; only the one that writes shall answer it."""
+def _start() -> None:
+    """Make a worker leave Ctrl-C to the process that writes, and end where that is killed."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
+    Thread(target=_end_with_parent, daemon=True).start()
+
+
+def _end_with_parent() -> None:
+    parent = parent_process()
+    if parent is not None:
+        parent.join()
+        os._exit(1)
 
 
 def _sent(pool: ProcessPoolExecutor, task: Callable[..., T], *arguments: object) -> Future[T]:
