@@ -1,4 +1,4 @@
-"""The three questions put to spglib, each asked only where gemmi's table has no answer.
+"""The four questions put to spglib, each asked only where gemmi's table has no answer.
 
 spglib takes a tenth of a second to load and warns about its own future error handling on every
 call; both stay in here.
@@ -47,6 +47,22 @@ def group_of_atoms(
     atoms = (lattice.tolist(), fract, kinds)
     found: Any = _asked(lambda: spglib.get_symmetry_dataset(atoms, symprec=tolerance_A))
     return None if found is None else (int(found.number), str(found.international))
+
+
+def operations_of_atoms(
+    cell: Cell, fract: list[tuple[float, float, float]], kinds: list[int], tolerance_A: float
+) -> tuple[int, NDArray[np.float64], NDArray[np.float64]] | None:
+    """Return number, rotations (m, 3, 3) and translations (m, 3) of the group of all atoms.
+
+    In the cell as given; None if no group fits.
+    """
+    import spglib
+
+    atoms = (np.linalg.cholesky(metric_tensor(cell)).tolist(), fract, kinds)
+    found: Any = _asked(lambda: spglib.get_symmetry_dataset(atoms, symprec=tolerance_A))
+    if found is None:
+        return None
+    return int(found.number), found.rotations.astype(np.float64), found.translations
 
 
 def _asked(question: Callable[[], _T]) -> _T | None:

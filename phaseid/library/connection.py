@@ -181,6 +181,8 @@ def _bring_up_to_date(
     conn: sqlite3.Connection, path: Path, version: int, tell: Tell | None
 ) -> None:
     """Apply the steps that are missing; the file as it was stays beside it."""
+    from phaseid.library.grouping import group_entries
+
     copy = path.with_name(f"{path.name}.schema-{version}")
     number = 1
     while copy.exists():
@@ -197,6 +199,7 @@ def _bring_up_to_date(
             conn.backup(whole)
         made.rename(copy)
     apply_steps(conn)
+    group_entries(conn)
     with suppress(sqlite3.OperationalError):  # somebody reads, or the disk is nearly full
         conn.execute("VACUUM")
 

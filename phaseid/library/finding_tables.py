@@ -41,13 +41,17 @@ _STATEMENTS = (
     # each holds what the others search by, so that a question is answered from one index
     """
     CREATE INDEX phase_by_elements ON phase
-        (elements, formula_key, space_group_number, density_g_cm3, a_A, b_A, c_A)
+        (elements, formula_key, space_group_number, density_g_cm3, source_database, a_A, b_A, c_A)
     """,
     """
     CREATE INDEX phase_by_space_group ON phase
         (space_group_number, elements, formula_key, density_g_cm3, a_A, b_A, c_A)
     """,
-    "CREATE INDEX phase_by_density ON phase (density_g_cm3, elements, formula_key)",
+    """
+    CREATE INDEX phase_by_density ON phase
+        (density_g_cm3, elements, formula_key, space_group_number)
+    """,
+    "CREATE INDEX phase_by_source ON phase (source_database, elements, formula_key)",
     "CREATE INDEX phase_by_a ON phase (a_A, b_A, c_A)",
     "CREATE INDEX phase_by_b ON phase (b_A, c_A, a_A)",
     "CREATE INDEX phase_by_c ON phase (c_A, a_A, b_A)",

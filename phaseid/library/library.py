@@ -21,7 +21,9 @@ if TYPE_CHECKING:
 
     from phaseid.crystal.crystal import Crystal
     from phaseid.crystal.lines import Lines
+    from phaseid.library.finding import Found
     from phaseid.library.packing import Kind
+    from phaseid.library.question import Question
     from phaseid.library.strongest import StrongLines
     from phaseid.library.tally import ImportTally
 
@@ -139,6 +141,27 @@ class Library:
         with self._told():
             return lookups.choose(self._conn, text)
 
+    def search(
+        self, question: Question, *, limit: int | None = None, every_entry: bool = False
+    ) -> Found:
+        """Return the phases that answer a question; see `phaseid.library.finding.search`."""
+        from phaseid.library.finding import search
+
+        with self._told():
+            return search(self._conn, question, limit=limit, every_entry=every_entry)
+
+    def entries(self, phase_id: str) -> list[Phase]:
+        """Return all entries of the phase that this one is of, the one that stands for it first.
+
+        Raises InputError as `phase`.
+        """
+        from phaseid.library.groups import group_of
+
+        self.phase(phase_id)
+        (row,) = self._one("SELECT id FROM phase WHERE phase_id = ?", phase_id)
+        with self._told():
+            return lookups.phases_of(self._conn, group_of(self._conn, row))
+
     def crystal(self, phase_id: str) -> Crystal:
         """Return the structure of a phase exactly as it was added; raises InputError as `phase`."""
         from phaseid.library.records import unpack_crystal
@@ -220,7 +243,7 @@ class Library:
         from phaseid.library.adding import add_paths
 
         given = [Path(path) for path in paths]
-        with self._writer() as conn:
+        with self.writing() as conn:
             return add_paths(conn, given, progress, workers=workers, executor=executor)
 
     def add_crystals(
@@ -229,17 +252,27 @@ class Library:
         """Add structures that are already read; otherwise as `add`."""
         from phaseid.library.adding import add_crystals
 
-        with self._writer() as conn:
+        with self.writing() as conn:
             return add_crystals(conn, crystals, progress)
 
     @contextmanager
-    def _writer(self) -> Iterator[sqlite3.Connection]:
+    def reading(self) -> Iterator[sqlite3.Connection]:
+        """Yield the connection for reading; what SQLite complains of becomes a LibraryError."""
+        with self._told():
+            yield self._conn
+
+    @contextmanager
+    def writing(self) -> Iterator[sqlite3.Connection]:
+        """Yield a connection for changing the library; entries are grouped anew at the end."""
+        from phaseid.library.grouping import group_entries
+
         self._conn.close()  # an idle reader would keep the file in WAL mode
         try:
             conn = connection.open_for_writing(self.path)
             try:
                 with connection.told(self.path):
                     yield conn
+                    group_entries(conn)
             finally:
                 connection.close_after_writing(conn, self.path)
         finally:

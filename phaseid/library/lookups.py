@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 import sqlite3
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from enum import IntEnum
 from typing import Any
@@ -19,6 +19,7 @@ from phaseid.library.formulas import (
     name_key,
     near_compositions,
 )
+from phaseid.library.groups import LISTED, listed, one_of_each
 from phaseid.library.phase import Phase
 from phaseid.library.records import findings_from_json
 
@@ -33,6 +34,7 @@ _NAME_SHOWN = 30  # characters, so that a choice fits on a line
 _SUGGESTIONS = 5
 _TRIGRAM = 3
 _NAMES_COMPARED = 20_000
+_SORTED = 2_000  # entries for which name and trust are read to sort them
 _LAST = "\U0010ffff"  # sorts behind every letter
 _CLEARLY_BETTER = 0.2  # in quality: an entry this far ahead of the others is the one meant
 _SAME_CELL = 0.02  # relative edge difference within which two entries are one and the same phase
@@ -82,47 +84,94 @@ def phase_from_row(row: Sequence[Any]) -> Phase:
     )
 
 
+Kinds = frozenset[str]
+
+FORMULAS: Kinds = frozenset({"formula"})
+NAMES: Kinds = frozenset({"name"})
+ANYTHING = FORMULAS | NAMES | {"id"}
+
+
 def find(conn: sqlite3.Connection, text: str) -> list[Hit]:
-    """Return every phase that `text` can mean: exact fits first, then the more trusted entries."""
-    matches: dict[int, Match] = {}
+    """Return the phases that `text` can mean: exact fits first, then the more trusted entries.
+
+    One entry of each phase: the one that stands for it, where `text` can mean that one, too.
+    """
+    fits = matches(conn, text)
+    rows = one_of_each(conn, best_fits_first(conn, fits))
+    return [Hit(fits[row], phase) for row, phase in zip(rows, phases_of(conn, rows), strict=True)]
+
+
+def matches(conn: sqlite3.Connection, text: str, kinds: Kinds = ANYTHING) -> dict[int, Match]:
+    """Return how every entry that `text` can mean fits it, by row; `kinds` says what it may be."""
+    found: dict[int, Match] = {}
 
     def note(match: Match, row_id: int) -> None:
-        matches[row_id] = min(match, matches.get(row_id, match))
+        found[row_id] = min(match, found.get(row_id, match))
 
     def note_all(match: Match, sql: str, value: str) -> None:
         for (row_id,) in conn.execute(sql, (value,)):
             note(match, row_id)
 
     wanted, key = text.strip(), name_key(text)
-    note_all(Match.ID, "SELECT id FROM phase WHERE phase_id = ?", wanted)
-    by_number = "SELECT phase FROM label WHERE kind = 'number' AND key = ?"
-    note_all(Match.NUMBER, by_number, wanted.casefold())
-    database, named, number = wanted.casefold().replace(":", " ").rpartition(" ")
-    if named:  # "COD 9008460"
-        both = (number, f"{database.strip()} {number}")
-        for (row_id,) in conn.execute(by_number + " AND lower(text) = ?", both):
-            note(Match.NUMBER, row_id)
-    by_formula = "SELECT id FROM phase WHERE formula_key = ?"
-    literal = formula_keys(wanted)
-    for formula_key in literal:
-        note_all(Match.FORMULA, by_formula, formula_key)
-    if key in ELEMENT_NAMED:
-        note_all(Match.ELEMENT, by_formula, composition_key({ELEMENT_NAMED[key]: 1.0}))
-    for formula_key in formula_keys(wanted, any_case=True):
-        note_all(Match.FORMULA_ANY_CASE, by_formula, formula_key)
-    for row_id, name in _names(conn, key, exact=bool(literal)):
-        note(_name_match(key, name), row_id)
-    if literal and not matches:
+    literal = formula_keys(wanted) if "formula" in kinds else []
+    if "id" in kinds:
+        _note_numbers(conn, wanted, note)
+    if "formula" in kinds:
+        by_formula = "SELECT id FROM phase WHERE formula_key = ?"
+        for formula_key in literal:
+            note_all(Match.FORMULA, by_formula, formula_key)
+        if key in ELEMENT_NAMED:
+            note_all(Match.ELEMENT, by_formula, composition_key({ELEMENT_NAMED[key]: 1.0}))
+        for formula_key in formula_keys(wanted, any_case=True):
+            note_all(Match.FORMULA_ANY_CASE, by_formula, formula_key)
+    if "name" in kinds:
+        for row_id, name in _names(conn, key, exact=bool(literal)):
+            note(_name_match(key, name), row_id)
+    if literal and not found:
         elements = " ".join(sorted(part.rstrip("0123456789.") for part in literal[0].split()))
         by_elements = "SELECT id, formula_key FROM phase WHERE elements = ?"
         for row_id, formula_key in conn.execute(by_elements, (elements,)):
             if near_compositions(formula_key, literal[0]):
                 note(Match.FORMULA_NEAR, row_id)
-    hits = [
-        Hit(matches[row[0]], phase_from_row(row[1:])) for row in _rows_by_id(conn, sorted(matches))
+    return found
+
+
+def _note_numbers(
+    conn: sqlite3.Connection, wanted: str, note: Callable[[Match, int], None]
+) -> None:
+    """Note the phase of that id, and the entries of that source number."""
+    for (row_id,) in conn.execute("SELECT id FROM phase WHERE phase_id = ?", (wanted,)):
+        note(Match.ID, row_id)
+    by_number = "SELECT phase FROM label WHERE kind = 'number' AND key = ?"
+    for (row_id,) in conn.execute(by_number, (wanted.casefold(),)):
+        note(Match.NUMBER, row_id)
+    database, named, number = wanted.casefold().replace(":", " ").rpartition(" ")
+    if named:  # "COD 9008460"
+        both = (number, f"{database.strip()} {number}")
+        for (row_id,) in conn.execute(by_number + " AND lower(text) = ?", both):
+            note(Match.NUMBER, row_id)
+
+
+def best_fits_first(conn: sqlite3.Connection, fits: Mapping[int, Match]) -> list[int]:
+    """Return rows, best fits first, then the more trusted, by name and phase id.
+
+    Of very many, who wants more than the first has asked too little: these are sorted by fit alone.
+    """
+    if len(fits) > _SORTED:
+        return sorted(fits, key=lambda row: (fits[row], row))
+    sql = f"SELECT quality, name, phase_id, id FROM phase WHERE id IN {LISTED}"
+    order = [
+        (fits[row], -quality, name, phase_id, row)
+        for quality, name, phase_id, row in conn.execute(sql, (listed(fits),))
     ]
-    hits.sort(key=lambda hit: (hit.match, -hit.phase.quality, hit.phase.name, hit.phase.phase_id))
-    return hits
+    return [entry[-1] for entry in sorted(order)]
+
+
+def phases_of(conn: sqlite3.Connection, rows: Sequence[int]) -> list[Phase]:
+    """Return the phases of the rows, in that order."""
+    sql = f"SELECT id, {PHASE_COLUMNS} FROM phase WHERE id IN {LISTED}"
+    found = {row[0]: phase_from_row(row[1:]) for row in conn.execute(sql, (listed(rows),))}
+    return [found[row] for row in rows]
 
 
 def _names(conn: sqlite3.Connection, key: str, *, exact: bool) -> Iterator[tuple[int, str]]:
@@ -158,15 +207,6 @@ def _name_match(key: str, name: str) -> Match:
     if f" {key} " in f" {name} ":
         return Match.NAME_WORDS
     return Match.NAME_STARTS if name.startswith(key) else Match.NAME_HOLDS
-
-
-def _rows_by_id(conn: sqlite3.Connection, ids: Sequence[int]) -> Iterator[tuple[Any, ...]]:
-    for start in range(0, len(ids), 500):
-        some = ids[start : start + 500]
-        marks = ", ".join("?" * len(some))
-        yield from conn.execute(
-            f"SELECT id, {PHASE_COLUMNS} FROM phase WHERE id IN ({marks})", some
-        )
 
 
 def choose(conn: sqlite3.Connection, text: str) -> Phase:

@@ -5,7 +5,8 @@ A library file is plain SQLite. `meta` says what it is; `phase` has one compact 
 `symmetry` the operations that many structures share, `block` what a search looks through first;
 `label` holds every name and source number a phase can be asked for by (with a trigram index);
 `seen` remembers files that were read without a reject,
-so that they need not be read again; `reject` what could not be read and why.
+so that they need not be read again; `reject` what could not be read and why. What grouping and
+finding need stands in `finding_tables`.
 """
 
 from __future__ import annotations
@@ -16,6 +17,7 @@ from typing import TYPE_CHECKING
 
 from phaseid import __version__
 from phaseid.library.compact_tables import compact_tables
+from phaseid.library.finding_tables import finding_tables
 
 if TYPE_CHECKING:
     from sqlite_utils import Database
@@ -82,6 +84,7 @@ def _first_tables(db: Database) -> None:
 STEPS: tuple[Step, ...] = (
     ("first tables", _first_tables),
     ("compact lines and blocks", compact_tables),
+    ("grouping and finding", finding_tables),
 )
 
 SCHEMA_VERSION = len(STEPS)

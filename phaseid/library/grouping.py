@@ -1,0 +1,98 @@
+"""One phase, many entries: which entries are determinations of the same phase, and which stands.
+
+The best determination of a phase is the leader of the others. Entries are compared among those of
+the same elements, the best first, each with the leaders so far; so the outcome depends on what is
+in the library and not on how it came there. An entry that was just added, and one whose leader
+went, stands for itself until `group_entries` has run.
+"""
+
+from __future__ import annotations
+
+import sqlite3
+from collections import defaultdict
+from collections.abc import Sequence
+from contextlib import suppress
+from statistics import median
+
+from phaseid.library.determinations import COLUMNS, StoredEntry
+from phaseid.library.sameness import MEASURED_CELL, same_phase
+
+_SETS_A_TRANSACTION = 500
+_COLD_K = 200.0  # below, a cell is clearly smaller than at room temperature
+
+
+def group_entries(conn: sqlite3.Connection) -> None:
+    """Bring table `member` up to date with what came and went.
+
+    Only sets of elements in which something changed are looked at. Opens transactions of its own
+    unless it is called within one.
+    """
+    sets = [row[0] for row in conn.execute("SELECT elements FROM ungrouped ORDER BY 1")]
+    if conn.in_transaction:
+        _group_sets(conn, sets)
+        return
+    for start in range(0, len(sets), _SETS_A_TRANSACTION):
+        conn.execute("BEGIN IMMEDIATE")
+        try:
+            _group_sets(conn, sets[start : start + _SETS_A_TRANSACTION])
+            conn.execute("COMMIT")
+        except BaseException:
+            with suppress(sqlite3.OperationalError):  # SQLite may have rolled back by itself
+                conn.execute("ROLLBACK")
+            raise
+
+
+def _group_sets(conn: sqlite3.Connection, sets: list[str]) -> None:
+    for elements in sets:
+        rows = conn.execute(f"SELECT {COLUMNS} FROM phase WHERE elements = ?", (elements,))
+        entries = [StoredEntry(conn, *row) for row in rows.fetchall()]
+        leaders = leaders_of(entries)
+        conn.executemany("DELETE FROM member WHERE phase = ?", [(e.row,) for e in entries])
+        others = [(row, leader) for row, leader in leaders.items() if row != leader]
+        conn.executemany("INSERT INTO member VALUES (?, ?)", others)
+        conn.execute("DELETE FROM ungrouped WHERE elements = ?", (elements,))
+
+
+def leaders_of(entries: Sequence[StoredEntry]) -> dict[int, int]:
+    """Return row of the leader by row of the entry, for all entries of one set of elements."""
+    parts: dict[int, list[StoredEntry]] = defaultdict(list)
+    for entry in entries:
+        parts[entry.group].append(entry)
+    leaders: dict[int, int] = {}
+    for part in parts.values():
+        standing: list[StoredEntry] = []
+        for entry in best_first(part):
+            leader = next((one for one in standing if same_phase(one, entry)), entry)
+            if leader is entry:
+                standing.append(entry)
+            leaders[entry.row] = leader.row
+    return leaders
+
+
+def best_first(entries: list[StoredEntry]) -> list[StoredEntry]:
+    """Sort determinations by how well they stand for their phase.
+
+    Measured before computed; the symmetry told before atoms one by one; then quality, which holds
+    pressure, temperature, disorder and doubts; not measured in the cold; the cell near the middle
+    of the others'; named; with its reference. Whatever is still equal goes by content.
+    """
+    if len(entries) == 1:
+        return entries
+    measured = sorted(entry.ln_density for entry in entries if not entry.computed)
+
+    def rank(entry: StoredEntry) -> tuple[object, ...]:
+        peers = [x for x in measured if abs(x - entry.ln_density) <= 3 * MEASURED_CELL]
+        off = round(abs(entry.ln_density - median(peers)), 3) if peers else 0.0
+        cold = len(peers) > 1 and not entry.computed and entry.colder_than(_COLD_K)
+        return (
+            entry.computed,
+            entry.symmetry_untold,
+            -entry.quality,
+            cold,
+            off,
+            not entry.named,
+            not entry.reference,
+            entry.content,
+        )
+
+    return sorted(entries, key=rank)
