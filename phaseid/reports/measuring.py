@@ -39,7 +39,9 @@ def measurement_dict(found: Measurement, d_A: list[float] | None = None) -> dict
                 "intensity_sigma": ring.intensity_sigma,
                 "sum": ring.total,
                 "spottiness": ring.spottiness,
+                "arcs": ring.arcs,
                 "coverage": ring.coverage,
+                "along_ring": [None if np.isnan(v) else v for v in ring.along] or None,
                 "note": ring.note,
                 "d_A": None if d_A is None else d_A[i],
             }

@@ -6,7 +6,7 @@ ellipse's axes, divided by its half-axes' factors and measured from the centre.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -28,15 +28,30 @@ class Scene:
     tail_length: float = 25.0
     halo: tuple[float, float, float] | None = None  # radius, sigma, height
     stop: tuple[float, float, float] | None = None  # half-width, tip radius, direction in degrees
+    through: float = 0.02  # what the stop lets pass
     spots: int = 0  # crystallites a ring, 0 for even rings
     texture: float = 0.0
     dead: int = 0
     hot: int = 0
+    scratches: int = 0
     saturation: float | None = None
     seed: int = 0
 
 
+@dataclass(frozen=True, eq=False)
+class Drawing:
+    """Counts (h, w), and for each ring of the scene how many sigmas it stands above the counting
+    noise of what lies under it, its background and everything else known."""
+
+    counts: NDArray[np.float64]
+    clear: NDArray[np.float64]
+
+
 def draw(scene: Scene) -> NDArray[np.float64]:
+    return drawing(scene).counts
+
+
+def drawing(scene: Scene) -> Drawing:
     rng = np.random.default_rng(scene.seed)
     height, width = scene.size
     yy, xx = np.mgrid[0:height, 0:width].astype(float)
@@ -51,6 +66,7 @@ def draw(scene: Scene) -> NDArray[np.float64]:
     if scene.halo is not None:
         at, spread, top = scene.halo
         picture = picture + top * np.exp(-0.5 * ((r - at) / spread) ** 2)
+    rings = []
     for radius, top in zip(scene.radii, scene.heights, strict=True):
         ring = top * np.exp(-0.5 * ((r - radius) / scene.sigma) ** 2)
         if scene.texture:
@@ -66,19 +82,31 @@ def draw(scene: Scene) -> NDArray[np.float64]:
                 pattern += strength * np.exp(-0.5 * (off / spread) ** 2)
             pattern /= pattern.mean()
             ring = ring * np.interp(azimuth, along_ring, pattern, period=2 * np.pi)
+        rings.append(ring)
         picture = picture + ring
+    open_to = np.ones(scene.size)
     if scene.stop is not None:
         half, tip, direction = scene.stop
         t = np.radians(direction)
         u, v = dx * np.cos(t) + dy * np.sin(t), -dx * np.sin(t) + dy * np.cos(t)
         shaded = ((np.abs(v) < half) & (u > 0)) | (np.hypot(dx, dy) < tip)
-        picture = np.where(shaded, 0.02 * picture, picture)
+        open_to[shaded] = scene.through
+    picture = open_to * picture
+    seen = open_to == 1.0
+    if scene.saturation is not None:
+        seen &= picture < 0.9 * scene.saturation
+    clear = [float(np.sqrt((ring[seen] ** 2 / picture[seen]).sum())) for ring in rings]
     counts = rng.poisson(picture).astype(float)
     for number, value in ((scene.dead, 0.0), (scene.hot, 20 * float(counts.max()))):
         counts[rng.integers(0, height, number), rng.integers(0, width, number)] = value
+    for _ in range(scene.scratches):
+        x, y, turn = rng.uniform(0, width), rng.uniform(0, height), rng.uniform(0, np.pi)
+        off = (xx - x) * np.sin(turn) - (yy - y) * np.cos(turn)
+        on = (np.abs(off) < 0.8) & (np.hypot(xx - x, yy - y) < 0.3 * width)
+        counts[on] = rng.poisson(rng.choice([0.3, 3.0]) * counts[on])
     if scene.saturation is not None:
         counts = np.minimum(counts, scene.saturation)
-    return counts
+    return Drawing(counts, np.array(clear))
 
 
 def random_scene(seed: int, size: int = 384) -> Scene:
@@ -93,7 +121,7 @@ def random_scene(seed: int, size: int = 384) -> Scene:
             radii.append(r)
     stop = (float(rng.uniform(5, 9)), float(rng.uniform(9, 16)), float(rng.uniform(0, 360)))
     halo = (float(rng.uniform(0.3, 0.6)) * reach, 0.11 * size, float(rng.uniform(10, 60)))
-    return Scene(
+    scene = Scene(
         size=(height, width),
         centre=(width / 2 + float(rng.normal(0, 12)), height / 2 + float(rng.normal(0, 12))),
         radii=tuple(sorted(radii)),
@@ -111,4 +139,16 @@ def random_scene(seed: int, size: int = 384) -> Scene:
         dead=20,
         hot=20,
         seed=seed,
+    )
+    return replace(
+        scene,
+        through=float(rng.uniform(0.1, 0.4)) if rng.random() < 0.3 else 0.02,
+        scratches=int(rng.integers(1, 4)) if rng.random() < 0.2 else 0,
+        saturation=float(
+            0.8 * max(scene.heights)
+            + 2 * scene.background
+            + (0 if scene.halo is None else scene.halo[2])
+        )
+        if rng.random() < 0.1
+        else None,
     )

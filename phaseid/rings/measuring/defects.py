@@ -1,4 +1,4 @@
-"""Pixels that show no diffraction: dead and hot ones, and the shadow of a beam stop."""
+"""Pixels that show no diffraction: dead, hot and saturated ones, the shadow of a beam stop."""
 
 from __future__ import annotations
 
@@ -10,7 +10,7 @@ from phaseid.rings.measuring.polar import polar_sums
 
 Mask = NDArray[np.bool_]
 
-SHADOW = 0.5  # of the background around the circle, below which a patch is in shadow
+SHADOW = 0.7  # of the background around the circle, below which a patch is in shadow
 _EDGE_PX = 3
 
 
@@ -50,6 +50,29 @@ def _lone(image: Pixels, per_count: np.float32) -> Mask:
     inner = image[1:-1, 1:-1]
     noise = np.sqrt(per_count * np.maximum(high, 1.0))
     return np.asarray((inner > 1.8 * high + 6.0 * noise) | (inner < 0.4 * low - 4.0 * noise))
+
+
+def saturated_pixels(image: Pixels, usable: Mask) -> Mask:
+    """Pixels (h, w) at the largest value, where more pile up there than just below."""
+    high = float(image[usable].max())
+    at_top = (image >= high) & usable
+    number = int(at_top.sum())
+    if number < 8 or number > 0.5 * image.size:
+        return np.zeros(image.shape, dtype=np.bool_)
+    below = int(((image >= high * 0.97) & ~at_top & usable).sum())
+    levels = max(1.0, 0.03 * high)
+    if number < 4.0 * below / levels + 8:
+        return np.zeros(image.shape, dtype=np.bool_)
+    return at_top
+
+
+def blots(saturated: Mask) -> Mask:
+    """Saturated areas (h, w) broader than rings are, with a rim: the beam and what it spills."""
+    from scipy.ndimage import maximum_filter, minimum_filter
+
+    size = max(7, max(saturated.shape) // 48) | 1
+    core = minimum_filter(saturated, size)
+    return np.asarray(maximum_filter(core, size + 2 * _EDGE_PX))
 
 
 def shadow(image: Pixels, usable: Mask, geometry: Geometry) -> Mask:

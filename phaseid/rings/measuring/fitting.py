@@ -24,7 +24,8 @@ class PeakFit:
 
     `position`, `fwhm`, `height`, `area` and their sigmas (m,); `lorentzian` is the Lorentzian part
     of the common shape; `background` (n,) and `model` (n,) on the abscissa fitted;
-    `chi2_reduced` is the misfit per degree of freedom (sigmas are raised by it where above one).
+    `chi2_reduced` is the misfit per degree of freedom. Sigmas are raised where the curve nearby is
+    fitted worse than its noise would have it.
     """
 
     position: Floats
@@ -91,6 +92,18 @@ def _solve(design: Floats, right: Floats) -> Floats:
     return np.asarray(answer / (scale if right.ndim == 1 else scale[:, None]))
 
 
+def _local_mean(values: Floats, used: NDArray[np.bool_], window: float) -> Floats:
+    """Mean of the used values within a window of so many points about each (n,)."""
+    from scipy.ndimage import uniform_filter1d
+
+    size = max(3, int(window)) | 1
+    share = uniform_filter1d(used.astype(np.float64), size, mode="nearest")
+    return np.asarray(
+        uniform_filter1d(np.where(used, values, 0.0), size, mode="nearest")
+        / np.maximum(share, 1e-9)
+    )
+
+
 def fit_peaks(
     x: Floats,
     y: Floats,
@@ -100,11 +113,13 @@ def fit_peaks(
     basis: Floats,
     *,
     satellite: Satellite | None = None,
+    clipped: NDArray[np.bool_] | None = None,
 ) -> PeakFit:
     """Fit m peaks at about `position` (m,) with widths about `fwhm` (m,) to y ± sigma (n,) at x.
 
     All peaks share one shape, each has a width of its own, together with the background of
-    `basis` (n, k). `satellite` is (where the companion of a peak lies, its relative height).
+    `basis` (n, k). `satellite` is (where the companion of a peak lies, its relative height);
+    points `clipped` (n,) by saturation take no part.
     """
     from scipy.optimize import least_squares
 
@@ -112,7 +127,7 @@ def fit_peaks(
     order = np.argsort(position)
     position, fwhm = position[order], fwhm[order]
     step = float(np.median(np.diff(x)))
-    weight = 1.0 / sigma
+    weight = 1.0 / sigma if clipped is None else np.where(clipped, 0.0, 1.0 / sigma)
 
     def parts(values: Floats) -> tuple[Floats, Floats, Floats, Floats]:
         place, width, mixing = values[:m], values[m : 2 * m], float(values[2 * m])
@@ -149,8 +164,14 @@ def fit_peaks(
         return np.asarray(free - design @ _solve(design, free))
 
     start = np.concatenate([position, fwhm, [0.2]])
-    low = np.concatenate([position - 1.5 * fwhm, np.maximum(0.3 * fwhm, step), [0.0]])
-    high = np.concatenate([position + 1.5 * fwhm, 4.0 * fwhm + step, [1.0]])
+    narrow, wide = np.maximum(0.3 * fwhm, step), 4.0 * fwhm + step
+    if clipped is not None:  # flanks alone do not tell width from height
+        headless = clipped[np.clip(np.searchsorted(x, position), 0, len(x) - 1)]
+        usual = float(np.median(fwhm[~headless])) if not headless.all() else float(np.median(fwhm))
+        narrow = np.where(headless, 0.8 * usual, narrow)
+        wide = np.where(headless, 1.3 * usual, wide)
+    low = np.concatenate([position - 1.5 * fwhm, narrow, [0.0]])
+    high = np.concatenate([position + 1.5 * fwhm, wide, [1.0]])
     start = np.clip(start, low + 1e-9, high - 1e-9)
     answer = least_squares(
         misfit,
@@ -170,10 +191,13 @@ def fit_peaks(
     jacobian = np.hstack(
         [found[1] * height, found[2] * height, (found[3] @ height)[:, None], design]
     )
-    dof = max(len(x) - jacobian.shape[1], 1)
-    chi2 = float((((y - model) * weight) ** 2).sum() / dof)
-    covariance = np.linalg.pinv((jacobian.T * weight**2) @ jacobian, hermitian=True)
-    covariance *= max(1.0, chi2)
+    used = int((weight > 0).sum())
+    dof = max(used - jacobian.shape[1], 1)
+    square = ((y - model) * weight) ** 2
+    chi2 = float(square.sum() / dof)
+    window = 3.0 * float(np.median(values[m : 2 * m])) / step
+    trusted = weight**2 / np.maximum(1.0, _local_mean(square, weight > 0, window) * used / dof)
+    covariance = np.linalg.pinv((jacobian.T * trusted) @ jacobian, hermitian=True)
     spread = np.sqrt(np.maximum(np.diag(covariance), 0.0))
     width, mixing = values[m : 2 * m], float(values[2 * m])
     per_height = mixing * _LORENTZ_AREA + (1.0 - mixing) * _GAUSS_AREA

@@ -35,7 +35,7 @@ def is_image(path: Path) -> bool:
 
 
 def read_image(path: str | Path) -> tuple[Pixels, NDArray[np.bool_]]:
-    """Counts (h, w) and which pixels are usable (finite, not saturated).
+    """Counts (h, w) and which pixels are usable (finite).
 
     Raises InputError if the file cannot be read, is no single grey image, is constant, or is larger
     than the memory set aside for it.
@@ -76,26 +76,7 @@ def _checked(raw: NDArray[np.generic], path: str | Path) -> tuple[Pixels, NDArra
             remedy="Check that the exposure was saved, not an empty frame.",
         )
     image[~usable] = low
-    usable &= ~_saturated(image, high, usable)
     return image, usable
-
-
-def _saturated(image: Pixels, high: float, usable: NDArray[np.bool_]) -> NDArray[np.bool_]:
-    """Pixels at the largest value, where they pile up there, and their neighbours."""
-    at_top = image >= high
-    number = int(at_top.sum())
-    if number < 8 or number > 0.5 * image.size:
-        return np.zeros(image.shape, dtype=np.bool_)
-    below = int(((image >= high * 0.97) & ~at_top & usable).sum())
-    levels = max(1.0, 0.03 * high)
-    if number < 4.0 * below / levels + 8:
-        return np.zeros(image.shape, dtype=np.bool_)
-    wide = at_top.copy()
-    wide[1:] |= at_top[:-1]
-    wide[:-1] |= at_top[1:]
-    wide[:, 1:] |= at_top[:, :-1]
-    wide[:, :-1] |= at_top[:, 1:]
-    return wide
 
 
 def _too_large(path: Path, size: tuple[int, int] | None = None) -> InputError:

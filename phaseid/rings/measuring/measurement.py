@@ -23,8 +23,10 @@ class MeasuredRing:
     `position` is in the unit of the measurement's column; `width` is the full width at half
     maximum in that unit; `intensity` the area of the azimuthal mean (counts per unit length of ring
     × unit of position), `total` that of the whole ring (None for a profile). `spottiness` is the
-    relative standard deviation of the intensity along the ring beyond counting noise, `coverage`
-    the share of the circle seen (both None for a profile). `note` says what is unusual.
+    relative standard deviation of the intensity along the ring beyond counting noise, `arcs` that
+    of its part that changes smoothly, `coverage` the share of the circle seen (None for a profile).
+    `along` is the intensity in equal sectors from the direction of x towards y, its mean 1, NaN
+    where the ring is not seen. `note` says what is unusual.
     """
 
     position: float
@@ -35,8 +37,10 @@ class MeasuredRing:
     intensity_sigma: float
     total: float | None = None
     spottiness: float | None = None
+    arcs: float | None = None
     coverage: float | None = None
     note: str = ""
+    along: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -81,13 +85,15 @@ class Measurement:
         strongest = max((ring.intensity for ring in self.rings), default=0.0)
         if strongest > 0:
             share = 100.0 * self.limit / strongest
-            lines.append(f"# detection limit: {plain_number(round(share, 4))} (strongest = 100)")
+            lines.append(f"# detection limit: {plain_number(round(share, 4))}")
         lines += [f"# amorphous halo: about {halo:.4g}" for halo in self.halos]
-        lines.append(f"{self.column},sigma,intensity,note")
+        uneven = any(ring.spottiness is not None for ring in self.rings)
+        lines.append(f"{self.column},sigma,intensity,{'spottiness,arcs,' * uneven}note")
         for ring in self.rings:
             level = 100.0 * ring.intensity / strongest
             note = f'"{ring.note}"' if "," in ring.note else ring.note
-            lines.append(f"{ring.position:.5f},{ring.sigma:.5f},{level:.3f},{note}")
+            scatter = f"{ring.spottiness or 0:.3f},{ring.arcs or 0:.3f}," if uneven else ""
+            lines.append(f"{ring.position:.5f},{ring.sigma:.5f},{level:.3f},{scatter}{note}")
         return "\n".join(lines) + "\n"
 
     def ring_table(self) -> RingTable:

@@ -22,6 +22,8 @@ DETECTION = 5.0  # sigmas above the background below which no peak is claimed
 WIDTHS = 2.0 ** np.arange(0.0, 5.0, 0.5)  # sigmas looked for, in steps of the abscissa
 MAX_PEAKS = 150
 PASSES = 4
+SEPARABLE = 0.4  # widths between two peaks, below which they are one of another shape
+SHAPE_ERROR = 0.02  # of a peak's height: how far its true shape may be from the one fitted
 
 
 @dataclass(frozen=True, slots=True)
@@ -116,16 +118,22 @@ def find_peaks(
     *,
     origin: float | None = None,
     satellite: Satellite | None = None,
+    clipped: NDArray[np.bool_] | None = None,
     detection: float = DETECTION,
 ) -> Found:
     """Peaks of y ± sigma (n,) at evenly spaced x; `origin` is where a direct beam's tail begins.
 
-    What is much wider than a peak is background; its maxima go to `broad` (their positions).
+    What is much wider than a peak is background; its maxima go to `broad` (their positions). Points
+    `clipped` (n,) by saturation show that there is a peak, but not its shape.
     """
     from scipy.ndimage import gaussian_filter1d
 
     step = float(np.median(np.diff(x)))
     first = narrowest_first(y, sigma, detection + 1.0)
+    if clipped is not None:
+        first = _one_each(first, clipped)
+    if satellite is not None:
+        first = _without_companions(first, x, satellite)
     if not first:
         basis = background_basis(x, 12.0 * step, origin=origin)
         level = fit_background(y, sigma, basis)
@@ -140,7 +148,7 @@ def find_peaks(
     level = fit_background(y, sigma, basis)
     residual = y - level
     for turn in range(PASSES):
-        spread = sigma if fit is None else sigma * max(1.0, fit.chi2_reduced) ** 0.5
+        spread = sigma if fit is None else _spread(y, sigma, fit, step)
         seen = [c for c in first if typical / 2.5 < c[1] < 2.5 * typical] if turn == 0 else None
         fresh = [
             c
@@ -154,9 +162,16 @@ def find_peaks(
         fwhm += [width * FWHM_PER_SIGMA * step for _, width, _ in fresh]
         for _ in range(3):
             fit = fit_peaks(
-                x, y, sigma, np.array(position), np.array(fwhm), basis, satellite=satellite
+                x,
+                y,
+                sigma,
+                np.array(position),
+                np.array(fwhm),
+                basis,
+                satellite=satellite,
+                clipped=clipped,
             )
-            keep = _sound(fit, typical * FWHM_PER_SIGMA * step, x, detection)
+            keep = _sound(fit, typical * FWHM_PER_SIGMA * step, x, detection, clipped)
             position, fwhm = list(fit.position[keep]), list(fit.fwhm[keep])
             if keep.all():
                 break
@@ -167,6 +182,8 @@ def find_peaks(
             break
         level = fit.background
         residual = y - fit.model
+        if clipped is not None:
+            residual = np.where(clipped, 0.0, residual)
     width = min(typical, 4.0) if fit is None else float(np.median(fit.fwhm)) / FWHM_PER_SIGMA / step
     limit = _limit(sigma, width, step, detection)
     if fit is None:  # nothing narrow: what is there is halo or background
@@ -175,18 +192,77 @@ def find_peaks(
     return Found(fit, level, limit, broad, width * FWHM_PER_SIGMA * step)
 
 
+def _one_each(
+    found: list[tuple[int, float, float]], clipped: NDArray[np.bool_]
+) -> list[tuple[int, float, float]]:
+    """The candidates with one in the middle of every clipped stretch instead of those about it."""
+    edges = np.flatnonzero(np.diff(np.concatenate([[False], clipped, [False]]).astype(np.int8)))
+    usual = float(np.median([width for _, width, _ in found])) if found else 2.0
+    for start, stop in zip(edges[::2].tolist(), edges[1::2].tolist(), strict=True):
+        rim = max(0.5 * (stop - start), usual)
+        found = [c for c in found if not start - rim < c[0] < stop + rim]
+        found.append(((start + stop) // 2, usual, 1.0))
+    return found
+
+
+def _without_companions(
+    found: list[tuple[int, float, float]], x: Floats, satellite: Satellite
+) -> list[tuple[int, float, float]]:
+    """The candidates without those that stand where the companion of a stronger one does.
+
+    A peak of its own that stands there is left over by the fit.
+    """
+    step = float(np.median(np.diff(x)))
+    kept: list[tuple[int, float, float]] = []
+    for one in sorted(found, key=lambda c: -c[2]):
+        places = satellite[0](x[[c[0] for c in kept]])
+        widths = np.array([max(one[1], c[1]) for c in kept]) * step
+        if not (np.abs(places - x[one[0]]) < 1.5 * widths).any():
+            kept.append(one)
+    return kept
+
+
+def _spread(y: Floats, sigma: Floats, fit: PeakFit, step: float) -> Floats:
+    """One-sigma (n,) by which what is left over may differ from zero though no peak is there.
+
+    Noise, raised where the residuals about a point are larger, and errors of the peaks' shape.
+    """
+    from scipy.ndimage import maximum_filter1d, median_filter
+
+    fwhm = float(np.median(fit.fwhm)) / step
+    square = ((y - fit.model) / sigma) ** 2
+    # of a normal deviate squared the median is 0.455
+    local = median_filter(square, max(5, int(8.0 * fwhm)) | 1, mode="nearest") / 0.455
+    peaks = maximum_filter1d(fit.model - fit.background, max(3, int(2.0 * fwhm)) | 1)
+    return np.asarray(np.sqrt(sigma**2 * np.maximum(local, 1.0) + (SHAPE_ERROR * peaks) ** 2))
+
+
 def _typical_width(found: list[tuple[int, float, float]]) -> float:
     strongest = sorted(found, key=lambda f: -f[2])[:8]
     widths = [width for _, width, score in strongest if score > 0.1 * strongest[0][2]]
     return max(1.0, float(np.percentile(widths, 40)))
 
 
-def _sound(fit: PeakFit, typical_fwhm: float, x: Floats, detection: float) -> NDArray[np.bool_]:
-    """Which peaks stand (m,): significant, inside, as wide as peaks of this curve are."""
+def _sound(
+    fit: PeakFit,
+    typical_fwhm: float,
+    x: Floats,
+    detection: float,
+    clipped: NDArray[np.bool_] | None,
+) -> NDArray[np.bool_]:
+    """Which peaks stand (m,): significant, inside, as wide as peaks of this curve are, not within
+    another.
+
+    Of a clipped peak the area is hardly known, but there is no doubt that it is there.
+    """
     usual = max(float(np.median(fit.fwhm)), typical_fwhm)
     strong = fit.area > 0.7 * detection * fit.area_sigma
+    if clipped is not None:
+        strong |= clipped[np.clip(np.searchsorted(x, fit.position), 0, len(x) - 1)]
     strong &= fit.position_sigma < 0.5 * fit.fwhm
     inside = (fit.position > x[0]) & (fit.position < x[-1])
+    apart = np.abs(fit.position[:, None] - fit.position) / np.maximum(fit.fwhm[:, None], fit.fwhm)
+    inside &= ~((apart < SEPARABLE) & (fit.area[:, None] < fit.area)).any(axis=1)
     return np.asarray(strong & inside & (fit.fwhm < 3.0 * usual) & (fit.fwhm > 0.3 * usual))
 
 

@@ -17,7 +17,8 @@ class PolarSums:
     """Cells (n_r, n_s) of radius bins of `step` px (bin i from i·step) and equal azimuth sectors.
 
     `number` of usable pixels, `total` of their counts, `square` of the squared counts, `frame` how
-    many pixels of the frame fall there, usable or not; `radius_sum` sums their radii.
+    many pixels of the frame fall there, usable or not; `radius_sum` sums the radii of the usable
+    ones, `saturated` tells how many of them are at the top of the scale.
     """
 
     step: float
@@ -26,6 +27,7 @@ class PolarSums:
     square: Floats
     frame: Floats
     radius_sum: Floats
+    saturated: Floats
 
     @property
     def radius(self) -> Floats:
@@ -36,12 +38,18 @@ class PolarSums:
 
 
 def polar_sums(
-    image: Pixels, usable: NDArray[np.bool_], geometry: Geometry, *, step: float, sectors: int
+    image: Pixels,
+    usable: NDArray[np.bool_],
+    geometry: Geometry,
+    *,
+    step: float,
+    sectors: int,
+    saturated: NDArray[np.bool_] | None = None,
 ) -> PolarSums:
     """Sum the pixels by radius after the ellipse is made a circle, and by azimuth."""
     n_r = int(geometry.reach(image.shape) / step) + 2
     size = n_r * sectors
-    sums = np.zeros((5, size))
+    sums = np.zeros((6, size))
     columns = np.arange(image.shape[1], dtype=np.float32)
     rows_at_once = max(1, CHUNK_PIXELS // image.shape[1])
     for start in range(0, image.shape[0], rows_at_once):
@@ -60,5 +68,7 @@ def polar_sums(
         sums[1] += np.bincount(cell, values, minlength=size)
         sums[2] += np.bincount(cell, values * values, minlength=size)
         sums[4] += np.bincount(cell, r.ravel()[ok], minlength=size)
-    number, total, square, frame, radius = sums.reshape(5, n_r, sectors)
-    return PolarSums(step, number, total, square, frame, radius)
+        if saturated is not None:
+            sums[5] += np.bincount(cell[saturated[part].ravel()[ok]], minlength=size)
+    number, total, square, frame, radius, top = sums.reshape(6, n_r, sectors)
+    return PolarSums(step, number, total, square, frame, radius, top)
