@@ -72,9 +72,10 @@ def answer_section(answer: Identification, hypothesis: Hypothesis | None, drawin
             f'<div class="pattern"><figure>{_drawn(disc_of_two(*scenes), drawing)}'
             f"<figcaption>{caption}</figcaption></figure><div>{doubts}</div></div>"
         )
-    parts += [_pattern(answer, one, drawing) for one in scenes]
+    beside = doubts if len(scenes) == 1 else ""
+    parts += [_pattern(answer, one, drawing, beside) for one in scenes]
     if hypothesis is not None:
-        parts.append("" if len(scenes) == 2 else doubts)
+        parts.append(doubts if len(scenes) > 2 else "")
         alone = len(hypothesis.phases) == 1
         parts += [_phase(part, k, alone=alone) for k, part in enumerate(hypothesis.phases)]
     parts.append("</section>")
@@ -93,7 +94,7 @@ def _drawn(picture: Picture, drawing: Drawing) -> str:
     return svg(picture, hits=True, store=drawing.store)
 
 
-def _pattern(answer: Identification, one: Scene, drawing: Drawing) -> str:
+def _pattern(answer: Identification, one: Scene, drawing: Drawing, beside: str) -> str:
     many = len(answer.patterns) > 1
     title = pattern_title(answer, one.number)
     heading = f"Pattern {one.number + 1}: {title}" if many else title
@@ -104,7 +105,7 @@ def _pattern(answer: Identification, one: Scene, drawing: Drawing) -> str:
     stick_picture = _drawn(sticks(one, axis_for(one.pattern, drawing.axis)), drawing)
     figures += (
         f'<div><figure class="sticks">{scrolling(stick_picture, "Sticks, scrolls sideways")}'
-        f"</figure></div>"
+        f"</figure>{beside}</div>"
     )
     table = scrolling(_table(one), f"Rings of {title}, scrolls sideways")
     note = f"Measured d / calculated d: {one.scale_text}"
@@ -153,7 +154,7 @@ def _table(one: Scene) -> str:
 def _ring_rows(one: Scene, ring: int) -> str:
     pattern, hypothesis = one.pattern, one.hypothesis
     measured = [str(ring + 1), f"{pattern.d_A[ring]:.4f}"]
-    sigma = f"{pattern.sigma_A[ring]:.4f}"
+    sigma = _two_digits(float(pattern.sigma_A[ring]))
     intensity = measured_intensity(pattern, ring)
     key = ring_key(one.number, ring)
     found = [
@@ -180,6 +181,12 @@ def _ring_rows(one: Scene, ring: int) -> str:
         ]
         rows.append(_row(cells, tag(a.phase) + formula, key))
     return "".join(rows)
+
+
+def _two_digits(value: float) -> str:
+    """A small number to two digits, without an exponent: 0.0010."""
+    decimals = 1 - int(f"{value:e}".partition("e")[2])
+    return f"{value:.{max(decimals, 0)}f}"
 
 
 def _hint(one: Scene, ring: int) -> str:
@@ -234,25 +241,18 @@ def _phase(part: PhaseAnswer, number: int, *, alone: bool) -> str:
         ("reference", phase.source.reference),
         *(("about the entry", finding.message) for finding in phase.findings),
     ]
-    alike = [
-        f"{phase_text(other)}, {safe(other.space_group_symbol)}, {cell_text(other.cell)}; "
-        f"{source_text(other)}"
-        for other in part.indistinguishable[:SHOWN_ALIKE]
-    ]
+    tells = {separator.other.phase_id: separator.text for separator in part.separators}
+    alike = []
+    for other in part.indistinguishable[:SHOWN_ALIKE]:
+        told = f"{phase_text(other)}, {safe(other.space_group_symbol)}, {cell_text(other.cell)}"
+        told += f"; {source_text(other)}"
+        tell = tells.get(other.phase_id)
+        alike.append(f"{told}. To tell them apart: {tell}" if tell else told)
     more = len(part.indistinguishable) - SHOWN_ALIKE
     if more > 0:
         alike.append(f"and {more} more; the JSON inside this page lists them all")
-    tells = [f"{phase_text(s.other)}: {s.text}" for s in part.separators[:SHOWN_ALIKE]]
-    if len(part.separators) > SHOWN_ALIKE:
-        tells.append(f"and {len(part.separators) - SHOWN_ALIKE} more; the JSON lists them all")
-    return (
-        f"<h3>{tag(number)}{words(phase_text(phase))}</h3>{facts(pairs)}"
-        + _listed("These rings cannot tell it from", alike)
-        + _listed("What would separate them", tells)
+    introduction = "<p>These rings cannot tell it from:</p>" if alike else ""
+    listed = "".join(f"<li>{words(text)}</li>" for text in alike)
+    return f"<h3>{tag(number)}{words(phase_text(phase))}</h3>{facts(pairs)}{introduction}" + (
+        f"<ul>{listed}</ul>" if alike else ""
     )
-
-
-def _listed(introduction: str, texts: list[str]) -> str:
-    if not texts:
-        return ""
-    return f"<p>{introduction}:</p><ul>{''.join(f'<li>{words(t)}</li>' for t in texts)}</ul>"

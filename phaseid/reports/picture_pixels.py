@@ -30,6 +30,7 @@ _OVER = 3
 _FINE = DOTS * _OVER
 _BAND = 256
 """Rows of the file drawn at a time: a long sheet needs no more memory than a short one."""
+_STEP_DEG = 2.0
 _FACE_RATIO = 0.93  # the face runs wider than a browser's
 _HALO = 1.5
 
@@ -56,7 +57,7 @@ def png(picture: Picture) -> bytes:
     return stream.getvalue()
 
 
-_DEFLATE = 4  # quicker than the usual 6, and hardly larger for plain lines
+_DEFLATE = 3  # quicker than the usual 6, and hardly larger for plain lines
 
 
 def _parts(shapes: tuple[Shape, ...]) -> Iterator[Line | Arc | Shade]:
@@ -114,6 +115,8 @@ def _draw(pen: ImageDraw, part: Line | Arc, low: float) -> None:
     ink = colour(part.role)
     if isinstance(part, Arc):
         for start, end in _pieces_of_arc(part):
+            if _misses(part, start, end, low):
+                continue
             _stroke_arc(pen, part, start, end, low, ink)
         return
     points = [(x * _FINE, (y - low) * _FINE) for x, y in part.points]
@@ -130,11 +133,21 @@ def _draw(pen: ImageDraw, part: Line | Arc, low: float) -> None:
 
 
 def _stroke_arc(pen: ImageDraw, arc: Arc, start: float, end: float, low: float, ink: str) -> None:
-    outer = (arc.radius + arc.width / 2) * _FINE
-    x, y = arc.x * _FINE, (arc.y - low) * _FINE
-    box = (round(x - outer), round(y - outer), round(x + outer), round(y + outer))
-    # Pillow's angles run clockwise
-    pen.arc(box, -end, -start, fill=ink, width=max(round(arc.width * _FINE), 1))
+    """A piece of a ring as a polygon: much quicker than Pillow's own arcs where it is short."""
+    inner, outer = ((arc.radius + side * arc.width / 2) * _FINE for side in (-1, 1))
+    steps = max(1, math.ceil((end - start) / _STEP_DEG))
+    turns = [math.radians(start + (end - start) * k / steps) for k in range(steps + 1)]
+    x, y = arc.x * _FINE - 0.5, (arc.y - low) * _FINE - 0.5
+    edge = [(x + outer * math.cos(t), y - outer * math.sin(t)) for t in turns]
+    edge += [(x + inner * math.cos(t), y - inner * math.sin(t)) for t in reversed(turns)]
+    pen.polygon([(round(a), round(b)) for a, b in edge], fill=ink)
+
+
+def _misses(arc: Arc, start: float, end: float, low: float) -> bool:
+    """Whether a piece of a ring lies above or below the band that begins at `low`."""
+    middle = arc.y - arc.radius * math.sin(math.radians((start + end) / 2))
+    reach = arc.radius * math.radians(end - start) / 2 + arc.width
+    return middle + reach < low or middle - reach > low + _BAND / DOTS
 
 
 def _pieces_of_arc(arc: Arc) -> Iterator[tuple[float, float]]:
