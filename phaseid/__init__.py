@@ -4,10 +4,11 @@ The front door for notebooks and scripts; nothing is loaded before it is used.
 
     import phaseid
 
-    rings = phaseid.read_rings("rings.csv")
-    with phaseid.open_default() as library:
-        answer = phaseid.identify([rings], library)
+    answer = phaseid.identify("foil.csv", must="Al")
     print(phaseid.as_text(answer))
+    answer.records()  # rows for a data frame
+
+`phaseid guide python` is the tutorial.
 """
 
 from __future__ import annotations
@@ -21,9 +22,21 @@ if TYPE_CHECKING:
     from phaseid.errors import InputError, LibraryError, PhaseidError
     from phaseid.library import Library, open_default
     from phaseid.matching.chemistry import Chemistry
-    from phaseid.matching.identify import identify
+    from phaseid.notebook import (
+        calibrate,
+        compare,
+        find,
+        identify,
+        lines,
+        measure,
+        near,
+        ratio,
+        screen,
+        series,
+    )
     from phaseid.probes import parse_probe
     from phaseid.reports.json import identification_dict
+    from phaseid.reports.picture_file import write_picture
     from phaseid.reports.text import as_text
     from phaseid.rings import read_rings, rings_from_values
 
@@ -36,14 +49,24 @@ __all__ = [
     "LibraryError",
     "PhaseidError",
     "as_text",
+    "calibrate",
+    "compare",
     "compute_lines",
+    "find",
     "identification_dict",
     "identify",
+    "lines",
+    "measure",
+    "near",
     "open_default",
     "parse_probe",
+    "ratio",
     "read_cif_file",
     "read_rings",
     "rings_from_values",
+    "screen",
+    "series",
+    "write_picture",
 ]
 
 _HOMES = {
@@ -53,14 +76,24 @@ _HOMES = {
     "LibraryError": "phaseid.errors",
     "PhaseidError": "phaseid.errors",
     "as_text": "phaseid.reports.text",
+    "calibrate": "phaseid.notebook",
+    "compare": "phaseid.notebook",
     "compute_lines": "phaseid.crystal.lines",
+    "find": "phaseid.notebook",
     "identification_dict": "phaseid.reports.json",
-    "identify": "phaseid.matching.identify",
+    "identify": "phaseid.notebook",
+    "lines": "phaseid.notebook",
+    "measure": "phaseid.notebook",
+    "near": "phaseid.notebook",
     "open_default": "phaseid.library",
     "parse_probe": "phaseid.probes",
+    "ratio": "phaseid.notebook",
     "read_cif_file": "phaseid.crystal.cif",
     "read_rings": "phaseid.rings",
     "rings_from_values": "phaseid.rings",
+    "screen": "phaseid.notebook",
+    "series": "phaseid.notebook",
+    "write_picture": "phaseid.reports.picture_file",
 }
 
 

@@ -106,13 +106,8 @@ def calibrate(
 
 
 def _standard(names: list[str], temperature_C: float | None, library: Path | None) -> Standard:
-    from phaseid.cli.phases import find_crystal, is_file
-    from phaseid.matching.standards import (
-        find_standard,
-        standard_names,
-        standard_of,
-        uncertified,
-    )
+    from phaseid.cli.phases import find_crystal, find_standard
+    from phaseid.matching.standards import standard_names
 
     if len(names) != 1:
         offered = ", ".join(standard_names())
@@ -124,10 +119,7 @@ def _standard(names: list[str], temperature_C: float | None, library: Path | Non
             if not names
             else "Calibrate with one; the rings of the other then check it.",
         )
-    if not is_file(names[0]) and (found := find_standard(names[0], temperature_C)):
-        return found
-    phase, crystal = find_crystal(names[0], library)
-    return standard_of(phase, temperature_C) or uncertified(phase, crystal, temperature_C)
+    return find_standard(names[0], temperature_C, lambda text: find_crystal(text, library))
 
 
 def _across(text: str | None, unit: str, sigma: str | None) -> RingTable | None:

@@ -20,6 +20,7 @@ PAGES = {
     "series": "many patterns: what comes and goes",
     "calibrate": "scaling an instrument by a standard",
     "screen": "what should not be there; telling two phases apart",
+    "python": "the same from a notebook, and records for data frames",
     "settings": "defaults, environment, completion",
 }
 

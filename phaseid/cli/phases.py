@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -11,6 +12,7 @@ from phaseid.errors import InputError
 if TYPE_CHECKING:
     from phaseid.crystal.crystal import Crystal
     from phaseid.library import Library, Phase
+    from phaseid.matching.standards import Standard
 
 
 def find_crystal(text: str, library: Path | None) -> tuple[Phase, Crystal]:
@@ -18,15 +20,28 @@ def find_crystal(text: str, library: Path | None) -> tuple[Phase, Crystal]:
 
     Raises InputError where nothing fits, or several phases do.
     """
-    if (found := _named_file(text)) is not None:
+    if (found := named_file(text)) is not None:
         return found
     with open_library(library) as shelf:
         return find_in(shelf, text)
 
 
+def find_standard(
+    text: str, temperature_C: float | None, find: Callable[[str], tuple[Phase, Crystal]]
+) -> Standard:
+    """Return the standard that `text` names, else the phase that `find` gives as one."""
+    from phaseid.matching import standards
+
+    if not is_file(text) and (found := standards.find_standard(text, temperature_C)):
+        return found
+    phase, crystal = find(text)
+    known = standards.standard_of(phase, temperature_C)
+    return known or standards.uncertified(phase, crystal, temperature_C)
+
+
 def find_in(shelf: Library, text: str) -> tuple[Phase, Crystal]:
     """The same in a library that is open."""
-    if (found := _named_file(text)) is not None:
+    if (found := named_file(text)) is not None:
         return found
     phase = shelf.choose(text)
     return phase, shelf.crystal(phase.phase_id)
@@ -40,7 +55,8 @@ def is_file(text: str) -> bool:
         return False
 
 
-def _named_file(text: str) -> tuple[Phase, Crystal] | None:
+def named_file(text: str) -> tuple[Phase, Crystal] | None:
+    """The structure of a CIF file, None where `text` names no file; raises InputError."""
     path = Path(text)
     if is_file(text):
         return _from_file(path)

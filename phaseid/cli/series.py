@@ -109,7 +109,9 @@ def series(
     if csv is not None:
         check_folder(csv)
     chemistry = Chemistry.parse(must, only, exclude)
-    lists, failed = _read(_files(patterns), probe, scale_uncertainty, camera_constant, calibration)
+    lists, failed = _read(
+        files_of(patterns), probe, scale_uncertainty, camera_constant, calibration
+    )
     count = workers or _workers(len(lists))
     with open_library(library) as shelf, progress_bar("patterns") as advance:
         answer = identify_series(
@@ -150,7 +152,7 @@ def natural_order(name: str) -> list[tuple[int, int, str]]:
     return [(0, int(p), "") if p.isdigit() else (1, 0, p.lower()) for p in parts]
 
 
-def _files(named: list[Path]) -> list[Path]:
+def files_of(named: list[Path]) -> list[Path]:
     """The files named, a folder standing for those in it in the order of their names."""
     found: list[Path] = []
     for path in named:

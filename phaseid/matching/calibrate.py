@@ -10,6 +10,7 @@ import numpy as np
 
 from phaseid.errors import InputError
 from phaseid.matching.calibrate_doubts import checked
+from phaseid.matching.records import Record, Tidy, indices
 from phaseid.matching.settings import ZERO_SHIFT_DEG
 from phaseid.matching.standard_rings import Plate, read_plate
 from phaseid.matching.standards import Standard
@@ -68,7 +69,7 @@ class Ellipse:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Calibration:
+class Calibration(Tidy):
     """What a standard says about the instrument.
 
     `factor` multiplies measured d (1 where no constant was stated: then d is by the constant
@@ -98,6 +99,33 @@ class Calibration:
     def relative_sigma(self) -> float:
         """One-sigma of the common factor on d, relative."""
         return self.factor.sigma / self.factor.value
+
+    def records(self) -> list[Record]:
+        """One record per ring: the standard's line it is, or none where it was rejected."""
+        line = {found.ring: found for found in self.assignments}
+        return [
+            {
+                "ring": ring + 1,
+                self.rings.position_column: float(self.rings.position[ring]),
+                "hkl": None if ring not in line else indices(line[ring].hkl),
+                "d_A": None if ring not in line else line[ring].d_A,
+                "residual_sigma": None if ring not in line else line[ring].residual_sigma,
+            }
+            for ring in range(len(self.rings))
+        ]
+
+    def summary(self) -> str:
+        """The constant found, with its one-sigma."""
+        if self.camera_constant is not None:
+            what, value, unit = "camera constant", self.camera_constant, f" Å {self.plate_unit}"
+        elif self.wavelength_A is not None:
+            what, value, unit = "wavelength", self.wavelength_A, " Å"
+        else:
+            what, value, unit = "factor on measured d", self.factor, ""
+        return (
+            f"{what} {value.value:.6g} ± {value.sigma:.2g}{unit}, from {len(self.assignments)} of "
+            f"{len(self.rings)} rings of {self.standard.label}"
+        )
 
 
 def calibrate(

@@ -20,6 +20,7 @@ from phaseid.matching.likelihood import evaluate
 from phaseid.matching.lineset import gather
 from phaseid.matching.model import Looseness, Model
 from phaseid.matching.patterns import Floats, Pattern, prepare
+from phaseid.matching.records import Record, Tidy, indices
 from phaseid.matching.small_library import table_of
 from phaseid.matching.standard_rings import resolution
 from phaseid.probes.probe import Probe
@@ -66,7 +67,7 @@ class TellingRing:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Comparison:
+class Comparison(Tidy):
     """Whether two phases can be told apart.
 
     `confidence`: in which share of such measurements the true one of the two would be the likelier,
@@ -82,6 +83,29 @@ class Comparison:
     d_range_A: tuple[float, float]
     telling: tuple[TellingRing, ...]
     elements: tuple[tuple[str, ...], tuple[str, ...]]
+
+    def records(self) -> list[Record]:
+        """One record per ring that tells, the most telling first."""
+        return [
+            {
+                "d_A": ring.d_A,
+                "of": self.phases[0 if ring.of == "A" else 1].name,
+                "hkl": indices(ring.hkl),
+                "intensity": ring.intensity,
+                "difference": ring.difference,
+                "by": ring.by,
+                "needs_relative_precision": ring.needs_relative_precision,
+            }
+            for ring in self.telling
+        ]
+
+    def summary(self) -> str:
+        """Whether they can be told apart, and how often rightly."""
+        can = "can" if self.separable else "cannot"
+        return (
+            f"{self.phases[0].name} and {self.phases[1].name} {can} be told apart: the right one "
+            f"is the likelier in {100 * self.confidence:.0f} % of such measurements"
+        )
 
 
 def compare(

@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal
+from math import isnan
+from typing import ClassVar, Literal
 
 from phaseid.library.phase import Phase
+from phaseid.matching.records import Record, Tidy, cell_record, indices, phase_record
 from phaseid.rings.ringlist import RingList
 
 Verdict = Literal["identified", "ambiguous", "no-match"]
@@ -130,7 +132,7 @@ class TypeMatch:
 
 
 @dataclass(frozen=True, slots=True)
-class Identification:
+class Identification(Tidy):
     """The answer: ranked hypotheses, the probability left for what no listed phase explains,
     remarks.
 
@@ -147,3 +149,78 @@ class Identification:
     remarks: tuple[str, ...] = ()
     cautions: tuple[str, ...] = ()
     type_matches: tuple[TypeMatch, ...] = ()
+    shown_keys: ClassVar[tuple[str, ...]] = (
+        "rank",
+        "probability",
+        "name",
+        "formula",
+        "space_group",
+        "share",
+        "rings_explained",
+    )
+
+    def records(self) -> list[Record]:
+        """One record per phase of each answer, the best answer first."""
+        rings = sum(len(pattern) for pattern in self.patterns)
+        return [
+            {
+                "rank": answer.rank,
+                "probability": answer.probability,
+                **phase_record(part.phase),
+                "indistinguishable": ", ".join(p.name for p in part.indistinguishable) or None,
+                "share": part.share,
+                "share_sigma": part.share_sigma,
+                **cell_record(part.cell),
+                "rings_explained": rings - len(answer.unexplained),
+                "rings": rings,
+                "scale_factor": answer.scale[0].factor if answer.scale else None,
+            }
+            for answer in self.hypotheses
+            for part in answer.phases
+        ]
+
+    def ring_records(self, rank: int = 1) -> list[Record]:
+        """One record per ring: what the answer of that rank makes of it.
+
+        A ring of several phases has a record for each, an unexplained one a record without a phase.
+        Raises IndexError where there is no such answer.
+        """
+        answer = self.hypotheses[rank - 1]
+        records = []
+        for number, pattern in enumerate(self.patterns):
+            for ring in range(len(pattern)):
+                found: list[Assignment | None] = [
+                    a for a in answer.assignments if (a.pattern, a.ring) == (number, ring)
+                ]
+                for line in found or [None]:
+                    phase = None if line is None else answer.phases[line.phase].phase
+                    records.append(
+                        {
+                            "pattern": number + 1,
+                            "ring": ring + 1,
+                            "d_A": float(pattern.d_A[ring]),
+                            "sigma_A": float(pattern.sigma_A[ring]),
+                            "intensity": _known(float(pattern.intensity[ring])),
+                            "name": None if phase is None else phase.name,
+                            "phase_id": None if phase is None else phase.phase_id,
+                            "hkl": None if line is None else indices(line.hkl),
+                            "d_calc_A": None if line is None else line.d_calc_A,
+                            "residual_sigma": None if line is None else line.residual_sigma,
+                        }
+                    )
+        return records
+
+    def summary(self) -> str:
+        """Verdict, best answer and its probability."""
+        if not self.hypotheses:
+            return f"{self.verdict}: no phase of the library explains these rings"
+        best = self.hypotheses[0]
+        names = " + ".join(part.phase.name for part in best.phases)
+        return (
+            f"{self.verdict}: {names}, probability {best.probability:.2f} "
+            f"({self.unlisted_probability:.2f} for something not in the library)"
+        )
+
+
+def _known(value: float) -> float | None:
+    return None if isnan(value) else value

@@ -11,6 +11,7 @@ from phaseid.errors import InputError
 from phaseid.library import Library
 from phaseid.library.phase import Phase
 from phaseid.matching.chemistry import Chemistry
+from phaseid.matching.records import Record, indices, phase_record
 from phaseid.probes import Probe
 
 
@@ -23,6 +24,16 @@ class NearLine:
     d_A: float
     intensity: float
     wanted_d_A: float
+
+    def record(self) -> Record:
+        """The line as a flat record."""
+        return {
+            "wanted_d_A": self.wanted_d_A,
+            "d_A": self.d_A,
+            "hkl": indices(self.hkl),
+            "intensity": self.intensity,
+            **phase_record(self.phase),
+        }
 
 
 def near_lines(

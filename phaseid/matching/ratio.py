@@ -14,6 +14,7 @@ from itertools import pairwise, product
 from math import gcd, inf, isfinite, log, sqrt
 
 from phaseid.errors import InputError
+from phaseid.matching.records import Record, indices
 
 Hkl = tuple[int, int, int]
 _HIGHEST = 7
@@ -56,6 +57,19 @@ class RatioMatch:
     worst: float
     axial_ratio: float | None
     edge_A: float | None
+
+    def record(self) -> Record:
+        """The type as a flat record."""
+        return {
+            "type": self.type.name,
+            "such_as": self.type.such_as,
+            "hkl": ", ".join(indices(ring.hkl) for ring in self.rings),
+            "skipped": ", ".join(indices(hkl) for hkl, _ in self.skipped) or None,
+            "worst": self.worst,
+            "rms": self.rms,
+            "axial_ratio": self.axial_ratio,
+            "edge_A": self.edge_A,
+        }
 
 
 def _unmixed(hkl: Hkl) -> bool:

@@ -21,6 +21,7 @@ from phaseid.matching.lineset import gather
 from phaseid.matching.model import Fit, Model
 from phaseid.matching.patterns import Floats, prepare_all
 from phaseid.matching.pool import Found, Pool
+from phaseid.matching.records import PHASE_KEYS, Record, Tidy, indices, phase_record
 from phaseid.matching.settings import STRAIN
 from phaseid.matching.watch import Watched
 from phaseid.rings import RingList
@@ -74,7 +75,7 @@ class ForeignRing:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Screening:
+class Screening(Tidy):
     """Whether patterns of a specimen show only what is expected, and how much else could hide.
 
     `found` are watch-list phases that are there with a probability above one half; `limits` the
@@ -91,6 +92,43 @@ class Screening:
     weakest_percent: tuple[float, ...]
     scales: tuple[tuple[float, float], ...]
     remarks: tuple[str, ...]
+
+    def records(self) -> list[Record]:
+        """One record per foreign ring and candidate; of a clean pattern none."""
+        return [
+            {
+                "pattern": ring.pattern + 1,
+                "ring": ring.ring + 1,
+                "d_A": ring.d_A,
+                **(phase_record(c.phase) if c else dict.fromkeys(PHASE_KEYS)),
+                "probability": None if c is None else c.probability,
+                "list": ", ".join(c.lists) or None if c else None,
+                "why": ", ".join(c.why) or None if c else None,
+            }
+            for ring in self.foreign
+            for c in ring.candidates or (None,)
+        ]
+
+    def limit_records(self) -> list[Record]:
+        """One record per phase watched for and not found: the shares from which it is seen."""
+        return [
+            {
+                **phase_record(limit.phase),
+                "share": limit.share,
+                "share_even": limit.share_even,
+                "hkl": None if limit.hidden else indices(limit.hkl),
+                "d_A": None if limit.hidden else limit.d_A,
+                "hidden": limit.hidden,
+            }
+            for limit in self.limits
+        ]
+
+    def summary(self) -> str:
+        """Clean or not, and what was found."""
+        if self.verdict == "clean":
+            return f"clean; {len(self.limits)} phases watched for were not found"
+        names = ", ".join(candidate.phase.name for candidate in self.found)
+        return f"{len(self.foreign)} foreign rings" + (f", likely of {names}" if names else "")
 
 
 def screen(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import ClassVar
 
 from phaseid.library.phase import Phase
 from phaseid.matching.identification import (
@@ -12,7 +13,7 @@ from phaseid.matching.identification import (
     PhaseAnswer,
     Verdict,
 )
-from phaseid.matching.records import Record, Tidy, phase_record
+from phaseid.matching.records import Record, Tidy, cell_record, phase_record
 from phaseid.matching.series_axis import Axis
 from phaseid.matching.series_chain import Floats
 from phaseid.rings.ringlist import RingList
@@ -68,6 +69,15 @@ class Series(Tidy):
     library: LibraryStamp
     remarks: tuple[str, ...]
     cautions: tuple[str, ...]
+    shown_keys: ClassVar[tuple[str, ...]] = (
+        "pattern",
+        "value",
+        "name",
+        "probability",
+        "probability_alone",
+        "share",
+        "verdict",
+    )
 
     def records(self) -> list[Record]:
         """One record per pattern and phase: where, what, how likely, how much."""
@@ -83,9 +93,7 @@ class Series(Tidy):
                 "probability_alone": float(row.alone[t]),
                 "share": None if part is None else part.share,
                 "share_sigma": None if part is None else part.share_sigma,
-                "a_A": None if part is None or part.cell is None else part.cell[0],
-                "b_A": None if part is None or part.cell is None else part.cell[1],
-                "c_A": None if part is None or part.cell is None else part.cell[2],
+                **cell_record(None if part is None else part.cell),
                 "unlisted_probability": pattern.unlisted,
                 "verdict": pattern.verdict,
             }

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from phaseid.crystal.lines import Lines
 from phaseid.library.phase import Phase
+from phaseid.matching.records import Record, Tidy
 from phaseid.probes import Probe, Quantity, ghost_d_A, two_beam_weights
 from phaseid.reports.json import phase_dict, probe_dict
 from phaseid.reports.plain import (
@@ -46,7 +47,7 @@ class Ghost(NamedTuple):
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class LineList:
+class LineList(Tidy):
     """The lines of a phase as one probe shows them, and how they are wanted.
 
     `thickness_A` asks for the two-beam correction of electrons. `camera` gives radii on a plate.
@@ -76,6 +77,31 @@ class LineList:
         )
         strongest = float(weights.max(initial=0.0))
         return np.asarray(weights * (100 / strongest) if strongest > 0 else weights)
+
+    def records(self) -> list[Record]:
+        """One record per line, by falling d."""
+        columns = zip(
+            self.lines.hkl,
+            self.lines.d_A,
+            self.lines.multiplicity,
+            self.probe.f2(self.lines),
+            self.intensity(),
+            strict=True,
+        )
+        return [
+            {
+                "hkl": hkl_text(hkl),
+                "d_A": float(d),
+                "multiplicity": int(m),
+                "f2": float(f2),
+                "intensity": float(i),
+            }
+            for hkl, d, m, f2, i in columns
+        ]
+
+    def summary(self) -> str:
+        """Which phase, for which probe."""
+        return f"{phase_text(self.phase)}, lines for {self.probe.label}"
 
     def reached(self) -> NDArray[np.intp]:
         """Return the indices of the lines that exist for this probe: sinθ ≤ 1."""
