@@ -90,10 +90,11 @@ def read_operations(triplets: tuple[str, ...]) -> Operations:
     Raises InputError where a triplet cannot be read or the list is not a group.
     """
     rotations, translations = _parse(triplets)
-    by_rotation: dict[bytes, int] = {}
-    for i, rotation in enumerate(rotations):
-        by_rotation.setdefault(rotation.tobytes(), i)
     identity = np.eye(3, dtype=np.int64)
+    by_rotation: dict[bytes, int] = {identity.tobytes(): -1}  # comes first, wherever it is listed
+    for i, rotation in enumerate(rotations):
+        if by_rotation.get(rotation.tobytes(), -1) < 0:
+            by_rotation[rotation.tobytes()] = i
     pure = [i for i, r in enumerate(rotations) if np.array_equal(r, identity)]
     centrings = np.unique(translations[pure] % 1.0, axis=0) if pure else np.zeros((0, 3))
     if len(centrings) * len(by_rotation) != len(triplets):
