@@ -51,10 +51,12 @@ def group_of(conn: sqlite3.Connection, row: int) -> list[int]:
     return [leader, *(phase for (phase,) in others)]
 
 
-def standing(conn: sqlite3.Connection, rows: NDArray[np.int64]) -> NDArray[np.bool_]:
-    """Return whether each of the rows (p,) stands for its phase."""
+def standing(conn: sqlite3.Connection) -> NDArray[np.bool_]:
+    """Return whether each entry, in the order of the blocks, stands for its phase (p,)."""
     import numpy as np
 
+    parts = conn.execute("SELECT data FROM block WHERE part = 'row' ORDER BY number")
+    rows = np.frombuffer(b"".join(data for (data,) in parts), dtype="<i8")
     members = conn.execute("SELECT phase FROM member ORDER BY phase").fetchall()
     held = np.fromiter((row for (row,) in members), dtype=np.int64, count=len(members))
     return ~np.isin(rows, held, assume_unique=True)

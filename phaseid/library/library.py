@@ -19,6 +19,9 @@ if TYPE_CHECKING:
     from collections.abc import Iterator
     from concurrent.futures import Executor
 
+    import numpy as np
+    from numpy.typing import NDArray
+
     from phaseid.crystal.crystal import Crystal
     from phaseid.crystal.lines import Lines
     from phaseid.library.finding import Found
@@ -161,6 +164,13 @@ class Library:
         (row,) = self._one("SELECT id FROM phase WHERE phase_id = ?", phase_id)
         with self._told():
             return lookups.phases_of(self._conn, group_of(self._conn, row))
+
+    def standing(self) -> NDArray[np.bool_]:
+        """Return whether each entry, in the order of `line_table`, stands for its phase (p,)."""
+        from phaseid.library.groups import standing
+
+        with self._told():
+            return standing(self._conn)
 
     def crystal(self, phase_id: str) -> Crystal:
         """Return the structure of a phase exactly as it was added; raises InputError as `phase`."""

@@ -77,9 +77,10 @@ class PhaseAnswer:
 
     `share` is the weight fraction (0-1) from absolute intensities, None for a pattern that cannot
     give one; `share_sigma` its one-sigma. `indistinguishable` are library phases these rings cannot
-    tell from this one. `cell` is the refined cell (Å, degrees) with `cell_sigma`, None where too
-    few lines were assigned. `fibre_axis` is (u, v, w) where the pattern is explained by a textured
-    film.
+    tell from this one. `entries` are the other entries of the library that are determinations of
+    this phase, `alike_entries` those of the indistinguishable ones. `cell` is the refined cell (Å,
+    degrees) with `cell_sigma`, None where too few lines were assigned. `fibre_axis` is (u, v, w)
+    where the pattern is explained by a textured film.
     """
 
     phase: Phase
@@ -90,6 +91,8 @@ class PhaseAnswer:
     cell_sigma: tuple[float, float, float, float, float, float] | None = None
     fibre_axis: tuple[int, int, int] | None = None
     separators: tuple[Separator, ...] = ()
+    entries: tuple[Phase, ...] = ()
+    alike_entries: tuple[Phase, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

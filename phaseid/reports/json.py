@@ -161,12 +161,22 @@ def _answer_dict(part: PhaseAnswer) -> dict[str, Any]:
         **phase_dict(part.phase),
         "share": part.share,
         "share_sigma": part.share_sigma,
-        "indistinguishable": [phase_dict(phase) for phase in part.indistinguishable],
+        "indistinguishable": [
+            phase_dict(phase)
+            for phase in (*part.entries, *part.indistinguishable, *part.alike_entries)
+        ],
+        "entries": [_entry_dict(entry) for entry in part.entries],
         "refined_cell": None if part.cell is None else _cell_dict(part.cell),
         "refined_cell_sigma": None if part.cell_sigma is None else _cell_dict(part.cell_sigma),
         "fibre_axis": None if part.fibre_axis is None else list(part.fibre_axis),
         "separators": [{"phase_id": s.other.phase_id, "text": s.text} for s in part.separators],
     }
+
+
+def _entry_dict(entry: Phase) -> dict[str, Any]:
+    """Return another entry of a phase: what tells it from the one that stands for all."""
+    whole = phase_dict(entry)
+    return {key: whole[key] for key in ("phase_id", "name", "source", "cell")}
 
 
 def _cell_dict(cell: Sequence[float]) -> dict[str, float]:

@@ -5,8 +5,10 @@ from __future__ import annotations
 import textwrap
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
+if TYPE_CHECKING:
+    from phaseid.library.marks import marks
 from phaseid.library.phase import Phase
 
 ELLIPSIS = "…"
@@ -60,6 +62,12 @@ def phase_text(phase: Phase) -> str:
     """Name a phase for a reader: `corundum (Al2O3)`, or by the formula alone."""
     name, formula = safe(phase.name), safe(phase.formula)
     return formula if name in ("", formula) else f"{name} ({formula})"
+
+
+def marks_text(phase: Phase) -> str:
+    """Return what sets an entry apart, to follow its name: ` [computed]`; mostly nothing."""
+    found = marks(finding.code for finding in phase.findings)
+    return f" [{', '.join(found)}]" if found else ""
 
 
 def source_text(phase: Phase) -> str:

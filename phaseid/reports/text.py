@@ -12,6 +12,7 @@ from phaseid.reports.plain import (
     Column,
     cell_text,
     hkl_text,
+    marks_text,
     phase_text,
     probability_text,
     safe,
@@ -139,7 +140,9 @@ def _alternatives(page: _Page, answer: Identification) -> None:
         explained = len({(a.pattern, a.ring) for a in h.assignments})
         groups = sum(len(part.indistinguishable) for part in h.phases)
         names = " + ".join(
-            f"{phase_text(part.phase)} {safe(part.phase.space_group_symbol)}" for part in h.phases
+            f"{phase_text(part.phase)} {safe(part.phase.space_group_symbol)}"
+            f"{marks_text(part.phase)}"
+            for part in h.phases
         )
         alike = f" (with {groups} alike)" if groups else ""
         page.row(str(h.rank), h.probability, f"{explained}/{rings}", names + alike)
@@ -242,11 +245,16 @@ def _phase(page: _Page, part: PhaseAnswer, *, alone: bool) -> None:
         page.item(f"Textured film: fibre axis [{hkl_text(part.fibre_axis)}] along the beam")
     for finding in phase.findings:
         page.item(f"About the entry: {finding.message}")
+    if part.entries:
+        page.item(
+            f"{len(part.entries) + 1} entries of this phase in the library; this one stands for "
+            "them, --json lists the others"
+        )
     if part.indistinguishable:
         page.item("These rings cannot tell it from:")
         for other in part.indistinguishable[:SHOWN_ALIKE]:
             page.item(
-                f"{phase_text(other)}, {safe(other.space_group_symbol)}, "
+                f"{phase_text(other)}{marks_text(other)}, {safe(other.space_group_symbol)}, "
                 f"{cell_text(other.cell)}; {source_text(other)}",
                 indent="    ",
             )
