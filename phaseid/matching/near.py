@@ -49,7 +49,8 @@ def near_lines(
 
     Only lines of at least `min_intensity` (strongest of the phase = 100) count. Phases that meet
     more of the spacings come first, then those whose lines there are stronger; within a phase the
-    order is that of the spacings asked for. Raises InputError for a spacing or tolerance that is
+    order is that of the spacings asked for. Of a phase with several entries the one that stands for
+    it is asked. Raises InputError for a spacing or tolerance that is
     none.
     """
     for value in spacings_A:
@@ -69,9 +70,11 @@ def near_lines(
     np.maximum.at(strongest, owner, intensity)
     relative = 100 * intensity / np.where(strongest > 0, strongest, 1.0)[owner]
 
+    one_of_each = library.standing()[owner]
     met: dict[int, list[tuple[int, int]]] = {}  # phase -> (which spacing, which line)
     for order, wanted in enumerate(spacings_A):
         close = (np.abs(table.d_A / wanted - 1) <= tolerance) & (relative >= min_intensity)
+        close &= one_of_each
         for line in np.flatnonzero(close).tolist():
             met.setdefault(int(owner[line]), []).append((order, line))
 
