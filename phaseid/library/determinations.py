@@ -20,6 +20,7 @@ from phaseid.library.lattice_maps import Lattice
 from phaseid.library.marks import COMPUTED
 from phaseid.library.packing import unpack_lines
 from phaseid.library.records import stored_crystal
+from phaseid.library.starter import DATABASE, MIRROR_IMAGE
 
 if TYPE_CHECKING:
     from phaseid.crystal.crystal import Crystal
@@ -28,14 +29,10 @@ if TYPE_CHECKING:
 
 Floats = NDArray[np.float64]
 
-MIRROR_IMAGE = {78: 76, 95: 91, 96: 92, 145: 144, 153: 151, 154: 152, 170: 169, 172: 171}
-MIRROR_IMAGE |= {179: 178, 181: 180, 213: 212}
-"""The eleven pairs of space groups that are mirror images: their powder patterns are the same."""
-
 COLUMNS = (
     "id, content, name, formula, formula_key, space_group_number, space_group_symbol, "
-    "density_g_cm3, source_reference, findings, quality, volume_A3, complete_to_A, floor, "
-    "a_A, b_A, c_A, alpha_deg, beta_deg, gamma_deg"
+    "density_g_cm3, source_database, source_reference, findings, quality, volume_A3, "
+    "complete_to_A, floor, a_A, b_A, c_A, alpha_deg, beta_deg, gamma_deg"
 )
 
 _UNTOLD = "higher_symmetry"  # the source gives all atoms of the cell and no symmetry
@@ -50,13 +47,14 @@ class StoredEntry:
         self._conn = conn
         (
             self.row, self.content, name, formula, self._key, self._number,
-            self.setting, density, reference, findings, self.quality,
+            self.setting, density, database, reference, findings, self.quality,
             self._volume_A3, self._complete_to_A, self._floor, *cell,
         ) = row  # fmt: skip
         self.cell: Cell = tuple(cell)
         self.ln_density = log(density)
         self.named = bool(name) and name != formula
         self.reference = bool(reference)
+        self.shipped = database == DATABASE
         codes = {code for code, _ in json.loads(findings)}
         self.computed = bool(codes & COMPUTED)
         self.symmetry_untold = _UNTOLD in codes

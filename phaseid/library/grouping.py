@@ -1,7 +1,7 @@
 """One phase, many entries: which entries are determinations of the same phase, and which stands.
 
 The best determination of a phase is the leader of the others. Entries are compared among those of
-the same elements, the best first, each with the leaders so far; so the outcome depends on what is
+the same elements, the best first, each with the leaders so far, and follow the nearest; so the outcome depends on what is
 in the library and not on how it came there. An entry that was just added, and one whose leader
 went, stands for itself until `group_entries` has run.
 """
@@ -62,10 +62,13 @@ def leaders_of(entries: Sequence[StoredEntry]) -> dict[int, int]:
     for part in parts.values():
         standing: list[StoredEntry] = []
         for entry in best_first(part):
-            leader = next((one for one in standing if same_phase(one, entry)), entry)
-            if leader is entry:
+            same = [one for one in standing if same_phase(one, entry)]
+            if not same:
                 standing.append(entry)
-            leaders[entry.row] = leader.row
+            nearest = min(
+                same, key=lambda one: abs(one.ln_density - entry.ln_density), default=entry
+            )
+            leaders[entry.row] = nearest.row
     return leaders
 
 
@@ -73,8 +76,9 @@ def best_first(entries: list[StoredEntry]) -> list[StoredEntry]:
     """Sort determinations by how well they stand for their phase.
 
     Measured before computed; the symmetry told before atoms one by one; then quality, which holds
-    pressure, temperature, disorder and doubts; not measured in the cold; the cell near the middle
-    of the others'; named; with its reference. Whatever is still equal goes by content.
+    pressure, temperature, disorder and doubts; not measured in the cold; shipped with phaseid; the
+    cell near the middle of the others'; named; with its reference. Whatever is still equal goes by
+    content.
     """
     if len(entries) == 1:
         return entries
@@ -89,6 +93,7 @@ def best_first(entries: list[StoredEntry]) -> list[StoredEntry]:
             entry.symmetry_untold,
             -entry.quality,
             cold,
+            not entry.shipped,
             off,
             not entry.named,
             not entry.reference,

@@ -33,10 +33,15 @@ _COINCIDENT = 1e-4
 
 
 def same_phase(one: StoredEntry, other: StoredEntry) -> bool:
-    """Whether two entries of the same elements are of one phase; `one` is the better."""
+    """Whether two entries of the same elements are of one phase; `one` is the better.
+
+    The structures shipped with phaseid were chosen as different phases: sanidine and orthoclase
+    differ in the order of Al and Si alone.
+    """
     tolerance = COMPUTED_CELL if one.computed != other.computed else MEASURED_CELL
     if (
         one.group != other.group
+        or (one.shipped and other.shipped)
         or abs(one.ln_density - other.ln_density) > 3 * tolerance
         or float(np.abs(one.fractions - other.fractions).max()) > COMPOSITION
     ):

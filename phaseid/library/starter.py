@@ -18,9 +18,9 @@ from phaseid.resources import data_path
 DATABASE = "phaseid starter"
 
 _SAME_CELL = 0.01  # relative difference of the edges within which ours stands for a prototype
-# the eleven pairs of space groups that are mirror images: their powder patterns are the same
-_MIRROR_IMAGE = {78: 76, 95: 91, 96: 92, 145: 144, 153: 151, 154: 152, 170: 169, 172: 171}
-_MIRROR_IMAGE |= {179: 178, 181: 180, 213: 212}
+MIRROR_IMAGE = {78: 76, 95: 91, 96: 92, 145: 144, 153: 151, 154: 152, 170: 169, 172: 171}
+MIRROR_IMAGE |= {179: 178, 181: 180, 213: 212}
+"""The eleven pairs of space groups that are mirror images: their powder patterns are the same."""
 _MARK = re.compile(rb"^_phaseid_mark\s+(\S+)", re.MULTILINE)
 _REFERENCE = re.compile(rb'^_publ_section_references\s+"(.*)"\s*$', re.MULTILINE)
 
@@ -87,7 +87,7 @@ def _sourced(crystal: Crystal, data: bytes, stem: str) -> Crystal:
 
 def _kind(crystal: Crystal) -> tuple[str, int]:
     number = crystal.space_group_number
-    return composition_key(cell_contents(crystal)), _MIRROR_IMAGE.get(number, number)
+    return composition_key(cell_contents(crystal)), MIRROR_IMAGE.get(number, number)
 
 
 def _near(one: Crystal, other: Crystal) -> bool:
