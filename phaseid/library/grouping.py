@@ -1,9 +1,9 @@
 """One phase, many entries: which entries are determinations of the same phase, and which stands.
 
 The best determination of a phase is the leader of the others. Entries are compared among those of
-the same elements, the best first, each with the leaders so far, and follow the nearest; so the outcome depends on what is
-in the library and not on how it came there. An entry that was just added, and one whose leader
-went, stands for itself until `group_entries` has run.
+the same elements, the best first, each with the leaders so far, and follow the nearest; so the
+outcome depends on what is in the library and not on how it came there. An entry that was just
+added, and one whose leader went, stands for itself until `group_entries` has run.
 """
 
 from __future__ import annotations
