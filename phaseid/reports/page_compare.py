@@ -23,11 +23,13 @@ def side_by_side(answer: Identification) -> str:
     if len(first) < 2:
         return ""
     heads = "".join(f'<th scope="col">answer {h.rank}</th>' for h in first)
+    told = {name: [tell(answer, h) for h in first] for name, tell in ROWS.items()}
     rows = "".join(
         f'<tr><th scope="row">{name}</th>'
-        + "".join(f'<td class="wide">{words(tell(answer, h))}</td>' for h in first)
+        + "".join(f'<td class="wide">{words(cell)}</td>' for cell in cells)
         + "</tr>"
-        for name, tell in ROWS.items()
+        for name, cells in told.items()
+        if any(cells)
     )
     table = f"<table><thead><tr><td></td>{heads}</tr></thead><tbody>{rows}</tbody></table>"
     tells = [text for other in first[1:] for text in differences(answer, first[0], other)]

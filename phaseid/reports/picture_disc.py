@@ -246,9 +246,9 @@ def _label(
 
 def _with_legend(shapes: list[Shape], scenes: list[Scene], label: str) -> Picture:
     y, x = LEGEND_Y, 16.0
-    for k, name in enumerate(scenes[0].names):
+    for k, name in enumerate(scenes[0].names(_LETTERS_WIDE)):
         shapes.append(Line(((x, y - 4), (x + 44, y - 4)), f"ring {phase_role(k)}", 3.0))
-        shapes.append(Text(x + 54, y, shorten(name, _LETTERS_WIDE), phase_role(k), 12.0))
+        shapes.append(Text(x + 54, y, name, phase_role(k), 12.0))
         y += LEGEND_STEP
     if any(not ring.phases for scene in scenes for ring in scene.measured):
         for role, weight in (("leftover ink", 6.0), ("hollow ground", 3.0)):

@@ -18,7 +18,7 @@ from phaseid.matching.identification import (
 )
 from phaseid.reports.picture_style import phase_letter
 from phaseid.reports.picture_weak import WeakLine, weak_lines
-from phaseid.reports.plain import hkl_text, phase_text, safe, signed_text
+from phaseid.reports.plain import hkl_text, safe, short_phase_text, signed_text
 from phaseid.rings.columns import COLUMNS
 from phaseid.rings.ringlist import RingList
 
@@ -104,13 +104,12 @@ class Scene:
             ),
         )
 
-    @property
-    def names(self) -> tuple[str, ...]:
-        """The phases of the answer, each with its letter."""
+    def names(self, letters: int) -> tuple[str, ...]:
+        """The phases of the answer, each with its letter, shortened to so many letters."""
         if self.hypothesis is None:
             return ()
         return tuple(
-            f"{phase_letter(k)}  {phase_text(part.phase)}"
+            f"{phase_letter(k)}  {short_phase_text(part.phase, letters - 3)}"
             for k, part in enumerate(self.hypothesis.phases)
         )
 

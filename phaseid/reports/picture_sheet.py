@@ -18,9 +18,9 @@ from phaseid.reports.picture_style import phase_letter, phase_role
 from phaseid.reports.plain import (
     cell_text,
     hkl_text,
-    phase_text,
     probability_text,
     safe,
+    short_phase_text,
     shorten,
 )
 
@@ -30,6 +30,7 @@ if TYPE_CHECKING:
 MARGIN, GAP = 24.0, 28.0
 BAR_HEIGHT = 16.0
 NAMED = 8  # answers that the bar of probability shows one by one
+LETTERS = 66  # of the phases of an answer beside the bar
 _LINE = 22.0
 
 
@@ -77,7 +78,8 @@ def _told(best: Hypothesis, x: float, y: float, letters: int) -> tuple[list[Shap
     shapes: list[Shape] = []
     for k, part in enumerate(best.phases):
         symbol = safe(part.phase.space_group_symbol)
-        name = shorten(f"{phase_letter(k)}  {phase_text(part.phase)}, {symbol}", letters)
+        name = short_phase_text(part.phase, letters - len(symbol) - 5)
+        name = f"{phase_letter(k)}  {name}, {symbol}"
         shapes.append(Text(x, y, name, phase_role(k), 12.0, bold=True))
         y += 17
         for line in textwrap.wrap(
@@ -144,7 +146,7 @@ def probability_bar(answer: Identification, width: float) -> Picture:
         if share < 0.005 and name != UNLISTED and rank:
             continue
         sign = f"{rank + 1}  " if name not in (UNLISTED, OTHERS) else ""
-        words = f"{sign}{shorten(name, 60)} {probability_text(share)}"
+        words = f"{sign}{name} {probability_text(share)}"
         if name == UNLISTED:
             words = f"/// {words}"
         long = 6.6 * len(words) + 26
@@ -177,15 +179,17 @@ OTHERS = "other answers from this library"
 
 def probability_parts(answer: Identification) -> list[tuple[str, float]]:
     """(Name, probability) of the first answers, of the rest, of what is in no library."""
-    parts = [
-        (" + ".join(phase_text(part.phase) for part in h.phases), h.probability)
-        for h in answer.hypotheses[:NAMED]
-    ]
+    parts = [(_names(h), h.probability) for h in answer.hypotheses[:NAMED]]
     rest = 1 - sum(share for _, share in parts) - answer.unlisted_probability
     if rest >= 0.005:
         parts.append((OTHERS, rest))
     parts.append((UNLISTED, answer.unlisted_probability))
     return parts
+
+
+def _names(hypothesis: Hypothesis) -> str:
+    each = (LETTERS - 3 * (len(hypothesis.phases) - 1)) // len(hypothesis.phases)
+    return " + ".join(short_phase_text(part.phase, each) for part in hypothesis.phases)
 
 
 def _hatched(x: float, wide: float) -> list[Shape]:

@@ -70,6 +70,14 @@ def marks_text(phase: Phase) -> str:
     return f" [{', '.join(found)}]" if found else ""
 
 
+def short_phase_text(phase: Phase, width: int) -> str:
+    """Name a phase in `width` characters: where it is too long the name is cut, not the formula."""
+    whole, formula = phase_text(phase), f" ({safe(phase.formula)})"
+    if len(whole) <= width or not whole.endswith(formula) or 2 * len(formula) > width:
+        return shorten(whole, width)
+    return shorten(whole.removesuffix(formula), width - len(formula)) + formula
+
+
 def source_text(phase: Phase) -> str:
     """Say where an entry came from: `COD 9008460, al.cif`."""
     source = phase.source
