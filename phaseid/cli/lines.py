@@ -75,7 +75,6 @@ def lines(
     from phaseid.probes import parse_probe
     from phaseid.reports.json import dumps
     from phaseid.reports.lines import LineList, lines_dict, lines_text
-    from phaseid.rings.camera import parse_camera_constant
     from phaseid.units import A_PER_NM
 
     beam = parse_probe(probe)
@@ -86,7 +85,11 @@ def lines(
         )
     if thickness is not None and not 0 < thickness < 1e6:
         raise InputError(f"--thickness must be a positive number of nm, not {thickness:g}")
-    camera = None if camera_constant is None else parse_camera_constant(camera_constant)
+    camera = None
+    if camera_constant is not None:
+        from phaseid.rings.camera import parse_camera_constant
+
+        camera = parse_camera_constant(camera_constant)
     entry, crystal = find_crystal(phase, library)
     wanted = beam.kind == "electron" if may_appear is None else may_appear
     shown = LineList(

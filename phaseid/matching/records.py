@@ -8,7 +8,6 @@ from __future__ import annotations
 
 from abc import abstractmethod
 from collections.abc import Sequence
-from html import escape
 from typing import TYPE_CHECKING, Any, ClassVar, Protocol, TypeVar
 
 if TYPE_CHECKING:
@@ -44,6 +43,8 @@ class Tidy:
         """The result in a sentence."""
 
     def _repr_html_(self) -> str:
+        from html import escape
+
         keys, rows = self._table()
         head = "".join(f"<th>{escape(key)}</th>" for key in keys)
         body = "".join(

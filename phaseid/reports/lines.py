@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any, NamedTuple
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,8 +23,10 @@ from phaseid.reports.plain import (
     table,
     wrap,
 )
-from phaseid.rings.camera import CameraConstant
 from phaseid.units import A_PER_NM, g_from_d, q_from_d, two_theta_from_d
+
+if TYPE_CHECKING:
+    from phaseid.rings.camera import CameraConstant
 
 SCHEMA = "phaseid.lines/1"
 F2_UNITS = {"x-ray": "electron²", "electron": "Å²", "neutron": "fm²"}
