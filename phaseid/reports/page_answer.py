@@ -17,6 +17,8 @@ from phaseid.reports.picture_svg import Store, svg
 from phaseid.reports.plain import (
     cell_text,
     hkl_text,
+    marked_text,
+    marks_text,
     phase_text,
     probability_text,
     safe,
@@ -225,6 +227,14 @@ def _row(cells: list[str], phase_html: str, key: str, *, strong: bool = False) -
     return f'<tr data-key="{key}" tabindex="0"{" class=left" if strong else ""}>{shown}</tr>'
 
 
+def _entries(part: PhaseAnswer) -> str:
+    if not part.entries:
+        return ""
+    others = ", ".join(safe(entry.phase_id) for entry in part.entries[:SHOWN_ALIKE])
+    more = " …" if len(part.entries) > SHOWN_ALIKE else ""
+    return f"{len(part.entries) + 1} of this phase; this one stands for them: {others}{more}"
+
+
 def _phase(part: PhaseAnswer, number: int, *, alone: bool) -> str:
     phase = part.phase
     error = "" if part.share_sigma is None else f" ± {100 * part.share_sigma:.0f}"
@@ -237,6 +247,7 @@ def _phase(part: PhaseAnswer, number: int, *, alone: bool) -> str:
         ("share", share),
         ("texture, fibre axis", axis),
         ("entry", phase.phase_id),
+        ("entries in the library", _entries(part)),
         ("source", source_text(phase)),
         ("reference", phase.source.reference),
         *(("about the entry", finding.message) for finding in phase.findings),
@@ -244,8 +255,7 @@ def _phase(part: PhaseAnswer, number: int, *, alone: bool) -> str:
     tells = {separator.other.phase_id: separator.text for separator in part.separators}
     alike = []
     for other in part.indistinguishable[:SHOWN_ALIKE]:
-        told = f"{phase_text(other)}, {safe(other.space_group_symbol)}, {cell_text(other.cell)}"
-        told += f"; {source_text(other)}"
+        told = f"{marked_text(other)}, {cell_text(other.cell)}; {source_text(other)}"
         tell = tells.get(other.phase_id)
         alike.append(f"{told}. To tell them apart: {tell}" if tell else told)
     more = len(part.indistinguishable) - SHOWN_ALIKE
@@ -253,6 +263,7 @@ def _phase(part: PhaseAnswer, number: int, *, alone: bool) -> str:
         alike.append(f"and {more} more; the JSON inside this page lists them all")
     introduction = "<p>These rings cannot tell it from:</p>" if alike else ""
     listed = "".join(f"<li>{words(text)}</li>" for text in alike)
-    return f"<h3>{tag(number)}{words(phase_text(phase))}</h3>{facts(pairs)}{introduction}" + (
+    name = words(phase_text(phase) + marks_text(phase))
+    return f"<h3>{tag(number)}{name}</h3>{facts(pairs)}{introduction}" + (
         f"<ul>{listed}</ul>" if alike else ""
     )

@@ -13,7 +13,7 @@ from phaseid.reports.picture_sheet import (
     probability_parts,
 )
 from phaseid.reports.picture_svg import svg
-from phaseid.reports.plain import phase_text, probability_text, safe
+from phaseid.reports.plain import marked_text, probability_text
 
 LISTED = 50
 
@@ -43,7 +43,7 @@ def choice(answer: Identification, drawn: int) -> str:
     undrawn = len(answer.hypotheses) - drawn
     more = (
         f'<p class="quiet">The last {undrawn} are not drawn, to keep the page small; '
-        "the JSON in it holds them.</p>"
+        "<code>phaseid identify --json</code> tells all of them.</p>"
         if undrawn > 0
         else ""
     )
@@ -51,11 +51,7 @@ def choice(answer: Identification, drawn: int) -> str:
 
 
 def _row(h: Hypothesis, rings: int, drawn: int) -> str:
-    names = words(
-        " + ".join(
-            f"{phase_text(part.phase)} {safe(part.phase.space_group_symbol)}" for part in h.phases
-        )
-    )
+    names = words(" + ".join(marked_text(part.phase) for part in h.phases))
     groups = sum(len(part.indistinguishable) for part in h.phases)
     alike = f" (with {groups} alike)" if groups else ""
     explained = len({(a.pattern, a.ring) for a in h.assignments})

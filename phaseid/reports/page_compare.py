@@ -7,7 +7,7 @@ from phaseid.reports.page_html import items, scrolling, words
 from phaseid.reports.plain import (
     cell_text,
     hkl_text,
-    phase_text,
+    marked_text,
     probability_text,
     safe,
     signed_text,
@@ -92,9 +92,7 @@ def _missing(hypothesis: Hypothesis) -> str:
 
 
 def _phases(_answer: Identification, h: Hypothesis) -> str:
-    return " + ".join(
-        f"{phase_text(part.phase)} {safe(part.phase.space_group_symbol)}" for part in h.phases
-    )
+    return " + ".join(marked_text(part.phase) for part in h.phases)
 
 
 def _probability(_answer: Identification, h: Hypothesis) -> str:

@@ -5,10 +5,9 @@ from __future__ import annotations
 import textwrap
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Literal
+from typing import Literal
 
-if TYPE_CHECKING:
-    from phaseid.library.marks import marks
+from phaseid.library.marks import marks
 from phaseid.library.phase import Phase
 
 ELLIPSIS = "…"
@@ -68,6 +67,11 @@ def marks_text(phase: Phase) -> str:
     """Return what sets an entry apart, to follow its name: ` [computed]`; mostly nothing."""
     found = marks(finding.code for finding in phase.findings)
     return f" [{', '.join(found)}]" if found else ""
+
+
+def marked_text(phase: Phase) -> str:
+    """Name a phase with its space group and its marks: `corundum (Al2O3) R-3c [computed]`."""
+    return f"{phase_text(phase)} {safe(phase.space_group_symbol)}{marks_text(phase)}"
 
 
 def short_phase_text(phase: Phase, width: int) -> str:

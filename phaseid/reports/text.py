@@ -12,6 +12,7 @@ from phaseid.reports.plain import (
     Column,
     cell_text,
     hkl_text,
+    marked_text,
     marks_text,
     phase_text,
     probability_text,
@@ -139,11 +140,7 @@ def _alternatives(page: _Page, answer: Identification) -> None:
     for h in answer.hypotheses:
         explained = len({(a.pattern, a.ring) for a in h.assignments})
         groups = sum(len(part.indistinguishable) for part in h.phases)
-        names = " + ".join(
-            f"{phase_text(part.phase)} {safe(part.phase.space_group_symbol)}"
-            f"{marks_text(part.phase)}"
-            for part in h.phases
-        )
+        names = " + ".join(marked_text(part.phase) for part in h.phases)
         alike = f" (with {groups} alike)" if groups else ""
         page.row(str(h.rank), h.probability, f"{explained}/{rings}", names + alike)
     rest = 1 - sum(h.probability for h in answer.hypotheses) - answer.unlisted_probability

@@ -15,6 +15,7 @@ import jsonschema
 import numpy as np
 
 import phaseid
+from phaseid.crystal.crystal import Finding
 from phaseid.matching.identification import Identification, Unexplained
 from phaseid.reports.json import dumps, identification_dict
 from phaseid.reports.page import LARGEST_BYTES, Provenance, page
@@ -225,6 +226,21 @@ def test_a_list_of_a_thousand_rings_stays_below_a_megabyte(answer: Identificatio
     text = page(replace(two, hypotheses=(far,)), PROVENANCE)
     assert len(text.encode()) < 1_000_000
     assert "too long to be kept in a page" in _Reader(text).text
+
+
+def test_entries_and_what_they_are_is_told(answer: Identification) -> None:
+    best = answer.hypotheses[0]
+    aluminium = best.phases[0]
+    computed = replace(
+        aluminium.phase,
+        phase_id="Al-zzzz",
+        findings=(Finding("theoretical", "A computed cell, not a measured one."),),
+    )
+    part = replace(aluminium, entries=(computed,), indistinguishable=(computed,))
+    one = replace(answer, hypotheses=(replace(best, phases=(part, best.phases[1])),))
+    text = _Reader(page(one, PROVENANCE)).text
+    assert "2 of this phase; this one stands for them: Al-zzzz" in text
+    assert "aluminium (Al) Fm-3m [computed]" in text
 
 
 def test_what_separates_two_answers_is_told(answer: Identification) -> None:
