@@ -7,6 +7,7 @@ memory of handbook tables; only their use, not their value, matters here).
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import replace
 
 import numpy as np
@@ -26,6 +27,7 @@ from phaseid.matching.identification import (
     Unexplained,
 )
 from phaseid.probes.probe import Probe
+from phaseid.rings.measuring.disc import Disc
 from phaseid.rings.ringlist import RingList
 
 CAUTIONS = ("Fine powders: avoid dust; follow the local rules.",)
@@ -131,3 +133,35 @@ def answer() -> Identification:
         remarks=("Only phases of Al, Mg, O and Ag were considered.",),
         cautions=CAUTIONS,
     )
+
+
+CONSTANT = 980.0  # Å px
+SIDE = 401
+PX = 4.1
+
+
+def _with_image(answer: Identification, *, left_only: bool = False) -> Identification:
+    """The rings of the answer, drawn on an image one pixel of which is `PX` px."""
+    pattern = answer.patterns[0]
+    steps = (np.arange(SIDE) - (SIDE - 1) / 2) * PX
+    x, y = np.meshgrid(steps, steps)
+    radius = np.hypot(x, y)
+    grey = np.zeros((SIDE, SIDE))
+    for d_A in pattern.d_A[:4]:
+        grey += 255 * np.exp(-(((radius - CONSTANT / d_A) / 6.0) ** 2))
+    if left_only:
+        grey[x > 0] = 0
+    image = Disc(np.clip(grey, 0, 255).astype(np.uint8), np.ones((SIDE, SIDE), dtype=bool), PX)
+    rings = replace(
+        pattern,
+        position_column="radius_px",
+        position=CONSTANT / pattern.d_A,
+        disc=image,
+    )
+    return replace(answer, patterns=(rings,))
+
+
+@pytest.fixture
+def on_image() -> Callable[..., Identification]:
+    """Give an answer's pattern the image it was measured on."""
+    return _with_image

@@ -6,13 +6,14 @@ Skipped where no Chromium is installed. It is steered through a pipe, without an
 from __future__ import annotations
 
 import base64
+import io
 import json
 import os
 import select
 import shutil
 import subprocess
 import sys
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import suppress
 from dataclasses import replace
 from pathlib import Path
@@ -272,6 +273,39 @@ def test_names_are_never_run(browser: _Browser, answer: Identification, tmp_path
     assert browser.run("document.images.length") == 0
     inside = browser.run("document.getElementById('identification').textContent")
     assert json.loads(inside)["hypotheses"][0]["phases"][0]["name"] == EVIL
+
+
+def _darkness(browser: _Browser) -> float:
+    """Mean darkness (0-1) of the screen along a measured ring on the image, off its marks."""
+    from PIL import Image
+
+    points = browser.run(
+        "(() => {const disc = document.querySelector('.disc svg'), m = disc.getScreenCTM();"
+        "window.scrollTo(0, window.scrollY + m.f); const s = disc.getScreenCTM();"
+        "const ring = disc.querySelector('.hit[data-key=p1r2]'), long = ring.getTotalLength();"
+        "return [0.3, 0.35, 0.65, 0.7].map(k => ring.getPointAtLength(k * long))"
+        ".map(p => [p.x * s.a + s.e, p.y * s.d + s.f])})()"
+    )
+    screen = base64.b64decode(browser.ask("Page.captureScreenshot")["data"])
+    with Image.open(io.BytesIO(screen)) as image:
+        grey = image.convert("L")
+        return sum(1 - grey.getpixel((round(x), round(y))) / 255 for x, y in points) / len(points)
+
+
+def test_the_image_is_shown_where_its_rings_are(
+    browser: _Browser,
+    answer: Identification,
+    tmp_path: Path,
+    on_image: Callable[[Identification], Identification],
+) -> None:
+    browser.size(1280, 900)
+    _open(browser, on_image(answer), tmp_path)
+    assert not [e for e in browser.events if e.get("method") == "Log.entryAdded"]
+    assert _darkness(browser) > 0.5
+    dark = [{"name": "prefers-color-scheme", "value": "dark"}]
+    browser.ask("Emulation.setEmulatedMedia", features=dark)
+    assert _darkness(browser) < 0.5
+    browser.ask("Emulation.setEmulatedMedia", features=[])
 
 
 def test_it_prints_light_on_a4(opened: _Browser) -> None:

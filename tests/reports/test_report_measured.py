@@ -7,6 +7,7 @@ import io
 import math
 import re
 import xml.etree.ElementTree as ET
+from collections.abc import Callable
 from dataclasses import replace
 from types import SimpleNamespace
 from typing import Any, cast
@@ -27,32 +28,8 @@ from phaseid.reports.picture_scene import scene
 from phaseid.reports.picture_sticks import BASE, UP_TOP, sticks
 from phaseid.reports.picture_svg import Store, svg, svg_file
 from phaseid.reports.picture_weak import weak_lines
-from phaseid.rings.measuring.disc import Disc
 
-CONSTANT = 980.0  # Å px
-SIDE = 401
-PX = 4.1
-
-
-def _with_image(answer: Identification, *, left_only: bool = False) -> Identification:
-    """The rings of the answer, drawn on an image one pixel of which is `PX` px."""
-    pattern = answer.patterns[0]
-    steps = (np.arange(SIDE) - (SIDE - 1) / 2) * PX
-    x, y = np.meshgrid(steps, steps)
-    radius = np.hypot(x, y)
-    grey = np.zeros((SIDE, SIDE))
-    for d_A in pattern.d_A[:4]:
-        grey += 255 * np.exp(-(((radius - CONSTANT / d_A) / 6.0) ** 2))
-    if left_only:
-        grey[x > 0] = 0
-    image = Disc(np.clip(grey, 0, 255).astype(np.uint8), np.ones((SIDE, SIDE), dtype=bool), PX)
-    rings = replace(
-        pattern,
-        position_column="radius_px",
-        position=CONSTANT / pattern.d_A,
-        disc=image,
-    )
-    return replace(answer, patterns=(rings,))
+OnImage = Callable[..., Identification]
 
 
 def _grey(picture: Picture) -> NDArray[np.float64]:
@@ -71,9 +48,9 @@ def _profile(grey: NDArray[np.float64], angle_deg: float) -> NDArray[np.float64]
     return np.stack([r, 255.0 - grey[rows, columns]], axis=1)
 
 
-def test_the_image_meets_the_calculated_rings(answer: Identification) -> None:
+def test_the_image_meets_the_calculated_rings(answer: Identification, on_image: OnImage) -> None:
     # d of Al 111 and 220 by a / sqrt(h² + k² + l²): 1/d in the ratio sqrt(3) : sqrt(8)
-    shown = _with_image(answer)
+    shown = on_image(answer)
     picture = disc(scene(shown, shown.hypotheses[0], 0))
     grey = _grey(picture)
     reach = 1.04 * math.sqrt(11) / 4.0495  # of 311, the outermost line: missing
@@ -87,8 +64,8 @@ def test_the_image_meets_the_calculated_rings(answer: Identification) -> None:
             assert centre == pytest.approx(expected, abs=0.6)
 
 
-def test_the_image_keeps_to_its_half(answer: Identification) -> None:
-    shown = _with_image(answer)
+def test_the_image_keeps_to_its_half(answer: Identification, on_image: OnImage) -> None:
+    shown = on_image(answer)
     bare = replace(shown.hypotheses[0], assignments=(), missing=(), unexplained=())
     picture = disc(scene(shown, bare, 0))
     shades = [shape for shape in picture.shapes if isinstance(shape, Shade)]
@@ -100,8 +77,8 @@ def test_the_image_keeps_to_its_half(answer: Identification) -> None:
     assert only[:, : int(CENTRE_X * DOTS)].min() < 100
 
 
-def test_a_leftover_ring_stands_out_on_the_image(answer: Identification) -> None:
-    shown = _with_image(answer)
+def test_a_leftover_ring_stands_out_on_the_image(answer: Identification, on_image: OnImage) -> None:
+    shown = on_image(answer)
     picture = disc(scene(shown, shown.hypotheses[0], 0))
     group = next(g for g in picture.shapes if isinstance(g, Group) and g.key == "p1r5")
     lines = [part for part in group.shapes if getattr(part, "role", "") == "leftover ink"]
@@ -109,8 +86,8 @@ def test_a_leftover_ring_stands_out_on_the_image(answer: Identification) -> None
     assert group.touched is not None
 
 
-def test_two_images_have_a_half_each(answer: Identification) -> None:
-    one = _with_image(answer)
+def test_two_images_have_a_half_each(answer: Identification, on_image: OnImage) -> None:
+    one = on_image(answer)
     best = one.hypotheses[0]
     both = replace(
         best,
@@ -124,16 +101,16 @@ def test_two_images_have_a_half_each(answer: Identification) -> None:
     assert np.array_equal(left.ink, right.ink[:, ::-1])  # the image drawn is symmetric
 
 
-def test_the_half_is_the_one_that_was_measured(answer: Identification) -> None:
-    lopsided = _with_image(answer, left_only=True)
+def test_the_half_is_the_one_that_was_measured(answer: Identification, on_image: OnImage) -> None:
+    lopsided = on_image(answer, left_only=True)
     picture = disc(scene(lopsided, lopsided.hypotheses[0], 0))
     shade = next(shape for shape in picture.shapes if isinstance(shape, Shade))
     assert shade.ink.max() == 255
     assert len(np.unique(shade.ink)) <= 16
 
 
-def test_an_image_in_svg_is_held_once(answer: Identification) -> None:
-    shown = _with_image(answer)
+def test_an_image_in_svg_is_held_once(answer: Identification, on_image: OnImage) -> None:
+    shown = on_image(answer)
     picture = disc(scene(shown, shown.hypotheses[0], 0))
     store = Store()
     pages = svg(picture, store=store) + svg(picture, store=store)
@@ -155,8 +132,8 @@ def test_an_image_in_svg_is_held_once(answer: Identification) -> None:
     assert len(data) < 120_000
 
 
-def test_an_image_reaches_a_pdf(answer: Identification) -> None:
-    shown = _with_image(answer)
+def test_an_image_reaches_a_pdf(answer: Identification, on_image: OnImage) -> None:
+    shown = on_image(answer)
     picture = disc(scene(shown, shown.hypotheses[0], 0))
     assert b"/Subtype /Image" in pdf(picture)
     assert b"/Subtype /Image" not in pdf(disc(scene(answer, answer.hypotheses[0], 0)))

@@ -12,6 +12,7 @@ from phaseid.reports.plain import (
     cell_text,
     probability_text,
     safe,
+    short_phase_text,
     signed_text,
     table,
     wrap,
@@ -262,6 +263,15 @@ def test_a_deviation_has_a_sign_unless_it_is_none(value: float, text: str) -> No
 
 def test_white_space_and_controls_become_harmless() -> None:
     assert safe("a\tb\r\n c\x00\u2028\x9b") == "a b c? ?"
+
+
+def test_a_long_name_keeps_its_formula(answer: Identification) -> None:
+    phase = answer.hypotheses[0].phases[0].phase
+    long = replace(phase, name="a name that is much longer than there is room for", formula="Al2O3")
+    assert short_phase_text(long, 30) == "a name that is much l… (Al2O3)"
+    assert short_phase_text(phase, 30) == "aluminium (Al)"
+    heavy = replace(long, formula="Na55.057Al56.081Si135.977O384.115")
+    assert len(short_phase_text(heavy, 30)) == 30
 
 
 def test_a_table_shrinks_its_flexible_column_first() -> None:
