@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
+from phaseid.cli import completion
 from phaseid.cli.options import say
 from phaseid.cli.settings import calibration_folder, setting
 from phaseid.errors import InputError
@@ -53,7 +54,13 @@ CameraConstantText = Annotated[
     ),
 ]
 Unit = Annotated[
-    str, typer.Option("--unit", metavar="COLUMN", help=f"What typed numbers are: {UNITS}.")
+    str,
+    typer.Option(
+        "--unit",
+        metavar="COLUMN",
+        help=f"What typed numbers are: {UNITS}.",
+        autocompletion=completion.units,
+    ),
 ]
 Sigma = Annotated[
     str | None,
@@ -75,6 +82,7 @@ CalibrationName = Annotated[
         "--calibration",
         metavar="NAME",
         help="A calibration saved by `phaseid calibrate --save NAME`; over the file.",
+        autocompletion=completion.calibrations,
     ),
 ]
 
@@ -246,10 +254,11 @@ def _single(words: list[str]) -> None:
 
 def _standard_input() -> str:
     from phaseid.rings import text_of
+    from phaseid.rings.table import MAX_BYTES
 
     if sys.stdin is None or sys.stdin.closed:
         raise InputError("cannot be read: it is closed", path=STDIN, remedy="Name a file instead")
     if sys.stdin.isatty():
         say("Reading a ring list from the keyboard; end it with Ctrl-D.")
     # bytes: what they mean does not depend on the language of the terminal
-    return text_of(sys.stdin.buffer.read(), STDIN)
+    return text_of(sys.stdin.buffer.read(MAX_BYTES + 1), STDIN)

@@ -120,8 +120,12 @@ def write_config(held: dict[str, str], path: Path) -> None:
     part = path.with_name(f".{path.name}.{os.getpid()}.part")
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
-        part.write_text("\n".join(lines) + "\n", encoding="utf-8")
+        part.write_bytes(("\n".join(lines) + "\n").encode("utf-8"))
         part.replace(path)
+    except UnicodeEncodeError:
+        raise InputError(
+            "the value is no text that can be kept", remedy="Write it in UTF-8."
+        ) from None
     except OSError as error:
         part.unlink(missing_ok=True)
         raise InputError(

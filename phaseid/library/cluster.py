@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator
 from concurrent.futures import Executor
 from contextlib import contextmanager
@@ -10,6 +11,7 @@ from importlib import import_module
 from phaseid.errors import InputError
 
 _CONNECT_S = 20
+_ADDRESS = re.compile(r"([a-z]+://)?[\w.:\[\]-]+:\d{1,5}", re.IGNORECASE | re.ASCII)
 
 
 @contextmanager
@@ -20,6 +22,10 @@ def cluster(address: str) -> Iterator[tuple[Executor, int]]:
     worker that is lost on the way has its files read by another. Raises InputError where the extra
     is not installed, nobody answers, or no worker is there.
     """
+    if _ADDRESS.fullmatch(address) is None:
+        raise InputError(
+            f"'{address}' is no address of a scheduler", remedy="Write it as tcp://HOST:8786."
+        )
     try:
         distributed = import_module("distributed")
     except ImportError:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
@@ -14,7 +15,8 @@ from phaseid.rings.columns import COLUMNS
 from phaseid.rings.measuring.geometry import Floats
 
 MAX_BYTES = 100_000_000
-MIN_POINTS = 40
+MIN_POINTS, MAX_POINTS = 40, 1_000_000
+_MAX_LINE = 5000
 
 _METADATA = re.compile(r"#+\s*([^:#]{1,60}?)\s*:\s*(.*)$")
 _NAMES = {
@@ -93,11 +95,23 @@ def read_curve(path: str | Path, *, column: str | None = None) -> Curve:
 def _read_text(text: str, source: str, column: str | None) -> Curve:
     metadata: dict[str, str] = {}
     rows: list[list[float]] = []
-    header = ""
-    for number, raw in enumerate(text.splitlines(), start=1):
+    header, width = "", 0
+    for number, raw in enumerate(io.StringIO(text, newline=None), start=1):
         line = raw.strip()
         if not line:
             continue
+        if len(line) > _MAX_LINE or len(rows) > MAX_POINTS:
+            more = (
+                f"{_MAX_LINE} characters a line"
+                if len(line) > _MAX_LINE
+                else f"{MAX_POINTS} points"
+            )
+            raise InputError(
+                f"has more than {more}, too much for a profile",
+                path=source,
+                line=number,
+                remedy="A profile has a position and its counts on each line.",
+            )
         if line.startswith("#"):
             if match := _METADATA.match(line):
                 metadata[match[1]] = match[2].strip()
@@ -106,7 +120,7 @@ def _read_text(text: str, source: str, column: str | None) -> Curve:
             continue
         cells = [cell for cell in re.split(r"[\s,;]+", line) if cell]
         try:
-            rows.append([float(cell) for cell in cells])
+            numbers = [float(cell) for cell in cells]
         except ValueError:
             if rows:
                 raise InputError(
@@ -116,13 +130,16 @@ def _read_text(text: str, source: str, column: str | None) -> Curve:
                     remedy="Begin remarks with '#'; write decimals with a point.",
                 ) from None
             header = line
-        if rows and (len(rows[-1]) != len(rows[0]) or len(rows[-1]) < 2):
+            continue
+        width = width or max(2, len(numbers))
+        if len(numbers) != width:
             raise InputError(
-                f"has {len(rows[-1])} numbers where {max(2, len(rows[0]))} are needed",
+                f"has {len(numbers)} numbers where {width} are needed",
                 path=source,
                 line=number,
                 remedy="A profile has a position and its counts on each line.",
             )
+        rows.append(numbers[:3])
     named = [name for name in re.split(r"[\s,;]+", header.strip()) if name]
     found = _column(named[0]) if named else None
     if column is None and found is None and "position" in metadata:
