@@ -23,7 +23,8 @@ def measure(
             metavar="IMAGE-or-PROFILE",
             readable=False,
             show_default=False,
-            help="A grey image (TIFF, PNG, MRC), two columns of numbers, or a CIF powder block.",
+            help="A grey image (TIFF, PNG, MRC, a detector's format), two columns of numbers, "
+            "or a CIF powder block.",
         ),
     ],
     output: Annotated[
@@ -37,6 +38,15 @@ def measure(
         str | None,
         typer.Option(
             "--unit", metavar="COLUMN", help="What the positions of a profile are, if unstated."
+        ),
+    ] = None,
+    frame: Annotated[
+        int | None,
+        typer.Option(
+            "--frame",
+            metavar="N",
+            min=1,
+            help="Of several images in one file take number N; default: their sum.",
         ),
     ] = None,
     plot: Annotated[
@@ -63,6 +73,7 @@ def measure(
         scale_uncertainty=scale_uncertainty,
         camera_constant=camera_constant,
         unit=unit,
+        frame=frame,
     )
     try:
         spacings = [float(d) for d in found.ring_list().d_A]
@@ -92,6 +103,7 @@ def find_rings(
     scale_uncertainty: str | None = None,
     camera_constant: str | None = None,
     unit: str | None = None,
+    frame: int | None = None,
 ) -> Measurement:
     """Measure one file; what is given here goes to the ring list's metadata."""
     from dataclasses import replace
@@ -103,7 +115,7 @@ def find_rings(
         camera_constant = str(parse_camera_constant(camera_constant))
     probe = probe or setting("probe")
     if is_image(file):
-        found = measure_image(file)
+        found = measure_image(file, frame=frame)
         metadata = {"title": file.stem}
     else:
         found = measure_profile(file, probe=probe, column=unit)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -33,13 +34,15 @@ SATURATED = 0.01  # of a ring's pixels, from which on its intensity is too low
 MARGIN = 1.15  # of the outermost ring, that the picture shows
 
 
-def measure_image(path: str | Path) -> Measurement:
+def measure_image(path: str | Path, *, frame: int | None = None) -> Measurement:
     """Centre, ellipse and rings of an image; radii in px after the ellipse is made a circle.
 
-    Raises InputError if the file cannot be used or shows no rings.
+    `frame` chooses one of several images in the file, from 1; else they are added. Raises
+    InputError if the file cannot be used or shows no rings.
     """
-    image, usable = read_image(path)
-    return measure_pixels(image, usable, source=str(path))
+    plate = read_image(path, frame=frame)
+    found = measure_pixels(plate.counts, plate.usable, source=str(path))
+    return replace(found, remarks=(*plate.remarks, *found.remarks))
 
 
 def measure_pixels(image: Pixels, usable: Mask, *, source: str) -> Measurement:
