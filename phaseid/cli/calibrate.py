@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
+from phaseid.cli import completion
 from phaseid.cli.options import Json, LibraryFile, say, width
 from phaseid.cli.ring_input import (
     CameraConstantText,
@@ -33,6 +34,7 @@ def calibrate(
             "--standard",
             metavar="NAME",
             help="Si, LaB6, CeO2, Al2O3, Au, Al, Ag, Pt, TlCl, MgO, NaCl, graphite, or any phase.",
+            autocompletion=completion.standards,
         ),
     ] = None,
     across: Annotated[

@@ -6,6 +6,7 @@ from typing import Annotated
 
 import typer
 
+from phaseid.cli import completion
 from phaseid.cli.options import Json, LibraryFile, width
 from phaseid.cli.phases import find_crystal
 
@@ -14,9 +15,17 @@ DEFAULT_COMPARED = "electron 200 kV"
 
 def compare(
     first: Annotated[
-        str, typer.Argument(metavar="A", help="A phase id, formula, name, number or CIF file.")
+        str,
+        typer.Argument(
+            metavar="A",
+            help="A phase id, formula, name, number or CIF file.",
+            autocompletion=completion.phases,
+        ),
     ],
-    second: Annotated[str, typer.Argument(metavar="B", help="The other phase.")],
+    second: Annotated[
+        str,
+        typer.Argument(metavar="B", help="The other phase.", autocompletion=completion.phases),
+    ],
     probe: Annotated[
         str, typer.Option("--probe", help='Such as "x-ray Cu Ka" or "neutron 1.54 A".')
     ] = DEFAULT_COMPARED,

@@ -24,7 +24,12 @@ SCHEMA = "phaseid.config/1"
 
 def config(
     key: Annotated[
-        str | None, typer.Argument(metavar="KEY", help=f"One of: {', '.join(KEYS)}.")
+        str | None,
+        typer.Argument(
+            metavar="KEY",
+            help=f"One of: {', '.join(KEYS)}.",
+            autocompletion=lambda incomplete: [k for k in KEYS if k.startswith(incomplete)],
+        ),
     ] = None,
     value: Annotated[
         str | None, typer.Argument(metavar="VALUE", help="The default to write into the file.")

@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from difflib import get_close_matches
 from importlib.resources import files
 from typing import Annotated
 
 import typer
 
+from phaseid.cli.options import Json
 from phaseid.errors import InputError
+
+SCHEMA = "phaseid.guide/1"
 
 PAGES = {
     "rings": "how to write down what was measured",
@@ -26,22 +30,41 @@ PAGES = {
 
 
 def guide(
-    topic: Annotated[str | None, typer.Argument(help=f"One of: {', '.join(PAGES)}.")] = None,
+    topic: Annotated[
+        str | None,
+        typer.Argument(
+            help=f"One of: {', '.join(PAGES)}.",
+            autocompletion=lambda incomplete: [t for t in PAGES if t.startswith(incomplete)],
+        ),
+    ] = None,
+    as_json: Json = False,
 ) -> None:
     """Show a page of the manual; without a topic, the list of pages.
 
     \b
     phaseid guide rings
     """
+    if topic is not None and topic not in PAGES:
+        close = get_close_matches(topic, PAGES, n=1)
+        hint = f"Did you mean '{close[0]}'? " if close else ""
+        raise InputError(
+            f"no page of the manual is called '{topic}'",
+            remedy=f"{hint}There are: {', '.join(PAGES)}",
+        )
+    if as_json:
+        import json
+
+        shown = PAGES if topic is None else {topic: PAGES[topic]}
+        pages = [{"topic": name, "about": about} for name, about in shown.items()]
+        if topic is not None:
+            pages[0]["text"] = page(topic)
+        print(json.dumps({"schema": SCHEMA, "pages": pages}, indent=2))
+        return
     if topic is None:
         print("The manual. Show a page with `phaseid guide TOPIC`:\n")
         for name, about in PAGES.items():
             print(f"  {name:<10} {about}")
         return
-    if topic not in PAGES:
-        raise InputError(
-            f"no page of the manual is called '{topic}'", remedy=f"There are: {', '.join(PAGES)}"
-        )
     print(page(topic), end="")
 
 

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 
 import typer
 
+from phaseid.cli import completion
 from phaseid.cli.options import DEFAULT_PROBE, Json, LibraryFile, width
 from phaseid.cli.phases import find_crystal
 from phaseid.errors import InputError
@@ -21,6 +22,7 @@ def lines(
             metavar="PHASE",
             help="A phase id, formula, name, source number, or CIF file.",
             show_default=False,
+            autocompletion=completion.phases,
         ),
     ],
     probe: Annotated[

@@ -17,8 +17,7 @@ from phaseid.cli.options import (
     say,
     width,
 )
-from phaseid.cli.ring_input import Unit, typed_numbers
-from phaseid.errors import InputError
+from phaseid.cli.ring_input import Unit, all_numbers, ring_list
 
 if TYPE_CHECKING:
     from phaseid.matching.near import NearLine
@@ -29,7 +28,11 @@ SCHEMA = "phaseid.near/1"
 def near(
     spacings: Annotated[
         list[str],
-        typer.Argument(metavar="D", help="Spacings in Å, or see --unit.", show_default=False),
+        typer.Argument(
+            metavar="D",
+            help="Spacings in Å, or see --unit; or a ring list, or - for standard input.",
+            show_default=False,
+        ),
     ],
     unit: Unit = "d_A",
     tolerance: Annotated[
@@ -59,6 +62,7 @@ def near(
     \b
     phaseid near 2.338 2.025 --tolerance 0.5%
     phaseid near 3.13 --only Zn,S --probe "electron 200 kV"
+    phaseid near rings.csv --tolerance 0.3%
     """
     from phaseid.matching.chemistry import Chemistry
     from phaseid.matching.near import near_lines
@@ -112,13 +116,9 @@ def near(
 def _spacings_A(words: list[str], unit: str, probe: str) -> list[float]:
     from phaseid.rings import rings_from_values
 
-    typed = [typed_numbers(word) for word in words]
-    if not all(typed):
-        raise InputError(
-            f"'{words[typed.index([])]}' is no number",
-            remedy="Give spacings in Å, such as 2.338; rings in a file are for phaseid identify",
-        )
-    numbers = [number for several in typed for number in several]
+    numbers = all_numbers(words)
+    if not numbers:
+        return [float(d) for d in ring_list(words).d_A]
     return [float(d) for d in rings_from_values(numbers, column=unit, probe=probe).d_A]
 
 

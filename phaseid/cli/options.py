@@ -57,8 +57,8 @@ def say(message: str) -> None:
 
 
 def width() -> int:
-    """Return how many columns the answer may use: the terminal's, between 60 and 100."""
-    return max(60, min(100, shutil.get_terminal_size((80, 24)).columns))
+    """Return how many columns the answer may use: the terminal's, between 40 and 100."""
+    return max(40, min(100, shutil.get_terminal_size((80, 24)).columns))
 
 
 def bold() -> bool:

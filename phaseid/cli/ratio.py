@@ -7,6 +7,8 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from phaseid.cli.options import Json, say, width
+from phaseid.cli.ring_input import all_numbers, ring_list
+from phaseid.errors import InputError
 
 if TYPE_CHECKING:
     from phaseid.matching.ratio import RatioMatch
@@ -18,9 +20,12 @@ DEFAULT_TOLERANCE = "1%"
 
 def ratio(
     values: Annotated[
-        list[float],
+        list[str],
         typer.Argument(
-            metavar="R", help="Radii (rising) or spacings (falling), any unit.", show_default=False
+            metavar="R",
+            help="Radii (rising) or spacings (falling), any unit; or a ring list, or - for "
+            "standard input.",
+            show_default=False,
         ),
     ],
     tolerance: Annotated[
@@ -39,10 +44,11 @@ def ratio(
     \b
     phaseid ratio 1 1.155 1.633
     phaseid ratio 2.338 2.025 1.432 1.221
+    phaseid ratio rings.csv
     """
     from phaseid.matching.ratio import as_radii, match_types
 
-    radii, are_spacings = as_radii(values, spacings)
+    radii, are_spacings = as_radii(*_values(values, spacings))
     allowed = _relative(tolerance)
     matches = match_types(radii, tolerance=allowed, spacings=are_spacings)
     if as_json:
@@ -70,6 +76,19 @@ def ratio(
         say(f"{len(matches) - SHOWN} less likely types fit as well; --json lists them.")
     if matches and len(radii) < 4:
         say("Few rings fit many types: a fourth and fifth ring decide.")
+
+
+def _values(words: list[str], spacings: bool | None) -> tuple[list[float], bool | None]:
+    """The numbers typed, or the spacings of a ring list."""
+    numbers = all_numbers(words)
+    if not numbers:
+        return sorted((float(d) for d in ring_list(words).d_A), reverse=True), True
+    try:
+        return [float(number.replace(",", ".")) for number in numbers], spacings
+    except ValueError:
+        raise InputError(
+            f"cannot read the numbers {' '.join(numbers)}", remedy="Write them like 1 1.155 1.633."
+        ) from None
 
 
 def _relative(tolerance: str) -> float:

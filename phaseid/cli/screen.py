@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
+from phaseid.cli import completion
 from phaseid.cli.options import Json, LibraryFile, open_library, width
 from phaseid.cli.phases import find_in
 from phaseid.cli.ring_input import (
@@ -30,7 +31,12 @@ def screen(
     rings: Rings,
     expect: Annotated[
         list[str] | None,
-        typer.Option("--expect", metavar="PHASE", help="A phase that should be there; repeat it."),
+        typer.Option(
+            "--expect",
+            metavar="PHASE",
+            help="A phase that should be there; repeat it.",
+            autocompletion=completion.phases,
+        ),
     ] = None,
     watch: Annotated[
         list[Path] | None,

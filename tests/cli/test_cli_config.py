@@ -125,20 +125,39 @@ def test_a_bad_file_is_told_with_its_place(phaseid, config_file: Path, text: str
     assert config_file.read_text(encoding="latin-1") == text
 
 
-def test_shell_completion_offers_the_commands() -> None:
+def _completed(words: str, **environment: str) -> list[str]:
     done = subprocess.run(
         [sys.executable, "-c", "from phaseid.cli.main import run; run([])"],
         capture_output=True,
         text=True,
         env={
             **os.environ,
+            **environment,
             "_PHASEID_COMPLETE": "complete_bash",
-            "COMP_WORDS": "phaseid ca",
-            "COMP_CWORD": "1",
+            "COMP_WORDS": words,
+            "COMP_CWORD": str(len(words.split(" ")) - 1),
         },
         check=False,
     )
-    assert done.stdout.split() == ["calibrate"]
+    return [line for line in done.stdout.splitlines() if line]
+
+
+def test_shell_completion_offers_the_commands() -> None:
+    assert _completed("phaseid ca") == ["calibrate"]
+
+
+def test_shell_completion_knows_phases_standards_and_pages(starter_library_path: Path) -> None:
+    library = str(starter_library_path)
+    assert "corundum" in _completed("phaseid lines corun", PHASEID_LIBRARY=library)
+    assert "rutile" in _completed("phaseid screen a.csv --expect rut", PHASEID_LIBRARY=library)
+    assert _completed("phaseid calibrate a.csv --standard La") == ["LaB6", "lanthanum hexaboride"]
+    assert _completed("phaseid guide se") == ["series", "settings"]
+
+
+def test_shell_completion_builds_nothing(tmp_path: Path) -> None:
+    path = tmp_path / "none.sqlite"
+    assert _completed("phaseid lines corun", PHASEID_LIBRARY=str(path)) == []
+    assert not path.exists()
 
 
 @pytest.mark.parametrize("words", [["ratio", "1", "1.155", "1.633"], ["config"]])

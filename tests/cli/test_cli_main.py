@@ -239,6 +239,19 @@ def test_every_page_that_exists_is_listed() -> None:
     assert {path.stem for path in folder.glob("*.md")} == set(PAGES)
 
 
+def test_the_guide_as_json(phaseid) -> None:
+    value = phaseid("guide", "--json").json("guide-1")
+    assert "series" in [page["topic"] for page in value["pages"]]
+    (page,) = phaseid("guide", "series", "--json").json("guide-1")["pages"]
+    assert page["text"].startswith("# Series")
+
+
+def test_words_fit_a_narrow_terminal(monkeypatch: pytest.MonkeyPatch) -> None:
+    for columns, expected in ((20, 40), (40, 40), (72, 72), (200, 100)):
+        monkeypatch.setenv("COLUMNS", str(columns))
+        assert options.width() == expected
+
+
 def test_an_unknown_page_is_told_the_others(phaseid) -> None:
     done = phaseid("guide", "astrology")
     assert done.code == 2

@@ -157,6 +157,24 @@ def test_no_type_is_an_answer_too(phaseid) -> None:
     assert "phaseid identify" in done.err
 
 
+def test_look_ups_take_a_ring_list_too(phaseid, monkeypatch) -> None:
+    d = ["2.338", "2.025", "1.432", "1.221"]
+    text = "# probe: electron 200 kV\nd_A\n" + "".join(f"{one}\n" for one in d)
+    typed = phaseid("near", *d, "--only", "Al", "--json").json("near-1")
+    for words in (("near", "-", "--only", "Al"), ("ratio", "-")):
+        stream = io.TextIOWrapper(io.BytesIO(text.encode()), encoding="utf-8")
+        monkeypatch.setattr(sys, "stdin", stream)
+        value = phaseid(*words, "--json").json(f"{words[0]}-1")
+        if words[0] == "near":
+            assert value["matches"] == typed["matches"]
+        else:
+            assert value["matches"][0]["type"] == "face-centred cubic"
+            assert value["matches"][0]["edge_A"] == pytest.approx(4.0496, rel=1e-3)
+    value = phaseid("ratio", XRAYS, "--json").json("ratio-1")
+    assert len(value["ratios"]) == 13
+    assert value["spacings"] is True
+
+
 def test_compare_two_phases(phaseid) -> None:
     value = phaseid("compare", "anatase", "rutile", "--json").json("comparison-1")
     assert value["separable"] is True
