@@ -16,6 +16,7 @@ from pathlib import Path
 
 from phaseid.crystal.crystal import Crystal
 from phaseid.library.entries import Entry, entry
+from phaseid.library.gone import gone_from
 from phaseid.library.outcome import Outcome
 from phaseid.library.sharing import bundles, bytes_of, shared
 from phaseid.library.sources import Found, count_structure_files, read_all
@@ -94,7 +95,10 @@ def add_paths(
     found = map(writer.marked, read_all(paths))
     outcomes = shared(work, found, workers=workers, executor=executor)
     with closing(outcomes):
-        return _write(writer, outcomes, progress, total)
+        tally = _write(writer, outcomes, progress, total)
+    unread = [reject.location for reject in tally.rejects]
+    tally.gone = gone_from(conn, paths, writer.met, unread)
+    return tally
 
 
 def add_crystals(

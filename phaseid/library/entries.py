@@ -6,6 +6,7 @@ import hashlib
 from collections.abc import Mapping
 from dataclasses import dataclass
 
+from phaseid import __version__
 from phaseid.crystal.crystal import Crystal
 from phaseid.library.formulas import composition_key, element_key, name_key
 from phaseid.library.linetable import elements_bits
@@ -70,6 +71,7 @@ def entry(crystal: Crystal, location: str) -> Entry:
         "quality": trust,
         "complete_to_A": lines.complete_to_A,
         "floor": lines.floor,
+        "computed_by": __version__,
     }
     operations, structure = pack_crystal(crystal)
     strong = strongest_lines(lines) if len(lines.d_A) else {}

@@ -44,17 +44,21 @@ def group_entries(conn: sqlite3.Connection) -> None:
 
 def _group_sets(conn: sqlite3.Connection, sets: list[str]) -> None:
     for elements in sets:
-        rows = conn.execute(f"SELECT {COLUMNS} FROM phase WHERE elements = ?", (elements,))
-        entries = [StoredEntry(conn, *row) for row in rows.fetchall()]
-        leaders = leaders_of(entries)
-        conn.executemany("DELETE FROM member WHERE phase = ?", [(e.row,) for e in entries])
+        leaders = leaders_in(conn, elements)
+        conn.executemany("DELETE FROM member WHERE phase = ?", [(row,) for row in leaders])
         others = [(row, leader) for row, leader in leaders.items() if row != leader]
         conn.executemany("INSERT INTO member VALUES (?, ?)", others)
         conn.execute("DELETE FROM ungrouped WHERE elements = ?", (elements,))
 
 
-def leaders_of(entries: Sequence[StoredEntry]) -> dict[int, int]:
+def leaders_in(conn: sqlite3.Connection, elements: str) -> dict[int, int]:
     """Return row of the leader by row of the entry, for all entries of one set of elements."""
+    rows = conn.execute(f"SELECT {COLUMNS} FROM phase WHERE elements = ?", (elements,))
+    return leaders_of([StoredEntry(conn, *row) for row in rows.fetchall()])
+
+
+def leaders_of(entries: Sequence[StoredEntry]) -> dict[int, int]:
+    """The same for entries that are read already."""
     parts: dict[int, list[StoredEntry]] = defaultdict(list)
     for entry in entries:
         parts[entry.group].append(entry)

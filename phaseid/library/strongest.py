@@ -10,7 +10,7 @@ from __future__ import annotations
 import sqlite3
 import struct
 from bisect import bisect_left
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -106,6 +106,44 @@ def write_blocks(conn: sqlite3.Connection, changed: Mapping[int, Parts]) -> None
             "INSERT OR REPLACE INTO block VALUES (?, ?, ?)",
             [(part, number, bytes(data)) for part, data in parts.items()],
         )
+
+
+def drop_from_blocks(conn: sqlite3.Connection, rows: Iterable[int]) -> None:
+    """Take phases, by row number, out of their blocks."""
+    blocks: dict[int, set[int]] = {}
+    for row in rows:
+        blocks.setdefault(row // BLOCK, set()).add(row)
+    for number, gone in blocks.items():
+        held = conn.execute("SELECT part, data FROM block WHERE number = ?", (number,))
+        parts = {part: bytes(data) for part, data in held}
+        present = [row for (row,) in struct.iter_unpack("<q", parts["row"])]
+        left = [at for at, row in enumerate(present) if row not in gone]
+        if not left:
+            conn.execute("DELETE FROM block WHERE number = ?", (number,))
+            continue
+        for part, data in parts.items():
+            size = _SIZE[part]
+            kept = b"".join(data[at * size : (at + 1) * size] for at in left)
+            conn.execute(
+                "UPDATE block SET data = ? WHERE part = ? AND number = ?", (kept, part, number)
+            )
+
+
+def block_rows(conn: sqlite3.Connection) -> list[int]:
+    """Return the row numbers of the phases in all blocks, as they lie there."""
+    found = conn.execute("SELECT data FROM block WHERE part = 'row' ORDER BY number")
+    return [row for (data,) in found for (row,) in struct.iter_unpack("<q", data)]
+
+
+def in_block(conn: sqlite3.Connection, row: int) -> Parts:
+    """Return what the block of a phase holds of it; nothing where it is in none."""
+    held = conn.execute("SELECT part, data FROM block WHERE number = ?", (row // BLOCK,))
+    parts = {part: bytes(data) for part, data in held}
+    present = [other for (other,) in struct.iter_unpack("<q", parts.pop("row", b""))]
+    if row not in present:
+        return {}
+    at = present.index(row)
+    return {part: data[at * _SIZE[part] : (at + 1) * _SIZE[part]] for part, data in parts.items()}
 
 
 def read_blocks(conn: sqlite3.Connection, kind: Kind) -> StrongLines:

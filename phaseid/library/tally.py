@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass, field
+from dataclasses import asdict, dataclass, field
 from typing import Any
 
 
@@ -22,21 +22,60 @@ class Rejected:
     reason: str
 
 
+@dataclass(frozen=True, slots=True)
+class Replaced:
+    """An entry that gave way to another version of it: its phase id `before`, and what it is now.
+
+    `phase_id`, `name`, `database`, `number` and `file` are those of the new version.
+    """
+
+    before: str
+    phase_id: str
+    name: str
+    database: str
+    number: str
+    file: str
+
+
+@dataclass(frozen=True, slots=True)
+class Gone:
+    """An entry that came from a folder or archive that is there, and no longer holds it."""
+
+    phase_id: str
+    name: str
+    location: str
+
+
 @dataclass(slots=True)
 class ImportTally:
-    """The counts of one run of adding; text, JSON and exit code all come from here."""
+    """What one run of adding did; text, JSON and exit code all come from here.
+
+    `recomputed`, of the unchanged, had lines of another version of phaseid.
+    """
 
     added: int = 0
     unchanged: int = 0
     replaced: int = 0
+    recomputed: int = 0
     rejects: list[Rejected] = field(default_factory=list)
+    replacements: list[Replaced] = field(default_factory=list)
+    gone: list[Gone] = field(default_factory=list)
 
     def __iadd__(self, other: ImportTally) -> ImportTally:
-        self.added += other.added
-        self.unchanged += other.unchanged
-        self.replaced += other.replaced
+        self.counts = tuple(a + b for a, b in zip(self.counts, other.counts, strict=True))
         self.rejects += other.rejects
+        self.replacements += other.replacements
+        self.gone += other.gone
         return self
+
+    @property
+    def counts(self) -> tuple[int, ...]:
+        """Added, unchanged, replaced, recomputed."""
+        return self.added, self.unchanged, self.replaced, self.recomputed
+
+    @counts.setter
+    def counts(self, values: tuple[int, ...]) -> None:
+        self.added, self.unchanged, self.replaced, self.recomputed = values
 
     @property
     def rejected(self) -> int:
@@ -55,8 +94,9 @@ class ImportTally:
 
     def summary(self) -> str:
         """Return the counts as one line."""
+        anew = f" ({self.recomputed} computed anew)" if self.recomputed else ""
         return (
-            f"{self.added} added, {self.unchanged} unchanged, {self.replaced} replaced, "
+            f"{self.added} added, {self.unchanged} unchanged{anew}, {self.replaced} replaced, "
             f"{self.rejected} rejected"
         )
 
@@ -72,6 +112,9 @@ class ImportTally:
             "unchanged": self.unchanged,
             "replaced": self.replaced,
             "rejected": self.rejected,
+            "recomputed": self.recomputed,
+            "replacements": [asdict(replaced) for replaced in self.replacements],
+            "gone": [asdict(gone) for gone in self.gone],
             "rejects": [
                 {
                     "file": reject.file,

@@ -11,8 +11,10 @@ from phaseid.library.outcome import Outcome
 from phaseid.library.records import symmetry_row
 from phaseid.library.sources import Found, StructureFile
 from phaseid.library.strongest import Parts, write_blocks
-from phaseid.library.tally import ImportTally, Rejected
+from phaseid.library.tally import ImportTally, Rejected, Replaced
 
+TABLES = (("phase", "id"), ("structure", "phase"), ("lines", "phase"), ("label", "phase"))
+"""Where an entry has rows, and the column that holds its number; beside these its block."""
 _DIGEST_RANGE = 1 << 128
 
 
@@ -38,7 +40,8 @@ class Writer:
         self.tally = ImportTally()
         self._conn = conn
         self._read = read
-        self._met: set[int] = set()  # rows that a file of this run stands for
+        self.met: set[int] = set()  # rows that a file of this run stands for
+        self._replacements: list[Replaced] = []  # of this batch
         self._changed: dict[int, Parts] = {}  # rows of this batch, for their blocks
 
     def marked(self, found: Found) -> Found:
@@ -49,9 +52,9 @@ class Writer:
 
     def write(self, batch: Sequence[Outcome]) -> None:
         """Write what a batch of files gave, in one transaction: all of it or nothing."""
-        counts = (self.tally.added, self.tally.unchanged, self.tally.replaced)
+        counts = self.tally.counts
         refused: list[Rejected] = []
-        self._changed = {}
+        self._changed, self._replacements = {}, []
         self._conn.execute("BEGIN IMMEDIATE")
         try:
             for outcome in batch:
@@ -59,17 +62,18 @@ class Writer:
             write_blocks(self._conn, self._changed)
             self._conn.execute("COMMIT")
         except BaseException:
-            self.tally.added, self.tally.unchanged, self.tally.replaced = counts
+            self.tally.counts = counts
             if self._conn.in_transaction:
                 self._conn.execute("ROLLBACK")
             raise
         self.tally.rejects.extend(refused)
+        self.tally.replacements.extend(self._replacements)
 
     def _take(self, outcome: Outcome) -> Sequence[Rejected]:
         if outcome.file is not None:
             rows = self._rows_of(outcome.file)
             if rows:
-                self._met.update(rows)
+                self.met.update(rows)
                 self.tally.unchanged += len(rows)
                 return ()
             outcome = self._read(replace(outcome.file, known=False))  # replaced by this very run
@@ -98,11 +102,16 @@ class Writer:
         return [] if None in rows else rows
 
     def _put(self, entry: Entry) -> None:
-        held = self._conn.execute("SELECT id FROM phase WHERE content = ?", (entry.content,))
+        held = self._conn.execute(
+            "SELECT id, computed_by, location FROM phase WHERE content = ?", (entry.content,)
+        )
         known = held.fetchone()
         if known is not None:
             self.tally.unchanged += 1
             row_id = int(known[0])
+            if known[1] != entry.row["computed_by"] and known[2] == entry.row["location"]:
+                self._replace(row_id, entry)
+                self.tally.recomputed += 1
         else:
             older = self._older_version(entry)
             if older is None:
@@ -112,16 +121,28 @@ class Writer:
             else:
                 self.tally.replaced += 1
                 row_id, content = older
-                for table, column in (("phase", "id"), ("structure", "phase"), ("lines", "phase")):
-                    self._conn.execute(f"DELETE FROM {table} WHERE {column} = ?", (row_id,))
-                self._conn.execute("DELETE FROM label WHERE phase = ?", (row_id,))
-                self._insert(entry, row_id)
+                before = self._replace(row_id, entry)
                 self._change_digest(plus=entry.content, minus=content)
-        self._met.add(row_id)
+                self._replacements.append(self._replacement(row_id, before))
+        self.met.add(row_id)
         self._conn.executemany(
             "INSERT OR IGNORE INTO label (phase, kind, text, key) VALUES (?, ?, ?, ?)",
             [(row_id, *label) for label in entry.labels],
         )
+
+    def _replace(self, row_id: int, entry: Entry) -> str:
+        """Put an entry in the place of another; returns the phase id of that."""
+        where = (row_id,)
+        held = self._conn.execute("SELECT phase_id FROM phase WHERE id = ?", where).fetchone()
+        for table, column in TABLES:
+            self._conn.execute(f"DELETE FROM {table} WHERE {column} = ?", where)
+        self._insert(entry, row_id)
+        return str(held[0])
+
+    def _replacement(self, row_id: int, before: str) -> Replaced:
+        columns = "phase_id, name, source_database, source_id, source_file"
+        row = self._conn.execute(f"SELECT {columns} FROM phase WHERE id = ?", (row_id,)).fetchone()
+        return Replaced(before, *row)
 
     def _older_version(self, entry: Entry) -> tuple[int, str] | None:
         """Return (row id, content) of the entry that this one is a new version of.
@@ -145,7 +166,7 @@ class Writer:
             )
         else:
             return None
-        older = [held for held in found.fetchall() if held[0] not in self._met]
+        older = [held for held in found.fetchall() if held[0] not in self.met]
         if len(older) > 1:
             older = [held for held in older if held[2] == row["source_file"]]
         return (int(older[0][0]), str(older[0][1])) if len(older) == 1 else None
