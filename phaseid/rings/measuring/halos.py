@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from phaseid.rings.measuring.fitting import Floats
 from phaseid.rings.measuring.hull import convex_below
@@ -10,6 +11,18 @@ from phaseid.rings.measuring.hull import convex_below
 MIN_FWHM = 3.0  # widths of a ring; a halo is broader
 MIN_RISE = 0.1  # of the tail beneath it
 MIN_SIGMAS = 10.0  # of one bin's noise
+
+MAX_WIDTH = 0.2  # of its radius, that a ring has
+MAX_SHARE = 0.06  # of the largest radius seen
+
+
+def broad_as_halos(position: Floats, fwhm: Floats, reach: float) -> NDArray[np.bool_]:
+    """Which peaks (m,) are too broad for rings, where nothing narrower shows what a ring is.
+
+    Crystals of 2 nm still make rings of a tenth of their radius (Scherrer 1918); the first halo of
+    a glass has a fifth and more.
+    """
+    return np.asarray((fwhm > MAX_WIDTH * position) & (fwhm > MAX_SHARE * reach))
 
 
 def find_halos(x: Floats, level: Floats, sigma: Floats, fwhm: float) -> tuple[float, ...]:

@@ -15,6 +15,7 @@ from phaseid.rings.measuring.defects import Mask, blots, gain, lone_pixels, satu
 from phaseid.rings.measuring.disc import straightened
 from phaseid.rings.measuring.fitting import PeakFit
 from phaseid.rings.measuring.geometry import Geometry, Pixels
+from phaseid.rings.measuring.halos import broad_as_halos
 from phaseid.rings.measuring.images import read_image
 from phaseid.rings.measuring.measurement import MeasuredRing, Measurement, no_rings
 from phaseid.rings.measuring.peaks import find_peaks
@@ -66,9 +67,11 @@ def measure_pixels(image: Pixels, usable: Mask, *, source: str) -> Measurement:
     if found.fit is None:
         raise _nothing(image, usable, source, found.broad)
     along = follow(found.fit, seen)
-    keep = _those_that_are_rings(along)
+    wide = broad_as_halos(found.fit.position, found.fit.fwhm, float(seen.radius[-1]))
+    halos = tuple(sorted((*found.broad, *found.fit.position[wide].tolist())))
+    keep = _those_that_are_rings(along, ~wide)
     if not keep:
-        raise _nothing(image, usable, source, found.broad)
+        raise _nothing(image, usable, source, halos)
     rings = tuple(_ring(found.fit, along, seen, k, geometry) for k in keep)
     return Measurement(
         source=source,
@@ -76,7 +79,7 @@ def measure_pixels(image: Pixels, usable: Mask, *, source: str) -> Measurement:
         rings=rings,
         curve=np.stack([seen.radius, seen.mean, seen.median, found.background], axis=1),
         limit=found.limit,
-        halos=found.broad,
+        halos=halos,
         geometry=geometry,
         shape=(image.shape[0], image.shape[1]),
         masked=float(1.0 - usable.mean()),
@@ -112,13 +115,13 @@ def _first_look(image: Pixels, usable: Mask, saturated: Mask) -> tuple[Geometry,
     return geometry.scaled(factor, (factor - 1) / 2), start_radius(sums) * factor
 
 
-def _those_that_are_rings(along: AlongRing) -> list[int]:
-    """Which peaks of the mean go round the centre, not only here and there."""
+def _those_that_are_rings(along: AlongRing, narrow: Mask) -> list[int]:
+    """Which of the narrow peaks of the mean go round the centre, not only here and there."""
     even = (along.positive >= MIN_POSITIVE) & (along.median_score > MIN_MEDIAN)
     keep = even | (along.bright > MIN_BRIGHT)
     if keep.any():  # it is a pattern of rings: others may be of fewer crystallites
         keep |= along.bright > MIN_BRIGHT_BESIDE
-    keep &= np.isfinite(along.position_sigma)
+    keep &= narrow & np.isfinite(along.position_sigma)
     return [int(k) for k in np.flatnonzero(keep)]
 
 
