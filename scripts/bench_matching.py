@@ -16,7 +16,7 @@ import itertools
 import os
 import time
 from concurrent.futures import ProcessPoolExecutor
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 from pathlib import Path
 
 import numpy as np
@@ -191,9 +191,26 @@ class _Without:
     def phase(self, phase_id: str):
         return self._library.phase(phase_id)
 
-    def line_table(self, kind):
-        table = self._library.line_table(kind)
+    def entries(self, phase_id: str):
+        return [p for p in self._library.entries(phase_id) if p.phase_id not in self._hidden]
+
+    def _kept(self):
+        """Whether each phase is shown, in the order of the library."""
+        return np.array([p.phase_id not in self._hidden for p in self._library.phases()])
+
+    def standing(self):
+        return self._library.standing()[self._kept()]
+
+    def strong_lines(self, kind):
+        strong = self._library.strong_lines(kind)
+        kept = self._kept()
+        return replace(strong, **{f.name: getattr(strong, f.name)[kept] for f in fields(strong)})
+
+    def line_table(self, kind, phases=None):
+        table = self._library.line_table(kind, phases)
         keep = [i for i, p in enumerate(table.phase_ids) if p not in self._hidden]
+        if len(keep) == len(table):
+            return table
         rows = np.concatenate([np.arange(table.offsets[i], table.offsets[i + 1]) for i in keep])
         counts = np.diff(table.offsets)[keep]
         return replace(

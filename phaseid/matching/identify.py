@@ -16,8 +16,9 @@ from phaseid.library.phase import Phase
 from phaseid.matching.answer import build_hypothesis
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.confidence import Standing, weigh
-from phaseid.matching.crowd import crowd
+from phaseid.matching.determinations import with_entries
 from phaseid.matching.dispersion import at_own_energy, needs_own_energy
+from phaseid.matching.field import field_of, searched
 from phaseid.matching.groups import indistinguishable, pairing, rivals_of
 from phaseid.matching.identification import (
     Hypothesis,
@@ -26,8 +27,6 @@ from phaseid.matching.identification import (
     TypeMatch,
     Verdict,
 )
-from phaseid.matching.lineset import gather
-from phaseid.matching.model import Model
 from phaseid.matching.patterns import prepare_all
 from phaseid.matching.search import Judged, Members, Search
 from phaseid.matching.settings import PHASE_COUNT_PRIOR
@@ -43,7 +42,6 @@ _SHOWN_TYPES = 3
 _TYPE_PROBABILITY = 0.02
 _SAME_TYPE = 0.01
 """Two relatives of one group whose edges agree to this (ln) are one structure type."""
-_SETS_TRIED = 2000
 
 
 def identify(
@@ -53,42 +51,33 @@ def identify(
     chemistry: Chemistry | None = None,
     max_phases: int = 3,
     top: int = 5,
+    exhaustive: bool = False,
 ) -> Identification:
     """Rank phases and mixtures of `library` for one or several patterns of the same specimen.
 
-    Raises InputError where there is nothing to identify or nothing to choose from.
+    `exhaustive`: search every phase of a large library, not a shortlist. Raises InputError where
+    there is nothing to identify or nothing to choose from.
     """
     chemistry = chemistry or Chemistry()
     _check(patterns, max_phases, top)
-    tables = {kind: library.line_table(kind) for kind in {p.probe.kind for p in patterns}}
-    first = tables[patterns[0].probe.kind]
-    elements = first.elements
-    allowed = np.array([i for i, e in enumerate(elements) if chemistry.admits(e)], dtype=np.int64)
-    if len(first) == 0:
-        raise InputError(
-            f"the library {library.path} holds no phases",
-            remedy="Add structures with `phaseid library add`, or `phaseid library add --starter`.",
-        )
-    if len(allowed) == 0:
-        raise InputError(
-            f"none of the library's {len(first)} phases is allowed by the chemistry given",
-            remedy="Allow more elements with --only, or exclude fewer with --not.",
-        )
-    own = tuple(tables[p.probe.kind] for p in patterns)
-    search = _search(patterns, own, allowed, chemistry, max_phases)
+    field = field_of(patterns, library, chemistry, max_phases, exhaustive=exhaustive)
+    search = searched(prepare_all(patterns), field, chemistry, max_phases)
     if any(needs_own_energy(p.probe) for p in patterns):
         best = search.ranked()[:_SETS_AT_OWN_ENERGY]
-        phases = sorted({int(allowed[i]) for judged in best for i in judged.members})
+        phases = sorted({int(search.phases[i]) for judged in best for i in judged.members})
         own = tuple(
             at_own_energy(library, table, phases, rings.probe)
             if needs_own_energy(rings.probe)
             else table
-            for table, rings in zip(own, patterns, strict=True)
+            for table, rings in zip(field.tables, patterns, strict=True)
         )
-        search = _search(patterns, own, allowed, chemistry, max_phases)
+        field = replace(field, tables=own)
+        search = searched(prepare_all(patterns), field, chemistry, max_phases)
     standing = weigh(search)
-    phase_of = _Phases(library, first, search.phases)
-    hypotheses = _hypotheses(search, own, standing, phase_of, top)
+    phase_of = _Phases(library, field.tables[0], search.phases)
+    hypotheses = with_entries(
+        library, _hypotheses(search, field.tables, standing, phase_of, top)
+    )
     listed = 1.0 - standing.unlisted
     return Identification(
         verdict=_verdict(hypotheses, listed),
@@ -100,36 +89,6 @@ def identify(
         cautions=_cautions(hypotheses),
         type_matches=_type_matches(standing, phase_of, listed),
     )
-
-
-def _search(
-    patterns: Sequence[RingList],
-    tables: tuple[LineTable, ...],
-    allowed: NDArray[np.int64],
-    chemistry: Chemistry,
-    max_phases: int,
-) -> Search:
-    """Search the allowed phases of the tables, one table per pattern."""
-    prepared = prepare_all(patterns)
-    pairs = list(zip(tables, prepared, strict=True))
-    model = Model(
-        patterns=tuple(prepared),
-        lines=tuple(gather(table, allowed, pattern) for table, pattern in pairs),
-        crowd=tuple(crowd(table, allowed, pattern) for table, pattern in pairs),
-    )
-    elements = tables[0].elements
-    sets = [elements[i] for i in allowed]
-    search = Search(
-        model,
-        log_prior=_log_prior(tables[0], allowed),
-        max_phases=min(max_phases, len(allowed)),
-        tables=tables,
-        phases=allowed,
-        accepts=lambda members: chemistry.satisfied_by([sets[i] for i in members]),
-        rarity=_rarity(chemistry, sets, max_phases),
-    )
-    search.run()
-    return search
 
 
 def _check(patterns: Sequence[RingList], max_phases: int, top: int) -> None:
@@ -157,33 +116,6 @@ def _same(one: RingList, other: RingList) -> bool:
         and np.array_equal(one.position, other.position)
         and np.array_equal(one.intensity, other.intensity, equal_nan=True)
     )
-
-
-def _rarity(chemistry: Chemistry, elements: list[frozenset[str]], most: int) -> tuple[float, ...]:
-    """ln of the share of random sets of one, two, … phases that hold the required elements.
-
-    What is not listed is as rarely right in its elements: without this, requiring elements would
-    speak for an unlisted phase.
-    """
-    if not chemistry.must:
-        return (0.0,) * most
-    random = np.random.default_rng(0)
-    least = 1.0 / (len(elements) + 1.0)
-    shares = []
-    for size in range(1, most + 1):
-        picks = random.integers(0, len(elements), (_SETS_TRIED, size))
-        hits = float(sum(chemistry.satisfied_by([elements[i] for i in row]) for row in picks))
-        if size == 1:
-            hits = _SETS_TRIED * sum(chemistry.must <= e for e in elements) / len(elements)
-        shares.append(log(max(hits / _SETS_TRIED, least)))
-    return tuple(shares)
-
-
-def _log_prior(table: LineTable, allowed: NDArray[np.int64]) -> NDArray[np.float64]:
-    """ln of each allowed phase's share of the prior: by quality, summing to one."""
-    quality = np.maximum(table.quality[allowed], 1e-3)
-    result: NDArray[np.float64] = np.log(quality / quality.sum())
-    return result
 
 
 class _Phases:

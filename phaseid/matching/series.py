@@ -8,13 +8,14 @@ import numpy as np
 
 from phaseid.errors import InputError
 from phaseid.library.library import Library
+from phaseid.library.linetable import elements_masks
 from phaseid.library.phase import Phase
 from phaseid.matching.chemistry import Chemistry
+from phaseid.matching.field import rarity_of
 from phaseid.matching.identification import (
     Identification,
     Verdict,
 )
-from phaseid.matching.identify import _rarity as rarity_of
 from phaseid.matching.identify import identify
 from phaseid.matching.series_answer import Series, SeriesPattern, SeriesPhase
 from phaseid.matching.series_axis import EXPANSION_PER_K, Along, axis_of, warmed
@@ -129,7 +130,7 @@ def _states(
     return States.of(
         sets,
         log_shares(table, chemistry),
-        rarity_of(chemistry, list(elements.values()), max_phases),
+        rarity_of(chemistry, elements_masks(list(elements.values())), max_phases),
         lambda phases: chemistry.satisfied_by([elements[phase] for phase in phases]),
     )
 

@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from phaseid.library import Library
 from phaseid.library.linetable import Kind, LineTable, elements_bits
@@ -98,6 +99,12 @@ class Selection:
     def phase(self, phase_id: str) -> Phase:
         assert phase_id in self._chosen
         return self._library.phase(phase_id)
+
+    def entries(self, phase_id: str) -> list[Phase]:
+        return [self.phase(phase_id)]
+
+    def standing(self) -> NDArray[np.bool_]:
+        return np.ones(len(self), dtype=bool)
 
     def line_table(self, kind: Kind) -> LineTable:
         if kind not in self._tables:
