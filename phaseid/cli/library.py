@@ -7,12 +7,14 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from phaseid.cli.options import Json, LibraryFile, open_library, say, width
+from phaseid.cli.library_care import check, remove
+from phaseid.cli.library_export import export
+from phaseid.cli.library_find import find
+from phaseid.cli.options import Json, LibraryFile, open_library, say
 from phaseid.errors import InputError
 
 if TYPE_CHECKING:
     from phaseid.library import ImportTally, Library
-    from phaseid.library.phase import Phase
 
 SHOWN_REJECTS = 20
 MOST_JOBS = 60  # Windows waits for no more processes at a time
@@ -22,6 +24,10 @@ app = typer.Typer(
     no_args_is_help=True,
     rich_markup_mode=None,
 )
+app.command("find")(find)
+app.command("export")(export)
+app.command("check")(check)
+app.command("remove")(remove)
 
 AddTo = Annotated[
     Path | None,
@@ -95,6 +101,7 @@ def add(
         print(dumps(tally.as_json()))
     else:
         print(tally.summary())
+    _tell_changes(tally)
     _tell_rejects(tally)
     if tally.exit_code:
         raise InputError("nothing could be read", remedy="The reasons stand above.")
@@ -115,7 +122,7 @@ def info(library: LibraryFile = None, as_json: Json = False) -> None:
         print(dumps({"schema": "phaseid.library-info/1", **facts}))
         return
     print(f"path            {facts['path']}")
-    print(f"phases          {facts['phases']}")
+    print(f"entries         {facts['phases']} of {facts['distinct']} phases")
     for database, count in facts["sources"].items():
         print(f"  {count:>7}  from {database}")
     print(f"digest          {facts['digest']}")
@@ -125,56 +132,50 @@ def info(library: LibraryFile = None, as_json: Json = False) -> None:
 
 
 @app.command()
-def rejects(library: LibraryFile = None, as_json: Json = False) -> None:
-    """List the files and structures that could not be added, with reasons.
+def rejects(
+    library: LibraryFile = None,
+    reason: Annotated[
+        str | None,
+        typer.Option("--reason", metavar="CODE", help="Only those with this code."),
+    ] = None,
+    as_json: Json = False,
+) -> None:
+    """Count and list the files and structures that could not be added, by reason.
 
-    \b
+    
     phaseid library rejects
+    phaseid library rejects --reason no_symmetry
     """
+    from collections import Counter
+
     with open_library(library) as opened:
         held = opened.rejects()
+    counts = Counter(reject["code"] for reject in held)
+    if reason is not None:
+        if held and reason not in counts:
+            raise InputError(
+                f"nothing was rejected for '{reason}'",
+                remedy=f"There are: {', '.join(code for code, _ in counts.most_common())}.",
+            )
+        held = [reject for reject in held if reject["code"] == reason]
     if as_json:
         from phaseid.reports.json import dumps
 
-        print(dumps({"schema": "phaseid.library-rejects/1", "rejects": held}))
+        reasons = [{"code": code, "count": count} for code, count in counts.most_common()]
+        print(dumps({"schema": "phaseid.library-rejects/1", "rejects": held, "reasons": reasons}))
         return
     from phaseid.reports.plain import safe
 
-    for reject in held:
-        block = f" block {reject['block']}" if reject["block"] else ""
-        print(safe(f"{reject['location']}{block}: {reject['reason']}"))
     if not held:
         say("Nothing was rejected.")
-
-
-@app.command()
-def find(
-    text: Annotated[
-        list[str],
-        typer.Argument(metavar="TEXT", help="A name, formula, source number or phase id."),
-    ],
-    library: LibraryFile = None,
-    as_json: Json = False,
-) -> None:
-    """Find phases by name or part of one, formula, source number or phase id.
-
-    \b
-    phaseid library find corundum
-    phaseid library find O3Al2
-    """
-    wanted = " ".join(text)
-    with open_library(library) as opened:
-        found = opened.find(wanted)
-        if not found:
-            opened.choose(wanted)  # raises, and says which names come close
-    if as_json:
-        from phaseid.reports.json import dumps, phase_dict
-
-        phases = [phase_dict(phase) for phase in found]
-        print(dumps({"schema": "phaseid.library-find/1", "phases": phases}))
         return
-    for row in _columns(found):
-        print(row)
+    for code, count in counts.most_common():
+        if reason in (None, code):
+            print(f"{count:>7}  {code}")
+    print()
+    for reject in sorted(held, key=lambda one: (-counts[one["code"]], one["code"])):
+        block = f" block {reject['block']}" if reject["block"] else ""
+        print(safe(f"{reject['location']}{block}: {reject['reason']}"))
 
 
 @app.command()
@@ -220,6 +221,22 @@ def _add(
     return tally
 
 
+def _tell_changes(tally: ImportTally) -> None:
+    from phaseid.reports.plain import safe
+
+    for new in tally.replacements[:SHOWN_REJECTS]:
+        entry = " ".join(part for part in (new.database, new.number) if part)
+        say(safe(f"replaced: {new.name} ({entry or new.file}), {new.before} by {new.phase_id}"))
+    if (more := len(tally.replacements) - SHOWN_REJECTS) > 0:
+        say(f"and {more} more replaced; --json lists them")
+    for gone in tally.gone[:SHOWN_REJECTS]:
+        say(safe(f"no longer there: {gone.location} ({gone.name}, {gone.phase_id})"))
+    if tally.gone:
+        more = len(tally.gone) - SHOWN_REJECTS
+        rest = f"and {more} more; " if more > 0 else ""
+        say(f"{rest}the library keeps them. To remove them: phaseid library remove ID")
+
+
 def _tell_rejects(tally: ImportTally) -> None:
     from phaseid.reports.plain import safe
 
@@ -231,26 +248,3 @@ def _tell_rejects(tally: ImportTally) -> None:
             f"and {tally.rejected - SHOWN_REJECTS} more rejected; all of them: "
             "phaseid library rejects"
         )
-
-
-def _columns(phases: list[Phase]) -> list[str]:
-    from phaseid.reports.plain import Column, phase_text, source_text, table
-
-    columns = (
-        Column("id", "left"),
-        Column("phase", "left", flexible=True),
-        Column("group", "left", flexible=True),
-        Column("a, b, c (Å)", "left"),
-        Column("source", "left", flexible=True),
-    )
-    rows = [
-        [
-            phase.phase_id,
-            phase_text(phase),
-            f"{phase.space_group_symbol} ({phase.space_group_number})",
-            " ".join(f"{edge:.2f}" for edge in phase.cell[:3]),
-            source_text(phase),
-        ]
-        for phase in phases
-    ]
-    return table(columns, rows, width())

@@ -14,7 +14,7 @@ from phaseid.errors import InputError
 from phaseid.library.conditions import ORDER, Condition, conditions
 from phaseid.library.formulas import formula_keys
 from phaseid.library.groups import LISTED, counts_of, listed, one_of_each
-from phaseid.library.lookups import FORMULAS, NAMES, Match, best_fits_first, matches, phases_of
+from phaseid.library.lookups import FORMULAS, IDS, NAMES, Match, best_fits_first, matches, phases_of
 from phaseid.library.phase import Phase
 from phaseid.library.question import Question
 
@@ -44,8 +44,8 @@ def search(
     """Return the phases that answer, at most `limit`; with `every_entry` the entries themselves.
 
     By text the best fits come first, then the more trusted entries; by cell edges the nearest;
-    otherwise the order is that of elements and composition. Raises InputError for a question that
-    is none.
+    otherwise the order is that of elements and composition. All answer a question that asks for
+    nothing. Raises InputError for one that cannot be understood.
     """
     rows = _answers(conn, question, None if limit is None else COUNTED + 1)
     more = limit is not None and len(rows) > COUNTED
@@ -64,7 +64,9 @@ def rows_of(conn: sqlite3.Connection, question: Question) -> list[int]:
 
 def _answers(conn: sqlite3.Connection, question: Question, most: int | None) -> list[int]:
     if not question:
-        raise InputError("nothing to find by", remedy="Give a name, or say what is known of it.")
+        limit = -1 if most is None else most
+        every = conn.execute(f"SELECT id FROM phase ORDER BY {ORDER} LIMIT ?", (limit,))
+        return [row for (row,) in every]
     asked = conditions(conn, question)
     fits = _fits(conn, question)
     if fits is None:
@@ -84,6 +86,8 @@ def _fits(conn: sqlite3.Connection, question: Question) -> dict[int, Match] | No
     asked: list[dict[int, Match]] = []
     if question.text:
         asked.append(matches(conn, question.text))
+    if question.ids:
+        asked.append(_numbered(conn, question.ids))
     if question.formula:
         if not formula_keys(question.formula, any_case=True):
             raise InputError(
@@ -96,6 +100,19 @@ def _fits(conn: sqlite3.Connection, question: Question) -> dict[int, Match] | No
         return None
     common = set.intersection(*map(set, asked))
     return {row: min(fits[row] for fits in asked) for row in common}
+
+
+def _numbered(conn: sqlite3.Connection, ids: tuple[str, ...]) -> dict[int, Match]:
+    found: dict[int, Match] = {}
+    for wanted in ids:
+        fits = matches(conn, wanted, IDS)
+        if not fits:
+            raise InputError(
+                f"the library has no entry with the id or number '{wanted}'",
+                remedy="Look it up: phaseid library find NAME-OR-FORMULA",
+            )
+        found |= fits
+    return found
 
 
 def _by_conditions(

@@ -96,6 +96,7 @@ class Library:
         return {
             "path": str(self.path),
             "phases": len(self),
+            "distinct": len(self) - self._one("SELECT count(*) FROM member")[0],
             "digest": self.digest,
             "schema_version": int(facts["schema_version"]),
             "created_by": f"phaseid {facts['created_by']}",
@@ -264,6 +265,17 @@ class Library:
 
         with self.writing() as conn:
             return add_crystals(conn, crystals, progress)
+
+    def remove(self, phase_ids: Iterable[str]) -> None:
+        """Take entries out of the library, all or none; raises InputError as `phase`."""
+        from phaseid.library.removing import remove
+
+        rows = []
+        for phase_id in phase_ids:
+            self.phase(phase_id)
+            rows.append(self._one("SELECT id FROM phase WHERE phase_id = ?", phase_id)[0])
+        with self.writing() as conn:
+            remove(conn, rows)
 
     @contextmanager
     def reading(self) -> Iterator[sqlite3.Connection]:

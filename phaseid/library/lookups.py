@@ -88,7 +88,8 @@ Kinds = frozenset[str]
 
 FORMULAS: Kinds = frozenset({"formula"})
 NAMES: Kinds = frozenset({"name"})
-ANYTHING = FORMULAS | NAMES | {"id"}
+IDS: Kinds = frozenset({"id"})
+ANYTHING = FORMULAS | NAMES | IDS
 
 
 def find(conn: sqlite3.Connection, text: str) -> list[Hit]:

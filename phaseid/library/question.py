@@ -9,7 +9,8 @@ from dataclasses import dataclass
 class Question:
     """What is known of the phases wanted; everything that is given must hold.
 
-    `text` is anything a phase is asked for by; `formula` and `name` are the same more narrowly.
+    `text` is anything a phase is asked for by; `ids` are phase ids or source numbers, any of which
+    will do; `formula` and `name` are the same more narrowly.
     `must`, `only` and `exclude` are elements held, the only ones held, and not held. `space_group`
     is a number or a symbol in any setting. `edges_A` are up to three cell edges in any order, met
     within the relative `tolerance`. `density_g_cm3` is a range. `source` is a database, a number,
@@ -17,6 +18,7 @@ class Question:
     """
 
     text: str = ""
+    ids: tuple[str, ...] = ()
     formula: str = ""
     name: str = ""
     must: frozenset[str] = frozenset()
