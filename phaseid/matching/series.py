@@ -8,7 +8,7 @@ import numpy as np
 
 from phaseid.errors import InputError
 from phaseid.library.library import Library
-from phaseid.library.linetable import elements_masks
+from phaseid.library.linetable import LineTable
 from phaseid.library.phase import Phase
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.field import rarity_of
@@ -23,9 +23,12 @@ from phaseid.matching.series_chain import PERSISTENCE, Floats, Set, Smoothed, St
 from phaseid.matching.series_crew import crew
 from phaseid.matching.series_evidence import (
     TOP,
+    Indices,
+    allowed_phases,
     evidence,
     log_likelihoods,
     log_shares,
+    own_sets,
     sets_suggested,
     stand_ins,
     starts_of,
@@ -84,14 +87,19 @@ def identify_series(
             _alone, [(rings, chemistry, max_phases) for rings in patterns], step
         )
         sets = sets_suggested(alone)
+        table = library.line_table(patterns[0].probe.kind)
+        allowed = allowed_phases(library, table, chemistry)
         tried = [
-            (rings, chemistry, sets, starts_of(answer))
+            (rings, allowed, [*sets, *own_sets(answer)], starts_of(answer))
             for rings, answer in zip(patterns, alone, strict=True)
         ]
         likelihoods: list[Floats] = hands(log_likelihoods, tried, step)
-    states = _states(library, chemistry, patterns[0], sets, max_phases)
+    states = _states(table, allowed, chemistry, sets, max_phases)
     weights = np.stack(
-        [evidence(a, states, found) for a, found in zip(alone, likelihoods, strict=True)]
+        [
+            evidence(answer, states, found[: len(sets)], found[len(sets) :])
+            for answer, found in zip(alone, likelihoods, strict=True)
+        ]
     )
     values = PERSISTENCE if persistence is None else ((persistence, 1.0),)
     together, apart = smooth(weights, states, values), smooth(weights, states, ((0.0, 1.0),))
@@ -119,19 +127,16 @@ def _alone(
 
 
 def _states(
-    library: Library, chemistry: Chemistry, rings: RingList, sets: list[Set], max_phases: int
+    table: LineTable, allowed: Indices, chemistry: Chemistry, sets: list[Set], max_phases: int
 ) -> States:
-    table = library.line_table(rings.probe.kind)
-    elements = {
-        phase_id: held
-        for phase_id, held in zip(table.phase_ids, table.elements, strict=True)
-        if chemistry.admits(held)
-    }
+    used = {phase for one in sets for phase in one}
+    of_all = table.elements
+    held = {table.phase_ids[i]: of_all[i] for i in allowed.tolist() if table.phase_ids[i] in used}
     return States.of(
         sets,
-        log_shares(table, chemistry),
-        rarity_of(chemistry, elements_masks(list(elements.values())), max_phases),
-        lambda phases: chemistry.satisfied_by([elements[phase] for phase in phases]),
+        log_shares(table, allowed),
+        rarity_of(chemistry, table.elements_mask[allowed], max_phases),
+        lambda phases: chemistry.satisfied_by([held[phase] for phase in phases]),
     )
 
 

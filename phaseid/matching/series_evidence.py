@@ -7,6 +7,7 @@ from itertools import product
 from math import log
 
 import numpy as np
+from numpy.typing import NDArray
 
 from phaseid.library.library import Library
 from phaseid.library.linetable import LineTable
@@ -18,15 +19,17 @@ from phaseid.matching.likelihood import evaluate
 from phaseid.matching.lineset import gather
 from phaseid.matching.model import Model
 from phaseid.matching.patterns import prepare
-from phaseid.matching.series_chain import Floats, Set, States
+from phaseid.matching.series_chain import Floats, Set, States, log_prior
 from phaseid.rings.ringlist import RingList
 
+Indices = NDArray[np.int64]
 TOP = 20
 """Answers asked of each pattern by itself."""
 MOST_SETS = 200
 """Sets of phases a series is judged over, the likeliest of any of its patterns."""
 _LEAST = 1e-5
-_NONE = -1e4
+_LEAST_REST = 1e-12
+NEVER = -1e4
 """ln likelihood of a set of which a phase makes no ring: it cannot be what shows there."""
 
 
@@ -37,6 +40,11 @@ def stand_ins(hypothesis: Hypothesis) -> list[Set]:
         for part in hypothesis.phases
     ]
     return [frozenset(chosen) for chosen in product(*choices)]
+
+
+def own_sets(answer: Identification) -> list[Set]:
+    """The sets that a pattern by itself answers with, likely or not: they set the scale."""
+    return [frozenset(part.phase.phase_id for part in h.phases) for h in answer.hypotheses]
 
 
 def sets_suggested(answers: Sequence[Identification]) -> list[Set]:
@@ -53,12 +61,22 @@ def sets_suggested(answers: Sequence[Identification]) -> list[Set]:
     return ranked[:MOST_SETS]
 
 
+def allowed_phases(library: Library, table: LineTable, chemistry: Chemistry) -> Indices:
+    """Indices of the phases that the chemistry allows, one entry of each phase."""
+    standing = library.standing()
+    return np.array(
+        [i for i, e in enumerate(table.elements) if standing[i] and chemistry.admits(e)],
+        dtype=np.int64,
+    )
+
+
 def log_likelihoods(
-    library: Library, rings: RingList, chemistry: Chemistry, sets: Sequence[Set], starts: Floats
+    library: Library, rings: RingList, allowed: Indices, sets: Sequence[Set], starts: Floats
 ) -> Floats:
     """ln likelihood (n,) of each set on one pattern, as the search for its phases judges them.
 
-    `starts` are common shifts in ln d from which the fit sets out; the best counts.
+    `allowed` are the phases whose lines make the crowd. `starts` are common shifts in ln d from
+    which the fit sets out; the best counts.
     """
     table = library.line_table(rings.probe.kind)
     number = {phase_id: i for i, phase_id in enumerate(table.phase_ids)}
@@ -66,20 +84,17 @@ def log_likelihoods(
     rows = np.array([number[phase] for phase in used], dtype=np.int64)
     if needs_own_energy(rings.probe):
         table = at_own_energy(library, table, rows.tolist(), rings.probe)
-    allowed = np.array(
-        [i for i, e in enumerate(table.elements) if chemistry.admits(e)], dtype=np.int64
-    )
     pattern = prepare(rings)
     lines = gather(table, rows, pattern)
     model = Model((pattern,), (lines,), (crowd(table, allowed, pattern),))
     place = {phase: i for i, phase in enumerate(used)}
-    result = np.full(len(sets), _NONE)
+    result = np.full(len(sets), NEVER)
     for size in sorted({len(one) for one in sets}):
         those = [i for i, one in enumerate(sets) if len(one) == size]
         members = np.array([sorted(place[p] for p in sets[i]) for i in those], dtype=np.int64)
         for start in starts:
             fit = evaluate(model, members, np.full((*members.shape, 1), start))
-            value = np.where(fit.shows, fit.log_likelihood, _NONE)
+            value = np.where(fit.shows, fit.log_likelihood, NEVER)
             result[those] = np.maximum(result[those], value)
     return result
 
@@ -90,48 +105,50 @@ def starts_of(answer: Identification) -> Floats:
     return np.array([0.0, *best])
 
 
-def evidence(answer: Identification, states: States, likelihood: Floats) -> Floats:
-    """ln likelihood (n + 2,) of each state, on the scale of `likelihood` (n,) of its sets.
+def evidence(
+    answer: Identification, states: States, likelihood: Floats, own_likelihood: Floats
+) -> Floats:
+    """ln likelihood (n + 2,) of each state in one pattern, on a scale of its own.
 
-    Where the pattern's own answer says more of a set than its plain likelihood (as a textured film,
-    or with an unlisted phase beside it), that counts. What its answers leave over is shared by the
-    sets not among the states.
+    `likelihood` (n,) is that of the states' sets, `own_likelihood` that of `own_sets`. Where the
+    pattern's own answer says more of a set than its plain likelihood (as a textured film, or with
+    an unlisted phase beside it), that counts. What its answers leave over is shared by the sets not
+    among the states.
     """
     prior = states.log_prior[:-2]
-    plain = likelihood + prior
+    common = _common_factor(answer, states, own_likelihood)
+    weight = np.full(len(prior), NEVER) if common is None else likelihood + prior - common
     index = {one: i for i, one in enumerate(states.sets)}
-    answers = [
-        (h.probability, [index[one] for one in stand_ins(h) if one in index])
-        for h in answer.hypotheses
-    ]
-    known = [(p, members) for p, members in answers if p > 0 and members]
-    # an answer worth no more than its likelihood shows the common factor; others are worth more
-    common = max(
-        (float(np.logaddexp.reduce(plain[members])) - log(p) for p, members in known),
-        default=float(plain.max(initial=_NONE)),
-    )
-    weight = plain - common
-    told = 0.0
-    for p, members in known:
-        total = float(np.logaddexp.reduce(weight[members]))
-        weight[members] += max(log(p) - total, 0.0)
-        told += p
-    rest = max(1.0 - answer.unlisted_probability - told, 0.0)
-    among = [i for i in range(len(weight)) if all(i not in members for _, members in known)]
-    rest = max(rest - float(np.exp(np.minimum(weight[among], 0.0)).sum()), 1e-12)
+    told, own = 0.0, np.zeros(len(prior), dtype=np.bool_)
+    for hypothesis in answer.hypotheses:
+        members = [index[one] for one in stand_ins(hypothesis) if one in index]
+        if hypothesis.probability > 0 and members:
+            total = float(np.logaddexp.reduce(weight[members]))
+            weight[members] += max(log(hypothesis.probability) - total, 0.0)
+            told += hypothesis.probability
+            own[members] = True
+    further = float(np.exp(np.minimum(weight[~own], 0.0)).sum())
+    rest = max(1.0 - answer.unlisted_probability - told - further, _LEAST_REST)
     ends = np.log([max(answer.unlisted_probability, 1e-300), rest])
     result: Floats = np.concatenate([weight, ends]) - states.log_prior
     return result
 
 
-def log_shares(table: LineTable, chemistry: Chemistry) -> dict[str, float]:
+def _common_factor(answer: Identification, states: States, own_likelihood: Floats) -> float | None:
+    """ln of likelihood × prior over probability, the same for every set; None where none is known.
+
+    An answer that is worth no more than its plain likelihood shows it; others are worth more.
+    """
+    found = [
+        float(value) + log_prior(one, states.log_share, states.rarity) - log(h.probability)
+        for h, one, value in zip(answer.hypotheses, own_sets(answer), own_likelihood, strict=True)
+        if h.probability > 0 and len(one) == len(h.phases) and value > NEVER
+    ]
+    return max(found, default=None)
+
+
+def log_shares(table: LineTable, allowed: Indices) -> dict[str, float]:
     """ln of each allowed phase's share of the prior, by the quality of its entry."""
-    held = {
-        phase_id: max(float(quality), 1e-3)
-        for phase_id, quality, elements in zip(
-            table.phase_ids, table.quality, table.elements, strict=True
-        )
-        if chemistry.admits(elements)
-    }
-    total = sum(held.values())
-    return {phase_id: log(value / total) for phase_id, value in held.items()}
+    trust = np.maximum(table.quality[allowed], 1e-3)
+    values = np.log(trust / trust.sum()).tolist()
+    return {table.phase_ids[i]: value for i, value in zip(allowed.tolist(), values, strict=True)}
