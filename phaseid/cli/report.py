@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import shlex
 from datetime import UTC, datetime
+from hashlib import sha256
 from pathlib import Path
 from typing import Annotated
 
@@ -104,6 +105,7 @@ def report(
         command=shlex.join(["phaseid", "report", *given, "--", *rings]),
         made=datetime.now(UTC).strftime("%Y-%m-%d %H:%M UTC"),
         settings=(
+            *_digests(rings),
             ("must hold", must or ""),
             ("nothing but", only or ""),
             ("none of", exclude or ""),
@@ -120,3 +122,12 @@ def report(
         content = page(answer, provenance, axis=chosen, library=shelf).encode()
     write_whole(output, content)
     say(f"Report written to {output} ({len(content) / 1000:.0f} kB).")
+
+
+def _digests(words: list[str]) -> list[tuple[str, str]]:
+    """What was in each file, so that the same name with other content is noticed."""
+    return [
+        (f"file {Path(word).name}", f"SHA-256 {sha256(Path(word).read_bytes()).hexdigest()}")
+        for word in words
+        if Path(word).is_file()
+    ]

@@ -21,7 +21,7 @@ from phaseid.reports.plain import safe
 if TYPE_CHECKING:
     from PIL.Image import Image
     from PIL.ImageDraw import ImageDraw
-    from PIL.ImageFont import FreeTypeFont
+    from PIL.ImageFont import FreeTypeFont, ImageFont
 
 DOTS_PER_INCH = 200
 DOTS = 2
@@ -242,13 +242,16 @@ def _set(pen: ImageDraw, text: Text, *, halo: bool) -> None:
 
 
 @cache
-def _face(size: int, bold: bool) -> FreeTypeFont:
-    """DejaVu Sans as it comes with matplotlib, found without loading that."""
+def _face(size: int, bold: bool) -> FreeTypeFont | ImageFont:
+    """DejaVu Sans as it comes with matplotlib, found without loading that.
+
+    Pillow's own face, which lacks Å and Greek, where a matplotlib keeps its faces elsewhere.
+    """
     from PIL import ImageFont
 
     home = find_spec("matplotlib")
-    if home is None or home.origin is None:
-        raise ModuleNotFoundError("matplotlib, which phaseid needs, is not installed")
-    folder = Path(home.origin).parent / "mpl-data" / "fonts" / "ttf"
-    name = "DejaVuSans-Bold.ttf" if bold else "DejaVuSans.ttf"
-    return ImageFont.truetype(str(folder / name), size)
+    folder = Path(home.origin if home and home.origin else "").parent / "mpl-data/fonts/ttf"
+    try:
+        return ImageFont.truetype(folder / f"DejaVuSans{'-Bold' if bold else ''}.ttf", size)
+    except OSError:
+        return ImageFont.load_default(size)

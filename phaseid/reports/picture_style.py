@@ -110,7 +110,6 @@ def picture_css() -> str:
         "paint-order:stroke;stroke-linejoin:round}",
         ".picture polygon{fill:var(--ink);stroke:none}",
         ".picture text.bold{font-weight:600}",
-        "@media screen and (prefers-color-scheme:dark){.picture .image{filter:invert(1)}}",
         f".picture polyline.weak,.picture path.weak{{stroke-opacity:{WEAK_OPACITY}}}",
     ]
     names = ["ground", "soft", "faint", *(f"phase{k + 1}" for k in range(PHASE_STYLES))]

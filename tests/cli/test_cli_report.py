@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import json
 import re
 import shlex
@@ -9,6 +10,8 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+
+from phaseid.resources import data_path
 
 # d (Å) of 111, 200, 220, 311, 222 of aluminium, a = 4.0495 Å; from memory of handbook tables
 RINGS = "2.338,vs\n2.025,s\n1.432,m\n1.221,m\n1.169,vw\n"
@@ -39,6 +42,20 @@ def test_a_report_is_written(phaseid, ring_file: str, tmp_path: Path) -> None:
     text = page.read_text(encoding="utf-8")
     assert "foil &lt;b&gt;" in text
     assert len(text.encode()) < 1_000_000
+    assert hashlib.sha256(Path(ring_file).read_bytes()).hexdigest() in text
+
+
+def test_an_image_is_seen_in_its_report(phaseid, tmp_path: Path) -> None:
+    page, picture = tmp_path / "plate.html", tmp_path / "plate.svg"
+    plate = str(data_path("demo") / "foil_plate.png")
+    words = (plate, "--probe", "electron 200 kV", "--camera-constant", "255 A px", "--only", "Al,O")
+    assert phaseid("report", *words, "-o", str(page)).code == 0
+    assert phaseid("identify", *words, "--plot", str(picture)).code == 0
+    for path in (page, picture):
+        text = path.read_text(encoding="utf-8")
+        assert text.count("data:image/png;base64,") == 1
+        assert "behind them the measured curve" in text
+    assert page.stat().st_size < 1_000_000
 
 
 def test_the_command_in_a_report_gives_it_again(phaseid, ring_file: str, tmp_path: Path) -> None:

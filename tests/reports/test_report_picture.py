@@ -312,6 +312,14 @@ def test_a_png_needs_no_matplotlib() -> None:
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
 
 
+def test_a_png_is_drawn_without_that_face(monkeypatch: pytest.MonkeyPatch) -> None:
+    one = Picture(80.0, 30.0, "a test", (Text(5.0, 20.0, "d in 1/nm"),))
+    _face.cache_clear()
+    monkeypatch.setattr("phaseid.reports.picture_pixels.find_spec", lambda _name: None)
+    assert _grey(one).min() < 100
+    _face.cache_clear()
+
+
 def test_the_face_has_the_letters_of_the_trade() -> None:
     from PIL import ImageFont
 
