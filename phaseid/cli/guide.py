@@ -20,6 +20,7 @@ PAGES = {
     "answer": "reading the answer, and how sure is sure",
     "report": "pictures, and a page to keep and send",
     "library": "the structures searched, and how to add your own",
+    "tables": "the library file for plain SQL",
     "measure": "rings from an image, peaks from a profile",
     "series": "many patterns: what comes and goes",
     "calibrate": "scaling an instrument by a standard",

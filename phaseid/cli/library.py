@@ -122,7 +122,7 @@ def info(library: LibraryFile = None, as_json: Json = False) -> None:
         print(dumps({"schema": "phaseid.library-info/1", **facts}))
         return
     print(f"path            {facts['path']}")
-    print(f"entries         {facts['phases']} of {facts['distinct']} phases")
+    print(f"phases          {facts['distinct']} ({facts['phases']} entries)")
     for database, count in facts["sources"].items():
         print(f"  {count:>7}  from {database}")
     print(f"digest          {facts['digest']}")

@@ -18,12 +18,13 @@ _WORDS = {
     "metastable": "metastable",
 }
 DOUBTFUL = "doubtful"
+_DOUBT = 0.85  # a factor of trust below is worth a word in a list
 
 
 def marks(codes: Iterable[str]) -> tuple[str, ...]:
     """Return the marks of an entry with these findings, `doubtful` last, in a fixed order."""
     held = set(codes)
     told = [word for code, word in _WORDS.items() if code in held]
-    if held & (FACTORS.keys() - _WORDS.keys()):
+    if any(FACTORS.get(code, 1.0) < _DOUBT for code in held - _WORDS.keys()):
         told.append(DOUBTFUL)
     return tuple(told)

@@ -11,7 +11,7 @@ from phaseid.library.finding import Found
 from phaseid.library.marks import marks
 from phaseid.library.phase import Phase
 from phaseid.reports.json import phase_dict
-from phaseid.reports.plain import Column, phase_text, source_text, table
+from phaseid.reports.plain import Column, source_text, table
 
 CSV_COLUMNS = (
     "phase_id", "name", "formula", "elements", "space_group_number", "space_group_symbol",
@@ -32,14 +32,14 @@ def list_text(found: Found, width: int) -> list[str]:
     columns = [
         Column("id", "left"),
         Column("phase", "left", flexible=True),
-        Column("group", "left", flexible=True),
+        Column("group", "left"),
         Column("a, b, c (Å)", "left"),
         Column("source", "left", flexible=True),
     ]
     rows = [
         [
             phase.phase_id,
-            phase_text(phase),
+            phase.name,  # the formula stands in the id
             f"{phase.space_group_symbol} ({phase.space_group_number})",
             " ".join(f"{edge:.2f}" for edge in phase.cell[:3]),
             source_text(phase),
