@@ -78,10 +78,9 @@ def _elements(conn: sqlite3.Connection, question: Question) -> Condition:
     inside = [f"instr(' ' || elements || ' ', ' {e} ') > 0" for e in sorted(must)]
     inside += [f"instr(' ' || elements || ' ', ' {e} ') = 0" for e in sorted(exclude)]
     if only is not None:
-        rest = "' ' || elements || ' '"
-        for symbol in sorted(only):
-            rest = f"replace({rest}, ' {symbol} ', ' ')"
-        inside.append(f"trim({rest}) = ''")
+        allowed = ", ".join(f"'{symbol}'" for symbol in sorted(only))
+        others = f"SELECT elements FROM holds WHERE symbol NOT IN ({allowed})"
+        inside.append(f"elements NOT IN ({others})")
     where = " AND ".join(inside)
     index = "phase_by_elements"
     free = (only or frozenset()) - must - exclude

@@ -121,10 +121,11 @@ def matches(conn: sqlite3.Connection, text: str, kinds: Kinds = ANYTHING) -> dic
         by_formula = "SELECT id FROM phase WHERE formula_key = ?"
         for formula_key in literal:
             note_all(Match.FORMULA, by_formula, formula_key)
-        if key in ELEMENT_NAMED:
+        if key in ELEMENT_NAMED and "name" in kinds:
             note_all(Match.ELEMENT, by_formula, composition_key({ELEMENT_NAMED[key]: 1.0}))
-        for formula_key in formula_keys(wanted, any_case=True):
-            note_all(Match.FORMULA_ANY_CASE, by_formula, formula_key)
+        if not literal or "name" in kinds:  # who says that it is a formula minds the capitals
+            for formula_key in formula_keys(wanted, any_case=True):
+                note_all(Match.FORMULA_ANY_CASE, by_formula, formula_key)
     if "name" in kinds:
         for row_id, name in _names(conn, key, exact=bool(literal)):
             note(_name_match(key, name), row_id)
