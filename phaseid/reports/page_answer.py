@@ -69,7 +69,7 @@ def answer_section(answer: Identification, hypothesis: Hypothesis | None, drawin
     if hypothesis is not None:
         doubts = items("What speaks against it", against(answer, hypothesis), level=3)
     if len(scenes) == 2:
-        caption = "Two probes, one half each; the radius is 1/d after each fitted scale."
+        caption = "Two patterns, one half each; the radius is 1/d after each fitted scale."
         parts.append(
             f'<div class="pattern"><figure>{_drawn(disc_of_two(*scenes), drawing)}'
             f"<figcaption>{caption}</figcaption></figure><div>{doubts}</div></div>"

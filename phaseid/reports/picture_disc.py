@@ -25,7 +25,7 @@ from phaseid.reports.picture import (
 from phaseid.reports.picture_plate import half_plate
 from phaseid.reports.picture_scene import CalculatedLine, MeasuredRing, Scene
 from phaseid.reports.picture_style import phase_letter, phase_role
-from phaseid.reports.plain import shorten
+from phaseid.reports.plain import safe, shorten
 from phaseid.units import A_PER_NM
 
 Side = Literal["left", "right"]
@@ -68,7 +68,11 @@ def disc(scene: Scene) -> Picture:
 
 
 def disc_of_two(first: Scene, second: Scene) -> Picture:
-    """The rings of two probes of one specimen, one half each."""
+    """The rings of two patterns of one specimen, one half each."""
+    patterns = (first.pattern, second.pattern)
+    heads = [shorten(pattern.probe.label, 24) for pattern in patterns]
+    if heads[0] == heads[1]:
+        heads = [shorten(safe(pattern.title) or heads[0], 24) for pattern in patterns]
     reach = _reach([first, second])
     room = Room([])
     shapes = [
@@ -77,12 +81,9 @@ def disc_of_two(first: Scene, second: Scene) -> Picture:
         *_ground(reach),
         *_measured_half(first, "left", reach, room),
         *_measured_half(second, "right", reach, room),
-        *_heads(*(shorten(s.pattern.probe.label, 24) for s in (first, second))),
+        *_heads(*heads),
     ]
-    label = (
-        f"Disc of rings, left half measured with {first.pattern.probe.label}, "
-        f"right half with {second.pattern.probe.label}."
-    )
+    label = f"Disc of rings, left half measured: {heads[0]}, right half: {heads[1]}."
     return _with_legend(shapes, [first, second], label)
 
 
@@ -272,13 +273,21 @@ def _with_legend(shapes: list[Shape], scenes: list[Scene], label: str) -> Pictur
 
 
 def _notes(scenes: list[Scene]) -> list[str]:
-    many = len(scenes) > 1
+    halves = ("left: ", "right: ") if len(scenes) > 1 else ("",)
     notes = []
-    for scene, half in zip(scenes, ("left: ", "right: "), strict=False):
+    for scene, half in zip(scenes, halves, strict=True):
         after = "" if scene.scale is None else "; radii after it"
-        notes.append(f"{half if many else ''}{scene.scale_text}{after}")
-        if not scene.has_intensity:
-            notes.append(f"{half if many else ''}no intensities given: lines of one weight")
-        if scene.pattern.disc is not None:
-            notes.append(f"{half if many else ''}the measured image; on light ground a negative")
+        notes.append(f"{half}{scene.scale_text}{after}")
+    for told, kind in (
+        ("no intensities given: lines of one weight", [not s.has_intensity for s in scenes]),
+        ("the measured image; on light ground a negative", [_has_image(s) for s in scenes]),
+    ):
+        if all(kind):
+            notes.append(told)
+        else:
+            notes += [f"{half}{told}" for half, is_so in zip(halves, kind, strict=True) if is_so]
     return notes
+
+
+def _has_image(scene: Scene) -> bool:
+    return scene.pattern.disc is not None

@@ -26,6 +26,7 @@ if TYPE_CHECKING:
     from phaseid.library import Library
 
 UNKNOWN_HEIGHT = 45.0
+UNSEEN = 0.1  # of its calculated intensity, where a phase makes no ring of a pattern
 
 
 @dataclass(frozen=True, slots=True)
@@ -222,6 +223,7 @@ def _calculated(
         _intensity_factor(hypothesis, number, phase, heights)
         for phase in range(len(hypothesis.phases))
     ]
+    seen = {a.phase for a in hypothesis.assignments if a.pattern == number}
     matched = [
         CalculatedLine(
             kind="found",
@@ -253,7 +255,9 @@ def _calculated(
             phase=w.phase,
             hkl=w.hkl,
             d_A=w.d_A,
-            height=min(100.0, w.relative_intensity * factors[w.phase]),
+            height=min(
+                100.0, w.relative_intensity * (factors[w.phase] if w.phase in seen else UNSEEN)
+            ),
             key="",
             title=f"Too weak to be seen, or behind another: {_line_told(hypothesis, *w)}",
         )

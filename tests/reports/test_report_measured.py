@@ -272,3 +272,25 @@ def test_weak_lines_are_drawn_faintly_and_named(answer: Identification) -> None:
         assert 'data-key=""' not in text
     words = "".join(ET.fromstring(svg_file(disc(one)).encode()).itertext())
     assert "calculated, too weak to be seen here" in words
+
+
+def test_a_phase_without_a_ring_is_drawn_low(answer: Identification) -> None:
+    alone = _alone(answer)
+    shelf = cast(Library, _Shelf({}))
+    pattern = replace(alone.patterns[0], d_A=np.append(alone.patterns[0].d_A[:4], 1.15))
+    best = replace(alone.hypotheses[0], assignments=())
+    one = scene(replace(alone, patterns=(pattern,)), best, 0, shelf)
+    assert {line.kind for line in one.calculated} == {"weak"}
+    assert max(line.height for line in one.calculated) == pytest.approx(10.0)
+
+
+def test_two_patterns_of_one_probe_are_told_apart_by_title(answer: Identification) -> None:
+    best, pattern = answer.hypotheses[0], answer.patterns[0]
+    two = replace(answer, patterns=(pattern, replace(pattern, title="Foil B")))
+    words = "".join(
+        ET.fromstring(
+            svg_file(disc_of_two(scene(two, best, 0), scene(two, best, 1))).encode()
+        ).itertext()
+    )
+    assert "Foil A" in words
+    assert "Foil B" in words
