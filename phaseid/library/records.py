@@ -70,9 +70,15 @@ def compressed(held: dict[str, Any]) -> bytes:
     return press.compress(json.dumps(held, separators=(",", ":")).encode()) + press.flush()
 
 
+def decompressed(data: bytes) -> dict[str, Any]:
+    """Return what `compressed` was given."""
+    held: dict[str, Any] = json.loads(zlib.decompressobj(zdict=_USUAL).decompress(data))
+    return held
+
+
 def unpack_crystal(operations: str, data: bytes) -> Crystal:
     """Rebuild the crystal that `pack_crystal` made two pieces of."""
-    held = json.loads(zlib.decompressobj(zdict=_USUAL).decompress(data))
+    held = decompressed(data)
     names = held.pop("site_fields")
     sites = tuple(Site(**dict(zip(names, _tuples(row), strict=True))) for row in held.pop("sites"))
     source = Source(*held.pop("source"))

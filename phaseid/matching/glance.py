@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from phaseid.library.strongest import CODE_AT_1_A, CODE_STEP, LEVEL_STEP, NO_LINE, StrongLines
 from phaseid.matching.patterns import Floats, Pattern
-from phaseid.matching.settings import DETECTION_SLOPE, STRAIN
+from phaseid.matching.settings import DETECTION_SLOPE, ODD_POSITION_FACTOR, STRAIN
 
 PER_NAT = 64
 """Scores are whole numbers, this many to a nat."""
@@ -88,7 +88,9 @@ def make_glance(
     beside = np.abs(x - pattern.x[ring]) < np.maximum(3 * sigma, 0.7 * pattern.resolution)[ring]
     worth_meeting = np.arange(len(pattern)) if wanted is None else np.flatnonzero(wanted)
     met = worth_meeting[_nearest(x, pattern.x[worth_meeting])] if len(worth_meeting) else ring
-    density = np.exp(-0.5 * ((x - pattern.x[met]) / sigma[met]) ** 2) / (2.5 * sigma[met])
+    off = (x - pattern.x[met]) / sigma[met]
+    usual, odd = np.exp(-0.5 * off**2), np.exp(-0.5 * (off / ODD_POSITION_FACTOR) ** 2)
+    density = (0.95 * usual + 0.05 / ODD_POSITION_FACTOR * odd) / (2.5 * sigma[met])
     chance = len(worth_meeting) / (pattern.x[-1] - pattern.x[0] + 0.06)
     ratio = density / chance if len(worth_meeting) else np.zeros(len(x))
 

@@ -24,7 +24,7 @@ from phaseid.matching.settings import RELATIVE_STRAIN, STRAIN
 
 SEARCHED_WHOLE = 4000
 """Up to this many phases allowed are all searched."""
-PHASES_SEARCHED = 1200
+PHASES_SEARCHED = 1500
 """Of more, this many at most."""
 
 Indices = NDArray[np.int64]
@@ -36,7 +36,8 @@ members numbered as the allowed phases are."""
 _ALONE = (Share(0.0, True), Share(log(0.7), True))
 _SHARES = (*_ALONE, *(Share(log(s), False) for s in (1.0, 0.6, 0.35, 0.2, 0.12, 0.06)))
 _OF_THE_REST = ((0.0, True), (0.0, False), (0.8, False), (-0.6, False))
-_PLACES = 16
+_PLACES = 24
+_PLACES_OF_THE_REST = 12
 _RELATIVE_PLACES = 10
 _RELATIVE_BLUR = 0.002
 _RELATIVES = 48
@@ -45,10 +46,11 @@ _EACH = 90
 _EACH_OF_THE_REST = 30
 _BASES = {1: 8, 2: 4}
 """Sets of one and of two phases whose leftovers are looked at."""
-_WHOLE = 2
-"""The whole library is looked through for what so many of these leave, else what may be near."""
+_WHOLE, _LOOKS = 2, 400_000
+"""The whole library is looked through for what the best two of these leave, and for more of them
+while the phases looked at are fewer than that; for the others what may be near."""
 _SETS_COMPARED = 40
-_JUDGED = 120
+_JUDGED = 150
 """Phases that the likelihood judges before the library is looked through again."""
 _PAIRED = 12
 """Phases tried beside each of the best single ones before a third is looked for."""
@@ -87,12 +89,13 @@ class _Chooser:
         Returns these phases, the likeliest first, one array for each of the sets.
         """
         found = []
+        whole = max(_WHOLE, _LOOKS // len(self.allowed))
         for place, judged in enumerate(sets):
-            among = None if place < _WHOLE else near
+            among = None if place < whole else near
             rest = [
                 _glance_at_the_rest(pattern, judged, i) for i, pattern in enumerate(self.patterns)
             ]
-            ranks = ranked(self.score(rest, _PLACES, among), _EACH_OF_THE_REST)
+            ranks = ranked(self.score(rest, _PLACES_OF_THE_REST, among), _EACH_OF_THE_REST)
             own = by_turns(ranks if among is None else among[ranks], _EACH_OF_THE_REST)
             self.take(own)
             found.append(own)
