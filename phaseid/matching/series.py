@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from math import exp
 
 import numpy as np
 
@@ -12,10 +13,7 @@ from phaseid.library.linetable import LineTable
 from phaseid.library.phase import Phase
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.field import rarity_of
-from phaseid.matching.identification import (
-    Identification,
-    Verdict,
-)
+from phaseid.matching.identification import Identification, Scale, Verdict
 from phaseid.matching.identify import identify
 from phaseid.matching.series_answer import Series, SeriesPattern, SeriesPhase
 from phaseid.matching.series_axis import EXPANSION_PER_K, Along, axis_of, warmed
@@ -33,6 +31,7 @@ from phaseid.matching.series_evidence import (
     stand_ins,
     starts_of,
 )
+from phaseid.matching.series_scale import SHARED_PRIOR, ScaleError
 from phaseid.rings.ringlist import RingList
 
 Advance = Callable[[int, int | None], None]
@@ -56,12 +55,12 @@ def identify_series(
     """Identify every pattern of a series, neighbours in the order given.
 
     Each pattern is first judged by itself, as `identify` does; every set of phases that any of them
-    suggests is then judged on all, and the chain of `series_chain` weighs what stays from one to
-    the next. `persistence` fixes the chance of staying (0: every pattern for itself). `along` names
-    what the series runs along; "auto" takes a time or temperature that every list states, else
-    their number. `workers` processes share the work; the result is the same. `advance(done, all)`
-    is called as it goes on. Raises InputError like `identify`, and where patterns do not state what
-    `along` names.
+    suggests is then judged on all. The chain of `series_chain` weighs what stays from one to the
+    next, `series_scale` what scale error they share. `persistence` fixes the chance of staying (0:
+    every pattern for itself). `along` names what the series runs along; "auto" takes a time or
+    temperature that every list states, else their number. `workers` processes share the work; the
+    result is the same. `advance(done, all)` is called as it goes on. Raises InputError like
+    `identify`, and where patterns do not state what `along` names.
     """
     if not patterns:
         raise InputError("there is no pattern in the series", remedy="Give at least one ring list.")
@@ -93,16 +92,32 @@ def identify_series(
             (rings, allowed, [*sets, *own_sets(answer)], starts_of(answer))
             for rings, answer in zip(patterns, alone, strict=True)
         ]
-        likelihoods: list[Floats] = hands(log_likelihoods, tried, step)
+        fits: list[Floats] = hands(log_likelihoods, tried, step)
     states = _states(table, allowed, chemistry, sets, max_phases)
+    count = len(sets)
     weights = np.stack(
         [
-            evidence(answer, states, found[: len(sets)], found[len(sets) :])
-            for answer, found in zip(alone, likelihoods, strict=True)
+            evidence(answer, states, found[0, :count], found[0, count:])
+            for answer, found in zip(alone, fits, strict=True)
         ]
     )
-    values = PERSISTENCE if persistence is None else ((persistence, 1.0),)
-    together, apart = smooth(weights, states, values), smooth(weights, states, ((0.0, 1.0),))
+    apart = smooth([(1.0, weights)], states, ((0.0, 1.0),))
+    together, scale = apart, None
+    if persistence != 0.0:
+        error = ScaleError.of(as_stated, patterns)
+        mean, deviation = (np.stack([found[row, :count] for found in fits]) for row in (1, 2))
+        values, prior = error.grid()
+        free = np.zeros((len(patterns), 2))  # what is not listed has no scale to keep
+        variants = [(1.0 - SHARED_PRIOR, weights)] + [
+            (
+                float(p) * SHARED_PRIOR,
+                weights + np.hstack([error.tilt(float(value), mean, deviation), free]),
+            )
+            for value, p in zip(values, prior, strict=True)
+        ]
+        tried_values = PERSISTENCE if persistence is None else ((persistence, 1.0),)
+        together = smooth(variants, states, tried_values)
+        scale = _common_scale(error, values, together.variant_posterior[1:])
     rows = _rows(states.sets, alone, together)
     told = tuple(
         _pattern(answer, states.sets, rows, posterior)
@@ -112,6 +127,7 @@ def identify_series(
         patterns=told,
         phases=tuple(_phase(row, states.sets, told, together, apart) for row in rows),
         axis=axis,
+        scale=scale,
         persistence=together.persistence,
         persistence_posterior=together.persistence_posterior,
         library=alone[0].library,
@@ -138,6 +154,18 @@ def _states(
         rarity_of(chemistry, table.elements_mask[allowed], max_phases),
         lambda phases: chemistry.satisfied_by([held[phase] for phase in phases]),
     )
+
+
+def _common_scale(error: ScaleError, values: Floats, chance: Floats) -> Scale | None:
+    """Measured d over calculated d that the patterns have in common, None where they share none."""
+    if not error.shared.any() or chance.sum() < NOTHING:
+        return None
+    chance = chance / chance.sum()
+    mean = float(values @ chance)
+    step = float(np.diff(values).mean())
+    spread = float(np.sqrt(chance @ (values - mean) ** 2 + step**2 / 12.0))
+    first = int(np.flatnonzero(error.shared)[0])
+    return Scale(first, exp(mean), exp(mean) * spread)
 
 
 Row = tuple[Phase, ...]

@@ -11,6 +11,7 @@ from phaseid.matching.identification import (
     Identification,
     LibraryStamp,
     PhaseAnswer,
+    Scale,
     Verdict,
 )
 from phaseid.matching.records import Record, Tidy, cell_record, phase_record
@@ -57,6 +58,8 @@ class SeriesPattern:
 class Series(Tidy):
     """The answer for a series, patterns in the order in which they were given.
 
+    `scale` is measured d over calculated d as far as the patterns share it, None where they do not.
+
     `persistence` is the mean probability that a phase stays from one pattern to the next, after the
     series; `persistence_posterior` the probability of each value tried.
     """
@@ -64,6 +67,7 @@ class Series(Tidy):
     patterns: tuple[SeriesPattern, ...]
     phases: tuple[SeriesPhase, ...]
     axis: Axis
+    scale: Scale | None
     persistence: float
     persistence_posterior: tuple[tuple[float, float], ...]
     library: LibraryStamp

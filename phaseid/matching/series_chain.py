@@ -67,12 +67,20 @@ class States:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Smoothed:
-    """`posterior` (T, n) of each state in each pattern, given the whole series; `persistence` the
-    mean of κ after it; `persistence_posterior` one probability per value tried."""
+    """`posterior` (T, n) of each state in each pattern, given the whole series.
+
+    `persistence_posterior` has one probability per κ tried, `variant_posterior` (v,) one per
+    variant of the evidence.
+    """
 
     posterior: Floats
-    persistence: float
     persistence_posterior: tuple[tuple[float, float], ...]
+    variant_posterior: Floats
+
+    @property
+    def persistence(self) -> float:
+        """The mean of κ after the series."""
+        return sum(kappa * p for kappa, p in self.persistence_posterior)
 
 
 def log_prior(phases: Set, log_share: dict[str, float], rarity: tuple[float, ...]) -> float:
@@ -89,24 +97,32 @@ def log_prior(phases: Set, log_share: dict[str, float], rarity: tuple[float, ...
 
 
 def smooth(
-    evidence: Floats, states: States, persistence: Sequence[tuple[float, float]] = PERSISTENCE
+    variants: Sequence[tuple[float, Floats]],
+    states: States,
+    persistence: Sequence[tuple[float, float]] = PERSISTENCE,
 ) -> Smoothed:
-    """Posterior of every pattern's state; `evidence` (T, n) ln likelihood of each in each."""
-    runs = []
-    for kappa, weight in persistence:
-        posterior, log_evidence = _along(evidence, states.log_prior, log_links(states, kappa))
-        runs.append((kappa, log(weight) + log_evidence, posterior))
-    best = max(value for _, value, _ in runs)
-    weights = np.array([exp(value - best) for _, value, _ in runs])
+    """Posterior of every pattern's state.
+
+    `variants` are (prior, evidence): what else is common to the patterns and not known, with the ln
+    likelihood (T, n) of each state in each pattern under it.
+    """
+    log_weight = np.empty((len(persistence), len(variants)))
+    posteriors = []
+    for i, (kappa, prior) in enumerate(persistence):
+        links = np.exp(log_links(states, kappa))
+        for k, (weight, evidence) in enumerate(variants):
+            posterior, log_evidence = _along(evidence, np.exp(states.log_prior), links)
+            posteriors.append(posterior)
+            log_weight[i, k] = np.log(prior) + np.log(weight) + log_evidence
+    weights = np.exp(log_weight - log_weight.max())
     weights /= weights.sum()
     return Smoothed(
-        posterior=sum(
-            (w * p for w, (_, _, p) in zip(weights, runs, strict=True)), 0.0 * runs[0][2]
-        ),
-        persistence=float(sum(w * k for w, (k, _, _) in zip(weights, runs, strict=True))),
+        posterior=np.einsum("v,vtn->tn", weights.ravel(), np.stack(posteriors)),
         persistence_posterior=tuple(
-            (k, float(w)) for w, (k, _, _) in zip(weights, runs, strict=True)
+            (kappa, float(w))
+            for (kappa, _), w in zip(persistence, weights.sum(axis=1), strict=True)
         ),
+        variant_posterior=weights.sum(axis=0),
     )
 
 
@@ -176,25 +192,25 @@ def _log_mass(core: Set, states: States, kappa: float) -> float:
 
 
 def _along(evidence: Floats, prior: Floats, links: Floats) -> tuple[Floats, float]:
-    """Forward and backward along the chain: posterior (T, n) and ln evidence of the series."""
-    length = len(evidence)
-    own = evidence + prior
-    forward = np.empty_like(own)
-    forward[0] = own[0]
-    for t in range(1, length):
-        forward[t] = own[t] + _log_sum(links + forward[t - 1][None, :])
-    backward = np.zeros_like(own)
-    for t in range(length - 2, -1, -1):
-        backward[t] = _log_sum(links + (own[t + 1] + backward[t + 1])[None, :])
-    total = _log_sum(forward[-1][None, :])[0]
-    posterior: Floats = np.exp(forward + backward - total)
-    return posterior / posterior.sum(axis=1, keepdims=True), float(total)
+    """Forward and backward along the chain: posterior (T, n) and ln evidence of the series.
 
-
-def _log_sum(values: Floats) -> Floats:
-    """ln Σ exp along the last axis; -inf where all are."""
-    top = values.max(axis=-1)
-    safe = np.where(np.isfinite(top), top, 0.0)
-    with np.errstate(divide="ignore"):
-        result: Floats = safe + np.log(np.exp(values - safe[..., None]).sum(axis=-1))
-    return result
+    Every state can follow every other, so that no step loses all weight to rounding.
+    """
+    best = evidence.max(axis=1, keepdims=True)
+    own = np.exp(evidence - best) * prior
+    forward, backward = np.empty_like(own), np.empty_like(own)
+    total = float(best.sum())
+    before = np.ones(len(prior))
+    for t, seen in enumerate(own):
+        forward[t] = seen * before
+        scale = forward[t].sum()
+        forward[t] /= scale
+        total += float(np.log(scale))
+        before = links @ forward[t]
+    after = np.ones(len(prior))
+    for t in range(len(own) - 1, -1, -1):
+        backward[t] = after
+        after = links @ (own[t] * after)
+        after /= after.max()
+    posterior: Floats = forward * backward
+    return posterior / posterior.sum(axis=1, keepdims=True), total

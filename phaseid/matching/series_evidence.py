@@ -73,10 +73,11 @@ def allowed_phases(library: Library, table: LineTable, chemistry: Chemistry) -> 
 def log_likelihoods(
     library: Library, rings: RingList, allowed: Indices, sets: Sequence[Set], starts: Floats
 ) -> Floats:
-    """ln likelihood (n,) of each set on one pattern, as the search for its phases judges them.
+    """ln likelihood of each set on one pattern, its fitted scale (ln d) and one-sigma, (3, n).
 
-    `allowed` are the phases whose lines make the crowd. `starts` are common shifts in ln d from
-    which the fit sets out; the best counts.
+    The likelihood is that by which the search for the phases of one pattern judges sets. `allowed`
+    are the phases whose lines make the crowd. `starts` are common shifts in ln d from which the fit
+    sets out; the best counts.
     """
     table = library.line_table(rings.probe.kind)
     number = {phase_id: i for i, phase_id in enumerate(table.phase_ids)}
@@ -88,14 +89,16 @@ def log_likelihoods(
     lines = gather(table, rows, pattern)
     model = Model((pattern,), (lines,), (crowd(table, allowed, pattern),))
     place = {phase: i for i, phase in enumerate(used)}
-    result = np.full(len(sets), NEVER)
+    result = np.full((3, len(sets)), NEVER)
+    result[1:] = [[0.0], [rings.probe.scale_sigma]]
     for size in sorted({len(one) for one in sets}):
         those = [i for i, one in enumerate(sets) if len(one) == size]
         members = np.array([sorted(place[p] for p in sets[i]) for i in those], dtype=np.int64)
         for start in starts:
             fit = evaluate(model, members, np.full((*members.shape, 1), start))
             value = np.where(fit.shows, fit.log_likelihood, NEVER)
-            result[those] = np.maximum(result[those], value)
+            found = np.stack([value, fit.scale[:, 0], fit.scale_sd[:, 0]])
+            result[:, those] = np.where(value > result[0, those], found, result[:, those])
     return result
 
 

@@ -37,6 +37,9 @@ def series_dict(series: Series, failed: list[Failed]) -> dict[str, Any]:
             "unit": series.axis.unit,
             "values": list(series.axis.values),
         },
+        "common_scale": None
+        if series.scale is None
+        else {"factor": series.scale.factor, "sigma": series.scale.sigma},
         "persistence": {
             "mean": series.persistence,
             "tried": [
@@ -119,6 +122,10 @@ def series_text(series: Series, width: int = 80) -> str:
         page += ["", *_legend(series, k, phase, width)]
     if len(shown) > 1:
         page += _shares(series, shown, width)
+    if series.scale is not None:
+        factor, sigma = series.scale.factor, series.scale.sigma
+        words = f"Scale in common, measured d / calculated d: {factor:.4f} ± {sigma:.4f}"
+        page += ["", *wrap(words, width, first="")]
     for heading, sentences in (("Remarks", series.remarks), ("Caution", series.cautions)):
         if sentences:
             page += ["", heading]

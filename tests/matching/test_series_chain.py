@@ -54,7 +54,7 @@ def test_links_of_listed_sets_are_the_sum_over_what_may_have_stayed(kappa: float
 def test_nothing_stays_means_nothing_is_learnt() -> None:
     assert np.allclose(log_links(STATES, 0.0), 0.0)
     alone = np.exp(ANYTHING + STATES.log_prior)
-    posterior = smooth(ANYTHING, STATES, ((0.0, 1.0),)).posterior
+    posterior = smooth([(1.0, ANYTHING)], STATES, ((0.0, 1.0),)).posterior
     assert np.allclose(posterior, alone / alone.sum(axis=1, keepdims=True))
 
 
@@ -71,11 +71,11 @@ def test_the_posterior_is_the_sum_over_every_course(kappa: float) -> None:
         for t, s in enumerate(course):
             total[t, s] += math.exp(value)
     expected = total / total.sum(axis=1, keepdims=True)
-    assert np.allclose(smooth(ANYTHING, STATES, ((kappa, 1.0),)).posterior, expected)
+    assert np.allclose(smooth([(1.0, ANYTHING)], STATES, ((kappa, 1.0),)).posterior, expected)
 
 
 def test_the_direction_of_the_series_does_not_matter() -> None:
-    there, back = smooth(ANYTHING, STATES), smooth(ANYTHING[::-1], STATES)
+    there, back = smooth([(1.0, ANYTHING)], STATES), smooth([(1.0, ANYTHING[::-1])], STATES)
     assert np.allclose(there.posterior, back.posterior[::-1])
     assert there.persistence == pytest.approx(back.persistence)
 
@@ -85,7 +85,7 @@ def test_without_rings_each_pattern_keeps_its_prior() -> None:
     sets = [frozenset([f"p{i}"]) for i in range(MANY)]
     states = States.of(sets, SHARE, (0.0,))
     nothing = np.zeros((3, len(states)))
-    posterior = smooth(nothing, states, ((0.8, 1.0),)).posterior
+    posterior = smooth([(1.0, nothing)], states, ((0.8, 1.0),)).posterior
     assert np.allclose(posterior[:, :-1], np.exp(states.log_prior[:-1]), rtol=0.15)
     assert np.allclose(posterior[:, -2], UNLISTED_PRIOR, rtol=0.1)
 
@@ -94,9 +94,9 @@ def test_a_phase_seen_on_both_sides_is_likely_between() -> None:
     evidence = np.zeros((3, len(STATES)))
     evidence[[0, 2], SETS.index(frozenset(["p1"]))] = 30.0
     evidence[1, [0, 1]] = 12.0
-    posterior = smooth(evidence, STATES, ((0.8, 1.0),)).posterior
+    posterior = smooth([(1.0, evidence)], STATES, ((0.8, 1.0),)).posterior
     assert posterior[1, 1] > 0.99
-    apart = smooth(evidence, STATES, ((0.0, 1.0),)).posterior
+    apart = smooth([(1.0, evidence)], STATES, ((0.0, 1.0),)).posterior
     assert apart[1, 0] == pytest.approx(apart[1, 1])
 
 
@@ -105,14 +105,27 @@ def test_unrelated_patterns_teach_that_nothing_stays_and_borrow_nothing() -> Non
     states = States.of(singles, SHARE, (0.0,))
     evidence = np.zeros((12, len(states)))
     evidence[np.arange(12), np.arange(12)] = 40.0
-    lonely = smooth(evidence, states)
+    lonely = smooth([(1.0, evidence)], states)
     assert lonely.persistence < 0.1
     evidence = np.zeros((12, len(states)))
     evidence[:, 3] = 40.0
-    steady = smooth(evidence, states)
+    steady = smooth([(1.0, evidence)], states)
     assert steady.persistence > 0.8
     assert sum(p for _, p in steady.persistence_posterior) == pytest.approx(1.0)
     assert [k for k, _ in steady.persistence_posterior] == [k for k, _ in PERSISTENCE]
+
+
+def test_variants_of_the_evidence_are_weighed_by_what_they_explain() -> None:
+    """Two variants, alike likely: the posterior is the mean weighted by their evidence."""
+    other = ANYTHING + np.random.default_rng(8).normal(scale=1.0, size=ANYTHING.shape)
+    one = ((0.8, 1.0),)
+    both = smooth([(0.5, ANYTHING), (0.5, other)], STATES, one)
+    apart = [smooth([(1.0, e)], STATES, one).posterior for e in (ANYTHING, other)]
+    w = both.variant_posterior
+    assert w.sum() == pytest.approx(1.0)
+    assert np.allclose(both.posterior, w[0] * apart[0] + w[1] * apart[1])
+    lifted = smooth([(0.5, ANYTHING), (0.5, ANYTHING + 1.0)], STATES, one)
+    assert lifted.variant_posterior[1] == pytest.approx(1 / (1 + math.exp(-4.0)))
 
 
 def test_required_elements_make_the_sets_that_hold_them_likelier() -> None:
