@@ -33,6 +33,7 @@ _BAND = 256
 _STEP_DEG = 2.0
 _FACE_RATIO = 0.93  # the face runs wider than a browser's
 _HALO = 1.5
+_DEFLATE = 3  # quicker than the usual 6, and hardly larger for plain lines
 
 
 def png(picture: Picture) -> bytes:
@@ -55,9 +56,6 @@ def png(picture: Picture) -> bytes:
         stream, "PNG", dpi=(DOTS_PER_INCH, DOTS_PER_INCH), pnginfo=told, compress_level=_DEFLATE
     )
     return stream.getvalue()
-
-
-_DEFLATE = 3  # quicker than the usual 6, and hardly larger for plain lines
 
 
 def _parts(shapes: tuple[Shape, ...]) -> Iterator[Line | Arc | Shade]:
@@ -252,6 +250,6 @@ def _face(size: int, bold: bool) -> FreeTypeFont | ImageFont:
     home = find_spec("matplotlib")
     folder = Path(home.origin if home and home.origin else "").parent / "mpl-data/fonts/ttf"
     try:
-        return ImageFont.truetype(folder / f"DejaVuSans{'-Bold' if bold else ''}.ttf", size)
+        return ImageFont.truetype(str(folder / f"DejaVuSans{'-Bold' * bold}.ttf"), size)
     except OSError:
         return ImageFont.load_default(size)

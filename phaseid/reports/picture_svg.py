@@ -21,12 +21,15 @@ class Store:
     """Images that several pictures of a page show: held once, under a name."""
 
     def __init__(self) -> None:
-        self._images: dict[bytes, str] = {}
+        self._images: dict[bytes, bytes] = {}  # PNG by ink: encoding takes a while
         self._cuts = 0
 
     def image(self, shade: Shade) -> str:
         """The name of an image; the same one always the same."""
-        return self._images.setdefault(_shade_png(shade), f"image-{len(self._images) + 1}")
+        ink = shade.ink.tobytes()
+        if ink not in self._images:
+            self._images[ink] = _shade_png(shade)
+        return f"image-{list(self._images).index(ink) + 1}"
 
     def cut(self) -> str:
         """A name for one more shape to cut an image by."""
@@ -36,9 +39,9 @@ class Store:
     def definitions(self) -> str:
         """All images, each one unit wide and two high; nothing where there are none."""
         images = "".join(
-            f'<image id="{name}" width="1" height="2" preserveAspectRatio="none" '
+            f'<image id="image-{number}" width="1" height="2" preserveAspectRatio="none" '
             f'href="data:image/png;base64,{base64.b64encode(png).decode()}"/>'
-            for png, name in self._images.items()
+            for number, png in enumerate(self._images.values(), start=1)
         )
         return f"<defs>{images}</defs>" if images else ""
 
@@ -109,7 +112,8 @@ def _shade_png(shade: Shade) -> bytes:
     from PIL import Image
 
     levels = np.unique(shade.ink)
-    image = Image.fromarray(np.searchsorted(levels, shade.ink).astype(np.uint8), "P")
+    entries = np.searchsorted(levels, shade.ink).astype(np.uint8)
+    image = Image.frombytes("P", entries.shape[::-1], entries.tobytes())
     ink = tuple(int(LIGHT.ink[k : k + 2], 16) for k in (1, 3, 5))
     image.putpalette(ink * len(levels))
     stream = io.BytesIO()
