@@ -69,7 +69,8 @@ def check(
         if progress is not None:
             progress(done, len(chosen))
     found.recomputed = len(chosen)
-    found.troubles += _shortened(_group_troubles(conn, chosen))
+    if not found.troubles:  # groups follow from all the rest
+        found.troubles += _shortened(_group_troubles(conn, chosen))
     return found
 
 

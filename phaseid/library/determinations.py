@@ -86,12 +86,12 @@ class StoredEntry:
     @cached_property
     def strong(self) -> StrongLines:
         """The strongest lines."""
-        (data,) = self._conn.execute(
-            "SELECT data FROM lines WHERE phase = ?", (self.row,)
-        ).fetchone()
+        held = self._conn.execute("SELECT data FROM lines WHERE phase = ?", (self.row,)).fetchone()
+        if held is None:
+            raise LookupError(f"phase {self.row} has no lines")
         return strong_lines(
             unpack_lines(
-                data,
+                held[0],
                 cell=self.cell,
                 volume_A3=self._volume_A3,
                 complete_to_A=self._complete_to_A,
