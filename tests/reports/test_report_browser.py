@@ -163,6 +163,12 @@ def _open(browser: _Browser, answer: Identification, folder: Path) -> None:
     browser.open(path)
 
 
+def _complaints(browser: _Browser) -> list[dict[str, Any]]:
+    """What the console shows: blocked or failed resources, errors of scripts, what they print."""
+    kinds = ("Log.entryAdded", "Runtime.exceptionThrown", "Runtime.consoleAPICalled")
+    return [event for event in browser.events if event.get("method") in kinds]
+
+
 LIT = "Array.from(document.querySelectorAll('.lit'), e => e.tagName + ' ' + e.dataset.key)"
 SHOWN = (
     "Array.from(document.querySelectorAll('section.answer'))"
@@ -178,7 +184,7 @@ def test_nothing_is_fetched_and_nothing_complains(opened: _Browser) -> None:
     ]
     assert len(asked) == 1
     assert asked[0].startswith("file:")
-    assert not [e for e in opened.events if e.get("method") == "Log.entryAdded"]
+    assert _complaints(opened) == []
 
 
 def test_an_answer_is_chosen(opened: _Browser) -> None:
@@ -199,6 +205,22 @@ def test_a_ring_lights_up_in_table_and_picture(opened: _Browser) -> None:
     assert "g p1r2" in lit
     assert {word.split()[1] for word in lit} == {"p1r2"}
     assert opened.run("document.querySelector('g[data-key=p1r1]').matches('.lit')") is False
+
+
+def test_clicking_through_everything_leaves_the_console_silent(opened: _Browser) -> None:
+    opened.run(
+        "for (const e of document.querySelectorAll('.choose, tr[data-key], .hit, .mark'))"
+        "for (const kind of ['pointerover', 'click', 'focusin', 'keydown'])"
+        "e.dispatchEvent(new KeyboardEvent(kind, {key: 'Enter', bubbles: true}))"
+    )
+    assert _complaints(opened) == []
+
+
+def test_a_complaint_would_be_noticed(opened: _Browser) -> None:
+    opened.run("setTimeout(() => {throw new Error('on purpose')}, 0)")
+    opened.run("new Promise(done => setTimeout(done, 50))")
+    opened.run("1")
+    assert _complaints(opened) != []
 
 
 def test_a_ring_is_hit_beside_its_line_and_told(opened: _Browser) -> None:
@@ -300,7 +322,7 @@ def test_the_image_is_shown_where_its_rings_are(
 ) -> None:
     browser.size(1280, 900)
     _open(browser, on_image(answer), tmp_path)
-    assert not [e for e in browser.events if e.get("method") == "Log.entryAdded"]
+    assert _complaints(browser) == []
     assert _darkness(browser) > 0.5
     dark = [{"name": "prefers-color-scheme", "value": "dark"}]
     browser.ask("Emulation.setEmulatedMedia", features=dark)
