@@ -16,13 +16,17 @@ from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
+from simulated_patterns import ELECTRON, Simulator
 
 from phaseid.errors import InputError
+from phaseid.library import open_default
+from phaseid.matching.identify import identify
+from phaseid.rings import RingList, rings_from_values
 from phaseid.rings.measuring import measure_pixels
 
 sys.path.insert(0, str(Path(__file__).parents[1] / "tests" / "rings"))
 
-from ring_images import drawing, random_scene
+from ring_images import Scene, drawing, random_scene
 
 
 def spread(values: list[float]) -> str:
@@ -90,7 +94,113 @@ def images(cases: int, seed: int) -> None:
     print(f"invented rings: {invented} in {cases - refused} images")
 
 
-PARTS: dict[str, Callable[[int, int], None]] = {"images": images}
+CAMERA_A_PX, CAMERA_SIGMA = 300.0, 0.005  # radius × d of the drawn plates
+PLATE_PX, EDGE_PX = 460, 215
+
+
+def phases(cases: int, seed: int) -> None:
+    """Electron plates of phases of the starter library, measured and identified."""
+    with open_default(None) as library:
+        held = library.phases()
+        simulator = Simulator(
+            [library.crystal(one.phase_id) for one in held], np.random.default_rng(seed)
+        )
+        usable = [i for i in range(len(held)) if simulator.usable(i)]
+        hits = {"measured": 0, "typed": 0}
+        done = refused = 0
+        while done < cases:
+            truth = int(simulator.rng.choice(usable))
+            plate = _plate(simulator, truth)
+            if plate is None:
+                continue
+            done += 1
+            scene, typed = plate
+            lists = {"typed": typed}
+            try:
+                drawn = drawing(scene).counts.astype(np.float32)
+                found = measure_pixels(drawn, np.ones(drawn.shape, dtype=bool), source="drawn")
+                lists["measured"] = found.ring_list(
+                    probe="electron 200 kV",
+                    camera_constant=f"{CAMERA_A_PX} +- {CAMERA_A_PX * CAMERA_SIGMA} A px",
+                )
+            except InputError as error:
+                print(f"  {held[truth].formula}: {error.what}")
+                refused += 1
+            outcome = {}
+            for name, rings in lists.items():
+                best = identify([rings], library).hypotheses
+                named = {
+                    phase.phase_id
+                    for one in (best[0].phases if best else ())
+                    for phase in (one.phase, *one.indistinguishable)
+                }
+                outcome[name] = held[truth].phase_id in named and len(best[0].phases) == 1
+                hits[name] += outcome[name]
+            if outcome["typed"] != outcome.get("measured"):
+                print(f"  {held[truth].formula}: {outcome}, {len(scene.radii)} rings")
+    for name, number in hits.items():
+        share = number / cases
+        error = 100 * np.sqrt(max(share * (1 - share), 0.01) / cases)
+        print(f"top-1, {name}: {100 * share:.1f} ± {error:.1f} % of {cases} ({refused} refused)")
+
+
+def _plate(simulator: Simulator, truth: int) -> tuple[Scene, RingList] | None:
+    """A plate of one phase and the list a person would type of it; None where it has few rings.
+
+    Positions carry the strain and intensities the scatter of real specimens in both.
+    """
+    rng, how = simulator.rng, ELECTRON
+    scale = float(np.exp(rng.normal(0.0, CAMERA_SIGMA)))
+    reflections = simulator.powder(truth)
+    weight = reflections.strength["electron"] * reflections.d_A**2  # mean along the ring
+    radius = CAMERA_A_PX * scale / reflections.d_A * np.exp(rng.normal(0.0, how.strain))
+    inside = (radius > 30.0) & (radius < EDGE_PX)
+    if not inside.any():
+        return None
+    bins = np.unique(np.round(np.log(radius[inside]), 4), return_inverse=True)[1]
+    level = np.bincount(bins, weight[inside])
+    place = np.bincount(bins, weight[inside] * radius[inside]) / np.maximum(level, 1e-300)
+    level *= np.exp(rng.normal(0.0, how.scatter, len(level)))
+    keep = level > 0.004 * level.max()
+    place, level = place[keep], level[keep] / level.max()
+    if keep.sum() < 4:
+        return None
+    seen = level > 0.03
+    scene = Scene(
+        size=(PLATE_PX, PLATE_PX),
+        centre=(PLATE_PX / 2 + float(rng.normal(0, 4)), PLATE_PX / 2 + float(rng.normal(0, 4))),
+        radii=tuple(place.tolist()),
+        heights=tuple((200.0 * level).tolist()),
+        sigma=1.3,
+        ratio=1 + float(rng.uniform(0, 0.02)),
+        angle=float(rng.uniform(0, 180)),
+        stop=(6.0, 12.0, float(rng.uniform(0, 360))),
+        seed=int(rng.integers(1 << 30)),
+    )
+    # by eye: lines closer than a ring is wide are one, radii to 0.3 px
+    lines = sorted(zip(place[seen].tolist(), level[seen].tolist(), strict=True))
+    groups: list[list[tuple[float, float]]] = []
+    for line in lines:
+        if groups and line[0] - groups[-1][-1][0] < 2.4 * scene.sigma:
+            groups[-1].append(line)
+        else:
+            groups.append([line])
+    if len(groups) < 4:
+        return None
+    sums = [sum(top for _, top in group) for group in groups]
+    middles = [sum(r * top for r, top in g) / total for g, total in zip(groups, sums, strict=True)]
+    typed = rings_from_values(
+        [r + float(rng.normal(0.0, 0.3)) for r in middles],
+        column="radius_px",
+        probe="electron 200 kV",
+        sigma=0.3,
+        intensities=[100 * total / max(sums) for total in sums],
+        camera_constant=f"{CAMERA_A_PX} +- {CAMERA_A_PX * CAMERA_SIGMA} A px",
+    )
+    return scene, typed
+
+
+PARTS: dict[str, Callable[[int, int], None]] = {"images": images, "phases": phases}
 
 
 def main() -> None:

@@ -87,7 +87,10 @@ def azimuthal_mean(sums: PolarSums, start: float, per_count: float) -> Azimuthal
     known = np.isfinite(var)
     var = np.interp(index, index[known], var[known])
     var = np.maximum(median_filter(var, 5), 0.5 * np.maximum(var, per_count * mean))
-    noise = np.sqrt(var + 1e-12 * float(mean.max()) ** 2)
+    contrast = float(np.ptp(mean))
+    if contrast == 0:
+        return None
+    noise = np.sqrt(var + (1e-6 * contrast) ** 2)
     cells = np.where(n > 0, total / np.maximum(n, 1), 0.0)
     return AzimuthalMean(
         radius=sums.radius[part],

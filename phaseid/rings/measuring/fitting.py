@@ -12,8 +12,10 @@ Floats = NDArray[np.float64]
 Satellite = tuple[Callable[[Floats], Floats], float]
 
 FWHM_PER_SIGMA = 2.0 * float(np.sqrt(2.0 * np.log(2.0)))
-KNOT_SPACING_FWHM = 4.0  # background bends no faster than this many peak widths
+KNOT_SPACING_FWHM = 7.0  # background bends no faster than this many peak widths
 MAX_KNOTS = 45
+MAX_RELATIVE_WIDTH = 2.2  # of the usual width: what is wider is several peaks
+GROUND_SIGMA = 0.04  # of the background, by which a first look at it is trusted
 _GAUSS_AREA = float(np.sqrt(np.pi / (4.0 * np.log(2.0))))
 _LORENTZ_AREA = float(np.pi / 2.0)
 
@@ -22,8 +24,9 @@ _LORENTZ_AREA = float(np.pi / 2.0)
 class PeakFit:
     """m peaks by rising position, in the unit of x; sigmas are one standard deviation.
 
-    `position`, `fwhm`, `height`, `area` and their sigmas (m,); `lorentzian` is the Lorentzian part
-    of the common shape; `background` (n,) and `model` (n,) on the abscissa fitted;
+    `position`, `fwhm`, `height`, `area` and their sigmas (m,); `significance` is the height over
+    what the noise of the curve makes of it; `lorentzian` is the Lorentzian part of the common
+    shape; `background` (n,) and `model` (n,) on the abscissa fitted;
     `chi2_reduced` is the misfit per degree of freedom. Sigmas are raised where the curve nearby is
     fitted worse than its noise would have it.
     """
@@ -35,6 +38,7 @@ class PeakFit:
     height: Floats
     area: Floats
     area_sigma: Floats
+    significance: Floats
     lorentzian: float
     background: Floats
     model: Floats
@@ -77,7 +81,7 @@ def fit_background(y: Floats, sigma: Floats, basis: Floats) -> Floats:
         design = basis * weight[:, None]
         level = basis @ _solve(design, y * weight)
         pull = (y - level) / sigma
-        weight = np.where(pull > 2.0, 0.05, 1.0) / sigma
+        weight = np.where(pull > 2.0, 0.01, 1.0) / sigma
     return np.asarray(level)
 
 
@@ -145,26 +149,35 @@ def fit_peaks(
             main[3] + ratio * extra[3],
         )
 
+    # where peaks stand too densely to see the ground, it stays about what it was without them
+    ground = _solve(basis * weight[:, None], fit_background(y, sigma, basis) * weight)
+    loose = GROUND_SIGMA * np.abs(ground) + 3.0 * float(np.median(sigma))
+    prior = np.hstack([np.zeros((len(ground), m)), np.diag(1.0 / loose)])
+    wanted = np.concatenate([y * weight, ground / loose])
+
+    def weighted(found: tuple[Floats, Floats, Floats, Floats]) -> Floats:
+        return np.vstack([np.hstack([found[0], basis]) * weight[:, None], prior])
+
     def linear(values: Floats) -> tuple[Floats, tuple[Floats, Floats, Floats, Floats]]:
         found = parts(values)
-        design = np.hstack([found[0], basis]) * weight[:, None]
-        return _solve(design, y * weight), found
+        return _solve(weighted(found), wanted), found
 
     def misfit(values: Floats) -> Floats:
         coefficients, found = linear(values)
-        return np.asarray((np.hstack([found[0], basis]) @ coefficients - y) * weight)
+        return np.asarray(weighted(found) @ coefficients - wanted)
 
     def slopes(values: Floats) -> Floats:
         coefficients, found = linear(values)
         height = coefficients[:m]
         free = np.hstack([found[1] * height, found[2] * height, (found[3] @ height)[:, None]])
-        free *= weight[:, None]
-        design = np.hstack([found[0], basis]) * weight[:, None]
+        free = np.vstack([free * weight[:, None], np.zeros((len(ground), 2 * m + 1))])
+        design = weighted(found)
         # variable projection in Kaufman's form
         return np.asarray(free - design @ _solve(design, free))
 
     start = np.concatenate([position, fwhm, [0.2]])
-    narrow, wide = np.maximum(0.3 * fwhm, step), 4.0 * fwhm + step
+    narrow = np.maximum(0.3 * fwhm, step)
+    wide = np.minimum(4.0 * fwhm, MAX_RELATIVE_WIDTH * float(np.median(fwhm))) + step
     if clipped is not None:  # flanks alone do not tell width from height
         headless = clipped[np.clip(np.searchsorted(x, position), 0, len(x) - 1)]
         usual = float(np.median(fwhm[~headless])) if not headless.all() else float(np.median(fwhm))
@@ -173,18 +186,27 @@ def fit_peaks(
     low = np.concatenate([position - 1.5 * fwhm, narrow, [0.0]])
     high = np.concatenate([position + 1.5 * fwhm, wide, [1.0]])
     start = np.clip(start, low + 1e-9, high - 1e-9)
-    answer = least_squares(
-        misfit,
-        start,
-        jac=slopes,
-        bounds=(low, high),
-        x_scale="jac",
-        max_nfev=20,
-        xtol=1e-6,
-        ftol=1e-7,
-    )
-    values = np.asarray(answer.x)
-    coefficients, found = linear(values)
+    values = start
+    for _ in range(2):
+        answer = least_squares(
+            misfit,
+            values,
+            jac=slopes,
+            bounds=(low, high),
+            x_scale="jac",
+            max_nfev=20,
+            xtol=1e-6,
+            ftol=1e-7,
+        )
+        values = np.asarray(answer.x)
+        coefficients, found = linear(values)
+        sunk = coefficients[m:] < ground - loose
+        if not sunk.any():
+            break
+        # a dip under crowded peaks: they are not what they are taken for, the ground is
+        loose[sunk] *= 0.02
+        prior[sunk, m:] *= 50.0
+        wanted[len(y) :] = ground / loose
     height = coefficients[:m]
     design = np.hstack([found[0], basis])
     model = design @ coefficients
@@ -197,7 +219,10 @@ def fit_peaks(
     chi2 = float(square.sum() / dof)
     window = 3.0 * float(np.median(values[m : 2 * m])) / step
     trusted = weight**2 / np.maximum(1.0, _local_mean(square, weight > 0, window) * used / dof)
-    covariance = np.linalg.pinv((jacobian.T * trusted) @ jacobian, hermitian=True)
+    known = np.zeros(jacobian.shape[1])
+    known[3 * m + 1 :] = loose**-2
+    covariance = np.linalg.pinv((jacobian.T * trusted) @ jacobian + np.diag(known), hermitian=True)
+    by_noise = np.linalg.pinv((jacobian.T * weight**2) @ jacobian + np.diag(known), hermitian=True)
     spread = np.sqrt(np.maximum(np.diag(covariance), 0.0))
     width, mixing = values[m : 2 * m], float(values[2 * m])
     per_height = mixing * _LORENTZ_AREA + (1.0 - mixing) * _GAUSS_AREA
@@ -217,5 +242,6 @@ def fit_peaks(
         lorentzian=mixing,
         background=basis @ coefficients[m:],
         model=model,
+        significance=height / np.sqrt(np.maximum(by_noise[h, h], 1e-300)),
         chi2_reduced=chi2,
     )

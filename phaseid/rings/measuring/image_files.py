@@ -115,7 +115,8 @@ def _tiff(path: Path, frame: int | None) -> tuple[Raw, int]:
     import tifffile
 
     try:
-        with tifffile.TiffFile(path) as file:
+        with _complaints_of("tifffile"), tifffile.TiffFile(path) as file:
+            len(file.pages)  # finds a chain of pages that runs in a circle; `series` would not
             series = file.series[0]
             shape = series.shape
             colour = 1 if series.axes.endswith("S") else 0

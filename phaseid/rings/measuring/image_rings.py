@@ -21,6 +21,7 @@ from phaseid.rings.measuring.measurement import MeasuredRing, Measurement, no_ri
 from phaseid.rings.measuring.peaks import find_peaks
 from phaseid.rings.measuring.polar import polar_sums
 from phaseid.rings.measuring.refining import refine_geometry
+from phaseid.rings.measuring.widths import overlap_sigma
 
 FIRST_LOOK_PX = 1024
 STEP_PX = 0.5
@@ -72,7 +73,8 @@ def measure_pixels(image: Pixels, usable: Mask, *, source: str) -> Measurement:
     keep = _those_that_are_rings(along, ~wide)
     if not keep:
         raise _nothing(image, usable, source, halos)
-    rings = tuple(_ring(found.fit, along, seen, k, geometry) for k in keep)
+    hidden = overlap_sigma(found.fit)
+    rings = tuple(_ring(found.fit, along, seen, k, geometry, float(hidden[k])) for k in keep)
     return Measurement(
         source=source,
         column="radius_px",
@@ -142,10 +144,10 @@ def _remarks(
 
 
 def _ring(
-    fit: PeakFit, along: AlongRing, seen: AzimuthalMean, k: int, geometry: Geometry
+    fit: PeakFit, along: AlongRing, seen: AzimuthalMean, k: int, geometry: Geometry, hidden: float
 ) -> MeasuredRing:
     position, width = float(fit.position[k]), float(fit.fwhm[k])
-    sigma = float(max(along.position_sigma[k], 0.5 * fit.position_sigma[k]))
+    sigma = float(np.hypot(max(along.position_sigma[k], 0.5 * fit.position_sigma[k]), hidden))
     # a part of a circle moves with its centre
     lean = np.array([along.lean_x[k], along.lean_y[k]])
     sigma = float(np.sqrt(sigma**2 + max(float(lean @ geometry.covariance[:2, :2] @ lean), 0.0)))

@@ -21,7 +21,8 @@ from phaseid.rings.measuring.halos import find_halos
 DETECTION = 5.0  # sigmas above the background below which no peak is claimed
 WIDTHS = 2.0 ** np.arange(0.0, 5.0, 0.5)  # sigmas looked for, in steps of the abscissa
 MAX_PEAKS = 150
-PASSES = 4
+PASSES = 5
+REFITS = 5
 SEPARABLE = 0.4  # widths between two peaks, below which they are one of another shape
 SHAPE_ERROR = 0.02  # of a peak's height: how far its true shape may be from the one fitted
 
@@ -148,7 +149,7 @@ def find_peaks(
     level = fit_background(y, sigma, basis)
     residual = y - level
     for turn in range(PASSES):
-        spread = sigma if fit is None else _spread(y, sigma, fit, step)
+        spread = sigma if fit is None else _spread(sigma, fit, step)
         seen = [c for c in first if typical / 2.5 < c[1] < 2.5 * typical] if turn == 0 else None
         fresh = [
             c
@@ -160,7 +161,7 @@ def find_peaks(
             break
         position += [float(x[place]) for place, _, _ in fresh]
         fwhm += [width * FWHM_PER_SIGMA * step for _, width, _ in fresh]
-        for _ in range(3):
+        for _ in range(REFITS):
             fit = fit_peaks(
                 x,
                 y,
@@ -222,19 +223,16 @@ def _without_companions(
     return kept
 
 
-def _spread(y: Floats, sigma: Floats, fit: PeakFit, step: float) -> Floats:
+def _spread(sigma: Floats, fit: PeakFit, step: float) -> Floats:
     """One-sigma (n,) by which what is left over may differ from zero though no peak is there.
 
-    Noise, raised where the residuals about a point are larger, and errors of the peaks' shape.
+    Noise, and errors of the shape of the peaks fitted nearby.
     """
-    from scipy.ndimage import maximum_filter1d, median_filter
+    from scipy.ndimage import maximum_filter1d
 
     fwhm = float(np.median(fit.fwhm)) / step
-    square = ((y - fit.model) / sigma) ** 2
-    # of a normal deviate squared the median is 0.455
-    local = median_filter(square, max(5, int(8.0 * fwhm)) | 1, mode="nearest") / 0.455
     peaks = maximum_filter1d(fit.model - fit.background, max(3, int(2.0 * fwhm)) | 1)
-    return np.asarray(np.sqrt(sigma**2 * np.maximum(local, 1.0) + (SHAPE_ERROR * peaks) ** 2))
+    return np.asarray(np.hypot(sigma, SHAPE_ERROR * peaks))
 
 
 def _typical_width(found: list[tuple[int, float, float]]) -> float:
@@ -256,14 +254,19 @@ def _sound(
     Of a clipped peak the area is hardly known, but there is no doubt that it is there.
     """
     usual = max(float(np.median(fit.fwhm)), typical_fwhm)
-    strong = fit.area > 0.7 * detection * fit.area_sigma
+    strong = fit.significance > 0.7 * detection
     if clipped is not None:
         strong |= clipped[np.clip(np.searchsorted(x, fit.position), 0, len(x) - 1)]
     strong &= fit.position_sigma < 0.5 * fit.fwhm
     inside = (fit.position > x[0]) & (fit.position < x[-1])
     apart = np.abs(fit.position[:, None] - fit.position) / np.maximum(fit.fwhm[:, None], fit.fwhm)
     inside &= ~((apart < SEPARABLE) & (fit.area[:, None] < fit.area)).any(axis=1)
-    return np.asarray(strong & inside & (fit.fwhm < 3.0 * usual) & (fit.fwhm > 0.3 * usual))
+    sound = strong & inside & (fit.fwhm < 3.0 * usual) & (fit.fwhm > 0.3 * usual)
+    # the worst first: the others may be sound without them
+    bad = np.flatnonzero(~sound)
+    spared = bad[np.argsort(fit.significance[bad])[(len(bad) + 1) // 2 :]]
+    sound[spared] = True
+    return np.asarray(sound)
 
 
 def _limit(sigma: Floats, width: float, step: float, detection: float) -> float:

@@ -13,6 +13,7 @@ from phaseid.rings.measuring.curves import Curve, read_curve
 from phaseid.rings.measuring.fitting import Floats, Satellite
 from phaseid.rings.measuring.measurement import MeasuredRing, Measurement, no_rings
 from phaseid.rings.measuring.peaks import Found, find_peaks
+from phaseid.rings.measuring.widths import overlap_sigma
 
 KA2_HEIGHT = 0.5  # of Kα1: the statistical weight of the levels 2p1/2 and 2p3/2
 MAX_POINTS = 60_000
@@ -56,10 +57,11 @@ def measure_curve(curve: Curve, *, probe: str | None = None) -> Measurement:
     if text is not None:
         metadata["probe"] = text
     fit = found.fit
+    sigma_all = np.hypot(fit.position_sigma, overlap_sigma(fit))
     rings = tuple(
         MeasuredRing(
             position=float(fit.position[k]),
-            sigma=float(fit.position_sigma[k]),
+            sigma=float(sigma_all[k]),
             width=float(fit.fwhm[k]),
             width_sigma=float(fit.fwhm_sigma[k]),
             intensity=float(fit.area[k]),
@@ -97,13 +99,13 @@ def _even(curve: Curve) -> tuple[Floats, Floats, Floats]:
     step = float(np.median(steps))
     if np.abs(steps - step).max() < 0.02 * step:
         return x, y, sigma
-    even = np.arange(x[0], x[-1] + 0.5 * step, step)
-    if len(even) > MAX_POINTS:
+    if (x[-1] - x[0]) / step > MAX_POINTS:
         raise InputError(
             "has steps too uneven to be one profile",
             path=curve.source,
             remedy="Give its ranges as separate files.",
         )
+    even = np.arange(x[0], x[-1] + 0.5 * step, step)
     return even, np.interp(even, x, y), np.interp(even, x, sigma)
 
 
