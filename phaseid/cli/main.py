@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import errno
 import os
+import re
 import sys
+from itertools import pairwise
 from typing import Annotated, Any
 
 import typer
@@ -28,9 +30,10 @@ from phaseid.cli import (
 )
 from phaseid.cli.options import say
 from phaseid.cli.settings import command_defaults
-from phaseid.errors import PhaseidError
+from phaseid.errors import InputError, PhaseidError
 
 INTERRUPTED = 130
+_NEGATIVE = re.compile(r"-\d[\d.,]*")
 FIRST_STEPS = """\
 phaseid {version}
 Which crystalline phases made these diffraction rings?
@@ -121,6 +124,9 @@ def run(arguments: list[str] | None = None) -> None:
     debug = "--debug" in words
     if debug:  # accepted anywhere, so that it can be appended to the line that failed
         words = ["--debug", *(word for word in words if word != "--debug")]
+    if (word := _negative_number(words)) is not None:
+        say(f"phaseid: '{word}' is negative; spacings, radii and angles are not. Correct it.")
+        sys.exit(InputError.exit_code)
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):  # a terminal without Å shows a substitute
             stream.reconfigure(errors="replace")
@@ -144,6 +150,16 @@ def run(arguments: list[str] | None = None) -> None:
             "Run the same command with --debug to see where."
         )
         sys.exit(1)
+
+
+def _negative_number(words: list[str]) -> str | None:
+    """A negative number where a ring is meant: to the parser it would be an unknown option."""
+    for before, word in pairwise(["", *words]):
+        if word == "--":
+            break
+        if _NEGATIVE.fullmatch(word) and not before.startswith("-"):
+            return word
+    return None
 
 
 def _flush() -> None:

@@ -192,7 +192,7 @@ def _read(
             say(f"Left out: {error}")
     if not lists:
         raise InputError(
-            f"none of the {len(files)} files is a pattern that can be read",
+            f"no pattern can be read ({len(files)} tried)",
             remedy="Correct the first of them, and try it alone with phaseid identify.",
         )
     return lists, failed

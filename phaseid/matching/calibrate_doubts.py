@@ -82,6 +82,14 @@ def _suspicious(fit: Fit | None, plate: Plate, standard: Standard) -> bool:
 
 
 def _several_ways(fit: Fit, plate: Plate, standard: Standard) -> InputError:
+    rough = f"Measure more rings, or state a rough scale: {_rough(plate)}."
+    if fit.probability > _SURE:
+        return InputError(
+            f"{len(fit.used)} rings fit {standard.label} with {_constant_text(plate, fit.shift)}, "
+            "but so few would fit by chance, too",
+            path=plate.rings.source or None,
+            remedy=rough,
+        )
     ways = ", ".join(
         f"{_constant_text(plate, shift)} ({weight:.0%})"
         for shift, weight in ((fit.shift, fit.probability), *fit.rivals[:2])
@@ -89,7 +97,7 @@ def _several_ways(fit: Fit, plate: Plate, standard: Standard) -> InputError:
     return InputError(
         f"so few rings fit {standard.label} in several ways: {ways}",
         path=plate.rings.source or None,
-        remedy=f"Measure more rings, or state a rough scale: {_rough(plate)}.",
+        remedy=rough,
     )
 
 

@@ -39,6 +39,7 @@ SURE, NOTHING = 0.9, 0.5
 SHOWN = 0.1
 """A phase is told of where some pattern shows it with this probability."""
 _EVEN_ODDS = 3.0
+_LEARNT = 0.7
 
 
 def identify_series(
@@ -157,13 +158,15 @@ def _states(
 
 
 def _common_scale(error: ScaleError, values: Floats, chance: Floats) -> Scale | None:
-    """Measured d over calculated d that the patterns have in common, None where they share none."""
+    """Measured d over calculated d in common, None where none is shared or nothing was learnt."""
     if not error.shared.any() or chance.sum() < NOTHING:
         return None
     chance = chance / chance.sum()
     mean = float(values @ chance)
     step = float(np.diff(values).mean())
     spread = float(np.sqrt(chance @ (values - mean) ** 2 + step**2 / 12.0))
+    if spread > _LEARNT * error.common:
+        return None
     first = int(np.flatnonzero(error.shared)[0])
     return Scale(first, exp(mean), exp(mean) * spread)
 

@@ -76,10 +76,11 @@ class CalibrationRecord:
             what = f"wavelength {self.wavelength_A:.6g} Å"
         else:
             what = f"measured d × {self.factor:.6g}"
+        oval = ""
         if self.ellipse is not None:
-            what += f", axes {self.ellipse_ratio:.4f} to 1, the long one at {self.long_axis_deg:g}°"
+            oval = f", axes {self.ellipse_ratio:.4f} to 1, the long one at {self.long_axis_deg:g}°"
         return (
-            f"{what} ± {100 * self.relative_sigma:.2g} %, {self.standard}, {self.probe}, "
+            f"{what} ± {100 * self.relative_sigma:.2g} %{oval}, {self.standard}, {self.probe}, "
             f"{self.created}"
         )
 

@@ -100,6 +100,17 @@ def test_a_negative_radius_is_told_by_its_line(phaseid, tmp_path: Path) -> None:
     assert "negative" in done.err
 
 
+@pytest.mark.parametrize("command", ["calibrate", "identify", "ratio", "near"])
+def test_a_negative_number_is_told_as_such(phaseid, command: str) -> None:
+    done = phaseid(command, "10.6", "-12.3")
+    assert (done.code, done.out) == (2, "")
+    assert "'-12.3' is negative" in done.err
+
+
+def test_a_negative_value_of_an_option_is_none_of_a_ring(phaseid, gold: str) -> None:
+    assert phaseid("calibrate", gold, "--standard", "Au", "--temperature", "-20").code == 0
+
+
 def test_a_saved_calibration_serves_later_lists(phaseid, gold: str, tmp_path: Path) -> None:
     saved = phaseid("calibrate", gold, "--standard", "Au", "--save", "plate80", "--json")
     assert saved.json("calibration-1")["saved"] == "plate80"
