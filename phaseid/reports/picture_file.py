@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 from phaseid.errors import InputError
 from phaseid.matching.identification import Identification
+from phaseid.reports.picture import Picture
 from phaseid.reports.picture_axis import AxisName
 
 if TYPE_CHECKING:
@@ -57,7 +58,11 @@ def picture_bytes(
     """The picture in the format of `suffix` (.png, .svg, .pdf); `library` as in `sheet`."""
     from phaseid.reports.picture_sheet import sheet
 
-    picture = sheet(answer, axis=axis, library=library)
+    return drawn(sheet(answer, axis=axis, library=library), suffix)
+
+
+def drawn(picture: Picture, suffix: str) -> bytes:
+    """Any picture in the format of `suffix` (.png, .svg, .pdf)."""
     if suffix == ".svg":
         from phaseid.reports.picture_svg import svg_file
 

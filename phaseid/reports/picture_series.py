@@ -8,7 +8,7 @@ from pathlib import Path
 
 from phaseid.matching.series_answer import Series
 from phaseid.reports.picture import Line, Picture, Room, Shape, Text, rectangle, tick_text, ticks
-from phaseid.reports.picture_file import check_picture_path, write_whole
+from phaseid.reports.picture_file import check_picture_path, drawn, write_whole
 from phaseid.reports.picture_style import phase_letter, phase_role
 from phaseid.reports.plain import phase_text, shorten
 
@@ -36,19 +36,7 @@ class _Panel:
 def write_series_picture(series: Series, path: Path) -> None:
     """Draw the series into a file (.svg, .png, .pdf); raises InputError like `write_picture`."""
     check_picture_path(path)
-    picture, suffix = series_picture(series), path.suffix.lower()
-    if suffix == ".svg":
-        from phaseid.reports.picture_svg import svg_file
-
-        write_whole(path, svg_file(picture).encode())
-    elif suffix == ".png":
-        from phaseid.reports.picture_pixels import png
-
-        write_whole(path, png(picture))
-    else:
-        from phaseid.reports.picture_paper import pdf
-
-        write_whole(path, pdf(picture))
+    write_whole(path, drawn(series_picture(series), path.suffix.lower()))
 
 
 def series_picture(series: Series) -> Picture:
