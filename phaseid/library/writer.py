@@ -10,12 +10,23 @@ from phaseid.library.entries import Entry
 from phaseid.library.outcome import Outcome
 from phaseid.library.records import symmetry_row
 from phaseid.library.sources import Found, StructureFile
+from phaseid.library.starter import DATABASE
 from phaseid.library.strongest import Parts, write_blocks
 from phaseid.library.tally import ImportTally, Rejected, Replaced
 
 TABLES = (("phase", "id"), ("structure", "phase"), ("lines", "phase"), ("label", "phase"))
 """Where an entry has rows, and the column that holds its number; beside these its block."""
+_FROM = ("source_database", "source_id", "source_file", "location")
 _DIGEST_RANGE = 1 << 128
+
+
+def _told_by(source: Sequence[str | int | float]) -> tuple[bool, bool, tuple[str, ...]]:
+    """Rank of the source that tells of a structure which several have, whoever came first.
+
+    What is shipped, then one with a number, then by the alphabet; `source` holds the columns _FROM.
+    """
+    database, number, *_ = source
+    return database != DATABASE, not number, tuple(map(str, source[:3]))
 
 
 def combined(digest: str, *, plus: Iterable[str] = (), minus: Iterable[str] = ()) -> str:
@@ -102,16 +113,19 @@ class Writer:
         return [] if None in rows else rows
 
     def _put(self, entry: Entry) -> None:
+        columns = ", ".join(("id", "computed_by", *_FROM))
         held = self._conn.execute(
-            "SELECT id, computed_by, location FROM phase WHERE content = ?", (entry.content,)
+            f"SELECT {columns} FROM phase WHERE content = ?", (entry.content,)
         )
         known = held.fetchone()
         if known is not None:
             self.tally.unchanged += 1
-            row_id = int(known[0])
-            if known[1] != entry.row["computed_by"] and known[2] == entry.row["location"]:
-                self._replace(row_id, entry)
-                self.tally.recomputed += 1
+            row_id, computed_by, *before = known
+            now = [entry.row[column] for column in _FROM]
+            older = computed_by != entry.row["computed_by"]
+            if (now == before and older) or _told_by(now) < _told_by(before):
+                self._replace(row_id, entry, keep_labels=True)
+                self.tally.recomputed += older
         else:
             older = self._older_version(entry)
             if older is None:
@@ -130,12 +144,13 @@ class Writer:
             [(row_id, *label) for label in entry.labels],
         )
 
-    def _replace(self, row_id: int, entry: Entry) -> str:
+    def _replace(self, row_id: int, entry: Entry, *, keep_labels: bool = False) -> str:
         """Put an entry in the place of another; returns the phase id of that."""
         where = (row_id,)
         held = self._conn.execute("SELECT phase_id FROM phase WHERE id = ?", where).fetchone()
         for table, column in TABLES:
-            self._conn.execute(f"DELETE FROM {table} WHERE {column} = ?", where)
+            if not (keep_labels and table == "label"):
+                self._conn.execute(f"DELETE FROM {table} WHERE {column} = ?", where)
         self._insert(entry, row_id)
         return str(held[0])
 

@@ -259,6 +259,24 @@ def test_the_order_of_adding_does_not_matter(tmp_path: Path) -> None:
 MARKS: tuple[tuple[str, ...], ...] = ((), (), ("high_pressure",), ("theoretical",))
 
 
+@pytest.mark.parametrize("turn", [1, -1])
+def test_of_equal_structures_the_same_source_tells(library: Library, turn: int) -> None:
+    structure = quartz(KIHARA, "high_pressure")
+    same = [
+        replace(structure, source=Source("file", "", "x.cif")),
+        replace(structure, source=Source("COD", "2", "2.cif"), findings=()),
+        replace(structure, source=Source("AMCSD", "1", "1.cif")),
+    ]
+    for crystal in same[::turn]:
+        library.add_crystals([crystal])
+    (phase,) = library.find("quartz")
+    assert (phase.source.database, phase.quality) == ("AMCSD", 0.3)
+    assert library.find("COD 2") == [phase]
+    shipped = replace(structure, source=shipped_crystal("SiO2-quartz").source)
+    library.add_crystals([shipped])
+    assert [p.source.database for p in library.find("quartz")] == ["phaseid starter"]
+
+
 def test_a_revision_of_the_standing_entry_groups_anew(library: Library) -> None:
     first = replace(quartz(KIHARA), source=Source("COD", "1", "1.cif"))
     second = replace(quartz(LEVIEN, "high_temperature"), source=Source("COD", "2", "2.cif"))
