@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from math import log
 
 import numpy as np
+from numpy.typing import NDArray
 
 from phaseid.matching.likelihood import evaluate
 from phaseid.matching.model import Fit, Model
@@ -53,15 +54,21 @@ class _Set:
     row: int
 
 
-def explain(model: Model, expected: Members, shift: Floats, watched: set[int]) -> Contaminants:
+def explain(
+    model: Model,
+    expected: Members,
+    shift: Floats,
+    watched: set[int],
+    suspects: NDArray[np.bool_],
+) -> Contaminants:
     """Add to the expected phases whatever explains the rings that are left, up to three phases.
 
-    `shift` (K,) is the common shift of each pattern in ln d. Sets of phases are weighed by their
+    `shift` (K,) is the common shift of each pattern in ln d; `suspects` (c,) says which candidates
+    may be added, those `watched` among them. Sets of phases are weighed by their
     likelihood and a prior that favours the watch list; "none of them" takes part.
     """
-    count = len(model.lines[0].x)
-    others = count - len(watched)
-    prior = np.full(count, log(LISTED_PRIOR / max(others, 1)))
+    others = int(suspects.sum()) - len(watched)
+    prior = np.full(len(suspects), log(LISTED_PRIOR / max(others, 1)))
     prior[list(watched)] = log(WATCHED_PRIOR / max(len(watched), 1))
     base = _judged(model, [expected], shift, prior, expected)[0]
     sets = {expected: base}
@@ -72,7 +79,7 @@ def explain(model: Model, expected: Members, shift: Floats, watched: set[int]) -
             tried = [
                 (*parent.members, c)
                 for c in _worth_trying(model, parent, shift)
-                if c not in parent.members
+                if suspects[c] and c not in parent.members
             ]
             fresh = [m for m in tried if frozenset(m) not in {frozenset(s) for s in sets}]
             grown += _judged(model, fresh, shift, prior, expected)

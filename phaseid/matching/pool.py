@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
+
+import numpy as np
+from numpy.typing import NDArray
 
 from phaseid.crystal.crystal import Crystal
 from phaseid.crystal.lines import Lines, compute_lines
@@ -59,6 +62,14 @@ class Pool:
     def phase(self, number: int) -> Phase:
         """The phase of that number."""
         return self._phases[number]
+
+    def suspects(self, watched: Iterable[int]) -> NDArray[np.bool_]:
+        """Which numbers may be suspected: those watched, and one entry of each other phase."""
+        suspected = np.ones(len(self._phases), dtype=bool)
+        own = self._library.standing()
+        suspected[: len(own)] = own
+        suspected[list(watched)] = True
+        return suspected
 
     def table(self, kind: Kind) -> LineTable:
         """The lines of all phases to one kind of probe, in the order of their numbers."""

@@ -165,7 +165,7 @@ def screen(
         for ring in pattern.members[k]
     ]
     result = (
-        explain(model, members, shift, set(watched) - set(members))
+        explain(model, members, shift, set(watched) - set(members), pool.suspects(watched))
         if left
         else Contaminants((), {}, fit, members)
     )
