@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import signal
 from collections.abc import Callable, Generator, Iterable, Sequence
-from concurrent.futures import ProcessPoolExecutor
+from concurrent.futures import BrokenExecutor, ProcessPoolExecutor
 from contextlib import contextmanager
 from multiprocessing import get_context
 from pathlib import Path
 from typing import Any, TypeVar
 
+from phaseid.errors import InputError
 from phaseid.library.library import Library
 
 T = TypeVar("T")
@@ -23,20 +24,25 @@ def crew(library: Library, workers: int) -> Generator[Hands[Any], None, None]:
     """Yield `hands(task, items, step)`, which returns [task(library, *item) for item in items].
 
     With more than one of `workers` each is a process of its own that opens the same file; `task`
-    has to be a function of a module. `step` is called as results come in.
+    has to be a function of a module. `step` is called as results come in. Raises InputError where a
+    worker dies.
     """
     if workers <= 1:
         yield lambda task, items, step: _counted((task(library, *item) for item in items), step)
         return
-    with ProcessPoolExecutor(
-        workers,
-        mp_context=get_context("spawn"),
-        initializer=_begin,
-        initargs=(library.path,),
-    ) as pool:
-        yield lambda task, items, step: _counted(
-            pool.map(_with_library, [(task, item) for item in items]), step
-        )
+    pool = ProcessPoolExecutor(
+        workers, mp_context=get_context("spawn"), initializer=_begin, initargs=(library.path,)
+    )
+    try:
+        with pool:
+            yield lambda task, items, step: _counted(
+                pool.map(_with_library, [(task, item) for item in items]), step
+            )
+    except BrokenExecutor:
+        raise InputError(
+            "a worker process died, perhaps for want of memory",
+            remedy="Repeat with --workers 1; nothing stored is touched.",
+        ) from None
 
 
 def _counted(results: Iterable[T], step: Callable[[], None]) -> list[T]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Iterator
 from dataclasses import replace
 
@@ -15,6 +16,7 @@ from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.identify import identify
 from phaseid.matching.series import identify_series
 from phaseid.matching.series_answer import Series
+from phaseid.matching.series_crew import crew
 from phaseid.rings import RingList, rings_from_values
 from tests.matching.mixtures import simulated
 
@@ -112,6 +114,18 @@ def test_processes_share_the_work_with_the_same_result(
     assert shared.records() == heated.records()
     assert shared.persistence == heated.persistence
     assert steps == [(n + 1, 10) for n in range(10)]
+
+
+def _dies(_library: Library, _number: int) -> None:
+    os._exit(3)
+
+
+def test_a_worker_that_dies_is_told(small: Library) -> None:
+    with (
+        pytest.raises(InputError, match="worker process died"),
+        crew(small, 2) as hands,
+    ):
+        hands(_dies, [(1,), (2,)], lambda: None)
 
 
 def test_neighbours_settle_what_a_pattern_leaves_open(small: Library) -> None:
