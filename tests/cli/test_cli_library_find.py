@@ -263,6 +263,21 @@ def test_an_answer_names_the_other_entries(phaseid: Command, mine: str) -> None:
     assert len({match["phase"]["phase_id"] for match in lines}) == 1
 
 
+def test_screening_suspects_one_entry_of_each_phase(
+    phaseid: Command, tmp_path: Path, mine: str
+) -> None:
+    halite, periclase = ([a / n**0.5 for n in (3, 4, 8, 11, 12)] for a in (5.640, 4.211))
+    rows = [f"{d:.4f},100" for d in halite] + [f"{d:.4f},60" for d in periclase]
+    file = tmp_path / "rings.csv"
+    file.write_text("\n".join(["# probe: x-ray Cu Ka", "d_A,intensity", *rows]))
+    words = ("screen", str(file), "--expect", "NaCl", "--library", mine, "--json")
+    foreign = phaseid(*words).json("screening-1")["foreign"]
+    named = {c["phase"]["phase_id"] for ring in foreign for c in ring["candidates"]}
+    with Library.open(mine) as library:  # beside it stands the shipped one that is watched for
+        own = {phase.phase_id for phase in library.phases() if phase.formula == "MgO"}
+    assert (len(own), len(own & named)) == (3, 1)
+
+
 def test_the_starter_folder_adds_nothing_new(phaseid: Command) -> None:
     facts = phaseid("library", "add", str(data_path("starter", "elements")), "--json").json(
         "library-add-1"
