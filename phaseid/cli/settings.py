@@ -88,7 +88,7 @@ def read_config(path: Path) -> dict[str, str]:
 
     try:
         held = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+    except (ValueError, RecursionError) as error:  # TOMLDecodeError is a ValueError
         raise InputError(
             f"is not TOML: {error}", path=path, remedy='Write lines such as probe = "x-ray Cu Ka".'
         ) from None

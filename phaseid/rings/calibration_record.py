@@ -30,6 +30,7 @@ OLD_DAYS = 30
 _SAME_WAVELENGTH = 1e-3
 _OTHER_RADIATION = 0.02
 _WIDEST = 0.2
+_LARGEST = 1e6  # of any number of a record
 _NAME = re.compile(r"\w[\w.+-]{0,63}")
 
 
@@ -226,6 +227,8 @@ def load_calibration(name: str, folder: Path) -> CalibrationRecord:
     held = _read(path)
     try:
         record = CalibrationRecord(**held[-1])
+        if not _holds_its_kinds(record):
+            raise _damaged(path)
         parse_probe(record.probe)
         date.fromisoformat(record.created)
     except (TypeError, ValueError, IndexError, InputError):
@@ -260,7 +263,7 @@ def _read(path: Path) -> list[dict[str, Any]]:
     try:
         held = json.loads(path.read_text(encoding="utf-8"))
         records = held["records"]
-    except (OSError, ValueError, KeyError, TypeError):
+    except (OSError, ValueError, KeyError, TypeError, RecursionError):
         raise _damaged(path) from None
     names = {field.name for field in fields(CalibrationRecord)}
     needed = {field.name for field in fields(CalibrationRecord) if field.default is MISSING}
@@ -271,6 +274,22 @@ def _read(path: Path) -> list[dict[str, Any]]:
     ):
         raise _damaged(path)
     return records
+
+
+def _holds_its_kinds(record: CalibrationRecord) -> bool:
+    """Whether every field is text or a number of sensible size, as it should be."""
+    for one in fields(record):
+        value, kind = getattr(record, one.name), str(one.type)
+        if kind == "str":
+            sound = isinstance(value, str)
+        elif value is None:
+            sound = "None" in kind
+        else:
+            number = isinstance(value, int | float) and not isinstance(value, bool)
+            sound = number and -_LARGEST < value < _LARGEST
+        if not sound:
+            return False
+    return True
 
 
 def _damaged(path: Path) -> InputError:

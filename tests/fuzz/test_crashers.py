@@ -1,0 +1,116 @@
+"""What fuzzing broke, each by its name; mended since."""
+
+from __future__ import annotations
+
+import json
+import math
+import subprocess
+import sys
+import time
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+
+from phaseid.cli.settings import read_config, write_config
+from phaseid.errors import InputError
+from phaseid.rings.calibration_record import load_calibration
+from phaseid.rings.measuring import curves, measure_profile, read_curve, read_image
+from tests.fuzz.targets import TARGETS
+
+NO_NUMBERS: list[Any] = ["x", [1], {}, True, 10**400, 1e300, math.inf, math.nan]
+NO_TEXTS: list[Any] = [[1], {}, True, None, 3]
+
+
+@pytest.mark.parametrize("kind", range(len(TARGETS["calibration"].seeds)))
+def test_a_calibration_of_wrong_kinds_is_told(kind: int, tmp_path: Path) -> None:
+    seed = json.loads(TARGETS["calibration"].seeds[kind])
+    path = tmp_path / "x.json"
+    for key, value in seed["records"][0].items():
+        for wrong in NO_TEXTS if isinstance(value, str) else NO_NUMBERS:
+            record = {**seed["records"][0], key: wrong}
+            path.write_text(json.dumps({**seed, "records": [record]}))
+            with pytest.raises(InputError, match="no calibration that can be read"):
+                load_calibration("x", tmp_path)
+
+
+def test_a_calibration_of_nested_lists_is_told(tmp_path: Path) -> None:
+    (tmp_path / "x.json").write_text('{"schema":' + "[" * 100_000)
+    with pytest.raises(InputError, match="no calibration that can be read"):
+        load_calibration("x", tmp_path)
+
+
+@pytest.mark.parametrize(
+    "text", ["probe = " + "[" * 100_000, "probe = " + "{a=" * 50_000, "probe = " + "1" * 10_000]
+)
+def test_a_deep_or_endless_configuration_is_told(text: str, tmp_path: Path) -> None:
+    path = tmp_path / "config.toml"
+    path.write_text(text)
+    with pytest.raises(InputError, match="is not TOML"):
+        read_config(path)
+
+
+def test_a_setting_that_is_no_text_is_told(tmp_path: Path) -> None:
+    path = tmp_path / "config.toml"
+    with pytest.raises(InputError, match="no text that can be kept"):
+        write_config({"library": "\udcff"}, path)
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_a_tiff_whose_pages_run_in_a_circle_is_told(tmp_path: Path) -> None:
+    data = bytearray(136)
+    data[:14] = b"II*\0\x08\0\0\0\x09\0\0\0\x04\0"
+    data[14] = 1
+    for at in (42, 57, 82, 86, 90, 101, 118):
+        data[at] = 40
+    path = tmp_path / "circle.tif"
+    path.write_bytes(data)
+    begun = time.process_time()
+    with pytest.raises(InputError):
+        read_image(path)
+    assert time.process_time() - begun < 5
+
+
+@pytest.mark.parametrize("last", ["1e6", "1e12", "1e300"])
+def test_a_profile_with_one_point_far_away_is_told(last: str, tmp_path: Path) -> None:
+    """Even steps over such a range would fill the memory."""
+    rows = [f"{20 + n / 20:.2f},{100 + n % 5}" for n in range(200)]
+    path = tmp_path / "far.xy"
+    path.write_text("\n".join(["q_1/A,counts", *rows, f"{last},100"]))
+    with pytest.raises(InputError, match="steps too uneven"):
+        measure_profile(path)
+
+
+def test_a_profile_of_too_many_points_is_left_early(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    assert curves.MAX_POINTS <= 1_000_000
+    monkeypatch.setattr(curves, "MAX_POINTS", 1000)
+    path = tmp_path / "long.xy"
+    path.write_text("two_theta_deg counts\n" + "1 1\n" * 1_000_000)
+    begun = time.process_time()
+    with pytest.raises(InputError, match="more than 1000 points"):
+        read_curve(path)
+    assert time.process_time() - begun < 2
+    path.write_text("two_theta_deg counts\n" + "1 " * 1_000_000)
+    with pytest.raises(InputError, match="5000 characters a line"):
+        read_curve(path)
+
+
+def test_a_profile_of_many_columns_keeps_three(tmp_path: Path) -> None:
+    path = tmp_path / "wide.xy"
+    rows = [f"{20 + n / 20:.2f} {100 + n % 5} 10 " + "1 " * 500 for n in range(100)]
+    path.write_text("two_theta_deg counts\n" + "\n".join(rows))
+    np.testing.assert_array_equal(read_curve(path).sigma, np.full(100, 10.0))
+
+
+@pytest.mark.skipif(not Path("/dev/zero").exists(), reason="no endless file on this system")
+def test_endless_standard_input_is_left() -> None:
+    with Path("/dev/zero").open("rb") as endless:
+        done = subprocess.run(
+            [sys.executable, "-m", "phaseid", "identify", "-", "--probe", "electron 200 kV"],
+            stdin=endless, capture_output=True, text=True, check=False, timeout=60,
+        )  # fmt: skip
+    assert done.returncode == 2
+    assert "standard input: is larger than 2 MB" in done.stderr
