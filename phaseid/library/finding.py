@@ -57,11 +57,6 @@ def search(
     return Found(tuple(phases), tuple(entries), len(rows), more)
 
 
-def rows_of(conn: sqlite3.Connection, question: Question) -> list[int]:
-    """Return the row numbers of all entries that answer; raises InputError as `search`."""
-    return _answers(conn, question, None)
-
-
 def _answers(conn: sqlite3.Connection, question: Question, most: int | None) -> list[int]:
     if not question:
         limit = -1 if most is None else most
