@@ -14,7 +14,12 @@ import numpy as np
 
 from phaseid.matching.likelihood import nothing_listed
 from phaseid.matching.search import Judged, Loosened, Members, Search
-from phaseid.matching.settings import RELATIVE_INTENSITY, RELATIVE_PRIOR, UNLISTED_PRIOR
+from phaseid.matching.settings import (
+    RELATIVE_INTENSITY,
+    RELATIVE_PRIOR,
+    ROUGH_PRIOR,
+    UNLISTED_PRIOR,
+)
 
 _LOOSENED = 24
 _DISTANT = 24
@@ -51,6 +56,11 @@ def weigh(search: Search) -> Standing:
     best = ranked[0].log_posterior if ranked else -np.inf
     weights: dict[Members, float] = {j.members: j.log_posterior for j in search.accepted()}
     near = [j for j in ranked[:_LOOSENED] if j.log_posterior > best - _WORTH_LOOSENING]
+    for members, value in search.rough(near):
+        if members in weights:
+            plain = weights[members] + log(1.0 - ROUGH_PRIOR)
+            rough = value + search.prior_of(members) + log(ROUGH_PRIOR)
+            weights[members] = float(np.logaddexp(plain, rough))
     singles = {j.members for j in near if len(j.members) == 1}
     distant = [j for j in search.distant_relatives(_DISTANT) if j.members not in singles]
 

@@ -45,6 +45,7 @@ def predicted(model: Model, fit: Fit) -> Model:
                 intensity_sd=pattern.intensity_sd[keep],
                 members=tuple(pattern.members[i] for i in keep),
                 nuisance=pattern.nuisance[keep],
+                merging=pattern.merging[keep],
                 resolution=pattern.resolution[keep],
             )
         )

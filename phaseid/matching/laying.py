@@ -16,6 +16,7 @@ from phaseid.matching.model import Looseness, PatternFit
 from phaseid.matching.patterns import Floats, Pattern
 from phaseid.matching.settings import (
     AMPLITUDE_WIDTH,
+    CROWDING,
     DETECTION_SLOPE,
     FOREIGN_RINGS,
     ODD_POSITION_FACTOR,
@@ -27,8 +28,12 @@ from phaseid.matching.settings import (
 
 HALF_LOG_2PI = 0.5 * log(2.0 * pi)
 _AMPLITUDE_PRIOR_SD = 3.0
-_OWN_PART = 0.3
-"""A phase that makes less than this part of a ring does not show in it."""
+_OWN_PART = 0.5
+"""A ring shows the phase that makes more than this part of it."""
+_STRONG, _STRONG_SCATTER = 0.25, 0.5
+"""Lines above this part of the strongest tell a first amplitude, each only so well (ln)."""
+_ABOUT = 1.5
+"""Lines within so many merging distances of a ring make its position less sure."""
 _HIDDEN = 1.2
 """Two lines nearer than this many resolutions make one ring."""
 
@@ -97,6 +102,7 @@ class PatternWork:
         self.null = crowd
         self.ln_amplitude = np.zeros((self.b, self.k))
         self.trend = np.zeros(self.b)
+        self.limit = np.zeros(self.b)
         curve = 0.5 * np.exp(-2.0 * pattern.x)
         self.curve = curve - curve.mean()
         self.line_curve = 0.5 * np.exp(-2.0 * self.x) - curve.mean()
@@ -118,6 +124,7 @@ class PatternWork:
             extra = extra + (wide - 1.0) * np.abs(self.axial).max(axis=3)
         near = np.abs(distance) < self.window[ring] + extra
         near &= self.intensity > 0
+        self.crowding2 = self._crowding(ring, distance)
         near = self._together(near, ring, position, distance)
         self.ring = np.where(near, ring, -1)
         cell = (np.arange(self.b * self.k).reshape(self.b, self.k, 1) * self.m + ring)[near]
@@ -128,9 +135,7 @@ class PatternWork:
         weight_sum = np.maximum(self.sum, 1e-300)
         away = distance[near]
         moment = np.bincount(cell, weights=weight * away, minlength=size).reshape(shape)
-        square = np.bincount(cell, weights=weight * away**2, minlength=size).reshape(shape)
         self.centre = moment / weight_sum
-        self.square = square / weight_sum
         if self.axial is not None:
             levers = [
                 np.bincount(cell, weights=weight * self.axial[..., a][near], minlength=size)
@@ -141,6 +146,23 @@ class PatternWork:
             covered = self.pattern.seen_weight(np.where(np.isfinite(position), position, 50.0))
         self.covered = np.where(self.visible > 0, covered, 0.0)
 
+    def _crowding(self, ring: NDArray[np.int64], distance: Floats) -> Floats:
+        """(b, m) mean square width of what lies about each ring and partly merges with it.
+
+        Lines of every phase count by the intensity they are expected to have.
+        """
+        about = (np.abs(distance) < _ABOUT * self.pattern.merging[ring]) & (self.intensity > 0)
+        batch = np.arange(self.b)[:, None, None]
+        cell = (batch * self.m + ring)[about]
+        weight = (self.intensity * np.exp(self.ln_amplitude)[:, :, None])[about]
+        away = distance[about]
+        size = self.b * self.m
+        total = np.maximum(np.bincount(cell, weights=weight, minlength=size), 1e-300)
+        mean = np.bincount(cell, weights=weight * away, minlength=size) / total
+        square = np.bincount(cell, weights=weight * away**2, minlength=size) / total
+        result: Floats = np.maximum(square - mean**2, 0.0).reshape(self.b, self.m)
+        return result
+
     def _together(
         self, near: NDArray[np.bool_], ring: NDArray[np.int64], position: Floats, distance: Floats
     ) -> NDArray[np.bool_]:
@@ -148,18 +170,36 @@ class PatternWork:
 
         A line that would have made a ring of its own is not hidden by being near another.
         """
+        main = self._main(near, ring, distance)
+        # of two lines nearest to one ring the lesser makes the ring beside it, if that has none
+        beside = np.clip(ring + np.sign(distance).astype(np.int64), 0, self.m - 1)
+        taken = np.zeros(self.b * self.m, dtype=bool)
+        batch = np.arange(self.b)[:, None, None] * self.m
+        taken[(batch + ring)[main]] = True
+        away = distance + self.pattern.x[ring] - self.pattern.x[beside]
+        free = near & ~main & (beside != ring) & ~taken[batch + beside]
+        free &= np.abs(away) < self.window[beside]
+        if free.any():
+            ring[free], distance[free] = beside[free], away[free]
+            main = self._main(near, ring, distance)
+        key = batch + ring
+        middle = np.zeros(self.b * self.m)
+        middle[key[main]] = position[main]
+        apart = np.abs(position - middle[key])
+        hidden = near & (apart < _HIDDEN * self.pattern.resolution[ring])
+        return np.asarray(hidden | main)
+
+    def _main(
+        self, near: NDArray[np.bool_], ring: NDArray[np.int64], distance: Floats
+    ) -> NDArray[np.bool_]:
+        """(b, k, n) the line that each ring is most likely made by."""
         key = np.arange(self.b)[:, None, None] * self.m + ring
         with np.errstate(divide="ignore"):
             score = np.log(self.intensity) + self.ln_amplitude[:, :, None]
         score = np.where(near, score - 0.5 * (distance / (1.5 * self.pattern.sigma[ring])) ** 2, 0)
         best = np.full(self.b * self.m, -np.inf)
         np.maximum.at(best, key[near], score[near])
-        main = near & (score >= best[key])
-        middle = np.zeros(self.b * self.m)
-        middle[key[main]] = position[main]
-        apart = np.abs(position - middle[key])
-        hidden = near & (apart < _HIDDEN * self.pattern.resolution[ring])
-        return np.asarray(hidden | main)
+        return np.asarray(near & (score >= best[key]))
 
     def _missing(self) -> Floats:
         """(b, k, n) chance that the range covers a line that meets no claimed ring."""
@@ -168,16 +208,29 @@ class PatternWork:
         result: Floats = np.where(met, 0.0, self.covered)
         return result
 
+    def start_amplitudes(self) -> None:
+        """Begin with amplitudes that the rings of each phase's strong lines allow."""
+        strong = (self.intensity > _STRONG) & (self.ring >= 0)
+        ring = self.pattern.ln_intensity[np.maximum(self.ring, 0)]
+        shown = np.log(np.maximum(self.intensity, 1e-12))
+        least = np.where(strong, ring - shown, np.inf).min(axis=2) + _STRONG_SCATTER
+        self.ln_amplitude = np.clip(
+            np.where(np.isfinite(least), least, 0.0), self.pattern.ln_limit - 1.0, 0.5
+        )
+
     def fit_amplitudes(self, rounds: int) -> None:
-        """Newton steps for ln amplitude (b, k) and trend (b,).
+        """Newton steps for ln amplitude (b, k), trend (b,) and the detection limit's error (b,).
 
         They answer to ring intensities, rings seen and lines not seen.
         """
-        scatter, limit = self.pattern.scatter, self.pattern.ln_limit
+        scatter = self.pattern.scatter
         keep = (1.0 - scatter.lost) * self._missing()
         used = self.claimed & (self.sum.sum(axis=1) > 0)
-        stiffness = np.diag([_AMPLITUDE_PRIOR_SD**-2 + 1e-3] * self.k + [TREND_SD**-2])
+        width = self.pattern.limit_sd
+        stiffness = np.diag([_AMPLITUDE_PRIOR_SD**-2 + 1e-3] * self.k + [TREND_SD**-2, width**-2])
         lever = np.broadcast_to(-self.curve, (self.b, 1, self.m))
+        lower = np.full((self.b, 1, self.m), -1.0)
+        trend, limit = self.k, self.k + 1
         for _ in range(rounds):
             part = np.exp(self.ln_amplitude)[:, :, None] * self.sum
             total = np.maximum(part.sum(axis=1), 1e-12)
@@ -190,34 +243,51 @@ class PatternWork:
             rare = scatter.odd_share * np.exp(-0.5 * error**2 / odd) / np.sqrt(odd) + 1e-30
             trust = likely / (likely + rare)
             weight = np.where(used & self.known, trust / narrow + (1.0 - trust) / odd, 0.0)
-            seen = _logistic(DETECTION_SLOPE * (ln_total - limit))
-            pull = weight * error + np.where(used, DETECTION_SLOPE * (1.0 - seen), 0.0)
-            stiff = weight + np.where(used, DETECTION_SLOPE**2 * seen * (1.0 - seen), 0.0)
+            seen = _logistic(DETECTION_SLOPE * (ln_total - self._ln_limit()))
+            shown = np.where(used, DETECTION_SLOPE * (1.0 - seen), 0.0)
+            firm = np.where(used, DETECTION_SLOPE**2 * seen * (1.0 - seen), 0.0)
 
             would = _logistic(DETECTION_SLOPE * self._ln_shown())
             slope = keep * DETECTION_SLOPE * would * (1.0 - would) / (1.0 - keep * would)
             bend = DETECTION_SLOPE * slope * (1.0 - would)
             effect = np.concatenate([share, lever], axis=1)
-            gradient = np.einsum("bkm,bm->bk", effect, pull)
+            effect_seen = np.concatenate([effect, lower], axis=1)
+            gradient = np.einsum("bkm,bm->bk", effect_seen, shown)
+            gradient[:, :limit] += np.einsum("bkm,bm->bk", effect, weight * error)
             gradient[:, : self.k] -= slope.sum(axis=2) + self.ln_amplitude / _AMPLITUDE_PRIOR_SD**2
-            gradient[:, self.k] += (slope * self.line_curve).sum(axis=(1, 2))
-            gradient[:, self.k] -= self.trend / TREND_SD**2
-            hessian = np.einsum("bkm,bm,blm->bkl", effect, stiff, effect) + stiffness
+            gradient[:, trend] += (slope * self.line_curve).sum(axis=(1, 2))
+            gradient[:, trend] -= self.trend / TREND_SD**2
+            gradient[:, limit] += slope.sum(axis=(1, 2)) - self.limit / width**2
+            hessian = np.einsum("bkm,bm,blm->bkl", effect_seen, firm, effect_seen) + stiffness
+            hessian[:, :limit, :limit] += np.einsum("bkm,bm,blm->bkl", effect, weight, effect)
             diagonal = np.arange(self.k)
-            hessian[:, diagonal, diagonal] += bend.sum(axis=2)
-            cross = (bend * self.line_curve).sum(axis=2)
-            hessian[:, : self.k, self.k] -= cross
-            hessian[:, self.k, : self.k] -= cross
-            hessian[:, self.k, self.k] += (bend * self.line_curve**2).sum(axis=(1, 2))
+            own, curved = bend.sum(axis=2), (bend * self.line_curve).sum(axis=2)
+            hessian[:, diagonal, diagonal] += own
+            for row, column, value in (
+                (slice(0, self.k), trend, -curved),
+                (slice(0, self.k), limit, -own),
+                (trend, limit, curved.sum(axis=1)),
+            ):
+                hessian[:, row, column] += value
+                hessian[:, column, row] += value
+            hessian[:, trend, trend] += (bend * self.line_curve**2).sum(axis=(1, 2))
+            hessian[:, limit, limit] += own.sum(axis=1)
             step = np.linalg.solve(hessian, gradient[:, :, None])[:, :, 0]
             step = np.clip(step, -1.0, 1.0)
-            self.ln_amplitude = np.clip(self.ln_amplitude + step[:, :-1], limit - 2.0, 4.0)
-            self.trend = self.trend + step[:, -1]
+            base = self.pattern.ln_limit
+            self.ln_amplitude = np.clip(self.ln_amplitude + step[:, : self.k], base - 2.0, 4.0)
+            self.trend = self.trend + step[:, trend]
+            self.limit = self.limit + step[:, limit]
         self.share, self.ln_total, self.hessian = share, ln_total, hessian
+
+    def _ln_limit(self) -> Floats:
+        """(b, 1) ln of the detection limit."""
+        result: Floats = self.pattern.ln_limit + self.limit[:, None]
+        return result
 
     def _ln_shown(self) -> Floats:
         """(b, k, n) ln of each line's expected intensity over the detection limit."""
-        shown = self.ln_amplitude[:, :, None] + self.with_ln_visible - self.pattern.ln_limit
+        shown = self.ln_amplitude[:, :, None] + self.with_ln_visible - self._ln_limit()[:, :, None]
         result: Floats = shown - self.trend[:, None, None] * self.line_curve
         return result
 
@@ -234,7 +304,7 @@ class PatternWork:
         ordinary = log(1.0 - scatter.odd_share) - 0.5 * (error**2 / narrow + np.log(narrow))
         strange = log(scatter.odd_share) - 0.5 * (error**2 / odd + np.log(odd))
         intensity = np.where(self.known, np.logaddexp(ordinary, strange) - HALF_LOG_2PI, 0.0)
-        seen = _logistic(DETECTION_SLOPE * (self.ln_total - self.pattern.ln_limit))
+        seen = _logistic(DETECTION_SLOPE * (self.ln_total - self._ln_limit()))
         result: Floats = intensity + np.log(np.maximum(seen, 1e-12))
         return result
 
@@ -254,16 +324,12 @@ class PatternWork:
         return result
 
     def _ordinary_variance(self) -> Floats:
-        """(b, m) reading error, jitter of loose phases, and the centre of a ring of several lines.
+        """(b, m) reading error, jitter of loose phases, and the crowd of lines about a ring.
 
-        The centre of lines that merge moves with their intensities: by the scatter of intensity
-        times the width of the group.
+        Where lines merge wholly or in part, the ring is read somewhere among them.
         """
         jitter = np.einsum("bkm,bk->bm", self.share, self.jitter2)
-        centre = np.einsum("bkm,bkm->bm", self.share, self.centre)
-        width2 = np.einsum("bkm,bkm->bm", self.share, self.square) - centre**2
-        merged = self.pattern.scatter.intensity**2 * np.maximum(width2, 0.0)
-        result: Floats = self.pattern.sigma**2 + jitter + merged
+        result: Floats = self.pattern.sigma**2 + jitter + CROWDING**2 * self.crowding2
         return result
 
     def placed(self, shift: Shift) -> Floats:
@@ -298,10 +364,12 @@ class PatternWork:
         return result
 
     def occam_term(self) -> Floats:
-        """(b,) ln of posterior over prior volume of amplitudes and trend (Laplace)."""
+        """(b,) ln of posterior over prior volume of amplitudes, trend and limit (Laplace)."""
         _, log_det = np.linalg.slogdet(self.hessian)
-        volume = self.k * (HALF_LOG_2PI - log(AMPLITUDE_WIDTH)) - log(TREND_SD) - 0.5 * log_det
-        result: Floats = np.minimum(volume, 0.0) - 0.5 * (self.trend / TREND_SD) ** 2
+        width = self.pattern.limit_sd
+        volume = self.k * (HALF_LOG_2PI - log(AMPLITUDE_WIDTH)) - log(TREND_SD * width)
+        stray = (self.trend / TREND_SD) ** 2 + (self.limit / width) ** 2
+        result: Floats = np.minimum(volume - 0.5 * log_det, 0.0) - 0.5 * stray
         return result
 
     def own_rings(self) -> NDArray[np.int64]:
@@ -318,7 +386,7 @@ class PatternWork:
     def result(self, target: Floats, residual: Floats) -> PatternFit:
         """What the last round came to; `target`, `residual` (b, m) in ln d."""
         variance = np.einsum("bkk->bk", np.linalg.inv(self.hessian))[:, : self.k]
-        shown = np.exp(self._ln_shown() + self.pattern.ln_limit)
+        shown = np.exp(self._ln_shown() + self._ln_limit()[:, :, None])
         return PatternFit(
             line_ring=self.ring,
             share=self.share,

@@ -29,6 +29,8 @@ from phaseid.matching.settings import (
 
 _RINGS_OF_A_FURTHER_PHASE = 2
 """One ring alone names no phase of a mixture: common practice, no source."""
+_ROUNDS = ((4, 2.0), (2, 1.3), (1, 1.0))
+"""(Newton steps, width of the windows for axial strains) of each round of refinement."""
 _EXCUSED_LINES = 8.0
 """Rings beyond a phase's stored lines are taken as if it had this many lines somewhere there."""
 
@@ -88,10 +90,12 @@ def evaluate(
     shifts = [
         Shift(offset[:, :, i], np.zeros((work.b, work.m)), still) for i, work in enumerate(works)
     ]
-    for rounds, wide in ((4, 2.0), (2, 1.3), (1, 1.0)):
+    for rounds, wide in _ROUNDS:
         targets = []
         for work, shift in zip(works, shifts, strict=True):
             work.associate(shift, wide)
+            if wide == _ROUNDS[0][1]:
+                work.start_amplitudes()
             work.fit_amplitudes(rounds)
             targets.append(work.unshifted(shift))
         mean, covariance, _ = positions.solve(targets, SIGMA_INFLATION[0][0])

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from phaseid.library.linetable import LineTable
 from phaseid.matching.patterns import Floats, Pattern
+from phaseid.matching.settings import TREND_SD
 
 LINES_LEAST, LINES_PER_RING, LINES_MOST = 128, 5, 1000
 """Lines kept per phase and pattern, the strongest of those within reach of the rings: so many for
@@ -77,7 +78,9 @@ def gather(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Lin
     reference = np.where(strongest > 0, strongest, np.inf)
     relative = intensity / reference[owner]
 
-    keep = relative > BELOW_LIMIT * np.exp(pattern.ln_limit)
+    # weak lines of small spacing may be stronger than the file's displacement parameters say
+    raised = relative * np.exp(TREND_SD * 0.5 * np.exp(-2.0 * x))
+    keep = raised > BELOW_LIMIT * np.exp(pattern.ln_limit)
     rows, owner, x, relative = rows[keep], owner[keep], x[keep], np.minimum(relative[keep], 50.0)
     visible = _visible(owner, x, relative, pattern)
     order = np.lexsort((-relative, owner))

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from phaseid.matching.lineset import LineSet
 from phaseid.matching.patterns import Floats, Pattern
-from phaseid.matching.settings import LISTED_JITTER, STRAIN
+from phaseid.matching.settings import LISTED_JITTER, ROUGH_INTENSITY, ROUGH_JITTER, STRAIN
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -87,6 +87,13 @@ class Looseness:
     def listed(cls, shape: tuple[int, int]) -> Looseness:
         """Every phase as it is listed."""
         return cls(np.full(shape, STRAIN), np.full(shape, LISTED_JITTER), np.zeros(shape))
+
+    @classmethod
+    def rough(cls, shape: tuple[int, int]) -> Looseness:
+        """Every phase listed, but not known as well as listed structures usually are."""
+        return cls(
+            np.full(shape, STRAIN), np.full(shape, ROUGH_JITTER), np.full(shape, ROUGH_INTENSITY)
+        )
 
     def rows(self, part: NDArray[np.int64]) -> Looseness:
         """The looseness of some of the hypotheses."""

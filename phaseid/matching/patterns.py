@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from phaseid.matching.settings import (
     DISPLACEMENT_DEG,
+    LIMIT_SD,
     SCATTER,
     ZERO_SHIFT_DEG,
     Scatter,
@@ -36,7 +37,9 @@ class Pattern:
     itself (a grade's width), inf where absent. `members` lists, for each x, the ring indices of the
     list that fall together there. `nuisance` (m, q): effect on x of each systematic error, times
     its prior one-sigma (column 0 is the common scale). `ln_limit` is ln of the detection limit on
-    the same scale as ln_intensity. `resolution` (m,) is the merging distance in x at each ring.
+    the same scale as ln_intensity, `limit_sd` its one-sigma. `merging` (m,) is the distance in x at
+    which lines merge by the probe's usual resolution, `resolution` (m,) the same where the rings
+    lie closer than that.
     """
 
     rings: RingList
@@ -49,6 +52,8 @@ class Pattern:
     members: tuple[tuple[int, ...], ...]
     nuisance: Floats
     ln_limit: float
+    limit_sd: float
+    merging: Floats
     resolution: Floats
     fineness: float
 
@@ -100,18 +105,21 @@ def _angle_columns(x: Floats, probe: Probe) -> Floats:
     return np.stack(columns, axis=1)
 
 
-def _resolution(x: Floats, probe: Probe, scatter: Scatter) -> tuple[Floats, float]:
-    """Merging distance in ln d at each ring, never above what the pattern itself resolves."""
+def _resolution(x: Floats, probe: Probe, scatter: Scatter) -> tuple[Floats, Floats, float]:
+    """Merging distance in ln d at each ring: the usual, and never above what the rings resolve.
+
+    With it the least ratio of what the pattern resolves to the usual.
+    """
     merged = np.full(len(x), scatter.resolution)
     if probe.geometry not in ("ring", "time-of-flight"):
         sine = np.clip(probe.wavelength_A / (2.0 * np.exp(x)), 1e-6, 0.9999)
         cotangent = np.sqrt(1.0 - sine**2) / sine
         merged = np.maximum(0.5 * cotangent * np.radians(scatter.resolution_two_theta_deg), 2e-4)
     if len(x) == 1:
-        return merged, 1.0
+        return merged, merged, 1.0
     gaps = np.diff(x)
     nearest = 0.9 * np.minimum(np.append(gaps, np.inf), np.append(np.inf, gaps))
-    return np.minimum(merged, nearest), float(np.clip((nearest / merged).min(), 0.25, 1.0))
+    return merged, np.minimum(merged, nearest), float(np.clip((nearest / merged).min(), 0.25, 1.0))
 
 
 def _group_duplicates(x: Floats, sigma: Floats) -> list[list[int]]:
@@ -157,7 +165,7 @@ def prepare(rings: RingList) -> Pattern:
             intensity_sd[k] = np.log(high / low) / np.sqrt(12.0) if high > low > 0 else 0.0
     scatter = SCATTER[rings.probe.kind]
     scale = np.full((len(x), 1), rings.probe.scale_sigma)
-    resolution, fineness = _resolution(x, rings.probe, scatter)
+    merging, resolution, fineness = _resolution(x, rings.probe, scatter)
     return Pattern(
         rings=rings,
         probe=rings.probe,
@@ -169,6 +177,8 @@ def prepare(rings: RingList) -> Pattern:
         members=tuple(tuple(group) for group in groups),
         nuisance=np.hstack([scale, _angle_columns(x, rings.probe)]),
         ln_limit=_detection_limit(ln_intensity, intensity_sd),
+        limit_sd=LIMIT_SD,
+        merging=merging,
         resolution=resolution,
         fineness=fineness,
     )

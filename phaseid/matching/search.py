@@ -38,6 +38,7 @@ _BASES = {1: 16, 2: 10, 3: 6}
 _ADDITIONS = {1: 30, 2: 24, 3: 16}
 _EXCHANGED = 4
 _EXCHANGE_WIDTH = 30
+_POLISHED = 40
 _TEXTURED = 30
 _AXES_EACH = 3
 _BATCH_CELLS = 150_000
@@ -115,6 +116,7 @@ class Search:
         for size in range(1, self.max_phases):
             self._extend(size)
         self._exchange()
+        self._polish()
         return self.ranked()
 
     def plain(self, members: Members) -> Members:
@@ -192,16 +194,30 @@ class Search:
             once = len(set(self.plain(key))) == len(key)
             if key not in self.judged and key not in fresh and once:
                 fresh[key] = offset[order]
-        if not fresh:
+        self.judged.update({judged.members: judged for judged in self._judgements(fresh)})
+
+    def _polish(self) -> None:
+        """Judge the best sets again from where they came to lie; the better judgement counts."""
+        by_size: dict[int, dict[Members, Floats]] = {}
+        for judged in self.ranked()[:_POLISHED]:
+            by_size.setdefault(len(judged.members), {})[judged.members] = judged.offset
+        for sets in by_size.values():
+            for again in self._judgements(sets):
+                if again.log_posterior > self.judged[again.members].log_posterior:
+                    self.judged[again.members] = again
+
+    def _judgements(self, sets: dict[Members, Floats]) -> Iterable[Judged]:
+        """Judge sets, all of one size, each from its offset (k, K)."""
+        if not sets:
             return
-        keys = list(fresh)
-        offsets = np.stack([fresh[key] for key in keys])
-        sets = np.array(keys, dtype=np.int64)
-        for part, fit in evaluate_in_batches(self.model, sets, offsets):
+        keys = list(sets)
+        offsets = np.stack([sets[key] for key in keys])
+        members = np.array(keys, dtype=np.int64)
+        for part, fit in evaluate_in_batches(self.model, members, offsets):
             for row, index in enumerate(part):
                 value = float(fit.log_likelihood[row])
                 prior = self.prior_of(keys[index]) if fit.shows[row] else -np.inf
-                self.judged[keys[index]] = Judged(
+                yield Judged(
                     members=keys[index],
                     log_likelihood=value,
                     log_posterior=value + prior,
@@ -324,6 +340,24 @@ class Search:
                                 strain_sigma=float(fit.strain_sd[row, k]),
                             )
                         )
+        return found
+
+    def rough(self, sets: Sequence[Judged]) -> list[tuple[Members, float]]:
+        """ln likelihood of each of `sets`, were its structures known less well than usual."""
+        found = []
+        by_size: dict[int, list[Judged]] = {}
+        for judged in sets:
+            by_size.setdefault(len(judged.members), []).append(judged)
+        for _, items in sorted(by_size.items()):
+            members = np.array([judged.members for judged in items], dtype=np.int64)
+            offsets = np.stack([judged.offset for judged in items])
+            loose = Looseness.rough((members.shape[0], members.shape[1]))
+            for part, fit in evaluate_in_batches(self.model, members, offsets, loose):
+                found += [
+                    (items[index].members, float(fit.log_likelihood[row]))
+                    for row, index in enumerate(part)
+                    if fit.shows[row]
+                ]
         return found
 
     def _relaxed(

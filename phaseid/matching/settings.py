@@ -44,6 +44,12 @@ STRAIN = 0.001
 LISTED_JITTER = 2e-4
 """Line-by-line scatter in ln d of a listed phase: its axial ratios are known no better."""
 
+ROUGH_PRIOR = 0.15
+"""How often a listed structure is known, or its rings are read, no better than `ROUGH_JITTER` (in
+ln d, line by line) and `ROUGH_INTENSITY` (extra scatter of ln intensity) say."""
+ROUGH_JITTER = 8e-4
+ROUGH_INTENSITY = 0.4
+
 RELATIVE_STRAIN = 0.02
 """The same for an unlisted relative: a phase of the listed structure type with another cell."""
 RELATIVE_AXIAL = 0.01
@@ -66,15 +72,22 @@ ODD_POSITION_FACTOR = 3.5
 ODD_POSITION_SHARE = 0.04
 """A ring read this many times worse than its sigma, and how often that happens."""
 
+CROWDING = 0.3
+"""Error of a ring's position in units of the root mean square width of the lines about it."""
+
 SCATTER_INFLATION = ((1.0, 0.75), (1.9, 0.25))
 """(factor, prior): intensities of a specimen may stray more than its probe's usual (texture)."""
 
-TREND_SD = 0.8
+TREND_SD = 1.5
 """One-sigma (Å²) of a trend of ln intensity with 1/2d²: displacement unlike the file's, heights for
-areas, absorption. Published sheets need up to about 1."""
+areas, absorption. Published sheets need up to about 1, files without displacement parameters more.
+"""
 
 DETECTION_SLOPE = 2.6
 """Slope of the logistic chance of seeing a line against ln(intensity / limit)."""
+
+LIMIT_SD = 0.35
+"""One-sigma of ln of the detection limit, as the weakest rings tell it."""
 
 FOREIGN_RINGS = 0.6
 """Expected number of rings from nowhere in a pattern (Poisson)."""

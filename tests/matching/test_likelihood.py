@@ -181,7 +181,10 @@ def test_a_batch_is_judged_as_its_members_are_one_by_one(starter_library: Librar
         assert batch.log_likelihood[row] == pytest.approx(alone.log_likelihood[0], abs=1e-8)
         assert batch.offset[row] == pytest.approx(alone.offset[0], abs=1e-10)
         assert np.array_equal(batch.patterns[0].claimed[row], alone.patterns[0].claimed[0])
-        assert np.array_equal(batch.patterns[0].line_ring[row], alone.patterns[0].line_ring[0])
+        own = alone.patterns[0].line_ring[0]
+        ring = batch.patterns[0].line_ring[row]
+        assert np.array_equal(ring[:, : own.shape[1]], own)
+        assert np.all(ring[:, own.shape[1] :] == -1)  # a batch is as wide as its richest set
 
 
 def test_the_order_of_phases_in_a_set_does_not_matter() -> None:
@@ -205,14 +208,17 @@ def losses(missing: float) -> float:
 
 
 def test_a_missing_line_costs_the_chance_of_not_seeing_it() -> None:
-    """-ln(1 - chance), the chance rising around the detection limit and never quite reaching 1."""
+    """-ln(1 - chance), the chance rising around the detection limit and never quite reaching 1.
+
+    Not to the last digit: the limit itself is known only so well.
+    """
     lost = settings.SCATTER["x-ray"].lost
     limit = prepare(toy_rings(D_A[:3], SIGMA, probe="x-ray 1 A", intensities=[100, 80, 40]))
     cost = []
     for intensity in (4.0, 15.0, 40.0, 80.0):
         chance = expit(settings.DETECTION_SLOPE * (log(intensity / 100) - limit.ln_limit))
         cost.append(losses(intensity))
-        assert cost[-1] == pytest.approx(-log(1 - (1 - lost) * chance), abs=0.15)
+        assert cost[-1] == pytest.approx(-log(1 - (1 - lost) * chance), abs=0.2)
     assert np.all(np.diff(cost) > 0.05)
     assert losses(300.0) < -log(lost) + 0.1
 
@@ -276,14 +282,17 @@ def ln_intensity_density(model: Model, rows: NDArray[np.int64], sought: Floats) 
     """What the fit maximises, written out with loops over rings and lines.
 
     `sought`: ln amplitude of each phase, then the trend B of a factor exp(-B (sin θ/λ)²·2), that is
-    ln I falling with 1/2d² from its mean over the rings. Rings: ln I strays from the summed lines
+    ln I falling with 1/2d² from its mean over the rings, then the error of ln of the detection
+    limit. Rings: ln I strays from the summed lines
     by a normal law with a heavy tail, and each was seen with a chance that rises with its
     intensity; lines without a ring were not.
     """
     pattern, lines = model.patterns[0], model.lines[0]
     scatter = pattern.scatter
-    ln_amplitude, trend = sought[:-1], float(sought[-1])
+    ln_amplitude, trend, error = sought[:-2], float(sought[-2]), float(sought[-1])
+    limit = pattern.ln_limit + error
     total = -0.5 * float((ln_amplitude**2).sum()) / 3.0**2 - 0.5 * (trend / settings.TREND_SD) ** 2
+    total -= 0.5 * (error / settings.LIMIT_SD) ** 2
     mean = float(np.mean(1 / (2 * np.exp(pattern.x) ** 2)))
     amount = np.zeros(len(pattern))
     for k, phase in enumerate(rows):
@@ -295,14 +304,14 @@ def ln_intensity_density(model: Model, rows: NDArray[np.int64], sought: Floats) 
             if distance.min() < 0.005:
                 amount[distance.argmin()] += shown
             else:
-                seen = expit(settings.DETECTION_SLOPE * (log(shown) - pattern.ln_limit))
+                seen = expit(settings.DETECTION_SLOPE * (log(shown) - limit))
                 total += log(1 - (1 - scatter.lost) * seen)
     for i in np.flatnonzero(amount):
         error = pattern.ln_intensity[i] - log(amount[i])
         ordinary = (1 - scatter.odd_share) * np.exp(-0.5 * (error / scatter.intensity) ** 2)
         strange = scatter.odd_share * np.exp(-0.5 * (error / scatter.odd_intensity) ** 2)
         total += log(ordinary / scatter.intensity + strange / scatter.odd_intensity)
-        total += log(expit(settings.DETECTION_SLOPE * (log(amount[i]) - pattern.ln_limit)))
+        total += log(expit(settings.DETECTION_SLOPE * (log(amount[i]) - limit)))
     return total
 
 
@@ -328,9 +337,9 @@ def test_amplitudes_are_those_a_general_minimiser_finds(
     rows = np.arange(2)
     best = minimize(
         lambda a: -ln_intensity_density(model, rows, a),
-        np.zeros(3),
+        np.zeros(4),
         method="Nelder-Mead",
-        options={"xatol": 1e-6, "fatol": 1e-9},
+        options={"xatol": 1e-6, "fatol": 1e-9, "maxiter": 4000},
     )
     assert part.claimed.all()
     away = np.abs(part.ln_amplitude[0] - best.x[:2]) / part.amplitude_sd[0]
