@@ -172,6 +172,29 @@ def test_a_stated_constant_makes_the_factor() -> None:
     assert result.camera_constant.value == pytest.approx(25.0, rel=2e-4)
 
 
+def test_the_stated_uncertainty_holds_the_error_as_often_as_it_should() -> None:
+    """Known constants, readings and the cell off by their sigmas, one ring missing: 68 %, 95 %.
+
+    Sigmas are never shrunk (Birge), so a little more; binomial limits of 80 draws at 99 %.
+    """
+    generator = np.random.default_rng(3)
+    gold = find_standard("Au", 25.0)
+    assert gold is not None
+    off = []
+    for _ in range(80):
+        constant = 25.0 * math.exp(0.1 * generator.normal())
+        edge = gold.cell[0] * (1 + gold.relative_sigma * generator.normal())
+        radii = [float(r) + 0.02 * generator.normal() for r in _radii(edge, constant)]
+        del radii[int(generator.integers(len(radii)))]
+        result = calibrate(_table([f"{r:.4f}" for r in radii]), gold, probe=ELECTRONS)
+        found = result.camera_constant
+        assert found is not None
+        off.append(abs(found.value - constant) / found.sigma)
+    assert 0.54 < np.mean(np.array(off) < 1) < 0.86
+    assert np.mean(np.array(off) < 2) > 0.88
+    assert max(off) < 4.5
+
+
 @pytest.mark.parametrize("error", [0.97, 0.995, 1.004, 1.05])
 def test_an_injected_error_of_spacings_comes_back(error: float) -> None:
     d = [f"{error * 4.0782 / math.sqrt(sum(i * i for i in h)):.4f}" for h in FCC]
@@ -261,6 +284,18 @@ def test_x_rays_on_a_flat_plate_follow_the_tangent() -> None:
     result = calibrate(_table(radii), _standard("CeO2"), probe="x-ray 25 keV")
     assert result.camera_length_mm == pytest.approx(length, rel=5e-4)
     assert len(result.assignments) == 8
+
+
+def test_an_internal_standard_scales_the_specimen_on_its_plate() -> None:
+    """Gold sputtered on corundum, all read with a constant 1.5 % off: the standard corrects it."""
+    corundum = [3.4797, 2.5508, 2.0853, 1.6015, 1.3738]  # Å; NBS Circular 539 vol. 9, from memory
+    plate = [float(r) for r in _radii(4.0782, 25.375, FCC[:6])] + [25.375 / d for d in corundum]
+    text = "# probe: electron 200 kV\n# camera constant: 25.0 +- 0.5 A mm\nradius_mm,sigma\n"
+    table = parse_table(text + "".join(f"{r:.3f},0.02\n" for r in plate), "plate.csv")
+    result = calibrate(table, _standard("Au"))
+    assert {a.ring for a in result.assignments} >= set(range(6))
+    rings = record(result, "plate").apply(table)
+    assert rings.d_A[6:] == pytest.approx(corundum, rel=1.5e-3)
 
 
 @pytest.mark.parametrize("seed", range(3))
