@@ -4,17 +4,12 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from ring_profiles import A_LAB6_A, CU_KA1_A, CU_KA2_A, angle
 
 from phaseid.errors import InputError
 from phaseid.rings.measuring import measure_profile, read_curve
 
-A_LAB6_A = 4.156826  # NIST SRM 660c certificate, 22.5 °C
-CU_KA1_A, CU_KA2_A = 1.5405929, 1.5444274  # International Tables C, 4.2.2.1
 SUMS = (1, 2, 3, 4, 5, 6, 8, 9)  # h² + k² + l² of a primitive cubic cell
-
-
-def angle(total: int, wavelength_A: float) -> float:
-    return float(2 * np.degrees(np.arcsin(wavelength_A * np.sqrt(total) / 2 / A_LAB6_A)))
 
 
 def profile(seed: int, *, doublet: bool, pair: float = 0.0) -> tuple[np.ndarray, np.ndarray]:

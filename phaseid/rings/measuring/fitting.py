@@ -194,9 +194,9 @@ def fit_peaks(
             jac=slopes,
             bounds=(low, high),
             x_scale="jac",
-            max_nfev=20,
-            xtol=1e-6,
-            ftol=1e-7,
+            max_nfev=12,
+            xtol=1e-5,
+            ftol=1e-5,
         )
         values = np.asarray(answer.x)
         coefficients, found = linear(values)

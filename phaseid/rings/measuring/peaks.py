@@ -21,8 +21,8 @@ from phaseid.rings.measuring.halos import find_halos
 DETECTION = 5.0  # sigmas above the background below which no peak is claimed
 WIDTHS = 2.0 ** np.arange(0.0, 5.0, 0.5)  # sigmas looked for, in steps of the abscissa
 MAX_PEAKS = 150
-PASSES = 5
-REFITS = 5
+PASSES = 4
+REFITS = 3
 SEPARABLE = 0.4  # widths between two peaks, below which they are one of another shape
 SHAPE_ERROR = 0.02  # of a peak's height: how far its true shape may be from the one fitted
 

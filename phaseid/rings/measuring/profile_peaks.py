@@ -16,6 +16,7 @@ from phaseid.rings.measuring.peaks import Found, find_peaks
 from phaseid.rings.measuring.widths import overlap_sigma
 
 KA2_HEIGHT = 0.5  # of Kα1: the statistical weight of the levels 2p1/2 and 2p3/2
+MIN_AREA = 2.5  # sigmas of a peak's area, beside what it overlaps with
 MAX_POINTS = 60_000
 
 
@@ -68,8 +69,10 @@ def measure_curve(curve: Curve, *, probe: str | None = None) -> Measurement:
             intensity_sigma=float(fit.area_sigma[k]),
         )
         for k in range(len(fit.position))
-        if fit.position[k] > 0
+        if fit.position[k] > 0 and fit.area[k] > MIN_AREA * fit.area_sigma[k]
     )
+    if not rings:
+        raise no_rings(curve.source, "no peak stands out of the profile's noise")
     return Measurement(
         source=curve.source,
         column=curve.column,
