@@ -21,6 +21,7 @@ from phaseid.reports.plain import (
     table,
     wrap,
 )
+from phaseid.rings.writing import spreadsheet_text
 
 SCHEMA = "phaseid.series/1"
 Failed = tuple[str, str]
@@ -106,8 +107,13 @@ def series_csv(series: Series) -> str:
     if rows:
         writer = csv.DictWriter(stream, list(rows[0]), lineterminator="\n")
         writer.writeheader()
-        writer.writerows(rows)
+        for row in rows:
+            writer.writerow({key: _cell(value) for key, value in row.items()})
     return stream.getvalue()
+
+
+def _cell(value: object) -> object:
+    return spreadsheet_text(value) if isinstance(value, str) else value
 
 
 def series_text(series: Series, width: int = 80) -> str:

@@ -28,6 +28,8 @@ OPTIONAL_COLUMNS = ("sigma", "intensity", "spottiness", "arcs", "note")
 MAX_BYTES = 2_000_000
 MAX_RINGS = 2000
 MAX_LINE = 5000
+FORMULA_SIGNS = ("=", "+", "-", "@", "\t", "\r")
+"""With one of these a cell begins that a spreadsheet takes for a formula."""
 
 _CONTROL = re.compile(rb"[\x00-\x08\x0e-\x19\x1b-\x1f]")  # never in text
 _TOO_MANY = "{} cells, {} in the header (a decimal comma? Write 2.338 or separate columns by ';')"
@@ -171,7 +173,7 @@ def parse_table(text: str, source: str) -> RingTable:
                 intensity=by_name.get("intensity", ""),
                 spottiness=by_name.get("spottiness", ""),
                 arcs=by_name.get("arcs", ""),
-                note=by_name.get("note", ""),
+                note=_note(by_name.get("note", "")),
                 defect=_TOO_MANY.format(len(cells), len(columns)) if extra else "",
             )
         )
@@ -249,6 +251,11 @@ def _split(line: str, delimiter: str | None, count: int) -> list[str]:
     if delimiter is None:
         return line.split(None, count - 1)
     return [cell.strip() for cell in next(csv.reader([line], delimiter=delimiter), [""])]
+
+
+def _note(text: str) -> str:
+    """Return a note without the apostrophe that guards it from spreadsheets."""
+    return text[1:] if text.startswith(tuple(f"'{sign}" for sign in FORMULA_SIGNS)) else text
 
 
 def _canonical(name: str) -> str:

@@ -12,7 +12,7 @@ import numpy as np
 from phaseid.errors import InputError
 from phaseid.probes.numbers import plain_number
 from phaseid.rings.ringlist import RingList
-from phaseid.rings.table import KNOWN_KEYS
+from phaseid.rings.table import FORMULA_SIGNS, KNOWN_KEYS
 
 
 def rings_to_text(rings: RingList) -> str:
@@ -47,9 +47,14 @@ def rings_to_text(rings: RingList) -> str:
             row.append(rings.grades[i] or ("" if np.isnan(level) else plain_number(level)))
         row += ["" if np.isnan(v[i]) else plain_number(v[i]) for v in given.values()]
         if has_note:
-            row.append(_one_line(rings.notes[i]))
+            row.append(spreadsheet_text(_one_line(rings.notes[i])))
         writer.writerow(row)
     return "\n".join(lines) + "\n" + stream.getvalue()
+
+
+def spreadsheet_text(text: str) -> str:
+    """Return text with an apostrophe in front where a spreadsheet would take it for a formula."""
+    return f"'{text}" if text.startswith(FORMULA_SIGNS) else text
 
 
 def write_rings(rings: RingList, path: str | Path) -> None:
