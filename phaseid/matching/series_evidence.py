@@ -17,9 +17,10 @@ from phaseid.matching.dispersion import at_own_energy, needs_own_energy
 from phaseid.matching.identification import Hypothesis, Identification
 from phaseid.matching.likelihood import evaluate
 from phaseid.matching.lineset import gather
-from phaseid.matching.model import Model
+from phaseid.matching.model import Looseness, Model
 from phaseid.matching.patterns import prepare
 from phaseid.matching.series_chain import Floats, Set, States, log_prior
+from phaseid.matching.settings import ROUGH_PRIOR
 from phaseid.rings.ringlist import RingList
 
 Indices = NDArray[np.int64]
@@ -75,9 +76,9 @@ def log_likelihoods(
 ) -> Floats:
     """ln likelihood of each set on one pattern, its fitted scale (ln d) and one-sigma, (3, n).
 
-    The likelihood is that by which the search for the phases of one pattern judges sets. `allowed`
-    are the phases whose lines make the crowd. `starts` are common shifts in ln d from which the fit
-    sets out; the best counts.
+    The likelihood is that by which the search for the phases of one pattern judges sets, structures
+    that are known but roughly among them. `allowed` are the phases whose lines make the crowd.
+    `starts` are common shifts in ln d from which the fit sets out; the best counts.
     """
     table = library.line_table(rings.probe.kind)
     number = {phase_id: i for i, phase_id in enumerate(table.phase_ids)}
@@ -96,7 +97,15 @@ def log_likelihoods(
         members = np.array([sorted(place[p] for p in sets[i]) for i in those], dtype=np.int64)
         for start in starts:
             fit = evaluate(model, members, np.full((*members.shape, 1), start))
-            value = np.where(fit.shows, fit.log_likelihood, NEVER)
+            rough = evaluate(model, members, fit.offset, Looseness.rough(members.shape))
+            value = np.where(
+                fit.shows,
+                np.logaddexp(
+                    log(1.0 - ROUGH_PRIOR) + fit.log_likelihood,
+                    np.where(rough.shows, log(ROUGH_PRIOR) + rough.log_likelihood, -np.inf),
+                ),
+                NEVER,
+            )
             found = np.stack([value, fit.scale[:, 0], fit.scale_sd[:, 0]])
             result[:, those] = np.where(value > result[0, those], found, result[:, those])
     return result
