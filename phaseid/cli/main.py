@@ -6,6 +6,7 @@ import errno
 import os
 import re
 import sys
+from copy import copy
 from itertools import pairwise
 from typing import Annotated, Any
 
@@ -132,7 +133,7 @@ def run(arguments: list[str] | None = None) -> None:
             stream.reconfigure(errors="replace")
     try:
         try:
-            app(args=words, prog_name="phaseid")
+            _app_for(words)(args=words, prog_name="phaseid")
         finally:
             _flush()
     except KeyboardInterrupt:
@@ -150,6 +151,21 @@ def run(arguments: list[str] | None = None) -> None:
             "Run the same command with --debug to see where."
         )
         sys.exit(1)
+
+
+def _app_for(words: list[str]) -> typer.Typer:
+    """The app with the command called alone: making all of them ready takes longer than an answer.
+
+    The whole of it where no command is named.
+    """
+    name = next((word for word in words if not word.startswith("-")), None)
+    commands = [command for command in app.registered_commands if command.name == name]
+    groups = [group for group in app.registered_groups if group.name == name]
+    if not commands and not groups:
+        return app
+    one = copy(app)
+    one.registered_commands, one.registered_groups = commands, groups
+    return one
 
 
 def _negative_number(words: list[str]) -> str | None:

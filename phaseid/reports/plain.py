@@ -5,10 +5,10 @@ from __future__ import annotations
 import textwrap
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
-from phaseid.library.marks import marks
-from phaseid.library.phase import Phase
+if TYPE_CHECKING:
+    from phaseid.library.phase import Phase
 
 ELLIPSIS = "…"
 NARROWEST = 6  # a flexible column keeps as many characters
@@ -65,6 +65,8 @@ def phase_text(phase: Phase) -> str:
 
 def marks_text(phase: Phase) -> str:
     """Return what sets an entry apart, to follow its name: ` [computed]`; mostly nothing."""
+    from phaseid.library.marks import marks  # a command that names no phase needs no library
+
     found = marks(finding.code for finding in phase.findings)
     return f" [{', '.join(found)}]" if found else ""
 
