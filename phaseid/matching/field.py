@@ -140,16 +140,21 @@ def _allowed(library: Library, held: LineTable | StrongLines, chemistry: Chemist
             f"the library {library.path} holds no phases",
             remedy="Add structures with `phaseid library add`, or `phaseid library add --starter`.",
         )
-    refused = _words(chemistry.exclude)
-    outside = ~_words(chemistry.only) if chemistry.only is not None else np.zeros(2, np.uint64)
-    without = ~(held.elements_mask & (refused | outside)).any(axis=1)
-    allowed = np.flatnonzero(without & library.standing())
+    allowed = np.flatnonzero(admitted(chemistry, held.elements_mask) & library.standing())
     if len(allowed) == 0:
         raise InputError(
             f"none of the library's {len(held)} phases is allowed by the chemistry given",
             remedy="Allow more elements with --only, or exclude fewer with --not.",
         )
     return allowed
+
+
+def admitted(chemistry: Chemistry, elements: NDArray[np.uint64]) -> NDArray[np.bool_]:
+    """Whether each phase may be part of an answer (p,); `elements` (p, 2) as in `LineTable`."""
+    refused = _words(chemistry.exclude)
+    if chemistry.only is not None:
+        refused |= ~_words(chemistry.only)
+    return np.asarray(~(elements & refused).any(axis=1))
 
 
 def _words(elements: frozenset[str]) -> NDArray[np.uint64]:

@@ -10,8 +10,11 @@ import numpy as np
 from phaseid.errors import InputError
 from phaseid.library import Library
 from phaseid.library.phase import Phase
+from phaseid.library.strongest import CODE_AT_1_A, CODE_STEP
 from phaseid.matching.chemistry import Chemistry
+from phaseid.matching.field import admitted
 from phaseid.matching.records import Record, indices, phase_record
+from phaseid.matching.shortlist import SEARCHED_WHOLE
 from phaseid.probes import Probe
 
 
@@ -50,8 +53,8 @@ def near_lines(
     Only lines of at least `min_intensity` (strongest of the phase = 100) count. Phases that meet
     more of the spacings come first, then those whose lines there are stronger; within a phase the
     order is that of the spacings asked for. Of a phase with several entries the one that stands for
-    it is asked. Raises InputError for a spacing or tolerance that is
-    none.
+    it is asked; of a large library, phases of which one of the 24 strongest lines is that near.
+    Raises InputError for a spacing or tolerance that is none.
     """
     for value in spacings_A:
         if not 0 < value < np.inf:
@@ -62,7 +65,11 @@ def near_lines(
         raise InputError(
             f"a tolerance of {tolerance:g} is out of range", remedy="Give one such as 1% or 0.005"
         )
-    table = library.line_table(probe.kind)
+    chemistry = chemistry or Chemistry()
+    rows = None
+    if len(library) > SEARCHED_WHOLE:
+        rows = _strong_near(spacings_A, library, probe, tolerance, chemistry)
+    table = library.line_table(probe.kind, rows)
     intensity = probe.weights(table.d_A, table.multiplicity, table.f2)
     counts = np.diff(table.offsets)
     owner = np.repeat(np.arange(len(counts)), counts)
@@ -70,7 +77,7 @@ def near_lines(
     np.maximum.at(strongest, owner, intensity)
     relative = 100 * intensity / np.where(strongest > 0, strongest, 1.0)[owner]
 
-    one_of_each = library.standing()[owner]
+    one_of_each = library.standing()[owner] if rows is None else np.ones(len(owner), dtype=bool)
     met: dict[int, list[tuple[int, int]]] = {}  # phase -> (which spacing, which line)
     for order, wanted in enumerate(spacings_A):
         close = (np.abs(table.d_A / wanted - 1) <= tolerance) & (relative >= min_intensity)
@@ -86,9 +93,7 @@ def near_lines(
     answer = []
     for index in sorted(met, key=worth):
         phase = library.phase(table.phase_ids[index])
-        if chemistry is not None and not (
-            chemistry.admits(phase.elements) and chemistry.must <= set(phase.elements)
-        ):
+        if not (chemistry.admits(phase.elements) and chemistry.must <= set(phase.elements)):
             continue
         for order, line in met[index]:
             h, k, l = (int(i) for i in table.hkl[line])  # noqa: E741 (Miller's own letter)
@@ -102,3 +107,25 @@ def near_lines(
                 )
             )
     return answer
+
+
+def _strong_near(
+    spacings_A: Sequence[float],
+    library: Library,
+    probe: Probe,
+    tolerance: float,
+    chemistry: Chemistry,
+) -> list[int]:
+    """Row numbers of the phases allowed with one of their strongest lines near a spacing."""
+    strong = library.strong_lines(probe.kind)
+    allowed = np.flatnonzero(admitted(chemistry, strong.elements_mask) & library.standing())
+    code = strong.code[allowed].astype(np.int32)
+    near = np.zeros(len(allowed), dtype=bool)
+    for wanted in spacings_A:
+        low, high = (
+            np.log(wanted * (1 + side * tolerance)) / CODE_STEP + CODE_AT_1_A + side
+            for side in (-1, 1)
+        )
+        near |= ((code >= low) & (code <= high)).any(axis=1)
+    rows: list[int] = strong.row[allowed[near]].tolist()
+    return rows

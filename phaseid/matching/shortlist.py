@@ -43,7 +43,8 @@ _RELATIVE_BLUR = 0.002
 _RELATIVES = 48
 _EACH = 90
 """Phases taken for each share supposed."""
-_EACH_OF_THE_REST = 30
+_EACH_OF_THE_REST = (120, 60, 30)
+"""The same for what the best set leaves, the second best, and each of the others."""
 _BASES = {1: 8, 2: 4}
 """Sets of one and of two phases whose leftovers are looked at."""
 _WHOLE, _LOOKS = 2, 400_000
@@ -95,8 +96,9 @@ class _Chooser:
             rest = [
                 _glance_at_the_rest(pattern, judged, i) for i, pattern in enumerate(self.patterns)
             ]
-            ranks = ranked(self.score(rest, _PLACES_OF_THE_REST, among), _EACH_OF_THE_REST)
-            own = by_turns(ranks if among is None else among[ranks], _EACH_OF_THE_REST)
+            each = _EACH_OF_THE_REST[min(place, len(_EACH_OF_THE_REST) - 1)]
+            ranks = ranked(self.score(rest, _PLACES_OF_THE_REST, among), each)
+            own = by_turns(ranks if among is None else among[ranks], each)
             self.take(own)
             found.append(own)
         return found
@@ -120,6 +122,8 @@ def shortlist(
     ranks = ranked(score, _NEAR)
     near = np.unique(ranks)
     chooser.take(by_turns(ranks, _EACH))
+    wide = [_first_glance(p, _ALONE[:1], RELATIVE_STRAIN, _RELATIVE_BLUR) for p in patterns]
+    chooser.take(ranked(chooser.score(wide, _RELATIVE_PLACES), _RELATIVES)[:, 0])
     if max_phases > 1:
         first = by_turns(ranks, _JUDGED)[:_JUDGED]
         bases = _leaving_other_rings(judge(first, 1), 1)[: _BASES[1]]
@@ -128,8 +132,6 @@ def shortlist(
             pairs = [np.array([j.members[0] for j in bases]), *(own[:_PAIRED] for own in further)]
             sets = _leaving_other_rings(judge(np.unique(np.concatenate(pairs)), 2), 2)
             chooser.explaining_the_rest(sets[: _BASES[2]], near)
-    wide = [_first_glance(p, _ALONE[:1], RELATIVE_STRAIN, _RELATIVE_BLUR) for p in patterns]
-    chooser.take(ranked(chooser.score(wide, _RELATIVE_PLACES), _RELATIVES)[:, 0])
     chooser.take(by_turns(ranks, PHASES_SEARCHED))
     return np.sort(np.fromiter(chooser.chosen, np.int64)[:PHASES_SEARCHED])
 
