@@ -2,24 +2,30 @@
 
 Rings may be given as the path of a ring list, image or profile, as a `RingList`, or as numbers;
 a phase by its id, formula, name, source number or CIF file; a library as it is open, by its path,
-or not at all: then the default in force. Options are those of the commands, with the same defaults
-from the environment and the configuration file. Results are `Tidy`: they show themselves as a
-table, and `records()` are rows for a data frame.
+or not at all: then the default in force. Options are those of the commands; library, probe and
+calibration have the same defaults from the environment and the configuration file, chemistry is
+only what is given. Results are `Tidy`: they show themselves as a table, and `records()` are rows
+for a data frame.
 """
 
 from __future__ import annotations
 
 import os
-from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from phaseid.errors import InputError
+from phaseid.notebook_input import (
+    chemistry_of,
+    found_phase,
+    opened,
+    ring_lists_of,
+    words_of,
+)
 
 if TYPE_CHECKING:
     from phaseid.crystal.crystal import Crystal
-    from phaseid.library import Library, Phase
+    from phaseid.library import Phase
     from phaseid.matching.calibrate import Calibration
     from phaseid.matching.chemistry import Chemistry
     from phaseid.matching.compare import Comparison
@@ -30,13 +36,10 @@ if TYPE_CHECKING:
     from phaseid.matching.screen import Screening
     from phaseid.matching.series_answer import Series
     from phaseid.matching.series_axis import Along
+    from phaseid.notebook_input import Given, Shelf, Typed
     from phaseid.reports.lines import LineList
-    from phaseid.rings import RingList, RingTable
+    from phaseid.rings import RingTable
     from phaseid.rings.measuring import Measurement
-
-    Shelf = Library | str | os.PathLike[str] | None
-    Typed = str | os.PathLike[str] | Sequence[Any]
-    Given = RingList | str | os.PathLike[str] | Sequence[Any]
 
 
 def identify(
@@ -60,9 +63,9 @@ def identify(
     """
     from phaseid.matching.identify import identify as rank
 
-    lists = _patterns(patterns, reading)
-    known = _chemistry(chemistry, must, only, exclude)
-    with _open(library) as shelf:
+    lists = ring_lists_of(patterns, reading)
+    known = chemistry_of(chemistry, must, only, exclude)
+    with opened(library) as shelf:
         return rank(lists, shelf, chemistry=known, max_phases=max_phases, top=top)
 
 
@@ -88,9 +91,9 @@ def series(
     from phaseid.matching.series import identify_series
 
     several = files_of([Path(patterns)]) if isinstance(patterns, str | os.PathLike) else patterns
-    lists = [rings for one in several for rings in _patterns(one, reading)]
-    known = _chemistry(chemistry, must, only, exclude)
-    with _open(library) as shelf:
+    lists = [rings for one in several for rings in ring_lists_of(one, reading)]
+    known = chemistry_of(chemistry, must, only, exclude)
+    with opened(library) as shelf:
         return identify_series(
             lists,
             shelf,
@@ -129,11 +132,11 @@ def calibrate(
     from phaseid.rings.calibration_record import save_calibration
 
     def table(given: Typed) -> RingTable:
-        return ring_table(_words(given), unit=unit, sigma=None if sigma is None else str(sigma))
+        return ring_table(words_of(given), unit=unit, sigma=None if sigma is None else str(sigma))
 
     result = fit(
         table(rings),
-        find_standard(standard, temperature_C, lambda text: _phase(text, library)),
+        find_standard(standard, temperature_C, lambda text: found_phase(text, library)),
         probe=probe,
         camera_constant=camera_constant,
         scale_uncertainty=scale_uncertainty,
@@ -161,7 +164,7 @@ def lines(
     from phaseid.units import A_PER_NM
 
     beam = parse_probe(probe)
-    entry, crystal = _phase(phase, library)
+    entry, crystal = found_phase(phase, library)
     return LineList(
         phase=entry,
         probe=beam,
@@ -187,7 +190,7 @@ def near(
     from phaseid.probes import parse_probe, parse_relative
 
     wanted = [spacings_A] if isinstance(spacings_A, int | float) else list(spacings_A)
-    with _open(library) as shelf:
+    with opened(library) as shelf:
         return Rows(
             near_lines(
                 [float(d) for d in wanted],
@@ -195,7 +198,7 @@ def near(
                 parse_probe(probe),
                 tolerance=parse_relative(str(tolerance), "tolerance"),
                 min_intensity=min_intensity,
-                chemistry=_chemistry(None, must, only, exclude),
+                chemistry=chemistry_of(None, must, only, exclude),
             )
         )
 
@@ -230,8 +233,8 @@ def compare(
     scale = None if scale_uncertainty is None else parse_relative(str(scale_uncertainty))
     reading = None if sigma is None else f"{100 * parse_relative(str(sigma), 'sigma')!r}%"
     return judge(
-        _phase(first, library),
-        _phase(second, library),
+        found_phase(first, library),
+        found_phase(second, library),
         parse_probe(probe, scale_sigma=scale),
         sigma=reading,
         d_range_A=d_range_A,
@@ -259,10 +262,10 @@ def screen(
     from phaseid.matching.watch import watch_lists
     from phaseid.probes import parse_relative
 
-    lists = _patterns(patterns, reading)
+    lists = ring_lists_of(patterns, reading)
     watched = watch_lists([Path(path) for path in watch], shipped=not only_mine)
     limit = None if weakest is None else parse_relative(str(weakest), "weakest")
-    with _open(library) as shelf:
+    with opened(library) as shelf:
 
         def find(text: str) -> tuple[Phase, Crystal]:
             return find_in(shelf, text)
@@ -282,107 +285,5 @@ def measure(
 
 def find(text: str, library: Shelf = None) -> list[Phase]:
     """The phases of the library that a name, formula or number may mean, the nearest first."""
-    with _open(library) as shelf:
+    with opened(library) as shelf:
         return list(shelf.find(text))
-
-
-@contextmanager
-def _open(library: Shelf) -> Iterator[Library]:
-    """The library given, left open; or one opened for this call."""
-    from phaseid.cli.options import open_library
-    from phaseid.library import Library
-
-    if isinstance(library, str | os.PathLike) or library is None:
-        with open_library(None if library is None else Path(library)) as shelf:
-            yield shelf
-    elif isinstance(library, Library):
-        yield library
-    else:
-        raise InputError(
-            f"a library is a path or open, not {type(library).__name__}",
-            remedy="Leave it out, or give the path of a library file.",
-        )
-
-
-def _phase(text: str, library: Shelf) -> tuple[Phase, Crystal]:
-    from phaseid.cli.phases import find_in, named_file
-
-    if (found := named_file(text)) is not None:
-        return found
-    with _open(library) as shelf:
-        return find_in(shelf, text)
-
-
-def _chemistry(
-    chemistry: Chemistry | None, must: str | None, only: str | None, exclude: str | None
-) -> Chemistry:
-    from phaseid.matching.chemistry import Chemistry
-
-    if chemistry is None:
-        return Chemistry.parse(must, only, exclude)
-    if (must, only, exclude) != (None, None, None):
-        raise InputError(
-            "chemistry and element lists are both given", remedy="Give one or the other."
-        )
-    return chemistry
-
-
-def _patterns(given: Given, reading: dict[str, Any]) -> list[RingList]:
-    """The ring lists that are meant: one of numbers, or one for each of several things."""
-    from phaseid.cli.ring_input import ring_lists
-    from phaseid.rings import RingList
-
-    unknown = set(reading) - set(_READING)
-    if unknown:
-        raise TypeError(f"unexpected argument {', '.join(sorted(unknown))}")
-    if isinstance(given, RingList):
-        if reading:
-            raise InputError(
-                "a ring list that is read already takes no further reading",
-                remedy=f"Give {', '.join(reading)} where it is read.",
-            )
-        return [given]
-    if isinstance(given, str | os.PathLike) or _are_numbers(given):
-        words = {key: _word(value) for key, value in reading.items() if value is not None}
-        return ring_lists(_words(given), **words)
-    return [rings for one in given for rings in _patterns(one, reading)]
-
-
-_READING = (
-    "probe",
-    "scale_uncertainty",
-    "camera_constant",
-    "calibration",
-    "unit",
-    "sigma",
-    "intensities",
-)
-
-
-def _are_numbers(given: Sequence[Any]) -> bool:
-    from phaseid.cli.ring_input import typed_numbers
-
-    return len(given) > 0 and all(
-        not hasattr(one, "d_A")
-        and not isinstance(one, os.PathLike)
-        and len(typed_numbers(_word(one))) == 1
-        for one in given
-    )
-
-
-def _words(given: Typed) -> list[str]:
-    """Rings as they would be typed: a path, or numbers."""
-    if isinstance(given, str | os.PathLike):
-        return [os.fspath(given)]
-    return [_word(one) for one in given]
-
-
-def _word(value: Any) -> str:
-    """One value as it would be typed; of several, a list."""
-    if isinstance(value, str):
-        return value
-    if hasattr(value, "tolist"):  # a number or array of numpy
-        value = value.tolist()
-    if isinstance(value, Sequence):
-        return " ".join(_word(one) for one in value)
-    return repr(value) if isinstance(value, int | float) else os.fspath(value)
