@@ -10,6 +10,7 @@ from pathlib import Path
 from phaseid.errors import InputError
 
 VARIABLE = "PHASEID_CONFIG"
+_MAX_BYTES = 1_000_000
 KEYS = {
     "library": "the library searched",
     "probe": "the probe where a list or a command names none",
@@ -74,7 +75,8 @@ def read_config(path: Path) -> dict[str, str]:
     Raises InputError where it cannot be read, or has a key that is none or a value that is no text.
     """
     try:
-        text = path.read_text(encoding="utf-8")
+        with path.open("rb") as file:
+            text = file.read(_MAX_BYTES).decode("utf-8")
     except FileNotFoundError:
         return {}
     except (OSError, UnicodeDecodeError) as error:
@@ -117,6 +119,12 @@ def write_config(held: dict[str, str], path: Path) -> None:
 
     lines = ["# Defaults of phaseid; `phaseid config` shows what is in force."]
     lines += [f"{key} = {json.dumps(value, ensure_ascii=False)}" for key, value in held.items()]
+    if path.exists() and not path.is_file():  # a folder or a device, which must not be replaced
+        raise InputError(
+            "is no file that settings can be kept in",
+            path=path,
+            remedy=f"Set ${VARIABLE} to a file that can be written.",
+        )
     part = path.with_name(f".{path.name}.{os.getpid()}.part")
     try:
         path.parent.mkdir(parents=True, exist_ok=True)

@@ -138,8 +138,8 @@ def parse_cif(data: bytes) -> tuple[list[Block], tuple[Finding, ...]] | Unreadab
     if len(data) > MAX_BYTES:
         return Unreadable(
             "too_large",
-            f"the file holds {len(data) / 2**20:.0f} MB, at most {MAX_BYTES // 2**20} MB are read; "
-            "split it, or drop embedded reflection lists",
+            f"the file holds more than {MAX_BYTES // 2**20} MB, the most that is read; split it, "
+            "or drop embedded reflection lists",
         )
     findings: list[Finding] = []
     text = _decode(data, findings)

@@ -135,10 +135,10 @@ def space_group_number(text: str) -> int:
     Raises InputError where it is neither.
     """
     wanted = text.strip()
-    if wanted.isdecimal():
+    if wanted.isdecimal() and len(wanted) <= 3:
         if 1 <= int(wanted) <= 230:
             return int(wanted)
-    else:
+    elif wanted.isascii():
         import gemmi
 
         found = gemmi.find_spacegroup_by_name(wanted)

@@ -149,7 +149,7 @@ def _from_file(path: Path) -> Iterator[Found]:
             yield _rejected(path, "bad_archive", "this is no zip archive, or a damaged one")
         else:
             with path.open("rb") as file:
-                yield _file(file, _plain(path.absolute()), _plain(path.name))
+                yield _file(file, _plain(_absolute(path)), _plain(path.name))
     except TooFull as error:
         yield _rejected(path, "bomb", f"not read further: {error}")
     except BAD_ARCHIVE as error:
@@ -228,11 +228,18 @@ def _file(file: IO[bytes], location: str, shown: str) -> Found:
 
 def _member_of(path: Path, member: str) -> tuple[str, str]:
     shown = _plain(member)
-    return f"{_plain(path.absolute())}!{shown}", shown
+    return f"{_plain(_absolute(path))}!{shown}", shown
 
 
 def _rejected(path: Path, code: str, reason: str) -> Rejected:
-    return Rejected(_plain(path.absolute()), _plain(path.name), "", code, reason)
+    return Rejected(_plain(_absolute(path)), _plain(path.name), "", code, reason)
+
+
+def _absolute(path: Path) -> Path:
+    try:
+        return path.absolute()
+    except OSError:  # the folder we stand in is gone
+        return path
 
 
 def _plain(name: str | Path) -> str:

@@ -62,6 +62,9 @@ def write_rings(rings: RingList, path: str | Path) -> None:
     file = Path(path)
     part = file.with_name(f".{file.name}.{os.getpid()}.part")
     try:
+        if file.exists() and not file.is_file():  # a device is written to, never replaced
+            file.write_text(rings_to_text(rings), encoding="utf-8")
+            return
         part.write_text(rings_to_text(rings), encoding="utf-8")
         part.replace(file)
     except OSError as error:

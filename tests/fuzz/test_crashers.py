@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+import os
 import subprocess
 import sys
 import time
@@ -15,6 +16,10 @@ import pytest
 
 from phaseid.cli.settings import read_config, write_config
 from phaseid.errors import InputError
+from phaseid.library.conditions import space_group_number
+from phaseid.library.sources import read_all
+from phaseid.library.tally import Rejected
+from phaseid.rings import rings_from_values, rings_to_text, write_rings
 from phaseid.rings.calibration_record import load_calibration
 from phaseid.rings.measuring import curves, measure_profile, read_curve, read_image
 from tests.fuzz.targets import TARGETS
@@ -56,6 +61,48 @@ def test_a_setting_that_is_no_text_is_told(tmp_path: Path) -> None:
     with pytest.raises(InputError, match="no text that can be kept"):
         write_config({"library": "\udcff"}, path)
     assert list(tmp_path.iterdir()) == []
+
+
+@pytest.mark.skipif(not Path("/dev/full").exists(), reason="no devices on this system")
+def test_a_device_is_never_replaced(tmp_path: Path) -> None:
+    """Renaming a finished file over /dev/null would make it an ordinary file."""
+    os.mkfifo(tmp_path / "pipe")
+    with pytest.raises(InputError, match="no file that settings can be kept in"):
+        write_config({"probe": "electron 200 kV"}, tmp_path / "pipe")
+    reader = os.open(tmp_path / "pipe", os.O_RDONLY | os.O_NONBLOCK)
+    try:
+        rings = rings_from_values([2.0, 1.5], probe="electron 200 kV")
+        write_rings(rings, tmp_path / "pipe")
+        assert os.read(reader, 100_000).decode() == rings_to_text(rings)
+    finally:
+        os.close(reader)
+    assert [path.name for path in tmp_path.iterdir()] == ["pipe"]
+    assert (tmp_path / "pipe").is_fifo()
+
+
+@pytest.mark.skipif(not Path("/dev/zero").exists(), reason="no endless file on this system")
+def test_an_endless_configuration_is_left() -> None:
+    with pytest.raises(InputError, match="is not TOML"):
+        read_config(Path("/dev/zero"))
+
+
+@pytest.mark.parametrize("text", ["\udcff", "1" * 5000, "F\u0305m3m", "", "0", "231"])
+def test_what_is_no_space_group_is_told(text: str) -> None:
+    with pytest.raises(InputError, match="is no space group"):
+        space_group_number(text)
+
+
+def test_adding_from_a_folder_that_is_gone(tmp_path: Path) -> None:
+    (tmp_path / "gone").mkdir()
+    before = Path.cwd()
+    try:
+        os.chdir(tmp_path / "gone")
+        (tmp_path / "gone").rmdir()
+        (found,) = read_all([Path("x.cif")])
+    finally:
+        os.chdir(before)
+    assert isinstance(found, Rejected)
+    assert found.code == "no_such_file"
 
 
 def test_a_tiff_whose_pages_run_in_a_circle_is_told(tmp_path: Path) -> None:

@@ -23,7 +23,7 @@ from tests.library.dying import dies
 from tests.library.rock_salts import rock_salt
 
 KILLS = 50
-FILES = 150
+FILES = 100
 posix = pytest.mark.skipif(not hasattr(os, "fork"), reason="needs fork and signals")
 
 
