@@ -127,7 +127,7 @@ class StoredEntry:
         return found or (self._number, np.eye(3)[None], np.zeros((1, 3)))
 
 
-STRONGEST = 80
+STRONGEST = 250
 """Lines by which determinations are compared, of each probe."""
 
 

@@ -79,10 +79,10 @@ def leaders_of(entries: Sequence[StoredEntry]) -> dict[int, int]:
 def best_first(entries: list[StoredEntry]) -> list[StoredEntry]:
     """Sort determinations by how well they stand for their phase.
 
-    Measured before computed; the symmetry told before atoms one by one; then quality, which holds
-    pressure, temperature, disorder and doubts; not measured in the cold; shipped with phaseid; the
-    cell near the middle of the others'; named; with its reference. Whatever is still equal goes by
-    content.
+    Measured before computed; shipped with phaseid, whose marks are sure where files say nothing of
+    pressure and heat; the symmetry told before atoms one by one; then quality, which holds
+    pressure, temperature, disorder and doubts; not measured in the cold; the cell near the middle
+    of the others'; named; with its reference. Whatever is still equal goes by content.
     """
     if len(entries) == 1:
         return entries
@@ -94,10 +94,10 @@ def best_first(entries: list[StoredEntry]) -> list[StoredEntry]:
         cold = len(peers) > 1 and not entry.computed and entry.colder_than(_COLD_K)
         return (
             entry.computed,
+            not entry.shipped,
             entry.symmetry_untold,
             -entry.quality,
             cold,
-            not entry.shipped,
             off,
             not entry.named,
             not entry.reference,

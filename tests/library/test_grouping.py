@@ -259,6 +259,15 @@ def test_the_order_of_adding_does_not_matter(tmp_path: Path) -> None:
 MARKS: tuple[tuple[str, ...], ...] = ((), (), ("high_pressure",), ("theoretical",))
 
 
+def test_a_mark_of_the_starter_library_holds_for_its_phase(library: Library) -> None:
+    coesite = shipped_crystal("SiO2-coesite")
+    unmarked = replace(coesite, source=Source("COD", "1", "1.cif"), findings=())
+    unmarked = scaled(unmarked, 1.002)
+    assert sizes(library, [unmarked, coesite]) == [2]
+    (phase,) = library.find("coesite")
+    assert [finding.code for finding in phase.findings] == ["high_pressure"]
+
+
 @pytest.mark.parametrize("turn", [1, -1])
 def test_of_equal_structures_the_same_source_tells(library: Library, turn: int) -> None:
     structure = quartz(KIHARA, "high_pressure")
