@@ -37,6 +37,7 @@ COLUMNS = (
 
 _UNTOLD = "higher_symmetry"  # the source gives all atoms of the cell and no symmetry
 _TOLERANCE_A = 0.01
+_LIGHTEST = 1e-6  # g/cm³: of atoms without a mass, which some files list
 _AMOUNT = re.compile(r"[A-Z][a-z]?([\d.]+)")
 
 
@@ -51,7 +52,7 @@ class StoredEntry:
             self._volume_A3, self._complete_to_A, self._floor, *cell,
         ) = row  # fmt: skip
         self.cell: Cell = tuple(cell)
-        self.ln_density = log(density)
+        self.ln_density = log(max(density, _LIGHTEST))
         self.named = bool(name) and name != formula
         self.reference = bool(reference)
         self.shipped = database == DATABASE

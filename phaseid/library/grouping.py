@@ -9,13 +9,15 @@ added, and one whose leader went, stands for itself until `group_entries` has ru
 from __future__ import annotations
 
 import sqlite3
+from bisect import bisect_left, bisect_right
 from collections import defaultdict
 from collections.abc import Sequence
 from contextlib import suppress
-from statistics import median
+
+import numpy as np
 
 from phaseid.library.determinations import COLUMNS, StoredEntry
-from phaseid.library.sameness import MEASURED_CELL, same_phase
+from phaseid.library.sameness import COMPUTED_CELL, MEASURED_CELL, same_phase
 
 _SETS_A_TRANSACTION = 500
 _COLD_K = 200.0  # below, a cell is clearly smaller than at room temperature
@@ -65,15 +67,25 @@ def leaders_of(entries: Sequence[StoredEntry]) -> dict[int, int]:
     leaders: dict[int, int] = {}
     for part in parts.values():
         standing: list[StoredEntry] = []
+        ln_density = np.full(len(part), np.inf)
         for entry in best_first(part):
-            same = [one for one in standing if same_phase(one, entry)]
+            near = np.flatnonzero(np.abs(ln_density - entry.ln_density) <= 3 * COMPUTED_CELL)
+            same = [standing[k] for k in near if _same(standing[k], entry)]
             if not same:
+                ln_density[len(standing)] = entry.ln_density
                 standing.append(entry)
             nearest = min(
                 same, key=lambda one: abs(one.ln_density - entry.ln_density), default=entry
             )
             leaders[entry.row] = nearest.row
     return leaders
+
+
+def _same(one: StoredEntry, other: StoredEntry) -> bool:
+    try:
+        return same_phase(one, other)
+    except (ArithmeticError, ValueError):  # a cell that spans no lattice is like no other
+        return False
 
 
 def best_first(entries: list[StoredEntry]) -> list[StoredEntry]:
@@ -89,9 +101,12 @@ def best_first(entries: list[StoredEntry]) -> list[StoredEntry]:
     measured = sorted(entry.ln_density for entry in entries if not entry.computed)
 
     def rank(entry: StoredEntry) -> tuple[object, ...]:
-        peers = [x for x in measured if abs(x - entry.ln_density) <= 3 * MEASURED_CELL]
-        off = round(abs(entry.ln_density - median(peers)), 3) if peers else 0.0
-        cold = len(peers) > 1 and not entry.computed and entry.colder_than(_COLD_K)
+        reach = 3 * MEASURED_CELL
+        low = bisect_left(measured, entry.ln_density - reach)
+        high = bisect_right(measured, entry.ln_density + reach)
+        middle = measured[(low + high) // 2] if high > low else entry.ln_density
+        off = round(abs(entry.ln_density - middle), 3)
+        cold = high - low > 1 and not entry.computed and entry.colder_than(_COLD_K)
         return (
             entry.computed,
             not entry.shipped,

@@ -61,6 +61,11 @@ class Lattice:
         third = int(np.argmax(np.abs(steps @ normal) > _FLAT))
         return np.array([first, steps[second], steps[third]])
 
+    @cached_property
+    def minima_A(self) -> Floats:
+        """Lengths (3,) of the vectors of `basis`, rising: the same for every cell of a lattice."""
+        return np.sqrt(np.diag(self.basis @ metric_tensor(self.cell) @ self.basis.T))
+
 
 def index_maps(one: Lattice, other: Lattice, tolerance: float) -> list[Floats]:
     """Return the matrices (3, 3) that turn hkl of `other` into hkl of `one`, each once up to sign.
@@ -68,9 +73,10 @@ def index_maps(one: Lattice, other: Lattice, tolerance: float) -> list[Floats]:
     Lengths of the basis vectors agree within the relative `tolerance`, cosines of their angles
     within it. An empty list: the lattices differ.
     """
-    gram = one.basis @ metric_tensor(one.cell) @ one.basis.T
-    edges = np.sqrt(np.diag(gram))
-    cosines = gram / np.outer(edges, edges)
+    edges = one.minima_A
+    if float(np.abs(np.log(edges / other.minima_A)).max()) > tolerance:
+        return []
+    cosines = (one.basis @ metric_tensor(one.cell) @ one.basis.T) / np.outer(edges, edges)
     steps, lengths = other.vectors
     near = [np.flatnonzero(np.abs(np.log(lengths / edge)) <= tolerance) for edge in edges]
     if not all(map(len, near)):

@@ -43,6 +43,7 @@ def same_phase(one: StoredEntry, other: StoredEntry) -> bool:
         one.group != other.group
         or (one.shipped and other.shipped)
         or abs(one.ln_density - other.ln_density) > 3 * tolerance
+        or one.fractions.shape != other.fractions.shape  # an element of which there is nothing
         or float(np.abs(one.fractions - other.fractions).max()) > COMPOSITION
     ):
         return False

@@ -14,7 +14,7 @@ import pytest
 from numpy.typing import NDArray
 
 from phaseid.crystal.cif import read_cif
-from phaseid.crystal.crystal import Crystal, Finding, Source
+from phaseid.crystal.crystal import Crystal, Finding, Site, Source
 from phaseid.crystal.metric import metric_tensor
 from phaseid.library import Library
 from phaseid.library.starter import shipped_crystal
@@ -266,6 +266,16 @@ def test_a_mark_of_the_starter_library_holds_for_its_phase(library: Library) -> 
     assert sizes(library, [unmarked, coesite]) == [2]
     (phase,) = library.find("coesite")
     assert [finding.code for finding in phase.findings] == ["high_pressure"]
+
+
+def test_atoms_without_a_mass_stop_nothing(library: Library) -> None:
+    weightless = Site("X1", "X", 0, (0.0, 0.0, 0.0), 1.0)
+    crystals = [
+        replace(scaled(published("MgO-periclase"), 1 + n / 1000), sites=(weightless,), formula="X")
+        for n in range(2)
+    ]
+    library.add_crystals([*crystals, published("MgO-periclase")])
+    assert len(library.find("MgO")) == 1
 
 
 @pytest.mark.parametrize("turn", [1, -1])
