@@ -49,6 +49,14 @@ def measure(
             help="Of several images in one file take number N; default: their sum.",
         ),
     ] = None,
+    standard: Annotated[
+        str | None,
+        typer.Option(
+            "--standard",
+            metavar="NAME",
+            help="A standard whose rings are in the image, too: gives the camera constant.",
+        ),
+    ] = None,
     plot: Annotated[
         Path | None,
         typer.Option(
@@ -64,6 +72,7 @@ def measure(
     \b
     phaseid measure plate.tif -o rings.csv --camera-constant "980 A px" --probe "electron 200 kV"
     phaseid measure scan.xy -o peaks.csv --probe "x-ray Cu Ka"
+    phaseid measure on_gold.tif --standard Au --probe "electron 200 kV" -o rings.csv
     """
     from phaseid.reports.measuring import measurement_dict, measurement_text
 
@@ -75,6 +84,8 @@ def measure(
         unit=unit,
         frame=frame,
     )
+    if standard is not None:
+        found = calibrated(found, standard)
     try:
         spacings = [float(d) for d in found.ring_list().d_A]
     except InputError:  # without a probe or a camera constant there are positions only
@@ -125,6 +136,43 @@ def find_rings(
         given["probe"] = probe
     metadata |= {key: value for key, value in given.items() if value is not None}
     return replace(found, metadata=metadata)
+
+
+def calibrated(found: Measurement, standard: str) -> Measurement:
+    """The measurement with the camera constant that the rings of a standard in it give.
+
+    Raises InputError for a profile, and where the standard is not known or not found in the image.
+    """
+    from dataclasses import replace
+
+    from phaseid.cli.phases import find_crystal, find_standard
+    from phaseid.matching.calibrate import calibrate
+
+    if found.column != "radius_px":
+        raise InputError(
+            "--standard is for images",
+            path=found.source,
+            remedy="Calibrate a profile with: phaseid calibrate PROFILE --standard NAME --save "
+            "NAME.",
+        )
+    known = find_standard(standard, None, lambda text: find_crystal(text, None))
+    result = calibrate(found.ring_table(), known, probe=found.metadata.get("probe"))
+    constant = result.camera_constant
+    if constant is None:
+        raise InputError("gives no camera constant", path=found.source, remedy="State it.")
+    others = ", ".join(str(i + 1) for i in result.rejected)
+    remark = f"Calibrated here: {result.summary()}."
+    if others:
+        remark += f" Not of the standard: ring {others}."
+    return replace(
+        found,
+        metadata={
+            **{k: v for k, v in found.metadata.items() if k != "scale uncertainty"},
+            "camera constant": f"{constant.value:.6g} +- {constant.sigma:.3g} A px",
+            "calibrated on": result.standard.label,
+        },
+        remarks=(*found.remarks, remark),
+    )
 
 
 def write(found: Measurement, path: Path) -> None:

@@ -78,6 +78,13 @@ def measurement_text(found: Measurement, d_A: list[float] | None = None) -> str:
                 f"Ellipse (corrected): axes {geometry.ratio:.4f} ± {geometry.ratio_sigma:.4f} : 1, "
                 f"long axis at {geometry.angle_deg:.0f}° from x towards y"
             )
+    used = [
+        f"{key} {safe(found.metadata[key])}"
+        for key in ("probe", "camera constant", "scale uncertainty")
+        if key in found.metadata
+    ]
+    if used:
+        lines.append(f"Spacings by: {', '.join(used)}")
     if found.halos:
         at = ", ".join(f"{halo:.4g}" for halo in found.halos)
         lines.append(f"Halo of amorphous matter, not listed as a ring: {at} {unit}")

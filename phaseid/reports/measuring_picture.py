@@ -1,15 +1,20 @@
-"""A picture of what was measured: the curve, its background and the rings found."""
+"""A picture of what was measured: the plate, its curve and background, the rings found."""
 
 from __future__ import annotations
 
 from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from phaseid.errors import InputError
 from phaseid.reports.plain import safe
-from phaseid.rings.measuring import Measurement
+from phaseid.rings.measuring import Disc, Measurement
 
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+
+_NUMBER: dict[str, Any] = {"color": "tab:orange", "fontsize": 8, "ha": "center", "va": "center"}
 FORMATS = (".png", ".svg", ".pdf")
 
 
@@ -23,8 +28,41 @@ def draw_measurement(found: Measurement, path: Path) -> None:
         )
     from matplotlib.figure import Figure
 
-    figure = Figure(figsize=(8.0, 4.5), layout="constrained")
-    axes = figure.subplots()
+    figure = Figure(figsize=(8.0, 4.5 if found.disc is None else 8.5), layout="constrained")
+    if found.disc is None:
+        _draw_curve(figure.subplots(), found)
+    else:
+        plate, curve = figure.subplots(2, 1, height_ratios=(5, 4))
+        _draw_plate(plate, found, found.disc)
+        _draw_curve(curve, found)
+    figure.suptitle(safe(Path(found.source).name).replace("$", r"\$"), fontsize=10)
+    try:
+        figure.savefig(path, dpi=150)
+    except OSError as error:
+        raise InputError(
+            f"cannot be written: {(error.strerror or str(error)).lower()}",
+            path=path,
+            remedy="Choose another place with --plot.",
+        ) from None
+
+
+def _draw_plate(axes: Axes, found: Measurement, disc: Disc) -> None:
+    """The image about its centre, ellipse corrected, with the rings found on its right half."""
+    from matplotlib.patches import Arc
+
+    reach = disc.reach_px
+    axes.imshow(disc.grey, cmap="gray", vmin=0, vmax=255, extent=(-reach, reach, reach, -reach))
+    for number, ring in enumerate(found.rings, start=1):
+        size = 2.0 * ring.position
+        axes.add_patch(
+            Arc((0, 0), size, size, theta1=-60, theta2=60, color="tab:orange", linewidth=0.8)
+        )
+        axes.text(ring.position * 0.5, ring.position * 0.866, str(number), **_NUMBER)
+    axes.plot(0, 0, "+", color="tab:orange")
+    axes.set_xlabel("px from the centre, ellipse corrected")
+
+
+def _draw_curve(axes: Axes, found: Measurement) -> None:
     x, mean, median, background = found.curve.T
     axes.plot(x, mean, color="black", linewidth=0.9, label="mean")
     if not np.array_equal(mean, median):
@@ -47,13 +85,4 @@ def draw_measurement(found: Measurement, path: Path) -> None:
     axes.set_ylim(low, 1.6 * top)
     axes.set_xlabel(found.column)
     axes.set_ylabel("counts")
-    axes.set_title(safe(Path(found.source).name).replace("$", r"\$"), fontsize=10)
     axes.legend(frameon=False, fontsize=8)
-    try:
-        figure.savefig(path, dpi=150)
-    except OSError as error:
-        raise InputError(
-            f"cannot be written: {(error.strerror or str(error)).lower()}",
-            path=path,
-            remedy="Choose another place with --plot.",
-        ) from None

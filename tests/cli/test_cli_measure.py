@@ -6,6 +6,8 @@ import json
 
 import numpy as np
 import pytest
+import tifffile
+from PIL import Image
 
 from phaseid.resources import data_path
 from phaseid.rings import read_rings
@@ -95,6 +97,36 @@ def test_a_list_that_cannot_be_written_ends_with_code_2(phaseid, tmp_path) -> No
     done = phaseid("measure", PLATE, "-o", str(tmp_path / "no" / "rings.csv"))
     assert done.code == 2
     assert "cannot be written" in done.err
+
+
+def test_a_standard_in_the_image_gives_the_constant(phaseid, tmp_path) -> None:
+    path = tmp_path / "rings.csv"
+    done = phaseid(
+        "measure", PLATE, "--standard", "Al", "--probe", "electron 200 kV", "-o", str(path)
+    )
+    assert done.code == 0
+    assert "from 3 of 5 rings of Al" in done.out
+    found = read_rings(path)
+    assert found.camera_constant.value == pytest.approx(CONSTANT, abs=0.15)
+    assert found.d_A[0] == pytest.approx(D_AL111, rel=6e-4)
+
+
+def test_a_standard_that_is_not_in_it_is_refused(phaseid, scan) -> None:
+    done = phaseid("measure", str(scan), "--standard", "Si")
+    assert done.code == 2
+    assert "phaseid calibrate" in done.err
+
+
+def test_one_image_of_several(phaseid, tmp_path) -> None:
+    plate = np.asarray(Image.open(PLATE))
+    path = tmp_path / "stack.tif"
+    tifffile.imwrite(path, np.stack([plate, np.zeros_like(plate)]), photometric="minisblack")
+    done = phaseid("measure", str(path), "--frame", "1", "--json")
+    assert done.json("measurement-1")["center_px"] == pytest.approx(CENTRE, abs=0.1)
+    assert "2 images were added" in phaseid("measure", str(path)).out
+    done = phaseid("measure", str(path), "--frame", "2")
+    assert done.code == 2
+    assert "constant" in done.err
 
 
 def test_the_picture_of_what_was_found(phaseid, scan, tmp_path) -> None:

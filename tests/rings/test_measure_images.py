@@ -170,6 +170,64 @@ def test_mrc_counts_are_read_as_they_are(tmp_path, mode: int, kind: str) -> None
         read_image(path)
 
 
+def test_saturated_rings_keep_their_place() -> None:
+    scene = replace(PLAIN, saturation=75.0, tail=40.0)
+    found = measured(scene)
+    pairs = matched(found, scene)
+    assert set(pairs) == set(scene.radii)
+    assert len(found.rings) == len(scene.radii)
+    strong = found.rings[pairs[60.0]]
+    assert "saturated" in strong.note
+    assert strong.position == pytest.approx(60.0, abs=max(4 * strong.sigma, 0.1))
+    assert "saturated" not in found.rings[pairs[98.0]].note
+
+
+@pytest.mark.parametrize("through", [0.0, 0.2, 0.35])
+def test_a_beam_stop_that_lets_some_through(through: float) -> None:
+    scene = replace(PLAIN, stop=(8.0, 14.0, 200.0), through=through, background=60.0)
+    found = measured(scene)
+    assert np.hypot(found.geometry.x - 163.3, found.geometry.y - 146.8) < 0.1
+    assert 0.02 < found.masked < 0.15
+    assert set(matched(found, scene)) == set(scene.radii)
+    assert max(ring.spottiness for ring in found.rings if ring.intensity > 100) < 0.25
+
+
+def test_texture_is_told_from_spots() -> None:
+    arcs = measured(replace(PLAIN, texture=0.9)).rings
+    spots = measured(replace(PLAIN, spots=80)).rings
+    even = measured(PLAIN).rings
+    strong = [ring for ring in arcs if ring.intensity > 100]
+    # 1 + 0.9 cos 4φ has a standard deviation of 0.9 / √2, in whose square neighbours 10 degrees
+    # apart agree to cos 40°
+    wanted = 0.9 / 2**0.5 * np.cos(np.radians(40.0)) ** 0.5
+    assert np.median([ring.arcs for ring in strong]) == pytest.approx(wanted, abs=0.1)
+    assert {ring.note for ring in strong} == {"textured"}
+    assert {ring.note for ring in spots if ring.intensity > 100} == {"spotty"}
+    assert max(ring.arcs for ring in even) < 0.1
+    along = np.array(strong[2].along)
+    turn = np.radians(np.arange(5.0, 360.0, 10.0))
+    assert np.nanmean(along) == pytest.approx(1.0, abs=0.02)
+    assert np.corrcoef(along, 1 + 0.9 * np.cos(4 * turn + PLAIN.radii[2]))[0, 1] > 0.9
+
+
+def test_the_ring_list_carries_limit_and_unevenness() -> None:
+    found = measured(replace(PLAIN, texture=0.9))
+    rings = found.ring_list(probe="electron 200 kV", camera_constant="250 A px")
+    strongest = max(ring.intensity for ring in found.rings)
+    assert rings.detection_limit == pytest.approx(100 * found.limit / strongest, rel=1e-3)
+    assert rings.spottiness == pytest.approx([r.spottiness for r in found.rings], abs=1e-3)
+    assert rings.arcs == pytest.approx([r.arcs for r in found.rings], abs=1e-3)
+
+
+@pytest.mark.parametrize("name", ["camera", "coins", "moon", "page", "grass", "brick"])
+def test_photographs_are_refused(tmp_path, name: str) -> None:
+    data = pytest.importorskip("skimage.data", reason="scikit-image is not installed")
+    path = tmp_path / "photograph.png"
+    Image.fromarray(getattr(data, name)()).save(path)
+    with pytest.raises(InputError, match="no rings"):
+        measure_image(path)
+
+
 def bad_image(kind: str) -> np.ndarray:
     rng = np.random.default_rng(1)
     y, x = np.mgrid[0:200, 0:220]

@@ -13,7 +13,7 @@ from phaseid.rings.measuring.geometry import Floats
 SECTORS = 72
 LEVELS = 36
 MIN_SECTORS = 8
-ARC_LAGS = (2, 3)  # sectors apart: spots do not reach so far, arcs of a texture do
+ARC_LAG = 2  # sectors apart: spots do not reach so far, arcs of a texture do
 
 
 @dataclass(frozen=True, slots=True)
@@ -105,7 +105,7 @@ def _by_sector(
     for s in range(mean.shape[1]):
         n = number[:, s]
         # a straight background needs both flanks and most of the window
-        if (n > 0).mean() < 0.85:
+        if (n > 0).mean() < 0.7:
             continue
         weight = np.sqrt(n) / noise
         inverse = np.linalg.pinv((design * weight[:, None] ** 2).T @ design, hermitian=True)
@@ -115,15 +115,17 @@ def _by_sector(
 
 
 def _arcs(level: Floats) -> float:
-    """Relative one-sigma of what neighbours a few sectors apart have in common, 0 if by chance.
+    """Relative one-sigma of what neighbours two sectors apart have in common, 0 if by chance.
 
     `level` (s,) has mean 1, NaN where not seen. Noise is not common to two sectors.
     """
     off = level - 1.0
-    products = [off * np.roll(off, lag) for lag in ARC_LAGS]
+    products = off * np.roll(off, ARC_LAG)
+    number = int(np.isfinite(products).sum())
+    if number == 0:
+        return 0.0
     common = float(np.nanmean(products))
-    number = int(np.isfinite(products[0]).sum())
-    by_chance = float(np.nanmean(off**2)) / np.sqrt(max(number, 1))
+    by_chance = float(np.nanmean(off**2)) / np.sqrt(number)
     return float(np.sqrt(common)) if common > 2.5 * by_chance else 0.0
 
 
