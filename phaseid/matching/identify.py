@@ -75,9 +75,7 @@ def identify(
         search = searched(prepare_all(patterns), field, chemistry, max_phases)
     standing = weigh(search)
     phase_of = _Phases(library, field.tables[0], search.phases)
-    hypotheses = with_entries(
-        library, _hypotheses(search, field.tables, standing, phase_of, top)
-    )
+    hypotheses = with_entries(library, _hypotheses(search, field.tables, standing, phase_of, top))
     listed = 1.0 - standing.unlisted
     return Identification(
         verdict=_verdict(hypotheses, listed),

@@ -34,6 +34,8 @@ _STRONG, _STRONG_SCATTER = 0.25, 0.5
 """Lines above this part of the strongest tell a first amplitude, each only so well (ln)."""
 _ABOUT = 1.5
 """Lines within so many merging distances of a ring make its position less sure."""
+_COVERED = 1e-3
+"""Lines the range covers with less chance than this say nothing of amplitudes."""
 _HIDDEN = 1.2
 """Two lines nearer than this many resolutions make one ring."""
 
@@ -67,6 +69,36 @@ class Shift:
     axial: Floats
 
 
+class _Lines:
+    """Some of the lines of a batch, one after another: (l,) arrays.
+
+    `index` into the flattened (b, k, n); `owner` into (b, k); `batch` into (b,); `ring` the ring
+    each may belong to, `position`, `distance` from it and `intensity`.
+    """
+
+    def __init__(
+        self,
+        work: PatternWork,
+        which: NDArray[np.bool_],
+        ring: NDArray[np.int64],
+        position: Floats,
+        distance: Floats,
+    ) -> None:
+        self.index = np.flatnonzero(which)
+        self.owner = self.index // work.n
+        self.batch = self.owner // work.k
+        self.ring = ring.ravel()[self.index]
+        self.position = position.ravel()[self.index]
+        self.distance = distance.ravel()[self.index]
+        self.intensity = work.intensity.ravel()[self.index]
+
+    def where(self, keep: NDArray[np.bool_]) -> _Lines:
+        """These lines, those not kept left out."""
+        for name, values in vars(self).items():
+            setattr(self, name, values[keep])
+        return self
+
+
 class PatternWork:
     """One pattern's part of a batch, refined over a few rounds."""
 
@@ -86,7 +118,7 @@ class PatternWork:
         self.x = lines.x[members, :used]
         self.intensity = lines.intensity[members, :used]
         self.visible = lines.visible[members, :used]
-        self.with_ln_visible = np.log(np.maximum(self.visible, 1e-12))
+        self.ln_visible = np.log(np.maximum(self.visible, 1e-12))
         self.b, self.k, self.n = self.x.shape
         self.m = len(pattern)
         self.complete = lines.complete[members].max(axis=1) if self.k else np.full(self.b, -np.inf)
@@ -122,84 +154,75 @@ class PatternWork:
         extra = np.sqrt(self.jitter2)[:, :, None] * 3.0
         if self.axial is not None:
             extra = extra + (wide - 1.0) * np.abs(self.axial).max(axis=3)
-        near = np.abs(distance) < self.window[ring] + extra
-        near &= self.intensity > 0
-        self.crowding2 = self._crowding(ring, distance)
-        near = self._together(near, ring, position, distance)
-        self.ring = np.where(near, ring, -1)
-        cell = (np.arange(self.b * self.k).reshape(self.b, self.k, 1) * self.m + ring)[near]
-        size = self.b * self.k * self.m
-        weight = self.intensity[near]
+        real = self.intensity > 0
+        about = real & (np.abs(distance) < _ABOUT * self.pattern.merging[ring])
+        self.crowding2 = self._crowding(_Lines(self, about, ring, position, distance))
+        near = real & (np.abs(distance) < self.window[ring] + extra)
+        lines = self._together(_Lines(self, near, ring, position, distance))
+        self.ring = np.full(self.x.shape, -1)
+        self.ring.ravel()[lines.index] = lines.ring
+        cell, size = lines.owner * self.m + lines.ring, self.b * self.k * self.m
         shape = (self.b, self.k, self.m)
-        self.sum = np.bincount(cell, weights=weight, minlength=size).reshape(shape)
+        self.sum = np.bincount(cell, weights=lines.intensity, minlength=size).reshape(shape)
         weight_sum = np.maximum(self.sum, 1e-300)
-        away = distance[near]
-        moment = np.bincount(cell, weights=weight * away, minlength=size).reshape(shape)
-        self.centre = moment / weight_sum
+        moment = np.bincount(cell, weights=lines.intensity * lines.distance, minlength=size)
+        self.centre = moment.reshape(shape) / weight_sum
         if self.axial is not None:
+            axial = self.axial.reshape(-1, self.axial.shape[3])[lines.index]
             levers = [
-                np.bincount(cell, weights=weight * self.axial[..., a][near], minlength=size)
-                for a in range(self.axial.shape[3])
+                np.bincount(cell, weights=lines.intensity * axial[:, a], minlength=size)
+                for a in range(axial.shape[1])
             ]
             self.lever = np.stack(levers, axis=1).reshape(*shape, -1) / weight_sum[..., None]
         with np.errstate(invalid="ignore"):
             covered = self.pattern.seen_weight(np.where(np.isfinite(position), position, 50.0))
         self.covered = np.where(self.visible > 0, covered, 0.0)
 
-    def _crowding(self, ring: NDArray[np.int64], distance: Floats) -> Floats:
+    def _crowding(self, about: _Lines) -> Floats:
         """(b, m) mean square width of what lies about each ring and partly merges with it.
 
         Lines of every phase count by the intensity they are expected to have.
         """
-        about = (np.abs(distance) < _ABOUT * self.pattern.merging[ring]) & (self.intensity > 0)
-        batch = np.arange(self.b)[:, None, None]
-        cell = (batch * self.m + ring)[about]
-        weight = (self.intensity * np.exp(self.ln_amplitude)[:, :, None])[about]
-        away = distance[about]
-        size = self.b * self.m
+        cell, size = about.batch * self.m + about.ring, self.b * self.m
+        weight = about.intensity * np.exp(self.ln_amplitude).ravel()[about.owner]
         total = np.maximum(np.bincount(cell, weights=weight, minlength=size), 1e-300)
-        mean = np.bincount(cell, weights=weight * away, minlength=size) / total
-        square = np.bincount(cell, weights=weight * away**2, minlength=size) / total
+        moment = weight * about.distance
+        mean = np.bincount(cell, weights=moment, minlength=size) / total
+        square = np.bincount(cell, weights=moment * about.distance, minlength=size) / total
         result: Floats = np.maximum(square - mean**2, 0.0).reshape(self.b, self.m)
         return result
 
-    def _together(
-        self, near: NDArray[np.bool_], ring: NDArray[np.int64], position: Floats, distance: Floats
-    ) -> NDArray[np.bool_]:
+    def _together(self, near: _Lines) -> _Lines:
         """Keep, of the lines near a ring, its main line and what cannot be told from that.
 
         A line that would have made a ring of its own is not hidden by being near another.
         """
-        main = self._main(near, ring, distance)
+        main = self._main(near)
         # of two lines nearest to one ring the lesser makes the ring beside it, if that has none
-        beside = np.clip(ring + np.sign(distance).astype(np.int64), 0, self.m - 1)
+        x = self.pattern.x
+        beside = np.clip(near.ring + np.sign(near.distance).astype(np.int64), 0, self.m - 1)
         taken = np.zeros(self.b * self.m, dtype=bool)
-        batch = np.arange(self.b)[:, None, None] * self.m
-        taken[(batch + ring)[main]] = True
-        away = distance + self.pattern.x[ring] - self.pattern.x[beside]
-        free = near & ~main & (beside != ring) & ~taken[batch + beside]
+        taken[(near.batch * self.m + near.ring)[main]] = True
+        away = near.distance + x[near.ring] - x[beside]
+        free = ~main & (beside != near.ring) & ~taken[near.batch * self.m + beside]
         free &= np.abs(away) < self.window[beside]
         if free.any():
-            ring[free], distance[free] = beside[free], away[free]
-            main = self._main(near, ring, distance)
-        key = batch + ring
+            near.ring[free], near.distance[free] = beside[free], away[free]
+            main = self._main(near)
+        key = near.batch * self.m + near.ring
         middle = np.zeros(self.b * self.m)
-        middle[key[main]] = position[main]
-        apart = np.abs(position - middle[key])
-        hidden = near & (apart < _HIDDEN * self.pattern.resolution[ring])
-        return np.asarray(hidden | main)
+        middle[key[main]] = near.position[main]
+        apart = np.abs(near.position - middle[key])
+        return near.where(main | (apart < _HIDDEN * self.pattern.resolution[near.ring]))
 
-    def _main(
-        self, near: NDArray[np.bool_], ring: NDArray[np.int64], distance: Floats
-    ) -> NDArray[np.bool_]:
-        """(b, k, n) the line that each ring is most likely made by."""
-        key = np.arange(self.b)[:, None, None] * self.m + ring
-        with np.errstate(divide="ignore"):
-            score = np.log(self.intensity) + self.ln_amplitude[:, :, None]
-        score = np.where(near, score - 0.5 * (distance / (1.5 * self.pattern.sigma[ring])) ** 2, 0)
+    def _main(self, near: _Lines) -> NDArray[np.bool_]:
+        """Which of the lines are those that each ring is most likely made by."""
+        key = near.batch * self.m + near.ring
+        score = np.log(near.intensity) + self.ln_amplitude.ravel()[near.owner]
+        score -= 0.5 * (near.distance / (1.5 * self.pattern.sigma[near.ring])) ** 2
         best = np.full(self.b * self.m, -np.inf)
-        np.maximum.at(best, key[near], score[near])
-        return np.asarray(near & (score >= best[key]))
+        np.maximum.at(best, key, score)
+        return np.asarray(score >= best[key])
 
     def _missing(self) -> Floats:
         """(b, k, n) chance that the range covers a line that meets no claimed ring."""
@@ -224,7 +247,15 @@ class PatternWork:
         They answer to ring intensities, rings seen and lines not seen.
         """
         scatter = self.pattern.scatter
-        keep = (1.0 - scatter.lost) * self._missing()
+        keep = (1.0 - scatter.lost) * self._missing().ravel()
+        lone = np.flatnonzero(keep > _COVERED)
+        keep, owner = keep[lone], lone // self.n
+        ln_visible, curve = self.ln_visible.ravel()[lone], self.line_curve.ravel()[lone]
+
+        def by_phase(values: Floats) -> Floats:
+            summed = np.bincount(owner, weights=values, minlength=self.b * self.k)
+            return np.asarray(summed, dtype=np.float64).reshape(self.b, self.k)
+
         used = self.claimed & (self.sum.sum(axis=1) > 0)
         width = self.pattern.limit_sd
         stiffness = np.diag([_AMPLITUDE_PRIOR_SD**-2 + 1e-3] * self.k + [TREND_SD**-2, width**-2])
@@ -247,21 +278,26 @@ class PatternWork:
             shown = np.where(used, DETECTION_SLOPE * (1.0 - seen), 0.0)
             firm = np.where(used, DETECTION_SLOPE**2 * seen * (1.0 - seen), 0.0)
 
-            would = _logistic(DETECTION_SLOPE * self._ln_shown())
+            raised = (self.ln_amplitude - self._ln_limit()).ravel()
+            falling = np.repeat(self.trend, self.k)
+            would = _logistic(
+                DETECTION_SLOPE * (ln_visible + raised[owner] - falling[owner] * curve)
+            )
             slope = keep * DETECTION_SLOPE * would * (1.0 - would) / (1.0 - keep * would)
             bend = DETECTION_SLOPE * slope * (1.0 - would)
             effect = np.concatenate([share, lever], axis=1)
             effect_seen = np.concatenate([effect, lower], axis=1)
             gradient = np.einsum("bkm,bm->bk", effect_seen, shown)
             gradient[:, :limit] += np.einsum("bkm,bm->bk", effect, weight * error)
-            gradient[:, : self.k] -= slope.sum(axis=2) + self.ln_amplitude / _AMPLITUDE_PRIOR_SD**2
-            gradient[:, trend] += (slope * self.line_curve).sum(axis=(1, 2))
+            lost = by_phase(slope)
+            gradient[:, : self.k] -= lost + self.ln_amplitude / _AMPLITUDE_PRIOR_SD**2
+            gradient[:, trend] += by_phase(slope * curve).sum(axis=1)
             gradient[:, trend] -= self.trend / TREND_SD**2
-            gradient[:, limit] += slope.sum(axis=(1, 2)) - self.limit / width**2
+            gradient[:, limit] += lost.sum(axis=1) - self.limit / width**2
             hessian = np.einsum("bkm,bm,blm->bkl", effect_seen, firm, effect_seen) + stiffness
             hessian[:, :limit, :limit] += np.einsum("bkm,bm,blm->bkl", effect, weight, effect)
             diagonal = np.arange(self.k)
-            own, curved = bend.sum(axis=2), (bend * self.line_curve).sum(axis=2)
+            own, curved = by_phase(bend), by_phase(bend * curve)
             hessian[:, diagonal, diagonal] += own
             for row, column, value in (
                 (slice(0, self.k), trend, -curved),
@@ -270,7 +306,7 @@ class PatternWork:
             ):
                 hessian[:, row, column] += value
                 hessian[:, column, row] += value
-            hessian[:, trend, trend] += (bend * self.line_curve**2).sum(axis=(1, 2))
+            hessian[:, trend, trend] += by_phase(bend * curve**2).sum(axis=1)
             hessian[:, limit, limit] += own.sum(axis=1)
             step = np.linalg.solve(hessian, gradient[:, :, None])[:, :, 0]
             step = np.clip(step, -1.0, 1.0)
@@ -287,7 +323,7 @@ class PatternWork:
 
     def _ln_shown(self) -> Floats:
         """(b, k, n) ln of each line's expected intensity over the detection limit."""
-        shown = self.ln_amplitude[:, :, None] + self.with_ln_visible - self._ln_limit()[:, :, None]
+        shown = self.ln_amplitude[:, :, None] + self.ln_visible - self._ln_limit()[:, :, None]
         result: Floats = shown - self.trend[:, None, None] * self.line_curve
         return result
 
