@@ -1,6 +1,7 @@
 """How good the answers are: simulated patterns of known phases, identified against a library.
 
     python scripts/bench_matching.py [--library FILE] [--cases 60] [--seed 1] [--families a,b]
+                                     [--without INGREDIENT]
 
 Every family draws its own cases; seeds are fixed, so that a run can be repeated. The physics of the
 simulator is gemmi's, not phaseid's. Beside phaseid stands the published manual procedure (Hanawalt,
@@ -14,6 +15,7 @@ from __future__ import annotations
 import argparse
 import itertools
 import os
+import sys
 import time
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass, fields, replace
@@ -25,6 +27,7 @@ from simulated_patterns import ELECTRON, NEUTRON, XRAY, Conditions, Simulator
 from phaseid.library import Library, open_default
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.identify import identify
+from phaseid.matching.settings import SCATTER
 from phaseid.rings.ringlist import RingList
 
 
@@ -55,9 +58,15 @@ FAMILIES = (
     Family("5-10 % contaminant", (XRAY,), phases=2, minority=True),
     Family("3-6 rings", (replace(ELECTRON, most=6),)),
     Family(
-        "stress",
+        "all of it at once",
         (replace(ELECTRON, understated=1.8, scatter=0.8, lost=0.1, foreign=1.0, strain=0.002),),
     ),
+    Family("sigmas understated 1.8×", (replace(ELECTRON, understated=1.8),)),
+    Family("displacement 0.1°", (replace(XRAY, displacement_deg=0.1),)),
+    Family("texture, electrons", (replace(ELECTRON, texture=0.5),)),
+    Family("texture, x-rays", (replace(XRAY, texture=0.6),)),
+    Family("rings lost", (replace(ELECTRON, lost=0.15),)),
+    Family("foreign rings", (replace(ELECTRON, foreign=2.0),)),
     Family("one listed, one not", (XRAY,), phases=2, absent=1),
     Family("absent, electrons", (ELECTRON,), absent=1),
     Family("absent, x-rays", (XRAY,), absent=1),
@@ -106,7 +115,8 @@ def hanawalt(rings: RingList, library: Library, allowed: set[str], tolerance: fl
 class Bench:
     """One library, one simulator."""
 
-    def __init__(self, path: Path, seed: int) -> None:
+    def __init__(self, path: Path, seed: int, without: str | None = None) -> None:
+        self.without = without
         self.library = Library.open(path)
         self.phases = self.library.phases()
         crystals = [self.library.crystal(p.phase_id) for p in self.phases]
@@ -137,7 +147,7 @@ class Bench:
             rings = self.simulator.pattern(truth, shares, how)
             if rings is None:
                 return None
-            patterns.append(rings)
+            patterns.append(_stripped(rings, self.without))
         hidden = {self.phases[i].phase_id for i in truth[len(truth) - family.absent :]}
         if family.absent:
             hidden |= self._twins(truth[len(truth) - family.absent :])
@@ -237,9 +247,47 @@ def _names(hypothesis, wanted: set[str]) -> bool:
     return not free
 
 
-def _run(task: tuple[Path, int, int, int]) -> tuple[int, list[Outcome]]:
-    path, index, cases, seed = task
-    return index, Bench(path, seed * 1000 + index).run(FAMILIES[index], cases)
+WITHOUT: dict[str, dict[str, object]] = {
+    "missing lines": {
+        "SCATTER": {kind: replace(scatter, lost=1.0) for kind, scatter in SCATTER.items()}
+    },
+    "common scale": {"STRAIN": 1e-5},
+    "strain": {"STRAIN": 1e-5},
+    "foreign rings": {"FOREIGN_RINGS": 1e-4, "BESIDE_PRIOR": 1e-6},
+    "inflated sigmas": {"SIGMA_INFLATION": ((1.0, 0.5), (1.0, 0.5))},
+    "unsure detection limit": {"LIMIT_SD": 1e-3},
+    "intensity trend": {"TREND_SD": 1e-3},
+    "crowded rings": {"CROWDING": 0.0},
+    "roughly known structures": {"ROUGH_PRIOR": 1e-9},
+    "unlisted relatives": {"RELATIVE_PRIOR": 1e-9},
+    "texture": {"TEXTURE_PRIOR": 1e-12},
+    "intensities": {},
+}
+"""Ingredients of the model and what takes each away: constants, or what the patterns carry."""
+
+
+def _take_away(ingredient: str) -> None:
+    """Set the constants of an ingredient in every module that uses them."""
+    for name, value in WITHOUT[ingredient].items():
+        for module in list(sys.modules.values()):
+            if module.__name__.startswith("phaseid.matching") and hasattr(module, name):
+                setattr(module, name, value)
+
+
+def _stripped(rings: RingList, ingredient: str | None) -> RingList:
+    """The pattern without what the ingredient needs."""
+    if ingredient == "intensities":
+        return replace(rings, intensity=np.full(len(rings), np.nan))
+    if ingredient == "common scale":
+        return replace(rings, probe=replace(rings.probe, scale_sigma=1e-4))
+    return rings
+
+
+def _run(task: tuple[Path, int, int, int, str | None]) -> tuple[int, list[Outcome]]:
+    path, index, cases, seed, ingredient = task
+    if ingredient is not None:
+        _take_away(ingredient)
+    return index, Bench(path, seed * 1000 + index, ingredient).run(FAMILIES[index], cases)
 
 
 def _percent(hits: float, count: int) -> str:
@@ -291,6 +339,7 @@ def main() -> None:
     parser.add_argument("--cases", type=int, default=60)
     parser.add_argument("--seed", type=int, default=1)
     parser.add_argument("--families", default="", help="names or parts of names, comma between")
+    parser.add_argument("--without", choices=sorted(WITHOUT), help="take an ingredient away")
     parser.add_argument("--jobs", type=int, default=os.cpu_count() or 1)
     options = parser.parse_args()
     path = options.library or Path(open_default(None).path)
@@ -302,7 +351,7 @@ def main() -> None:
     )
     everything: list[Outcome] = []
     with ProcessPoolExecutor(options.jobs) as pool:
-        tasks = [(path, i, options.cases, options.seed) for i in chosen]
+        tasks = [(path, i, options.cases, options.seed, options.without) for i in chosen]
         for index, outcomes in pool.map(_run, tasks):
             print(report(FAMILIES[index].name, outcomes), flush=True)
             everything += outcomes
