@@ -197,32 +197,61 @@ class PatternWork:
 
         A line that would have made a ring of its own is not hidden by being near another.
         """
-        main = self._main(near)
-        # of two lines nearest to one ring the lesser makes the ring beside it, if that has none
-        x = self.pattern.x
-        beside = np.clip(near.ring + np.sign(near.distance).astype(np.int64), 0, self.m - 1)
-        taken = np.zeros(self.b * self.m, dtype=bool)
-        taken[(near.batch * self.m + near.ring)[main]] = True
-        away = near.distance + x[near.ring] - x[beside]
-        free = ~main & (beside != near.ring) & ~taken[near.batch * self.m + beside]
-        free &= np.abs(away) < self.window[beside]
-        if free.any():
-            near.ring[free], near.distance[free] = beside[free], away[free]
-            main = self._main(near)
+        main = self._settled(near)
         key = near.batch * self.m + near.ring
         middle = np.zeros(self.b * self.m)
         middle[key[main]] = near.position[main]
         apart = np.abs(near.position - middle[key])
         return near.where(main | (apart < _HIDDEN * self.pattern.resolution[near.ring]))
 
-    def _main(self, near: _Lines) -> NDArray[np.bool_]:
-        """Which of the lines are those that each ring is most likely made by."""
+    def _settled(self, near: _Lines) -> NDArray[np.bool_]:
+        """Which lines make the rings, after close pairs are told apart; moves lines of `near`.
+
+        Of two lines nearest to one ring the lesser makes the ring on its side, if that has none
+        yet; else the greater makes the ring on its own side.
+        """
+        every = np.ones(len(near.ring), dtype=bool)
+        main = self._main(near, every)
+        side = np.sign(near.distance).astype(np.int64)
+        if self._move(near, main, ~main, side):
+            main = self._main(near, every)
+        lesser = self._main(near, ~main)
+        if lesser.any():
+            place = np.full(self.b * self.m, np.nan)
+            key = near.batch * self.m + near.ring
+            place[key[lesser]] = near.position[lesser]
+            away = np.nan_to_num(near.position - place[key])
+            if self._move(near, main, main, np.sign(away).astype(np.int64)):
+                main = self._main(near, every)
+        return main
+
+    def _move(
+        self,
+        near: _Lines,
+        main: NDArray[np.bool_],
+        which: NDArray[np.bool_],
+        side: NDArray[np.int64],
+    ) -> bool:
+        """Give the lines `which` to the ring on their `side` (-1, 0, 1), if no line makes it."""
+        x = self.pattern.x
+        beside = np.clip(near.ring + side, 0, self.m - 1)
+        taken = np.zeros(self.b * self.m, dtype=bool)
+        taken[(near.batch * self.m + near.ring)[main]] = True
+        away = near.distance + x[near.ring] - x[beside]
+        free = which & (beside != near.ring) & ~taken[near.batch * self.m + beside]
+        free &= np.abs(away) < self.window[beside]
+        near.ring[free], near.distance[free] = beside[free], away[free]
+        return bool(free.any())
+
+    def _main(self, near: _Lines, among: NDArray[np.bool_]) -> NDArray[np.bool_]:
+        """Which of the lines `among` is for each ring the one most likely to make it."""
         key = near.batch * self.m + near.ring
         score = np.log(near.intensity) + self.ln_amplitude.ravel()[near.owner]
         score -= 0.5 * (near.distance / (1.5 * self.pattern.sigma[near.ring])) ** 2
+        score[~among] = -np.inf
         best = np.full(self.b * self.m, -np.inf)
         np.maximum.at(best, key, score)
-        return np.asarray(score >= best[key])
+        return np.asarray(among & (score >= best[key]))
 
     def _missing(self) -> Floats:
         """(b, k, n) chance that the range covers a line that meets no claimed ring."""

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 from phaseid.matching.settings import (
     DISPLACEMENT_DEG,
     LIMIT_SD,
+    MEASURED_LIMIT_SD,
     SCATTER,
     ZERO_SHIFT_DEG,
     Scatter,
@@ -26,6 +27,8 @@ Floats = NDArray[np.float64]
 _FINEST, _COARSEST = 1e-4, 0.05
 """Relative ring sigmas below or above these are taken as these: no listed cell is known better, and
 a ring known worse says nothing."""
+_LEAST_LIMIT = 5e-4
+"""No pattern shows rings below this part of its strongest."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -133,8 +136,18 @@ def _group_duplicates(x: Floats, sigma: Floats) -> list[list[int]]:
     return groups
 
 
-def _detection_limit(ln_intensity: Floats, intensity_sd: Floats) -> float:
-    """ln of the detection limit: a little below the weakest ring; 5 % where nothing is known.
+def _detection_limit(
+    rings: RingList, ln_intensity: Floats, intensity_sd: Floats
+) -> tuple[float, float]:
+    """ln of the detection limit and its one-sigma: as measured, else as the weakest rings tell."""
+    if rings.detection_limit is not None and np.isfinite(rings.intensity).any():
+        stated = rings.detection_limit / np.nanmax(rings.intensity)
+        return float(np.log(max(stated, _LEAST_LIMIT))), MEASURED_LIMIT_SD
+    return _told_by_rings(ln_intensity, intensity_sd), LIMIT_SD
+
+
+def _told_by_rings(ln_intensity: Floats, intensity_sd: Floats) -> float:
+    """ln of a limit a little below the weakest ring; 5 % where nothing is known.
 
     A grade says only that the ring is within its interval: the lower part of it counts.
     """
@@ -142,7 +155,7 @@ def _detection_limit(ln_intensity: Floats, intensity_sd: Floats) -> float:
     if not known.any():
         return float(np.log(0.05))
     low = np.sort(ln_intensity[known] - intensity_sd[known])
-    return float(max(low[: 1 + len(low) // 8].mean() - 0.25, np.log(0.0005)))
+    return float(max(low[: 1 + len(low) // 8].mean() - 0.25, np.log(_LEAST_LIMIT)))
 
 
 def prepare(rings: RingList) -> Pattern:
@@ -165,6 +178,7 @@ def prepare(rings: RingList) -> Pattern:
             intensity_sd[k] = np.log(high / low) / np.sqrt(12.0) if high > low > 0 else 0.0
     scatter = SCATTER[rings.probe.kind]
     scale = np.full((len(x), 1), rings.probe.scale_sigma)
+    ln_limit, limit_sd = _detection_limit(rings, ln_intensity, intensity_sd)
     merging, resolution, fineness = _resolution(x, rings.probe, scatter)
     return Pattern(
         rings=rings,
@@ -176,8 +190,8 @@ def prepare(rings: RingList) -> Pattern:
         intensity_sd=intensity_sd,
         members=tuple(tuple(group) for group in groups),
         nuisance=np.hstack([scale, _angle_columns(x, rings.probe)]),
-        ln_limit=_detection_limit(ln_intensity, intensity_sd),
-        limit_sd=LIMIT_SD,
+        ln_limit=ln_limit,
+        limit_sd=limit_sd,
         merging=merging,
         resolution=resolution,
         fineness=fineness,

@@ -26,10 +26,15 @@ from phaseid.matching.settings import (
     RELATIVE_JITTER,
     RELATIVE_STRAIN,
     STRAIN,
-    TEXTURE_PRIOR,
     UNLISTED_PRIOR,
 )
-from phaseid.matching.texture import Axis, can_show_texture, fibre_factors, likely_axes
+from phaseid.matching.texture import (
+    Axis,
+    can_show_texture,
+    fibre_factors,
+    likely_axes,
+    texture_prior,
+)
 
 Members = tuple[int, ...]
 
@@ -160,7 +165,7 @@ class Search:
             )
         )
         self.model = Model(self.model.patterns, widened, self.model.crowd)
-        shared = log(TEXTURE_PRIOR / _AXES_EACH)
+        shared = log(texture_prior(self.model.patterns) / _AXES_EACH)
         self.log_prior = np.concatenate([self.log_prior, self.log_prior[chosen] + shared])
         self.phases = np.concatenate([self.phases, self.phases[chosen]])
         for number, (parent, axis) in enumerate(zip(parents, axes, strict=True), first):

@@ -88,6 +88,8 @@ DETECTION_SLOPE = 2.6
 
 LIMIT_SD = 0.35
 """One-sigma of ln of the detection limit, as the weakest rings tell it."""
+MEASURED_LIMIT_SD = 0.2
+"""The same of a limit that was measured with the rings."""
 
 FOREIGN_RINGS = 0.6
 """Expected number of rings from nowhere in a pattern (Poisson)."""
@@ -99,6 +101,9 @@ PHASE_COUNT_PRIOR = (0.70, 0.22, 0.06, 0.02)
 """Prior of one, two, three, four listed phases."""
 TEXTURE_PRIOR = 0.15
 """Prior that a phase of a film or flat specimen has a fibre axis, shared by its likely axes."""
+ARCED_TEXTURE_PRIOR = 0.5
+"""The same where rings are seen to be arcs: stronger on some sides by more than `ARCED`."""
+ARCED = 0.3
 
 UNLISTED_PRIOR = 0.15
 """Prior that no listed phase is in the specimen."""

@@ -7,6 +7,7 @@ fade, which a random powder's intensities would call missing.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from functools import cache
 from itertools import permutations, product
 
@@ -15,7 +16,8 @@ from numpy.typing import NDArray
 
 from phaseid.library.linetable import LineTable
 from phaseid.matching.lineset import reciprocal_metric
-from phaseid.matching.patterns import Floats
+from phaseid.matching.patterns import Floats, Pattern
+from phaseid.matching.settings import ARCED, ARCED_TEXTURE_PRIOR, TEXTURE_PRIOR
 from phaseid.probes.probe import Probe
 
 _SPREAD = np.radians(8.0)
@@ -33,6 +35,15 @@ _OTHER: tuple[Axis, ...] = ((1, 0, 0), (0, 1, 0), (0, 0, 1))
 def can_show_texture(probe: Probe) -> bool:
     """Whether a fibre axis changes what this probe and geometry show."""
     return probe.geometry in ("ring", "bragg-brentano")
+
+
+def texture_prior(patterns: Sequence[Pattern]) -> float:
+    """Prior that a phase has a fibre axis: more where rings are arcs, as an image may show."""
+    for pattern in patterns:
+        arcs = pattern.rings.arcs
+        if arcs is not None and np.isfinite(arcs).any() and np.nanmedian(arcs) > ARCED:
+            return ARCED_TEXTURE_PRIOR
+    return TEXTURE_PRIOR
 
 
 def likely_axes(metric: Floats) -> tuple[Axis, ...]:
