@@ -62,19 +62,18 @@ def test_a_further_phase_shows_by_two_rings_of_its_own(own: tuple[float, ...], s
     assert bool(fit_of(model, 0).shows[0])
 
 
-@pytest.mark.parametrize(("beside", "helps"), [((1.70935, 1.69065), True), ((), False)])
+@pytest.mark.parametrize(("beside", "helps"), [((1.706, 1.694), True), ((), False)])
 def test_a_ring_amid_a_crowd_of_lines_may_stray_further(
     monkeypatch: pytest.MonkeyPatch, beside: tuple[float, ...], helps: bool
 ) -> None:
     toy = Toy((3.0, 2.2, 1.7, *beside), (100, 80, 60, *([50] * len(beside))))
-    strayed = (3.0, 2.2, 1.7 * np.exp(0.004))
-    model, _ = toy_model(
-        [toy], [toy_rings(strayed, 0.001, probe="x-ray 1 A", intensities=[100, 80, 60])]
-    )
+    strayed = (3.0, 2.2, 1.7 * np.exp(0.006))
+    rings = toy_rings(strayed, 0.001, probe="x-ray 1 A", scale=1e-4, intensities=[100, 80, 60])
+    model, _ = toy_model([toy], [rings])
     allowed = fit_of(model, 0).log_likelihood[0]
     monkeypatch.setattr(laying, "CROWDING", 0.0)
     refused = fit_of(model, 0).log_likelihood[0]
-    assert (allowed > refused + 0.3) if helps else (allowed == refused)
+    assert (allowed > refused + 0.2) if helps else (allowed == refused)
 
 
 def test_a_measured_detection_limit_is_believed_before_the_weakest_ring() -> None:
