@@ -175,13 +175,13 @@ def test_a_stated_constant_makes_the_factor() -> None:
 def test_the_stated_uncertainty_holds_the_error_as_often_as_it_should() -> None:
     """Known constants, readings and the cell off by their sigmas, one ring missing: 68 %, 95 %.
 
-    Sigmas are never shrunk (Birge), so a little more; binomial limits of 80 draws at 99 %.
+    Sigmas are never shrunk (Birge), so a little more; binomial limits of 30 draws at 99 %.
     """
     generator = np.random.default_rng(3)
     gold = find_standard("Au", 25.0)
     assert gold is not None
     off = []
-    for _ in range(80):
+    for _ in range(30):
         constant = 25.0 * math.exp(0.1 * generator.normal())
         edge = gold.cell[0] * (1 + gold.relative_sigma * generator.normal())
         radii = [float(r) + 0.02 * generator.normal() for r in _radii(edge, constant)]
@@ -190,8 +190,8 @@ def test_the_stated_uncertainty_holds_the_error_as_often_as_it_should() -> None:
         found = result.camera_constant
         assert found is not None
         off.append(abs(found.value - constant) / found.sigma)
-    assert 0.54 < np.mean(np.array(off) < 1) < 0.86
-    assert np.mean(np.array(off) < 2) > 0.88
+    assert 0.45 < np.mean(np.array(off) < 1) < 0.93
+    assert np.mean(np.array(off) < 2) > 0.83
     assert max(off) < 4.5
 
 
