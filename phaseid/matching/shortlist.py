@@ -36,10 +36,10 @@ members numbered as the allowed phases are."""
 _ALONE = (Share(0.0, True), Share(log(0.7), True))
 _SHARES = (*_ALONE, *(Share(log(s), False) for s in (1.0, 0.6, 0.35, 0.2, 0.12, 0.06)))
 _OF_THE_REST = ((0.0, True), (0.0, False), (0.8, False), (-0.6, False))
-_PLACES = 24
-_PLACES_OF_THE_REST = 12
-_RELATIVE_PLACES = 10
-_RELATIVE_BLUR = 0.002
+_PLACES, _PLACES_NEAR, _PLACES_OF_THE_REST = 16, 24, 12
+"""Lines looked at of every phase, of those that may be near, of those for the rest."""
+_RELATIVE_PLACES = 8
+_RELATIVE_BLUR = 0.004
 _RELATIVES = 48
 _EACH = 90
 """Phases taken for each share supposed."""
@@ -47,9 +47,9 @@ _EACH_OF_THE_REST = (120, 60, 30)
 """The same for what the best set leaves, the second best, and each of the others."""
 _BASES = {1: 8, 2: 4}
 """Sets of one and of two phases whose leftovers are looked at."""
-_WHOLE, _LOOKS = 2, 400_000
-"""The whole library is looked through for what the best two of these leave, and for more of them
-while the phases looked at are fewer than that; for the others what may be near."""
+_WHOLE, _LOOKS = (2, 1), 400_000
+"""The whole library is looked through for what the best two phases and the best pair leave, and for
+more of these while the phases looked at are fewer than that; for the others what may be near."""
 _SETS_COMPARED = 40
 _JUDGED = 150
 """Phases that the likelihood judges before the library is looked through again."""
@@ -90,7 +90,8 @@ class _Chooser:
         Returns these phases, the likeliest first, one array for each of the sets.
         """
         found = []
-        whole = max(_WHOLE, _LOOKS // len(self.allowed))
+        size = len(sets[0].members) if sets else 1
+        whole = max(_WHOLE[size - 1], _LOOKS // len(self.allowed))
         for place, judged in enumerate(sets):
             among = None if place < whole else near
             rest = [
@@ -118,9 +119,9 @@ def shortlist(
     into them, `log_prior` (p,) belongs to the allowed.
     """
     chooser = _Chooser(patterns, strong, allowed, log_prior)
-    score = chooser.score([_first_glance(p, _SHARES, STRAIN) for p in patterns], _PLACES)
-    ranks = ranked(score, _NEAR)
-    near = np.unique(ranks)
+    first_glances = [_first_glance(p, _SHARES, STRAIN) for p in patterns]
+    near = np.unique(ranked(chooser.score(first_glances, _PLACES), _NEAR))
+    ranks = near[ranked(chooser.score(first_glances, _PLACES_NEAR, near), _NEAR)]
     chooser.take(by_turns(ranks, _EACH))
     wide = [_first_glance(p, _ALONE[:1], RELATIVE_STRAIN, _RELATIVE_BLUR) for p in patterns]
     chooser.take(ranked(chooser.score(wide, _RELATIVE_PLACES), _RELATIVES)[:, 0])
