@@ -282,8 +282,8 @@ def _check_convertible(table: RingTable, probe: Probe, constant: CameraConstant 
             raise InputError(
                 f"{column.name} needs a camera constant and none is stated",
                 path=path,
-                remedy=f"Add a line '# camera constant: {EXAMPLE.replace('mm', unit)}'; "
-                "'phaseid calibrate' finds it from a plate of a known standard.",
+                remedy=f"Add a line '# camera constant: {EXAMPLE.replace('mm', unit)}' or give "
+                "--camera-constant; 'phaseid calibrate' finds it from a known standard.",
             )
         if constant.plate_unit != unit:
             raise InputError(
