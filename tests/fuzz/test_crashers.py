@@ -22,6 +22,7 @@ from phaseid.library.tally import Rejected
 from phaseid.rings import rings_from_values, rings_to_text, write_rings
 from phaseid.rings.calibration_record import load_calibration
 from phaseid.rings.measuring import curves, measure_profile, read_curve, read_image
+from phaseid.rings.measuring.peaks import candidates
 from tests.fuzz.targets import TARGETS
 
 NO_NUMBERS: list[Any] = ["x", [1], {}, True, 10**400, 1e300, math.inf, math.nan]
@@ -143,6 +144,12 @@ def test_a_profile_of_too_many_points_is_left_early(
     path.write_text("two_theta_deg counts\n" + "1 " * 1_000_000)
     with pytest.raises(InputError, match="5000 characters a line"):
         read_curve(path)
+
+
+def test_a_peak_is_sought_at_no_width() -> None:
+    """Sawteeth left the search without any width that fits."""
+    flat = np.ones(50)
+    assert candidates(flat, flat, np.array([]), 3.0) == []
 
 
 def test_a_profile_of_many_columns_keeps_three(tmp_path: Path) -> None:

@@ -69,6 +69,8 @@ def candidates(
     y: Floats, sigma: Floats, widths: Floats, threshold: float
 ) -> list[tuple[int, float, float]]:
     """(index, sigma in steps, significance) of peaks that stand out, strongest first."""
+    if not len(widths):
+        return []
     scores = np.stack([significance(y, sigma, width) for width in widths])
     best = scores.argmax(axis=0)
     top = scores.max(axis=0)
