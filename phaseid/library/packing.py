@@ -82,13 +82,18 @@ def unpack_many(
 
     Lines of phase i are rows offsets[i] to offsets[i + 1]; m|F|²d² is 0 where absent.
     """
+    offsets, hkl, multiplicity, (strength,) = _unpacked((kind,), packed)
+    return offsets, hkl, multiplicity, strength
+
+
+def _unpacked(
+    kinds: Sequence[Kind], packed: Sequence[bytes]
+) -> tuple[NDArray[np.int64], NDArray[np.int16], NDArray[np.int32], list[Floats]]:
     import numpy as np
 
-    which = KINDS.index(kind)
     heads = [_HEAD.unpack_from(data) if data else (1, 0.0, 0.0, 0.0) for data in packed]
     parts = [zlib.decompress(data[_HEAD.size :]) if data else b"" for data in packed]
     width = np.array([head[0] for head in heads], dtype=np.int64)
-    strongest = np.array([head[1 + which] for head in heads], dtype=np.float64)
     size = np.array([len(part) for part in parts], dtype=np.int64)
     count = 2 * size // (8 * width + 9)  # a line takes 4 integers, 3 bytes, 3 half bytes
     offsets = np.concatenate([np.zeros(1, np.int64), np.cumsum(count)])
@@ -109,11 +114,16 @@ def unpack_many(
             value[wide] |= (upper if column == 3 else upper.astype(np.int8)).astype(np.int32) << 8
         whole[column] = value
         at += n * width[owner]
-    high = data[start + n * (4 * width[owner] + which) + within].astype(np.int32)
-    pair = which * n + within
-    low = data[start + n * (4 * width[owner] + 3) + pair // 2] >> np.where(pair % 2, 0, 4) & 15
-    code = high << 4 | low
-    strength = np.where(code < _ABSENT, strongest[owner] * np.exp(-_STEP * code), 0.0)
+    strength = []
+    codes = start + n * (4 * width[owner])
+    for which in map(KINDS.index, kinds):
+        strongest = np.array([head[1 + which] for head in heads], dtype=np.float64)
+        high = data[codes + n * which + within].astype(np.int32)
+        pair = which * n + within
+        low = data[codes + 3 * n + pair // 2] >> np.where(pair % 2, 0, 4) & 15
+        code = high << 4 | low
+        value = strongest[owner] * np.exp(-_STEP * code)
+        strength.append(np.where(code < _ABSENT, value, 0.0))
     return offsets, whole[:3].T.astype(np.int16), whole[3], strength
 
 
@@ -126,9 +136,8 @@ def unpack_lines(
     from phaseid.crystal.lines import Lines
     from phaseid.crystal.metric import inverse_metric, squares
 
-    _, hkl, multiplicity, _ = unpack_many("x-ray", [data])
+    _, hkl, multiplicity, strength = _unpacked(KINDS, [data])
     inverse_d2 = squares(hkl.astype(np.float64), inverse_metric(cell))
-    strength = [unpack_many(kind, [data])[3] for kind in KINDS]
     f2_xray, f2_electron, f2_neutron = (one * inverse_d2 / multiplicity for one in strength)
     return Lines(
         d_A=1 / np.sqrt(inverse_d2),
