@@ -105,7 +105,7 @@ def _by_sector(
     for s in range(mean.shape[1]):
         n = number[:, s]
         # a straight background needs both flanks and most of the window
-        if (n > 0).mean() < 0.7:
+        if (n > 0).mean() < 0.85:
             continue
         weight = np.sqrt(n) / noise
         inverse = np.linalg.pinv((design * weight[:, None] ** 2).T @ design, hermitian=True)

@@ -11,6 +11,7 @@ from phaseid.rings.measuring.geometry import Floats
 from phaseid.rings.measuring.polar import PolarSums
 
 MIN_COVERAGE = 0.12  # of a circle, below which its mean is not used
+MIN_SHARE = 0.7  # of the first circle used, beside the beam and its stop
 MIN_POINTS = 40
 CLIPPED = 0.1  # of a circle saturated, from which on its mean says nothing
 
@@ -52,7 +53,7 @@ class AzimuthalMean:
 def start_radius(sums: PolarSums) -> float:
     """Radius (px) from which on circles are seen well, outside the beam and its stop."""
     share = sums.number.sum(axis=1) / np.maximum(sums.frame.sum(axis=1), 1)
-    seen = np.flatnonzero((share > 0.4) & (sums.number.sum(axis=1) > 20))
+    seen = np.flatnonzero((share > MIN_SHARE) & (sums.number.sum(axis=1) > 20))
     return float(max(4.0, seen[0] + 2.0 if seen.size else 4.0)) * sums.step
 
 

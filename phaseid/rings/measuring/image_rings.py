@@ -9,7 +9,7 @@ import numpy as np
 
 from phaseid.errors import InputError
 from phaseid.rings.measuring.along_ring import SECTORS, AlongRing, follow
-from phaseid.rings.measuring.azimuthal import AzimuthalMean, azimuthal_mean, start_radius
+from phaseid.rings.measuring.azimuthal import CLIPPED, AzimuthalMean, azimuthal_mean, start_radius
 from phaseid.rings.measuring.centre import guess_geometry, shrink
 from phaseid.rings.measuring.defects import Mask, blots, gain, lone_pixels, saturated_pixels, shadow
 from phaseid.rings.measuring.disc import straightened
@@ -26,6 +26,7 @@ from phaseid.rings.measuring.widths import overlap_sigma
 FIRST_LOOK_PX = 1024
 STEP_PX = 0.5
 MAX_BINS = 2400
+MIN_AREA = 2.5  # sigmas of a ring's area, beside what it overlaps with
 MIN_POSITIVE = 0.55  # of the sectors show a ring, else it is single spots or chance
 MIN_MEDIAN = 1.7  # sigmas of the median of the sectors, for the same
 MIN_BRIGHT = 0.35  # of the sectors hold a clear spot of a spotty ring
@@ -70,7 +71,9 @@ def measure_pixels(image: Pixels, usable: Mask, *, source: str) -> Measurement:
     along = follow(found.fit, seen)
     wide = broad_as_halos(found.fit.position, found.fit.fwhm, float(seen.radius[-1]))
     halos = tuple(sorted((*found.broad, *found.fit.position[wide].tolist())))
-    keep = _those_that_are_rings(along, ~wide)
+    sure = found.fit.area > MIN_AREA * found.fit.area_sigma
+    headless = np.interp(found.fit.position, seen.radius, seen.saturated) > CLIPPED
+    keep = _those_that_are_rings(along, ~wide & (sure | headless))
     if not keep:
         raise _nothing(image, usable, source, halos)
     hidden = overlap_sigma(found.fit)
@@ -117,13 +120,13 @@ def _first_look(image: Pixels, usable: Mask, saturated: Mask) -> tuple[Geometry,
     return geometry.scaled(factor, (factor - 1) / 2), start_radius(sums) * factor
 
 
-def _those_that_are_rings(along: AlongRing, narrow: Mask) -> list[int]:
-    """Which of the narrow peaks of the mean go round the centre, not only here and there."""
+def _those_that_are_rings(along: AlongRing, possible: Mask) -> list[int]:
+    """Which of the possible peaks of the mean go round the centre, not only here and there."""
     even = (along.positive >= MIN_POSITIVE) & (along.median_score > MIN_MEDIAN)
     keep = even | (along.bright > MIN_BRIGHT)
     if keep.any():  # it is a pattern of rings: others may be of fewer crystallites
         keep |= along.bright > MIN_BRIGHT_BESIDE
-    keep &= narrow & np.isfinite(along.position_sigma)
+    keep &= possible & np.isfinite(along.position_sigma)
     return [int(k) for k in np.flatnonzero(keep)]
 
 
