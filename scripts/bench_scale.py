@@ -130,7 +130,7 @@ def show_adding(path: Path, folder: Path) -> float:
         cpu, wall = time.process_time() - start, time.perf_counter() - wall
     copy.unlink()
     say(
-        f"  adding {added} to {held}: {added / cpu:.0f} per CPU second, {added / wall:.0f} per second"
+        f"  adding {added} to {held}: {added / cpu:.0f} per CPU second, {added / wall:.0f} by clock"
     )
     return added / cpu
 
