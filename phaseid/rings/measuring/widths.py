@@ -8,7 +8,7 @@ from phaseid.rings.measuring.fitting import FWHM_PER_SIGMA, Floats, PeakFit
 
 OFF_CENTRE = 0.2
 """How far the fitted middle of unresolved lines lies from their centre of gravity (one sigma), of
-their spread: tried on pairs and triples of drawn lines."""
+their spread: as drawn plates of low-symmetry phases show it, no source."""
 _MIN_PEAKS = 4
 
 
