@@ -40,7 +40,7 @@ if TYPE_CHECKING:
     from phaseid.reports.text import as_text
     from phaseid.rings import read_rings, rings_from_values
 
-__version__ = "0.1.0"
+__version__ = "0.2.0"
 
 __all__ = [
     "Chemistry",

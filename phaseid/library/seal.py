@@ -15,7 +15,7 @@ import zlib
 from io import FileIO
 from pathlib import Path
 
-MOST_BYTES = 1 << 30  # a second's reading
+MOST_BYTES = 1 << 28  # a tenth of a second's reading
 _PIECE = 1 << 20
 _HEADER = 100
 _AT = slice(60, 64)
