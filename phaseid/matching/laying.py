@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from phaseid.matching.lineset import LineSet
 from phaseid.matching.model import Looseness, PatternFit
+from phaseid.matching.pairing import NearLines
 from phaseid.matching.patterns import Floats, Pattern
 from phaseid.matching.settings import (
     AMPLITUDE_WIDTH,
@@ -36,8 +37,6 @@ _ABOUT = 1.5
 """Lines within so many merging distances of a ring make its position less sure."""
 _COVERED = 1e-3
 """Lines the range covers with less chance than this say nothing of amplitudes."""
-_HIDDEN = 1.2
-"""Two lines nearer than this many resolutions make one ring."""
 
 
 def _logistic(z: Floats) -> Floats:
@@ -67,36 +66,6 @@ class Shift:
     offset: Floats
     correction: Floats
     axial: Floats
-
-
-class _Lines:
-    """Some of the lines of a batch, one after another: (l,) arrays.
-
-    `index` into the flattened (b, k, n); `owner` into (b, k); `batch` into (b,); `ring` the ring
-    each may belong to, `position`, `distance` from it and `intensity`.
-    """
-
-    def __init__(
-        self,
-        work: PatternWork,
-        which: NDArray[np.bool_],
-        ring: NDArray[np.int64],
-        position: Floats,
-        distance: Floats,
-    ) -> None:
-        self.index = np.flatnonzero(which)
-        self.owner = self.index // work.n
-        self.batch = self.owner // work.k
-        self.ring = ring.ravel()[self.index]
-        self.position = position.ravel()[self.index]
-        self.distance = distance.ravel()[self.index]
-        self.intensity = work.intensity.ravel()[self.index]
-
-    def where(self, keep: NDArray[np.bool_]) -> _Lines:
-        """These lines, those not kept left out."""
-        for name, values in vars(self).items():
-            setattr(self, name, values[keep])
-        return self
 
 
 class PatternWork:
@@ -156,9 +125,11 @@ class PatternWork:
             extra = extra + (wide - 1.0) * np.abs(self.axial).max(axis=3)
         real = self.intensity > 0
         about = real & (np.abs(distance) < _ABOUT * self.pattern.merging[ring])
-        self.crowding2 = self._crowding(_Lines(self, about, ring, position, distance))
         near = real & (np.abs(distance) < self.window[ring] + extra)
-        lines = self._together(_Lines(self, near, ring, position, distance))
+        place = (ring, position, distance, self.intensity, self.ln_amplitude)
+        self.crowding2 = NearLines(about, *place).crowding(self.m)
+        lines = NearLines(near, *place)
+        lines.settle(self.pattern, self.window)
         self.ring = np.full(self.x.shape, -1)
         self.ring.ravel()[lines.index] = lines.ring
         cell, size = lines.owner * self.m + lines.ring, self.b * self.k * self.m
@@ -177,81 +148,6 @@ class PatternWork:
         with np.errstate(invalid="ignore"):
             covered = self.pattern.seen_weight(np.where(np.isfinite(position), position, 50.0))
         self.covered = np.where(self.visible > 0, covered, 0.0)
-
-    def _crowding(self, about: _Lines) -> Floats:
-        """(b, m) mean square width of what lies about each ring and partly merges with it.
-
-        Lines of every phase count by the intensity they are expected to have.
-        """
-        cell, size = about.batch * self.m + about.ring, self.b * self.m
-        weight = about.intensity * np.exp(self.ln_amplitude).ravel()[about.owner]
-        total = np.maximum(np.bincount(cell, weights=weight, minlength=size), 1e-300)
-        moment = weight * about.distance
-        mean = np.bincount(cell, weights=moment, minlength=size) / total
-        square = np.bincount(cell, weights=moment * about.distance, minlength=size) / total
-        result: Floats = np.maximum(square - mean**2, 0.0).reshape(self.b, self.m)
-        return result
-
-    def _together(self, near: _Lines) -> _Lines:
-        """Keep, of the lines near a ring, its main line and what cannot be told from that.
-
-        A line that would have made a ring of its own is not hidden by being near another.
-        """
-        main = self._settled(near)
-        key = near.batch * self.m + near.ring
-        middle = np.zeros(self.b * self.m)
-        middle[key[main]] = near.position[main]
-        apart = np.abs(near.position - middle[key])
-        return near.where(main | (apart < _HIDDEN * self.pattern.resolution[near.ring]))
-
-    def _settled(self, near: _Lines) -> NDArray[np.bool_]:
-        """Which lines make the rings, after close pairs are told apart; moves lines of `near`.
-
-        Of two lines nearest to one ring the lesser makes the ring on its side, if that has none
-        yet; else the greater makes the ring on its own side.
-        """
-        every = np.ones(len(near.ring), dtype=bool)
-        main = self._main(near, every)
-        side = np.sign(near.distance).astype(np.int64)
-        if self._move(near, main, ~main, side):
-            main = self._main(near, every)
-        lesser = self._main(near, ~main)
-        if lesser.any():
-            place = np.full(self.b * self.m, np.nan)
-            key = near.batch * self.m + near.ring
-            place[key[lesser]] = near.position[lesser]
-            away = np.nan_to_num(near.position - place[key])
-            if self._move(near, main, main, np.sign(away).astype(np.int64)):
-                main = self._main(near, every)
-        return main
-
-    def _move(
-        self,
-        near: _Lines,
-        main: NDArray[np.bool_],
-        which: NDArray[np.bool_],
-        side: NDArray[np.int64],
-    ) -> bool:
-        """Give the lines `which` to the ring on their `side` (-1, 0, 1), if no line makes it."""
-        x = self.pattern.x
-        beside = np.clip(near.ring + side, 0, self.m - 1)
-        taken = np.zeros(self.b * self.m, dtype=bool)
-        taken[(near.batch * self.m + near.ring)[main]] = True
-        away = near.distance + x[near.ring] - x[beside]
-        free = which & (beside != near.ring) & ~taken[near.batch * self.m + beside]
-        free &= np.abs(away) < self.window[beside]
-        near.ring[free], near.distance[free] = beside[free], away[free]
-        return bool(free.any())
-
-    def _main(self, near: _Lines, among: NDArray[np.bool_]) -> NDArray[np.bool_]:
-        """Which of the lines `among` is for each ring the one most likely to make it."""
-        key = near.batch * self.m + near.ring
-        score = np.log(near.intensity) + self.ln_amplitude.ravel()[near.owner]
-        score -= 0.5 * (near.distance / (1.5 * self.pattern.sigma[near.ring])) ** 2
-        score[~among] = -np.inf
-        best = np.full(self.b * self.m, -np.inf)
-        np.maximum.at(best, key, score)
-        return np.asarray(among & (score >= best[key]))
 
     def _missing(self) -> Floats:
         """(b, k, n) chance that the range covers a line that meets no claimed ring."""
