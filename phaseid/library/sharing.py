@@ -13,6 +13,7 @@ import time
 from collections import deque
 from collections.abc import Callable, Generator, Iterable, Iterator
 from concurrent.futures import BrokenExecutor, Executor, Future, ProcessPoolExecutor
+from contextlib import suppress
 from multiprocessing import get_context, parent_process
 from threading import Thread
 from typing import TypeVar
@@ -111,7 +112,7 @@ class _Crew:
             raise _no_process(error) from error
 
     def close(self) -> None:
-        self._pool.shutdown(cancel_futures=True)
+        _shut(self._pool)
 
 
 class _Hired:
@@ -181,6 +182,7 @@ def _landed(
     done: Iterator[Outcome] = iter(()) if future is None else _outcomes_of(read, chunk, future)
     for found in chunk:
         yield next(done) if _is_work(found) else read(found)
+    next(done, None)  # let it close its process now, not when it is swept up
 
 
 def _outcomes_of(
@@ -209,9 +211,14 @@ def _one_by_one(read: Read, chunk: list[Found]) -> Iterator[Outcome]:
                 yield _sent(pool, read, found).result()
             except BrokenExecutor:
                 yield Outcome(found.location, rejects=(_deadly(found),))
-                pool.shutdown()
+                _shut(pool)
                 pool = _living_pool()
     finally:
+        _shut(pool)
+
+
+def _shut(pool: ProcessPoolExecutor) -> None:
+    with suppress(OSError):  # a pool that broke may have closed its pipes already
         pool.shutdown(cancel_futures=True)
 
 
