@@ -203,16 +203,23 @@ def _outcomes_of(
 
 
 def _one_by_one(read: Read, chunk: list[Found]) -> Iterator[Outcome]:
-    """Read files in a process for as long as it lives, then in another; who kills it is refused."""
+    """Read files in a process for as long as it lives, then in another.
+
+    A file that ends two of them is refused; one alone may have been ended by somebody else.
+    """
     pool = _living_pool()
     try:
         for found in chunk:
-            try:
-                yield _sent(pool, read, found).result()
-            except BrokenExecutor:
-                yield Outcome(found.location, rejects=(_deadly(found),))
-                _shut(pool)
-                pool = _living_pool()
+            for ended in range(2):
+                try:
+                    outcome = _sent(pool, read, found).result()
+                    break
+                except BrokenExecutor:
+                    _shut(pool)
+                    pool = _living_pool()
+                    if ended:
+                        outcome = Outcome(found.location, rejects=(_deadly(found),))
+            yield outcome
     finally:
         _shut(pool)
 
