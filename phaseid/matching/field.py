@@ -16,15 +16,17 @@ from numpy.typing import NDArray
 
 from phaseid.errors import InputError
 from phaseid.library.library import Library
-from phaseid.library.linetable import LineTable, elements_bits
+from phaseid.library.linetable import LineTable
 from phaseid.library.strongest import StrongLines
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.crowd import crowd
+from phaseid.matching.element_masks import admitted, words
 from phaseid.matching.lineset import gather
 from phaseid.matching.model import Model
 from phaseid.matching.patterns import Floats, Pattern, prepare_all
 from phaseid.matching.search import Judged, Search
-from phaseid.matching.shortlist import SEARCHED_WHOLE, Indices, shortlist
+from phaseid.matching.settings import SEARCHED_WHOLE
+from phaseid.matching.shortlist import Indices, shortlist
 from phaseid.probes.probe import Kind
 from phaseid.rings.ringlist import RingList
 
@@ -149,20 +151,6 @@ def _allowed(library: Library, held: LineTable | StrongLines, chemistry: Chemist
     return allowed
 
 
-def admitted(chemistry: Chemistry, elements: NDArray[np.uint64]) -> NDArray[np.bool_]:
-    """Whether each phase may be part of an answer (p,); `elements` (p, 2) as in `LineTable`."""
-    refused = _words(chemistry.exclude)
-    if chemistry.only is not None:
-        refused |= ~_words(chemistry.only)
-    return np.asarray(~(elements & refused).any(axis=1))
-
-
-def _words(elements: frozenset[str]) -> NDArray[np.uint64]:
-    """Elements as `LineTable.elements_mask` has them (2,)."""
-    bits = elements_bits(elements)
-    return np.array([bits & 0xFFFF_FFFF_FFFF_FFFF, bits >> 64], dtype=np.uint64)
-
-
 def rarity_of(chemistry: Chemistry, elements: NDArray[np.uint64], most: int) -> tuple[float, ...]:
     """ln of the share of random sets of one, two, … phases that hold the required elements.
 
@@ -171,7 +159,7 @@ def rarity_of(chemistry: Chemistry, elements: NDArray[np.uint64], most: int) -> 
     """
     if not chemistry.must:
         return (0.0,) * most
-    required = _words(chemistry.must)
+    required = words(chemistry.must)
 
     def holding(together: NDArray[np.uint64]) -> int:
         return int((~(required & ~together).any(axis=1)).sum())

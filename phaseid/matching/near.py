@@ -12,9 +12,9 @@ from phaseid.library import Library
 from phaseid.library.phase import Phase
 from phaseid.library.strongest import CODE_AT_1_A, CODE_STEP
 from phaseid.matching.chemistry import Chemistry
-from phaseid.matching.field import admitted
+from phaseid.matching.element_masks import admitted
 from phaseid.matching.records import Record, indices, phase_record
-from phaseid.matching.shortlist import SEARCHED_WHOLE
+from phaseid.matching.settings import SEARCHED_WHOLE
 from phaseid.probes import Probe
 
 

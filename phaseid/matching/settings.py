@@ -111,3 +111,6 @@ BESIDE_PRIOR = 0.03
 """Prior that an unlisted phase is there beside listed ones."""
 UNLISTED_RING_COUNT = 12.0
 """Mean number of rings of an unlisted phase (geometric)."""
+
+SEARCHED_WHOLE = 4000
+"""Up to this many phases allowed are all searched; of more, a shortlist."""

@@ -22,10 +22,8 @@ from phaseid.matching.patterns import Floats, Pattern
 from phaseid.matching.search import Judged
 from phaseid.matching.settings import RELATIVE_STRAIN, STRAIN
 
-SEARCHED_WHOLE = 4000
-"""Up to this many phases allowed are all searched."""
 PHASES_SEARCHED = 1500
-"""Of more, this many at most."""
+"""This many at most are searched of a large library."""
 
 Indices = NDArray[np.int64]
 Scores = NDArray[np.float32]

@@ -38,8 +38,7 @@ MIXTURES = {
 
 @pytest.fixture(autouse=True)
 def _large_from_fifty_on(monkeypatch: pytest.MonkeyPatch) -> None:
-    for module in (field, shortlist):
-        monkeypatch.setattr(module, "SEARCHED_WHOLE", 50)
+    monkeypatch.setattr(field, "SEARCHED_WHOLE", 50)
     monkeypatch.setattr(shortlist, "PHASES_SEARCHED", LISTED)
     monkeypatch.setattr(shortlist, "_EACH", 12)
 
