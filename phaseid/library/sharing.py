@@ -15,7 +15,7 @@ from collections.abc import Callable, Generator, Iterable, Iterator
 from concurrent.futures import BrokenExecutor, Executor, Future, ProcessPoolExecutor
 from contextlib import suppress
 from multiprocessing import get_context, parent_process
-from threading import Thread
+from threading import Thread, current_thread, main_thread
 from typing import TypeVar
 
 from phaseid import __version__
@@ -152,14 +152,27 @@ def _end_with_parent() -> None:
 
 
 def _sent(pool: ProcessPoolExecutor, task: Callable[..., T], *arguments: object) -> Future[T]:
-    """Submit a task; a process that this starts has Ctrl-C blocked from its first moment on."""
-    if not hasattr(signal, "pthread_sigmask"):
+    """Submit a task; a process that this starts has Ctrl-C blocked from its first moment on.
+
+    Ctrl-C meanwhile counts afterwards: a process half started would complain of it.
+    """
+    before = signal.getsignal(signal.SIGINT)
+    if (
+        not hasattr(signal, "pthread_sigmask")
+        or current_thread() is not main_thread()
+        or not before
+    ):
         return pool.submit(task, *arguments)
-    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    caught: list[int] = []
+    signal.signal(signal.SIGINT, lambda number, _: caught.append(number))
+    mask = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
     try:
         return pool.submit(task, *arguments)
     finally:
-        signal.pthread_sigmask(signal.SIG_SETMASK, before)
+        signal.pthread_sigmask(signal.SIG_SETMASK, mask)
+        signal.signal(signal.SIGINT, before)
+        if caught:
+            signal.raise_signal(signal.SIGINT)
 
 
 def _read_chunk(read: Read, chunk: list[Found], version: str) -> list[Outcome]:
