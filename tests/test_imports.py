@@ -28,7 +28,17 @@ BELOW["cli"] = {*BELOW["reports"], "reports"}
 # the front door and the ways in may name everything, lazily
 TOP = ("__init__", "__main__", "notebook", "notebook_input")
 
-HEAVY = {"pymatgen", "scipy", "spglib", "sqlite_utils", "rich", "matplotlib", "pandas", "NCrystal"}
+HEAVY = {
+    "pymatgen",
+    "scipy",
+    "spglib",
+    "sqlite_utils",
+    "rich",
+    "matplotlib",
+    "pandas",
+    "NCrystal",
+    "reportlab",
+}
 LIGHT_ROOMS = ("cli", "errors", "resources", *TOP)
 MODULES = sorted(PACKAGE.rglob("*.py"))
 

@@ -8,9 +8,11 @@ those.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal, overload
+
+from phaseid.reports.plain import display_width
 
 if TYPE_CHECKING:
     import numpy as np
@@ -125,6 +127,25 @@ def placed(picture: Picture, x: float, y: float) -> tuple[Shape, ...]:
     return tuple(moved(shape, x, y) for shape in picture.shapes)
 
 
+def strokes(picture: Picture) -> Iterator[Line | Arc | Shade]:
+    """All that is no words, in the order it is drawn."""
+    for shape in picture.shapes:
+        for part in shape.shapes if isinstance(shape, Group) else (shape,):
+            if not isinstance(part, Text):
+                yield part
+
+
+def words_on_lines(picture: Picture) -> list[Text]:
+    """Words that belong to rings and lines: the ground around them is to be cleared."""
+    groups = (shape for shape in picture.shapes if isinstance(shape, Group))
+    return [part for group in groups for part in group.shapes if isinstance(part, Text)]
+
+
+def words_beside(picture: Picture) -> list[Text]:
+    """All other words."""
+    return [shape for shape in picture.shapes if isinstance(shape, Text)]
+
+
 def rectangle(
     x: float, y: float, width: float, height: float, role: str, line: float = 1.0
 ) -> Line:
@@ -146,7 +167,7 @@ def arc_points(arc: Arc) -> list[tuple[float, float]]:
 
 def text_width(words: str, size: float) -> float:
     """About how wide words are."""
-    return LETTER_WIDTH * size * len(words)
+    return LETTER_WIDTH * size * display_width(words)
 
 
 @dataclass(slots=True)

@@ -1,125 +1,173 @@
-"""A picture as PDF, drawn with matplotlib without a screen."""
+"""A picture as PDF, drawn with reportlab: letters stay letters, in faces that the file holds."""
 
 from __future__ import annotations
 
 import io
-import warnings
-from typing import TYPE_CHECKING, Any, Literal
+from functools import cache
+from pathlib import Path
+from typing import Any
 
-from phaseid.reports.picture import Arc, Group, Line, Picture, Shade, Shape, Text, arc_points
+from phaseid import __version__
+from phaseid.reports.picture import (
+    Arc,
+    Line,
+    Picture,
+    Shade,
+    Text,
+    rectangle,
+    strokes,
+    words_beside,
+    words_on_lines,
+)
+from phaseid.reports.picture_faces import FACE_RATIO, runs
 from phaseid.reports.picture_style import LIGHT, colour, dashes
 from phaseid.reports.plain import safe
 
-if TYPE_CHECKING:
-    from matplotlib.axes import Axes
-
 UNITS_PER_INCH = 100.0
 POINTS = 72.0 / UNITS_PER_INCH
-_SIDE: dict[str, Literal["left", "center", "right"]] = {
-    "start": "left",
-    "middle": "center",
-    "end": "right",
-}
+_HALO = 3.0
+_ROUND = 1  # of PDF's line joins
+_STROKED = 1  # of its ways to render text
+_UNTOLD = "/Span <</ActualText <FEFF0020>>> BDC"  # found, copied and read out as a blank
 
 
 def pdf(picture: Picture) -> bytes:
-    """The bytes of a PDF file; letters stay letters."""
-    from matplotlib import rc_context
-    from matplotlib.backends.backend_pdf import FigureCanvasPdf
-    from matplotlib.figure import Figure
+    """The bytes of a PDF file; the same picture gives the same bytes."""
+    from reportlab.pdfgen.canvas import Canvas
 
-    figure = Figure(
-        figsize=(picture.width / UNITS_PER_INCH, picture.height / UNITS_PER_INCH),
-        facecolor=LIGHT.ground,
-    )
-    FigureCanvasPdf(figure)
-    axes = figure.add_axes((0.0, 0.0, 1.0, 1.0))
-    axes.set_xlim(0.0, picture.width)
-    axes.set_ylim(picture.height, 0.0)
-    axes.set_axis_off()
-    for order, shape in enumerate(picture.shapes):
-        _draw(axes, shape, order)
     stream = io.BytesIO()
-    metadata: dict[str, Any] = {"Title": safe(picture.label), "CreationDate": None}
-    with warnings.catch_warnings(), rc_context({"pdf.fonttype": 42}):
-        warnings.simplefilter("ignore")  # a letter the face lacks is shown as a box
-        figure.savefig(stream, format="pdf", metadata=metadata)
+    (first, _), *_ = runs("A", False, _embeddable)
+    size = (picture.width * POINTS, picture.height * POINTS)
+    canvas = Canvas(
+        stream, size, invariant=1, pageCompression=1, initialFontName=str(first), lang="en"
+    )
+    _describe(canvas, safe(picture.label))
+    canvas.scale(POINTS, POINTS)
+    canvas.setLineJoin(_ROUND)
+    pen = _Pen(canvas, picture.height)
+    pen.draw(rectangle(0, 0, picture.width, picture.height, "ground"))
+    for part in strokes(picture):
+        pen.draw(part)
+    on_lines = words_on_lines(picture)
+    pen.clear(on_lines)
+    for text in (*on_lines, *words_beside(picture)):
+        pen.write(text)
+    canvas.showPage()
+    canvas.save()
     return stream.getvalue()
 
 
-def _draw(axes: Axes, shape: Shape, order: int) -> None:
-    if isinstance(shape, Group):
-        for part in shape.shapes:
-            _draw(axes, part, order)
-            if isinstance(part, Text):
-                _halo(axes, part, order)
-    elif isinstance(shape, Text):
-        _write(axes, shape, order)
-    elif isinstance(shape, Shade):
-        _lay(axes, shape, order)
-    elif isinstance(shape, Line) and shape.filled:
-        from matplotlib.patches import Polygon
+def _describe(canvas: Any, title: str) -> None:
+    """Title and origin; no date, so that the bytes tell nothing but the picture."""
+    from reportlab.pdfbase.pdfdoc import PDFDictionary, PDFInfo, PDFString
 
-        axes.add_patch(Polygon(shape.points, color=colour(shape.role), lw=0, zorder=order))
-    else:
-        _stroke(axes, shape, order)
+    class Description(PDFInfo):  # type: ignore[misc]
+        def format(self, document: Any) -> Any:
+            told = {"Title": title, "Creator": f"phaseid {__version__}", "Producer": self.producer}
+            return PDFDictionary({k: PDFString(v) for k, v in told.items()}).format(document)
+
+    canvas._doc.info = Description()
+    canvas.setTitle(title)
 
 
-def _lay(axes: Axes, shade: Shade, order: int) -> None:
-    """Ink as opaque as the image has it, within its circle."""
-    import numpy as np
-    from matplotlib.patches import Circle
+@cache
+def _embeddable(file: Path) -> bool:
+    """Whether a face can be put into a PDF; made known to reportlab by its path."""
+    from reportlab.pdfbase.pdfmetrics import registerFont
+    from reportlab.pdfbase.ttfonts import TTFError, TTFont
 
-    red, green, blue = (int(LIGHT.ink[k : k + 2], 16) for k in (1, 3, 5))
-    dots = np.empty((*shade.ink.shape, 4), dtype=np.uint8)
-    dots[..., 0], dots[..., 1], dots[..., 2], dots[..., 3] = red, green, blue, shade.ink
-    box = (shade.x, shade.x + shade.width, shade.y + shade.height, shade.y)
-    image = axes.imshow(dots, extent=box, aspect="auto", interpolation="none", zorder=order)
-    circle = Circle((shade.centre_x, shade.centre_y), shade.radius, transform=axes.transData)
-    image.set_clip_path(circle)
-
-
-def _stroke(axes: Axes, shape: Line | Arc, order: int) -> None:
-    from matplotlib.lines import Line2D
-
-    points = arc_points(shape) if isinstance(shape, Arc) else shape.points
-    dash = [length / shape.width for length in dashes(shape.role)]  # matplotlib counts in widths
-    axes.add_line(
-        Line2D(
-            [x for x, _ in points],
-            [y for _, y in points],
-            color=colour(shape.role),
-            linewidth=shape.width * POINTS,
-            linestyle=(0, dash) if dash else "-",
-            dash_capstyle="butt",
-            solid_capstyle="butt",
-            zorder=order,
-        )
-    )
+    try:
+        registerFont(TTFont(str(file), str(file)))
+    except (TTFError, OSError):  # outlines of another kind, or not to be embedded
+        return False
+    return True
 
 
-def _write(axes: Axes, text: Text, order: int, **more: Any) -> None:
-    style: dict[str, Any] = {
-        "color": colour(text.role),
-        "weight": "bold" if text.bold else "normal",
-        "zorder": 2000 + order,
-        **more,
-    }
-    axes.text(
-        text.x,
-        text.y,
-        safe(text.words),
-        fontsize=text.size * POINTS * 0.93,  # its face runs wider than a browser's
-        ha=_SIDE[text.anchor],
-        va="baseline",
-        parse_math=False,
-        **style,
-    )
+class _Pen:
+    """Draws on a canvas whose y runs upward, while that of a picture runs downward."""
+
+    def __init__(self, canvas: Any, height: float) -> None:
+        self._canvas = canvas
+        self._height = height
+
+    def draw(self, part: Line | Arc | Shade) -> None:
+        if isinstance(part, Shade):
+            self._lay(part)
+        elif isinstance(part, Line) and part.filled:
+            self._fill(part)
+        else:
+            self._stroke(part)
+
+    def _fill(self, line: Line) -> None:
+        self._canvas.setFillColorRGB(*_rgb(colour(line.role)))
+        path = self._path(line.points)
+        path.close()
+        self._canvas.drawPath(path, stroke=0, fill=1)
+
+    def _stroke(self, part: Line | Arc) -> None:
+        canvas = self._canvas
+        canvas.setStrokeColorRGB(*_rgb(colour(part.role)))
+        canvas.setLineWidth(part.width)
+        canvas.setDash(list(dashes(part.role)))
+        if isinstance(part, Line):
+            canvas.drawPath(self._path(part.points), stroke=1, fill=0)
+            return
+        x, y, r = part.x, self._height - part.y, part.radius
+        canvas.arc(x - r, y - r, x + r, y + r, part.start_deg, part.end_deg - part.start_deg)
+
+    def _path(self, points: tuple[tuple[float, float], ...]) -> Any:
+        path = self._canvas.beginPath()
+        for step, (x, y) in enumerate(points):
+            (path.lineTo if step else path.moveTo)(x, self._height - y)
+        return path
+
+    def _lay(self, shade: Shade) -> None:
+        """Ink as opaque as the image has it, within its circle."""
+        from PIL import Image
+        from reportlab.lib.utils import ImageReader
+
+        opaque = Image.fromarray(shade.ink)
+        image = Image.new("RGB", opaque.size, LIGHT.ink)
+        image.putalpha(opaque)
+        canvas = self._canvas
+        canvas.saveState()
+        circle = canvas.beginPath()
+        circle.circle(shade.centre_x, self._height - shade.centre_y, shade.radius)
+        canvas.clipPath(circle, stroke=0, fill=0)
+        low = self._height - shade.y - shade.height
+        canvas.drawImage(ImageReader(image), shade.x, low, shade.width, shade.height, mask="auto")
+        canvas.restoreState()
+
+    def clear(self, texts: list[Text]) -> None:
+        """Clear the ground around words on rings."""
+        canvas = self._canvas
+        canvas.saveState()
+        canvas.setDash([])
+        canvas.setLineWidth(_HALO)
+        canvas.setStrokeColorRGB(*_rgb(LIGHT.ground))
+        canvas.addLiteral(_UNTOLD)
+        for text in texts:
+            self._set(text, stroked=True)
+        canvas.addLiteral("EMC")
+        canvas.restoreState()
+
+    def write(self, text: Text) -> None:
+        self._canvas.setFillColorRGB(*_rgb(colour(text.role)))
+        self._set(text)
+
+    def _set(self, text: Text, *, stroked: bool = False) -> None:
+        size = text.size * FACE_RATIO
+        pieces = [(str(file), words) for file, words in runs(text.words, text.bold, _embeddable)]
+        wide = sum(self._canvas.stringWidth(words, file, size) for file, words in pieces)
+        x = text.x - {"start": 0.0, "middle": 0.5, "end": 1.0}[text.anchor] * wide
+        line = self._canvas.beginText(x, self._height - text.y)
+        if stroked:
+            line.setTextRenderMode(_STROKED)
+        for file, words in pieces:
+            line.setFont(file, size)
+            line.textOut(words)
+        self._canvas.drawText(line)
 
 
-def _halo(axes: Axes, text: Text, order: int) -> None:
-    """Clear the ground around words on a ring; the words themselves stay letters in a PDF."""
-    from matplotlib.patheffects import Stroke
-
-    halo = [Stroke(linewidth=3.0, foreground=LIGHT.ground)]
-    _write(axes, text, order, zorder=1000 + order, path_effects=halo)
+def _rgb(name: str) -> tuple[float, ...]:
+    return tuple(int(name[k : k + 2], 16) / 255 for k in (1, 3, 5))

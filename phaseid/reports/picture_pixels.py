@@ -1,6 +1,6 @@
 """A picture as PNG, drawn with Pillow: quick to load, shapes three times too large, then averaged.
 
-Words are set at their final size by the font engine; its face is DejaVu Sans.
+Words are set at their final size by the font engine.
 """
 
 from __future__ import annotations
@@ -8,20 +8,27 @@ from __future__ import annotations
 import io
 import math
 from collections.abc import Iterator
-from functools import cache
-from importlib.util import find_spec
 from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from phaseid.reports.picture import Arc, Group, Line, Picture, Shade, Shape, Text
+from phaseid.reports.picture import (
+    Arc,
+    Line,
+    Picture,
+    Shade,
+    Text,
+    strokes,
+    words_beside,
+    words_on_lines,
+)
+from phaseid.reports.picture_faces import FACE_RATIO, face, runs
 from phaseid.reports.picture_style import LIGHT, colour, dashes
 from phaseid.reports.plain import safe
 
 if TYPE_CHECKING:
     from PIL.Image import Image
     from PIL.ImageDraw import ImageDraw
-    from PIL.ImageFont import FreeTypeFont, ImageFont
 
 DOTS_PER_INCH = 200
 DOTS = 2
@@ -31,7 +38,6 @@ _FINE = DOTS * _OVER
 _BAND = 256
 """Rows of the file drawn at a time: a long sheet needs no more memory than a short one."""
 _STEP_DEG = 2.0
-_FACE_RATIO = 0.93  # the face runs wider than a browser's
 _HALO = 1.5
 _DEFLATE = 3  # quicker than the usual 6, and hardly larger for plain lines
 
@@ -43,12 +49,12 @@ def png(picture: Picture) -> bytes:
 
     wide, high = (math.ceil(size * DOTS) for size in (picture.width, picture.height))
     sheet = Image.new("RGB", (wide, high), LIGHT.ground)
-    parts = list(_parts(picture.shapes))
+    parts = list(strokes(picture))
     masks = {id(part): _mask(part) for part in parts if isinstance(part, Shade)}
     for top in range(0, high, _BAND):
         rows = min(_BAND, high - top)
         sheet.paste(_band(parts, masks, wide, rows, top), (0, top))
-    _write(sheet, picture.shapes)
+    _write(sheet, picture)
     told = PngInfo()
     told.add_itxt("Title", safe(picture.label))
     stream = io.BytesIO()
@@ -56,13 +62,6 @@ def png(picture: Picture) -> bytes:
         stream, "PNG", dpi=(DOTS_PER_INCH, DOTS_PER_INCH), pnginfo=told, compress_level=_DEFLATE
     )
     return stream.getvalue()
-
-
-def _parts(shapes: tuple[Shape, ...]) -> Iterator[Line | Arc | Shade]:
-    for shape in shapes:
-        for part in shape.shapes if isinstance(shape, Group) else (shape,):
-            if not isinstance(part, Text):
-                yield part
 
 
 def _band(
@@ -209,47 +208,34 @@ def _bar(piece: list[tuple[float, float]], width: float) -> list[tuple[int, int]
     ]
 
 
-def _write(sheet: Image, shapes: tuple[Shape, ...]) -> None:
+def _write(sheet: Image, picture: Picture) -> None:
     """Set the words; those on rings and lines clear the ground around them."""
     from PIL import ImageDraw
 
     pen = ImageDraw.Draw(sheet)
-    on_lines = [
-        part
-        for shape in shapes
-        if isinstance(shape, Group)
-        for part in shape.shapes
-        if isinstance(part, Text)
-    ]
+    on_lines = words_on_lines(picture)
     for text in on_lines:
         _set(pen, text, halo=True)
-    for text in (*on_lines, *(shape for shape in shapes if isinstance(shape, Text))):
+    for text in (*on_lines, *words_beside(picture)):
         _set(pen, text, halo=False)
 
 
 def _set(pen: ImageDraw, text: Text, *, halo: bool) -> None:
-    anchor = {"start": "ls", "middle": "ms", "end": "rs"}[text.anchor]
-    pen.text(
-        (text.x * DOTS, text.y * DOTS),
-        safe(text.words),
-        fill=LIGHT.ground if halo else colour(text.role),
-        font=_face(round(text.size * DOTS * _FACE_RATIO), text.bold),
-        anchor=anchor,
-        stroke_width=round(_HALO * DOTS) if halo else 0,
-    )
+    size = round(text.size * DOTS * FACE_RATIO)
+    pieces = [(face(file, size), words) for file, words in runs(text.words, text.bold, _any_face)]
+    lengths = [font.getlength(words) for font, words in pieces]
+    x = text.x * DOTS - {"start": 0.0, "middle": 0.5, "end": 1.0}[text.anchor] * sum(lengths)
+    for (font, words), length in zip(pieces, lengths, strict=True):
+        pen.text(
+            (x, text.y * DOTS),
+            words,
+            fill=LIGHT.ground if halo else colour(text.role),
+            font=font,
+            anchor="ls",
+            stroke_width=round(_HALO * DOTS) if halo else 0,
+        )
+        x += length
 
 
-@cache
-def _face(size: int, bold: bool) -> FreeTypeFont | ImageFont:
-    """DejaVu Sans as it comes with matplotlib, found without loading that.
-
-    Pillow's own face, which lacks Å and Greek, where a matplotlib keeps its faces elsewhere.
-    """
-    from PIL import ImageFont
-
-    home = find_spec("matplotlib")
-    folder = Path(home.origin if home and home.origin else "").parent / "mpl-data/fonts/ttf"
-    try:
-        return ImageFont.truetype(str(folder / f"DejaVuSans{'-Bold' * bold}.ttf"), size)
-    except OSError:
-        return ImageFont.load_default(size)
+def _any_face(_file: Path) -> bool:
+    return True

@@ -17,6 +17,7 @@ from phaseid.reports.picture_sticks import sticks
 from phaseid.reports.picture_style import phase_letter, phase_role
 from phaseid.reports.plain import (
     cell_text,
+    display_width,
     hkl_text,
     probability_text,
     safe,
@@ -149,7 +150,7 @@ def probability_bar(answer: Identification, width: float) -> Picture:
         words = f"{sign}{name} {probability_text(share)}"
         if name == UNLISTED:
             words = f"/// {words}"
-        long = 6.6 * len(words) + 26
+        long = 6.6 * display_width(words) + 26
         if x and x + long > width:
             x, y = 0.0, y + 17
         shapes.append(Text(x, y, words, "ink", 12.0))

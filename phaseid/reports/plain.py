@@ -3,9 +3,12 @@
 from __future__ import annotations
 
 import textwrap
+from bisect import bisect
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import accumulate
 from typing import TYPE_CHECKING, Literal
+from unicodedata import combining, east_asian_width
 
 if TYPE_CHECKING:
     from phaseid.library.phase import Phase
@@ -23,9 +26,21 @@ def safe(text: str) -> str:
     return " ".join("".join(c if c.isprintable() or c.isspace() else "?" for c in text).split())
 
 
+def display_width(text: str) -> int:
+    """How many columns of a terminal `text` takes: letters of East Asia two, accents none."""
+    return len(text) if text.isascii() else sum(map(_letter_width, text))
+
+
+def _letter_width(letter: str) -> int:
+    return 0 if combining(letter) else 2 if east_asian_width(letter) in "WF" else 1
+
+
 def shorten(text: str, width: int) -> str:
-    """Cut `text` to `width` characters, the last an ellipsis where something was cut."""
-    return text if len(text) <= width else text[: max(width - 1, 0)] + ELLIPSIS
+    """Cut `text` to `width` columns, the last an ellipsis where something was cut."""
+    if display_width(text) <= width:
+        return text
+    kept = list(accumulate(map(_letter_width, text)))
+    return text[: bisect(kept, max(width - 1, 0))] + ELLIPSIS
 
 
 def wrap(text: str, width: int, *, indent: str = "  ", first: str | None = None) -> list[str]:
@@ -133,7 +148,7 @@ def table(columns: Sequence[Column], rows: Sequence[Sequence[str]], width: int) 
     depth = max(len(head) for head in heads)
     heads = [[""] * (depth - len(head)) + head for head in heads]
     widths = [
-        max([len(part) for part in head] + [len(row[k]) for row in cells])
+        max([display_width(part) for part in head] + [display_width(row[k]) for row in cells])
         for k, head in enumerate(heads)
     ]
     gap = "  " if sum(widths) + 2 * len(widths) <= width else " "
@@ -149,13 +164,14 @@ def table(columns: Sequence[Column], rows: Sequence[Sequence[str]], width: int) 
     lines = [[head[level] for head in heads] for level in range(depth)] + cells
     return [
         "".join(
-            gap
-            + (
-                shorten(cell, widths[k]).ljust(widths[k])
-                if columns[k].side == "left"
-                else shorten(cell, widths[k]).rjust(widths[k])
-            )
-            for k, cell in enumerate(line)
+            gap + _padded(cell, width_k, column.side)
+            for cell, width_k, column in zip(line, widths, columns, strict=True)
         ).rstrip()
         for line in lines
     ]
+
+
+def _padded(cell: str, width: int, side: Literal["left", "right"]) -> str:
+    shown = shorten(cell, width)
+    blanks = " " * (width - display_width(shown))
+    return shown + blanks if side == "left" else blanks + shown

@@ -10,21 +10,26 @@ import re
 import subprocess
 import sys
 import xml.etree.ElementTree as ET
+from collections.abc import Callable, Iterator
 from dataclasses import replace
 from itertools import combinations
 from pathlib import Path
 
 import numpy as np
+import pypdfium2
 import pytest
 from numpy.typing import NDArray
 
 from phaseid.errors import InputError
 from phaseid.matching.identification import Identification
+from phaseid.reports import picture_faces
 from phaseid.reports.picture import Arc, Line, Picture, Room, Text, rectangle, tick_text, ticks
 from phaseid.reports.picture_axis import axis_for, axis_name, common_axis
 from phaseid.reports.picture_disc import RADIUS, disc, disc_of_two
+from phaseid.reports.picture_faces import runs
 from phaseid.reports.picture_file import write_picture
-from phaseid.reports.picture_pixels import DOTS, _face, png
+from phaseid.reports.picture_paper import pdf
+from phaseid.reports.picture_pixels import DOTS, png
 from phaseid.reports.picture_scene import scene
 from phaseid.reports.picture_sheet import probability_parts, sheet
 from phaseid.reports.picture_sticks import sticks
@@ -302,33 +307,111 @@ def test_a_half_ring_lies_on_its_side() -> None:
     assert (rows.min(), rows.max()) == pytest.approx((8 * DOTS, 92 * DOTS), abs=1)
 
 
-def test_a_png_needs_no_matplotlib() -> None:
+@pytest.mark.parametrize("suffix", [".png", ".pdf"])
+def test_no_picture_loads_matplotlib(suffix: str) -> None:
     code = (
         "import sys; from phaseid.reports.picture import Picture, Text;"
-        "from phaseid.reports.picture_pixels import png;"
-        "png(Picture(50.0, 50.0, 'a', (Text(5, 20, 'Å'),)));"
+        "from phaseid.reports.picture_file import drawn;"
+        f"drawn(Picture(50.0, 50.0, 'a', (Text(5, 20, 'Å'),)), '{suffix}');"
         "sys.exit('matplotlib' in sys.modules)"
     )
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
 
 
-def test_a_png_is_drawn_without_that_face(monkeypatch: pytest.MonkeyPatch) -> None:
-    one = Picture(80.0, 30.0, "a test", (Text(5.0, 20.0, "d in 1/nm"),))
-    _face.cache_clear()
-    monkeypatch.setattr("phaseid.reports.picture_pixels.find_spec", lambda _name: None)
-    assert _grey(one).min() < 100
-    _face.cache_clear()
+@pytest.fixture
+def other_faces(monkeypatch: pytest.MonkeyPatch) -> Iterator[pytest.MonkeyPatch]:
+    """Faces may be changed; nothing of that is remembered."""
+    for cached in (picture_faces._face, picture_faces._found):
+        cached.cache_clear()
+    yield monkeypatch
+    for cached in (picture_faces._face, picture_faces._found):
+        cached.cache_clear()
+
+
+def _set_in(words: str, bold: bool = False) -> list[tuple[str, str]]:
+    return [(file.name, said) for file, said in runs(words, bold, lambda _file: True)]
 
 
 def test_the_face_has_the_letters_of_the_trade() -> None:
-    from PIL import ImageFont
+    letters = "Åθλσαβγπ²³±×°µ…–’−₂̄"
+    assert _set_in(letters) == [("DejaVuSans.ttf", letters)]
+    assert _set_in(letters, bold=True) == [("DejaVuSans-Bold.ttf", letters)]
 
-    face = _face(24, bold=False)
-    assert isinstance(face, ImageFont.FreeTypeFont)
-    lacking = face.getmask("\U0010ffff").getbbox(), bytes(face.getmask("\U0010ffff"))
-    for letter in "Åθλσαβγπ²³±×°µ…–’":
-        mask = face.getmask(letter)
-        assert (mask.getbbox(), bytes(mask)) != lacking, letter
+
+def test_a_picture_is_drawn_without_that_face(other_faces: pytest.MonkeyPatch) -> None:
+    other_faces.setattr(picture_faces, "_FAMILY", ("Vera.ttf",))
+    assert _set_in("d in Å") == [("Vera.ttf", "d in Å")]
+    assert _grey(Picture(80.0, 30.0, "a test", (Text(5.0, 20.0, "d in Å"),))).min() < 100
+
+
+# U+2323 smile is in STIX General and not in DejaVu Sans; no face of either has U+9244, iron
+def test_letters_the_face_lacks_come_from_another(other_faces: pytest.MonkeyPatch) -> None:
+    other_faces.setattr(picture_faces, "SYSTEM_FACES", ("STIXGeneral.ttf",))
+    assert _set_in("a ⌣ b") == [
+        ("DejaVuSans.ttf", "a "),
+        ("STIXGeneral.ttf", "⌣"),
+        ("DejaVuSans.ttf", " b"),
+    ]
+    assert "a ⌣ b" in _pages(pdf(Picture(90.0, 30.0, "a", (Text(5.0, 20.0, "a ⌣ b"),))))
+
+
+def test_letters_no_face_has_are_told_by_their_code(other_faces: pytest.MonkeyPatch) -> None:
+    other_faces.setattr(picture_faces, "SYSTEM_FACES", ("no such file.ttf",))
+    assert _set_in("\u9244 film") == [("DejaVuSans.ttf", "[U+9244] film")]
+    assert _set_in("\u9244\u9271 film") == [("DejaVuSans.ttf", "[U+9244…] film")]
+
+
+# Unicode Standard Annex #15: U+339C "square mm" is compatible with "mm", e + U+0301 composes to é
+def test_letters_are_taken_for_what_they_mean(other_faces: pytest.MonkeyPatch) -> None:
+    other_faces.setattr(picture_faces, "SYSTEM_FACES", ())
+    assert _set_in("25 \u339c, e\u0301") == [("DejaVuSans.ttf", "25 mm, \u00e9")]
+
+
+def _pages(data: bytes) -> str:
+    """The words of a PDF as PDFium finds them."""
+    with pypdfium2.PdfDocument(data) as document:
+        return str(document[0].get_textpage().get_text_range())
+
+
+def test_words_of_a_pdf_are_found(answer: Identification) -> None:
+    words = _pages(pdf(sheet(answer)))
+    for said in (
+        "refined cell a = 4.0501 ± 0.0020 Å; 80 ± 5 % by weight",
+        "A ring match is evidence",
+        "A 311 ×",
+    ):
+        assert words.count(said) == 1
+
+
+def test_a_pdf_holds_its_faces_and_no_date(answer: Identification) -> None:
+    data = pdf(sheet(answer))
+    with pypdfium2.PdfDocument(data) as document:
+        told = document.get_metadata_dict(skip_empty=True)
+    assert set(told) == {"Title", "Creator", "Producer"}
+    assert told["Title"] == sheet(answer).label
+    faces = re.findall(rb"/BaseFont /(\S+)", data)
+    assert sorted(faces) == [b"AAAAAA+DejaVuSans", b"AAAAAA+DejaVuSans-Bold"]
+    assert len(re.findall(rb"/FontFile2 ", data)) == len(faces)
+
+
+# another rasteriser, PDFium, draws the PDF as Pillow draws the PNG
+def test_pdf_and_png_show_the_same(
+    answer: Identification, on_image: Callable[..., Identification]
+) -> None:
+    for picture in (sheet(answer), sheet(on_image(answer))):
+        with pypdfium2.PdfDocument(pdf(picture)) as document:
+            shown = document[0].render(scale=200 / 72).to_pil().convert("L")
+        drawn = _grey(picture)
+        seen = np.asarray(shown, dtype=np.float64)[: drawn.shape[0], : drawn.shape[1]]
+        assert np.corrcoef(_blurred(seen), _blurred(drawn))[0, 1] > 0.98
+        assert seen.mean() == pytest.approx(drawn.mean(), abs=0.5)
+
+
+def _blurred(grey: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Means of squares of 16 × 16 dots, wider than where a dash may begin."""
+    high, wide = (size // 16 for size in grey.shape)
+    squares = grey[: 16 * high, : 16 * wide].reshape(high, 16, wide, 16)
+    return np.asarray(squares.mean(axis=(1, 3)).ravel())
 
 
 def test_a_picture_is_the_same_each_time(answer: Identification, tmp_path: Path) -> None:

@@ -10,9 +10,11 @@ from phaseid.matching.identification import Identification, TypeMatch, Unexplain
 from phaseid.reports.plain import (
     Column,
     cell_text,
+    display_width,
     probability_text,
     safe,
     short_phase_text,
+    shorten,
     signed_text,
     table,
     wrap,
@@ -283,3 +285,11 @@ def test_a_table_shrinks_its_flexible_column_first() -> None:
 
 def test_wrapping_keeps_the_indent() -> None:
     assert wrap("one two three", 9, first="- ", indent="  ") == ["- one two", "  three"]
+
+
+# Unicode Standard Annex #11: ideographs are two columns wide, combining marks none
+def test_wide_letters_keep_columns_straight() -> None:
+    rows = [["水晶", "1"], ["e\u0301ta", "2"], ["quartz", "3"]]
+    lines = table([Column("name", "left"), Column("no.")], rows, 40)
+    assert [display_width(line) for line in lines] == [13] * 4
+    assert display_width(shorten("水晶 quartz", 5)) <= 5
