@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import json
 from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -12,6 +13,7 @@ import pytest
 from rich.console import Console
 
 import phaseid
+from phaseid.crystal.crystal import Source
 from phaseid.errors import InputError
 from phaseid.library import Library
 from phaseid.matching.records import Record, Rows, Tidy
@@ -133,6 +135,27 @@ def test_ring_records_name_what_each_ring_is(shelf: Library) -> None:
     assert {row["name"] for row in rows} == {"aluminium", None}
     unexplained = [row for row in rows if row["name"] is None]
     assert all(row["hkl"] is None and row["d_A"] > 0 for row in unexplained)
+
+
+def test_entry_records_list_the_determinations_of_each_phase(
+    shelf: Library, tmp_path: Path
+) -> None:
+    # another determination of the same phase: its cell 0.05 % larger
+    crystal = shelf.crystal(shelf.choose("Al").phase_id)
+    cell = (*(1.0005 * edge for edge in crystal.cell[:3]), *crystal.cell[3:])
+    source = Source("another database", "2", "2.cif", "a citation")
+    with Library.create(tmp_path / "two.sqlite") as two:
+        two.add_crystals([crystal, replace(crystal, cell=cell, source=source)])
+        answer = phaseid.identify(ALUMINIUM, two, probe=ELECTRONS)
+    rows = answer.entry_records()
+    assert [row["stands"] for row in rows] == [True, False]
+    assert {row["phase"] for row in rows} == {1}
+    assert {row["source_id"] for row in rows} == {crystal.source.id, "2"}
+    assert {row["source_reference"] for row in rows} == {crystal.source.reference, "a citation"}
+    assert json.loads(json.dumps(rows)) == rows
+    assert answer.records()[0]["entries"] == 2
+    with pytest.raises(IndexError):
+        answer.entry_records(9)
 
 
 def test_a_saved_calibration_is_used_by_name(

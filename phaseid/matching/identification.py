@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from math import isnan
 from typing import ClassVar, Literal
 
+from phaseid.library.marks import marks
 from phaseid.library.phase import Phase
 from phaseid.matching.records import Record, Tidy, cell_record, indices, phase_record
 from phaseid.rings.ringlist import RingList
@@ -171,6 +172,7 @@ class Identification(Tidy):
                 "probability": answer.probability,
                 **phase_record(part.phase),
                 "indistinguishable": ", ".join(p.name for p in part.indistinguishable) or None,
+                "entries": 1 + len(part.entries),
                 "share": part.share,
                 "share_sigma": part.share_sigma,
                 **cell_record(part.cell),
@@ -212,6 +214,28 @@ class Identification(Tidy):
                         }
                     )
         return records
+
+    def entry_records(self, rank: int = 1) -> list[Record]:
+        """One record per entry of the library that is a determination of a phase of that answer.
+
+        Of each phase the entry that stands for all comes first, with `stands` true. Raises
+        IndexError where there is no such answer.
+        """
+        return [
+            {
+                "phase": number,
+                "stands": entry is part.phase,
+                **phase_record(entry),
+                "marks": ", ".join(marks(f.code for f in entry.findings)) or None,
+                **cell_record(entry.cell),
+                "source_database": entry.source.database,
+                "source_id": entry.source.id,
+                "source_file": entry.source.file,
+                "source_reference": entry.source.reference,
+            }
+            for number, part in enumerate(self.hypotheses[rank - 1].phases, start=1)
+            for entry in (part.phase, *part.entries)
+        ]
 
     def summary(self) -> str:
         """Verdict, best answer and its probability."""

@@ -175,8 +175,11 @@ def _answer_dict(part: PhaseAnswer) -> dict[str, Any]:
 
 def _entry_dict(entry: Phase) -> dict[str, Any]:
     """Return another entry of a phase: what tells it from the one that stands for all."""
+    from phaseid.library.marks import marks
+
     whole = phase_dict(entry)
-    return {key: whole[key] for key in ("phase_id", "name", "source", "cell")}
+    told = {key: whole[key] for key in ("phase_id", "name", "source", "cell")}
+    return {**told, "marks": list(marks(finding.code for finding in entry.findings))}
 
 
 def _cell_dict(cell: Sequence[float]) -> dict[str, float]:

@@ -6,8 +6,9 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from phaseid.matching.identification import Hypothesis, Identification, PhaseAnswer
-from phaseid.reports.page_html import facts, items, scrolling, tag, words
+from phaseid.matching.identification import Hypothesis, Identification
+from phaseid.reports.page_html import items, scrolling, tag, words
+from phaseid.reports.page_phase import phase_part
 from phaseid.reports.picture import Picture
 from phaseid.reports.picture_axis import AxisName, axis_for
 from phaseid.reports.picture_disc import disc, disc_of_two
@@ -15,17 +16,13 @@ from phaseid.reports.picture_scene import Scene, missing_key, ring_key, scene
 from phaseid.reports.picture_sticks import sticks
 from phaseid.reports.picture_svg import Store, svg
 from phaseid.reports.plain import (
-    cell_text,
     hkl_text,
-    marked_text,
-    marks_text,
     phase_text,
     probability_text,
     safe,
     signed_text,
-    source_text,
 )
-from phaseid.reports.text import SHOWN_ALIKE, against, measured_intensity
+from phaseid.reports.text import against, measured_intensity
 
 if TYPE_CHECKING:
     from phaseid.library import Library
@@ -79,7 +76,7 @@ def answer_section(answer: Identification, hypothesis: Hypothesis | None, drawin
     if hypothesis is not None:
         parts.append(doubts if len(scenes) > 2 else "")
         alone = len(hypothesis.phases) == 1
-        parts += [_phase(part, k, alone=alone) for k, part in enumerate(hypothesis.phases)]
+        parts += [phase_part(part, k, alone=alone) for k, part in enumerate(hypothesis.phases)]
     parts.append("</section>")
     return "".join(parts)
 
@@ -225,45 +222,3 @@ def _row(cells: list[str], phase_html: str, key: str, *, strong: bool = False) -
         for cell, (name, number) in zip(cells, HEADS, strict=True)
     )
     return f'<tr data-key="{key}" tabindex="0"{" class=left" if strong else ""}>{shown}</tr>'
-
-
-def _entries(part: PhaseAnswer) -> str:
-    if not part.entries:
-        return ""
-    others = ", ".join(safe(entry.phase_id) for entry in part.entries[:SHOWN_ALIKE])
-    more = " …" if len(part.entries) > SHOWN_ALIKE else ""
-    return f"{len(part.entries) + 1} of this phase; this one stands for them: {others}{more}"
-
-
-def _phase(part: PhaseAnswer, number: int, *, alone: bool) -> str:
-    phase = part.phase
-    error = "" if part.share_sigma is None else f" ± {100 * part.share_sigma:.0f}"
-    share = "" if part.share is None or alone else f"{100 * part.share:.0f}{error} % by weight"
-    axis = "" if part.fibre_axis is None else f"[{hkl_text(part.fibre_axis)}] along the beam"
-    pairs = [
-        ("space group", f"{phase.space_group_symbol} (no. {phase.space_group_number})"),
-        ("cell in the library", cell_text(phase.cell)),
-        ("refined cell", "" if part.cell is None else cell_text(part.cell, part.cell_sigma)),
-        ("share", share),
-        ("texture, fibre axis", axis),
-        ("entry", phase.phase_id),
-        ("entries in the library", _entries(part)),
-        ("source", source_text(phase)),
-        ("reference", phase.source.reference),
-        *(("about the entry", finding.message) for finding in phase.findings),
-    ]
-    tells = {separator.other.phase_id: separator.text for separator in part.separators}
-    alike = []
-    for other in part.indistinguishable[:SHOWN_ALIKE]:
-        told = f"{marked_text(other)}, {cell_text(other.cell)}; {source_text(other)}"
-        tell = tells.get(other.phase_id)
-        alike.append(f"{told}. To tell them apart: {tell}" if tell else told)
-    more = len(part.indistinguishable) - SHOWN_ALIKE
-    if more > 0:
-        alike.append(f"and {more} more; the JSON inside this page lists them all")
-    introduction = "<p>These rings cannot tell it from:</p>" if alike else ""
-    listed = "".join(f"<li>{words(text)}</li>" for text in alike)
-    name = words(phase_text(phase) + marks_text(phase))
-    return f"<h3>{tag(number)}{name}</h3>{facts(pairs)}{introduction}" + (
-        f"<ul>{listed}</ul>" if alike else ""
-    )

@@ -50,7 +50,7 @@ def pdf(picture: Picture) -> bytes:
         pen.draw(part)
     on_lines = words_on_lines(picture)
     pen.clear(on_lines)
-    for text in (*on_lines, *words_beside(picture)):
+    for text in (*words_beside(picture), *on_lines):
         pen.write(text)
     canvas.showPage()
     canvas.save()

@@ -228,19 +228,36 @@ def test_a_list_of_a_thousand_rings_stays_below_a_megabyte(answer: Identificatio
     assert "too long to be kept in a page" in _Reader(text).text
 
 
-def test_entries_and_what_they_are_is_told(answer: Identification) -> None:
+def _with_entries(answer: Identification, count: int) -> Identification:
     best = answer.hypotheses[0]
     aluminium = best.phases[0]
     computed = replace(
         aluminium.phase,
         phase_id="Al-zzzz",
+        cell=(4.07, 4.07, 4.07, 90.0, 90.0, 90.0),
         findings=(Finding("theoretical", "A computed cell, not a measured one."),),
     )
-    part = replace(aluminium, entries=(computed,), indistinguishable=(computed,))
-    one = replace(answer, hypotheses=(replace(best, phases=(part, best.phases[1])),))
-    text = _Reader(page(one, PROVENANCE)).text
-    assert "2 of this phase; this one stands for them: Al-zzzz" in text
-    assert "aluminium (Al) Fm-3m [computed]" in text
+    part = replace(aluminium, entries=(computed,) * count, indistinguishable=(computed,))
+    return replace(answer, hypotheses=(replace(best, phases=(part, best.phases[1])),))
+
+
+def test_entries_and_what_they_are_is_told(answer: Identification) -> None:
+    reader = _Reader(page(_with_entries(answer, 1), PROVENANCE))
+    assert "1 other entry of this phase in the library" in reader.text
+    row = "COD 0000001, al.cif computed a = 4.0700 Å Made up for a test aluminium Al-zzzz"
+    assert row in reader.text
+    assert "aluminium (Al) Fm-3m [computed]" in reader.text
+    folded = [attributes for tag, attributes in reader.elements if tag == "details"]
+    assert folded == [{}]
+
+
+def test_many_entries_are_cut_short(answer: Identification) -> None:
+    text = _Reader(page(_with_entries(answer, 25), PROVENANCE)).text
+    assert "25 other entries of this phase" in text
+    assert "and 5 more; the JSON inside this page lists them all" in text
+    held = identification_dict(_with_entries(answer, 25))
+    entries = held["hypotheses"][0]["phases"][0]["entries"]
+    assert [entry["marks"] for entry in entries] == [["computed"]] * 25
 
 
 def test_what_separates_two_answers_is_told(answer: Identification) -> None:
