@@ -184,7 +184,7 @@ def _same_block(conn: sqlite3.Connection, row: int, made: Entry) -> bool:
 
 
 def _group_troubles(conn: sqlite3.Connection, rows: list[int]) -> Iterator[str]:
-    (waiting,) = conn.execute("SELECT count(*) FROM ungrouped").fetchone()
+    (waiting,) = conn.execute("SELECT count(DISTINCT elements) FROM ungrouped").fetchone()
     if waiting:
         yield f"{waiting} sets of elements are not grouped yet; adding anything does it"
         return

@@ -18,6 +18,8 @@ from phaseid.library.seal import break_seal, is_broken, seal
 Tell = Callable[[str], None]
 
 _WAIT_S = 60.0
+_CACHE_KB = 128 << 10
+_CHECKPOINT_PAGES = 8000
 _MAGIC = b"SQLite format 3\x00"
 MENDING = "Restore a copy, or move it away and add the structures anew."
 _ANOTHER = "Name another file with --library, or move this one away."
@@ -171,6 +173,9 @@ def open_for_writing(path: Path, tell: Tell | None = None) -> sqlite3.Connection
             # readers go on reading while a writer adds; a killed writer loses one batch at most
             conn.execute("PRAGMA journal_mode = WAL")
             conn.execute("PRAGMA synchronous = NORMAL")
+            # a batch touches a page of every index for each entry: they stay here until it is whole
+            conn.execute(f"PRAGMA cache_size = -{_CACHE_KB}")
+            conn.execute(f"PRAGMA wal_autocheckpoint = {_CHECKPOINT_PAGES}")
         except BaseException:
             conn.close()
             raise
@@ -180,7 +185,7 @@ def open_for_writing(path: Path, tell: Tell | None = None) -> sqlite3.Connection
 def _bring_up_to_date(
     conn: sqlite3.Connection, path: Path, version: int, tell: Tell | None
 ) -> None:
-    """Apply the steps that are missing; the file as it was stays beside it."""
+    """Apply the steps that are missing, all or none; the file as it was stays beside it."""
     from phaseid.library.grouping import group_entries
 
     copy = path.with_name(f"{path.name}.schema-{version}")
@@ -198,8 +203,7 @@ def _bring_up_to_date(
         with closing(sqlite3.connect(made)) as whole:
             conn.backup(whole)
         made.rename(copy)
-    apply_steps(conn)
-    group_entries(conn)
+    apply_steps(conn, finish=group_entries)
     with suppress(sqlite3.OperationalError):  # somebody reads, or the disk is nearly full
         conn.execute("VACUUM")
 

@@ -27,7 +27,7 @@ class Entry:
     """
 
     content: str
-    row: dict[str, str | int | float]
+    row: dict[str, str | int | float | None]
     labels: tuple[tuple[str, str, str], ...]
     operations: str
     structure: bytes
@@ -47,7 +47,7 @@ def entry(crystal: Crystal, location: str) -> Entry:
     a, b, c, alpha, beta, gamma = crystal.cell
     elements = sorted({element_key(symbol) for symbol in contents})
     trust = quality(crystal)
-    row: dict[str, str | int | float] = {
+    row: dict[str, str | int | float | None] = {
         "name": crystal.name or crystal.formula,
         "formula": crystal.formula,
         "formula_key": composition_key(contents),
@@ -72,6 +72,7 @@ def entry(crystal: Crystal, location: str) -> Entry:
         "complete_to_A": lines.complete_to_A,
         "floor": lines.floor,
         "computed_by": __version__,
+        "temperature_K": crystal.temperature_K,
     }
     operations, structure = pack_crystal(crystal)
     strong = strongest_lines(lines) if len(lines.d_A) else {}

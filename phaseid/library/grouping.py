@@ -1,122 +1,161 @@
 """One phase, many entries: which entries are determinations of the same phase, and which stands.
 
-The best determination of a phase is the leader of the others. Entries are compared among those of
-the same elements, the best first, each with the leaders so far, and follow the nearest; so the
-outcome depends on what is in the library and not on how it came there. An entry that was just
-added, and one whose leader went, stands for itself until `group_entries` has run.
+The best determination of a phase is the leader of the others (`leaders`). Entries of the same
+elements are first parted by what no two determinations of a phase differ in: kind of space group,
+composition, density. Only parts that something came to, or went from, are looked at anew; so adding
+costs as much in a large library as in a small one. An entry that was just added, and one whose
+leader went, stands for itself until `group_entries` has run.
 """
 
 from __future__ import annotations
 
 import sqlite3
-from bisect import bisect_left, bisect_right
 from collections import defaultdict
-from collections.abc import Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from contextlib import suppress
+from operator import attrgetter
+from typing import NamedTuple
 
-import numpy as np
+from phaseid.library.determinations import COLUMNS, StoredEntry, fractions, group_kind, ln_density
+from phaseid.library.groups import LISTED, listed
+from phaseid.library.leaders import Earlier, leaders_of
+from phaseid.library.sameness import COMPOSITION, COMPUTED_CELL
 
-from phaseid.library.determinations import COLUMNS, StoredEntry
-from phaseid.library.sameness import COMPUTED_CELL, MEASURED_CELL, same_phase
-
+SOMETHING_WENT = 0
+"""In table `ungrouped` in place of a row: all entries of these elements are grouped anew."""
 _SETS_A_TRANSACTION = 500
-_COLD_K = 200.0  # below, a cell is clearly smaller than at room temperature
+
+
+class Outline(NamedTuple):
+    """What parts entries of the same elements; `group` as `StoredEntry.group`."""
+
+    row: int
+    group: int
+    fractions: tuple[float, ...]
+    ln_density: float
 
 
 def group_entries(conn: sqlite3.Connection) -> None:
     """Bring table `member` up to date with what came and went.
 
-    Only sets of elements in which something changed are looked at. Opens transactions of its own
-    unless it is called within one.
+    Opens transactions of its own unless it is called within one.
     """
-    sets = [row[0] for row in conn.execute("SELECT elements FROM ungrouped ORDER BY 1")]
-    if conn.in_transaction:
-        _group_sets(conn, sets)
-        return
-    for start in range(0, len(sets), _SETS_A_TRANSACTION):
-        conn.execute("BEGIN IMMEDIATE")
+    waiting = f"SELECT DISTINCT elements FROM ungrouped LIMIT {_SETS_A_TRANSACTION}"
+    within = conn.in_transaction
+    while sets := conn.execute(waiting).fetchall():
+        if not within:
+            conn.execute("BEGIN IMMEDIATE")
         try:
-            _group_sets(conn, sets[start : start + _SETS_A_TRANSACTION])
-            conn.execute("COMMIT")
+            for (elements,) in sets:
+                _group_set(conn, elements)
+            if not within:
+                conn.execute("COMMIT")
         except BaseException:
-            with suppress(sqlite3.OperationalError):  # SQLite may have rolled back by itself
-                conn.execute("ROLLBACK")
+            if not within:
+                with suppress(sqlite3.OperationalError):  # SQLite may have rolled back by itself
+                    conn.execute("ROLLBACK")
             raise
 
 
-def _group_sets(conn: sqlite3.Connection, sets: list[str]) -> None:
-    for elements in sets:
-        leaders = leaders_in(conn, elements)
-        conn.executemany("DELETE FROM member WHERE phase = ?", [(row,) for row in leaders])
-        others = [(row, leader) for row, leader in leaders.items() if row != leader]
-        conn.executemany("INSERT INTO member VALUES (?, ?)", others)
-        conn.execute("DELETE FROM ungrouped WHERE elements = ?", (elements,))
+def _group_set(conn: sqlite3.Connection, elements: str) -> None:
+    waiting = conn.execute("SELECT phase FROM ungrouped WHERE elements = ?", (elements,))
+    came = {row for (row,) in waiting}
+    anew = SOMETHING_WENT in came
+    for part in parts_of(_outlines(conn, elements)):
+        # an entry by itself has no leader: those of others that went are forgotten by a trigger
+        if len(part) > 1 and (anew or any(outline.row in came for outline in part)):
+            _group_part(conn, part, None if anew else came)
+    conn.execute("DELETE FROM ungrouped WHERE elements = ?", (elements,))
+
+
+def _group_part(conn: sqlite3.Connection, part: list[Outline], came: set[int] | None) -> None:
+    """Group a part to which the rows `came`; None: all that is known of it is forgotten."""
+    rows = [outline.row for outline in part]
+    entries = _entries(conn, rows)
+    held = conn.execute(
+        f"SELECT phase, leader FROM member WHERE phase IN {LISTED}", (listed(rows),)
+    )
+    before = dict(held.fetchall())
+    if came is None:
+        leaders = leaders_of(list(entries.values()))
+    else:
+        old = [outline for outline in part if outline.row not in came]
+        earlier = Earlier(
+            [[entries[outline.row] for outline in own] for own in parts_of(old)],
+            {outline.row: before.get(outline.row, outline.row) for outline in old},
+        )
+        leaders = leaders_of(list(entries.values()), earlier)
+    after = {row: leader for row, leader in leaders.items() if row != leader}
+    gone = [(row,) for row in before.keys() - after.keys()]
+    conn.executemany("DELETE FROM member WHERE phase = ?", gone)
+    changed = sorted(after.items() - before.items())
+    conn.executemany("INSERT OR REPLACE INTO member VALUES (?, ?)", changed)
 
 
 def leaders_in(conn: sqlite3.Connection, elements: str) -> dict[int, int]:
     """Return row of the leader by row of the entry, for all entries of one set of elements."""
-    rows = conn.execute(f"SELECT {COLUMNS} FROM phase WHERE elements = ?", (elements,))
-    return leaders_of([StoredEntry(conn, *row) for row in rows.fetchall()])
-
-
-def leaders_of(entries: Sequence[StoredEntry]) -> dict[int, int]:
-    """The same for entries that are read already."""
-    parts: dict[int, list[StoredEntry]] = defaultdict(list)
-    for entry in entries:
-        parts[entry.group].append(entry)
     leaders: dict[int, int] = {}
-    for part in parts.values():
-        standing: list[StoredEntry] = []
-        ln_density = np.full(len(part), np.inf)
-        for entry in best_first(part):
-            near = np.flatnonzero(np.abs(ln_density - entry.ln_density) <= 3 * COMPUTED_CELL)
-            same = [standing[k] for k in near if _same(standing[k], entry)]
-            if not same:
-                ln_density[len(standing)] = entry.ln_density
-                standing.append(entry)
-            nearest = min(
-                same, key=lambda one: abs(one.ln_density - entry.ln_density), default=entry
-            )
-            leaders[entry.row] = nearest.row
+    for part in parts_of(_outlines(conn, elements)):
+        leaders |= leaders_of(list(_entries(conn, [outline.row for outline in part]).values()))
     return leaders
 
 
-def _same(one: StoredEntry, other: StoredEntry) -> bool:
-    try:
-        return same_phase(one, other)
-    except (ArithmeticError, ValueError):  # a cell that spans no lattice is like no other
-        return False
+def _entries(conn: sqlite3.Connection, rows: Sequence[int]) -> dict[int, StoredEntry]:
+    found = conn.execute(f"SELECT {COLUMNS} FROM phase WHERE id IN {LISTED}", (listed(rows),))
+    return {row[0]: StoredEntry(conn, *row) for row in found.fetchall()}
 
 
-def best_first(entries: list[StoredEntry]) -> list[StoredEntry]:
-    """Sort determinations by how well they stand for their phase.
-
-    Measured before computed; shipped with phaseid, whose marks are sure where files say nothing of
-    pressure and heat; the symmetry told before atoms one by one; then quality, which holds
-    pressure, temperature, disorder and doubts; not measured in the cold; the cell near the middle
-    of the others'; named; with its reference. Whatever is still equal goes by content.
-    """
-    if len(entries) == 1:
-        return entries
-    measured = sorted(entry.ln_density for entry in entries if not entry.computed)
-
-    def rank(entry: StoredEntry) -> tuple[object, ...]:
-        reach = 3 * MEASURED_CELL
-        low = bisect_left(measured, entry.ln_density - reach)
-        high = bisect_right(measured, entry.ln_density + reach)
-        middle = measured[(low + high) // 2] if high > low else entry.ln_density
-        off = round(abs(entry.ln_density - middle), 3)
-        cold = high - low > 1 and not entry.computed and entry.colder_than(_COLD_K)
-        return (
-            entry.computed,
-            not entry.shipped,
-            entry.symmetry_untold,
-            -entry.quality,
-            cold,
-            off,
-            not entry.named,
-            not entry.reference,
-            entry.content,
+def _outlines(conn: sqlite3.Connection, elements: str) -> list[Outline]:
+    found = conn.execute(
+        "SELECT id, space_group_number, formula_key, density_g_cm3 "
+        "FROM phase INDEXED BY phase_by_elements WHERE elements = ?",
+        (elements,),
+    ).fetchall()
+    plain = _entries(conn, [row for row, number, *_ in found if number == 1])
+    return [
+        Outline(
+            row,
+            plain[row].group if row in plain else group_kind(number),
+            fractions(key),
+            ln_density(density),
         )
+        for row, number, key, density in found
+    ]
 
-    return sorted(entries, key=rank)
+
+def parts_of(outlines: Iterable[Outline]) -> list[list[Outline]]:
+    """Part entries of the same elements so that determinations of one phase stay together."""
+    kinds: dict[tuple[int, int], list[Outline]] = defaultdict(list)
+    for outline in outlines:
+        kinds[outline.group, len(outline.fractions)].append(outline)
+    parts: list[list[Outline]] = []
+    for (_, elements), kind in kinds.items():
+        own = [kind]
+        if len({outline.fractions for outline in kind}) > 1:
+            for k in range(elements):
+                own = [run for part in own for run in _runs(part, _fraction(k), COMPOSITION)]
+        parts += [run for part in own for run in _runs(part, _ln_density, 3 * COMPUTED_CELL)]
+    return parts
+
+
+def _fraction(k: int) -> Callable[[Outline], float]:
+    return lambda outline: outline.fractions[k]
+
+
+_ln_density = attrgetter("ln_density")
+
+
+def _runs(
+    part: list[Outline], value: Callable[[Outline], float], gap: float
+) -> Iterator[list[Outline]]:
+    """Part outlines where their values are further apart than a gap."""
+    if len(part) > 1:
+        part = sorted(part, key=value)
+        values = list(map(value, part))
+        start = 0
+        for k in range(1, len(part)):
+            if values[k] - values[k - 1] > gap:
+                yield part[start:k]
+                start = k
+        part = part[start:]
+    yield part

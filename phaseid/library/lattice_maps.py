@@ -6,6 +6,7 @@ for among the short vectors of the other. So neither axes nor the choice of a mu
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from functools import cached_property
 from itertools import product
@@ -62,9 +63,45 @@ class Lattice:
         return np.array([first, steps[second], steps[third]])
 
     @cached_property
-    def minima_A(self) -> Floats:
-        """Lengths (3,) of the vectors of `basis`, rising: the same for every cell of a lattice."""
+    def edges_A(self) -> Floats:
+        """Lengths (3,) of the vectors of `basis`, rising."""
         return np.sqrt(np.diag(self.basis @ metric_tensor(self.cell) @ self.basis.T))
+
+    @cached_property
+    def minima_A(self) -> tuple[float, float, float]:
+        """Edges of the Niggli cell, rising: the same for every cell of a lattice.
+
+        Raises ValueError for a cell that spans no lattice.
+        """
+        letter = _LETTERS.get(_rounded(self.centring))
+        if letter is None:
+            a, b, c = self.edges_A.tolist()
+            return a, b, c
+        import gemmi
+
+        reduced = gemmi.GruberVector(gemmi.UnitCell(*self.cell), letter)
+        reduced.niggli_reduce()
+        a, b, c = sorted(reduced.cell_parameters()[:3])
+        if not 0.0 < a <= c < math.inf:
+            raise ValueError("a cell that spans no lattice")
+        return a, b, c
+
+
+def _rounded(centring: Floats) -> tuple[tuple[int, ...], ...]:
+    """The translations of a centring in 12ths of the edges, in a fixed order."""
+    return tuple(sorted(map(tuple, np.rint(12 * centring).astype(int).tolist())))
+
+
+_LETTERS: dict[tuple[tuple[int, ...], ...], str] = {
+    (): "P",
+    ((0, 6, 6),): "A",
+    ((6, 0, 6),): "B",
+    ((6, 6, 0),): "C",
+    ((6, 6, 6),): "I",
+    ((0, 6, 6), (6, 0, 6), (6, 6, 0)): "F",
+    ((4, 8, 8), (8, 4, 4)): "R",
+}
+"""Letters of the usual centrings (International Tables A, table 2.1.1.2), R in the obverse way."""
 
 
 def index_maps(one: Lattice, other: Lattice, tolerance: float) -> list[Floats]:
@@ -73,9 +110,11 @@ def index_maps(one: Lattice, other: Lattice, tolerance: float) -> list[Floats]:
     Lengths of the basis vectors agree within the relative `tolerance`, cosines of their angles
     within it. An empty list: the lattices differ.
     """
-    edges = one.minima_A
-    if float(np.abs(np.log(edges / other.minima_A)).max()) > tolerance:
+    if any(
+        abs(math.log(x / y)) > tolerance for x, y in zip(one.minima_A, other.minima_A, strict=True)
+    ):
         return []
+    edges = one.edges_A
     cosines = (one.basis @ metric_tensor(one.cell) @ one.basis.T) / np.outer(edges, edges)
     steps, lengths = other.vectors
     near = [np.flatnonzero(np.abs(np.log(lengths / edge)) <= tolerance) for edge in edges]

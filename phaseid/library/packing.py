@@ -82,13 +82,6 @@ def unpack_many(
 
     Lines of phase i are rows offsets[i] to offsets[i + 1]; m|F|²d² is 0 where absent.
     """
-    offsets, hkl, multiplicity, (strength,) = _unpacked((kind,), packed)
-    return offsets, hkl, multiplicity, strength
-
-
-def _unpacked(
-    kinds: Sequence[Kind], packed: Sequence[bytes]
-) -> tuple[NDArray[np.int64], NDArray[np.int16], NDArray[np.int32], list[Floats]]:
     import numpy as np
 
     heads = [_HEAD.unpack_from(data) if data else (1, 0.0, 0.0, 0.0) for data in packed]
@@ -114,16 +107,14 @@ def _unpacked(
             value[wide] |= (upper if column == 3 else upper.astype(np.int8)).astype(np.int32) << 8
         whole[column] = value
         at += n * width[owner]
-    strength = []
+    which = KINDS.index(kind)
     codes = start + n * (4 * width[owner])
-    for which in map(KINDS.index, kinds):
-        strongest = np.array([head[1 + which] for head in heads], dtype=np.float64)
-        high = data[codes + n * which + within].astype(np.int32)
-        pair = which * n + within
-        low = data[codes + 3 * n + pair // 2] >> np.where(pair % 2, 0, 4) & 15
-        code = high << 4 | low
-        value = strongest[owner] * np.exp(-_STEP * code)
-        strength.append(np.where(code < _ABSENT, value, 0.0))
+    strongest = np.array([head[1 + which] for head in heads], dtype=np.float64)
+    high = data[codes + n * which + within].astype(np.int32)
+    pair = which * n + within
+    low = data[codes + 3 * n + pair // 2] >> np.where(pair % 2, 0, 4) & 15
+    code = high << 4 | low
+    strength = np.where(code < _ABSENT, strongest[owner] * np.exp(-_STEP * code), 0.0)
     return offsets, whole[:3].T.astype(np.int16), whole[3], strength
 
 
@@ -136,12 +127,23 @@ def unpack_lines(
     from phaseid.crystal.lines import Lines
     from phaseid.crystal.metric import inverse_metric, squares
 
-    _, hkl, multiplicity, strength = _unpacked(KINDS, [data])
+    width, *strongest = _HEAD.unpack_from(data) if data else (1, 0.0, 0.0, 0.0)
+    held = zlib.decompress(data[_HEAD.size :]) if data else b""
+    n = 2 * len(held) // (8 * width + 9)
+    whole = np.frombuffer(held, "<i2" if width == 2 else "i1", 4 * n).reshape(4, n)
+    hkl = whole[:3].T.astype(np.int32)
+    multiplicity = whole[3].astype(np.int32) & (0xFF if width == 1 else 0xFFFF)
+    high = np.frombuffer(held, np.uint8, 3 * n, 4 * n * width)
+    pairs = np.frombuffer(held, np.uint8, offset=(4 * width + 3) * n)
+    low = np.stack([pairs >> 4, pairs & 15], axis=1).reshape(-1)[: 3 * n]
+    code = (high.astype(np.int32) << 4 | low).reshape(3, n)
+    value = np.array(strongest)[:, None] * np.exp(-_STEP * code)
+    strength = np.where(code < _ABSENT, value, 0.0)
     inverse_d2 = squares(hkl.astype(np.float64), inverse_metric(cell))
     f2_xray, f2_electron, f2_neutron = (one * inverse_d2 / multiplicity for one in strength)
     return Lines(
         d_A=1 / np.sqrt(inverse_d2),
-        hkl=hkl.astype(np.int32),
+        hkl=hkl,
         multiplicity=multiplicity,
         f2_xray=f2_xray,
         f2_electron=f2_electron,

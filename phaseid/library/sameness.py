@@ -43,8 +43,7 @@ def same_phase(one: StoredEntry, other: StoredEntry) -> bool:
         one.group != other.group
         or (one.shipped and other.shipped)
         or abs(one.ln_density - other.ln_density) > 3 * tolerance
-        or one.fractions.shape != other.fractions.shape  # an element of which there is nothing
-        or float(np.abs(one.fractions - other.fractions).max()) > COMPOSITION
+        or not _composed_alike(one.fractions, other.fractions)
     ):
         return False
     wanted = _ALIKE_COMPUTED if one.computed and other.computed else _ALIKE
@@ -53,6 +52,13 @@ def same_phase(one: StoredEntry, other: StoredEntry) -> bool:
         return True
     maps = _distinct(index_maps(one.lattice, other.lattice, tolerance), one.cell)
     return any(_alike(one.cell, one.strong, other.strong, matrix, wanted) for matrix in maps)
+
+
+def _composed_alike(one: tuple[float, ...], other: tuple[float, ...]) -> bool:
+    """Whether atomic fractions agree; an element of which there is nothing has none."""
+    return len(one) == len(other) and all(
+        abs(x - y) <= COMPOSITION for x, y in zip(one, other, strict=True)
+    )
 
 
 def _cells_agree(one: Cell, other: Cell, tolerance: float) -> bool:

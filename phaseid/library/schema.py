@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING
 from phaseid import __version__
 from phaseid.library.compact_tables import compact_tables
 from phaseid.library.finding_tables import finding_tables
+from phaseid.library.waiting_rows import waiting_rows
 
 if TYPE_CHECKING:
     from sqlite_utils import Database
@@ -85,27 +86,29 @@ STEPS: tuple[Step, ...] = (
     ("first tables", _first_tables),
     ("compact lines and blocks", compact_tables),
     ("grouping and finding", finding_tables),
+    ("rows that wait for grouping", waiting_rows),
 )
 
 SCHEMA_VERSION = len(STEPS)
 
 
-def apply_steps(conn: sqlite3.Connection, steps: Sequence[Step] = STEPS) -> int:
-    """Bring a library file up to date, each step and its record in one transaction.
+def apply_steps(
+    conn: sqlite3.Connection,
+    steps: Sequence[Step] = STEPS,
+    finish: Callable[[sqlite3.Connection], None] | None = None,
+) -> int:
+    """Bring a library file up to date in one transaction: all missing steps, then `finish`.
 
     Returns the number of steps applied. Raises sqlite3.Error as SQLite does; the file then stands
-    as it stood after the last whole step.
+    as it stood.
     """
     from sqlite_utils import Database
 
     db = Database(conn, execute_plugins=False)
-    applied = 0
-    for number, (name, step) in enumerate(steps, start=1):
-        conn.execute("BEGIN IMMEDIATE")
-        try:
-            if number <= stored_version(conn):
-                conn.execute("ROLLBACK")
-                continue
+    conn.execute("BEGIN IMMEDIATE")
+    try:
+        version = stored_version(conn)
+        for number, (name, step) in enumerate(steps[version:], start=version + 1):
             step(db)
             if number == 1:
                 facts = (
@@ -118,12 +121,14 @@ def apply_steps(conn: sqlite3.Connection, steps: Sequence[Step] = STEPS) -> int:
                 "INSERT OR REPLACE INTO meta VALUES (?, ?)",
                 ((f"step {number}", name), ("schema_version", str(number))),
             )
-            conn.execute("COMMIT")
-        except BaseException:
+        if finish is not None:
+            finish(conn)
+        conn.execute("COMMIT")
+    except BaseException:
+        if conn.in_transaction:
             conn.execute("ROLLBACK")
-            raise
-        applied += 1
-    return applied
+        raise
+    return len(steps[version:])
 
 
 def stored_version(conn: sqlite3.Connection) -> int:

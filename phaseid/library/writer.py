@@ -20,7 +20,7 @@ _FROM = ("source_database", "source_id", "source_file", "location")
 _DIGEST_RANGE = 1 << 128
 
 
-def _told_by(source: Sequence[str | int | float]) -> tuple[bool, bool, tuple[str, ...]]:
+def _told_by(source: Sequence[object]) -> tuple[bool, bool, tuple[str, ...]]:
     """Rank of the source that tells of a structure which several have, whoever came first.
 
     What is shipped, then one with a number, then by the alphabet; `source` holds the columns _FROM.

@@ -64,7 +64,7 @@ def test_a_sound_library_has_no_troubles(five: Library) -> None:
         ("INSERT INTO label (phase, kind, text, key) VALUES (99, 'name', 'x', 'x')",
          "1 rows of table label belong to no phase"),
         ("INSERT INTO member VALUES (1, 2)", "the entries of Mg O are not grouped as they should"),
-        ("INSERT INTO ungrouped VALUES ('Mg O')", "1 sets of elements are not grouped yet"),
+        ("INSERT INTO ungrouped VALUES ('Mg O', 1)", "1 sets of elements are not grouped yet"),
     ],
 )  # fmt: skip
 def test_each_kind_of_damage_is_told(five: Library, statement: str, trouble: str) -> None:

@@ -16,7 +16,10 @@ from numpy.typing import NDArray
 from phaseid.crystal.cif import read_cif
 from phaseid.crystal.crystal import Crystal, Finding, Site, Source
 from phaseid.crystal.metric import metric_tensor
-from phaseid.library import Library
+from phaseid.library import Library, leaders
+from phaseid.library.determinations import StoredEntry
+from phaseid.library.grouping import leaders_in
+from phaseid.library.sameness import same_phase
 from phaseid.library.starter import shipped_crystal
 
 # a, c (Å) of published determinations of low quartz, from memory: Levien, Prewitt & Weidner, Am.
@@ -254,6 +257,49 @@ def test_the_order_of_adding_does_not_matter(tmp_path: Path) -> None:
             outcomes.append(groups(library))
     assert outcomes[0] == outcomes[1] == outcomes[2]
     assert 3 < len(outcomes[0]) < len(entries)
+
+
+def test_grouping_what_is_new_finds_what_grouping_all_anew_finds(
+    library: Library, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    dice = random.Random(5)
+    entries = [
+        replace(
+            scaled(published(stem), 1.0 + dice.gauss(0.0, 0.012), *dice.choice(MARKS)),
+            source=Source("COD", str(9000000 + 100 * k + n), f"{k}-{n}.cif"),
+            temperature_K=dice.choice((None, 100.0, 300.0)),
+        )
+        for k, stem in enumerate(("MgO-periclase", "SiO2-quartz", "SiO2-quartz-high"))
+        for n in range(25)
+    ]
+    dice.shuffle(entries)
+    compared = 0
+
+    def counted(one: StoredEntry, other: StoredEntry) -> bool:
+        nonlocal compared
+        compared += 1
+        return same_phase(one, other)
+
+    monkeypatch.setattr(leaders, "same_phase", counted)
+    few, all_anew = 0, 0
+    while entries:
+        added, entries = entries[:5], entries[5:]
+        compared = 0
+        library.add_crystals(added)
+        few += compared
+        compared = 0
+        with library.reading() as conn:
+            for elements in ("Mg O", "O Si"):
+                due = leaders_in(conn, elements).items()
+                held = conn.execute(
+                    "SELECT phase, leader FROM member JOIN phase ON id = phase WHERE elements = ?",
+                    (elements,),
+                )
+                assert dict(held.fetchall()) == {row: own for row, own in due if row != own}
+        all_anew += compared
+        if len(entries) % 3 == 0:
+            library.remove([dice.choice(library.phases()).phase_id])
+    assert few < all_anew / 2
 
 
 MARKS: tuple[tuple[str, ...], ...] = ((), (), ("high_pressure",), ("theoretical",))

@@ -367,8 +367,11 @@ def test_schema_steps_are_applied_once_and_whole(tmp_path: Path) -> None:
     def second(db: object) -> None:
         db.table("second").create({"id": int}, pk="id")  # type: ignore[attr-defined]
 
-    def broken(db: object) -> None:
+    def third(db: object) -> None:
         db.table("third").create({"id": int}, pk="id")  # type: ignore[attr-defined]
+
+    def broken(db: object) -> None:
+        db.table("fourth").create({"id": int}, pk="id")  # type: ignore[attr-defined]
         raise RuntimeError("halfway")
 
     conn = sqlite3.connect(path, isolation_level=None)
@@ -376,11 +379,12 @@ def test_schema_steps_are_applied_once_and_whole(tmp_path: Path) -> None:
         assert apply_steps(conn) == 0
         assert apply_steps(conn, (*STEPS, ("second", second))) == 1
         assert stored_version(conn) == SCHEMA_VERSION + 1
-        with pytest.raises(RuntimeError, match="halfway"):
-            apply_steps(conn, (*STEPS, ("second", second), ("third", broken)))
+        further = (("third", third), ("fourth", broken))
+        with pytest.raises(RuntimeError, match="halfway"):  # and the one before it with it
+            apply_steps(conn, (*STEPS, ("second", second), *further))
         tables = {row[0] for row in conn.execute("SELECT name FROM sqlite_master")}
         assert "second" in tables
-        assert "third" not in tables
+        assert not {"third", "fourth"} & tables
         assert stored_version(conn) == SCHEMA_VERSION + 1
     finally:
         conn.close()
@@ -397,7 +401,9 @@ def test_an_older_library_is_brought_up_to_date(
 
     steps = (*STEPS, ("second", second))
     monkeypatch.setattr(connection, "SCHEMA_VERSION", len(steps))
-    monkeypatch.setattr(connection, "apply_steps", lambda conn: apply_steps(conn, steps))
+    monkeypatch.setattr(
+        connection, "apply_steps", lambda conn, **more: apply_steps(conn, steps, **more)
+    )
     with Library.open(path) as library:
         assert library.info()["schema_version"] == len(steps)
 

@@ -1,7 +1,7 @@
 """Libraries of older versions: brought up to date whole or not at all, the old file kept.
 
-`stored/version_1.sqlite` was made by phaseid 0.1.0, schema version 1, from four rock salts of
-`rock_salts` and a file that is broken.
+The libraries in `stored` were made by phaseid of their schema versions (1 and 2 by 0.1.0, 3 by
+0.2.0) from four rock salts of `rock_salts` and a file that is broken.
 """
 
 from __future__ import annotations
@@ -13,6 +13,7 @@ import subprocess
 import sys
 from collections.abc import Callable
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -23,16 +24,27 @@ from phaseid.library.schema import SCHEMA_VERSION, STEPS, apply_steps
 from tests.library.dying import die, dies
 from tests.library.rock_salts import rock_salt
 
-STORED = Path(__file__).parent / "stored" / "version_1.sqlite"
+STORED = Path(__file__).parent / "stored"
 DIGEST = "bef4d2f912a626b03bbff7bb0585fc28"  # that phaseid 0.1.0 printed
 HELD = {"MgO": ("Periclase", "9000001"), "NaCl": ("Halite", "9000629"),
         "KCl": ("Sylvite", ""), "CaO": ("Lime", "")}  # fmt: skip
 
 
+@pytest.fixture(params=range(1, SCHEMA_VERSION))
+def version(request: pytest.FixtureRequest) -> int:
+    """Each schema version there was."""
+    return int(request.param)
+
+
+def copy_of(version: int, path: Path) -> Path:
+    """A copy of the stored library of a version."""
+    return Path(shutil.copy(STORED / f"version_{version}.sqlite", path))
+
+
 @pytest.fixture
-def old(tmp_path: Path) -> Path:
-    """A library of version 1."""
-    return Path(shutil.copy(STORED, tmp_path / "old.sqlite"))
+def old(version: int, tmp_path: Path) -> Path:
+    """A library of an older version."""
+    return copy_of(version, tmp_path / "old.sqlite")
 
 
 @pytest.fixture
@@ -70,12 +82,12 @@ def _assert_whole(path: Path, anew: Library) -> None:
     conn.close()
 
 
-def test_a_library_of_version_1_is_brought_up_to_date(old: Path, anew: Library) -> None:
+def test_an_old_library_is_brought_up_to_date(old: Path, version: int, anew: Library) -> None:
     before = old.read_bytes()
     told: list[str] = []
     Library.open(old, told.append).close()
     _assert_whole(old, anew)
-    (copy,) = old.parent.glob("old.sqlite.schema-1*")
+    (copy,) = old.parent.glob(f"old.sqlite.schema-{version}*")
     assert copy.read_bytes()[100:] == before[100:]  # all but SQLite's own counters
     assert len(told) == 1
     assert copy.name in told[0]
@@ -84,9 +96,7 @@ def test_a_library_of_version_1_is_brought_up_to_date(old: Path, anew: Library) 
     }  # fmt: skip
 
 
-def test_adding_to_a_library_of_version_1(
-    old: Path, anew: Library, write_cif: Callable[..., Path]
-) -> None:
+def test_adding_to_an_old_library(old: Path, anew: Library, write_cif: Callable[..., Path]) -> None:
     anew.close()
     with Library.open(old) as library:
         again = library.add([old.parent / "structures"])
@@ -104,11 +114,11 @@ def test_an_upgraded_library_is_sealed_and_not_upgraded_again(old: Path) -> None
 
 
 @pytest.mark.skipif(not hasattr(os, "fork"), reason="needs fork")
-def test_killed_during_the_upgrade_nothing_is_lost(old: Path, anew: Library) -> None:
+def test_killed_during_the_upgrade_nothing_is_lost(old: Path, version: int, anew: Library) -> None:
     """Killed at every so many statements, then opened again."""
     killed = 0
-    for number in range(1, 400, 25):
-        path = Path(shutil.copy(STORED, old.parent / f"{number}.sqlite"))
+    for number in range(1, 400 // version**2, 25 // version):
+        path = copy_of(version, old.parent / f"{number}.sqlite")
 
         def upgrade(path: Path = path, number: int = number) -> None:
             left = [number]
@@ -118,9 +128,9 @@ def test_killed_during_the_upgrade_nothing_is_lost(old: Path, anew: Library) -> 
                 if left[0] == 0:
                     die()
 
-            def counted(conn: sqlite3.Connection) -> int:
+            def counted(conn: sqlite3.Connection, **more: Any) -> int:
                 conn.set_trace_callback(count)
-                return apply_steps(conn)
+                return apply_steps(conn, **more)
 
             connection.apply_steps = counted
             Library.open(path)
@@ -131,7 +141,7 @@ def test_killed_during_the_upgrade_nothing_is_lost(old: Path, anew: Library) -> 
         copies = sorted(old.parent.glob(f"{number}.sqlite.schema-*"))
         first = sqlite3.connect(copies[0])
         facts = dict(first.execute("SELECT key, value FROM meta"))
-        assert (facts["schema_version"], facts["digest"]) == ("1", DIGEST)
+        assert (facts["schema_version"], facts["digest"]) == (str(version), DIGEST)
         first.close()
     assert killed >= 4
     anew.close()
@@ -152,14 +162,14 @@ def test_killed_while_the_copy_is_made_the_old_file_stands(
         Library.open(old)
 
     assert dies(upgrade)
-    assert list(old.parent.glob("*.schema-1")) == []
+    assert list(old.parent.glob("*.schema-?")) == []
     _assert_whole(old, anew)
 
 
 def test_an_old_library_that_cannot_be_written_is_told(
     old: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    def full(_: sqlite3.Connection) -> int:
+    def full(_: sqlite3.Connection, **__: Any) -> int:
         raise sqlite3.OperationalError("database or disk is full")
 
     monkeypatch.setattr(connection, "apply_steps", full)
@@ -170,6 +180,7 @@ def test_an_old_library_that_cannot_be_written_is_told(
         assert library.digest == DIGEST
 
 
+@pytest.mark.parametrize("version", [1], indirect=True)
 def test_two_at_once_upgrade_once(old: Path, anew: Library) -> None:
     command = [sys.executable, "-m", "phaseid", "library", "info", "--library", str(old)]
     both = [subprocess.Popen(command, stderr=subprocess.PIPE, stdout=subprocess.PIPE, text=True)
@@ -180,13 +191,14 @@ def test_two_at_once_upgrade_once(old: Path, anew: Library) -> None:
     _assert_whole(old, anew)
 
 
+@pytest.mark.parametrize("version", [1], indirect=True)
 def test_a_newer_library_is_refused_by_the_command_line(old: Path) -> None:
     conn = sqlite3.connect(old)
     conn.execute("UPDATE meta SET value = '99' WHERE key = 'schema_version'")
     conn.commit()
     conn.close()
     before = old.read_bytes()
-    for command in (["info"], ["find", "MgO"], ["add", str(STORED.parent)]):
+    for command in (["info"], ["find", "MgO"], ["add", str(STORED)]):
         done = subprocess.run(
             [sys.executable, "-m", "phaseid", "library", *command, "--library", str(old)],
             capture_output=True, text=True, check=False,
