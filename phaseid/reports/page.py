@@ -23,12 +23,11 @@ from phaseid.reports.json import dumps, identification_dict
 from phaseid.reports.page_answer import Drawing, answer_section
 from phaseid.reports.page_choice import choice
 from phaseid.reports.page_compare import side_by_side
-from phaseid.reports.page_html import facts, items, words
+from phaseid.reports.page_html import facts, items, prose, words
 from phaseid.reports.picture_axis import AxisName, common_axis
 from phaseid.reports.picture_style import DARK, LIGHT, palette_css, picture_css
 from phaseid.reports.picture_svg import Store
-from phaseid.reports.plain import phase_text, probability_text
-from phaseid.reports.text import STANDING, VERDICTS, cautions, remarks
+from phaseid.reports.text import STANDING, TYPES_FIT, VERDICTS, cautions, remarks, types_that_fit
 
 if TYPE_CHECKING:
     from phaseid.library import Library
@@ -138,8 +137,14 @@ def _head(answer: Identification) -> str:
         f"<h1>{words(headline(answer))}</h1>",
         f"<p>Verdict: {words(VERDICTS[answer.verdict])}.</p>",
         *(f'<p class="doubt">{words(doubt)}</p>' for doubt in doubts(answer)),
+        *(
+            f'<p class="care"><strong>Safety</strong> {prose(caution)}</p>'
+            for caution in _first_cautions(answer)
+        ),
         items("What to do next", next_steps(answer)),
     ]
+    if answer.verdict == "no-match":
+        parts.append(items(TYPES_FIT, types_that_fit(answer)))
     return "".join(parts)
 
 
@@ -158,16 +163,17 @@ def _sections(answer: Identification, drawing: Drawing, room: int) -> tuple[str,
 
 
 def _notes(answer: Identification) -> str:
-    types = [
-        f"{match.type_name} (as in {phase_text(match.like)}) with a = {match.a_A:.4f} ± "
-        f"{match.a_sigma_A:.4f} Å, probability {probability_text(match.probability)}"
-        for match in answer.type_matches
-    ]
+    told = cautions(answer)
     return (
-        items("Structure types that would fit", types)
+        ("" if answer.verdict == "no-match" else items(TYPES_FIT, types_that_fit(answer)))
         + items("Remarks", remarks(answer))
-        + items("Safety", cautions(answer))
+        + ("" if told == _first_cautions(answer) else items("Safety", told))
     )
+
+
+def _first_cautions(answer: Identification) -> list[str]:
+    """What is dangerous about the first answer, unless it is none."""
+    return [] if answer.verdict == "no-match" else cautions(answer, answers=1)
 
 
 def _origin(answer: Identification, provenance: Provenance, held: int) -> str:

@@ -72,7 +72,10 @@ def answer_section(answer: Identification, hypothesis: Hypothesis | None, drawin
             f"<figcaption>{caption}</figcaption></figure><div>{doubts}</div></div>"
         )
     beside = doubts if len(scenes) == 1 else ""
-    parts += [_pattern(answer, one, drawing, beside) for one in scenes]
+    captions = [_caption(one) for one in scenes]
+    for k, one in enumerate(scenes):
+        caption = "" if captions[k] in captions[:k] else captions[k]
+        parts.append(_pattern(answer, one, drawing, beside, caption))
     if hypothesis is not None:
         parts.append(doubts if len(scenes) > 2 else "")
         alone = len(hypothesis.phases) == 1
@@ -85,22 +88,24 @@ def _title(hypothesis: Hypothesis | None) -> str:
     if hypothesis is None:
         return "The rings as measured"
     names = " + ".join(phase_text(part.phase) for part in hypothesis.phases)
+    groups = sum(len(part.indistinguishable) for part in hypothesis.phases)
+    alike = f" (with {groups} alike)" if groups else ""
     chance = probability_text(hypothesis.probability)
-    return f"Answer {hypothesis.rank}: {names}, probability {chance}"
+    return f"Answer {hypothesis.rank}: {names}{alike}, probability {chance}"
 
 
 def _drawn(picture: Picture, drawing: Drawing) -> str:
     return svg(picture, hits=True, store=drawing.store)
 
 
-def _pattern(answer: Identification, one: Scene, drawing: Drawing, beside: str) -> str:
+def _pattern(
+    answer: Identification, one: Scene, drawing: Drawing, beside: str, caption: str
+) -> str:
     many = len(answer.patterns) > 1
     title = pattern_title(answer, one.number)
     heading = f"Pattern {one.number + 1}: {title}" if many else title
-    figures = (
-        f'<figure class="disc">{_drawn(disc(one), drawing)}<figcaption>{_caption(one)}'
-        "</figcaption></figure>"
-    )
+    told = f"<figcaption>{caption}</figcaption>" if caption else ""
+    figures = f'<figure class="disc">{_drawn(disc(one), drawing)}{told}</figure>'
     stick_picture = _drawn(sticks(one, axis_for(one.pattern, drawing.axis)), drawing)
     figures += (
         f'<div><figure class="sticks">{scrolling(stick_picture, "Sticks, scrolls sideways")}'

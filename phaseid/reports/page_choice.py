@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from phaseid.matching.identification import Hypothesis, Identification
-from phaseid.reports.page_html import scrolling, words
+from phaseid.reports.page_html import prose, scrolling, words
 from phaseid.reports.picture import Picture
 from phaseid.reports.picture_sheet import (
     BAR_HEIGHT,
@@ -51,7 +51,7 @@ def choice(answer: Identification, drawn: int) -> str:
 
 
 def _row(h: Hypothesis, rings: int, drawn: int) -> str:
-    names = words(" + ".join(marked_text(part.phase) for part in h.phases))
+    names = prose(" + ".join(marked_text(part.phase) for part in h.phases))
     groups = sum(len(part.indistinguishable) for part in h.phases)
     alike = f" (with {groups} alike)" if groups else ""
     explained = len({(a.pattern, a.ring) for a in h.assignments})

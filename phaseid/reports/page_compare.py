@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+from itertools import groupby
+from operator import itemgetter
+
 from phaseid.matching.identification import Hypothesis, Identification
-from phaseid.reports.page_html import items, scrolling, words
+from phaseid.reports.page_html import items, prose, scrolling
 from phaseid.reports.plain import (
     cell_text,
     hkl_text,
@@ -26,7 +29,7 @@ def side_by_side(answer: Identification) -> str:
     told = {name: [tell(answer, h) for h in first] for name, tell in ROWS.items()}
     rows = "".join(
         f'<tr><th scope="row">{name}</th>'
-        + "".join(f'<td class="wide">{words(cell)}</td>' for cell in cells)
+        + "".join(f'<td class="wide">{prose(cell)}</td>' for cell in cells)
         + "</tr>"
         for name, cells in told.items()
         if any(cells)
@@ -73,13 +76,13 @@ def _explained(hypothesis: Hypothesis) -> set[tuple[int, int]]:
 
 def _rings(answer: Identification, rings: list[tuple[int, int]]) -> str:
     many = len(answer.patterns) > 1
-    shown = [
-        f"{ring + 1}{f' of pattern {pattern + 1}' if many else ''} "
-        f"({answer.patterns[pattern].d_A[ring]:.4f} Å)"
-        for pattern, ring in rings[:NAMED]
-    ]
+    shown = []
+    for number, own in groupby(rings[:NAMED], itemgetter(0)):
+        pattern = answer.patterns[number]
+        told = ", ".join(f"{ring + 1} ({pattern.d_A[ring]:.4f} Å)" for _, ring in own)
+        shown.append(f"{told} of pattern {number + 1}" if many else told)
     more = f" and {len(rings) - NAMED} more" if len(rings) > NAMED else ""
-    return f"ring{'s' * (len(rings) > 1)} {', '.join(shown)}{more}"
+    return f"ring{'s' * (len(rings) > 1)} {'; '.join(shown)}{more}"
 
 
 def _missing(hypothesis: Hypothesis) -> str:

@@ -4,18 +4,18 @@ from __future__ import annotations
 
 from phaseid.library.phase import Phase
 from phaseid.matching.identification import PhaseAnswer
-from phaseid.reports.page_html import facts, scrolling, tag, words
+from phaseid.reports.page_html import facts, prose, scrolling, tag
 from phaseid.reports.plain import (
     cell_text,
     hkl_text,
-    marked_text,
     marks_text,
     phase_text,
     source_text,
 )
-from phaseid.reports.text import SHOWN_ALIKE
+from phaseid.reports.text import alike
 
 SHOWN_ENTRIES = 20
+ENTRY_HEADS = ("source", "marks", "cell", "reference", "name", "entry")
 
 
 def phase_part(part: PhaseAnswer, number: int, *, alone: bool) -> str:
@@ -35,7 +35,7 @@ def phase_part(part: PhaseAnswer, number: int, *, alone: bool) -> str:
         ("reference", phase.source.reference),
         *(("about the entry", finding.message) for finding in phase.findings),
     ]
-    name = words(phase_text(phase) + marks_text(phase))
+    name = prose(phase_text(phase) + marks_text(phase))
     return f"<h3>{tag(number)}{name}</h3>{facts(pairs)}{_entries(part)}{_alike(part)}"
 
 
@@ -43,28 +43,22 @@ def _entries(part: PhaseAnswer) -> str:
     """The other entries of the phase, folded away; nothing where there are none."""
     if not part.entries:
         return ""
-    heads = "".join(
-        f'<th scope="col">{name}</th>'
-        for name in ("source", "marks", "cell", "reference", "name", "entry")
-    )
-    rows = "".join(_entry(entry) for entry in part.entries[:SHOWN_ENTRIES])
-    more = len(part.entries) - SHOWN_ENTRIES
-    told = (
-        f'<p class="quiet">and {more} more; the JSON inside this page lists them all</p>'
-        if more > 0
-        else ""
-    )
+    rows = [_entry(entry) for entry in part.entries[:SHOWN_ENTRIES]]
+    told = [k for k, _ in enumerate(ENTRY_HEADS) if any(row[k] for row in rows)]
+    heads = "".join(f'<th scope="col">{ENTRY_HEADS[k]}</th>' for k in told)
+    body = "".join("<tr>" + "".join(_cell(row[k]) for k in told) + "</tr>" for row in rows)
+    table = f"<table><thead><tr>{heads}</tr></thead><tbody>{body}</tbody></table>"
     count = len(part.entries)
     others = "1 other entry" if count == 1 else f"{count} other entries"
-    table = f"<table><thead><tr>{heads}</tr></thead><tbody>{rows}</tbody></table>"
+    more = f'<p class="quiet">and {_more(count - len(rows))}</p>' if count > len(rows) else ""
     return (
         f"<details><summary>{others} of this phase in the library</summary>"
-        f"{scrolling(table, 'Other entries, scrolls sideways')}{told}</details>"
+        f"{scrolling(table, 'Other entries, scrolls sideways')}{more}</details>"
     )
 
 
-def _entry(entry: Phase) -> str:
-    cells = (
+def _entry(entry: Phase) -> tuple[str, ...]:
+    return (
         source_text(entry),
         marks_text(entry).strip(" []"),
         cell_text(entry.cell),
@@ -72,19 +66,23 @@ def _entry(entry: Phase) -> str:
         entry.name,
         entry.phase_id,
     )
-    return "<tr>" + "".join(f'<td class="wide">{words(cell)}</td>' for cell in cells) + "</tr>"
+
+
+def _cell(text: str) -> str:
+    return f'<td class="wide">{prose(text)}</td>'
+
+
+def _more(count: int) -> str:
+    return f"{count} more; the JSON inside this page lists them all"
 
 
 def _alike(part: PhaseAnswer) -> str:
     """Phases that the rings cannot tell from it, and what would."""
-    tells = {separator.other.phase_id: separator.text for separator in part.separators}
-    alike = []
-    for other in part.indistinguishable[:SHOWN_ALIKE]:
-        told = f"{marked_text(other)}, {cell_text(other.cell)}; {source_text(other)}"
-        tell = tells.get(other.phase_id)
-        alike.append(f"{told}. To tell them apart: {tell}" if tell else told)
-    more = len(part.indistinguishable) - SHOWN_ALIKE
-    if more > 0:
-        alike.append(f"and {more} more; the JSON inside this page lists them all")
-    listed = "".join(f"<li>{words(text)}</li>" for text in alike)
-    return f"<p>These rings cannot tell it from:</p><ul>{listed}</ul>" if alike else ""
+    listed = [
+        prose(named) + (f"<br>To tell them apart: {prose(tell)}" if tell else "")
+        for named, tell in alike(part)
+    ]
+    if (more := len(part.indistinguishable) - len(listed)) > 0:
+        listed.append(f"and {_more(more)}")
+    inner = "".join(f"<li>{one}</li>" for one in listed)
+    return f"<p>These rings cannot tell it from:</p><ul>{inner}</ul>" if listed else ""

@@ -13,7 +13,6 @@ from phaseid.reports.plain import (
     cell_text,
     hkl_text,
     marked_text,
-    marks_text,
     phase_text,
     probability_text,
     safe,
@@ -35,6 +34,7 @@ VERDICTS = {
     "ambiguous": "ambiguous (no answer reaches a probability of 0.9)",
     "no-match": "no match (all of this library together holds less than 0.5)",
 }
+TYPES_FIT = "Structure types that would fit"
 RING_COLUMNS = (
     Column("ring"),
     Column("d meas.\nÅ"),
@@ -58,6 +58,8 @@ def as_text(answer: Identification, *, width: int = 80, bold: bool = False) -> s
     for doubt in doubts(answer):
         page.paragraph(doubt)
     page.items("What to do next", next_steps(answer))
+    if answer.verdict == "no-match":
+        page.items(TYPES_FIT, types_that_fit(answer))
     _alternatives(page, answer)
     best = answer.hypotheses[0] if answer.hypotheses else None
     if best is not None and (best.assignments or answer.verdict != "no-match"):
@@ -67,14 +69,8 @@ def as_text(answer: Identification, *, width: int = 80, bold: bool = False) -> s
         page.items("What speaks against it", against(answer, best))
         for part in best.phases:
             _phase(page, part, alone=len(best.phases) == 1)
-    page.items(
-        "Structure types that would fit",
-        [
-            f"{match.type_name} (as in {phase_text(match.like)}) with a = {match.a_A:.4f} "
-            f"± {match.a_sigma_A:.4f} Å, probability {probability_text(match.probability)}"
-            for match in answer.type_matches
-        ],
-    )
+    if answer.verdict != "no-match":
+        page.items(TYPES_FIT, types_that_fit(answer))
     page.items("Remarks", remarks(answer))
     page.items("Safety", cautions(answer))
     page.blank()
@@ -179,9 +175,12 @@ def _rings(page: _Page, answer: Identification, best: Hypothesis, number: int) -
     page.table(RING_COLUMNS, rows)
     for scale in best.scale:
         if scale.pattern == number:
+            told = f"{scale.factor:.4f} ± {scale.sigma:.4f}"
             page.item(
-                f"Fitted scale, measured d / calculated d: {scale.factor:.4f} ± {scale.sigma:.4f}; "
-                "deviations are taken after it. I calc.: strongest line of each phase = 100"
+                f"Fitted scale, measured d / calculated d: {told}; deviations are taken after it. "
+                "I calc.: strongest line of each phase = 100"
+                if number == 0
+                else f"Fitted scale: {told}"
             )
 
 
@@ -247,24 +246,36 @@ def _phase(page: _Page, part: PhaseAnswer, *, alone: bool) -> None:
             f"{len(part.entries) + 1} entries of this phase in the library; this one stands for "
             "them, --json lists the others"
         )
-    if part.indistinguishable:
-        page.item("These rings cannot tell it from:")
-        for other in part.indistinguishable[:SHOWN_ALIKE]:
-            page.item(
-                f"{phase_text(other)}{marks_text(other)}, {safe(other.space_group_symbol)}, "
-                f"{cell_text(other.cell)}; {source_text(other)}",
-                indent="    ",
-            )
-        more = len(part.indistinguishable) - SHOWN_ALIKE
-        if more > 0:
-            page.item(f"and {more} more; --json lists them all", indent="    ")
-    if part.separators:
-        page.item("What would separate them:")
-        for separator in part.separators[:SHOWN_ALIKE]:
-            page.item(f"{phase_text(separator.other)}: {separator.text}", indent="    ")
-        more = len(part.separators) - SHOWN_ALIKE
-        if more > 0:
-            page.item(f"and {more} more; --json lists them all", indent="    ")
+    for k, (named, tell) in enumerate(alike(part)):
+        if k == 0:
+            page.item("These rings cannot tell it from:")
+        page.item(named, indent="    ")
+        if tell:
+            page.item(f"To tell them apart: {tell}", indent="      ")
+    more = len(part.indistinguishable) - SHOWN_ALIKE
+    if more > 0:
+        page.item(f"and {more} more; --json lists them all", indent="    ")
+
+
+def alike(part: PhaseAnswer) -> list[tuple[str, str]]:
+    """Return the first phases that the rings cannot tell from it, each with what would."""
+    tells = {separator.other.phase_id: separator.text for separator in part.separators}
+    return [
+        (
+            f"{marked_text(other)}, {cell_text(other.cell)}; {source_text(other)}",
+            tells.get(other.phase_id, ""),
+        )
+        for other in part.indistinguishable[:SHOWN_ALIKE]
+    ]
+
+
+def types_that_fit(answer: Identification) -> list[str]:
+    """Return structure types with another cell that would explain the rings."""
+    return [
+        f"{match.type_name} (as in {phase_text(match.like)}) with a = {match.a_A:.4f} "
+        f"± {match.a_sigma_A:.4f} Å, probability {probability_text(match.probability)}"
+        for match in answer.type_matches
+    ]
 
 
 def remarks(answer: Identification) -> list[str]:
@@ -280,9 +291,13 @@ def remarks(answer: Identification) -> list[str]:
     return list(dict.fromkeys([*common, *(told for told, plain in own if plain not in slips)]))
 
 
-def cautions(answer: Identification) -> list[str]:
-    """Return cautions on the phases that this text names, each with the phases it is about."""
-    named = [part.phase for hypothesis in answer.hypotheses for part in hypothesis.phases]
+def cautions(answer: Identification, answers: int | None = None) -> list[str]:
+    """Return cautions on the phases that this text names, each with the phases it is about.
+
+    Those of the first `answers` alone, where that is given.
+    """
+    told_of = answer.hypotheses[:answers]
+    named = [part.phase for hypothesis in told_of for part in hypothesis.phases]
     for part in answer.hypotheses[0].phases if answer.hypotheses else ():
         named += part.indistinguishable[:SHOWN_ALIKE]
     told = []

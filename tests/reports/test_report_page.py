@@ -16,10 +16,11 @@ import numpy as np
 
 import phaseid
 from phaseid.crystal.crystal import Finding
-from phaseid.matching.identification import Identification, Unexplained
+from phaseid.matching.identification import Identification, PhaseAnswer, Unexplained
 from phaseid.reports.json import dumps, identification_dict
 from phaseid.reports.page import LARGEST_BYTES, Provenance, page
 from phaseid.reports.page_compare import differences
+from phaseid.reports.page_html import prose
 from phaseid.reports.text import STANDING
 
 PROVENANCE = Provenance(
@@ -168,6 +169,37 @@ def test_pictures_and_tables_have_words_for_those_who_do_not_see_them(
     headings = [int(tag[1]) for tag, _ in elements if re.fullmatch(r"h\d", tag)]
     assert headings[0] == 1
     assert all(after <= before + 1 for before, after in pairwise(headings))
+
+
+def test_what_is_dangerous_is_told_at_the_top_and_once(answer: Identification) -> None:
+    text = _Reader(page(answer, PROVENANCE)).text
+    assert text.count("Fine powders: avoid dust") == 1
+    assert text.index("Safety periclase (MgO): Fine powders") < text.index("The answers; the bar")
+    silver = replace(answer.hypotheses[1].phases[0].phase, cautions=("Stains the skin.",))
+    other = replace(answer.hypotheses[1], phases=(PhaseAnswer(silver, 1.0, None),))
+    text = _Reader(page(replace(answer, hypotheses=(answer.hypotheses[0], other)), PROVENANCE)).text
+    assert text.index("Stains the skin.") > text.index("Remarks")
+    text = _Reader(page(replace(answer, verdict="no-match"), PROVENANCE)).text
+    assert text.index("Fine powders: avoid dust") > text.index("Remarks")
+
+
+def test_a_symbol_and_a_value_stay_on_their_line() -> None:
+    assert prose("fluorite Fm-3m, x") == 'fluorite <span class="whole">Fm-3m,</span> x'
+    assert prose("Al a = 4.05 ± 0.01 Å, c") == 'Al <span class="whole">a = 4.05 ± 0.01 Å,</span> c'
+    assert prose("scale 1.00 ± 0.01") == 'scale <span class="whole">1.00 ± 0.01</span>'
+    assert prose("12 rings of 13, 0.1 mm") == "12 rings of 13, 0.1 mm"
+    assert prose("<b> well-known-7 ") == "&lt;b&gt; well-known-7"
+
+
+def test_rings_of_several_patterns_are_told_pattern_by_pattern(answer: Identification) -> None:
+    two = replace(answer, patterns=answer.patterns * 2)
+    best, other = answer.hypotheses
+    more = tuple(replace(a, pattern=1) for a in best.assignments)
+    best = replace(best, assignments=(*best.assignments, *more))
+    assert differences(two, best, other)[0] == (
+        "Answer 1 explains rings 1 (2.1119 Å), 3 (2.0308 Å), 4 (1.4360 Å) of pattern 1; "
+        "1 (2.1119 Å), 2 (2.3450 Å), 3 (2.0308 Å) of pattern 2 and 1 more, answer 2 does not."
+    )
 
 
 def test_no_answer_gives_a_page_too(answer: Identification) -> None:

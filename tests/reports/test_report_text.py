@@ -49,7 +49,8 @@ def test_the_parts_come_in_order(answer: Identification) -> None:
         "Why: ring by ring",
         "What speaks against it",
         "These rings cannot tell it from:",
-        "What would separate them:",
+        "silver (Ag) Fm-3m, a = 4.0862 Å; COD 0000001, ag.cif",
+        "To tell them apart: calibrate the camera constant to 0.4 %",
         "Remarks",
         "Safety",
         "A ring match is evidence",
@@ -168,6 +169,17 @@ def test_a_structure_type_is_offered(answer: Identification) -> None:
     assert "rock salt (as in aluminium (Al)) with a = 4.4400 ± 0.0100 Å" in as_text(found)
 
 
+def test_without_a_match_the_structure_type_comes_before_the_answers(
+    answer: Identification,
+) -> None:
+    like = answer.hypotheses[0].phases[0].phase
+    found = replace(answer, type_matches=(TypeMatch("rock salt", like, 4.44, 0.01, 0.9),))
+    none = as_text(replace(found, verdict="no-match"))
+    assert none.index("Structure types that would fit") < none.index("Alternatives")
+    some = as_text(found)
+    assert some.index("Structure types that would fit") > some.index("Alternatives")
+
+
 def test_a_caution_says_whom_it_is_about(answer: Identification) -> None:
     assert "\n  periclase (MgO): Fine powders: avoid dust" in as_text(answer)
 
@@ -206,7 +218,7 @@ def test_a_long_group_is_cut_short(answer: Identification) -> None:
     text = as_text(replace(answer, hypotheses=(best,)))
     assert "one of 50 others that these rings allow as well, such as silver (Ag)" in _plain(text)
     assert "and 42 more; --json lists them all" in text
-    assert text.count("silver (Ag), Fm-3m") == 8
+    assert text.count("silver (Ag) Fm-3m") == 8
     best = replace(best, phases=(replace(part, separators=part.separators * 50),))
     best = replace(best, assignments=best.assignments[1:2], missing=(), unexplained=())
     left = tuple(Unexplained(0, ring) for ring in (0, 2, 3, 4))
