@@ -75,7 +75,10 @@ def measure(
     phaseid measure on_gold.tif --standard Au --probe "electron 200 kV" -o rings.csv
     """
     from phaseid.reports.measuring import measurement_dict, measurement_text
+    from phaseid.reports.picture_file import check_picture_path
 
+    if plot is not None:
+        check_picture_path(plot)
     found = find_rings(
         file,
         probe=probe,

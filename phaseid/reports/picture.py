@@ -60,7 +60,7 @@ class Text:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Shade:
-    """Half of a photograph: `ink` (rows, columns) uint8, 0 the bare ground, 255 full ink.
+    """A photograph or half of one: `ink` (rows, columns) uint8, 0 the bare ground, 255 full ink.
 
     It fills the box at (x, y), of which only what lies within `radius` of (centre_x, centre_y) is
     shown.

@@ -51,12 +51,25 @@ def half_plate(
 
 def half_ink(grey: NDArray[np.uint8], side: Literal["left", "right"]) -> NDArray[np.uint8]:
     """One half (2w, w) of a square picture (n, n), in few levels: grain is not worth its bytes."""
-    from PIL import Image
-
     size = len(grey)
     columns = min(MOST_COLUMNS, size // 2)
     box = (0, 0, size / 2, size) if side == "left" else (size / 2, 0, size, size)
-    half = Image.fromarray(grey).resize((columns, 2 * columns), Image.Resampling.BOX, box=box)
+    return _ink(grey, (columns, 2 * columns), box)
+
+
+def whole_ink(grey: NDArray[np.uint8]) -> NDArray[np.uint8]:
+    """All of a square picture, as `half_ink`."""
+    size = len(grey)
+    columns = min(2 * MOST_COLUMNS, size)
+    return _ink(grey, (columns, columns), (0, 0, size, size))
+
+
+def _ink(
+    grey: NDArray[np.uint8], size: tuple[int, int], box: tuple[float, float, float, float]
+) -> NDArray[np.uint8]:
+    from PIL import Image
+
+    part = Image.fromarray(grey).resize(size, Image.Resampling.BOX, box=box)
     step = 255 / (LEVELS - 1)
-    levels = np.rint(np.asarray(half, dtype=np.float64) / step) * step
+    levels = np.rint(np.asarray(part, dtype=np.float64) / step) * step
     return levels.astype(np.uint8)

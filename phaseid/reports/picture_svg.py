@@ -21,14 +21,14 @@ class Store:
     """Images that several pictures of a page show: held once, under a name."""
 
     def __init__(self) -> None:
-        self._images: dict[bytes, bytes] = {}  # PNG by ink: encoding takes a while
+        self._images: dict[bytes, tuple[bytes, float]] = {}  # PNG and height / width, by ink
         self._cuts = 0
 
     def image(self, shade: Shade) -> str:
         """The name of an image; the same one always the same."""
         ink = shade.ink.tobytes()
         if ink not in self._images:
-            self._images[ink] = _shade_png(shade)
+            self._images[ink] = _shade_png(shade), shade.height / shade.width
         return f"image-{list(self._images).index(ink) + 1}"
 
     def cut(self) -> str:
@@ -37,11 +37,11 @@ class Store:
         return f"cut-{self._cuts}"
 
     def definitions(self) -> str:
-        """All images, each one unit wide and two high; nothing where there are none."""
+        """All images, each one unit wide; nothing where there are none."""
         images = "".join(
-            f'<image id="image-{number}" width="1" height="2" preserveAspectRatio="none" '
+            f'<image id="image-{number}" width="1" height="{ratio:g}" preserveAspectRatio="none" '
             f'href="data:image/png;base64,{base64.b64encode(png).decode()}"/>'
-            for number, png in enumerate(self._images.values(), start=1)
+            for number, (png, ratio) in enumerate(self._images.values(), start=1)
         )
         return f"<defs>{images}</defs>" if images else ""
 

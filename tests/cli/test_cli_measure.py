@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import xml.etree.ElementTree as ET
 
 import numpy as np
 import pytest
@@ -132,7 +133,10 @@ def test_one_image_of_several(phaseid, tmp_path) -> None:
 def test_the_picture_of_what_was_found(phaseid, scan, tmp_path) -> None:
     path = tmp_path / "found.svg"
     assert phaseid("measure", str(scan), "--plot", str(path)).code == 0
-    assert path.read_text(encoding="utf-8").count("<path") > 20
-    done = phaseid("measure", str(scan), "--plot", str(tmp_path / "found.txt"))
+    words = [text.text for text in ET.parse(path).iter("{http://www.w3.org/2000/svg}text")]
+    assert {"1", "2", "3", "2θ in degrees", "background"} <= set(words)
+    rings = tmp_path / "rings.csv"
+    done = phaseid("measure", str(scan), "--plot", str(tmp_path / "a.txt"), "-o", str(rings))
     assert done.code == 2
     assert ".svg" in done.err
+    assert not rings.exists()

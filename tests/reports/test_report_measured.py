@@ -19,7 +19,8 @@ from numpy.typing import NDArray
 from phaseid.crystal.lines import Lines
 from phaseid.library import Library
 from phaseid.matching.identification import Identification
-from phaseid.reports.picture import Group, Line, Picture, Shade
+from phaseid.reports.measuring_picture import STEPS, measurement_picture
+from phaseid.reports.picture import Arc, Group, Line, Picture, Shade, Text
 from phaseid.reports.picture_axis import axis_for
 from phaseid.reports.picture_disc import CENTRE_X, CENTRE_Y, RADIUS, disc, disc_of_two
 from phaseid.reports.picture_paper import pdf
@@ -28,6 +29,7 @@ from phaseid.reports.picture_scene import scene
 from phaseid.reports.picture_sticks import BASE, UP_TOP, sticks
 from phaseid.reports.picture_svg import Store, svg, svg_file
 from phaseid.reports.picture_weak import weak_lines
+from phaseid.rings.measuring import Disc, MeasuredRing, Measurement
 
 OnImage = Callable[..., Identification]
 
@@ -294,3 +296,81 @@ def test_two_patterns_of_one_probe_are_told_apart_by_title(answer: Identificatio
     )
     assert "Foil A" in words
     assert "Foil B" in words
+
+
+def _measurement(with_disc: bool = True) -> Measurement:
+    """Two peaks over a falling background; on the plate, two rings at 40 and 80 px."""
+    x = np.arange(10.0, 100.0, 0.01)
+    background = 20.0 + 200.0 * np.exp(-x / 10)
+    mean = background + 500 * np.exp(-(((x - 40) / 2) ** 2)) + 90 * np.exp(-(((x - 80) / 2) ** 2))
+    median = mean if not with_disc else mean + 0.5
+    steps = np.arange(201) - 100.0
+    radius = np.hypot(*np.meshgrid(steps, steps))
+    grey = 255 * (np.exp(-(((radius - 40) / 2) ** 2)) + np.exp(-(((radius - 80) / 2) ** 2)))
+    image = Disc(np.clip(grey, 0, 255).astype(np.uint8), np.ones((201, 201), dtype=bool), 1.0)
+    rings = tuple(MeasuredRing(at, 0.01, 3.0, 0.1, 100.0, 1.0) for at in (40.0, 80.0))
+    return Measurement(
+        source="some/plate.tif",
+        column="radius_px" if with_disc else "two_theta_deg",
+        rings=rings,
+        curve=np.stack([x, mean, median, background], axis=1),
+        limit=1.0,
+        disc=image if with_disc else None,
+    )
+
+
+def test_rings_found_are_drawn_on_the_rings_of_the_plate() -> None:
+    picture = measurement_picture(_measurement())
+    plain = replace(picture, shapes=tuple(s for s in picture.shapes if not isinstance(s, Group)))
+    arcs = [s.shapes[0] for s in picture.shapes if isinstance(s, Group)][:2]
+    grey = _grey(plain)
+    for arc in arcs:
+        assert isinstance(arc, Arc)
+        for turn in (-50.0, 25.0, 50.0):
+            x = arc.x + arc.radius * math.cos(math.radians(turn))
+            y = arc.y - arc.radius * math.sin(math.radians(turn))
+            assert grey[round(y * DOTS), round(x * DOTS)] < 120
+            assert grey[round(y * DOTS), round((x - 24) * DOTS)] > 230
+    assert arcs[1].radius == pytest.approx(2 * arcs[0].radius)
+
+
+def _heights(picture: Picture) -> dict[float, float]:
+    """Where the numbers beside the axis of counts stand."""
+    return {
+        float(shape.words): shape.y - 4
+        for shape in picture.shapes
+        if isinstance(shape, Text) and shape.anchor == "end" and shape.words.isdigit()
+    }
+
+
+def test_counts_stand_on_a_logarithmic_axis() -> None:
+    picture = measurement_picture(_measurement(with_disc=False))
+    heights = _heights(picture)
+    assert heights[20.0] - heights[200.0] == pytest.approx(heights[50.0] - heights[500.0])
+    assert heights[20.0] - heights[50.0] == pytest.approx(heights[200.0] - heights[500.0])
+    words = [shape.words for shape in picture.shapes if isinstance(shape, Text)]
+    assert {"plate.tif", "2θ in degrees", "measured", "background"} <= set(words)
+    assert "median along the ring" not in words
+    numbers = [s.shapes[1] for s in picture.shapes if isinstance(s, Group) and len(s.shapes) == 2]
+    assert [n.words for n in numbers if isinstance(n, Text)] == ["1", "2"]
+
+
+def test_a_long_profile_is_drawn_in_few_points_and_keeps_its_peaks() -> None:
+    found = _measurement(with_disc=False)
+    picture = measurement_picture(found)
+    lines = [s for s in picture.shapes if isinstance(s, Line) and s.role == "ink"]
+    mean = max(lines, key=lambda line: len(line.points))
+    assert len(found.curve) > 8000
+    assert 2 * STEPS + 2 >= len(mean.points) > STEPS
+    heights = _heights(picture)
+    per_fold = (heights[20.0] - heights[200.0]) / math.log(10)
+    highest = heights[200.0] - per_fold * math.log(found.curve[:, 1].max() / 200.0)
+    assert min(y for _, y in mean.points) == pytest.approx(highest, abs=0.01)
+
+
+def test_a_curve_of_nothing_is_drawn_too() -> None:
+    empty = replace(_measurement(with_disc=False), rings=())
+    curve = empty.curve.copy()
+    curve[:, 1:] = 0.0
+    curve[3, 1] = np.nan
+    assert svg_file(measurement_picture(replace(empty, curve=curve))).startswith("<?xml")
