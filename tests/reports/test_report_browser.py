@@ -122,8 +122,11 @@ class _Browser:
 
     def key(self, name: str) -> None:
         code = {"ArrowDown": 40, "Enter": 13, "Escape": 27}[name]
-        for kind in ("keyDown", "keyUp"):
-            self.ask("Input.dispatchKeyEvent", type=kind, key=name, windowsVirtualKeyCode=code)
+        text = {"text": "\r"} if name == "Enter" else {}
+        for kind, more in (("keyDown", text), ("keyUp", {})):
+            self.ask(
+                "Input.dispatchKeyEvent", type=kind, key=name, windowsVirtualKeyCode=code, **more
+            )
 
     def size(self, width: int, height: int) -> None:
         self.ask(
@@ -274,6 +277,22 @@ def test_everything_is_there_with_scripts_off(
 def test_the_page_is_no_wider_than_the_screen(opened: _Browser, width: int) -> None:
     opened.size(width, 800)
     assert opened.run("document.documentElement.scrollWidth") <= width
+
+
+def test_other_entries_unfold(browser: _Browser, answer: Identification, tmp_path: Path) -> None:
+    best = answer.hypotheses[0]
+    other = replace(best.phases[0].phase, phase_id="Al-zzzz", name="another determination " * 4)
+    part = replace(best.phases[0], entries=(other,) * 3)
+    many = replace(answer, hypotheses=(replace(best, phases=(part, best.phases[1])),))
+    browser.size(390, 800)
+    _open(browser, many, tmp_path)
+    shown = "document.querySelector('details table').checkVisibility()"
+    assert browser.run(shown) is False
+    browser.run("document.querySelector('summary').focus()")
+    browser.key("Enter")
+    assert browser.run(shown) is True
+    assert browser.run("document.documentElement.scrollWidth") <= 390
+    assert _complaints(browser) == []
 
 
 def test_words_in_pictures_stay_readable_on_a_phone(opened: _Browser) -> None:
