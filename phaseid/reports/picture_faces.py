@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 from unicodedata import normalize
 
+from phaseid.errors import InputError
 from phaseid.reports.plain import safe
 
 if TYPE_CHECKING:
@@ -47,6 +48,7 @@ def runs(words: str, bold: bool, usable: Usable) -> list[tuple[Path, str]]:
     """Words in pieces, each with a file of a face that has its letters and is `usable`.
 
     A letter that no face has becomes a plainer one of the same meaning (NFKC), else `[U+9244]`.
+    Raises InputError where there is no face at all.
     """
     own = _face(" ", bold, usable)
     pieces: list[tuple[Path, str]] = []
@@ -55,7 +57,10 @@ def runs(words: str, bold: bool, usable: Usable) -> list[tuple[Path, str]]:
         text = "".join(letters)
         file, text = (own, _spelt(text)) if found is None else (found, text)
         if file is None:
-            raise OSError("no face for the words of a picture was found")
+            raise InputError(
+                "no face was found for the words of the picture",
+                remedy="Install phaseid's dependencies anew, or write an .svg.",
+            )
         if pieces and pieces[-1][0] == file:
             text = pieces.pop()[1] + text
         pieces.append((file, text))

@@ -74,11 +74,11 @@ def _describe(canvas: Any, title: str) -> None:
 def _embeddable(file: Path) -> bool:
     """Whether a face can be put into a PDF; made known to reportlab by its path."""
     from reportlab.pdfbase.pdfmetrics import registerFont
-    from reportlab.pdfbase.ttfonts import TTFError, TTFont
+    from reportlab.pdfbase.ttfonts import TTFont
 
     try:
         registerFont(TTFont(str(file), str(file)))
-    except (TTFError, OSError):  # outlines of another kind, or not to be embedded
+    except Exception:  # outlines of another kind, not to be embedded, or a damaged file
         return False
     return True
 

@@ -22,7 +22,7 @@ from numpy.typing import NDArray
 
 from phaseid.errors import InputError
 from phaseid.matching.identification import Identification
-from phaseid.reports import picture_faces
+from phaseid.reports import picture_faces, picture_paper
 from phaseid.reports.picture import Arc, Line, Picture, Room, Text, rectangle, tick_text, ticks
 from phaseid.reports.picture_axis import axis_for, axis_name, common_axis
 from phaseid.reports.picture_disc import RADIUS, disc, disc_of_two
@@ -342,6 +342,19 @@ def test_a_picture_is_drawn_without_that_face(other_faces: pytest.MonkeyPatch) -
     other_faces.setattr(picture_faces, "_FAMILY", ("Vera.ttf",))
     assert _set_in("d in Å") == [("Vera.ttf", "d in Å")]
     assert _grey(Picture(80.0, 30.0, "a test", (Text(5.0, 20.0, "d in Å"),))).min() < 100
+
+
+def test_without_any_face_an_error_says_so(other_faces: pytest.MonkeyPatch) -> None:
+    other_faces.setattr(picture_faces, "_FAMILY", ())
+    other_faces.setattr(picture_faces, "SYSTEM_FACES", ())
+    with pytest.raises(InputError, match="no face"):
+        _set_in("d")
+
+
+def test_a_damaged_face_is_passed_over(tmp_path: Path) -> None:
+    broken = tmp_path / "broken.ttf"
+    broken.write_bytes(b"\0\1\0\0" + bytes(range(256)))
+    assert not picture_paper._embeddable(broken)
 
 
 # U+2323 smile is in STIX General and not in DejaVu Sans; no face of either has U+9244, iron
