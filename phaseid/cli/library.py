@@ -29,6 +29,17 @@ app.command("export")(export)
 app.command("check")(check)
 app.command("remove")(remove)
 
+
+def _path(text: str) -> Path:
+    """A path as given; an empty one, often a variable that is not set, is not this folder."""
+    if not text.strip():
+        raise InputError(
+            "the name of a file or folder to add is empty",
+            remedy="Name one; the folder you are in is a dot: phaseid library add .",
+        )
+    return Path(text)
+
+
 AddTo = Annotated[
     Path | None,
     typer.Option(
@@ -45,7 +56,7 @@ def add(
     paths: Annotated[
         list[Path] | None,
         typer.Argument(
-            metavar="PATH...", readable=False, help="CIF files, folders, .zip and .tar archives."
+            metavar="PATH...", parser=_path, help="CIF files, folders, .zip and .tar archives."
         ),
     ] = None,
     library: AddTo = None,

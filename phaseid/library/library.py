@@ -217,13 +217,19 @@ class Library:
         """
         columns = (
             "phase_id, a_A, b_A, c_A, alpha_deg, beta_deg, gamma_deg, volume_A3, complete_to_A, "
-            "floor, quality, elements, data FROM phase JOIN lines ON lines.phase = phase.id"
+            "floor, quality, elements, data"
         )
+        joined = "FROM phase JOIN lines ON lines.phase = phase.id"
         if phases is None:
-            rows = self._rows(f"SELECT {columns} ORDER BY phase.id")
+            rows = self._rows(f"SELECT {columns} {joined} ORDER BY phase.id")
         else:
-            one = f"SELECT {columns} WHERE phase.id = ?"
-            rows = [tuple(self._one(one, int(row))) for row in phases]
+            from phaseid.library.groups import LISTED, listed
+
+            wanted = f"SELECT phase.id, {columns} {joined} WHERE phase.id IN {LISTED}"
+            held = {row: rest for row, *rest in self._rows(wanted, listed(phases))}
+            if missing := [row for row in phases if row not in held]:
+                raise self._damaged(f"phase {missing[0]} is missing")
+            rows = [tuple(held[row]) for row in phases]
         with self._told():
             return line_table(kind, rows)
 
@@ -249,11 +255,14 @@ class Library:
         `workers` processes share the work, or an `executor` of yours (of concurrent.futures, or a
         cluster's), which gets 2 × `workers` chunks of files at a time and stays open; the result is
         the same. Raises LibraryError where the library cannot be written, InputError where the
-        workers fail as a whole.
+        workers fail as a whole and for an empty name.
         """
         from phaseid.library.adding import add_paths
 
-        given = [Path(path) for path in paths]
+        named = list(paths)
+        if "" in named:
+            raise InputError("an empty name names nothing to add", remedy="This folder is '.'.")
+        given = [Path(path) for path in named]
         with self.writing() as conn:
             return add_paths(conn, given, progress, workers=workers, executor=executor)
 
@@ -312,7 +321,8 @@ class Library:
     def _one(self, sql: str, *values: object) -> Sequence[Any]:
         rows = self._rows(sql, *values)
         if not rows:
-            raise LibraryError(
-                f"{self.path}: the library is damaged (a row is missing). {connection.MENDING}"
-            )
+            raise self._damaged("a row is missing")
         return rows[0]
+
+    def _damaged(self, what: str) -> LibraryError:
+        return LibraryError(f"{self.path}: the library is damaged ({what}). {connection.MENDING}")

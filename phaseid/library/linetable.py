@@ -79,17 +79,15 @@ def line_table(kind: Kind, rows: Iterable[tuple[Any, ...]]) -> LineTable:
     """
     import numpy as np
 
-    from phaseid.crystal.metric import inverse_metric
-
     held = list(rows)
     offsets, hkl, multiplicity, strength = unpack_many(kind, [row[12] for row in held])
-    metric = np.array([inverse_metric(row[1:7]) for row in held]).reshape(-1, 9)
+    metric = _inverse_metrics([row[1:7] for row in held])
     numbers = np.array([row[7:11] for row in held], dtype=np.float64).reshape(-1, 4)
     owner = np.repeat(np.arange(len(held)), np.diff(offsets))
     inverse_d2 = np.zeros(len(owner))
-    for i, j, times in ((0, 0, 1), (1, 1, 1), (2, 2, 1), (1, 2, 2), (0, 2, 2), (0, 1, 2)):
+    for k, (i, j) in enumerate(((0, 0), (1, 1), (2, 2), (1, 2), (0, 2), (0, 1))):
         product = hkl[:, i].astype(np.float64) * hkl[:, j]
-        inverse_d2 += times * product * metric[owner, 3 * i + j]
+        inverse_d2 += product * metric[k, owner]
     return LineTable(
         phase_ids=tuple(row[0] for row in held),
         offsets=offsets,
@@ -103,3 +101,22 @@ def line_table(kind: Kind, rows: Iterable[tuple[Any, ...]]) -> LineTable:
         quality=numbers[:, 3].copy(),
         elements_mask=elements_masks([row[11].split() for row in held]),
     )
+
+
+def _inverse_metrics(cells: Sequence[Sequence[float]]) -> NDArray[np.float64]:
+    """Return what h², k², l², kl, hl, hk are multiplied by to give 1/d² (6, p); Å and degrees."""
+    import numpy as np
+
+    a, b, c, *angles = np.array(cells, dtype=np.float64).reshape(-1, 6).T
+    bc, ac, ab = np.cos(np.radians(angles))
+    v2 = 1 - bc * bc - ac * ac - ab * ab + 2 * bc * ac * ab  # of the cell with edges of 1
+    rows = (
+        (1 - bc * bc) / (a * a),
+        (1 - ac * ac) / (b * b),
+        (1 - ab * ab) / (c * c),
+        2 * (ab * ac - bc) / (b * c),
+        2 * (ab * bc - ac) / (a * c),
+        2 * (ac * bc - ab) / (a * b),
+    )
+    factors: NDArray[np.float64] = np.stack(rows) / v2
+    return factors

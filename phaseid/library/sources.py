@@ -232,7 +232,7 @@ def _member_of(path: Path, member: str) -> tuple[str, str]:
 
 
 def _rejected(path: Path, code: str, reason: str) -> Rejected:
-    return Rejected(_plain(_absolute(path)), _plain(path.name), "", code, reason)
+    return Rejected(_plain(_absolute(path)), _plain(path.name or str(path)), "", code, reason)
 
 
 def _absolute(path: Path) -> Path:

@@ -7,7 +7,7 @@ phases allowed, so that probabilities do not depend on how many were looked at c
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from math import log
 
@@ -21,12 +21,13 @@ from phaseid.library.strongest import StrongLines
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.crowd import crowd
 from phaseid.matching.element_masks import admitted, words
+from phaseid.matching.leftovers import judged_alone, judged_beside
 from phaseid.matching.lineset import gather
 from phaseid.matching.model import Model
 from phaseid.matching.patterns import Floats, Pattern, prepare_all
 from phaseid.matching.search import Judged, Search
 from phaseid.matching.settings import SEARCHED_WHOLE
-from phaseid.matching.shortlist import Indices, shortlist
+from phaseid.matching.shortlist import Indices, Pairs, shortlist
 from phaseid.probes.probe import Kind
 from phaseid.rings.ringlist import RingList
 
@@ -91,12 +92,16 @@ def field_of(
         tables = _loaded(library, kinds, index.row[allowed[some]])
         return Field(tables, np.arange(len(some)), log_prior[some], rarity, rates)
 
-    def judge(some: Indices, most: int) -> list[Judged]:
-        search = searched(prepared, running(some), chemistry, most)
-        return [
-            replace(judged, members=tuple(int(some[i]) for i in search.plain(judged.members)))
-            for judged in search.ranked()
-        ]
+    def judge(some: Indices, pairs: Pairs | None = None) -> list[Judged]:
+        search = _search_of(prepared, running(some), chemistry, 1 if pairs is None else 2)
+        if pairs is None:
+            found = judged_alone(search)
+        else:
+            number = {int(phase): i for i, phase in enumerate(some)}
+            bases = [_renumbered(base, number) for base, _ in pairs]
+            further = [[number[int(phase)] for phase in others] for _, others in pairs]
+            found = judged_beside(search, bases, further)
+        return [_renumbered(judged, some) for judged in found]
 
     if exhaustive or len(allowed) <= SEARCHED_WHOLE:
         return running(np.arange(len(allowed)))
@@ -108,6 +113,15 @@ def searched(
     patterns: Sequence[Pattern], field: Field, chemistry: Chemistry, max_phases: int
 ) -> Search:
     """Search the phases of a field."""
+    search = _search_of(patterns, field, chemistry, max_phases)
+    search.run()
+    return search
+
+
+def _search_of(
+    patterns: Sequence[Pattern], field: Field, chemistry: Chemistry, max_phases: int
+) -> Search:
+    """A search over the phases of a field, before it begins."""
     pairs = zip(field.tables, patterns, strict=True)
     model = Model(
         patterns=tuple(patterns),
@@ -116,7 +130,7 @@ def searched(
     )
     elements = field.tables[0].elements
     sets = [elements[i] for i in field.phases]
-    search = Search(
+    return Search(
         model,
         log_prior=field.log_prior,
         max_phases=min(max_phases, len(field.phases)),
@@ -125,8 +139,11 @@ def searched(
         accepts=lambda members: chemistry.satisfied_by([sets[i] for i in members]),
         rarity=field.rarity,
     )
-    search.run()
-    return search
+
+
+def _renumbered(judged: Judged, number: Mapping[int, int] | Indices) -> Judged:
+    """The same set with its members called otherwise."""
+    return replace(judged, members=tuple(int(number[i]) for i in judged.members))
 
 
 def _loaded(library: Library, kinds: Sequence[Kind], rows: Indices) -> tuple[LineTable, ...]:

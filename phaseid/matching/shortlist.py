@@ -9,15 +9,25 @@ what is not listed is weighed by them.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 from math import log
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
-from phaseid.library.strongest import StrongLines
-from phaseid.matching.glance import PER_NAT, Glance, Share, glance_at, make_glance
+from phaseid.library.strongest import PLACES, StrongLines
+from phaseid.matching.glance import (
+    PER_NAT,
+    Glance,
+    Scale,
+    Share,
+    find_places,
+    glance_at,
+    make_glance,
+    make_scale,
+)
 from phaseid.matching.patterns import Floats, Pattern
 from phaseid.matching.search import Judged
 from phaseid.matching.settings import RELATIVE_STRAIN, STRAIN
@@ -27,15 +37,22 @@ PHASES_SEARCHED = 1500
 
 Indices = NDArray[np.int64]
 Scores = NDArray[np.float32]
-Judge = Callable[[Indices, int], list[Judged]]
-"""Search these of the allowed phases for sets of up to so many; every set, the best first, its
-members numbered as the allowed phases are."""
+Pairs = Sequence[tuple[Judged, Indices]]
+"""Sets of one phase, each with further phases to try beside it."""
+
+
+class Judge(Protocol):
+    """Judges phases (numbered as the allowed ones are) by the likelihood, the best first."""
+
+    def __call__(self, some: Indices, pairs: Pairs | None = None, /) -> list[Judged]:
+        """Sets of each phase by itself, or the `pairs`, whose phases are all among `some`."""
+
 
 _ALONE = (Share(0.0, True), Share(log(0.7), True))
 _SHARES = (*_ALONE, *(Share(log(s), False) for s in (1.0, 0.6, 0.35, 0.2, 0.12, 0.06)))
 _OF_THE_REST = ((0.0, True), (0.0, False), (0.8, False), (-0.6, False))
-_PLACES, _PLACES_NEAR, _PLACES_OF_THE_REST = 16, 24, 12
-"""Lines looked at of every phase, of those that may be near, of those for the rest."""
+_PLACES, _PLACES_OF_THE_REST = 16, 12
+"""Lines looked at of every phase, and of those for the rest."""
 _RELATIVE_PLACES = 8
 _RELATIVE_BLUR = 0.004
 _RELATIVES = 48
@@ -45,9 +62,9 @@ _EACH_OF_THE_REST = (120, 60, 30)
 """The same for what the best set leaves, the second best, and each of the others."""
 _BASES = {1: 8, 2: 4}
 """Sets of one and of two phases whose leftovers are looked at."""
-_WHOLE, _LOOKS = (2, 1), 400_000
-"""The whole library is looked through for what the best two phases and the best pair leave, and for
-more of these while the phases looked at are fewer than that; for the others what may be near."""
+_WHOLE, _LOOKS = 4, 400_000
+"""The whole library is looked through for what the best four sets leave, and for more while the
+phases looked at are fewer than that; for the others what may be near."""
 _SETS_COMPARED = 40
 _JUDGED = 150
 """Phases that the likelihood judges before the library is looked through again."""
@@ -59,24 +76,42 @@ _NEAR = 1500
 
 @dataclass(slots=True)
 class _Chooser:
-    """The allowed phases of a library, and which of them were chosen, in the order of choosing."""
+    """The allowed phases of a library, and which of them were chosen, in the order of choosing.
+
+    `places` say where their lines stand on the `scales`, one of each for every pattern.
+    """
 
     patterns: Sequence[Pattern]
     strong: Sequence[StrongLines]
     allowed: NDArray[np.int64]
     log_prior: Floats
+    scales: Sequence[Scale]
+    places: list[NDArray[np.int64]] = field(init=False)
     chosen: dict[int, None] = field(default_factory=dict)
 
+    def __post_init__(self) -> None:
+        pairs = zip(self.strong, self.scales, strict=True)
+        self.places = [find_places(one, self.allowed, own, _PLACES) for one, own in pairs]
+
     def score(
-        self, glances: Sequence[Glance], places: int, among: NDArray[np.int64] | None = None
-    ) -> Scores:
-        """ln evidence (p, shares) of the allowed phases, or of those `among` them (indices)."""
-        phases = self.allowed if among is None else self.allowed[among]
-        prior = self.log_prior if among is None else self.log_prior[among]
-        total = np.repeat(prior[:, None].astype(np.float32), glances[0].worth.shape[2], axis=1)
-        for glance, strong in zip(glances, self.strong, strict=True):
-            total += glance_at(strong, phases, glance, places) / np.float32(PER_NAT)
-        return total
+        self, looks: Sequence[Sequence[Glance]], count: int, among: Indices | None = None
+    ) -> list[Scores]:
+        """ln evidence (p, shares) of the allowed phases, or of those `among` them (indices).
+
+        One for each of the `looks`, which hold a glance for every pattern; `count` lines are looked
+        at.
+        """
+        places = [own[:count] if among is None else own[:count, among] for own in self.places]
+        return scored(looks, places, self.scales, self._prior(among))
+
+    def score_closely(self, look: Sequence[Glance], among: Indices) -> Scores:
+        """The same by all lines that are stored."""
+        pairs = zip(self.strong, self.scales, strict=True)
+        places = [find_places(one, self.allowed[among], own, PLACES) for one, own in pairs]
+        return scored([look], places, self.scales, self._prior(among))[0]
+
+    def _prior(self, among: Indices | None) -> Floats:
+        return self.log_prior if among is None else self.log_prior[among]
 
     def take(self, phases: Iterable[int]) -> None:
         for phase in phases:
@@ -87,20 +122,41 @@ class _Chooser:
 
         Returns these phases, the likeliest first, one array for each of the sets.
         """
-        found = []
-        size = len(sets[0].members) if sets else 1
-        whole = max(_WHOLE[size - 1], _LOOKS // len(self.allowed))
-        for place, judged in enumerate(sets):
-            among = None if place < whole else near
-            rest = [
-                _glance_at_the_rest(pattern, judged, i) for i, pattern in enumerate(self.patterns)
+        looks = [
+            [
+                _glance_at_the_rest(pattern, scale, judged, i)
+                for i, (pattern, scale) in enumerate(zip(self.patterns, self.scales, strict=True))
             ]
+            for judged in sets
+        ]
+        whole = max(_WHOLE, _LOOKS // len(self.allowed))
+        scores = self.score(looks[:whole], _PLACES_OF_THE_REST) if sets else []
+        if looks[whole:]:
+            scores += self.score(looks[whole:], _PLACES_OF_THE_REST, near)
+        found = []
+        for place, score in enumerate(scores):
             each = _EACH_OF_THE_REST[min(place, len(_EACH_OF_THE_REST) - 1)]
-            ranks = ranked(self.score(rest, _PLACES_OF_THE_REST, among), each)
-            own = by_turns(ranks if among is None else among[ranks], each)
+            ranks = ranked(score, each)
+            own = by_turns(ranks if place < whole else near[ranks], each)
             self.take(own)
             found.append(own)
         return found
+
+
+def scored(
+    looks: Sequence[Sequence[Glance]],
+    places: Sequence[NDArray[np.int64]],
+    scales: Sequence[Scale],
+    log_prior: Floats,
+) -> list[Scores]:
+    """ln evidence (p, shares) for each of the looks; `places` and `scales` by pattern."""
+    total: list[Scores] = []
+    for i, (own, scale) in enumerate(zip(places, scales, strict=True)):
+        scores = glance_at(own, scale, [look[i] for look in looks])
+        parts = [score * np.float32(1 / PER_NAT) for score in scores]
+        total = [a + b for a, b in zip(total, parts, strict=True)] if total else parts
+    prior = log_prior[:, None].astype(np.float32)
+    return [score + prior for score in total]
 
 
 def shortlist(
@@ -116,34 +172,67 @@ def shortlist(
     `strong` are the library's strongest lines as each pattern's probe sees them, `allowed` indices
     into them, `log_prior` (p,) belongs to the allowed.
     """
-    chooser = _Chooser(patterns, strong, allowed, log_prior)
-    first_glances = [_first_glance(p, _SHARES, STRAIN) for p in patterns]
-    near = np.unique(ranked(chooser.score(first_glances, _PLACES), _NEAR))
-    ranks = near[ranked(chooser.score(first_glances, _PLACES_NEAR, near), _NEAR)]
+    scales = [make_scale(p, reach=_reach(p, STRAIN) + 4.5 * STRAIN) for p in patterns]
+    chooser = _Chooser(patterns, strong, allowed, log_prior, scales)
+    first_look = [
+        _first_glance(pattern, scale, _SHARES, STRAIN)
+        for pattern, scale in zip(patterns, scales, strict=True)
+    ]
+    near = np.unique(ranked(chooser.score([first_look], _PLACES)[0], _NEAR))
+    ranks = near[ranked(chooser.score_closely(first_look, near), _NEAR)]
     chooser.take(by_turns(ranks, _EACH))
-    wide = [_first_glance(p, _ALONE[:1], RELATIVE_STRAIN, _RELATIVE_BLUR) for p in patterns]
-    chooser.take(ranked(chooser.score(wide, _RELATIVE_PLACES), _RELATIVES)[:, 0])
+    chooser.take(_relatives(patterns, strong, allowed, log_prior))
     if max_phases > 1:
         first = by_turns(ranks, _JUDGED)[:_JUDGED]
-        bases = _leaving_other_rings(judge(first, 1), 1)[: _BASES[1]]
+        bases = _leaving_other_rings(judge(first), 1)[: _BASES[1]]
         further = chooser.explaining_the_rest(bases, near)
         if max_phases > 2 and bases:
-            pairs = [np.array([j.members[0] for j in bases]), *(own[:_PAIRED] for own in further)]
-            sets = _leaving_other_rings(judge(np.unique(np.concatenate(pairs)), 2), 2)
+            pairs = [(base, own[:_PAIRED]) for base, own in zip(bases, further, strict=True)]
+            some = [base.members for base in bases] + [own for _, own in pairs]
+            sets = _leaving_other_rings(judge(np.unique(np.concatenate(some)), pairs), 2)
             chooser.explaining_the_rest(sets[: _BASES[2]], near)
     chooser.take(by_turns(ranks, PHASES_SEARCHED))
     return np.sort(np.fromiter(chooser.chosen, np.int64)[:PHASES_SEARCHED])
 
 
+def _relatives(
+    patterns: Sequence[Pattern],
+    strong: Sequence[StrongLines],
+    allowed: Indices,
+    log_prior: Floats,
+) -> Indices:
+    """The likeliest phases, were their cells other than listed."""
+    scales = [
+        make_scale(p, reach=_reach(p, RELATIVE_STRAIN), blur=_RELATIVE_BLUR) for p in patterns
+    ]
+    places = [
+        find_places(one, allowed, scale, _RELATIVE_PLACES)
+        for one, scale in zip(strong, scales, strict=True)
+    ]
+    look = [
+        _first_glance(pattern, scale, _ALONE[:1], RELATIVE_STRAIN)
+        for pattern, scale in zip(patterns, scales, strict=True)
+    ]
+    return ranked(scored([look], places, scales, log_prior)[0], _RELATIVES)[:, 0]
+
+
 def _first_glance(
-    pattern: Pattern, shares: tuple[Share, ...], strain: float, blur: float = 0.0
+    pattern: Pattern, scale: Scale, shares: tuple[Share, ...], strain: float
 ) -> Glance:
-    spread = float(np.hypot(pattern.probe.scale_sigma, strain))
-    reach = max((3.5 if strain == STRAIN else 2.5) * spread, 0.004)
-    return make_glance(pattern, shares, spread=spread, reach=reach, blur=blur)
+    reach = _reach(pattern, strain)
+    return make_glance(pattern, scale, shares, spread=_spread(pattern, strain), reach=reach)
 
 
-def _glance_at_the_rest(pattern: Pattern, judged: Judged, number: int) -> Glance:
+def _spread(pattern: Pattern, strain: float) -> float:
+    """One-sigma of the common shift of a phase's lines: scale and strain together."""
+    return float(np.hypot(pattern.probe.scale_sigma, strain))
+
+
+def _reach(pattern: Pattern, strain: float) -> float:
+    return max((3.5 if strain == STRAIN else 2.5) * _spread(pattern, strain), 0.004)
+
+
+def _glance_at_the_rest(pattern: Pattern, scale: Scale, judged: Judged, number: int) -> Glance:
     """For what explains the rings that a set leaves, at the scale it was judged to have."""
     wanted = ~judged.claimed[number]
     known = wanted & np.isfinite(pattern.intensity_sd)
@@ -152,7 +241,7 @@ def _glance_at_the_rest(pattern: Pattern, judged: Judged, number: int) -> Glance
     spread = float(np.hypot(judged.scale_sd[number], 1.5 * STRAIN))
     centre = float(judged.scale[number])
     return make_glance(
-        pattern, shares, spread=spread, reach=3 * spread, centre=centre, wanted=wanted
+        pattern, scale, shares, spread=spread, reach=3 * spread, centre=centre, wanted=wanted
     )
 
 
@@ -169,9 +258,10 @@ def _leaving_other_rings(sets: Sequence[Judged], size: int) -> list[Judged]:
 def ranked(score: Scores, count: int) -> Indices:
     """Rows of the best `count` of each column, best first, (count, columns)."""
     count = min(count, len(score))
-    best = np.argpartition(-score, count - 1, axis=0)[:count]
-    order = np.argsort(-np.take_along_axis(score, best, axis=0), axis=0, kind="stable")
-    return np.take_along_axis(best, order, axis=0)
+    lost = np.ascontiguousarray(-score.T)
+    best = np.argpartition(lost, count - 1, axis=1)[:, :count]
+    order = np.argsort(np.take_along_axis(lost, best, axis=1), axis=1, kind="stable")
+    return np.take_along_axis(best, order, axis=1).T
 
 
 def by_turns(ranks: Indices, count: int) -> Indices:

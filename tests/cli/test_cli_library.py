@@ -77,6 +77,19 @@ def test_adding_nothing_is_an_error(phaseid: Command, tmp_path: Path) -> None:
     assert not (tmp_path / "l.sqlite").exists()
 
 
+@pytest.mark.parametrize("empty", ["", " "])
+def test_an_empty_name_is_not_this_folder(
+    phaseid: Command, tmp_path: Path, cif: Path, monkeypatch: pytest.MonkeyPatch, empty: str
+) -> None:
+    monkeypatch.chdir(cif.parent)
+    path = tmp_path / "new.sqlite"
+    done = phaseid("library", "add", empty, "--library", str(path))
+    assert done.code == 2
+    assert "the name of a file or folder to add is empty" in done.err
+    assert not path.exists()
+    assert "1 added" in phaseid("library", "add", ".", "--library", str(path)).out
+
+
 def test_the_starter_structures_can_be_added(
     phaseid: Command, mine: Path, starter_library: Library
 ) -> None:

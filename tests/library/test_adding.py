@@ -19,7 +19,7 @@ from typing import Any
 import pytest
 
 from phaseid.crystal.cif import read_cif
-from phaseid.errors import LibraryError
+from phaseid.errors import InputError, LibraryError
 from phaseid.library import Library, connection, open_default
 from phaseid.library.adding import suggested_workers
 from phaseid.library.entries import entry
@@ -377,3 +377,8 @@ def test_five_hundred_open_structures_go_in(tmp_path: Path) -> None:
         assert tally.rejected <= 5
         files = {phase.source.file for phase in library.phases()}
         assert "zeolites/LTN.cif" in files
+
+
+def test_an_empty_name_is_not_this_folder(library: Library) -> None:
+    with pytest.raises(InputError, match="an empty name"):
+        library.add([""])

@@ -148,18 +148,6 @@ def test_the_table_of_an_empty_library_is_empty(library: Library) -> None:
     assert table.elements == ()
 
 
-def test_six_hundred_phases_load_in_a_blink(starter_library: Library) -> None:
-    best = min(_load_time_s(starter_library) for _ in range(5))
-    # 15 ms for 600 phases on a quiet machine; four times that on a busy one
-    assert best < 0.060 * max(1.0, len(starter_library) / 600)
-
-
-def _load_time_s(library: Library) -> float:
-    start = time.perf_counter()
-    library.line_table("electron")
-    return time.perf_counter() - start
-
-
 def _damaged(path: Path) -> None:
     with Library.create(path) as library:
         library.add_crystals(islice(starter_crystals(), 20))

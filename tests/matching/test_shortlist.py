@@ -16,7 +16,7 @@ from phaseid.library import Library
 from phaseid.matching import field, near, shortlist
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.field import Field, field_of, rarity_of
-from phaseid.matching.glance import Share, glance_at, make_glance
+from phaseid.matching.glance import Share, find_places, glance_at, make_glance, make_scale
 from phaseid.matching.identification import Identification
 from phaseid.matching.identify import identify
 from phaseid.matching.near import near_lines
@@ -171,19 +171,23 @@ def test_a_glance_is_the_sum_over_lines_at_the_best_shift(starter_library: Libra
     pattern = prepare(published_rings("corundum"))
     strong = starter_library.strong_lines("x-ray")
     shares = (Share(0.0, True), Share(-1.0, False))
-    glance = make_glance(pattern, shares, spread=0.001, reach=0.004, centre=0.0005)
+    scale = make_scale(pattern, reach=0.006)
+    glance = make_glance(pattern, scale, shares, spread=0.001, reach=0.004, centre=0.0005)
+    other = make_glance(pattern, scale, shares[:1], spread=0.002, reach=0.003)
     places, phases = 7, np.array([2, 500, 901])
-    got = glance_at(strong, phases, glance, places)
+    found = find_places(strong, phases, scale, places)
+    got, beside = glance_at(found, scale, [glance, other])
+    np.testing.assert_array_equal(glance_at(found, scale, [other])[0], beside)
     cells = glance.worth.shape[1]
     for row, phase in enumerate(phases):
         lines = [
-            (int(code) // glance.width - glance.first, -int(level) / 32)
+            (int(code) // scale.width - scale.first, -int(level) / 32)
             for code, level in zip(strong.code[phase], strong.level[phase], strict=True)
             if level != 255
         ][:places]
         lines = [(min(max(cell, 0), cells - 1), value) for cell, value in lines]
-        shown = [(cell, value + glance.geometry[cell]) for cell, value in lines]
-        strongest = max((v for cell, v in shown if glance.inside[cell]), default=-np.inf)
+        shown = [(cell, value + round(32 * scale.geometry[cell]) / 32) for cell, value in lines]
+        strongest = max((v for cell, v in shown if scale.inside[cell]), default=-np.inf)
         best = np.full(len(shares), -np.inf)
         for shift, penalty in zip(glance.shifts, glance.penalty, strict=True):
             total = np.full(len(shares), -float(penalty))
@@ -197,10 +201,11 @@ def test_a_glance_is_the_sum_over_lines_at_the_best_shift(starter_library: Libra
 
 def test_a_line_that_should_show_and_does_not_speaks_against(starter_library: Library) -> None:
     pattern = prepare(published_rings("corundum"))
-    glance = make_glance(pattern, (Share(0.0, False),), spread=0.001, reach=0.004)
+    scale = make_scale(pattern, reach=0.004)
+    glance = make_glance(pattern, scale, (Share(0.0, False),), spread=0.001, reach=0.004)
     worth = glance.worth[..., 0]
-    at = int(np.log(2.085) * 1e4 + 1e4) // glance.width - glance.first  # 113 of corundum
-    beside = int(np.log(2.25) * 1e4 + 1e4) // glance.width - glance.first  # between its rings
+    at = int(np.log(2.085) * 1e4 + 1e4) // scale.width - scale.first  # 113 of corundum
+    beside = int(np.log(2.25) * 1e4 + 1e4) // scale.width - scale.first  # between its rings
     assert worth[0, at] > 64
     assert worth[0, beside] < -100
     assert not worth[-1].any()  # lines too weak to matter
