@@ -63,7 +63,7 @@ def _answers(conn: sqlite3.Connection, question: Question, most: int | None) -> 
         every = conn.execute(f"SELECT id FROM phase ORDER BY {ORDER} LIMIT ?", (limit,))
         return [row for (row,) in every]
     asked = conditions(conn, question)
-    fits = _fits(conn, question)
+    fits = _fits(conn, question, None if asked else most)
     if fits is None:
         rows = _by_conditions(conn, asked, most, question.edges_A)
     elif not asked:
@@ -76,11 +76,18 @@ def _answers(conn: sqlite3.Connection, question: Question, most: int | None) -> 
     return rows
 
 
-def _fits(conn: sqlite3.Connection, question: Question) -> dict[int, Match] | None:
-    """How the entries fit the texts of a question, by row; None where it has none."""
+def _fits(
+    conn: sqlite3.Connection, question: Question, most: int | None
+) -> dict[int, Match] | None:
+    """How the entries fit the texts of a question, by row; None where it has none.
+
+    With `most`, of very many entries that fit one text badly no more are told.
+    """
+    if sum(map(bool, (question.text, question.ids, question.formula, question.name))) > 1:
+        most = None
     asked: list[dict[int, Match]] = []
     if question.text:
-        asked.append(matches(conn, question.text))
+        asked.append(matches(conn, question.text, most=most))
     if question.ids:
         asked.append(_numbered(conn, question.ids))
     if question.formula:
@@ -90,7 +97,7 @@ def _fits(conn: sqlite3.Connection, question: Question) -> dict[int, Match] | No
             )
         asked.append(matches(conn, question.formula, FORMULAS))
     if question.name:
-        asked.append(matches(conn, question.name, NAMES))
+        asked.append(matches(conn, question.name, NAMES, most))
     if not asked:
         return None
     common = set.intersection(*map(set, asked))

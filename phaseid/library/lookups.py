@@ -102,8 +102,13 @@ def find(conn: sqlite3.Connection, text: str) -> list[Hit]:
     return [Hit(fits[row], phase) for row, phase in zip(rows, phases_of(conn, rows), strict=True)]
 
 
-def matches(conn: sqlite3.Connection, text: str, kinds: Kinds = ANYTHING) -> dict[int, Match]:
-    """Return how every entry that `text` can mean fits it, by row; `kinds` says what it may be."""
+def matches(
+    conn: sqlite3.Connection, text: str, kinds: Kinds = ANYTHING, most: int | None = None
+) -> dict[int, Match]:
+    """Return how every entry that `text` can mean fits it, by row; `kinds` says what it may be.
+
+    With `most`, of the names that only hold the text no more than so many are looked at.
+    """
     found: dict[int, Match] = {}
 
     def note(match: Match, row_id: int) -> None:
@@ -127,7 +132,7 @@ def matches(conn: sqlite3.Connection, text: str, kinds: Kinds = ANYTHING) -> dic
             for formula_key in formula_keys(wanted, any_case=True):
                 note_all(Match.FORMULA_ANY_CASE, by_formula, formula_key)
     if "name" in kinds:
-        for row_id, name in _names(conn, key, exact=bool(literal)):
+        for row_id, name in _names(conn, key, exact=bool(literal), most=most):
             note(_name_match(key, name), row_id)
     if literal and not found:
         elements = " ".join(sorted(part.rstrip("0123456789.") for part in literal[0].split()))
@@ -176,10 +181,13 @@ def phases_of(conn: sqlite3.Connection, rows: Sequence[int]) -> list[Phase]:
     return [found[row] for row in rows]
 
 
-def _names(conn: sqlite3.Connection, key: str, *, exact: bool) -> Iterator[tuple[int, str]]:
+def _names(
+    conn: sqlite3.Connection, key: str, *, exact: bool, most: int | None
+) -> Iterator[tuple[int, str]]:
     """Yield (row of the phase, name key) of every name that holds `key`.
 
     `exact`: only those that equal it; who writes a formula does not mean a name that holds it.
+    `most` names at most that do not begin with it.
     """
     by_name = "SELECT phase, key FROM label WHERE kind = 'name' AND "
     if not key:
@@ -195,9 +203,9 @@ def _names(conn: sqlite3.Connection, key: str, *, exact: bool) -> Iterator[tuple
         yield from conn.execute(
             "SELECT phase, label.key FROM label_fts JOIN label ON label.id = label_fts.rowid "
             "WHERE label_fts MATCH ? AND kind = 'name'"
-            + " AND instr(label.key, ?) > 0"
-            * len(short),
-            (long, *short),
+            + " AND instr(label.key, ?) > 0" * len(short)
+            + " LIMIT ?",
+            (long, *short, -1 if most is None else most),
         )
 
 
