@@ -118,6 +118,11 @@ def open_for_reading(path: Path, tell: Tell | None = None) -> sqlite3.Connection
     return conn
 
 
+def another_reader(path: Path) -> sqlite3.Connection:
+    """Open a file that is open for reading once more, unchecked. Raises sqlite3.Error."""
+    return _read_only(path)
+
+
 def _read_only(path: Path) -> sqlite3.Connection:
     try:
         return _connect(path, "mode=ro")

@@ -223,13 +223,15 @@ class Library:
         if phases is None:
             rows = self._rows(f"SELECT {columns} {joined} ORDER BY phase.id")
         else:
-            from phaseid.library.groups import LISTED, listed
+            from phaseid.library.groups import LISTED
+            from phaseid.library.scattered import read_rows
 
             wanted = f"SELECT phase.id, {columns} {joined} WHERE phase.id IN {LISTED}"
-            held = {row: rest for row, *rest in self._rows(wanted, listed(phases))}
+            with self._told():
+                held = read_rows(self._conn, self._another, wanted, phases)
             if missing := [row for row in phases if row not in held]:
                 raise self._damaged(f"phase {missing[0]} is missing")
-            rows = [tuple(held[row]) for row in phases]
+            rows = [held[row] for row in phases]
         with self._told():
             return line_table(kind, rows)
 
@@ -323,6 +325,9 @@ class Library:
         if not rows:
             raise self._damaged("a row is missing")
         return rows[0]
+
+    def _another(self) -> sqlite3.Connection:
+        return connection.another_reader(self.path)
 
     def _damaged(self, what: str) -> LibraryError:
         return LibraryError(f"{self.path}: the library is damaged ({what}). {connection.MENDING}")

@@ -1,0 +1,56 @@
+"""Reading rows that lie all over a large file: from many places at a time.
+
+A disk that is asked for one page after the other is waited for a thousand times; asked for several
+at once it is as fast as it can be. Each thread has a connection of its own; they wait, they do not
+compute.
+"""
+
+from __future__ import annotations
+
+import sqlite3
+from collections.abc import Callable, Sequence
+from contextlib import closing
+from typing import Any
+
+from phaseid.library.groups import listed
+
+_AT_ONCE = 8
+_FEW = 64  # rows that are not worth a thread
+
+
+def read_rows(
+    conn: sqlite3.Connection,
+    another: Callable[[], sqlite3.Connection],
+    sql: str,
+    rows: Sequence[int],
+) -> dict[int, tuple[Any, ...]]:
+    """Return what `sql` selects for the row numbers `rows`, by the first column, without that.
+
+    Its one mark stands for the list of them (`groups.LISTED`). `another` opens a connection to the
+    same file. Raises sqlite3.Error as SQLite does.
+    """
+    ordered = sorted(rows)
+    parts = (
+        [
+            ordered[k * len(rows) // _AT_ONCE : (k + 1) * len(rows) // _AT_ONCE]
+            for k in range(_AT_ONCE)
+        ]
+        if len(rows) > _FEW
+        else []
+    )
+    if not parts:
+        return _by_number(conn.execute(sql, (listed(ordered),)).fetchall())
+
+    def read(part: list[int]) -> list[tuple[Any, ...]]:
+        with closing(another()) as own:
+            return own.execute(sql, (listed(part),)).fetchall()
+
+    from concurrent.futures import ThreadPoolExecutor
+
+    with ThreadPoolExecutor(_AT_ONCE) as pool:
+        found = pool.map(read, parts)
+        return _by_number([row for part in found for row in part])
+
+
+def _by_number(found: list[tuple[Any, ...]]) -> dict[int, tuple[Any, ...]]:
+    return {row[0]: row[1:] for row in found}
