@@ -14,6 +14,7 @@ from __future__ import annotations
 import argparse
 import hashlib
 import math
+import os
 import shutil
 import sqlite3
 import statistics
@@ -46,6 +47,7 @@ from phaseid.rings.writing import rings_to_text
 SHARED = Path(__file__).parents[2] / "shared" / "data"
 ADDED = 1000
 """New structures added to each library to find the rate."""
+REPEATS = 4
 STARTER = 900
 """Patterns are of phases among the first so many: those of the starter library."""
 COARSE = replace(ELECTRON, scale=0.015, grades=True)
@@ -85,6 +87,9 @@ def part_of(archive: Path, most: int, made: Path) -> Path:
 
 def fill(library: Library, wanted: int, folder: Path) -> None:
     """Add structures until the library holds `wanted` phases, or a few less."""
+    held, start, wall = len(library), time.process_time(), time.perf_counter()
+    if not held:
+        library.add_crystals(islice(starter_crystals(), wanted))
     structures, maker = SHARED / "mp_structures.zip", SHARED / "make_prototypes.py"
     missing = wanted - len(library)
     if missing > 0 and structures.exists():
@@ -97,6 +102,9 @@ def fill(library: Library, wanted: int, folder: Path) -> None:
         library.add([made])
     elif missing > 0:
         library.add_crystals(islice(stretched(starter_crystals()), missing))
+    added = len(library) - held
+    cpu, wall = time.process_time() - start, time.perf_counter() - wall
+    say(f"built from {held} to {len(library)}: {added / cpu:.0f} per CPU second, {wall:.0f} s")
 
 
 def built(folder: Path, wanted: int, small: Path | None) -> Path:
@@ -110,8 +118,6 @@ def built(folder: Path, wanted: int, small: Path | None) -> Path:
         else:
             shutil.copy(small, making)
         with Library.open(making) as library:
-            if small is None:
-                library.add_crystals(starter_crystals())
             fill(library, wanted, folder)
         making.rename(path)
     return path
@@ -119,20 +125,24 @@ def built(folder: Path, wanted: int, small: Path | None) -> Path:
 
 def show_adding(path: Path, folder: Path) -> float:
     """Add the same new structures to a copy of a library; returns structures per CPU second."""
-    copy = folder / "copy.sqlite"
-    shutil.copy(path, copy)
     new = list(islice(stretched(starter_crystals()), ADDED))
-    with Library.open(copy) as library:
-        library.add_crystals([])  # what is not grouped yet is grouped now
-        held = len(library)
-        start, wall = time.process_time(), time.perf_counter()
-        added = library.add_crystals(new).added
-        cpu, wall = time.process_time() - start, time.perf_counter() - wall
-    copy.unlink()
+    best, clock = math.inf, math.inf
+    for _ in range(REPEATS):
+        copy = folder / "copy.sqlite"
+        shutil.copy(path, copy)
+        with Library.open(copy) as library:
+            library.add_crystals([])  # what is not grouped yet is grouped now
+            held = len(library)
+            start, wall = time.process_time(), time.perf_counter()
+            added = library.add_crystals(new).added
+            best = min(best, time.process_time() - start)
+            clock = min(clock, time.perf_counter() - wall)
+        copy.unlink()
     say(
-        f"  adding {added} to {held}: {added / cpu:.0f} per CPU second, {added / wall:.0f} by clock"
+        f"  adding {added} to {held}: {added / best:.0f} per CPU second,"
+        f" {added / clock:.0f} by clock (best of {REPEATS})"
     )
-    return added / cpu
+    return added / best
 
 
 def repeat_rows(small: Path, path: Path, wanted: int) -> None:
@@ -241,6 +251,14 @@ def command(words: list[str]) -> tuple[float, float]:
     return seconds, int(last[0]) / 1024 if last and last[0].isdigit() else math.nan
 
 
+def forget(path: Path) -> None:
+    """Let the system forget what it keeps of a file in memory, where it can be asked to."""
+    if hasattr(os, "posix_fadvise"):
+        with path.open("rb") as file:
+            os.fsync(file.fileno())
+            os.posix_fadvise(file.fileno(), 0, 0, os.POSIX_FADV_DONTNEED)
+
+
 def show_library(path: Path, folder: Path, seed: int, brute_force: int) -> None:
     """Everything that is asked of a large library."""
     with Library.open(path) as library:
@@ -260,6 +278,7 @@ def show_library(path: Path, folder: Path, seed: int, brute_force: int) -> None:
             files = [folder / f"{number}-{i}.csv" for i in range(len(patterns))]
             for file, rings in zip(files, patterns, strict=True):
                 file.write_text(rings_to_text(rings), encoding="utf-8")
+            forget(path)
             cold, memory = command(["identify", *map(str, files), "--library", str(path)])
             say(
                 f"  {name:26s} {cpu:5.2f} s CPU, {wall:5.2f} s; cold {cold:5.2f} s,"
@@ -297,7 +316,7 @@ def main() -> int:
         folder = Path(place)
         keep = options.keep or folder
         keep.mkdir(parents=True, exist_ok=True)
-        steps = [n for n in (2000, 10_000) if n < options.phases] + [options.phases]
+        steps = [n for n in (1000, 10_000) if n < options.phases] + [options.phases]
         path = None
         rates = []
         for wanted in steps:
