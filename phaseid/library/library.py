@@ -221,19 +221,19 @@ class Library:
         )
         joined = "FROM phase JOIN lines ON lines.phase = phase.id"
         if phases is None:
-            rows = self._rows(f"SELECT {columns} {joined} ORDER BY phase.id")
-        else:
-            from phaseid.library.groups import LISTED
-            from phaseid.library.scattered import read_rows
-
-            wanted = f"SELECT phase.id, {columns} {joined} WHERE phase.id IN {LISTED}"
             with self._told():
-                held = read_rows(self._conn, self._another, wanted, phases)
-            if missing := [row for row in phases if row not in held]:
-                raise self._damaged(f"phase {missing[0]} is missing")
-            rows = [held[row] for row in phases]
+                every = f"SELECT {columns} {joined} ORDER BY phase.id"
+                return line_table(kind, self._conn.execute(every))
+        from phaseid.library.groups import LISTED
+        from phaseid.library.scattered import read_rows
+
+        wanted = f"SELECT phase.id, {columns} {joined} WHERE phase.id IN {LISTED}"
         with self._told():
-            return line_table(kind, rows)
+            held = read_rows(self._conn, self._another, wanted, phases)
+        if missing := [row for row in phases if row not in held]:
+            raise self._damaged(f"phase {missing[0]} is missing")
+        with self._told():
+            return line_table(kind, [held[row] for row in phases])
 
     def strong_lines(self, kind: Kind) -> StrongLines:
         """Return the strongest lines of every phase, in the order of `line_table`."""

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
+from itertools import islice
 from typing import TYPE_CHECKING, Any
 
 from phaseid.library.formulas import ATOMIC_NUMBER, SYMBOLS
@@ -15,6 +16,9 @@ from phaseid.library.packing import Kind, unpack_many
 if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
+
+
+_AT_ONCE = 4096  # phases
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -75,11 +79,19 @@ def line_table(kind: Kind, rows: Iterable[tuple[Any, ...]]) -> LineTable:
     """Build the table.
 
     Rows are phase id, cell (six numbers, Å and degrees), volume_A3, complete_to_A, floor, quality,
-    elements, packed lines.
+    elements, packed lines. They are unpacked some at a time: that takes several times the memory
+    of what comes of it.
     """
+    rows = iter(rows)
+    parts: list[LineTable] = []
+    while (held := list(islice(rows, _AT_ONCE))) or not parts:
+        parts.append(_table_of(kind, held))
+    return parts[0] if len(parts) == 1 else _joined(parts)
+
+
+def _table_of(kind: Kind, held: list[tuple[Any, ...]]) -> LineTable:
     import numpy as np
 
-    held = list(rows)
     offsets, hkl, multiplicity, strength = unpack_many(kind, [row[12] for row in held])
     metric = _inverse_metrics([row[1:7] for row in held])
     numbers = np.array([row[7:11] for row in held], dtype=np.float64).reshape(-1, 4)
@@ -100,6 +112,22 @@ def line_table(kind: Kind, rows: Iterable[tuple[Any, ...]]) -> LineTable:
         floor=numbers[:, 2].copy(),
         quality=numbers[:, 3].copy(),
         elements_mask=elements_masks([row[11].split() for row in held]),
+    )
+
+
+def _joined(parts: list[LineTable]) -> LineTable:
+    """One table of several; empties the list, for each column once made is let go."""
+    import numpy as np
+
+    before = np.cumsum([0, *(len(part.d_A) for part in parts)])
+    offsets = [part.offsets[:-1] + lines for part, lines in zip(parts, before[:-1], strict=True)]
+    phase_ids = tuple(phase_id for part in parts for phase_id in part.phase_ids)
+    columns = {name: [getattr(part, name) for part in parts] for name in LineTable.__slots__[2:]}
+    parts.clear()
+    return LineTable(
+        phase_ids=phase_ids,
+        offsets=np.concatenate([*offsets, before[-1:]]),
+        **{name: np.concatenate(columns.pop(name)) for name in LineTable.__slots__[2:]},
     )
 
 

@@ -21,7 +21,8 @@ from phaseid.crystal.cif import read_cif_file
 from phaseid.crystal.crystal import Crystal, Finding, Site, Source
 from phaseid.crystal.lines import compute_lines, trim
 from phaseid.errors import InputError, LibraryError
-from phaseid.library import Library, connection
+from phaseid.library import Library, connection, linetable
+from phaseid.library.linetable import LineTable
 from phaseid.library.packing import STORED_FLOOR
 from phaseid.library.records import pack_crystal, unpack_crystal
 from phaseid.library.schema import SCHEMA_VERSION, STEPS, apply_steps, stored_version
@@ -146,6 +147,32 @@ def test_the_table_of_an_empty_library_is_empty(library: Library) -> None:
     table = library.line_table("electron")
     assert (len(table), len(table.d_A), list(table.offsets)) == (0, 0, [0])
     assert table.elements == ()
+
+
+def test_a_table_made_in_pieces_is_the_same(
+    starter_library: Library, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    whole = starter_library.line_table("neutron")
+    monkeypatch.setattr(linetable, "_AT_ONCE", 100)
+    pieces = starter_library.line_table("neutron")
+    assert pieces.phase_ids == whole.phase_ids
+    for name in LineTable.__slots__[1:]:
+        np.testing.assert_array_equal(getattr(pieces, name), getattr(whole, name))
+
+
+def test_lines_of_some_phases_come_in_the_order_asked(starter_library: Library) -> None:
+    whole = starter_library.line_table("x-ray")
+    asked = np.random.default_rng(3).permutation(len(whole))[:300]  # enough for several threads
+    rows = starter_library.strong_lines("x-ray").row[asked].tolist()
+    some = starter_library.line_table("x-ray", rows)
+    assert list(some.phase_ids) == [whole.phase_ids[i] for i in asked]
+    for here, there in enumerate(asked):
+        own = slice(*some.offsets[here : here + 2])
+        np.testing.assert_array_equal(
+            some.f2[own], whole.f2[slice(*whole.offsets[there : there + 2])]
+        )
+    with pytest.raises(LibraryError, match="phase 99999 is missing"):
+        starter_library.line_table("x-ray", [1, 99999])
 
 
 def _damaged(path: Path) -> None:
