@@ -24,6 +24,7 @@ from phaseid.library.sameness import COMPOSITION, COMPUTED_CELL
 SOMETHING_WENT = 0
 """In table `ungrouped` in place of a row: all entries of these elements are grouped anew."""
 _SETS_A_TRANSACTION = 500
+_PLAIN = 1  # P 1: the atoms may have more symmetry than is told
 
 
 class Outline(NamedTuple):
@@ -61,7 +62,7 @@ def _group_set(conn: sqlite3.Connection, elements: str) -> None:
     waiting = conn.execute("SELECT phase FROM ungrouped WHERE elements = ?", (elements,))
     came = {row for (row,) in waiting}
     anew = SOMETHING_WENT in came
-    for part in parts_of(_outlines(conn, elements)):
+    for part in parts_of(_outlines(conn, elements, None if anew else came)):
         # an entry by itself has no leader: those of others that went are forgotten by a trigger
         if len(part) > 1 and (anew or any(outline.row in came for outline in part)):
             _group_part(conn, part, None if anew else came)
@@ -86,16 +87,16 @@ def _group_part(conn: sqlite3.Connection, part: list[Outline], came: set[int] | 
         )
         leaders = leaders_of(list(entries.values()), earlier)
     after = {row: leader for row, leader in leaders.items() if row != leader}
-    gone = [(row,) for row in before.keys() - after.keys()]
-    conn.executemany("DELETE FROM member WHERE phase = ?", gone)
-    changed = sorted(after.items() - before.items())
-    conn.executemany("INSERT OR REPLACE INTO member VALUES (?, ?)", changed)
+    if gone := before.keys() - after.keys():
+        conn.executemany("DELETE FROM member WHERE phase = ?", [(row,) for row in gone])
+    if changed := after.items() - before.items():
+        conn.executemany("INSERT OR REPLACE INTO member VALUES (?, ?)", sorted(changed))
 
 
 def leaders_in(conn: sqlite3.Connection, elements: str) -> dict[int, int]:
     """Return row of the leader by row of the entry, for all entries of one set of elements."""
     leaders: dict[int, int] = {}
-    for part in parts_of(_outlines(conn, elements)):
+    for part in parts_of(_outlines(conn, elements, None)):
         leaders |= leaders_of(list(_entries(conn, [outline.row for outline in part]).values()))
     return leaders
 
@@ -105,17 +106,26 @@ def _entries(conn: sqlite3.Connection, rows: Sequence[int]) -> dict[int, StoredE
     return {row[0]: StoredEntry(conn, *row) for row in found.fetchall()}
 
 
-def _outlines(conn: sqlite3.Connection, elements: str) -> list[Outline]:
+def _outlines(conn: sqlite3.Connection, elements: str, beside: set[int] | None) -> list[Outline]:
+    """Outlines of the entries of a set of elements; those alone that may be parted with the rows
+    `beside`, where these are given.
+    """
     found = conn.execute(
         "SELECT id, space_group_number, formula_key, density_g_cm3 "
         "FROM phase INDEXED BY phase_by_elements WHERE elements = ?",
         (elements,),
     ).fetchall()
-    plain = _entries(conn, [row for row, number, *_ in found if number == 1])
+    if beside is not None:
+        kinds = {group_kind(number) for row, number, *_ in found if row in beside}
+        if _PLAIN not in kinds:  # else the group is what the atoms say
+            kinds.add(_PLAIN)
+            found = [row for row in found if group_kind(row[1]) in kinds]
+    plain = [row for row, number, *_ in found if number == _PLAIN]
+    own = _entries(conn, plain) if plain else {}
     return [
         Outline(
             row,
-            plain[row].group if row in plain else group_kind(number),
+            own[row].group if row in own else group_kind(number),
             fractions(key),
             ln_density(density),
         )

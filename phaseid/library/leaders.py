@@ -11,8 +11,6 @@ from __future__ import annotations
 from bisect import bisect_left, bisect_right
 from collections.abc import Iterable, Mapping, Sequence
 
-import numpy as np
-
 from phaseid.library.determinations import StoredEntry
 from phaseid.library.sameness import COMPUTED_CELL, MEASURED_CELL, same_phase
 
@@ -59,18 +57,15 @@ def leaders_of(entries: Sequence[StoredEntry], earlier: Earlier | None = None) -
     earlier = earlier or Earlier()
     leaders: dict[int, int] = {}
     standing: list[StoredEntry] = []
-    ln_density = np.full(len(entries), np.inf)
     for entry in best_first(entries):
-        off = np.abs(ln_density[: len(standing)] - entry.ln_density)
-        near = np.flatnonzero(off <= 3 * COMPUTED_CELL)
-        nearest_first = near[np.argsort(off[near], kind="stable")].tolist()
-        for k in nearest_first:
+        off = [abs(leader.ln_density - entry.ln_density) for leader in standing]
+        near = [k for k, one in enumerate(off) if one <= 3 * COMPUTED_CELL]
+        for k in sorted(near, key=off.__getitem__):
             known = earlier.same(standing[k], entry)
             if known or (known is None and _same(standing[k], entry)):
                 leaders[entry.row] = standing[k].row
                 break
         else:
-            ln_density[len(standing)] = entry.ln_density
             standing.append(entry)
             leaders[entry.row] = entry.row
     return leaders
