@@ -82,11 +82,14 @@ class Glance:
     penalty: NDArray[np.int64]
 
 
-def make_scale(pattern: Pattern, *, reach: float, blur: float = 0.0) -> Scale:
-    """Cells for shifts within ± `reach` (ln d); `blur` widens the rings."""
+def make_scale(pattern: Pattern, *, reach: float, blur: float = 0.0, coarseness: int = 1) -> Scale:
+    """Cells for shifts within ± `reach` (ln d); `blur` widens the rings.
+
+    Cells of `coarseness` 1 are three quarters of the sharpest ring's sigma wide.
+    """
     angle = np.sqrt((pattern.nuisance[:, 1:] ** 2).sum(axis=1))
     sigma = np.sqrt((1.5 * pattern.sigma) ** 2 + STRAIN**2 + angle**2 + blur**2)
-    width = int(np.clip(0.75 * sigma.min() / CODE_STEP, 5, 40))
+    width = int(np.clip(0.75 * sigma.min() / CODE_STEP, 5, 40)) * coarseness
     margin = int(np.ceil(reach / (width * CODE_STEP)))
     low, high = pattern.x[0] - 0.15 - reach, pattern.x[-1] + 0.65 + reach
     first, last = (int((x / CODE_STEP + CODE_AT_1_A) // width) for x in (low, high))

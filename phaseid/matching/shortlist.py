@@ -53,6 +53,9 @@ _SHARES = (*_ALONE, *(Share(log(s), False) for s in (1.0, 0.6, 0.35, 0.2, 0.12, 
 _OF_THE_REST = ((0.0, True), (0.0, False), (0.8, False), (-0.6, False))
 _PLACES, _PLACES_OF_THE_REST = 16, 12
 """Lines looked at of every phase, and of those for the rest."""
+_FINE, _COARSENESS = 200_000, 2
+"""All of so many phases are looked at in fine cells; of more in coarse ones, the best again in
+fine ones."""
 _RELATIVE_PLACES = 8
 _RELATIVE_BLUR = 0.004
 _RELATIVES = 48
@@ -64,7 +67,7 @@ _BASES = {1: 8, 2: 4}
 """Sets of one and of two phases whose leftovers are looked at."""
 _WHOLE, _LOOKS = 4, 400_000
 """The whole library is looked through for what the best four sets leave, and for more while the
-phases looked at are fewer than that; for the others what may be near."""
+phases looked at are fewer than that; for the others what may be near these."""
 _SETS_COMPARED = 40
 _JUDGED = 150
 """Phases that the likelihood judges before the library is looked through again."""
@@ -78,40 +81,36 @@ _NEAR = 1500
 class _Chooser:
     """The allowed phases of a library, and which of them were chosen, in the order of choosing.
 
-    `places` say where their lines stand on the `scales`, one of each for every pattern.
+    For every pattern there is a scale, coarse where they are very many, on which `places` say where
+    their lines stand, and a fine one for phases that are looked at closely.
     """
 
     patterns: Sequence[Pattern]
     strong: Sequence[StrongLines]
     allowed: NDArray[np.int64]
     log_prior: Floats
-    scales: Sequence[Scale]
+    coarse: Sequence[Scale]
+    fine: Sequence[Scale]
     places: list[NDArray[np.int64]] = field(init=False)
     chosen: dict[int, None] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
-        pairs = zip(self.strong, self.scales, strict=True)
+        pairs = zip(self.strong, self.coarse, strict=True)
         self.places = [find_places(one, self.allowed, own, _PLACES) for one, own in pairs]
 
-    def score(
-        self, looks: Sequence[Sequence[Glance]], count: int, among: Indices | None = None
-    ) -> list[Scores]:
-        """ln evidence (p, shares) of the allowed phases, or of those `among` them (indices).
+    def score(self, looks: Sequence[Sequence[Glance]], count: int) -> list[Scores]:
+        """ln evidence (p, shares) of the allowed phases by their `count` strongest lines.
 
-        One for each of the `looks`, which hold a glance for every pattern; `count` lines are looked
-        at.
+        One for each of the `looks`, which hold a glance on the coarse scale of every pattern.
         """
-        places = [own[:count] if among is None else own[:count, among] for own in self.places]
-        return scored(looks, places, self.scales, self._prior(among))
+        places = [own[:count] for own in self.places]
+        return scored(looks, places, self.coarse, self.log_prior)
 
-    def score_closely(self, look: Sequence[Glance], among: Indices) -> Scores:
-        """The same by all lines that are stored."""
-        pairs = zip(self.strong, self.scales, strict=True)
+    def score_closely(self, looks: Sequence[Sequence[Glance]], among: Indices) -> list[Scores]:
+        """The same of some phases (indices) on the fine scale, by all lines that are stored."""
+        pairs = zip(self.strong, self.fine, strict=True)
         places = [find_places(one, self.allowed[among], own, PLACES) for one, own in pairs]
-        return scored([look], places, self.scales, self._prior(among))[0]
-
-    def _prior(self, among: Indices | None) -> Floats:
-        return self.log_prior if among is None else self.log_prior[among]
+        return scored(looks, places, self.fine, self.log_prior[among])
 
     def take(self, phases: Iterable[int]) -> None:
         for phase in phases:
@@ -122,25 +121,26 @@ class _Chooser:
 
         Returns these phases, the likeliest first, one array for each of the sets.
         """
-        looks = [
-            [
-                _glance_at_the_rest(pattern, scale, judged, i)
-                for i, (pattern, scale) in enumerate(zip(self.patterns, self.scales, strict=True))
-            ]
-            for judged in sets
-        ]
-        whole = max(_WHOLE, _LOOKS // len(self.allowed))
-        scores = self.score(looks[:whole], _PLACES_OF_THE_REST) if sets else []
-        if looks[whole:]:
-            scores += self.score(looks[whole:], _PLACES_OF_THE_REST, near)
+        if not sets:
+            return []
+        whole = sets[: max(_WHOLE, _LOOKS // len(self.allowed))]
+        scores = self.score(self._at_the_rest(whole, self.coarse), _PLACES_OF_THE_REST)
+        looks = self._at_the_rest(sets, self.fine)
+        near = np.union1d(near, np.concatenate([ranked(s, _NEAR).ravel() for s in scores]))
         found = []
-        for place, score in enumerate(scores):
+        for place, score in enumerate(self.score_closely(looks, near)):
             each = _EACH_OF_THE_REST[min(place, len(_EACH_OF_THE_REST) - 1)]
-            ranks = ranked(score, each)
-            own = by_turns(ranks if place < whole else near[ranks], each)
+            own = by_turns(near[ranked(score, each)], each)
             self.take(own)
             found.append(own)
         return found
+
+    def _at_the_rest(self, sets: Sequence[Judged], scales: Sequence[Scale]) -> list[list[Glance]]:
+        pairs = list(zip(self.patterns, scales, strict=True))
+        return [
+            [_glance_at_the_rest(*pair, judged, i) for i, pair in enumerate(pairs)]
+            for judged in sets
+        ]
 
 
 def scored(
@@ -172,19 +172,28 @@ def shortlist(
     `strong` are the library's strongest lines as each pattern's probe sees them, `allowed` indices
     into them, `log_prior` (p,) belongs to the allowed.
     """
-    scales = [make_scale(p, reach=_reach(p, STRAIN) + 4.5 * STRAIN) for p in patterns]
-    chooser = _Chooser(patterns, strong, allowed, log_prior, scales)
-    first_look = [
-        _first_glance(pattern, scale, _SHARES, STRAIN)
-        for pattern, scale in zip(patterns, scales, strict=True)
-    ]
-    near = np.unique(ranked(chooser.score([first_look], _PLACES)[0], _NEAR))
-    ranks = near[ranked(chooser.score_closely(first_look, near), _NEAR)]
+    coarse, fine = (
+        [
+            make_scale(p, reach=_reach(p, STRAIN) + 4.5 * STRAIN, coarseness=coarseness)
+            for p in patterns
+        ]
+        for coarseness in (1 if len(allowed) <= _FINE else _COARSENESS, 1)
+    )
+    chooser = _Chooser(patterns, strong, allowed, log_prior, coarse, fine)
+    first, closer = (
+        [
+            _first_glance(pattern, scale, _SHARES, STRAIN)
+            for pattern, scale in zip(patterns, scales, strict=True)
+        ]
+        for scales in (coarse, fine)
+    )
+    near = np.unique(ranked(chooser.score([first], _PLACES)[0], _NEAR))
+    ranks = near[ranked(chooser.score_closely([closer], near)[0], _NEAR)]
     chooser.take(by_turns(ranks, _EACH))
     chooser.take(_relatives(patterns, strong, allowed, log_prior))
     if max_phases > 1:
-        first = by_turns(ranks, _JUDGED)[:_JUDGED]
-        bases = _leaving_other_rings(judge(first), 1)[: _BASES[1]]
+        likeliest = by_turns(ranks, _JUDGED)[:_JUDGED]
+        bases = _leaving_other_rings(judge(likeliest), 1)[: _BASES[1]]
         further = chooser.explaining_the_rest(bases, near)
         if max_phases > 2 and bases:
             pairs = [(base, own[:_PAIRED]) for base, own in zip(bases, further, strict=True)]
