@@ -30,16 +30,10 @@ def read_rows(
     same file. Raises sqlite3.Error as SQLite does.
     """
     ordered = sorted(rows)
-    parts = (
-        [
-            ordered[k * len(rows) // _AT_ONCE : (k + 1) * len(rows) // _AT_ONCE]
-            for k in range(_AT_ONCE)
-        ]
-        if len(rows) > _FEW
-        else []
-    )
-    if not parts:
+    if len(ordered) <= _FEW:
         return _by_number(conn.execute(sql, (listed(ordered),)).fetchall())
+    share = -(-len(ordered) // _AT_ONCE)
+    parts = [ordered[start : start + share] for start in range(0, len(ordered), share)]
 
     def read(part: list[int]) -> list[tuple[Any, ...]]:
         with closing(another()) as own:
