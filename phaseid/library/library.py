@@ -309,7 +309,8 @@ class Library:
             finally:
                 connection.close_after_writing(conn, self.path)
         finally:
-            self._conn = connection.open_for_reading(self.path)
+            with connection.told(self.path):
+                self._conn = connection.another_reader(self.path)
 
     @contextmanager
     def _told(self) -> Iterator[None]:
