@@ -229,18 +229,19 @@ class Library:
 
         wanted = f"SELECT phase.id, {columns} {joined} WHERE phase.id IN {LISTED}"
         with self._told():
-            held = read_rows(self._conn, self._another, wanted, phases)
+            found = read_rows(self._conn, self._another, wanted, phases)
+        held = {row: rest for row, *rest in found}
         if missing := [row for row in phases if row not in held]:
             raise self._damaged(f"phase {missing[0]} is missing")
         with self._told():
-            return line_table(kind, [held[row] for row in phases])
+            return line_table(kind, [tuple(held[row]) for row in phases])
 
     def strong_lines(self, kind: Kind) -> StrongLines:
         """Return the strongest lines of every phase, in the order of `line_table`."""
         from phaseid.library.strongest import read_blocks
 
         with self._told():
-            return read_blocks(self._conn, kind)
+            return read_blocks(self._conn, self._another, kind)
 
     def add(
         self,

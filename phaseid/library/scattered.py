@@ -15,23 +15,23 @@ from typing import Any
 from phaseid.library.groups import listed
 
 _AT_ONCE = 8
-_FEW = 64  # rows that are not worth a thread
 
 
 def read_rows(
     conn: sqlite3.Connection,
     another: Callable[[], sqlite3.Connection],
     sql: str,
-    rows: Sequence[int],
-) -> dict[int, tuple[Any, ...]]:
-    """Return what `sql` selects for the row numbers `rows`, by the first column, without that.
+    numbers: Sequence[int],
+    few: int = 64,
+) -> list[tuple[Any, ...]]:
+    """Return what `sql` selects for a list of numbers, in any order.
 
-    Its one mark stands for the list of them (`groups.LISTED`). `another` opens a connection to the
-    same file. Raises sqlite3.Error as SQLite does.
+    Its one mark stands for the list (`groups.LISTED`). `another` opens a connection to the same
+    file; up to `few` numbers are not worth a thread. Raises sqlite3.Error as SQLite does.
     """
-    ordered = sorted(rows)
-    if len(ordered) <= _FEW:
-        return _by_number(conn.execute(sql, (listed(ordered),)).fetchall())
+    ordered = sorted(numbers)
+    if len(ordered) <= few:
+        return conn.execute(sql, (listed(ordered),)).fetchall()
     share = -(-len(ordered) // _AT_ONCE)
     parts = [ordered[start : start + share] for start in range(0, len(ordered), share)]
 
@@ -42,9 +42,4 @@ def read_rows(
     from concurrent.futures import ThreadPoolExecutor
 
     with ThreadPoolExecutor(_AT_ONCE) as pool:
-        found = pool.map(read, parts)
-        return _by_number([row for part in found for row in part])
-
-
-def _by_number(found: list[tuple[Any, ...]]) -> dict[int, tuple[Any, ...]]:
-    return {row[0]: row[1:] for row in found}
+        return [row for part in pool.map(read, parts) for row in part]

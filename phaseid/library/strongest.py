@@ -10,11 +10,13 @@ from __future__ import annotations
 import sqlite3
 import struct
 from bisect import bisect_left
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
+from phaseid.library.groups import LISTED
 from phaseid.library.packing import KINDS, Kind, strengths
+from phaseid.library.scattered import read_rows
 
 if TYPE_CHECKING:
     import numpy as np
@@ -146,13 +148,25 @@ def in_block(conn: sqlite3.Connection, row: int) -> Parts:
     return {part: data[at * _SIZE[part] : (at + 1) * _SIZE[part]] for part, data in parts.items()}
 
 
-def read_blocks(conn: sqlite3.Connection, kind: Kind) -> StrongLines:
-    """Return the strongest lines of every phase of a library, in the order of `line_table`."""
+def read_blocks(
+    conn: sqlite3.Connection, another: Callable[[], sqlite3.Connection], kind: Kind
+) -> StrongLines:
+    """Return the strongest lines of every phase of a library, in the order of `line_table`.
+
+    `another` opens a connection to the same file: blocks lie all over it.
+    """
     import numpy as np
 
+    numbers = [n for (n,) in conn.execute("SELECT number FROM block WHERE part = 'row' ORDER BY 1")]
+    wanted = (
+        "SELECT part, number, data FROM block "
+        f"WHERE part IN ('row', 'elements', 'quality', '{kind}') AND number IN {LISTED}"
+    )
+    found = read_rows(conn, another, wanted, numbers, few=2)
+    held = {(part, number): data for part, number, data in found}
+
     def part(name: str, dtype: Any) -> NDArray[Any]:
-        found = conn.execute("SELECT data FROM block WHERE part = ? ORDER BY number", (name,))
-        return np.frombuffer(b"".join(data for (data,) in found), dtype=dtype)
+        return np.frombuffer(b"".join(held[name, number] for number in numbers), dtype=dtype)
 
     lines = part(kind, [("code", "<u2", (PLACES,)), ("level", "u1", (PLACES,))])
     return StrongLines(
