@@ -4,10 +4,10 @@ Kept are hkl, multiplicity and, for each kind of probe, how strong a line is: m|
 the phase's strongest, as a 12-bit logarithm. The spacing is not kept: it follows from hkl and the
 cell. Of a kind of probe the lines below the floor of the library count as absent.
 
-Layout of a packed phase: one byte, the width of its integers (1 or 2 bytes); three float32, m|F|²d²
-of the strongest line for X-rays, electrons, neutrons; then, compressed, planes of n values each: h,
-k, l, multiplicity, the high eight bits of the three logarithms, and their low four bits, two to a
-byte. All numbers are little-endian.
+Layout of a packed phase: one byte, the width of its integers (1 or 2 bytes) plus a mark of the step
+of its logarithms (`_STEPS`); three float32, m|F|²d² of the strongest line for X-rays, electrons,
+neutrons; then, compressed, planes of n values each: h, k, l, multiplicity, the high eight bits of
+the three logarithms, and their low four bits, two to a byte. All numbers are little-endian.
 """
 
 from __future__ import annotations
@@ -31,12 +31,19 @@ Kind = Literal["electron", "x-ray", "neutron"]
 
 KINDS: tuple[Kind, ...] = ("x-ray", "electron", "neutron")
 
-STORED_FLOOR = 1e-3
-"""Lines whose m|F|²d² is below this part of the strongest, for every probe, are not stored."""
+STORED_FLOOR = 1e-4
+"""Lines whose m|F|²d² is below this part of the strongest, for every probe, are not stored.
+
+At small spacings hundreds of lines below a thousandth make most of a large cell's rings."""
 
 _HEAD = struct.Struct("<B3f")
 _ABSENT = 4095
-_STEP = -math.log(STORED_FLOOR) / (_ABSENT - 1)  # 0.0017: |F|² comes back within 0.09 %
+_MARK = 8
+_STEPS = (
+    -math.log(1e-3) / (_ABSENT - 1),  # in libraries of schema 3
+    -math.log(STORED_FLOOR) / (_ABSENT - 1),  # 0.0022: |F|² comes back within 0.11 %
+)
+_STEP = _STEPS[-1]
 _LEVEL = 1  # the planes of a few hundred lines hold nothing that a slower search would find
 
 
@@ -71,7 +78,7 @@ def pack_lines(lines: Lines) -> bytes:
         (code >> 4).astype(np.uint8).tobytes(),
         (low[::2] << 4 | low[1::2]).tobytes(),
     )
-    head = _HEAD.pack(2 if wide else 1, *strongest.tolist())
+    head = _HEAD.pack(_MARK + (2 if wide else 1), *strongest.tolist())
     return head + zlib.compress(b"".join(planes), _LEVEL)
 
 
@@ -86,7 +93,8 @@ def unpack_many(
 
     heads = [_HEAD.unpack_from(data) if data else (1, 0.0, 0.0, 0.0) for data in packed]
     parts = [zlib.decompress(data[_HEAD.size :]) if data else b"" for data in packed]
-    width = np.array([head[0] for head in heads], dtype=np.int64)
+    mark, width = np.divmod(np.array([head[0] for head in heads], dtype=np.int64), _MARK)
+    step = np.array(_STEPS)[mark]
     size = np.array([len(part) for part in parts], dtype=np.int64)
     count = 2 * size // (8 * width + 9)  # a line takes 4 integers, 3 bytes, 3 half bytes
     offsets = np.concatenate([np.zeros(1, np.int64), np.cumsum(count)])
@@ -114,7 +122,7 @@ def unpack_many(
     pair = which * n + within
     low = data[codes + 3 * n + pair // 2] >> np.where(pair % 2, 0, 4) & 15
     code = high << 4 | low
-    strength = np.where(code < _ABSENT, strongest[owner] * np.exp(-_STEP * code), 0.0)
+    strength = np.where(code < _ABSENT, strongest[owner] * np.exp(-step[owner] * code), 0.0)
     return offsets, whole[:3].T.astype(np.int16), whole[3], strength
 
 
@@ -127,7 +135,8 @@ def unpack_lines(
     from phaseid.crystal.lines import Lines
     from phaseid.crystal.metric import inverse_metric, squares
 
-    width, *strongest = _HEAD.unpack_from(data) if data else (1, 0.0, 0.0, 0.0)
+    first, *strongest = _HEAD.unpack_from(data) if data else (1, 0.0, 0.0, 0.0)
+    mark, width = divmod(first, _MARK)
     held = zlib.decompress(data[_HEAD.size :]) if data else b""
     n = 2 * len(held) // (8 * width + 9)
     whole = np.frombuffer(held, "<i2" if width == 2 else "i1", 4 * n).reshape(4, n)
@@ -137,7 +146,7 @@ def unpack_lines(
     pairs = np.frombuffer(held, np.uint8, offset=(4 * width + 3) * n)
     low = np.stack([pairs >> 4, pairs & 15], axis=1).reshape(-1)[: 3 * n]
     code = (high.astype(np.int32) << 4 | low).reshape(3, n)
-    value = np.array(strongest)[:, None] * np.exp(-_STEP * code)
+    value = np.array(strongest)[:, None] * np.exp(-_STEPS[mark] * code)
     strength = np.where(code < _ABSENT, value, 0.0)
     inverse_d2 = squares(hkl.astype(np.float64), inverse_metric(cell))
     f2_xray, f2_electron, f2_neutron = (one * inverse_d2 / multiplicity for one in strength)

@@ -12,11 +12,26 @@ from phaseid.matching.patterns import Floats, Pattern
 _SAMPLE = 2000
 _BINS = 24
 _FLAT_SHARE = 0.3
+_APART = 0.9
+"""Rings of a list stand no nearer than this part of the merging distance."""
+_MOST_TAKEN = 0.8
 
 
 def crowd(table: LineTable, phases: NDArray[np.int64], pattern: Pattern) -> Floats:
     """ln density in ln d and ln intensity of a ring that no phase explains, at each ring, (m,)."""
-    return crowd_density(table, phases, pattern) + crowd_intensity(pattern)
+    position = crowd_density(table, phases, pattern)
+    return position + crowd_intensity(pattern) + crowd_exclusion(pattern, position)
+
+
+def crowd_exclusion(pattern: Pattern, position: Floats) -> Floats:
+    """What ln density gains at each ring as rings keep their distance: nearer ones would merge.
+
+    Each of m rings takes its merging distance from the room the others have, as hard rods on a line
+    do (Tonks 1936); `position` (m,) is ln of their normalised density.
+    """
+    taken = len(pattern) * np.exp(position) * _APART * pattern.fineness * pattern.merging
+    result: Floats = -np.log(1.0 - np.minimum(taken, _MOST_TAKEN))
+    return result
 
 
 def crowd_intensity(pattern: Pattern) -> Floats:

@@ -35,6 +35,8 @@ _STRONG, _STRONG_SCATTER = 0.25, 0.5
 """Lines above this part of the strongest tell a first amplitude, each only so well (ln)."""
 _ABOUT = 1.5
 """Lines within so many merging distances of a ring make its position less sure."""
+_LOGISTIC = 1.702
+"""A logistic of slope 1.702 is close to a normal distribution function."""
 _COVERED = 1e-3
 """Lines the range covers with less chance than this say nothing of amplitudes."""
 
@@ -99,6 +101,9 @@ class PatternWork:
         self.narrow = scatter.intensity**2 + reading
         self.odd = scatter.odd_intensity**2 + reading
         self.spread2 = loose.spread**2
+        self.slope = DETECTION_SLOPE / np.sqrt(
+            1.0 + (DETECTION_SLOPE * loose.spread / _LOGISTIC) ** 2
+        )
         self.window = _windows(pattern)
         self.null = crowd
         self.ln_amplitude = np.zeros((self.b, self.k))
@@ -205,11 +210,10 @@ class PatternWork:
 
             raised = (self.ln_amplitude - self._ln_limit()).ravel()
             falling = np.repeat(self.trend, self.k)
-            would = _logistic(
-                DETECTION_SLOPE * (ln_visible + raised[owner] - falling[owner] * curve)
-            )
-            slope = keep * DETECTION_SLOPE * would * (1.0 - would) / (1.0 - keep * would)
-            bend = DETECTION_SLOPE * slope * (1.0 - would)
+            steep = self.slope.ravel()[owner]
+            would = _logistic(steep * (ln_visible + raised[owner] - falling[owner] * curve))
+            slope = keep * steep * would * (1.0 - would) / (1.0 - keep * would)
+            bend = steep * slope * (1.0 - would)
             effect = np.concatenate([share, lever], axis=1)
             effect_seen = np.concatenate([effect, lower], axis=1)
             gradient = np.einsum("bkm,bm->bk", effect_seen, shown)
@@ -320,7 +324,7 @@ class PatternWork:
     def missing_term(self) -> Floats:
         """(b,) ln chance that all lines that meet no ring stayed unseen."""
         keep = (1.0 - self.pattern.scatter.lost) * self._missing()
-        would = _logistic(DETECTION_SLOPE * self._ln_shown())
+        would = _logistic(self.slope[:, :, None] * self._ln_shown())
         result: Floats = np.log1p(-keep * would).sum(axis=(1, 2))
         return result
 

@@ -31,8 +31,9 @@ _RINGS_OF_A_FURTHER_PHASE = 2
 """One ring alone names no phase of a mixture: common practice, no source."""
 _ROUNDS = ((4, 2.0), (2, 1.3), (1, 1.0))
 """(Newton steps, width of the windows for axial strains) of each round of refinement."""
-_EXCUSED_LINES = 8.0
-"""Rings beyond a phase's stored lines are taken as if it had this many lines somewhere there."""
+_EXCUSED_RINGS = 8.0
+"""Rings beyond the stored lines of a set fall there as densely as those it makes elsewhere, taken
+to be at least this many."""
 
 
 def _leftover(works: list[PatternWork]) -> Floats:
@@ -47,7 +48,8 @@ def _leftover(works: list[PatternWork]) -> Floats:
         excused = work.excused()
         left = ~work.claimed & ~excused
         density += np.where(left, work.null, 0.0).sum(axis=1)
-        density += np.where(excused, work.null + log(_EXCUSED_LINES), 0.0).sum(axis=1)
+        rings = np.log(np.maximum(work.claimed.sum(axis=1), _EXCUSED_RINGS))[:, None]
+        density += np.where(excused, work.null + rings, 0.0).sum(axis=1)
         count = left.sum(axis=1)
         nowhere += count * log(FOREIGN_RINGS) - FOREIGN_RINGS
         unlisted += factorial[count] + count * stay - log(1.0 + UNLISTED_RING_COUNT)
