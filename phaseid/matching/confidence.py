@@ -17,6 +17,7 @@ from phaseid.matching.search import Judged, Loosened, Members, Search
 from phaseid.matching.settings import (
     RELATIVE_INTENSITY,
     RELATIVE_PRIOR,
+    ROUGH,
     ROUGH_PRIOR,
     UNLISTED_PRIOR,
 )
@@ -58,9 +59,8 @@ def weigh(search: Search) -> Standing:
     near = [j for j in ranked[:_LOOSENED] if j.log_posterior > best - _WORTH_LOOSENING]
     for members, value in search.rough(near):
         if members in weights:
-            plain = weights[members] + log(1.0 - ROUGH_PRIOR)
-            rough = value + search.prior_of(members) + log(ROUGH_PRIOR)
-            weights[members] = float(np.logaddexp(plain, rough))
+            rough = value + search.prior_of(members) + log(ROUGH_PRIOR / len(ROUGH))
+            weights[members] = float(np.logaddexp(weights[members], rough))
     singles = {j.members for j in near if len(j.members) == 1}
     distant = [j for j in search.distant_relatives(_DISTANT) if j.members not in singles]
 

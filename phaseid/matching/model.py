@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from phaseid.matching.lineset import LineSet
 from phaseid.matching.patterns import Floats, Pattern
-from phaseid.matching.settings import LISTED_JITTER, ROUGH_INTENSITY, ROUGH_JITTER, STRAIN
+from phaseid.matching.settings import LISTED_JITTER, STRAIN, Rough
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -89,11 +89,14 @@ class Looseness:
         return cls(np.full(shape, STRAIN), np.full(shape, LISTED_JITTER), np.zeros(shape))
 
     @classmethod
-    def rough(cls, shape: tuple[int, int]) -> Looseness:
-        """Every phase listed, but not known as well as listed structures usually are."""
-        return cls(
-            np.full(shape, STRAIN), np.full(shape, ROUGH_JITTER), np.full(shape, ROUGH_INTENSITY)
-        )
+    def rough(cls, shape: tuple[int, int], which: NDArray[np.int64], way: Rough) -> Looseness:
+        """As listed, but phase `which` (b,) known less well than listed structures usually are."""
+        loose = cls.listed(shape)
+        rows = np.arange(shape[0])
+        loose.strain[rows, which] = way.strain
+        loose.jitter[rows, which] = way.jitter
+        loose.spread[rows, which] = way.intensity
+        return loose
 
     def rows(self, part: NDArray[np.int64]) -> Looseness:
         """The looseness of some of the hypotheses."""

@@ -25,6 +25,7 @@ from phaseid.matching.settings import (
     RELATIVE_INTENSITY,
     RELATIVE_JITTER,
     RELATIVE_STRAIN,
+    ROUGH,
     STRAIN,
     UNLISTED_PRIOR,
 )
@@ -348,21 +349,27 @@ class Search:
         return found
 
     def rough(self, sets: Sequence[Judged]) -> list[tuple[Members, float]]:
-        """ln likelihood of each of `sets`, were its structures known less well than usual."""
+        """ln likelihood of each of `sets`, were one of its structures known less well than usual.
+
+        Each member in turn in each of the ways of `ROUGH`, every one an entry of its own.
+        """
         found = []
-        by_size: dict[int, list[Judged]] = {}
+        by_size: dict[int, list[tuple[Judged, int]]] = {}
         for judged in sets:
-            by_size.setdefault(len(judged.members), []).append(judged)
+            for which in range(len(judged.members)):
+                by_size.setdefault(len(judged.members), []).append((judged, which))
         for _, items in sorted(by_size.items()):
-            members = np.array([judged.members for judged in items], dtype=np.int64)
-            offsets = np.stack([judged.offset for judged in items])
-            loose = Looseness.rough((members.shape[0], members.shape[1]))
-            for part, fit in evaluate_in_batches(self.model, members, offsets, loose):
-                found += [
-                    (items[index].members, float(fit.log_likelihood[row]))
-                    for row, index in enumerate(part)
-                    if fit.shows[row]
-                ]
+            members = np.array([judged.members for judged, _ in items], dtype=np.int64)
+            offsets = np.stack([judged.offset for judged, _ in items])
+            which = np.array([which for _, which in items])
+            for way in ROUGH:
+                loose = Looseness.rough(members.shape, which, way)
+                for part, fit in evaluate_in_batches(self.model, members, offsets, loose):
+                    found += [
+                        (items[index][0].members, float(fit.log_likelihood[row]))
+                        for row, index in enumerate(part)
+                        if fit.shows[row]
+                    ]
         return found
 
     def _relaxed(

@@ -20,7 +20,7 @@ from phaseid.matching.lineset import gather
 from phaseid.matching.model import Looseness, Model
 from phaseid.matching.patterns import prepare
 from phaseid.matching.series_chain import Floats, Set, States, log_prior
-from phaseid.matching.settings import ROUGH_PRIOR
+from phaseid.matching.settings import ROUGH, ROUGH_PRIOR
 from phaseid.rings.ringlist import RingList
 
 Indices = NDArray[np.int64]
@@ -97,15 +97,12 @@ def log_likelihoods(
         members = np.array([sorted(place[p] for p in sets[i]) for i in those], dtype=np.int64)
         for start in starts:
             fit = evaluate(model, members, np.full((*members.shape, 1), start))
-            rough = evaluate(model, members, fit.offset, Looseness.rough(members.shape))
-            value = np.where(
-                fit.shows,
-                np.logaddexp(
-                    log(1.0 - ROUGH_PRIOR) + fit.log_likelihood,
-                    np.where(rough.shows, log(ROUGH_PRIOR) + rough.log_likelihood, -np.inf),
-                ),
-                NEVER,
-            )
+            value = np.where(fit.shows, fit.log_likelihood, NEVER)
+            for which, way in product(range(size), ROUGH):
+                loose = Looseness.rough(members.shape, np.full(len(members), which), way)
+                rough = evaluate(model, members, fit.offset, loose)
+                likely = log(ROUGH_PRIOR / len(ROUGH)) + rough.log_likelihood
+                value = np.where(fit.shows & rough.shows, np.logaddexp(value, likely), value)
             found = np.stack([value, fit.scale[:, 0], fit.scale_sd[:, 0]])
             result[:, those] = np.where(value > result[0, those], found, result[:, those])
     return result

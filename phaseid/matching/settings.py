@@ -38,6 +38,17 @@ SCATTER: dict[Kind, Scatter] = {
     "electron": Scatter(0.45, 1.20, 0.15, 0.06, 0.0, 0.008),
 }
 
+
+@dataclass(frozen=True, slots=True)
+class Rough:
+    """How a roughly known structure strays: `strain` of its cell, `jitter` of ln d line by line,
+    one-sigma each; `intensity`, extra scatter of ln intensity."""
+
+    strain: float
+    jitter: float
+    intensity: float
+
+
 STRAIN = 0.001
 """One-sigma of the isotropic strain, alloying or warmth of a listed phase (relative, on d)."""
 
@@ -45,10 +56,9 @@ LISTED_JITTER = 2e-4
 """Line-by-line scatter in ln d of a listed phase: its axial ratios are known no better."""
 
 ROUGH_PRIOR = 0.15
-"""How often a listed structure is known, or its rings are read, no better than `ROUGH_JITTER` (in
-ln d, line by line) and `ROUGH_INTENSITY` (extra scatter of ln intensity) say."""
-ROUGH_JITTER = 8e-4
-ROUGH_INTENSITY = 0.4
+"""How often a listed structure is known, or its rings are read, less well than the rest says, in
+one of the ways of `ROUGH`."""
+ROUGH = (Rough(0.002, LISTED_JITTER, 0.6), Rough(0.002, 8e-4, 0.4))
 
 RELATIVE_STRAIN = 0.02
 """The same for an unlisted relative: a phase of the listed structure type with another cell."""
