@@ -147,14 +147,13 @@ def phases(cases: int, seed: int) -> None:
     with open_default(None) as library:
         held = library.phases()
         simulator = Simulator(
-            [library.crystal(one.phase_id) for one in held], np.random.default_rng(seed)
+            lambda i: library.crystal(held[i].phase_id), np.random.default_rng(seed)
         )
-        usable = [i for i in range(len(held)) if simulator.usable(i)]
         hits = {"measured": 0, "typed": 0}
         done = refused = 0
         while done < cases:
-            truth = int(simulator.rng.choice(usable))
-            plate = _plate(simulator, truth)
+            truth = int(simulator.rng.integers(len(held)))
+            plate = _plate(simulator, truth) if simulator.usable(truth) else None
             if plate is None:
                 continue
             done += 1

@@ -213,7 +213,7 @@ def patterns_of(library: Library, seed: int) -> list[tuple[str, list[RingList], 
     random = np.random.default_rng(seed)
     phases = library.line_table("x-ray", library.strong_lines("x-ray").row[:STARTER].tolist())
     chosen = [phases.phase_ids[i] for i in random.choice(STARTER, 40, replace=False)]
-    simulator = Simulator([library.crystal(phase_id) for phase_id in chosen], random)
+    simulator = Simulator(lambda i: library.crystal(chosen[i]), random)
     usable = [i for i in range(len(chosen)) if simulator.usable(i)]
     made = []
     for name, conditions, shares in CASES:

@@ -8,6 +8,7 @@ written here, apart from phaseid.
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, field
 
 import gemmi
@@ -140,9 +141,9 @@ NEUTRON = Conditions("neutron", scale=0.002, sigma=0.05, scatter=0.15, limit=0.0
 
 @dataclass
 class Simulator:
-    """Draws patterns of mixtures of `crystals`; everything random comes from `rng`."""
+    """Draws patterns of mixtures of crystals, by number; everything random comes from `rng`."""
 
-    crystals: list[Crystal]
+    crystal: Callable[[int], Crystal]
     rng: np.random.Generator
     powders: dict[int, Powder] = field(default_factory=dict)
 
@@ -155,7 +156,7 @@ class Simulator:
 
     def powder(self, index: int) -> Powder:
         if index not in self.powders:
-            self.powders[index] = powder(self.crystals[index])
+            self.powders[index] = powder(self.crystal(index))
         return self.powders[index]
 
     def lines_above(self, index: int, how: Conditions, share: float) -> int:

@@ -361,9 +361,9 @@ class Search:
         for _, items in sorted(by_size.items()):
             members = np.array([judged.members for judged, _ in items], dtype=np.int64)
             offsets = np.stack([judged.offset for judged, _ in items])
-            which = np.array([which for _, which in items])
+            roughly = np.array([which for _, which in items])
             for way in ROUGH:
-                loose = Looseness.rough(members.shape, which, way)
+                loose = Looseness.rough((len(members), members.shape[1]), roughly, way)
                 for part, fit in evaluate_in_batches(self.model, members, offsets, loose):
                     found += [
                         (items[index][0].members, float(fit.log_likelihood[row]))
