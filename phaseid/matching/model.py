@@ -93,7 +93,6 @@ class Looseness:
         """As listed, but phase `which` (b,) known less well than listed structures usually are."""
         loose = cls.listed(shape)
         rows = np.arange(shape[0])
-        loose.strain[rows, which] = way.strain
         loose.jitter[rows, which] = way.jitter
         loose.spread[rows, which] = way.intensity
         return loose

@@ -41,10 +41,9 @@ SCATTER: dict[Kind, Scatter] = {
 
 @dataclass(frozen=True, slots=True)
 class Rough:
-    """How a roughly known structure strays: `strain` of its cell, `jitter` of ln d line by line,
-    one-sigma each; `intensity`, extra scatter of ln intensity."""
+    """How a roughly known structure strays: `jitter` of ln d line by line and `intensity`, extra
+    scatter of ln intensity, one-sigma each."""
 
-    strain: float
     jitter: float
     intensity: float
 
@@ -58,7 +57,7 @@ LISTED_JITTER = 2e-4
 ROUGH_PRIOR = 0.15
 """How often a listed structure is known, or its rings are read, less well than the rest says, in
 one of the ways of `ROUGH`."""
-ROUGH = (Rough(0.002, LISTED_JITTER, 0.6), Rough(0.002, 8e-4, 0.4))
+ROUGH = (Rough(LISTED_JITTER, 0.4), Rough(8e-4, 0.4))
 
 RELATIVE_STRAIN = 0.02
 """The same for an unlisted relative: a phase of the listed structure type with another cell."""
