@@ -35,7 +35,12 @@ Must = Annotated[
     str | None,
     typer.Option("--must", metavar="EL,EL", help="Elements the answer's phases hold together."),
 ]
-Only = Annotated[str | None, typer.Option("--only", metavar="EL,EL", help="No element but these.")]
+Only = Annotated[
+    str | None,
+    typer.Option(
+        "--only", metavar="EL,EL", help="No element but these; 'Fe?': seen with doubt."
+    ),
+]
 AxisText = Annotated[
     str | None,
     typer.Option(

@@ -37,26 +37,54 @@ def parse_elements(text: str | None, option: str) -> frozenset[str]:
     return frozenset(found)
 
 
+def _parted(only: str | None) -> tuple[str | None, str | None]:
+    """The list without the marks of doubt, and the elements in doubt alone, None where none is."""
+    if only is None or "?" not in only:
+        return only, None
+    doubted = re.findall(r"([^\s,;?]+)\?", only)
+    return only.replace("?", ""), ",".join(doubted)
+
+
 @dataclass(frozen=True, slots=True)
 class Chemistry:
     """Constraints on an answer.
 
     The phases of an answer together contain every element of `must`; no phase contains an element
-    of `exclude`, nor one outside `only` (None: any). `must` elements are always allowed.
+    of `exclude`, nor one outside `only` (None: any). `must` elements are always allowed. Elements
+    of `doubt`, part of `only`, were seen with doubt: phases with them may be there, but are less
+    likely.
     """
 
     must: frozenset[str] = frozenset()
     only: frozenset[str] | None = None
     exclude: frozenset[str] = frozenset()
+    doubt: frozenset[str] = frozenset()
 
     @classmethod
     def parse(cls, must: str | None, only: str | None, exclude: str | None) -> Chemistry:
-        """Build from three texts; raises InputError for unknown symbols or a contradiction."""
+        """Build from three texts; in `only`, "Fe?" is an element seen with doubt.
+
+        Raises InputError for unknown symbols or a contradiction.
+        """
+        for text, option in ((must, "--must"), (exclude, "--not")):
+            if text is not None and "?" in text:
+                raise InputError(
+                    f"{option}: an element in doubt is neither required nor excluded: {text}",
+                    remedy="Name it in --only, as Fe?; without --only every element is allowed.",
+                )
+        only, doubt = _parted(only)
         chemistry = cls(
             must=parse_elements(must, "--must"),
             only=None if only is None else parse_elements(only, "--only"),
             exclude=parse_elements(exclude, "--not"),
+            doubt=parse_elements(doubt, "--only"),
         )
+        if chemistry.must & chemistry.doubt:
+            raise InputError(
+                f"--must requires {', '.join(sorted(chemistry.must & chemistry.doubt))}, "
+                "which --only puts in doubt",
+                remedy="Take it out of --must, or take its question mark away.",
+            )
         both = chemistry.must & chemistry.exclude
         if both:
             raise InputError(
@@ -92,6 +120,8 @@ class Chemistry:
             parts.append(f"required {', '.join(sorted(self.must))}")
         if self.only is not None:
             parts.append(f"no element other than {', '.join(sorted(self.only))}")
+        if self.doubt:
+            parts.append(f"in doubt {', '.join(sorted(self.doubt))}")
         if self.exclude:
             parts.append(f"excluded {', '.join(sorted(self.exclude))}")
         return f"Chemistry: {'; '.join(parts)}." if parts else ""

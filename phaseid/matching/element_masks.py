@@ -17,6 +17,14 @@ def admitted(chemistry: Chemistry, elements: NDArray[np.uint64]) -> NDArray[np.b
     return np.asarray(~(elements & refused).any(axis=1))
 
 
+def doubtful(chemistry: Chemistry, elements: NDArray[np.uint64]) -> NDArray[np.int64]:
+    """How many elements seen with doubt each phase has (p,); `elements` (p, 2)."""
+    count = np.zeros(len(elements), dtype=np.int64)
+    for symbol in sorted(chemistry.doubt):
+        count += (elements & words(frozenset({symbol}))).any(axis=1)
+    return count
+
+
 def words(elements: frozenset[str]) -> NDArray[np.uint64]:
     """Elements as `LineTable.elements_mask` has them (2,)."""
     bits = elements_bits(elements)

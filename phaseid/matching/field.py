@@ -20,13 +20,13 @@ from phaseid.library.linetable import LineTable
 from phaseid.library.strongest import StrongLines
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.crowd import crowd
-from phaseid.matching.element_masks import admitted, words
+from phaseid.matching.element_masks import admitted, doubtful, words
 from phaseid.matching.leftovers import judged_alone, judged_beside
 from phaseid.matching.lineset import gather
 from phaseid.matching.model import Model
 from phaseid.matching.patterns import Floats, Pattern, prepare_all
 from phaseid.matching.search import Judged, Search
-from phaseid.matching.settings import SEARCHED_WHOLE
+from phaseid.matching.settings import DOUBTED, SEARCHED_WHOLE
 from phaseid.matching.shortlist import Indices, Pairs, shortlist
 from phaseid.probes.probe import Kind
 from phaseid.rings.ringlist import RingList
@@ -75,14 +75,14 @@ def field_of(
         return Field(
             tables=own,
             phases=allowed,
-            log_prior=_log_prior(first.quality[allowed]),
+            log_prior=log_prior_of(first, allowed, chemistry),
             rarity=rarity_of(chemistry, first.elements_mask[allowed], max_phases),
             crowd=tuple(crowd(table, allowed, pattern) for table, pattern in pairs),
         )
     strong = {kind: library.strong_lines(kind) for kind in set(kinds)}
     index = strong[kinds[0]]
     allowed = _allowed(library, index, chemistry)
-    log_prior = _log_prior(index.quality[allowed])
+    log_prior = log_prior_of(index, allowed, chemistry)
     rarity = rarity_of(chemistry, index.elements_mask[allowed], max_phases)
     sample = _loaded(library, kinds, index.row[allowed[:: max(1, len(allowed) // _CROWD)]])
     every = np.arange(len(sample[0]))
@@ -193,8 +193,9 @@ def rarity_of(chemistry: Chemistry, elements: NDArray[np.uint64], most: int) -> 
     return tuple(shares)
 
 
-def _log_prior(quality: Floats) -> Floats:
-    """ln of each allowed phase's share of the prior: by quality, summing to one."""
-    trust = np.maximum(quality, 1e-3)
+def log_prior_of(held: LineTable | StrongLines, allowed: Indices, chemistry: Chemistry) -> Floats:
+    """ln of each allowed phase's share of the prior: by quality and doubt, summing to one."""
+    doubts = doubtful(chemistry, held.elements_mask[allowed])
+    trust = np.maximum(held.quality[allowed], 1e-3) * DOUBTED**doubts
     result: Floats = np.log(trust / trust.sum())
     return result

@@ -151,7 +151,7 @@ def _states(
     held = {table.phase_ids[i]: of_all[i] for i in allowed.tolist() if table.phase_ids[i] in used}
     return States.of(
         sets,
-        log_shares(table, allowed),
+        log_shares(table, allowed, chemistry),
         rarity_of(chemistry, table.elements_mask[allowed], max_phases),
         lambda phases: chemistry.satisfied_by([held[phase] for phase in phases]),
     )

@@ -14,6 +14,7 @@ from phaseid.library.linetable import LineTable
 from phaseid.matching.chemistry import Chemistry
 from phaseid.matching.crowd import crowd
 from phaseid.matching.dispersion import at_own_energy, needs_own_energy
+from phaseid.matching.field import log_prior_of
 from phaseid.matching.identification import Hypothesis, Identification
 from phaseid.matching.likelihood import evaluate
 from phaseid.matching.lineset import gather
@@ -156,8 +157,7 @@ def _common_factor(answer: Identification, states: States, own_likelihood: Float
     return max(found, default=None)
 
 
-def log_shares(table: LineTable, allowed: Indices) -> dict[str, float]:
-    """ln of each allowed phase's share of the prior, by the quality of its entry."""
-    trust = np.maximum(table.quality[allowed], 1e-3)
-    values = np.log(trust / trust.sum()).tolist()
+def log_shares(table: LineTable, allowed: Indices, chemistry: Chemistry) -> dict[str, float]:
+    """ln of each allowed phase's share of the prior."""
+    values = log_prior_of(table, allowed, chemistry).tolist()
     return {table.phase_ids[i]: value for i, value in zip(allowed.tolist(), values, strict=True)}

@@ -114,6 +114,9 @@ ARCED_TEXTURE_PRIOR = 0.5
 """The same where rings are seen to be arcs: stronger on some sides by more than `ARCED`."""
 ARCED = 0.3
 
+DOUBTED = 0.25
+"""How likely a phase with an element seen with doubt is against one without."""
+
 UNLISTED_PRIOR = 0.15
 """Prior that no listed phase is in the specimen."""
 BESIDE_PRIOR = 0.03

@@ -3,10 +3,13 @@
 from __future__ import annotations
 
 import gemmi
+import numpy as np
 import pytest
 
 from phaseid.errors import InputError
+from phaseid.library import Library
 from phaseid.matching.chemistry import Chemistry, parse_elements
+from phaseid.matching.field import log_prior_of
 
 
 @pytest.mark.parametrize("text", ["Al,O", "al, o", "O;AL", " Al  O ", "Al,,O,", "O,Al,O"])
@@ -58,6 +61,10 @@ def test_an_empty_list_is_an_error(text: str) -> None:
         ("Al,O", "Al,Si", None, "--must names O, which --only does not allow"),
         (None, "Al,O", "O,Al", "--only and --not leave no element"),
         ("D", None, "H", "--must and --not both name H"),
+        ("Al", "Al?,O", None, "--must requires Al, which --only puts in doubt"),
+        ("Fe?", None, None, "--must: an element in doubt is neither required nor excluded"),
+        (None, None, "Fe?", "--not: an element in doubt is neither required nor excluded"),
+        (None, "Al,?", None, "no element given"),
     ],
 )
 def test_a_contradiction_is_told(
@@ -65,6 +72,26 @@ def test_a_contradiction_is_told(
 ) -> None:
     with pytest.raises(InputError, match=words):
         Chemistry.parse(must, only, exclude)
+
+
+def test_an_element_in_doubt_is_allowed_and_told() -> None:
+    chemistry = Chemistry.parse(None, "Al, O, fe?", None)
+    assert chemistry.doubt == {"Fe"}
+    assert chemistry.only == {"Al", "O", "Fe"}
+    assert chemistry.admits(("Fe", "O"))
+    assert chemistry.describe().endswith("in doubt Fe.")
+
+
+def test_doubt_makes_a_phase_a_quarter_as_likely_a_priori(starter_library: Library) -> None:
+    """Each element seen with doubt costs its phases a factor of four, those of no doubt nothing."""
+    table = starter_library.line_table("x-ray")
+    every = np.arange(len(table))
+    plain = log_prior_of(table, every, Chemistry.parse(None, "Al,O,Fe,Mn", None))
+    doubted = log_prior_of(table, every, Chemistry.parse(None, "Al,O,Fe?,Mn?", None))
+    count = np.array([len({"Fe", "Mn"} & elements) for elements in table.elements])
+    gain = doubted - plain
+    assert set(count.tolist()) == {0, 1, 2}
+    np.testing.assert_allclose(gain - gain[count == 0][0], -count * np.log(4.0), atol=1e-12)
 
 
 def test_only_may_be_narrowed_by_not() -> None:
