@@ -37,9 +37,7 @@ Must = Annotated[
 ]
 Only = Annotated[
     str | None,
-    typer.Option(
-        "--only", metavar="EL,EL", help="No element but these; 'Fe?': seen with doubt."
-    ),
+    typer.Option("--only", metavar="EL,EL", help="No element but these; 'Fe?': seen with doubt."),
 ]
 AxisText = Annotated[
     str | None,
