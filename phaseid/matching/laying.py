@@ -20,6 +20,7 @@ from phaseid.matching.settings import (
     CROWDING,
     DETECTION_SLOPE,
     FOREIGN_RINGS,
+    LOGISTIC_SLOPE,
     ODD_POSITION_FACTOR,
     ODD_POSITION_SHARE,
     SCATTER_INFLATION,
@@ -35,8 +36,6 @@ _STRONG, _STRONG_SCATTER = 0.25, 0.5
 """Lines above this part of the strongest tell a first amplitude, each only so well (ln)."""
 _ABOUT = 1.5
 """Lines within so many merging distances of a ring make its position less sure."""
-_LOGISTIC = 1.702
-"""A logistic of slope 1.702 is close to a normal distribution function."""
 _COVERED = 1e-3
 """Lines the range covers with less chance than this say nothing of amplitudes."""
 
@@ -102,7 +101,7 @@ class PatternWork:
         self.odd = scatter.odd_intensity**2 + reading
         self.spread2 = loose.spread**2
         self.slope = DETECTION_SLOPE / np.sqrt(
-            1.0 + (DETECTION_SLOPE * loose.spread / _LOGISTIC) ** 2
+            1.0 + (DETECTION_SLOPE * loose.spread / LOGISTIC_SLOPE) ** 2
         )
         self.window = _windows(pattern)
         self.null = crowd

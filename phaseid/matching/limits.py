@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from phaseid.library.phase import Phase
 from phaseid.matching.lineset import LineSet
 from phaseid.matching.patterns import Floats, Pattern
-from phaseid.matching.settings import DETECTION_SLOPE
+from phaseid.matching.settings import DETECTION_SLOPE, LOGISTIC_SLOPE
 from phaseid.probes.probe import Kind
 
 SURE, EVEN = 0.95, 0.5
@@ -19,8 +19,6 @@ COMMON_SCATTER: dict[Kind, float] = {"x-ray": 0.15, "neutron": 0.15, "electron":
 """One-sigma of ln intensity that all lines of a phase share: absorption, texture, dynamics."""
 _NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(7)
 _APART_SIGMAS = 2.5
-_LOGISTIC = 1.702
-"""A logistic of slope 1.702 is close to a normal distribution function."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -147,7 +145,7 @@ def chance_seen(
 ) -> float:
     """Chance that at least one line is listed, over intensity scatter of lines and of the phase."""
     own = pattern.scatter.intensity
-    slope = DETECTION_SLOPE / np.sqrt(1.0 + (DETECTION_SLOPE * own / _LOGISTIC) ** 2)
+    slope = DETECTION_SLOPE / np.sqrt(1.0 + (DETECTION_SLOPE * own / LOGISTIC_SLOPE) ** 2)
     common = COMMON_SCATTER[pattern.probe.kind] * _NODES
     level = ln_amplitude + ln_visible[None, :] + common[:, None] - pattern.ln_limit
     seen = covered[None, :] / (1.0 + np.exp(-np.clip(slope * level, -40.0, 40.0)))

@@ -94,6 +94,8 @@ areas, absorption. Published sheets need up to about 1, files without displaceme
 
 DETECTION_SLOPE = 2.6
 """Slope of the logistic chance of seeing a line against ln(intensity / limit)."""
+LOGISTIC_SLOPE = 1.702
+"""A logistic of this slope is close to the normal distribution function."""
 
 LIMIT_SD = 0.35
 """One-sigma of ln of the detection limit, as the weakest rings tell it."""
